@@ -1,0 +1,37 @@
+"""The settings of a session: one frozen model per stage, every default in one place."""
+
+from __future__ import annotations
+
+from pydantic import Field
+
+from tieline.settings.base import Settings
+from tieline.settings.chemistry import CalibrateSettings, ConvertSettings
+from tieline.settings.ingest import IngestSettings
+from tieline.settings.results import (
+    AssessSettings,
+    ClassifySettings,
+    PairSettings,
+    PartitionSettings,
+    ReportSettings,
+)
+from tieline.settings.screen import ScreenSettings
+
+__all__ = ["SessionSettings"]
+
+
+class SessionSettings(Settings):
+    """A whole configuration file."""
+
+    session: str = Field(
+        pattern=r"^[A-Za-z0-9][A-Za-z0-9 ._-]{0,79}$", description="names the run folder: <out>/<session>"
+    )
+    out: str = Field(".", description="folder of run folders, relative to the configuration")
+    ingest: IngestSettings
+    convert: ConvertSettings = ConvertSettings()
+    calibrate: CalibrateSettings = CalibrateSettings()
+    screen: ScreenSettings = ScreenSettings()
+    pair: PairSettings = PairSettings()
+    partition: PartitionSettings = PartitionSettings()
+    classify: ClassifySettings = ClassifySettings()
+    assess: AssessSettings = AssessSettings()
+    report: ReportSettings = ReportSettings()

@@ -1,0 +1,130 @@
+"""Settings of `ingest`: where the spot tables are and how to read them."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from pydantic import Field
+
+from tieline.settings.base import Settings
+
+Unit = Literal["wt%", "ppm", "ppb"]
+
+
+class Columns(Settings):
+    """Header texts of the label columns of one spot table."""
+
+    spot: str | None = Field(None, description="label of the analysis; the row number where there is none")
+    experiment: str | None = Field(None, description="experiment label")
+    phase: str | None = Field(None, description="phase label")
+    grain: str | None = Field(None, description="grain label")
+    zone: str | None = Field(None, description="zone label, such as rim or core")
+    distance_um: str | None = Field(None, description="distance in micrometres")
+    batch: str | None = Field(None, description="measuring session, where one table holds several")
+    technique: str | None = Field(None, description="technique, where one table holds several")
+    sequence: str | None = Field(None, description="run order; the row order where there is none")
+    comment: str | None = Field(None, description="free text")
+    ignore: tuple[str, ...] = Field((), description="headers of columns that are deliberately not read")
+
+
+class Labels(Settings):
+    """Splits one label column into several labels by a regular expression with named groups."""
+
+    column: str = Field(description="header of the column that holds the combined label")
+    pattern: str = Field(
+        description="regular expression; named groups among spot, experiment, phase, grain, zone, distance_um"
+    )
+
+
+class Sigma(Settings):
+    """What the uncertainty columns are; stated, never guessed."""
+
+    pattern: str = Field(description="header of the uncertainty column, with {analyte} for the analyte's header")
+    level: float = Field(1, gt=0, le=4, description="how many standard uncertainties the column gives: 1 or 2")
+    relative: bool = Field(False, description="in per cent of the value")
+    kind: Literal["sd", "se"] = Field(
+        "sd", description="uncertainty of the single value (sd), or of a mean of `replicates` readings (se)"
+    )
+    replicates: int = Field(1, ge=1, description="readings behind each value when kind is se")
+
+
+class Limit(Settings):
+    """Where the detection limits stand."""
+
+    pattern: str | None = Field(None, description="header of the limit column, with {analyte}")
+    values: dict[str, float] = Field(default_factory=dict, description="limit per analyte, in the table's unit")
+
+
+class Table(Settings):
+    """One spot table."""
+
+    path: str = Field(description="file: .csv .tsv .txt .xlsx .ods .parquet, text ones also .gz")
+    technique: str = Field("EPMA", description="measuring technique, a free name such as EPMA or laser")
+    batch: str | None = Field(None, description="measuring session; the file name where nothing is given")
+    unit: Unit | None = Field(None, description="unit of columns whose header does not say")
+    columns: Columns = Field(Columns(), description="headers of the label columns")
+    labels: Labels | None = Field(None, description="splitting of a combined label")
+    sigma: Sigma | None = Field(None, description="uncertainty columns")
+    limit: Limit | None = Field(None, description="detection-limit columns or values")
+    analytes: tuple[str, ...] | None = Field(None, description="analyte headers to read; all that are recognised")
+    sheet: str | int | None = Field(None, description="sheet name, or number from 1; the first")
+    header_row: int | None = Field(None, ge=1, description="row of the header; found when not given")
+    units_row: bool | None = Field(None, description="the row after the header holds units; found when not given")
+    skip_rows: int = Field(0, ge=0, description="rows before the table")
+    delimiter: str | None = Field(None, description="field separator; found when not given")
+    decimal: Literal[".", ","] | None = Field(None, description="decimal mark; found when not given")
+    thousands: Literal[",", ".", " ", "'"] | None = Field(None, description="thousands separator, where one is used")
+    encoding: str | None = Field(None, description="text encoding; found when not given")
+    below_limit: tuple[str, ...] = Field(
+        ("bdl", "b.d.l.", "b.d.", "bd", "<dl", "<lod", "below detection", "<mdl"),
+        description="texts that mean: below the detection limit",
+    )
+    not_measured: tuple[str, ...] = Field(
+        ("", "-", "\N{EN DASH}", "\N{EM DASH}", "n.m.", "n.a.", "na", "nan", "n.d.", "nd", "not measured"),
+        description="texts that mean: not measured. `n.d.` is ambiguous; list it in below_limit if it means that",
+    )
+    zero: Literal["value", "below-limit", "not-measured"] = Field("value", description="what a plain 0 means")
+    skip_row_labels: tuple[str, ...] = Field(
+        ("average", "mean", "avg", "std dev", "stdev", "sd", "st.dev.", "s.d.", "minimum", "maximum", "min", "max",
+         "sum", "median", "rsd", "2sd", "1sd", "se", "n"),
+        description="first-label texts of summary rows pasted between spots; such rows are set aside",
+    )  # fmt: skip
+
+
+class ReferenceMaterials(Settings):
+    """Which spots are reference materials, and their accepted values."""
+
+    path: str | None = Field(
+        None, description="table of accepted values: material, analyte, value, unit, sd, source"
+    )
+    names: dict[str, tuple[str, ...]] = Field(
+        default_factory=dict,
+        description="material -> its spellings in the tables; by default the materials of the accepted values",
+    )
+
+
+class Experiments(Settings):
+    """Table of experimental conditions."""
+
+    path: str = Field(description="table with one row per experiment")
+    columns: dict[str, str] = Field(
+        default_factory=lambda: {"experiment": "experiment"},
+        description="name used from here on -> header; must include experiment",
+    )
+
+
+class IngestSettings(Settings):
+    """Section [ingest]."""
+
+    tables: tuple[Table, ...] = Field(description="the spot tables", min_length=1)
+    phases: dict[str, tuple[str, ...]] = Field(
+        default_factory=dict, description="phase -> its spellings in the tables, beside the standard abbreviations"
+    )
+    experiments: Experiments | None = Field(None, description="experimental conditions")
+    reference_materials: ReferenceMaterials = Field(ReferenceMaterials(), description="reference materials")
+    on_unreadable: Literal["stop", "set-aside"] = Field(
+        "stop", description="what to do with cells and rows that cannot be used"
+    )
+    on_duplicate_spot: Literal["stop", "number"] = Field(
+        "stop", description="spot label twice in a table: stop, or make unique by numbering"
+    )

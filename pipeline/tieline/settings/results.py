@@ -1,0 +1,63 @@
+"""Settings of `pair`, `partition`, `classify` and `assess`."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from pydantic import Field, model_validator
+
+from tieline.settings.base import Settings
+
+
+class PairSettings(Settings):
+    """Section [pair]."""
+
+    pairs: tuple[tuple[str, str], ...] | None = Field(
+        None, description="[alpha, beta] pairs; by default every other phase over glass"
+    )
+    mean: Literal["random-effects", "arithmetic", "median", "huber"] = Field(
+        "random-effects", description="estimator of the phase mean"
+    )
+    average: Literal["spots", "grains"] = Field(
+        "spots", description="average over spots, or over grain means where spots of a grain are not independent"
+    )
+    difference_sigmas: float = Field(
+        3.0, gt=0, description="two techniques differ when their means do by more than this many standard uncertainties"
+    )
+
+
+class PartitionSettings(Settings):
+    """Section [partition]."""
+
+    confidence: float = Field(0.95, gt=0.5, lt=1, description="confidence level of intervals and limits")
+    interval: Literal["fieller", "gum-s1"] = Field("fieller", description="how intervals are made")
+    prefer: tuple[str, ...] = Field((), description="techniques in order of preference where several measured an element")
+    sigma_from_limit: float = Field(
+        3.0, gt=0, description="where a value's sigma is not given, its limit divided by this stands for it"
+    )
+
+
+class ClassifySettings(Settings):
+    """Section [classify]."""
+
+    compatible_above: float = Field(1.0, gt=0, description="D above this is compatible; the definition")
+    highly_incompatible_below: float = Field(
+        0.01, gt=0, description="D below this is highly incompatible; a convention, others use 0.1"
+    )
+    confidence: float = Field(0.95, gt=0.5, lt=1, description="probability a class needs to be declared")
+
+    @model_validator(mode="after")
+    def _ordered(self) -> ClassifySettings:
+        if self.highly_incompatible_below >= self.compatible_above:
+            raise ValueError("highly_incompatible_below must be smaller than compatible_above")
+        return self
+
+
+class AssessSettings(Settings):
+    """Section [assess]."""
+
+
+class ReportSettings(Settings):
+    """Section [report]."""
+
+    title: str | None = Field(None, description="title of the report; the session's name by default")

@@ -1,0 +1,104 @@
+"""Settings of `screen`: every threshold, with where its default comes from."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from pydantic import Field
+
+from tieline.settings.base import Settings, TestSettings
+
+
+class TotalSettings(TestSettings):
+    """Oxide totals of probe spots."""
+
+    action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
+    limits: dict[str, tuple[float, float]] = Field(
+        default_factory=dict,
+        description="phase -> [low, high] in wt%; beside the phase table's (98.5-101.5 for anhydrous minerals, common practice)",
+    )
+    sigmas: float = Field(
+        2.0, ge=0, description="a total is outside only if it is by more than this many of its standard uncertainties"
+    )
+    min_oxides: int = Field(4, ge=1, description="fewer measured oxides than this make no total")
+
+
+class CationRule(Settings):
+    """Expected cation sum of one phase."""
+
+    oxygens: float = Field(gt=0, description="oxygens per formula unit")
+    sum: float = Field(gt=0, description="expected cation sum")
+    tolerance: float = Field(gt=0, description="largest difference, common practice")
+
+
+class CationSettings(TestSettings):
+    """Cation sums of probe spots."""
+
+    action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
+    rules: dict[str, CationRule] = Field(
+        default_factory=dict, description="phase -> rule; beside the phase table's (common practice)"
+    )
+    sigmas: float = Field(2.0, ge=0, description="as for totals")
+    ferric: bool = Field(False, description="estimate ferric iron by charge balance before the sum (Droop 1987)")
+
+
+class IdentitySettings(TestSettings):
+    """Spots whose composition fits another phase of the session better."""
+
+    action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
+    ratio: float = Field(
+        3.0, gt=1, description="how many times nearer the other phase must be, in log-ratio distance; own choice"
+    )
+
+
+class OverlapSettings(TestSettings):
+    """Glass in crystal spots and crystal in glass spots."""
+
+    action: Literal["drop", "mark"] = Field("drop", description="what a finding does when `use` is drop")
+    use: Literal["drop", "mark", "unmix"] = Field("drop", description="drop, only mark, or remove the overlap by calculation")
+    z: float = Field(3.0, gt=0, description="leave-one-out z above which a spot is flagged; false alarms measured in docs")
+    something_else_p: float = Field(
+        0.001, gt=0, lt=1, description="p-value of the residual below which a spot is something else than this mixture"
+    )
+    melt_phase: str = Field("glass", description="the phase taken as the melt")
+
+
+class ZoningSettings(TestSettings):
+    """Growth zoning within grains."""
+
+    p: float = Field(0.01, gt=0, lt=1, description="p-value of the zoning score's trend with distance")
+    represent: Literal["all", "rim", "core"] = Field(
+        "all", description="which spots of a zoned group represent equilibrium with the melt"
+    )
+    rim_um: float = Field(20.0, gt=0, description="a spot is rim when its distance is at most this")
+
+
+class OutlierSettings(TestSettings):
+    """Spots that stand out in many analytes together, or single analytes on request."""
+
+    p: float = Field(0.01, gt=0, lt=1, description="p-value of as many analytes standing out in one spot")
+    alpha: float = Field(0.05, gt=0, lt=1, description="significance of the single-analyte test")
+    per_analyte: Literal["off", "grubbs", "esd", "modified-z"] = Field(
+        "off", description="test every analyte alone, Holm-corrected; costs coverage of the intervals when it drops"
+    )
+    threshold: float = Field(3.5, gt=0, description="modified z beyond which a value is an outlier (Iglewicz & Hoaglin 1993)")
+    min_spots: int = Field(5, ge=3, description="fewer spots than this are not tested")
+
+
+class ImpreciseSettings(TestSettings):
+    """Values too imprecise to matter, limits above the melt's value, failed reference materials."""
+
+    relative_sigma: float = Field(0.5, gt=0, description="relative sigma above which a value is remarked; own choice")
+
+
+class ScreenSettings(Settings):
+    """Section [screen]."""
+
+    rulings: str | None = Field(None, description="table of rulings: spot, analyte, verdict, analyst, date, reason")
+    total: TotalSettings = Field(TotalSettings(), description="oxide totals")
+    cations: CationSettings = Field(CationSettings(), description="cation sums")
+    identity: IdentitySettings = Field(IdentitySettings(), description="mislabelled phases")
+    overlap: OverlapSettings = Field(OverlapSettings(), description="overlap with another phase")
+    zoning: ZoningSettings = Field(ZoningSettings(), description="growth zoning")
+    outlier: OutlierSettings = Field(OutlierSettings(), description="outliers")
+    imprecise: ImpreciseSettings = Field(ImpreciseSettings(), description="precision remarks")
