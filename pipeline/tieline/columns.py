@@ -58,6 +58,17 @@ INGEST_SET_ASIDE = TableSpec(
     ),
 )
 
+INGEST_EXPERIMENTS = TableSpec(
+    "ingest.experiments",
+    "experiment x condition",
+    (
+        Column("experiment", "label", "experiment"),
+        Column("condition", "label", "name of the condition, with its unit, such as temperature_C"),
+        Column("value", "number", "its value; null for a text", "as named", True),
+        Column("text", "text", "the cell's text", nullable=True),
+    ),
+)
+
 CONVERT = TableSpec(
     "convert",
     "spot x analyte",
@@ -341,6 +352,7 @@ TABLES: dict[str, TableSpec] = {
         INGEST,
         INGEST_SPOTS,
         INGEST_SET_ASIDE,
+        INGEST_EXPERIMENTS,
         CONVERT,
         CALIBRATE,
         CALIBRATE_MATERIALS,

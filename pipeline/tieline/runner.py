@@ -1,0 +1,225 @@
+"""Runs the chain: finds what is stale, reads, checks, calls, checks, and writes all results or none.
+
+The only module that connects stages with files. Every stage's new tables are first written beside
+their targets under temporary names; only when the whole run has succeeded are they renamed, so that a
+problem found late leaves the folder as it was.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field
+from typing import Any
+
+import pyarrow as pa
+
+from tieline import __version__
+from tieline.configuration import Session
+from tieline.errors import DefectError, InputError, Problem
+from tieline.lock import locked
+from tieline.manifest import write_manifest
+from tieline.plan import Verdict, judge, read_records, stage_fingerprint, table_path
+from tieline.provenance import bytes_digest, content_digest
+from tieline.reading.input_file import InputFile
+from tieline.results import Ledger, Remark, StageResult
+from tieline.stages import NAMES, STAGES, Stage
+from tieline.storage import SCHEMA_VERSION, Pending, read_table
+
+Progress = Callable[[str, str], None]
+
+
+@dataclass(frozen=True)
+class StageReport:
+    """What became of one stage in a run: its verdict before, and its ledger and remarks after."""
+
+    verdict: Verdict
+    recomputed: bool
+    ledger: Ledger
+    remarks: tuple[Remark, ...]
+
+
+@dataclass
+class Workspace:
+    """What is known so far in one run: input files, records, content digests, tables in memory."""
+
+    session: Session
+    files: dict[str, InputFile]
+    digests: dict[str, str] = field(default_factory=dict)
+    tables: dict[str, pa.Table] = field(default_factory=dict)
+
+    def table(self, name: str) -> pa.Table:
+        if name not in self.tables:
+            self.tables[name] = read_table(table_path(self.session.run_folder, name), name)
+        return self.tables[name]
+
+
+def status(session: Session) -> list[Verdict]:
+    """The verdict on every stage; reads input files and stage-file footers, writes nothing."""
+    work = _workspace(session, STAGES)
+    verdicts = []
+    for stage in STAGES:
+        records = read_records(session.run_folder, stage)
+        verdict = judge(stage, session.settings, records, work.digests)
+        if verdict.state == "current":
+            work.digests.update(_recorded_digests(records))
+        verdicts.append(verdict)
+    return verdicts
+
+
+def run(
+    session: Session,
+    *,
+    only: str | None = None,
+    until: str | None = None,
+    fresh: bool = False,
+    progress: Progress = lambda stage, state: None,
+) -> list[StageReport]:
+    """Brings the run folder up to date and returns what was done, stage by stage.
+
+    `only` recomputes one stage from current files before it; `until` stops after a stage; `fresh`
+    recomputes everything. Raises InputError with every problem found, and then has changed nothing.
+    """
+    stages = _selected(only, until)
+    work = _workspace(session, stages)
+    session.run_folder.mkdir(parents=True, exist_ok=True)
+    with locked(session.run_folder), Pending() as pending:
+        reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
+        pending.commit()
+        write_manifest(session, {path: file.data for path, file in work.files.items()})
+    return reports
+
+
+def check(session: Session) -> list[StageReport]:
+    """Everything `run` would do, without writing: raises InputError with every problem found."""
+    work = _workspace(session, STAGES)
+    return [_compute(stage, work, None, Verdict(stage.name, "missing")) for stage in STAGES]
+
+
+def _selected(only: str | None, until: str | None) -> tuple[Stage, ...]:
+    last = only or until
+    if last is not None and last not in NAMES:
+        from tieline.errors import nearest
+
+        remedy = nearest(last, NAMES) or f"Stages: {', '.join(NAMES)}."
+        raise InputError(Problem(f'no stage is called "{last}".', remedy=remedy))
+    return STAGES if last is None else STAGES[: NAMES.index(last) + 1]
+
+
+def _workspace(session: Session, stages: Iterable[Stage]) -> Workspace:
+    paths = dict.fromkeys(path for stage in stages for path in stage.files(session.settings))
+    files, problems = {}, []
+    for path in paths:
+        try:
+            with pa.OSFile(str(session.resolve(path)), "rb") as stream:
+                files[path] = InputFile(path, stream.read_buffer())
+        except (OSError, ValueError) as error:
+            problems.append(_unreadable(session, path, error))
+    if problems:
+        raise InputError([*problems, *_problems_of_files(stages, session, files)])
+    digests = {path: bytes_digest(file.data) for path, file in files.items()}
+    return Workspace(session, files, digests)
+
+
+def _bring_up_to_date(
+    stage: Stage, work: Workspace, pending: Pending, only: str | None, fresh: bool, progress: Progress
+) -> StageReport:
+    records = read_records(work.session.run_folder, stage)
+    verdict = judge(stage, work.session.settings, records, work.digests)
+    wanted = stage.name == only if only is not None else fresh or verdict.state != "current"
+    if only is not None and not wanted and verdict.state != "current":
+        raise InputError(_refusal(only, verdict))
+    if not wanted:
+        progress(stage.name, "current")
+        work.digests.update(_recorded_digests(records))
+        record = records[stage.outputs[0]] or {}
+        ledger = Ledger(**record["ledger"])
+        return StageReport(verdict, False, ledger, tuple(Remark(**remark) for remark in record["remarks"]))
+    progress(stage.name, "running")
+    report = _compute(stage, work, pending, verdict)
+    progress(stage.name, "done")
+    return report
+
+
+def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Verdict) -> StageReport:
+    settings = work.session.settings
+    files = {path: work.files[path] for path in stage.files(settings)}
+    inputs = {name.replace(".", "_"): work.table(name) for name in stage.inputs}
+    extra = {"files": files} if stage.reads_files else {}
+    try:
+        result = stage.function()(**inputs, **extra, settings=stage.settings(settings))
+    except InputError as error:
+        later = STAGES[NAMES.index(stage.name) + 1 :]
+        raise InputError([*error.problems, *_problems_of_files(later, work.session, work.files)]) from None
+    _check_result(stage, result, work)
+    work.tables.update(result.tables)
+    used = {name: work.digests[name] for name in (*stage.inputs, *files)}
+    record = {
+        "version": __version__,
+        "schema": SCHEMA_VERSION,
+        "stage": stage.name,
+        "revision": stage.revision,
+        "fingerprint": stage_fingerprint(stage, settings, used),
+        "inputs": used,
+        "settings": stage.own_settings(settings),
+        "ledger": {"unit": result.ledger.unit, "entered": result.ledger.entered, "outcomes": dict(result.ledger.outcomes)},
+        "remarks": [{"message": remark.message, "place": remark.place} for remark in result.remarks],
+    }
+    for name in reversed(stage.outputs):
+        work.digests[name] = content_digest(result.tables[name])
+        if pending is not None:
+            path = table_path(work.session.run_folder, name)
+            pending.add(path, name, result.tables[name], {**record, "content": work.digests[name]})
+    _forget(stage, work)
+    return StageReport(verdict, True, result.ledger, result.remarks)
+
+
+def _check_result(stage: Stage, result: StageResult, work: Workspace) -> None:
+    if tuple(result.tables) != stage.outputs:
+        raise DefectError(f"{stage.name} returned {tuple(result.tables)}, declared are {stage.outputs}")
+    result.ledger.check(stage.name)
+    if stage.counted is not None and result.ledger.entered != work.table(stage.counted).num_rows:
+        raise DefectError(
+            f"{stage.name}: {result.ledger.entered} {result.ledger.unit} entered, "
+            f"but {stage.counted} has {work.table(stage.counted).num_rows} rows"
+        )
+
+
+def _forget(stage: Stage, work: Workspace) -> None:
+    """Drops tables from memory that no later stage reads."""
+    later = {name for other in STAGES[NAMES.index(stage.name) + 1 :] for name in (*other.inputs, other.counted)}
+    for name in [name for name in work.tables if name not in later]:
+        del work.tables[name]
+
+
+def _recorded_digests(records: dict[str, dict[str, Any] | None]) -> dict[str, str]:
+    return {table: record["content"] for table, record in records.items() if record is not None}
+
+
+def _problems_of_files(stages: Iterable[Stage], session: Session, files: dict[str, InputFile]) -> list[Problem]:
+    """Problems of the small files that later stages read, so that they are all told at once."""
+    problems: list[Problem] = []
+    for stage in stages:
+        own = {path: files[path] for path in stage.files(session.settings) if path in files}
+        try:
+            stage.read_files(own)
+        except InputError as error:
+            problems += error.problems
+    return problems
+
+
+def _unreadable(session: Session, path: str, error: Exception) -> Problem:
+    from tieline.errors import nearest
+
+    target = session.resolve(path)
+    reason = "no such file" if not target.exists() else f"cannot be read ({getattr(error, 'strerror', None) or error})"
+    others = [other.name for other in target.parent.iterdir()] if target.parent.is_dir() else []
+    remedy = nearest(target.name, others) or f"The path is relative to {session.path}."
+    return Problem(f"{reason}.", path, remedy=remedy)
+
+
+def _refusal(only: str, verdict: Verdict) -> Problem:
+    reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
+    return Problem(
+        f"--only {only} needs current files of the stages before it, but {verdict.stage} is {verdict.state}{reasons}.",
+        remedy=f"Run without --only, or with --until {verdict.stage} first.",
+    )

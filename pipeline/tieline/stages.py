@@ -1,0 +1,149 @@
+"""The chain, in order. Reading this table is reading the program."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from importlib import import_module
+from typing import Any
+
+from tieline.reading.input_file import InputFile
+from tieline.results import StageResult
+from tieline.settings import SessionSettings
+from tieline.settings.base import Settings
+
+
+@dataclass(frozen=True)
+class Stage:
+    """One stage: a pure function of tables, its settings and, for some, input files.
+
+    The function `module.name` is called with one keyword argument per input table (dots become
+    underscores), `settings`, and `files` where `reads_files`. `counted` is the table whose rows
+    are what the stage's ledger says entered. `reader` names a function of the same module that reads
+    `files` alone, so that their problems are found even when an earlier stage already failed.
+    """
+
+    name: str
+    revision: int
+    inputs: tuple[str, ...]
+    outputs: tuple[str, ...]
+    settings: Callable[[SessionSettings], Settings]
+    files: Callable[[SessionSettings], tuple[str, ...]] = lambda _: ()
+    reads_files: bool = False
+    counted: str | None = None
+    reader: str | None = None
+
+    def function(self) -> Callable[..., StageResult]:
+        """The stage function, imported only when it is needed."""
+        return self._member(self.name)
+
+    def read_files(self, files: Mapping[str, InputFile]) -> None:
+        """Raises InputError with every problem of the stage's own small files."""
+        if self.reader is not None and files:
+            self._member(self.reader)(files)
+
+    def _member(self, name: str) -> Callable[..., Any]:
+        member: Callable[..., Any] = getattr(import_module(f"tieline.{self.name}"), name)
+        return member
+
+    def own_settings(self, settings: SessionSettings) -> dict[str, Any]:
+        """The settings in effect for this stage, as plain values."""
+        return self.settings(settings).model_dump(mode="json")
+
+
+def _ingest_settings(settings: SessionSettings) -> Settings:
+    # The accepted values are read by `calibrate`: a revised table must not make `ingest` stale.
+    materials = settings.ingest.reference_materials.model_copy(update={"path": None})
+    return settings.ingest.model_copy(update={"reference_materials": materials})
+
+
+def _ingest_files(settings: SessionSettings) -> tuple[str, ...]:
+    tables = [table.path for table in settings.ingest.tables]
+    if settings.ingest.experiments is not None:
+        tables.append(settings.ingest.experiments.path)
+    return tuple(dict.fromkeys(tables))
+
+
+def _optional(path: str | None) -> tuple[str, ...]:
+    return () if path is None else (path,)
+
+
+STAGES: tuple[Stage, ...] = (
+    Stage(
+        name="ingest",
+        revision=1,
+        inputs=(),
+        outputs=("ingest", "ingest.spots", "ingest.set_aside", "ingest.experiments"),
+        settings=_ingest_settings,
+        files=_ingest_files,
+        reads_files=True,
+    ),
+    Stage(
+        name="convert",
+        revision=1,
+        inputs=("ingest",),
+        outputs=("convert",),
+        settings=lambda settings: settings.convert,
+        counted="ingest",
+    ),
+    Stage(
+        name="calibrate",
+        revision=1,
+        inputs=("convert", "ingest.spots"),
+        outputs=("calibrate", "calibrate.materials"),
+        settings=lambda settings: settings.calibrate,
+        files=lambda settings: _optional(settings.ingest.reference_materials.path),
+        reads_files=True,
+        counted="convert",
+        reader="read_accepted_values",
+    ),
+    Stage(
+        name="screen",
+        revision=1,
+        inputs=("convert", "calibrate", "ingest.spots"),
+        outputs=("screen", "screen.findings", "screen.groups"),
+        settings=lambda settings: settings.screen,
+        files=lambda settings: _optional(settings.screen.rulings),
+        reads_files=True,
+        counted="convert",
+        reader="read_rulings",
+    ),
+    Stage(
+        name="pair",
+        revision=1,
+        inputs=("convert", "calibrate", "screen", "ingest.spots"),
+        outputs=("pair", "pair.pairs", "pair.limits", "pair.techniques"),
+        settings=lambda settings: settings.pair,
+        counted="screen",
+    ),
+    Stage(
+        name="partition",
+        revision=1,
+        inputs=("pair", "pair.pairs", "pair.limits", "calibrate"),
+        outputs=("partition", "partition.alternatives", "partition.covariance"),
+        settings=lambda settings: settings.partition,
+        counted="pair",
+    ),
+    Stage(
+        name="classify",
+        revision=1,
+        inputs=("partition", "pair", "pair.limits"),
+        outputs=("classify",),
+        settings=lambda settings: settings.classify,
+        counted="partition",
+    ),
+    Stage(
+        name="assess",
+        revision=1,
+        inputs=("classify", "partition.covariance", "pair", "ingest.experiments"),
+        outputs=("assess",),
+        settings=lambda settings: settings.assess,
+    ),
+)
+
+NAMES = tuple(stage.name for stage in STAGES)
+
+
+def producer(table: str) -> str:
+    """The stage that makes a table: the part of its name before the dot."""
+    return table.partition(".")[0]
