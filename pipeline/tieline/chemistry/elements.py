@@ -134,7 +134,7 @@ def atomic_weight_uncertainty(symbol: str) -> float:
     """Standard uncertainty of the atomic weight in g/mol: half-width of the stated interval over √3.
 
     The stated ± covers every normal material and is read as a rectangular distribution (Possolo et al. 2018,
-    Pure Appl. Chem. 90:395). For lead the stated 1.1 g/mol covers extreme radiogenic materials. Raises KeyError.
+    Pure Appl. Chem. 90:395). For lead the stated 1.1 g/mol covers radiogenic materials. Raises KeyError.
     """
     return _weight_and_stated(symbol)[1] / math.sqrt(3.0)
 

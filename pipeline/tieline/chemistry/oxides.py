@@ -1,4 +1,4 @@
-"""Oxides: a strict formula parser, element fractions, usual oxides, oxygen equivalents of halogens and sulfur.
+"""Oxides: a strict formula parser, element fractions, usual oxides, oxygen equivalents of anions.
 
 The parser accepts one cation and oxygen, or a bare element, and nothing else: general formula parsers read
 ``FeOT`` as an iron tritium oxide and ``CaSO4.2H2O`` as O4.2 without a word.
@@ -27,9 +27,9 @@ _CHARGES: dict[str, tuple[int, ...]] = {
     "H": (1,), "Li": (1,), "Be": (2,), "B": (3,), "C": (4,), "Na": (1,), "Mg": (2,), "Al": (3,), "Si": (4,),
     "P": (5, 3), "S": (6, 4), "K": (1,), "Ca": (2,), "Sc": (3,), "Ti": (4, 3), "V": (3, 4, 5, 2),
     "Cr": (3, 2, 6), "Mn": (2, 3, 4), "Fe": (2, 3), "Co": (2, 3), "Ni": (2,), "Cu": (2, 1), "Zn": (2,),
-    "Ga": (3,), "Ge": (4,), "As": (3, 5), "Se": (4,), "Rb": (1,), "Sr": (2,), "Y": (3,), "Zr": (4,), "Nb": (5,),
-    "Mo": (6, 4), "Ag": (1,),
-    "Cd": (2,), "In": (3,), "Sn": (4, 2), "Sb": (3, 5), "Te": (4,), "Cs": (1,), "Ba": (2,),
+    "Ga": (3,), "Ge": (4,), "As": (3, 5), "Se": (4,), "Rb": (1,), "Sr": (2,), "Y": (3,), "Zr": (4,),
+    "Nb": (5,), "Mo": (6, 4), "Ag": (1,), "Cd": (2,), "In": (3,), "Sn": (4, 2), "Sb": (3, 5), "Te": (4,),
+    "Cs": (1,), "Ba": (2,),
     **dict.fromkeys(RARE_EARTHS, (3,)), "Ce": (3, 4), "Pr": (3, 4), "Eu": (3, 2), "Tb": (3, 4),
     "Hf": (4,), "Ta": (5,), "W": (6, 4), "Re": (7, 4), "Tl": (1, 3), "Pb": (2, 4), "Bi": (3,), "Th": (4,),
     "Pa": (5,), "U": (4, 6, 5),
@@ -106,14 +106,14 @@ def element_fraction(formula: str) -> float:
 
 
 def oxide_from_element(element: str, charge: int) -> str:
-    """The simplest oxide of a cation: ("Fe", 3) gives ``Fe2O3``. Raises ValueError for oxygen or a charge < 1."""
+    """The simplest oxide of a cation: ("Fe", 3) gives ``Fe2O3``. ValueError for oxygen or a charge < 1."""
     if element not in SYMBOLS or element == "O" or charge < 1:
         raise ValueError(f"no oxide of {element!r} with charge {charge}")
     return oxide_formula(element, *_subscripts(charge))
 
 
 def cation_charges(element: str) -> tuple[int, ...]:
-    """Charges of the element in the oxides that are reported, the usual one first; empty for halogens, gold."""
+    """Charges of the element in reported oxides, the usual one first; empty for halogens and noble metals."""
     return _CHARGES.get(element, ())
 
 
@@ -121,8 +121,8 @@ def usual_oxide(element: str, overrides: Mapping[str, str] | None = None) -> str
     """The oxide (or the bare element) in which an element is counted in a total and in a formula.
 
     Iron is FeO, sulfur SO3, manganese MnO, every rare earth RE2O3; halogens and noble metals are counted as
-    elements. ``overrides`` changes that by element, as ``{"Fe": "Fe2O3", "S": "S"}``. Common practice, not a law
-    of nature. Raises ValueError for an unknown element and for an override that belongs to another element.
+    elements. ``overrides`` changes that by element, as ``{"Fe": "Fe2O3", "S": "S"}``. Common practice, not
+    a law of nature. Raises ValueError for an unknown element and for an override of another element.
     """
     if element not in SYMBOLS:
         raise ValueError(f"{element!r} is not the symbol of an element")
