@@ -42,7 +42,7 @@ _MAGNESIUM_NUMBER = re.compile(r"(?i:#? ?mg ?(?:#|no\.?|number)|#mg|xmg)")
 _OXYGEN_REPLACED = re.compile(r"-? ?O ?[=≡] ?(?:F|Cl|S)(?: ?[,+] ?(?:F|Cl|S))*")
 _TOTAL_MEANS_ALL_FORMS = frozenset({"Fe", "FeO", "Fe2O3", "H2O", "CO2", "S", "C"})
 
-# What a mistyped or unusual analyte looks like: REE2O3 or SiO2*, an ion, a zero for the letter O, a mass number.
+# What a mistyped or unusual analyte looks like: REE2O3 or SiO2*, an ion, a zero for the letter O.
 _FORMULA_LIKE = re.compile(
     r"[A-Z][A-Za-z]{0,2}[0-9]{0,2}O[0-9]{0,2}[*+]?|[A-Z][a-z]?[1-7]?[+-]|[A-Z][a-z]?[1-9]?0[1-9]?"
 )
