@@ -166,8 +166,8 @@ _TABLE: tuple[PhaseFacts, ...] = (
         total_window=(95.0, 101.5), hydrous=True,
         sources={
             "total_window": "from memory 97-101 for dry glass; widened because sound analyses of seven"
-            " reference glasses totalled 97.2 ± 2.4 (2 s.d., n = 241; Barker et al. 2017, data set); a hydrous"
-            " glass falls short by its water and needs its own window",
+            " reference glasses totalled 97.2 ± 2.4 (2 s.d., n = 241; Barker et al. 2017, data set); a"
+            " hydrous glass falls short by its water and needs its own window",
         },
     ),
     PhaseFacts("metal", ("met", "alloy", "Fe metal", "iron", "iron metal"), "metal"),
