@@ -1,7 +1,7 @@
 """The covariance of one clean spot, and the least-squares fit of mixing directions against it.
 
-Shapes throughout: G groups (one phase of one experiment each), n spots (padded), p elements. Concentrations may be
-in any one unit; the results named fraction are dimensionless.
+Shapes throughout: G groups (one phase of one experiment each), n spots (padded), p elements. Concentrations
+may be in any one unit; the results named fraction are dimensionless.
 """
 
 from typing import NamedTuple
@@ -9,8 +9,7 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-Array = npt.NDArray[np.float64]
-Mask = npt.NDArray[np.bool_]
+from tieline.statistics.groups import BoolArray, FloatArray
 
 # Every way of keeping some of the three terms b, a·x, (r·x)²: the best of those with no negative term is the
 # non-negative least-squares solution.
@@ -22,21 +21,21 @@ _KAPPA_PRIOR_WEIGHT = 8.0
 class MixingFit(NamedTuple):
     """Amplitudes of the directions in every spot (G, n, m), their variances, and the residual chi-square."""
 
-    amplitudes: Array
-    variances: Array
-    residual_chi2: Array
-    degrees_of_freedom: Array
+    amplitudes: FloatArray
+    variances: FloatArray
+    residual_chi2: FloatArray
+    degrees_of_freedom: FloatArray
 
 
 class VarianceFunction(NamedTuple):
     """sigma²(x) = constant + linear·x + quadratic·x², per group and element (G, p), never below `floor`."""
 
-    constant: Array
-    linear: Array
-    quadratic: Array
-    floor: Array
+    constant: FloatArray
+    linear: FloatArray
+    quadratic: FloatArray
+    floor: FloatArray
 
-    def at(self, concentration: Array) -> Array:
+    def at(self, concentration: FloatArray) -> FloatArray:
         """Counting variance at concentrations (G, p) or (G, n, p), same unit as the values fitted."""
         x = np.maximum(concentration, 0.0)
         if x.ndim == 2:
@@ -49,21 +48,22 @@ class VarianceFunction(NamedTuple):
         return VarianceFunction(*(part[index] for part in self))
 
 
-def fit_variance_function(values: Array, sigmas: Array) -> VarianceFunction:
-    """Fit sigma² = b + a·x + (r·x)², all terms non-negative, to the reported sigmas of every group and element.
+def fit_variance_function(values: FloatArray, sigmas: FloatArray) -> VarianceFunction:
+    """Fit sigma² = b + a·x + (r·x)², no term negative, to the reported sigmas of every group and element.
 
-    A spot's own sigma grows with its own value, so that weights made from it prefer the spots that happened to be
-    low; a function of concentration fitted over the group does not. Two passes weight by the relative error of
-    sigma², the second with the fitted instead of the reported variance.
+    A spot's own sigma grows with its own value, so that weights made from it prefer the spots that happened
+    to be low; a function of concentration fitted over the group does not. Two passes weight by the relative
+    error of sigma², the second with the fitted instead of the reported variance.
 
-    Parameters: values, sigmas (G, n, p), NaN or sigma <= 0 where not known. Returns coefficients (G, p), NaN for an
-    element without any sigma. Valid between zero and the largest value of the group.
+    Parameters: values, sigmas (G, n, p), NaN or sigma <= 0 where not known. Returns coefficients (G, p),
+    NaN for an element without any sigma. Valid between zero and the largest value of the group.
     """
     known = np.isfinite(values) & (sigmas > 0)
     x = np.where(known, np.maximum(values, 0.0), 0.0)
     variance = np.where(known, sigmas, 1.0) ** 2
     count = known.sum(axis=1)
-    scale = np.maximum(np.max(x, axis=1, initial=0.0), np.finfo(float).tiny)
+    largest = np.max(x, axis=1, initial=0.0)
+    scale = np.where(largest > 0, largest, 1.0)
     x = x / scale[:, None, :]
     reference = np.sum(np.where(known, variance, 0.0), axis=1) / np.maximum(count, 1)
     coefficients = np.zeros((*reference.shape, 3))
@@ -82,7 +82,9 @@ def fit_variance_function(values: Array, sigmas: Array) -> VarianceFunction:
     return VarianceFunction(*(np.where(unknown, np.nan, part) for part in parts))
 
 
-def _nonnegative_quadratic(x: Array, variance: Array, weight: Array, reference: Array) -> Array:
+def _nonnegative_quadratic(
+    x: FloatArray, variance: FloatArray, weight: FloatArray, reference: FloatArray
+) -> FloatArray:
     """Weighted non-negative least squares on 1, x, x² by trying every subset of terms; returns (G, p, 3)."""
     unit = reference[:, None, :] + np.finfo(float).tiny
     y = variance / unit
@@ -114,14 +116,15 @@ def _nonnegative_quadratic(x: Array, variance: Array, weight: Array, reference: 
 
 
 def nuisance_directions(
-    clean: Array, contaminant: Array, is_trace: Mask, nuisance: str
-) -> tuple[Array, float]:
-    """Directions (G, p, 2) along which clean spots differ for harmless reasons, and the standard deviation allowed.
+    clean: FloatArray, contaminant: FloatArray, is_trace: BoolArray, nuisance: str
+) -> tuple[FloatArray, float]:
+    """Directions (G, p, 2) along which clean spots differ for harmless reasons, and the sd allowed.
 
-    "yield-and-growth": a common yield of the traces (first), and growth zoning, which multiplies elements of low
-    partition coefficient alike and moves compatible ones the other way (second), both ± 50 %. "yield": a common
-    yield of all elements, ± 3 % (a glass, whose spots share neither growth zoning nor an internal standard drift).
-    Own method; the growth direction is the first-order change of c with the fraction crystallised (Rayleigh).
+    "yield-and-growth": a common yield of the traces (first), and growth zoning, which multiplies elements
+    of low partition coefficient alike and moves compatible ones the other way (second), both ± 50 %.
+    "yield": a common yield of all elements, ± 3 % (a glass, whose spots share neither growth zoning nor an
+    internal standard drift). Own method; the growth direction is the first-order change of c with the
+    fraction crystallised (Rayleigh).
     """
     level = np.maximum(clean, 0.0)
     if nuisance == "yield":
@@ -132,21 +135,21 @@ def nuisance_directions(
     return np.stack([level, level * growth_factor(clean, contaminant)], axis=-1), 0.5
 
 
-def growth_factor(clean: Array, contaminant: Array) -> Array:
-    """1 − c/g limited to −1.5 … 1: how growth zoning changes an element of partition coefficient c/g (G, p)."""
+def growth_factor(clean: FloatArray, contaminant: FloatArray) -> FloatArray:
+    """1 − c/g limited to −1.5 … 1 (G, p): what growth zoning does to an element of coefficient c/g."""
     with np.errstate(divide="ignore", invalid="ignore"):
         ratio = np.maximum(clean, 0.0) / contaminant
     return np.clip(1.0 - np.where(np.isfinite(ratio), ratio, 2.5), -1.5, 1.0)
 
 
 def fit_directions(
-    deviations: Array, inverse_variance: Array, directions: Array, prior_variance: Array
+    deviations: FloatArray, inverse_variance: FloatArray, directions: FloatArray, prior_variance: FloatArray
 ) -> MixingFit:
     """Generalized least squares of every spot's deviation on directions, some of them with a prior variance.
 
-    With S = diag(variance) + Σ prior·l·lᵀ this is the matched filter w = S⁻¹Δ/(ΔᵀS⁻¹Δ) in Henderson's (1975) mixed
-    model form: the amplitude of a direction with infinite prior variance is wᵀy, its variance 1/(ΔᵀS⁻¹Δ), and the
-    residual chi-square that of S.
+    With S = diag(variance) + Σ prior·l·lᵀ this is the matched filter w = S⁻¹Δ/(ΔᵀS⁻¹Δ) in Henderson's
+    (1975) mixed model form: the amplitude of a direction with infinite prior variance is wᵀy, its variance
+    1/(ΔᵀS⁻¹Δ), and the residual chi-square that of S.
 
     Parameters: deviations (G, n, p), 0 where not measured; inverse_variance (G, n, p), 0 where not measured;
     directions (G, p, m); prior_variance (m,), inf for a free amplitude.
@@ -180,47 +183,49 @@ def fit_directions(
     )
 
 
-def leverages(inverse_variance: Array, directions: Array, prior_variance: Array) -> Array:
-    """Share (G, p) of an element's variance that the directions take up in a spot with all elements (0 … 1)."""
+def leverages(inverse_variance: FloatArray, directions: FloatArray, prior_variance: FloatArray) -> FloatArray:
+    """Share (G, p) of an element's variance that the directions take up in a spot with all elements."""
     gram = np.einsum("gp,gpi,gpj->gij", inverse_variance, directions, directions)
     diagonal = np.einsum("gii->gi", gram)
     gram = gram + (1.0 / prior_variance + (diagonal <= 0))[..., None] * np.eye(gram.shape[-1])
     root = np.sqrt(np.einsum("gii->gi", gram))
     inverse = np.linalg.inv(gram / (root[:, :, None] * root[:, None, :]) + 1e-12 * np.eye(gram.shape[-1]))
     scaled = directions / root[:, None, :]
-    return np.clip(inverse_variance * np.einsum("gpi,gij,gpj->gp", scaled, inverse, scaled), 0.0, 0.95)
+    taken: FloatArray = inverse_variance * np.einsum("gpi,gij,gpj->gp", scaled, inverse, scaled)
+    return np.clip(taken, 0.0, 0.95)
 
 
 def raise_spread(
-    squared_residuals: Array,
-    counting: Array,
-    level_squared: Array,
-    expected: Array,
-    spread: Array,
+    squared_residuals: FloatArray,
+    counting: FloatArray,
+    level_squared: FloatArray,
+    expected: FloatArray,
+    spread: FloatArray,
     steps: int = 2,
-) -> Array:
-    """Newton steps of the relative spread h² toward Σ r²/(sigma² + h²c²) = degrees of freedom (Paule & Mandel 1982).
+) -> FloatArray:
+    """Steps of the relative spread h² toward Σ r²/(sigma² + h²c²) = degrees of freedom (Paule & Mandel 1982).
 
-    Parameters: squared residuals, counting variance and c² (G, n, p) of one class of elements, residuals 0 where
-    not used; expected (G,) degrees of freedom; spread (G,) the h² to start from. From below, the steps converge
-    without overshooting because the sum is convex in h²; h² >= 0 is kept.
+    Parameters: squared residuals, counting variance and c² (G, n, p) of one class of elements, residuals 0
+    where not used; expected (G,) degrees of freedom; spread (G,) the h² to start from. The steps are
+    Newton's on the reciprocal of the sum, which is concave in h²: they never pass the solution from below.
+    h² >= 0 is kept.
     """
     for _ in range(steps):
-        total = counting + spread[:, None, None] * level_squared
-        inverse = 1.0 / total
+        inverse = 1.0 / (counting + spread[:, None, None] * level_squared)
         standardised = squared_residuals * inverse
-        excess = np.sum(standardised, axis=(1, 2)) - expected
+        total = np.sum(standardised, axis=(1, 2))
         slope = np.einsum("gnp,gnp,gnp->g", standardised, inverse, level_squared)
-        step = np.where(slope > 0, excess / np.where(slope > 0, slope, 1.0), 0.0)
-        spread = np.clip(spread + step, 0.0, 4.0)
+        solvable = (slope > 0) & (expected > 0)
+        change = (total - expected) * total / np.where(solvable, slope * expected, 1.0)
+        spread = np.clip(spread + np.where(solvable, change, 0.0), 0.0, 4.0)
     return spread
 
 
-def element_inflation(standardised_sum: Array, degrees_of_freedom: Array) -> Array:
+def element_inflation(standardised_sum: FloatArray, degrees_of_freedom: FloatArray) -> FloatArray:
     """Variance factor kappa >= 1 (G, p) of an element that scatters more than its class.
 
-    (8 + q)/(8 + ν): the residual sum of squares q, in units of the variance, against its expectation ν, shrunk
-    toward 1 with the weight of eight spots. Own method.
+    (8 + q)/(8 + ν): the residual sum of squares q, in units of the variance, against its expectation ν,
+    shrunk toward 1 with the weight of eight spots. Own method.
     """
     return np.maximum(
         1.0, (_KAPPA_PRIOR_WEIGHT + standardised_sum) / (_KAPPA_PRIOR_WEIGHT + degrees_of_freedom)

@@ -1,4 +1,4 @@
-"""Where the clean spots of a group lie along the mixing direction, though most of them may be contaminated."""
+"""Where the clean spots of a group lie along the mixing line, though most may be contaminated."""
 
 from functools import cache
 from typing import NamedTuple
@@ -7,8 +7,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.special import ndtr
 
-Array = npt.NDArray[np.float64]
-Mask = npt.NDArray[np.bool_]
+from tieline.statistics.groups import BoolArray, FloatArray
 
 _LARGEST_FRACTION = 0.5
 _SCALE_STEP = 3.0
@@ -20,54 +19,61 @@ _GRID = np.arange(-6.0, 6.01, 0.25)  # in sd of one spot about the most probable
 class CleanLevel(NamedTuple):
     """Posterior of the clean level: mean and variance (G,), and without each spot in turn (G, n)."""
 
-    mean: Array
-    variance: Array
-    mean_without: Array
-    variance_without: Array
-    probability_clean: Array
+    mean: FloatArray
+    variance: FloatArray
+    mean_without: FloatArray
+    variance_without: FloatArray
+    probability_clean: FloatArray
 
 
 @cache
-def _log_density_table() -> Array:
+def _log_density_table() -> FloatArray:
     """log density of (t − t0)/sd for a spot that may be contaminated, one row per number of slab scales.
 
-    Half clean: normal, with a 2 % tail three times as wide. Half contaminated: an equal mixture of half-normals of
-    scales 1, 3, 9, ... sd convolved with the noise, hence of a fraction whose order of magnitude is unknown.
+    Half clean: normal, with a 2 % tail three times as wide. Half contaminated: an equal mixture of half-
+    normals of scales 1, 3, 9, ... sd convolved with the noise, hence of a fraction whose order of magnitude
+    is unknown.
     """
     u = np.sinh(np.arange(_TABLE_LOW, _TABLE_HIGH + _TABLE_STEP, _TABLE_STEP))
     scale = _SCALE_STEP ** np.arange(_MOST_SCALES)[:, None]
     width = np.hypot(scale, 1.0)
     halves = 2.0 * np.exp(-0.5 * (u / width) ** 2) / (np.sqrt(2 * np.pi) * width) * ndtr(u * scale / width)
     slab = np.cumsum(halves, axis=0) / np.arange(1, _MOST_SCALES + 1)[:, None]
-    return np.log(0.5 * _clean_density(u) + 0.5 * slab + 1e-300)
+    density: FloatArray = np.log(0.5 * _clean_density(u) + 0.5 * slab + 1e-300)
+    return density
 
 
-def _clean_density(u: Array) -> Array:
+def _clean_density(u: FloatArray) -> FloatArray:
     normal = np.exp(-0.5 * u * u)
     tail = np.exp(-0.5 * (u / 3.0) ** 2) / 3.0
-    return (0.98 * normal + 0.02 * tail) / np.sqrt(2 * np.pi)
+    density: FloatArray = (0.98 * normal + 0.02 * tail) / np.sqrt(2 * np.pi)
+    return density
 
 
-def _log_density(u: Array, row: npt.NDArray[np.intp]) -> Array:
-    """Linear interpolation in the table. Beyond its ends the end value holds: no single spot far below the others
-    can outvote them."""
+def _log_density(u: FloatArray, row: npt.NDArray[np.intp]) -> FloatArray:
+    """Linear interpolation in the table.
+
+    Beyond its ends the end value holds: no single spot far below the others can outvote them.
+    """
     table = _log_density_table()
     place = np.clip((np.arcsinh(u) - _TABLE_LOW) / _TABLE_STEP, 0.0, table.shape[1] - 1.001)
     left = place.astype(np.intp)
     part = place - left
     flat = table.ravel()
     index = row * table.shape[1] + left
-    return flat[index] * (1.0 - part) + flat[index + 1] * part
+    density: FloatArray = flat[index] * (1.0 - part) + flat[index + 1] * part
+    return density
 
 
-def clean_level(coordinate: Array, variance: Array, usable: Mask) -> CleanLevel:
+def clean_level(coordinate: FloatArray, variance: FloatArray, usable: BoolArray) -> CleanLevel:
     """Posterior of the clean level t0 from the coordinates of all spots, any number of them contaminated.
 
-    p(t0) ∝ Π_s [½ clean(t_s − t0) + ½ contaminated(t_s − t0)], flat in t0. Contamination only raises t, over an unknown
-    order of magnitude; with less than that assumed, a level below which nothing lies is not identified. Own method.
+    p(t0) ∝ Π_s [½ clean(t_s − t0) + ½ contaminated(t_s − t0)], flat in t0. Contamination only raises t,
+    over an unknown order of magnitude; with less than that assumed, a level below which nothing lies is not
+    identified. Own method.
 
-    Parameters: coordinate and its variance (G, n); usable (G, n) marks spots that take part. Returns NaN for groups
-    without a usable spot; "without" results are NaN where no other usable spot is left.
+    Parameters: coordinate and its variance (G, n); usable (G, n) marks spots that take part. Returns NaN
+    for groups without a usable spot; "without" results are NaN where no other usable spot is left.
     Evaluated on a grid of ± 6 sd about the best of the spots' own coordinates.
     """
     usable = usable & np.isfinite(coordinate) & (variance > 0)
@@ -104,7 +110,7 @@ def clean_level(coordinate: Array, variance: Array, usable: Mask) -> CleanLevel:
     )
 
 
-def _moments(grid: Array, log_weight: Array) -> tuple[Array, Array]:
+def _moments(grid: FloatArray, log_weight: FloatArray) -> tuple[FloatArray, FloatArray]:
     weight = np.exp(log_weight - log_weight.max(axis=-1, keepdims=True))
     norm = weight.sum(axis=-1)
     mean = np.sum(weight * grid, axis=-1) / norm
