@@ -127,7 +127,7 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="classify",
         revision=1,
-        inputs=("partition", "pair", "pair.limits"),
+        inputs=("partition",),
         outputs=("classify",),
         settings=lambda settings: settings.classify,
         counted="partition",

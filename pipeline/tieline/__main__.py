@@ -1,0 +1,5 @@
+"""`python -m tieline`."""
+
+from tieline.cli import main
+
+main()

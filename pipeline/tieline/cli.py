@@ -1,0 +1,155 @@
+"""The command line: parse, call, print. No science, no files, and nothing imported before it is needed."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+if TYPE_CHECKING:
+    from tieline.configuration import Session
+
+app = typer.Typer(
+    name="tieline",
+    help="Partition coefficients with honest intervals, from raw microprobe and laser spot tables.",
+    no_args_is_help=True,
+    add_completion=True,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+ConfigArgument = Annotated[Path, typer.Argument(metavar="CONFIG", help="Configuration of the session, a TOML file.")]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON only, on standard output.")]
+OutOption = Annotated[Path | None, typer.Option("--out", metavar="DIR", help="Folder of run folders, instead of the configured one.")]  # fmt: skip
+SetOption = Annotated[list[str] | None, typer.Option("--set", metavar="KEY=VALUE", help="Try a setting without editing the file, such as screen.total.sigmas=3. Repeatable.")]  # fmt: skip
+
+
+@app.command()
+def run(
+    config: ConfigArgument,
+    only: Annotated[str | None, typer.Option("--only", metavar="STAGE", help="Recompute this one stage.")] = None,
+    until: Annotated[str | None, typer.Option("--until", metavar="STAGE", help="Stop after this stage.")] = None,
+    fresh: Annotated[bool, typer.Option("--fresh", help="Recompute every stage.")] = False,
+    out: OutOption = None,
+    overrides: SetOption = None,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but problems.")] = False,
+    json: JsonOption = False,
+) -> None:
+    """Reduce a session: recompute what is not current, then show the partition coefficients.
+
+    Example: tieline run configs/ember.toml
+    """
+    from tieline import runner, terminal
+
+    if only is not None and until is not None:
+        _fail_usage("--only and --until exclude each other.")
+    session = _load(config, overrides, out)
+    with terminal.progress(quiet or json) as progress:
+        reports = runner.run(session, only=only, until=until, fresh=fresh, progress=progress)
+    if json:
+        _print_json(terminal.run_as_json(session, reports))
+    elif not quiet:
+        terminal.show_run(session, reports)
+
+
+@app.command()
+def check(config: ConfigArgument, overrides: SetOption = None, json: JsonOption = False) -> None:
+    """Find every problem of a configuration and its tables at once; writes nothing.
+
+    Example: tieline check configs/ember.toml
+    """
+    from tieline import runner, terminal
+
+    session = _load(config, overrides, None)
+    reports = runner.check(session)
+    if json:
+        _print_json(terminal.check_as_json(reports))
+    else:
+        terminal.show_check(session, reports)
+
+
+@app.command()
+def status(
+    config: ConfigArgument, out: OutOption = None, overrides: SetOption = None, json: JsonOption = False
+) -> None:
+    """Show which stages are current, which are stale and because of what.
+
+    Example: tieline status configs/ember.toml
+    """
+    from tieline import runner, terminal
+
+    verdicts = runner.status(_load(config, overrides, out))
+    if json:
+        _print_json({"stages": [vars(verdict) for verdict in verdicts]})
+    else:
+        terminal.show_status(verdicts)
+
+
+@app.command()
+def demo(
+    folder: Annotated[Path, typer.Argument(metavar="DIR", help="Where the demo session is copied.")] = Path("tieline-demo"),
+    json: JsonOption = False,
+) -> None:
+    """Copy the demo session, invented for the purpose, into a folder and reduce it there.
+
+    Example: tieline demo my-first-session
+    """
+    from tieline.demo import copy_demo
+
+    config = copy_demo(folder)
+    run(config, only=None, until=None, fresh=False, out=None, overrides=None, quiet=False, json=json)
+
+
+def main() -> None:
+    """Entry point: turns what a user can get wrong into messages and exit status 2."""
+    try:
+        app(standalone_mode=False)
+    except KeyboardInterrupt:
+        sys.stderr.write("interrupted; the results are as they were before\n")
+        sys.exit(130)
+    except Exception as error:
+        sys.exit(_exit_status(error))
+
+
+def _exit_status(error: Exception) -> int:
+    import click
+
+    if isinstance(error, click.exceptions.Exit):
+        return error.exit_code
+    if isinstance(error, click.exceptions.Abort):
+        return 130
+    if isinstance(error, click.ClickException):
+        error.show()
+        return 2
+    from tieline.errors import InputError
+
+    if isinstance(error, InputError):
+        from tieline import terminal
+
+        terminal.show_problems(error.problems)
+        return 2
+    raise error
+
+
+def _load(config: Path, overrides: list[str] | None, out: Path | None) -> Session:
+    from tieline import configuration
+
+    return configuration.load(config, overrides=overrides or (), out=out)
+
+
+def _print_json(value: Any) -> None:
+    import json
+
+    sys.stdout.write(json.dumps(value, ensure_ascii=False, indent=1, allow_nan=False) + "\n")
+
+
+def _fail_usage(text: str) -> None:
+    import click
+
+    raise click.UsageError(text)
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,92 @@
+"""What D can be when a phase mean contains values known only as limits."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pyarrow as pa
+
+from tieline.arrays import BoolArray, FloatArray, IntArray, TextArray, group_rows, labels, numbers
+from tieline.settings.results import PartitionSettings
+from tieline.statistics.censored import censored_limits
+from tieline.statistics.limits import MeanLimits, limits_ratio, mean_limits
+from tieline.statistics.means import MeanEstimate
+from tieline.statistics.ratios import RatioInterval
+
+KEYS = ("experiment", "phase", "element", "batch", "analyte")
+
+
+def resolve_limits(
+    pair: pa.Table,
+    limits: pa.Table,
+    sides: tuple[IntArray, IntArray],
+    unshared: tuple[FloatArray, FloatArray],
+    interval: RatioInterval,
+    settings: PartitionSettings,
+) -> tuple[RatioInterval, TextArray]:
+    """The intervals with those of censored means put in, and how each interval was made.
+
+    sides: rows of `pair` for alpha and beta of K D's; unshared: their relative uncertainties that do not
+    cancel; interval: what the means alone gave.
+    """
+    how = _made_by(interval, pair, sides, settings)
+    censored = numbers(pair, "n_limit_only") > 0
+    affected = censored[sides[0]] | censored[sides[1]]
+    if not affected.any():
+        return interval, how
+    known = _means_with_limits(pair, limits, censored, settings)
+    alpha, beta = (known.take(side[affected]) for side in sides)
+    u = np.hypot(unshared[0][affected], unshared[1][affected])
+    result = limits_ratio(alpha, beta, u_relative=u, confidence=settings.confidence)
+    how[affected] = np.where(result.kind == "undetermined", "none", "likelihood")
+    return _replaced(interval, affected, result), how
+
+
+def _made_by(
+    interval: RatioInterval, pair: pa.Table, sides: tuple[IntArray, IntArray], settings: PartitionSettings
+) -> TextArray:
+    n = numbers(pair, "n_used")
+    two = (n[sides[0]] == 2) | (n[sides[1]] == 2)
+    how = np.where(two, "gum-s1", settings.interval).astype(object)
+    how[interval.kind == "undetermined"] = "none"
+    return how
+
+
+def _means_with_limits(
+    pair: pa.Table, limits: pa.Table, censored: BoolArray, settings: PartitionSettings
+) -> MeanLimits:
+    """Every row of `pair` as a mean with limits, from its likelihood or from its standard error."""
+    plain = mean_limits(
+        MeanEstimate(
+            numbers(pair, "mean_ppm"),
+            numbers(pair, "se_ppm") ** 2,
+            numbers(pair, "counting_se_ppm") ** 2,
+            np.nan_to_num(numbers(pair, "dof")),
+            np.asarray(numbers(pair, "n_used"), dtype=np.int64),
+        ),
+        confidence=settings.confidence,
+    )
+    groups = group_rows([labels(limits, name) for name in KEYS])
+    value, sigma, limit = (numbers(limits, f"{name}_ppm") for name in ("value", "sigma", "limit"))
+    likelihood = censored_limits(
+        value, sigma, limit, np.isnan(value), groups.code, groups.count, confidence=settings.confidence
+    )
+    rows_of = {
+        key: row
+        for row, key in enumerate(zip(*(pair.column(name).to_pylist() for name in KEYS), strict=True))
+        if censored[row]
+    }
+    rows = np.array([rows_of[key] for key in groups.keys], dtype=np.int64)
+    for name in ("mean", "low", "high", "n", "n_censored"):
+        getattr(plain, name)[rows] = getattr(likelihood, name)
+    return plain
+
+
+def _replaced(interval: RatioInterval, rows: BoolArray, by: RatioInterval) -> RatioInterval:
+    changes = {}
+    for name in ("value", "sd", "low", "high", "dof", "kind", "reason"):
+        column = getattr(interval, name).copy()
+        column[rows] = getattr(by, name)
+        changes[name] = column
+    return replace(interval, **changes)

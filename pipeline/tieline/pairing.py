@@ -1,0 +1,140 @@
+"""Which phases of an experiment form a pair, and where two techniques disagree on one mean."""
+
+from __future__ import annotations
+
+import numpy as np
+import pyarrow as pa
+
+from tieline.arrays import BoolArray, group_rows, labels, numbers, spot_codes
+from tieline.columns import PAIR_TECHNIQUES, PAIRS
+from tieline.errors import InputError, Problem, nearest
+from tieline.results import Remark
+from tieline.settings.results import PairSettings
+from tieline.tables import build
+
+MELT = "glass"
+
+
+def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> tuple[pa.Table, list[Remark]]:
+    """One row per experiment and wanted pair: the configured ones, or every other phase over glass.
+
+    Raises InputError when a configured pair names a phase that no table has.
+    """
+    experiment, phase = labels(convert, "experiment"), labels(convert, "phase")
+    unknown = experiment.codes >= 0
+    groups = group_rows([experiment, phase], unknown)
+    spot, _ = spot_codes(convert)
+    chosen = np.flatnonzero(used)
+    # A spot counts once, however many of its values are used.
+    spots_used = np.unique(np.stack([groups.code[chosen], spot[chosen]]), axis=1)[0]
+    n_used = dict(zip(groups.keys, np.bincount(spots_used, minlength=groups.count).tolist(), strict=True))
+    phases = sorted({str(key[1]) for key in groups.keys})
+    wanted = _wanted(phases, settings)
+    rows = []
+    for name in sorted({str(key[0]) for key in groups.keys}):
+        for alpha, beta in wanted:
+            n_alpha, n_beta = n_used.get((name, alpha)), n_used.get((name, beta))
+            if n_alpha is None and n_beta is None:
+                continue
+            reason = _reason(alpha, n_alpha) or _reason(beta, n_beta)
+            rows.append((name, alpha, beta, n_alpha or 0, n_beta or 0, reason is None, reason))
+    columns = list(zip(*rows, strict=True)) if rows else [()] * 7
+    names = ("experiment", "alpha", "beta", "n_alpha", "n_beta", "formed", "reason")
+    table = build(PAIRS, {name: list(column) for name, column in zip(names, columns, strict=True)})
+    return table, [
+        Remark(f"{alpha}/{beta} not formed: {reason}", name) for name, alpha, beta, *_, formed, reason in rows if not formed
+    ]
+
+
+def _wanted(phases: list[str], settings: PairSettings) -> list[tuple[str, str]]:
+    if settings.pairs is None:
+        return [(phase, MELT) for phase in phases if phase != MELT]
+    unknown = [(pair, name) for pair in settings.pairs for name in pair if name not in phases]
+    if unknown:
+        raise InputError(
+            [
+                Problem(
+                    f'no table has the phase "{name}".',
+                    column="pair.pairs",
+                    remedy=nearest(name, phases) or f"Phases found: {', '.join(phases)}.",
+                )
+                for _, name in unknown
+            ]
+        )
+    return list(settings.pairs)
+
+
+def _reason(phase: str, n_used: int | None) -> str | None:
+    if n_used is None:
+        return f"the experiment has no {phase} spots"
+    return f"every {phase} spot was left out" if n_used == 0 else None
+
+
+def technique_differences(
+    pair: pa.Table, calibrate: pa.Table, settings: PairSettings
+) -> tuple[pa.Table, list[Remark]]:
+    """Compares the means of one element, phase and experiment from two techniques, batches or analytes.
+
+    The deviation is the difference over its standard uncertainty: both standard errors, and both batches'
+    calibration where it is known and not shared.
+    """
+    groups = group_rows([labels(pair, name) for name in ("experiment", "phase", "element")])
+    mean, se = numbers(pair, "mean_ppm"), numbers(pair, "se_ppm")
+    order = np.argsort(groups.code, kind="stable")
+    size = np.bincount(groups.code, minlength=groups.count)
+    start = np.cumsum(size) - size
+    first, second = [], []
+    for code in np.flatnonzero(size > 1):
+        members = order[start[code] : start[code] + size[code]]
+        members = members[np.isfinite(mean[members]) & (mean[members] > 0)]
+        first += [members[0]] * (len(members) - 1)
+        second += list(members[1:])
+    one, two = np.array(first, dtype=np.int64), np.array(second, dtype=np.int64)
+    shared = _relative_calibration(pair, calibrate)
+    same_batch = _texts(pair, "batch", one) == _texts(pair, "batch", two)
+    calibration = np.where(same_batch, 0.0, np.hypot(shared[one] * mean[one], shared[two] * mean[two]))
+    total = np.sqrt(np.nan_to_num(se[one]) ** 2 + np.nan_to_num(se[two]) ** 2 + calibration**2)
+    deviation = (mean[two] - mean[one]) / np.where(total > 0, total, np.nan)
+    differ = np.abs(np.nan_to_num(deviation)) > settings.difference_sigmas
+    table = build(
+        PAIR_TECHNIQUES,
+        {
+            "experiment": [groups.keys[code][0] for code in groups.code[one]],
+            "phase": [groups.keys[code][1] for code in groups.code[one]],
+            "element": [groups.keys[code][2] for code in groups.code[one]],
+            "first": _described(pair, one),
+            "second": _described(pair, two),
+            "first_ppm": mean[one],
+            "second_ppm": mean[two],
+            "ratio": mean[two] / mean[one],
+            "deviation": deviation,
+            "differ": differ,
+        },
+    )
+    remarks = []
+    if differ.any():
+        n = int(differ.sum())
+        remarks.append(
+            Remark(f"{n} of {len(differ)} phase means measured twice differ by more than "
+                   f"{settings.difference_sigmas:g} standard uncertainties; see pair.techniques")
+        )  # fmt: skip
+    return table, remarks
+
+
+def _relative_calibration(pair: pa.Table, calibrate: pa.Table) -> np.ndarray:
+    """Relative calibration uncertainty of every mean, matrix included; 0 where unknown."""
+    from tieline.correction import calibrate_row
+
+    rows = calibrate_row(pair, calibrate)
+    shared = np.append(np.nan_to_num(numbers(calibrate, "relative_sd")), 0.0)[rows]
+    matrix = np.append(numbers(calibrate, "matrix_sd"), 0.0)[rows]
+    return np.hypot(shared, matrix)
+
+
+def _texts(pair: pa.Table, name: str, rows: np.ndarray) -> np.ndarray:
+    return labels(pair, name).text()[rows]
+
+
+def _described(pair: pa.Table, rows: np.ndarray) -> list[str]:
+    parts = [_texts(pair, name, rows) for name in ("technique", "batch", "analyte")]
+    return [", ".join(texts) for texts in zip(*parts, strict=True)]

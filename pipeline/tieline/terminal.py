@@ -1,0 +1,129 @@
+"""What commands print: results to standard output, problems and progress to standard error."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from typing import Any
+
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from tieline.configuration import Session
+from tieline.errors import Problem
+from tieline.plan import Verdict, table_path
+from tieline.runner import StageReport
+from tieline.storage import read_table
+from tieline.terminal_results import partition_tables
+
+STATE_STYLES = {"current": "green", "stale": "yellow", "missing": "yellow", "waiting": "cyan"}
+MOST_REMARKS = 12
+
+
+def printable(text: object) -> str:
+    """The text without control characters, which a table from a stranger could use to drive the terminal."""
+    return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in str(text))
+
+
+@contextmanager
+def progress(quiet: bool) -> Iterator[Callable[[str, str], None]]:
+    """A callback that shows the running stage on a terminal and nothing elsewhere."""
+    console = Console(stderr=True)
+    if quiet or not console.is_terminal:
+        yield lambda stage, state: None
+        return
+    with console.status("starting") as shown:
+        yield lambda stage, state: shown.update(f"{stage} {state}")
+
+
+def show_problems(problems: Sequence[Problem]) -> None:
+    """Every problem on standard error, grouped by file in the order found."""
+    console = Console(stderr=True, highlight=False, soft_wrap=True)
+    count = len(problems)
+    console.print(Text(f"{count} problem{'s' if count > 1 else ''}; nothing was written.", style="bold red"))
+    for problem in sorted(problems, key=lambda one: (one.file or "", one.row or 0)):
+        console.print(Text(f"  {printable(problem)}"))
+
+
+def show_run(session: Session, reports: Sequence[StageReport]) -> None:
+    """Stages and ledgers, the partition coefficients, what needs attention, where the files are."""
+    console = Console(highlight=False)
+    console.print(_stage_table(reports))
+    _show_remarks(console, reports)
+    path = table_path(session.run_folder, "classify")
+    if reports[-1].verdict.stage in ("classify", "assess") and path.exists():
+        for table in partition_tables(read_table(path, "classify"), console.width):
+            console.print(table)
+    console.print(Text(f"Results: {session.run_folder}", style="bold"))
+
+
+def _stage_table(reports: Sequence[StageReport]) -> Table:
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
+    for name in ("stage", "", "entered", "what became of it"):
+        table.add_column(name)
+    for report in reports:
+        done = "recomputed" if report.recomputed else "current"
+        ledger = report.ledger
+        parts = ", ".join(f"{count} {name}" for name, count in ledger.outcomes.items() if count)
+        table.add_row(report.verdict.stage, done, f"{ledger.entered} {ledger.unit}", printable(parts))
+    return table
+
+
+def _show_remarks(console: Console, reports: Sequence[StageReport]) -> None:
+    remarks = [(report.verdict.stage, remark) for report in reports for remark in report.remarks]
+    if not remarks:
+        return
+    console.print()
+    console.print(Text("Remarks", style="bold"))
+    for stage, remark in remarks[:MOST_REMARKS]:
+        console.print(Text(f"  {stage}: {printable(remark)}"))
+    if len(remarks) > MOST_REMARKS:
+        console.print(Text(f"  and {len(remarks) - MOST_REMARKS} more in run.json"))
+
+
+def show_status(verdicts: Sequence[Verdict]) -> None:
+    """One line per stage: its state and the reasons."""
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
+    for name in ("stage", "state", "because"):
+        table.add_column(name)
+    for verdict in verdicts:
+        state = Text(verdict.state, style=STATE_STYLES[verdict.state])
+        table.add_row(verdict.stage, state, printable("; ".join(verdict.reasons)))
+    Console(highlight=False).print(table)
+
+
+def show_check(session: Session, reports: Sequence[StageReport]) -> None:
+    """That nothing stands in the way, with the remarks a run would make."""
+    console = Console(highlight=False)
+    console.print(Text(f"{session.path}: no problem found; nothing was written.", style="green"))
+    _show_remarks(console, reports)
+
+
+def check_as_json(reports: Sequence[StageReport]) -> dict[str, Any]:
+    return {"problems": [], "stages": [_report_as_json(report) for report in reports]}
+
+
+def run_as_json(session: Session, reports: Sequence[StageReport]) -> dict[str, Any]:
+    """The run's account and, where it got that far, the rows of `classify`."""
+    path = table_path(session.run_folder, "classify")
+    rows = read_table(path, "classify").to_pylist() if reports[-1].verdict.stage in ("classify", "assess") else []
+    return {
+        "session": session.settings.session,
+        "run_folder": str(session.run_folder),
+        "overrides": list(session.overrides),
+        "stages": [_report_as_json(report) for report in reports],
+        "partition_coefficients": rows,
+    }
+
+
+def _report_as_json(report: StageReport) -> dict[str, Any]:
+    ledger = report.ledger
+    return {
+        "stage": report.verdict.stage,
+        "recomputed": report.recomputed,
+        "state_before": report.verdict.state,
+        "reasons": list(report.verdict.reasons),
+        "ledger": {"unit": ledger.unit, "entered": ledger.entered, "outcomes": dict(ledger.outcomes)},
+        "remarks": [str(remark) for remark in report.remarks],
+    }
