@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Annotated, Literal
 
 from pydantic import Field
 
@@ -36,23 +36,38 @@ class Labels(Settings):
     )
 
 
+PATTERN = (
+    "with {analyte} for the analyte's header; a text without {analyte} is the next such column to the right of "
+    "the analyte, and {analyte} alone the next column with the analyte's own header"
+)
+
+
 class Sigma(Settings):
     """What the uncertainty columns are; stated, never guessed."""
 
-    pattern: str = Field(description="header of the uncertainty column, with {analyte} for the analyte's header")
-    level: float = Field(1, gt=0, le=4, description="how many standard uncertainties the column gives: 1 or 2")
+    pattern: str = Field(min_length=1, description=f"header of the uncertainty column, {PATTERN}")
+    level: float = Field(
+        1, gt=0, le=4, description="how many standard uncertainties the column gives: 1 or 2"
+    )
     relative: bool = Field(False, description="in per cent of the value")
     kind: Literal["sd", "se"] = Field(
-        "sd", description="uncertainty of the single value (sd), or of a mean of `replicates` readings (se)"
+        "sd",
+        description="sd: standard deviation of single readings, divided by the root of `replicates`; "
+        "se: standard error of the value itself, such as a laser spot's own internal error, taken as it is",
     )
-    replicates: int = Field(1, ge=1, description="readings behind each value when kind is se")
+    replicates: int = Field(1, ge=1, description="readings averaged into one cell, when kind is sd")
 
 
 class Limit(Settings):
     """Where the detection limits stand."""
 
-    pattern: str | None = Field(None, description="header of the limit column, with {analyte}")
-    values: dict[str, float] = Field(default_factory=dict, description="limit per analyte, in the table's unit")
+    pattern: str | None = Field(None, min_length=1, description=f"header of the limit column, {PATTERN}")
+    values: dict[str, Annotated[float, Field(gt=0)]] = Field(
+        default_factory=dict, description="limit per analyte, where its column or cell gives none"
+    )
+    unit: Unit | None = Field(
+        None, description="unit of the limits; the analyte's own where nothing is given"
+    )
 
 
 class Table(Settings):
@@ -62,18 +77,26 @@ class Table(Settings):
     technique: str = Field("EPMA", description="measuring technique, a free name such as EPMA or laser")
     batch: str | None = Field(None, description="measuring session; the file name where nothing is given")
     unit: Unit | None = Field(None, description="unit of columns whose header does not say")
+    experiment: str | None = Field(None, description="experiment of all spots, where no column tells")
+    phase: str | None = Field(None, description="phase of all spots, where no column tells")
     columns: Columns = Field(Columns(), description="headers of the label columns")
     labels: Labels | None = Field(None, description="splitting of a combined label")
     sigma: Sigma | None = Field(None, description="uncertainty columns")
     limit: Limit | None = Field(None, description="detection-limit columns or values")
-    analytes: tuple[str, ...] | None = Field(None, description="analyte headers to read; all that are recognised")
+    analytes: tuple[str, ...] | None = Field(
+        None, description="analyte headers to read; all that are recognised"
+    )
     sheet: str | int | None = Field(None, description="sheet name, or number from 1; the first")
     header_row: int | None = Field(None, ge=1, description="row of the header; found when not given")
-    units_row: bool | None = Field(None, description="the row after the header holds units; found when not given")
+    units_row: bool | None = Field(
+        None, description="the row after the header holds units; found when not given"
+    )
     skip_rows: int = Field(0, ge=0, description="rows before the table")
     delimiter: str | None = Field(None, description="field separator; found when not given")
     decimal: Literal[".", ","] | None = Field(None, description="decimal mark; found when not given")
-    thousands: Literal[",", ".", " ", "'"] | None = Field(None, description="thousands separator, where one is used")
+    thousands: Literal[",", ".", " ", "'"] | None = Field(
+        None, description="thousands separator, where one is used"
+    )
     encoding: str | None = Field(None, description="text encoding; found when not given")
     below_limit: tuple[str, ...] = Field(
         ("bdl", "b.d.l.", "b.d.", "bd", "<dl", "<lod", "below detection", "<mdl"),
@@ -113,12 +136,21 @@ class Experiments(Settings):
     )
 
 
+class TableLimits(Settings):
+    """Beyond these a table is refused, so that memory stays bounded whatever a file claims to be."""
+
+    columns: int = Field(5_000, ge=1, description="columns of one table")
+    cells: int = Field(100_000_000, ge=1, description="cells of one spreadsheet or Parquet table")
+    expanded_mb: int = Field(2_000, ge=1, description="megabytes a packed file may unpack to")
+
+
 class IngestSettings(Settings):
     """Section [ingest]."""
 
     tables: tuple[Table, ...] = Field(description="the spot tables", min_length=1)
     phases: dict[str, tuple[str, ...]] = Field(
-        default_factory=dict, description="phase -> its spellings in the tables, beside the standard abbreviations"
+        default_factory=dict,
+        description="phase -> its spellings in the tables, beside the standard abbreviations",
     )
     experiments: Experiments | None = Field(None, description="experimental conditions")
     reference_materials: ReferenceMaterials = Field(ReferenceMaterials(), description="reference materials")
@@ -128,3 +160,4 @@ class IngestSettings(Settings):
     on_duplicate_spot: Literal["stop", "number"] = Field(
         "stop", description="spot label twice in a table: stop, or make unique by numbering"
     )
+    limits: TableLimits = Field(TableLimits(), description="the largest tables that are read")

@@ -1,0 +1,128 @@
+"""Reference materials and phases among the spot labels."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import replace
+from fnmatch import fnmatchcase
+
+import numpy as np
+
+from tieline.chemistry.phases import PHASES, phase_name
+from tieline.errors import InputError, Problem
+from tieline.ingest.spots import Spots
+from tieline.ingest.texts import Texts
+from tieline.reading.cell_text import fold
+from tieline.results import Remark
+
+Spellings = Mapping[str, tuple[str, ...]]
+
+
+def with_materials(spots: Spots, names: Spellings) -> Spots:
+    """Spots whose phase, experiment or spot label is a reference material's name or spelling become its spots.
+
+    Compared without regard to case; a spelling may end in `*` for numbered labels. Their experiment is
+    emptied and their phase is the material's name.
+    """
+    if not names or not len(spots):
+        return spots
+    material = spots.spot.renamed(lambda text: material_of(text, names))
+    for labels in (spots.experiment, spots.phase):
+        material = labels.renamed(lambda text: material_of(text, names)).filled(material)
+    is_material = ~material.is_missing()
+    nothing = Texts.constant(None, len(spots))
+    return replace(
+        spots,
+        material=material,
+        experiment=spots.experiment.replaced(is_material, nothing),
+        phase=spots.phase.replaced(is_material, material),
+    )
+
+
+def material_of(text: str, names: Spellings) -> str | None:
+    """The reference material a label means, or None."""
+    folded = fold(text)
+    for name, spellings in names.items():
+        for spelling in (name, *spellings):
+            known = fold(spelling)
+            if folded == known or (known.endswith("*") and fnmatchcase(folded, known.replace("[", "[[]"))):
+                return name
+    return None
+
+
+def with_phases(spots: Spots, spellings: Spellings) -> Spots:
+    """Phase labels of the unknowns as phase names; a label that matches none stays as it is."""
+    unknown = spots.material.is_missing()
+    matched = spots.phase.renamed(lambda text: phase_name(text, spellings) or text)
+    return replace(spots, phase=spots.phase.replaced(unknown, matched))
+
+
+def check_spellings(phases: Spellings, materials: Spellings) -> bool:
+    """True; raises InputError when one spelling is given to two phases or to two materials."""
+    problems = []
+    try:
+        phase_name("", phases)
+    except ValueError as error:
+        problems.append(Problem(f"{error}.", column="ingest.phases"))
+    owner: dict[str, str] = {}
+    for name, spellings in materials.items():
+        for spelling in (name, *spellings):
+            other = owner.setdefault(fold(spelling), name)
+            if other != name:
+                message = f'the spelling "{spelling}" is given to both "{other}" and "{name}".'
+                problems.append(Problem(message, column="ingest.reference_materials.names"))
+    if problems:
+        raise InputError(problems)
+    return True
+
+
+def phase_remarks(spots: Spots, configured: Spellings, materials: Spellings) -> list[Remark]:
+    """Phase labels that are neither configured nor known, with the nearest names and how many spots."""
+    from tieline.chemistry.names import nearest_names
+
+    known = set(PHASES) | set(configured)
+    unknown = spots.phase.kept(spots.material.is_missing())
+    candidates = sorted({*known, *materials, *(s for given in configured.values() for s in given)})
+    remarks = []
+    for label, count in sorted(unknown.counts().items()):
+        if label in known:
+            continue
+        near = nearest_names(label, candidates)
+        guess = f"Nearest: {', '.join(near)}." if near else "Nothing known comes near."
+        remarks.append(Remark(f'phase "{label}" ({count} spots) is not known and kept as it is. {guess}'))
+    return remarks
+
+
+def similar_experiments(spots: Spots) -> list[Remark]:
+    """Experiment labels that differ only in case, blanks or dashes."""
+    groups: dict[str, list[str]] = {}
+    for label in spots.experiment.counts():
+        key = "".join(character for character in fold(label) if character.isalnum())
+        groups.setdefault(key, []).append(label)
+    return [
+        Remark(
+            f"experiments {', '.join(sorted(labels))} differ only in case or punctuation and are kept apart."
+        )
+        for labels in groups.values()
+        if len(labels) > 1
+    ]
+
+
+def sequence_numbers(batch: Texts, table: np.ndarray, order: np.ndarray) -> np.ndarray:
+    """Place of every spot within its batch, from 1: by `order` where a batch has it, else by table and row.
+
+    batch, table, order: one entry per spot, in the order of tables and rows; `order` is NaN where not given.
+    """
+    position = np.arange(len(order))
+    known = np.zeros(len(batch.known) + 1, dtype=bool)
+    missing = np.bincount(batch.codes[np.isnan(order)], minlength=len(batch.known)) > 0
+    known[:-1] = ~missing
+    key = np.where(known[batch.codes], order, table.astype(float))
+    ranked = np.lexsort((position, key, batch.codes))
+    sorted_batch = batch.codes[ranked]
+    starts = np.flatnonzero(np.append(True, np.diff(sorted_batch) != 0))
+    sizes = np.diff(np.append(starts, len(ranked)))
+    places = np.arange(len(ranked)) - np.repeat(starts, sizes) + 1
+    sequence = np.empty(len(ranked), dtype=np.int32)
+    sequence[ranked] = places
+    return sequence

@@ -1,0 +1,117 @@
+"""Which rows of a grid are spots, and which are blank, repeated headers or summaries."""
+
+from __future__ import annotations
+
+import re
+from itertools import accumulate
+
+import numpy as np
+import numpy.typing as npt
+
+from tieline.ingest.asides import Asides
+from tieline.ingest.texts import Texts
+from tieline.reading.cell_text import fold
+from tieline.reading.grid import Block, Grid
+from tieline.reading.header import is_units_row
+
+Mask = npt.NDArray[np.bool_]
+
+REPEATED_HEADER = "repeated header line"
+REPEATED_UNITS = "repeated line of units"
+SUMMARY = "summary row between the spots"
+
+
+def spot_rows(
+    grid: Grid,
+    label_columns: dict[str, int],
+    labels: dict[str, Texts],
+    summary_words: tuple[str, ...],
+    asides: Asides,
+) -> tuple[Mask, int]:
+    """Rows that may be spots, and the number of wholly blank rows, which hold no cells.
+
+    Repeated header and unit lines and summary rows go to `asides`, as expected lines.
+    """
+    keep = np.ones(grid.row_count, dtype=bool)
+    keys = list(labels.values())
+    first = Texts.from_column(grid.column(0)) if grid.blocks else Texts.constant(None, 0)
+    unlabelled = np.all([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
+    some_missing = np.any([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
+    header_like = _repeats_header(grid, label_columns, labels)
+    summary = first.where(lambda text: is_summary(text, summary_words))
+    if "spot" in labels:
+        summary |= labels["spot"].where(lambda text: is_summary(text, summary_words))
+    blank_count = 0
+    for block, start in _placed_blocks(grid):
+        stop = start + len(block.rows)
+        blank = _blank_rows(block, np.flatnonzero(unlabelled[start:stop]))
+        keep[start + blank] = False
+        blank_count += len(blank)
+        for position in np.flatnonzero((header_like | summary | some_missing)[start:stop] & keep[start:stop]):
+            cells = [column[int(position)].as_py() for column in block.cells]
+            reason = _row_reason(
+                cells, grid, bool(header_like[start + position]), bool(summary[start + position])
+            )
+            if reason is not None:
+                keep[start + position] = False
+                row = int(block.rows[position])
+                asides.add(row, None, joined(cells, grid), grid.width, reason, expected=True)
+    return keep, blank_count
+
+
+def is_summary(text: str, words: tuple[str, ...]) -> bool:
+    """Whether a row's label says that it sums up others: a known word alone, or a long one followed by more.
+
+    "Average", "Mean ol (n = 8)"; but "n 3" or "max-2" may be spots and count only when they stand alone.
+    """
+    folded = fold(text)
+    for word in words:
+        known = fold(word)
+        if folded == known or (len(known) >= 4 and re.match(rf"{re.escape(known)}[^\w]", folded)):
+            return True
+    return False
+
+
+def joined(cells: list[str], grid: Grid) -> str:
+    """A row as one text."""
+    return (grid.found.delimiter or "\t").join(cells)
+
+
+def _placed_blocks(grid: Grid) -> list[tuple[Block, int]]:
+    sizes = [len(block.rows) for block in grid.blocks]
+    return list(zip(grid.blocks, accumulate(sizes, initial=0), strict=False))
+
+
+def _repeats_header(grid: Grid, label_columns: dict[str, int], labels: dict[str, Texts]) -> Mask:
+    found = np.zeros(grid.row_count, dtype=bool)
+    for name, texts in labels.items():
+        header = fold(grid.headers[label_columns[name]])
+        found |= texts.where(lambda text, header=header: fold(text) == header)  # type: ignore[misc]
+    if not labels and grid.blocks:
+        header = fold(grid.headers[0])
+        found |= Texts.from_column(grid.column(0)).where(lambda text: fold(text) == header)
+    return found
+
+
+def _blank_rows(block: Block, candidates: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
+    """The candidates of which every cell is blank."""
+    for column in block.cells:
+        if not candidates.size:
+            return candidates
+        texts = column.take(candidates).to_pylist()
+        candidates = candidates[np.array([not text.strip() for text in texts], dtype=bool)]
+    return candidates
+
+
+def _row_reason(cells: list[str], grid: Grid, header_like: bool, summary: bool) -> str | None:
+    if header_like:
+        same = sum(
+            1
+            for cell, header in zip(cells, grid.headers, strict=True)
+            if header and fold(cell) == fold(header)
+        )
+        if 2 * same >= sum(1 for header in grid.headers if header.strip()):
+            return REPEATED_HEADER
+    if is_units_row(cells):
+        return REPEATED_UNITS
+    return SUMMARY if summary else None
