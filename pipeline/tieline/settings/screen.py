@@ -18,9 +18,19 @@ class TotalSettings(TestSettings):
         description="phase -> [low, high] in wt%; beside the phase table's (98.5-101.5 for anhydrous minerals, common practice)",
     )
     sigmas: float = Field(
-        2.0, ge=0, description="a total is outside only if it is by more than this many of its standard uncertainties"
+        2.0,
+        ge=0,
+        description="a total is outside only if it is by more than this many of its standard uncertainties",
     )
-    min_oxides: int = Field(4, ge=1, description="fewer measured oxides than this make no total")
+    min_oxides: int = Field(
+        4, ge=1, description="fewer measured oxides than this make no total; own choice"
+    )
+    incomplete_below: float = Field(
+        85.0,
+        ge=0,
+        description="a technique whose totals have a lower median than this, in wt%, does not measure everything: "
+        "its totals and cation sums are not judged; own choice",
+    )
 
 
 class CationRule(Settings):
@@ -39,7 +49,11 @@ class CationSettings(TestSettings):
         default_factory=dict, description="phase -> rule; beside the phase table's (common practice)"
     )
     sigmas: float = Field(2.0, ge=0, description="as for totals")
-    ferric: bool = Field(False, description="estimate ferric iron by charge balance before the sum (Droop 1987)")
+    ferric: bool = Field(
+        True,
+        description="accept a sum that is too high where ferric iron explains it (charge balance, Droop 1987), "
+        "for phases that take ferric iron",
+    )
 
 
 class IdentitySettings(TestSettings):
@@ -47,7 +61,9 @@ class IdentitySettings(TestSettings):
 
     action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
     ratio: float = Field(
-        3.0, gt=1, description="how many times nearer the other phase must be, in log-ratio distance; own choice"
+        3.0,
+        gt=1,
+        description="how many times nearer the other phase must be, in log-ratio distance; own choice",
     )
 
 
@@ -55,10 +71,17 @@ class OverlapSettings(TestSettings):
     """Glass in crystal spots and crystal in glass spots."""
 
     action: Literal["drop", "mark"] = Field("drop", description="what a finding does when `use` is drop")
-    use: Literal["drop", "mark", "unmix"] = Field("drop", description="drop, only mark, or remove the overlap by calculation")
-    z: float = Field(3.0, gt=0, description="leave-one-out z above which a spot is flagged; false alarms measured in docs")
+    use: Literal["drop", "mark", "unmix"] = Field(
+        "drop", description="drop, only mark, or remove the overlap by calculation"
+    )
+    z: float = Field(
+        3.0, gt=0, description="leave-one-out z above which a spot is flagged; false alarms measured in docs"
+    )
     something_else_p: float = Field(
-        0.001, gt=0, lt=1, description="p-value of the residual below which a spot is something else than this mixture"
+        0.001,
+        gt=0,
+        lt=1,
+        description="p-value of the residual below which a spot is something else than this mixture",
     )
     melt_phase: str = Field("glass", description="the phase taken as the melt")
 
@@ -79,22 +102,29 @@ class OutlierSettings(TestSettings):
     p: float = Field(0.01, gt=0, lt=1, description="p-value of as many analytes standing out in one spot")
     alpha: float = Field(0.05, gt=0, lt=1, description="significance of the single-analyte test")
     per_analyte: Literal["off", "grubbs", "esd", "modified-z"] = Field(
-        "off", description="test every analyte alone, Holm-corrected; costs coverage of the intervals when it drops"
+        "off",
+        description="test every analyte alone, Holm-corrected; costs coverage of the intervals when it drops",
     )
-    threshold: float = Field(3.5, gt=0, description="modified z beyond which a value is an outlier (Iglewicz & Hoaglin 1993)")
+    threshold: float = Field(
+        3.5, gt=0, description="modified z beyond which a value is an outlier (Iglewicz & Hoaglin 1993)"
+    )
     min_spots: int = Field(5, ge=3, description="fewer spots than this are not tested")
 
 
 class ImpreciseSettings(TestSettings):
     """Values too imprecise to matter, limits above the melt's value, failed reference materials."""
 
-    relative_sigma: float = Field(0.5, gt=0, description="relative sigma above which a value is remarked; own choice")
+    relative_sigma: float = Field(
+        0.5, gt=0, description="relative sigma above which a value is remarked; own choice"
+    )
 
 
 class ScreenSettings(Settings):
     """Section [screen]."""
 
-    rulings: str | None = Field(None, description="table of rulings: spot, analyte, verdict, analyst, date, reason")
+    rulings: str | None = Field(
+        None, description="table of rulings: spot, analyte, verdict, analyst, date, reason"
+    )
     total: TotalSettings = Field(TotalSettings(), description="oxide totals")
     cations: CationSettings = Field(CationSettings(), description="cation sums")
     identity: IdentitySettings = Field(IdentitySettings(), description="mislabelled phases")

@@ -1,0 +1,106 @@
+"""Findings and rulings combined into `use` and `why` of every value: the one place where values are left out.
+
+Precedence. A reference material and a value that was not measured are never used. Then rulings: one on an
+analyte goes before one on its whole spot, and either beats every test. Then the tests, in document order
+(`findings.TESTS`): a finding whose action is drop leaves out its value, or all values of its spot. Findings
+stay, whatever becomes of the value. Nothing here depends on the order of rows, and no test sees a ruling.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import pyarrow as pa
+
+from tieline.arrays import BoolArray, IntArray, flags, labels
+from tieline.correction import Concentrations
+from tieline.results import Ledger
+from tieline.screen.findings import RULING, TESTS, WHOLE_SPOT, Findings
+from tieline.screen.session import Session
+
+REFERENCE_MATERIAL, NOT_MEASURED = "reference-material", "not-measured"
+_CODES = (REFERENCE_MATERIAL, NOT_MEASURED, RULING, *TESTS)
+_REFERENCE_BIT, _MISSING_BIT, _RULING_BIT = 1, 2, 4
+
+
+@dataclass(frozen=True)
+class Resolution:
+    """`reasons` (rows,): powers of two for the codes that keep the value out, added up; 0 when it is used."""
+
+    reasons: IntArray
+
+    @property
+    def use(self) -> BoolArray:
+        return np.asarray(self.reasons == 0)
+
+    def why(self) -> pa.DictionaryArray:
+        """The codes that keep each value out, in order of precedence, joined by commas; empty when used."""
+        present, position = np.unique(self.reasons, return_inverse=True)
+        texts = [
+            ", ".join(code for bit, code in enumerate(_CODES) if reasons >> bit & 1)
+            for reasons in present.tolist()
+        ]
+        return pa.DictionaryArray.from_arrays(
+            pa.array(position.reshape(-1), pa.int32()), pa.array(texts, pa.string())
+        )
+
+    def ledger(self) -> Ledger:
+        """Every value once, under the first of its reasons."""
+        present, number = np.unique(self.reasons, return_counts=True)
+        outcomes = {"used": 0, REFERENCE_MATERIAL: 0, NOT_MEASURED: 0}
+        for bit, code in enumerate(_CODES):
+            first = (present & ((1 << (bit + 1)) - 1)) == 1 << bit
+            if first.any():
+                outcomes[code if code in outcomes else f"left out by {code}"] = int(number[first].sum())
+        outcomes["used"] = int(number[present == 0].sum())
+        return Ledger("values", len(self.reasons), outcomes)
+
+
+def resolve(
+    convert: pa.Table, concentrations: Concentrations, session: Session, findings: Sequence[Findings]
+) -> Resolution:
+    """What keeps every row of `convert` out, from all findings, rulings among them."""
+    cells = _Cells(session)
+    reasons = np.zeros(convert.num_rows, dtype=np.int64)
+    for part in findings:
+        if part.code != RULING and len(part):
+            bit = 1 << _CODES.index(part.code)
+            reasons |= np.where(cells.marked(part, part.drops()), bit, 0)
+    for whole in (True, False):
+        # Rulings on single analytes come last, and so go before those on whole spots.
+        for part in (part for part in findings if part.code == RULING):
+            chosen = (part.analyte == WHOLE_SPOT) == whole
+            keeps = np.array([action == "keep" for action in part.action], dtype=np.bool_)
+            reasons[cells.marked(part, chosen & keeps)] = 0
+            dropped = cells.marked(part, chosen & ~keeps)
+            reasons[dropped] |= _RULING_BIT
+    has_value = np.isfinite(concentrations.value)
+    has_limit = np.isfinite(concentrations.limit) & flags(convert, "below_limit")
+    reasons[~has_value & ~has_limit] = _MISSING_BIT
+    reasons[labels(convert, "material").codes >= 0] = _REFERENCE_BIT
+    return Resolution(reasons)
+
+
+class _Cells:
+    """Finds the rows of `convert` that a finding is about."""
+
+    def __init__(self, session: Session) -> None:
+        self._of_row = session.spots.of_row
+        self._n_spots = session.spots.count
+        self._n_analytes = len(session.analyte.texts)
+        self._analyte_of_row = session.analyte.codes
+
+    def marked(self, part: Findings, chosen: BoolArray) -> BoolArray:
+        """Rows (rows,) of the chosen findings: all of a spot, or one of its analytes."""
+        whole = chosen & (part.analyte == WHOLE_SPOT)
+        spots = np.zeros(self._n_spots, dtype=np.bool_)
+        spots[part.spot[whole]] = True
+        rows = spots[self._of_row] if whole.any() else np.zeros(len(self._of_row), dtype=np.bool_)
+        single = chosen & ~whole
+        if single.any():
+            table = np.zeros((self._n_spots, self._n_analytes), dtype=np.bool_)
+            table[part.spot[single], part.analyte[single]] = True
+            rows |= table[self._of_row, self._analyte_of_row]
+        return rows
