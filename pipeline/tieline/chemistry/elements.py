@@ -6,9 +6,10 @@ who doubts a number. A test compares every line with ``periodictable`` and with 
 
 Sources: Prohaska et al. (2022), Pure Appl. Chem. 94:573, abridged standard atomic weights with the
 uncertainty they state; Gd, Lu and Zr as revised by the Commission on Isotopic Abundances and Atomic Weights
-in 2024 (the three revised values are from memory; they lie within the earlier uncertainties, and change an
-oxide factor by less than 5e-6). Isotopes: those with a natural abundance (Meija et al. 2016, Pure Appl.
-Chem. 88:293), and long-lived ones of Pb, Th and U that are measured or used as spikes.
+in 2024 (the three revised values are from memory; they agree with the earlier ones within both
+uncertainties, and change an oxide factor by less than 5e-6). Isotopes: those with a natural abundance
+(Meija et al. 2016, Pure Appl. Chem. 88:293), and long-lived ones of Pb, Th and U that are measured or used
+as spikes.
 """
 
 import math

@@ -71,7 +71,7 @@ def atoms_from_oxides(
     """Formula units from oxide wt%, shape (spots, oxides); ``sigma_wt`` alike, as standard uncertainties.
 
     NaN is "not measured" and adds nothing; a NaN sigma beside a value makes the spot's uncertainties NaN.
-    Halogens and sulfur may come as bare elements; another bare element is refused, for it would be taken for a
+    Halogens and sulfur may come as bare elements; another bare element is refused: it would be taken for a
     metal. Raises ValueError for that, for an unknown formula, shapes that do not fit and ``oxygens`` <= 0.
     """
     columns = tuple(parse_oxide(formula) for formula in oxides)
@@ -138,7 +138,7 @@ def ferric_iron(units: FormulaUnits, ideal_cations: float) -> FerricIron:
 
 
 def oxygen_of_ferric_iron(feo_wt: FloatArray, ferric_fraction: FloatArray) -> FloatArray:
-    """What a total gains, in wt%, when this fraction of iron given as FeO is Fe2O3: 0.11135 of that FeO."""
+    """What a total gains, in wt%, when this fraction of the iron given as FeO is Fe2O3."""
     oxygen_per_feo = 0.5 * atomic_weight("O") / parse_oxide("FeO").molar_mass
     return np.asarray(feo_wt * ferric_fraction * oxygen_per_feo)
 
