@@ -298,7 +298,9 @@ def _group_remarks(
 
     residuals, counting, taken = scatter
     part = state.measured & takes_part[..., None]
-    ratio = np.where(part, residuals**2 / counting, 0.0).sum(axis=1) @ state.in_class
+    ratio = (
+        np.where(part, residuals**2 / counting, 0.0).sum(axis=1) * state.counting_scale()
+    ) @ state.in_class
     number = part.sum(axis=1)
     expected = (np.maximum(number - 1.0, 0.0) * (1.0 - taken) * state.used) @ state.in_class
     return {

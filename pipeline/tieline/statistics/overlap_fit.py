@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from tieline.statistics.groups import BoolArray, FloatArray
+from tieline.statistics.groups import BoolArray, FloatArray, IntArray
 from tieline.statistics.overlap_covariance import (
     VarianceFunction,
     element_inflation,
@@ -46,6 +46,7 @@ class OverlapFit:
         self.in_class = np.stack([~is_trace, is_trace], axis=-1) & np.ones((values.shape[2], 2), dtype=bool)
         self.level = _low_end(self.x, self.measured, self.g)
         self.spread_squared = np.zeros((values.shape[0], 2))
+        self.counting_factor = np.ones((values.shape[0], 2))
         self.kappa = np.ones_like(self.level)
         self.odd = np.zeros(self.scored.shape, dtype=bool)
 
@@ -56,8 +57,14 @@ class OverlapFit:
 
     def spot_variance(self) -> FloatArray:
         """Diagonal part (G, p) of the covariance of one clean spot."""
-        variance: FloatArray = (self.function.at(self.level) + self.spread_variance()) * self.kappa
+        counting = self.function.at(self.level) * self.counting_scale()
+        variance: FloatArray = (counting + self.spread_variance()) * self.kappa
         return variance
+
+    def counting_scale(self) -> FloatArray:
+        """Factor (G, p) by which the stated counting variance of an element's class falls short."""
+        factor: FloatArray = self.counting_factor @ self.in_class.T
+        return factor
 
 
 def _low_end(x: FloatArray, measured: BoolArray, contaminant: FloatArray) -> FloatArray:
@@ -99,7 +106,8 @@ def own_variances(
 ) -> tuple[FloatArray, FloatArray]:
     """Counting variance of every spot's mixture with that of the contaminant (G, n, p); and h²c² (G, p)."""
     mixture = state.level[:, None, :] + fraction[..., None] * contrast[:, None, :]
-    counting = state.function.at(mixture) + (fraction**2)[..., None] * state.g_variance[:, None, :]
+    counting = state.function.at(mixture) * state.counting_scale()[:, None, :]
+    counting += (fraction**2)[..., None] * state.g_variance[:, None, :]
     return counting, state.spread_variance()
 
 
@@ -150,7 +158,8 @@ def _update_spread(
     squared = np.where(takes_part, residuals**2, 0.0)
     level_squared = np.broadcast_to(np.maximum(state.level, 0.0)[:, None, :] ** 2, squared.shape)
     # An element that scatters by itself is left to its own factor; it must not widen the whole class.
-    ordinary = state.kappa <= 2.0
+    ordinary = np.where(state.kappa <= 2.0, 1.0, 0.0)
+    expected = degrees * ordinary
     for column in (0, 1):
         of_class = state.in_class[:, column]
         if of_class.any():
@@ -158,8 +167,25 @@ def _update_spread(
                 (squared * ordinary[:, None, :])[..., of_class],
                 counting[..., of_class],
                 level_squared[..., of_class],
-                np.sum(degrees * ordinary, axis=1, where=of_class),
+                expected[:, of_class].sum(axis=1),
                 state.spread_squared[:, column],
             )
     variance = counting + state.spread_variance()[:, None, :]
-    state.kappa = element_inflation(np.sum(squared / variance, axis=1), degrees)
+    standardised = squared / variance
+    _update_counting_factor(state, standardised, counting / variance, expected, number)
+    state.kappa = element_inflation(np.sum(standardised, axis=1), degrees)
+
+
+def _update_counting_factor(
+    state: OverlapFit, standardised: FloatArray, share: FloatArray, expected: FloatArray, number: IntArray
+) -> None:
+    """Raise the counting variance of a class whose elements ruled by counting scatter beyond it.
+
+    A relative spread cannot explain excess scatter of elements the host hardly contains, and it is those that
+    see a contaminant. Only a factor beyond two standard deviations of its chance value counts.
+    """
+    scatter = np.sum(standardised * share, axis=1) * (expected > 0) @ state.in_class
+    degrees = np.sum(share, axis=1) * expected / np.maximum(number, 1) @ state.in_class
+    ratio = np.where(degrees > 1, scatter / np.maximum(degrees, 1.0), 1.0)
+    factor = state.counting_factor * ratio
+    state.counting_factor = np.where(factor > 1 + 2 * np.sqrt(2 / np.maximum(degrees, 1.0)), factor, 1.0)
