@@ -41,14 +41,18 @@ def read_accepted_values(files: Mapping[str, InputFile]) -> dict[tuple[str, str]
             numbers=frozenset({"value", "sd"}),
             required=frozenset({"material", "analyte", "value", "unit"}),
         )
-        for position, row in enumerate(records.rows):
-            record = {name: records.columns[name][position] for name in COLUMNS}
+        for position, row in enumerate(records["row"]):
+            record = {name: records[name][position] for name in COLUMNS}
             found = _accepted(record, file.path, int(row), problems)
             if found is None:
                 continue
             key, value = found
             if key in accepted:
-                problems.append(Problem(f"{key[1]} of {key[0]} stands twice.", file.path, int(row), "analyte", "Keep one."))
+                problems.append(
+                    Problem(
+                        f"{key[1]} of {key[0]} stands twice.", file.path, int(row), "analyte", "Keep one."
+                    )
+                )
             accepted[key] = value
     if problems:
         raise InputError(problems)
@@ -68,7 +72,9 @@ def _accepted(
     value, sd = float(record["value"]), float(record["sd"])  # type: ignore[arg-type]
     before = len(problems)
     if not record["material"]:
-        problems.append(Problem("the material has no name.", file, row, "material", "Name it as in the spot tables."))
+        problems.append(
+            Problem("the material has no name.", file, row, "material", "Name it as in the spot tables.")
+        )
     if analyte is None or analyte.element is None:
         names = nearest_names(str(record["analyte"]))
         remedy = f'Did you mean "{names[0]}"?' if names else "Write an oxide, element or isotope."
@@ -76,15 +82,23 @@ def _accepted(
     if _unit(unit) is None:
         problems.append(Problem(f"{unit!r} is no unit.", file, row, "unit", "Write wt%, ppm or ppb."))
     if not value > 0:
-        problems.append(Problem("the accepted value is not a positive number.", file, row, "value", "Correct or delete it."))
+        problems.append(
+            Problem(
+                "the accepted value is not a positive number.", file, row, "value", "Correct or delete it."
+            )
+        )
     if sd < 0:
-        problems.append(Problem("the standard uncertainty is negative.", file, row, "sd", "Correct it or leave it blank."))
+        problems.append(
+            Problem("the standard uncertainty is negative.", file, row, "sd", "Correct it or leave it blank.")
+        )
     if len(problems) > before or analyte is None or analyte.element is None:
         return None
     fraction = parse_oxide(analyte.name).element_fraction if analyte.kind == "oxide" else 1.0
     factor = PPM_PER_UNIT[_unit(unit) or "ppm"] * fraction
     sd_ppm = 0.0 if np.isnan(sd) else sd * factor
-    return (str(record["material"]), analyte.element), AcceptedValue(value * factor, sd_ppm, str(record["source"] or ""))
+    return (str(record["material"]), analyte.element), AcceptedValue(
+        value * factor, sd_ppm, str(record["source"] or "")
+    )
 
 
 def _unit(text: str) -> str | None:

@@ -98,7 +98,9 @@ def group_rows(columns: Sequence[Labels], rows: BoolArray | None = None) -> Grou
     code = np.full(size, -1, dtype=np.int64)
     code[chosen] = inverse.reshape(-1)
     first = chosen[first]
-    columns_of_keys = [[column.texts[c] if c >= 0 else None for c in column.codes[first]] for column in columns]
+    columns_of_keys = [
+        [column.texts[c] if c >= 0 else None for c in column.codes[first]] for column in columns
+    ]
     return Groups(code, tuple(zip(*columns_of_keys, strict=True)), first)
 
 

@@ -73,7 +73,9 @@ def calibrate(
     value, sigma = numbers(convert, "value_ppm"), numbers(convert, "sigma_ppm")
     is_reference = labels(convert, "material").codes >= 0
     measured = is_reference & np.isfinite(value)
-    groups = group_rows([labels(convert, name) for name in ("technique", "batch", "material", "element")], measured)
+    groups = group_rows(
+        [labels(convert, name) for name in ("technique", "batch", "material", "element")], measured
+    )
     materials = _materials(groups, value, sigma, accepted)
     known = np.array([item is not None for item in materials.accepted], dtype=np.bool_)
     batch_of = _batch_of(groups, batches)
@@ -160,7 +162,7 @@ def _drift(
 
     def centred(x: FloatArray) -> FloatArray:
         mean = np.bincount(material, weights=x, minlength=len(count)) / np.maximum(count, 1)
-        return x - mean[material]
+        return np.asarray(x - mean[material])
 
     reference_mean = np.bincount(material, weights=value[rows], minlength=len(count)) / np.maximum(count, 1)
     deviation = centred(value[rows] / np.where(reference_mean == 0, np.nan, reference_mean)[material])
@@ -168,7 +170,7 @@ def _drift(
     n_batches = batches.count
 
     def total(x: FloatArray) -> FloatArray:
-        return np.bincount(batch, weights=x, minlength=n_batches)
+        return np.bincount(batch, weights=x, minlength=n_batches).astype(np.float64)
 
     sxx, sxy, syy = total(place**2), total(place * deviation), total(deviation**2)
     n = np.bincount(batch, minlength=n_batches)
@@ -185,12 +187,17 @@ def _drift(
 
 
 def _columns(
-    batches: Groups, bias: tuple[FloatArray, FloatArray, FloatArray], drift: Drift, settings: CalibrateSettings
+    batches: Groups,
+    bias: tuple[FloatArray, FloatArray, FloatArray],
+    drift: Drift,
+    settings: CalibrateSettings,
 ) -> dict[str, object]:
     ratio, ratio_se, spread = bias
     measured = np.isfinite(ratio)
     techniques = batches.key(0)
-    configured = np.array([settings.relative_sd.get(str(name), np.nan) for name in techniques], dtype=np.float64)
+    configured = np.array(
+        [settings.relative_sd.get(str(name), np.nan) for name in techniques], dtype=np.float64
+    )
     matrix = np.array([settings.matrix_sd.get(str(name), 0.0) for name in techniques], dtype=np.float64)
     corrects = settings.correct is not False
     factor = np.where(measured & corrects, ratio, 1.0)
@@ -198,7 +205,9 @@ def _columns(
     left = ratio_se / ratio if corrects else np.hypot(ratio - 1.0, ratio_se)
     supported = (settings.correct == "bias+drift") & (np.nan_to_num(drift.p, nan=1.0) < settings.drift_p)
     within = np.abs(ratio - 1.0) <= np.fmax(settings.tolerance.relative, settings.tolerance.sigmas * ratio_se)
-    origin = np.where(measured, "reference materials", np.where(np.isfinite(configured), "configured", "unknown"))
+    origin = np.where(
+        measured, "reference materials", np.where(np.isfinite(configured), "configured", "unknown")
+    )
     return {
         "technique": techniques,
         "batch": batches.key(1),
@@ -219,7 +228,9 @@ def _columns(
 
 
 def _or_null(flag: BoolArray, known: BoolArray) -> TextArray:
-    return np.where(known, flag.astype(object), None)
+    values: TextArray = flag.astype(object)
+    values[~known] = None
+    return values
 
 
 def _material_table(materials: Materials, settings: CalibrateSettings) -> pa.Table:
@@ -239,7 +250,9 @@ def _material_table(materials: Materials, settings: CalibrateSettings) -> pa.Tab
             "measured_ppm": materials.mean_ppm,
             "measured_se_ppm": np.sqrt(materials.mean_variance),
             "accepted_ppm": reference,
-            "accepted_sd_ppm": np.array([item.sd_ppm if item else np.nan for item in items], dtype=np.float64),
+            "accepted_sd_ppm": np.array(
+                [item.sd_ppm if item else np.nan for item in items], dtype=np.float64
+            ),
             "ratio": materials.ratio,
             "ratio_se": ratio_se,
             "source": [item.source if item else None for item in items],
@@ -257,11 +270,15 @@ def _remarks(
         failed = [row for row in rows if row["batch"] == batch and row["passed"] is False]
         if failed:
             worst = ", ".join(f"{row['element']} {row['bias']:.3f}" for row in failed)
-            remarks.append(Remark(f"reference materials outside the laboratory's limit: {worst} of accepted", batch))
+            remarks.append(
+                Remark(f"reference materials outside the laboratory's limit: {worst} of accepted", batch)
+            )
         drifting = [row for row in rows if row["batch"] == batch and (row["drift_p"] or 1.0) < 0.001]
         if drifting:
             named = ", ".join(row["element"] for row in drifting)
-            remarks.append(Remark(f"the reference materials drift with the run order (p < 0.001): {named}", batch))
+            remarks.append(
+                Remark(f"the reference materials drift with the run order (p < 0.001): {named}", batch)
+            )
     measured = {key[2] for key in groups.keys}
     unmeasured = sorted({material for material, _ in accepted} - measured)
     remarks += [Remark("accepted values given, but no spot of it was measured", name) for name in unmeasured]

@@ -29,7 +29,9 @@ class Candidates:
     chosen_row: IntArray
 
 
-def candidates(pairs: pa.Table, pair: pa.Table, relative_sd: FloatArray, prefer: tuple[str, ...]) -> Candidates:
+def candidates(
+    pairs: pa.Table, pair: pa.Table, relative_sd: FloatArray, prefer: tuple[str, ...]
+) -> Candidates:
     """All combinations of two means of one element for the pairs that could be formed, ranked by `RULE`.
 
     relative_sd: relative standard uncertainty of every mean with its unshared errors, shape (rows of pair,).
@@ -47,9 +49,13 @@ def candidates(pairs: pa.Table, pair: pa.Table, relative_sd: FloatArray, prefer:
         }
     )
     formed = np.flatnonzero(flags(pairs, "formed"))
-    wanted = pd.DataFrame({name: labels(pairs, name).text()[formed] for name in ("experiment", "alpha", "beta")})
+    wanted = pd.DataFrame(
+        {name: labels(pairs, name).text()[formed] for name in ("experiment", "alpha", "beta")}
+    )
     wanted["pair"] = formed
-    joined = wanted.merge(means.rename(columns={"phase": "alpha", "row": "row_alpha"}), on=["experiment", "alpha"])
+    joined = wanted.merge(
+        means.rename(columns={"phase": "alpha", "row": "row_alpha"}), on=["experiment", "alpha"]
+    )
     joined = joined.merge(
         means.rename(columns={"phase": "beta", "row": "row_beta"}), on=["experiment", "beta", "element"]
     )
@@ -62,7 +68,9 @@ def _ranked(joined: object, pair: pa.Table, relative_sd: FloatArray, prefer: tup
         for name in ("pair", "element", "row_alpha", "row_beta")
     )
     batch, technique, analyte = (labels(pair, name) for name in ("batch", "technique", "analyte"))
-    preference = np.array([prefer.index(t) if t in prefer else len(prefer) for t in technique.texts], dtype=np.int64)
+    preference = np.array(
+        [prefer.index(t) if t in prefer else len(prefer) for t in technique.texts], dtype=np.int64
+    )
     preference = preference[technique.codes] if len(technique.codes) else preference
     is_limit = ~np.isfinite(numbers(pair, "mean_ppm"))
     order = np.lexsort(
@@ -82,4 +90,6 @@ def _ranked(joined: object, pair: pa.Table, relative_sd: FloatArray, prefer: tup
     pairs_row, element, alpha, beta = pairs_row[order], element[order], alpha[order], beta[order]
     new = np.ones(len(order), dtype=np.bool_)
     new[1:] = (pairs_row[1:] != pairs_row[:-1]) | (element[1:] != element[:-1])
-    return Candidates(pairs_row, alpha, beta, new, np.flatnonzero(new)[np.cumsum(new) - 1] if len(new) else order)
+    return Candidates(
+        pairs_row, alpha, beta, new, np.flatnonzero(new)[np.cumsum(new) - 1] if len(new) else order
+    )

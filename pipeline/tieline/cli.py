@@ -20,17 +20,35 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 
-ConfigArgument = Annotated[Path, typer.Argument(metavar="CONFIG", help="Configuration of the session, a TOML file.")]
+WRONG_INPUT, INTERRUPTED = 2, 130
+
+ConfigArgument = Annotated[
+    Path, typer.Argument(metavar="CONFIG", help="Configuration of the session, a TOML file.")
+]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON only, on standard output.")]
-OutOption = Annotated[Path | None, typer.Option("--out", metavar="DIR", help="Folder of run folders, instead of the configured one.")]  # fmt: skip
-SetOption = Annotated[list[str] | None, typer.Option("--set", metavar="KEY=VALUE", help="Try a setting without editing the file, such as screen.total.sigmas=3. Repeatable.")]  # fmt: skip
+OutOption = Annotated[
+    Path | None,
+    typer.Option("--out", metavar="DIR", help="Folder of run folders, instead of the configured one."),
+]
+SetOption = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--set",
+        metavar="KEY=VALUE",
+        help="Try a setting without editing the file, such as screen.total.sigmas=3. Repeatable.",
+    ),
+]
 
 
 @app.command()
 def run(
     config: ConfigArgument,
-    only: Annotated[str | None, typer.Option("--only", metavar="STAGE", help="Recompute this one stage.")] = None,
-    until: Annotated[str | None, typer.Option("--until", metavar="STAGE", help="Stop after this stage.")] = None,
+    only: Annotated[
+        str | None, typer.Option("--only", metavar="STAGE", help="Recompute this one stage.")
+    ] = None,
+    until: Annotated[
+        str | None, typer.Option("--until", metavar="STAGE", help="Stop after this stage.")
+    ] = None,
     fresh: Annotated[bool, typer.Option("--fresh", help="Recompute every stage.")] = False,
     out: OutOption = None,
     overrides: SetOption = None,
@@ -89,7 +107,9 @@ def status(
 
 @app.command()
 def demo(
-    folder: Annotated[Path, typer.Argument(metavar="DIR", help="Where the demo session is copied.")] = Path("tieline-demo"),
+    folder: Annotated[Path, typer.Argument(metavar="DIR", help="Where the demo session is copied.")] = Path(
+        "tieline-demo"
+    ),
     json: JsonOption = False,
 ) -> None:
     """Copy the demo session, invented for the purpose, into a folder and reduce it there.
@@ -105,31 +125,28 @@ def demo(
 def main() -> None:
     """Entry point: turns what a user can get wrong into messages and exit status 2."""
     try:
-        app(standalone_mode=False)
-    except KeyboardInterrupt:
+        status = app(standalone_mode=False)
+        sys.exit(status if isinstance(status, int) else 0)
+    except (KeyboardInterrupt, typer.Abort):
         sys.stderr.write("interrupted; the results are as they were before\n")
-        sys.exit(130)
+        sys.exit(INTERRUPTED)
     except Exception as error:
         sys.exit(_exit_status(error))
 
 
 def _exit_status(error: Exception) -> int:
-    import click
-
-    if isinstance(error, click.exceptions.Exit):
-        return error.exit_code
-    if isinstance(error, click.exceptions.Abort):
-        return 130
-    if isinstance(error, click.ClickException):
-        error.show()
-        return 2
+    # What the parser finds wrong with the command line knows how to show itself.
+    show = getattr(error, "show", None)
+    if callable(show):
+        show()
+        return WRONG_INPUT
     from tieline.errors import InputError
 
     if isinstance(error, InputError):
         from tieline import terminal
 
         terminal.show_problems(error.problems)
-        return 2
+        return WRONG_INPUT
     raise error
 
 
@@ -146,9 +163,7 @@ def _print_json(value: Any) -> None:
 
 
 def _fail_usage(text: str) -> None:
-    import click
-
-    raise click.UsageError(text)
+    raise typer.BadParameter(text)
 
 
 if __name__ == "__main__":

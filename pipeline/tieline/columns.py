@@ -10,7 +10,9 @@ SPOT_KEYS = (
     Column("row", "count", "row of the spot in its table, as a spreadsheet counts it", "1"),
     Column("technique", "label", "measuring technique, such as EPMA or laser"),
     Column("batch", "label", "measuring session; its spots share calibration errors"),
-    Column("experiment", "label", "experiment the charge belongs to; null for reference materials", nullable=True),
+    Column(
+        "experiment", "label", "experiment the charge belongs to; null for reference materials", nullable=True
+    ),
     Column("phase", "label", "phase the spot was placed on; the material's name for reference materials"),
     Column("grain", "label", "grain label", nullable=True),
     Column("zone", "label", "zone label, such as rim or core", nullable=True),
@@ -27,7 +29,13 @@ INGEST = TableSpec(
     (
         *VALUE_KEYS,
         Column("raw", "text", "the cell's text as it stands in the source"),
-        Column("value", "number", "the number read, in `unit`; null when not measured or only a limit", "unit", True),
+        Column(
+            "value",
+            "number",
+            "the number read, in `unit`; null when not measured or only a limit",
+            "unit",
+            True,
+        ),
         Column("unit", "label", "unit of value, sigma and limit: wt%, ppm or ppb"),
         Column("sigma", "number", "one standard uncertainty of the single value, absolute", "unit", True),
         Column("limit", "number", "detection limit of this analyte in this spot", "unit", True),
@@ -100,17 +108,43 @@ CALIBRATE = TableSpec(
         Column("n_spots", "count", "reference-material spots that measured the element", "1"),
         Column("n_materials", "count", "reference materials with an accepted value", "1"),
         Column("bias", "number", "measured over accepted, weighted over materials", "1", True),
-        Column("bias_se", "number", "standard error of the bias, accepted values' uncertainty included", "1", True),
-        Column("reproducibility_sd", "number", "relative spread between reference spots beyond counting", "1", True),
+        Column(
+            "bias_se",
+            "number",
+            "standard error of the bias, accepted values' uncertainty included",
+            "1",
+            True,
+        ),
+        Column(
+            "reproducibility_sd",
+            "number",
+            "relative spread between reference spots beyond counting",
+            "1",
+            True,
+        ),
         Column("drift_per_spot", "number", "relative change per place in the run order", "1", True),
         Column("drift_p", "number", "p-value of no drift", "1", True),
-        Column("drift_centre", "number", "place in the run order at which the drift correction is one", "1", True),
+        Column(
+            "drift_centre", "number", "place in the run order at which the drift correction is one", "1", True
+        ),
         Column("factor", "number", "values of the batch are divided by this", "1"),
         Column("drift_applied", "number", "relative drift per place that is removed from the values", "1"),
-        Column("relative_sd", "number", "relative standard uncertainty shared by all spots of the batch", "1", True),
+        Column(
+            "relative_sd",
+            "number",
+            "relative standard uncertainty shared by all spots of the batch",
+            "1",
+            True,
+        ),
         Column("matrix_sd", "number", "relative standard uncertainty not shared between phases", "1"),
         Column("origin", "label", "where relative_sd comes from: reference materials, configured or unknown"),
-        Column("passed", "flag", "bias within the laboratory's own limit; null without reference material", "", True),
+        Column(
+            "passed",
+            "flag",
+            "bias within the laboratory's own limit; null without reference material",
+            "",
+            True,
+        ),
     ),
 )
 
@@ -173,7 +207,13 @@ SCREEN_GROUPS = TableSpec(
         Column("technique", "label", "measuring technique"),
         Column("test", "label", "which test speaks"),
         Column("n_spots", "count", "spots the test could judge", "1"),
-        Column("statistic", "number", "the group's statistic, such as the smallest overlap fraction visible", "1", True),
+        Column(
+            "statistic",
+            "number",
+            "the group's statistic, such as the smallest overlap fraction visible",
+            "1",
+            True,
+        ),
         Column("threshold", "number", "what it was held against", "1", True),
         Column("p_value", "number", "p-value where the test has one", "1", True),
         Column("verdict", "label", "found, not found, or cannot tell"),
@@ -199,12 +239,20 @@ PAIR = TableSpec(
         Column("se_ppm", "number", "standard error of the mean, counting and spread", "ug/g", True),
         Column("counting_se_ppm", "number", "the part of se_ppm that counting alone explains", "ug/g", True),
         Column("dof", "number", "degrees of freedom of se_ppm", "1", True),
-        Column("counting_sd_ppm", "number", "typical counting standard uncertainty of one spot", "ug/g", True),
+        Column(
+            "counting_sd_ppm", "number", "typical counting standard uncertainty of one spot", "ug/g", True
+        ),
         Column("spread_sd_ppm", "number", "standard deviation between spots beyond counting", "ug/g", True),
         Column("mswd", "number", "mean square of weighted deviates", "1", True),
         Column("mswd_lo", "number", "lower end of the 95 % acceptance interval of mswd", "1", True),
         Column("mswd_hi", "number", "upper end of the 95 % acceptance interval of mswd", "1", True),
-        Column("internal_standard_sd", "number", "relative uncertainty of the internal-standard factor", "1", True),
+        Column(
+            "internal_standard_sd",
+            "number",
+            "relative uncertainty of the internal-standard factor",
+            "1",
+            True,
+        ),
     ),
 )
 
@@ -249,7 +297,9 @@ PAIR_TECHNIQUES = TableSpec(
         Column("first_ppm", "number", "first mean", "ug/g"),
         Column("second_ppm", "number", "second mean", "ug/g"),
         Column("ratio", "number", "second over first", "1"),
-        Column("deviation", "number", "difference over its standard uncertainty, calibration included", "1", True),
+        Column(
+            "deviation", "number", "difference over its standard uncertainty, calibration included", "1", True
+        ),
         Column("differ", "flag", "deviation beyond the threshold"),
     ),
 )
@@ -261,7 +311,9 @@ PARTITION_KEYS = (
     ELEMENT,
 )
 PARTITION_VALUES = (
-    Column("D", "number", "Nernst partition coefficient by mass, alpha over beta; null for limits", "1", True),
+    Column(
+        "D", "number", "Nernst partition coefficient by mass, alpha over beta; null for limits", "1", True
+    ),
     Column("D_sd", "number", "standard uncertainty of D by linear propagation", "1", True),
     Column("D_lo", "number", "lower end of the interval at the configured confidence", "1", True),
     Column("D_hi", "number", "upper end of the interval at the configured confidence", "1", True),
@@ -295,13 +347,25 @@ PARTITION_VALUES = (
     Column("interval", "label", "how the interval was made: fieller, gum-s1, likelihood or none"),
     Column("share_counting", "number", "share of D_sd squared from counting", "1", True),
     Column("share_spread", "number", "share from spread between spots", "1", True),
-    Column("share_calibration", "number", "share from calibration and matrix that does not cancel", "1", True),
+    Column(
+        "share_calibration", "number", "share from calibration and matrix that does not cancel", "1", True
+    ),
     Column("share_internal_standard", "number", "share from internal-standard factors", "1", True),
-    Column("D_overlap_lo", "number", "lower end of D if undetected overlap of beta in alpha is allowed for", "1", True),
-    Column("overlap_bound", "number", "largest fraction of beta in alpha that this pair's D's allow", "1", True),
+    Column(
+        "D_overlap_lo",
+        "number",
+        "lower end of D if undetected overlap of beta in alpha is allowed for",
+        "1",
+        True,
+    ),
+    Column(
+        "overlap_bound", "number", "largest fraction of beta in alpha that this pair's D's allow", "1", True
+    ),
 )
 
-PARTITION = TableSpec("partition", "experiment x alpha x beta x element", (*PARTITION_KEYS, *PARTITION_VALUES))
+PARTITION = TableSpec(
+    "partition", "experiment x alpha x beta x element", (*PARTITION_KEYS, *PARTITION_VALUES)
+)
 
 PARTITION_ALTERNATIVES = TableSpec(
     "partition.alternatives",
@@ -340,7 +404,9 @@ CLASSIFY = TableSpec(
         Column("class", "label", "compatible, incompatible, highly incompatible, or unresolved"),
         Column("p_compatible", "number", "probability that D is above the compatible boundary", "1", True),
         Column("p_incompatible", "number", "probability that D lies between the boundaries", "1", True),
-        Column("p_highly_incompatible", "number", "probability that D is below the lower boundary", "1", True),
+        Column(
+            "p_highly_incompatible", "number", "probability that D is below the lower boundary", "1", True
+        ),
     ),
 )
 
@@ -348,7 +414,11 @@ ASSESS = TableSpec(
     "assess",
     "check",
     (
-        Column("check", "label", "which line of evidence: exchange, lattice-strain, mass-balance, trend, overlap, ..."),
+        Column(
+            "check",
+            "label",
+            "which line of evidence: exchange, lattice-strain, mass-balance, trend, overlap, ...",
+        ),
         Column("experiment", "label", "experiment; null when the check spans experiments", nullable=True),
         Column("alpha", "label", "numerator phase", nullable=True),
         Column("beta", "label", "denominator phase", nullable=True),

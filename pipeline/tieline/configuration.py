@@ -60,7 +60,9 @@ def validate(data: dict[str, Any], file: str) -> SessionSettings:
 def _read(path: Path) -> str:
     try:
         if path.stat().st_size > LARGEST_CONFIGURATION_BYTES:
-            raise InputError(Problem("too large for a configuration.", str(path), remedy="Name the TOML file."))
+            raise InputError(
+                Problem("too large for a configuration.", str(path), remedy="Name the TOML file.")
+            )
         return path.read_bytes().decode("utf-8-sig")
     except FileNotFoundError:
         others = [other.name for other in path.parent.glob("*.toml")] if path.parent.is_dir() else []
@@ -77,13 +79,18 @@ def _override(data: dict[str, Any], text: str) -> None:
     match = re.fullmatch(r"([A-Za-z0-9_.-]+)\s*=\s*(.*)", text, re.DOTALL)
     if not match:
         raise InputError(
-            Problem(f"--set {text!r} is not of the form key=value.", remedy="Write for example screen.total.sigmas=3.")
+            Problem(
+                f"--set {text!r} is not of the form key=value.",
+                remedy="Write for example screen.total.sigmas=3.",
+            )
         )
     *parents, last = match.group(1).split(".")
     for key in parents:
         data = data.setdefault(key, {})
         if not isinstance(data, dict):
-            raise InputError(Problem(f"--set {text!r}: {key} is not a section.", remedy="Name a section's key."))
+            raise InputError(
+                Problem(f"--set {text!r}: {key} is not a section.", remedy="Name a section's key.")
+            )
     try:
         data[last] = tomllib.loads(f"value = {match.group(2)}")["value"]
     except tomllib.TOMLDecodeError:
@@ -95,11 +102,15 @@ def _problem(detail: Any, file: str) -> Problem:
     key = ".".join(str(part) for part in location)
     if detail["type"] == "extra_forbidden":
         known = _known_keys(detail["loc"][:-1])
-        remedy = nearest(str(detail["loc"][-1]), known) or (f"Known keys: {', '.join(sorted(known))}." if known else "")
+        remedy = nearest(str(detail["loc"][-1]), known) or (
+            f"Known keys: {', '.join(sorted(known))}." if known else ""
+        )
         return Problem("unknown key.", file, column=key, remedy=remedy)
     if detail["type"] == "missing":
         return Problem("this key is required.", file, column=key, remedy="Add it.")
-    return Problem(f"{detail['msg']}; found {json.dumps(detail['input'], default=str)[:80]}.", file, column=key)
+    return Problem(
+        f"{detail['msg']}; found {json.dumps(detail['input'], default=str)[:80]}.", file, column=key
+    )
 
 
 def _known_keys(location: Sequence[Any]) -> set[str]:

@@ -150,8 +150,9 @@ def _normalised(
         usable = rows & (total > 0)
         safe = np.where(usable, total, 1.0)
         ratio = values.value / safe
-        own = values.sigma**2 * np.maximum(1.0 - 2.0 * share * ratio, 0.0)
-        sigma = target / safe * np.sqrt(own + ratio**2 * variance)
+        own = values.sigma**2 * (1.0 - 2.0 * share * ratio)
+        # Never negative but for rounding, where one oxide is the whole total.
+        sigma = target / safe * np.sqrt(np.maximum(own + ratio**2 * variance, 0.0))
         values = Values(
             np.where(usable, target * ratio, values.value),
             np.where(usable, sigma, values.sigma),

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import FloatArray, counts, labels, numbers
+from tieline.arrays import FloatArray, IntArray, counts, labels, numbers
 
 
 @dataclass(frozen=True)
@@ -37,7 +37,7 @@ def _row_factors(convert: pa.Table, calibrate: pa.Table, spots: pa.Table) -> Flo
     if np.all(factors == 1.0) and not np.any(drifts):
         return None
     row_of = calibrate_row(convert, calibrate)
-    factor = np.append(factors, 1.0)[row_of]
+    factor: FloatArray = np.append(factors, 1.0)[row_of]
     if np.any(drifts):
         centres = np.nan_to_num(numbers(calibrate, "drift_centre"))
         place = sequence_of(convert, spots) - np.append(centres, 0.0)[row_of]
@@ -45,7 +45,7 @@ def _row_factors(convert: pa.Table, calibrate: pa.Table, spots: pa.Table) -> Flo
     return factor
 
 
-def calibrate_row(convert: pa.Table, calibrate: pa.Table) -> FloatArray:
+def calibrate_row(convert: pa.Table, calibrate: pa.Table) -> IntArray:
     """For every row of `convert` the row of its batch and element in `calibrate`, -1 where there is none."""
     batch, element = labels(convert, "batch"), labels(convert, "element")
     known = {
@@ -55,7 +55,8 @@ def calibrate_row(convert: pa.Table, calibrate: pa.Table) -> FloatArray:
         )
     }
     lookup = np.array([[known.get((b, e), -1) for e in element.texts] for b in batch.texts], dtype=np.int64)
-    return lookup[batch.codes, element.codes] if lookup.size else np.full(convert.num_rows, -1)
+    rows: IntArray = lookup[batch.codes, element.codes] if lookup.size else np.full(convert.num_rows, -1)
+    return rows
 
 
 def sequence_of(convert: pa.Table, spots: pa.Table) -> FloatArray:
@@ -64,7 +65,7 @@ def sequence_of(convert: pa.Table, spots: pa.Table) -> FloatArray:
     rank = {text: position for position, text in enumerate(all_tables)}
     widest = int(max(counts(convert, "row").max(initial=0), counts(spots, "row").max(initial=0))) + 1
 
-    def identity(table: pa.Table) -> FloatArray:
+    def identity(table: pa.Table) -> IntArray:
         tables = labels(table, "table")
         ranks = np.array([rank[text] for text in tables.texts], dtype=np.int64)
         return ranks[tables.codes] * widest + counts(table, "row")

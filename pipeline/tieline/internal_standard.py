@@ -72,13 +72,17 @@ def rescaling(
     groups = group_rows([labels(ingest, "experiment"), labels(ingest, "phase")], rows)
     own = element.is_one_of((source.element,)) & np.isfinite(value_ppm)
     assumed = _assumed(ingest, groups, own & rows, value_ppm, standard, source.element_fraction)
-    actual, actual_sd = _actual(ingest, groups, own, (value_ppm, sigma_ppm), standard, source.element_fraction)
+    actual, actual_sd = _actual(
+        ingest, groups, own, (value_ppm, sigma_ppm), standard, source.element_fraction
+    )
     _raise_missing(groups, assumed, actual, standard)
     left = np.isnan(actual)
     factor = np.where(left, 1.0, actual / assumed)
     relative_sd = np.where(left, np.nan, actual_sd / actual)
     remarks = [
-        Remark(f"{key[1]} of {key[0]}: no actual {standard.element}, {standard.technique} values left as assumed")
+        Remark(
+            f"{key[1]} of {key[0]}: no actual {standard.element}, {standard.technique} values left as assumed"
+        )
         for key, is_left in zip(groups.keys, left, strict=True)
         if is_left
     ]
@@ -95,7 +99,11 @@ def _parsed(standard: InternalStandard):  # type: ignore[no-untyped-def]
         return parse_oxide(standard.element)
     except ValueError as error:
         raise InputError(
-            Problem(f"{error}.", column="convert.internal_standard.element", remedy='Write for example "CaO" or "Si".')
+            Problem(
+                f"{error}.",
+                column="convert.internal_standard.element",
+                remedy='Write for example "CaO" or "Si".',
+            )
         ) from None
 
 
@@ -145,9 +153,13 @@ def _actual(
     return means.mean, np.sqrt(means.variance)
 
 
-def _raise_missing(groups: Groups, assumed: FloatArray, actual: FloatArray, standard: InternalStandard) -> None:
+def _raise_missing(
+    groups: Groups, assumed: FloatArray, actual: FloatArray, standard: InternalStandard
+) -> None:
     problems = []
-    for key, is_assumed, is_actual in zip(groups.keys, np.isfinite(assumed), np.isfinite(actual), strict=True):
+    for key, is_assumed, is_actual in zip(
+        groups.keys, np.isfinite(assumed), np.isfinite(actual), strict=True
+    ):
         place = f"{key[1]} of {key[0]}"
         if not is_assumed:
             remedy = (
@@ -155,11 +167,13 @@ def _raise_missing(groups: Groups, assumed: FloatArray, actual: FloatArray, stan
                 if standard.assumed_from == "settings"
                 else f"The {standard.technique} table needs a {standard.element} column with the assumed values."
             )
-            problems.append(Problem(f"no assumed {standard.element} for the internal standard.", place, remedy=remedy))
-        elif not is_actual and standard.missing == "stop":
-            remedy = (
-                f'Measure it by {standard.source_technique}, give actual = {{ {key[1]} = {{ value = ... }} }}, or set missing = "as-assumed".'
+            problems.append(
+                Problem(f"no assumed {standard.element} for the internal standard.", place, remedy=remedy)
             )
-            problems.append(Problem(f"no actual {standard.element} for the internal standard.", place, remedy=remedy))
+        elif not is_actual and standard.missing == "stop":
+            remedy = f'Measure it by {standard.source_technique}, give actual = {{ {key[1]} = {{ value = ... }} }}, or set missing = "as-assumed".'
+            problems.append(
+                Problem(f"no actual {standard.element} for the internal standard.", place, remedy=remedy)
+            )
     if problems:
         raise InputError(problems)

@@ -39,7 +39,11 @@ def _acquire(path: Path) -> None:
             continue
         except OSError as error:
             raise InputError(
-                Problem(f"cannot be written: {error.strerror}.", str(path.parent), remedy="Choose another --out folder.")
+                Problem(
+                    f"cannot be written: {error.strerror}.",
+                    str(path.parent),
+                    remedy="Choose another --out folder.",
+                )
             ) from None
         with os.fdopen(descriptor, "w") as stream:
             stream.write(me)
@@ -84,5 +88,7 @@ def _held(path: Path) -> Problem:
     holder = _holder(path)
     who = f"process {holder.get('pid')} on {holder.get('host')}" if holder else "another process"
     return Problem(
-        f"is being written by {who}.", str(path.parent), remedy=f"Wait for it, or delete {path.name} there if it is gone."
+        f"is being written by {who}.",
+        str(path.parent),
+        remedy=f"Wait for it, or delete {path.name} there if it is gone.",
     )

@@ -39,10 +39,19 @@ def write_manifest(session: Session, inputs: Mapping[str, pa.Buffer]) -> None:
         "configuration": configuration,
         "overrides": list(session.overrides),
         "effective": {EFFECTIVE: bytes_digest(settings.encode())},
-        "inputs": {path: digests.get(path) or known[path] for path in _input_paths(session) if path in digests or path in known},
-        "stages": {stage.name: entry for stage in STAGES if (entry := _stage_entry(session.run_folder, stage))},
+        "inputs": {
+            path: digests.get(path) or known[path]
+            for path in _input_paths(session)
+            if path in digests or path in known
+        },
+        "stages": {
+            stage.name: entry for stage in STAGES if (entry := _stage_entry(session.run_folder, stage))
+        },
     }
-    write_text(session.run_folder / MANIFEST, json.dumps(manifest, indent=1, sort_keys=True, ensure_ascii=False) + "\n")
+    write_text(
+        session.run_folder / MANIFEST,
+        json.dumps(manifest, indent=1, sort_keys=True, ensure_ascii=False) + "\n",
+    )
 
 
 def read_manifest(run_folder: Path) -> dict[str, Any]:
@@ -83,4 +92,9 @@ def _stage_entry(run_folder: Path, stage: Any) -> dict[str, Any] | None:
         }
         for table, record in records.items()
     }
-    return {"fingerprint": main["fingerprint"], "revision": main["revision"], "files": files, "ledger": main["ledger"]}
+    return {
+        "fingerprint": main["fingerprint"],
+        "revision": main["revision"],
+        "files": files,
+        "ledger": main["ledger"],
+    }

@@ -33,7 +33,7 @@ def _scientific(value: float, sd: float) -> str:
     return f"{scaled:.{places}f}({round(scaled_sd * 10.0**places)})e{exponent}"
 
 
-def short_D(row: Mapping[str, Any]) -> str:
+def written(row: Mapping[str, Any]) -> str:
     """One D as text: value(uncertainty), <upper limit, >lower limit, or a dash."""
     kind = row["kind"]
     if kind == "upper-limit" and row["D_hi"] is not None:

@@ -11,7 +11,17 @@ from dataclasses import dataclass
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, Groups, IntArray, flags, group_rows, labels, numbers, spot_codes
+from tieline.arrays import (
+    BoolArray,
+    FloatArray,
+    Groups,
+    IntArray,
+    flags,
+    group_rows,
+    labels,
+    numbers,
+    spot_codes,
+)
 from tieline.columns import PAIR, PAIR_LIMITS
 from tieline.correction import Concentrations, calibrated
 from tieline.pairing import phase_pairs, technique_differences
@@ -33,7 +43,12 @@ class Used:
 
 
 def pair(
-    convert: pa.Table, calibrate: pa.Table, screen: pa.Table, ingest_spots: pa.Table, *, settings: PairSettings
+    convert: pa.Table,
+    calibrate: pa.Table,
+    screen: pa.Table,
+    ingest_spots: pa.Table,
+    *,
+    settings: PairSettings,
 ) -> StageResult:
     """Phase means with their variance and its parts, and the alpha/beta pairs that can be formed."""
     concentrations = calibrated(convert, calibrate, ingest_spots)
@@ -70,7 +85,9 @@ def _means(
     code = groups.code[rows]
     sigma = pooled_sigmas(values.value[rows], values.sigma[rows], code, groups.count)
     grains = _grains(convert)[rows] if settings.average == "grains" else None
-    return phase_means(values.value[rows], sigma, code, groups.count, estimator=settings.mean, subgroup=grains)
+    return phase_means(
+        values.value[rows], sigma, code, groups.count, estimator=settings.mean, subgroup=grains
+    )
 
 
 def _grains(convert: pa.Table) -> IntArray:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, group_rows, labels, numbers, spot_codes
+from tieline.arrays import BoolArray, FloatArray, IntArray, TextArray, group_rows, labels, numbers, spot_codes
 from tieline.columns import PAIR_TECHNIQUES, PAIRS
 from tieline.errors import InputError, Problem, nearest
 from tieline.results import Remark
@@ -42,7 +42,9 @@ def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> t
     names = ("experiment", "alpha", "beta", "n_alpha", "n_beta", "formed", "reason")
     table = build(PAIRS, {name: list(column) for name, column in zip(names, columns, strict=True)})
     return table, [
-        Remark(f"{alpha}/{beta} not formed: {reason}", name) for name, alpha, beta, *_, formed, reason in rows if not formed
+        Remark(f"{alpha}/{beta} not formed: {reason}", name)
+        for name, alpha, beta, *_, formed, reason in rows
+        if not formed
     ]
 
 
@@ -121,20 +123,21 @@ def technique_differences(
     return table, remarks
 
 
-def _relative_calibration(pair: pa.Table, calibrate: pa.Table) -> np.ndarray:
+def _relative_calibration(pair: pa.Table, calibrate: pa.Table) -> FloatArray:
     """Relative calibration uncertainty of every mean, matrix included; 0 where unknown."""
     from tieline.correction import calibrate_row
 
     rows = calibrate_row(pair, calibrate)
     shared = np.append(np.nan_to_num(numbers(calibrate, "relative_sd")), 0.0)[rows]
     matrix = np.append(numbers(calibrate, "matrix_sd"), 0.0)[rows]
-    return np.hypot(shared, matrix)
+    return np.asarray(np.hypot(shared, matrix))
 
 
-def _texts(pair: pa.Table, name: str, rows: np.ndarray) -> np.ndarray:
-    return labels(pair, name).text()[rows]
+def _texts(pair: pa.Table, name: str, rows: IntArray) -> TextArray:
+    texts: TextArray = labels(pair, name).text()[rows]
+    return texts
 
 
-def _described(pair: pa.Table, rows: np.ndarray) -> list[str]:
+def _described(pair: pa.Table, rows: IntArray) -> list[str]:
     parts = [_texts(pair, name, rows) for name in ("technique", "batch", "analyte")]
     return [", ".join(texts) for texts in zip(*parts, strict=True)]

@@ -19,7 +19,7 @@ from tieline.propagation import Budget, Side, propagate, unshared
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.results import PartitionSettings
 from tieline.statistics.means import MeanEstimate
-from tieline.statistics.ratios import RatioInterval, ratio_interval
+from tieline.statistics.ratios import ratio_interval
 from tieline.tables import build
 
 UNKNOWN_CALIBRATION = (
@@ -29,7 +29,12 @@ UNKNOWN_CALIBRATION = (
 
 
 def partition(
-    pair: pa.Table, pair_pairs: pa.Table, pair_limits: pa.Table, calibrate: pa.Table, *, settings: PartitionSettings
+    pair: pa.Table,
+    pair_pairs: pa.Table,
+    pair_limits: pa.Table,
+    calibrate: pa.Table,
+    *,
+    settings: PartitionSettings,
 ) -> StageResult:
     """D of every element of every pair that was formed, the possible D's not chosen, and the covariances."""
     sources = _Sources(pair, calibrate)
@@ -37,7 +42,9 @@ def partition(
     alpha, beta = sources.side(found.alpha), sources.side(found.beta)
     budget = propagate(alpha, beta)
     rows = np.flatnonzero(found.chosen)
-    table = _partition_table(pair, pair_pairs, pair_limits, found, rows, (alpha, beta), budget, sources, settings)
+    table = _partition_table(
+        pair, pair_pairs, pair_limits, found, rows, (alpha, beta), budget, sources, settings
+    )
     tables = {
         "partition": table,
         "partition.alternatives": _alternatives(pair, pair_pairs, found, budget),
@@ -64,14 +71,16 @@ class _Sources:
         standard = numbers(pair, "internal_standard_sd")
         self.internal_standard = np.nan_to_num(standard)
         experiment, phase, technique = (labels(pair, name) for name in ("experiment", "phase", "technique"))
-        key = (experiment.codes * (len(phase.texts) + 1) + phase.codes) * (len(technique.texts) + 1) + technique.codes
+        key = (experiment.codes * (len(phase.texts) + 1) + phase.codes) * (
+            len(technique.texts) + 1
+        ) + technique.codes
         self.internal_standard_key: IntArray = np.where(np.isfinite(standard), key, -1 - np.arange(len(key)))
 
     def relative_sd(self) -> FloatArray:
         """Relative standard uncertainty of every mean with all its sources; infinite where there is none."""
         with np.errstate(divide="ignore", invalid="ignore"):
             own = np.where(self.mean > 0, self.se / self.mean, np.inf)
-        return np.sqrt(own**2 + self.calibration**2 + self.matrix**2 + self.internal_standard**2)
+        return np.asarray(np.sqrt(own**2 + self.calibration**2 + self.matrix**2 + self.internal_standard**2))
 
     def side(self, rows: IntArray) -> Side:
         # A mean's counting part can exceed what its scatter shows; D_sd is that of the scatter, so it is cut there.
@@ -195,7 +204,9 @@ def _alternatives(pair: pa.Table, pairs: pa.Table, found: Candidates, budget: Bu
     return build(
         PARTITION_ALTERNATIVES,
         {
-            **{name: labels(pairs, name).text()[found.pair[rows]] for name in ("experiment", "alpha", "beta")},
+            **{
+                name: labels(pairs, name).text()[found.pair[rows]] for name in ("experiment", "alpha", "beta")
+            },
             "element": of("element", found.alpha),
             "D": budget.D[rows],
             "D_sd": budget.D_sd[rows],

@@ -49,7 +49,9 @@ def judge(
         return Verdict(stage.name, "stale", tuple(missing))
     record = records[stage.outputs[0]] or {}
     names = (*stage.inputs, *stage.files(settings))
-    reasons = _differences(stage, settings, record, {name: digests[name] for name in names if name in digests})
+    reasons = _differences(
+        stage, settings, record, {name: digests[name] for name in names if name in digests}
+    )
     if reasons:
         return Verdict(stage.name, "stale", tuple(reasons))
     waiting = sorted({producer(name) for name in stage.inputs if name not in digests})

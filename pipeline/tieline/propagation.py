@@ -62,11 +62,9 @@ def unshared(alpha: Side, beta: Side) -> tuple[FloatArray, FloatArray]:
     different = alpha.internal_standard_key != beta.internal_standard_key
 
     def total(side: Side) -> FloatArray:
-        return np.sqrt(
-            np.where(apart, side.calibration, 0.0) ** 2
-            + side.matrix**2
-            + np.where(different, side.internal_standard, 0.0) ** 2
-        )
+        calibration = np.where(apart, side.calibration, 0.0)
+        standard = np.where(different, side.internal_standard, 0.0)
+        return np.asarray(np.sqrt(calibration**2 + side.matrix**2 + standard**2))
 
     return total(alpha), total(beta)
 
@@ -78,7 +76,9 @@ def by_arrays(alpha: Side, beta: Side) -> Budget:
     counting = alpha.counting**2 + beta.counting**2
     spread = alpha.spread**2 + beta.spread**2
     apart = alpha.calibration_key != beta.calibration_key
-    calibration = np.where(apart, alpha.calibration**2 + beta.calibration**2, 0.0) + alpha.matrix**2 + beta.matrix**2
+    calibration = (
+        np.where(apart, alpha.calibration**2 + beta.calibration**2, 0.0) + alpha.matrix**2 + beta.matrix**2
+    )
     different = alpha.internal_standard_key != beta.internal_standard_key
     standard = np.where(different, alpha.internal_standard**2 + beta.internal_standard**2, 0.0)
     total = counting + spread + calibration + standard
@@ -90,24 +90,27 @@ def by_arrays(alpha: Side, beta: Side) -> Budget:
 
 def by_package(alpha: Side, beta: Side) -> Budget:
     """The same with one `uncertainties` variable per source, shared variables being one and the same."""
-    from uncertainties import ufloat
-    from uncertainties.core import Variable
+    from uncertainties import UFloat, ufloat
 
-    shared: dict[tuple[str, int], Variable] = {}
+    shared: dict[tuple[str, int], UFloat | float] = {}
 
-    def factor(kind: str, sd: float, key: int | None = None) -> Variable:
+    def factor(kind: str, sd: float, key: int | None = None) -> UFloat | float:
+        if sd == 0:
+            return 1.0  # an exact factor is no variable
         if key is None:
             return ufloat(1.0, sd, tag=kind)
         return shared.setdefault((kind, key), ufloat(1.0, sd, tag=kind))
 
-    def concentration(side: Side, row: int) -> object:
+    def concentration(side: Side, row: int) -> UFloat | float:
         return (
             float(side.mean[row])
             * factor("counting", float(side.counting[row]))
             * factor("spread", float(side.spread[row]))
             * factor("calibration", float(side.calibration[row]), int(side.calibration_key[row]))
             * factor("calibration", float(side.matrix[row]))
-            * factor("internal_standard", float(side.internal_standard[row]), int(side.internal_standard_key[row]))
+            * factor(
+                "internal_standard", float(side.internal_standard[row]), int(side.internal_standard_key[row])
+            )
         )
 
     rows = [_components(concentration, alpha, beta, row) for row in range(len(alpha.mean))]
@@ -119,6 +122,8 @@ def _components(concentration, alpha: Side, beta: Side, row: int) -> tuple[float
     if not np.isfinite(alpha.mean[row]) or not np.isfinite(beta.mean[row]) or beta.mean[row] == 0:
         return (np.nan,) * 6
     D = concentration(alpha, row) / concentration(beta, row)
+    if isinstance(D, float):
+        return (D, 0.0, *(np.nan,) * 4)
     parts = dict.fromkeys((field.name for field in fields(Budget)[2:]), 0.0)
     for variable, component in D.error_components().items():
         parts[variable.tag] += component**2

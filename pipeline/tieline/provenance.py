@@ -53,17 +53,19 @@ def _canonical(array: pa.Array) -> list[bytes | memoryview]:
     if pa.types.is_dictionary(array.type):
         return _canonical_labels(array)
     parts: list[bytes | memoryview] = []
+    numbers: np.ndarray[Any, Any]
     if array.null_count:
         parts.append(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)).tobytes())
     if pa.types.is_string(array.type):
         filled = array.fill_null("")
-        parts.append(memoryview(pc.binary_length(filled).to_numpy(zero_copy_only=False)).cast("B"))
+        lengths: np.ndarray[Any, Any] = pc.binary_length(filled).to_numpy(zero_copy_only=False)
+        parts.append(lengths.tobytes())
         parts.append(_text_bytes(filled))
         return parts
     zero = pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type)
     numbers = array.fill_null(zero).to_numpy(zero_copy_only=False)
     if len(numbers):
-        parts.append(memoryview(np.ascontiguousarray(numbers)).cast("B"))
+        parts.append(numbers.tobytes())
     return parts
 
 
@@ -77,7 +79,7 @@ def _canonical_labels(array: pa.DictionaryArray) -> list[bytes | memoryview]:
     mapping = np.array([*(rank.get(text, -1) for text in texts), -1], dtype=np.int32)
     parts: list[bytes | memoryview] = [json_text(in_use).encode()]
     if len(codes):
-        parts.append(memoryview(mapping[codes]).cast("B"))
+        parts.append(mapping[codes].tobytes())
     return parts
 
 

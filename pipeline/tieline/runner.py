@@ -8,7 +8,7 @@ problem found late leaves the folder as it was.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import pyarrow as pa
@@ -55,7 +55,7 @@ class Workspace:
 
 def status(session: Session) -> list[Verdict]:
     """The verdict on every stage; reads input files and stage-file footers, writes nothing."""
-    work = _workspace(session, STAGES)
+    work = _workspace(session)
     verdicts = []
     for stage in STAGES:
         records = read_records(session.run_folder, stage)
@@ -80,18 +80,18 @@ def run(
     recomputes everything. Raises InputError with every problem found, and then has changed nothing.
     """
     stages = _selected(only, until)
-    work = _workspace(session, stages)
+    work = _workspace(session)
     session.run_folder.mkdir(parents=True, exist_ok=True)
     with locked(session.run_folder), Pending() as pending:
         reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
         pending.commit()
-        write_manifest(session, {path: file.data for path, file in work.files.items()})
+        write_manifest(work.session, {path: file.data for path, file in work.files.items()})
     return reports
 
 
 def check(session: Session) -> list[StageReport]:
     """Everything `run` would do, without writing: raises InputError with every problem found."""
-    work = _workspace(session, STAGES)
+    work = _workspace(session)
     return [_compute(stage, work, None, Verdict(stage.name, "missing")) for stage in STAGES]
 
 
@@ -105,8 +105,9 @@ def _selected(only: str | None, until: str | None) -> tuple[Stage, ...]:
     return STAGES if last is None else STAGES[: NAMES.index(last) + 1]
 
 
-def _workspace(session: Session, stages: Iterable[Stage]) -> Workspace:
-    paths = dict.fromkeys(path for stage in stages for path in stage.files(session.settings))
+def _workspace(session: Session) -> Workspace:
+    """Every input file of the session, whichever stages are wanted: they are named and checked together."""
+    paths = dict.fromkeys(path for stage in STAGES for path in stage.files(session.settings))
     files, problems = {}, []
     for path in paths:
         try:
@@ -115,9 +116,29 @@ def _workspace(session: Session, stages: Iterable[Stage]) -> Workspace:
         except (OSError, ValueError) as error:
             problems.append(_unreadable(session, path, error))
     if problems:
-        raise InputError([*problems, *_problems_of_files(stages, session, files)])
+        raise InputError([*problems, *_problems_of_files(STAGES, session, files)])
     digests = {path: bytes_digest(file.data) for path, file in files.items()}
-    return Workspace(session, files, digests)
+    return Workspace(_with_material_names(session, files), files, digests)
+
+
+def _with_material_names(session: Session, files: dict[str, InputFile]) -> Session:
+    """The session with the names of its reference materials, taken from the accepted values where not given.
+
+    `ingest` must recognise reference-material spots, and depends on the names alone: a revised accepted
+    value makes `calibrate` stale, not `ingest`.
+    """
+    from tieline.accepted import material_names
+
+    materials = session.settings.ingest.reference_materials
+    if materials.names or materials.path is None or materials.path not in files:
+        return session
+    try:
+        names = material_names({materials.path: files[materials.path]})
+    except InputError as error:
+        raise InputError([*error.problems, *_problems_of_files(STAGES[:1], session, files)]) from None
+    materials = materials.model_copy(update={"names": names})
+    ingest = session.settings.ingest.model_copy(update={"reference_materials": materials})
+    return replace(session, settings=session.settings.model_copy(update={"ingest": ingest}))
 
 
 def _bring_up_to_date(
@@ -161,7 +182,11 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
         "fingerprint": stage_fingerprint(stage, settings, used),
         "inputs": used,
         "settings": stage.own_settings(settings),
-        "ledger": {"unit": result.ledger.unit, "entered": result.ledger.entered, "outcomes": dict(result.ledger.outcomes)},
+        "ledger": {
+            "unit": result.ledger.unit,
+            "entered": result.ledger.entered,
+            "outcomes": dict(result.ledger.outcomes),
+        },
         "remarks": [{"message": remark.message, "place": remark.place} for remark in result.remarks],
     }
     for name in reversed(stage.outputs):
@@ -186,7 +211,9 @@ def _check_result(stage: Stage, result: StageResult, work: Workspace) -> None:
 
 def _forget(stage: Stage, work: Workspace) -> None:
     """Drops tables from memory that no later stage reads."""
-    later = {name for other in STAGES[NAMES.index(stage.name) + 1 :] for name in (*other.inputs, other.counted)}
+    later = {
+        name for other in STAGES[NAMES.index(stage.name) + 1 :] for name in (*other.inputs, other.counted)
+    }
     for name in [name for name in work.tables if name not in later]:
         del work.tables[name]
 
@@ -195,7 +222,9 @@ def _recorded_digests(records: dict[str, dict[str, Any] | None]) -> dict[str, st
     return {table: record["content"] for table, record in records.items() if record is not None}
 
 
-def _problems_of_files(stages: Iterable[Stage], session: Session, files: dict[str, InputFile]) -> list[Problem]:
+def _problems_of_files(
+    stages: Iterable[Stage], session: Session, files: dict[str, InputFile]
+) -> list[Problem]:
     """Problems of the small files that later stages read, so that they are all told at once."""
     problems: list[Problem] = []
     for stage in stages:
@@ -211,7 +240,11 @@ def _unreadable(session: Session, path: str, error: Exception) -> Problem:
     from tieline.errors import nearest
 
     target = session.resolve(path)
-    reason = "no such file" if not target.exists() else f"cannot be read ({getattr(error, 'strerror', None) or error})"
+    reason = (
+        "no such file"
+        if not target.exists()
+        else f"cannot be read ({getattr(error, 'strerror', None) or error})"
+    )
     others = [other.name for other in target.parent.iterdir()] if target.parent.is_dir() else []
     remedy = nearest(target.name, others) or f"The path is relative to {session.path}."
     return Problem(f"{reason}.", path, remedy=remedy)

@@ -35,7 +35,11 @@ def write_atomically(path: Path, write: Callable[[BinaryIO], None]) -> None:
 
 def write_text(path: Path, text: str) -> None:
     """A UTF-8 text file with `\\n` line ends, whole or not at all."""
-    write_atomically(path, lambda stream: stream.write(text.encode()) and None)
+
+    def write(stream: BinaryIO) -> None:
+        stream.write(text.encode())
+
+    write_atomically(path, write)
 
 
 class Pending:
@@ -78,7 +82,12 @@ def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[s
     table = table.replace_schema_metadata({METADATA_KEY: text.encode()})
     labels = [field.name for field in table.schema if pa.types.is_dictionary(field.type)]
     pq.write_table(
-        table, stream, compression="zstd", compression_level=1, use_dictionary=labels, write_page_checksum=True
+        table,
+        stream,
+        compression="zstd",
+        compression_level=1,
+        use_dictionary=labels,
+        write_page_checksum=True,
     )
 
 

@@ -82,8 +82,12 @@ def check(table: pa.Table, spec: TableSpec) -> None:
     found = [(field.name, field.type) for field in table.schema]
     declared = [(column.name, ARROW_TYPES[column.kind]) for column in spec.columns]
     if found != declared:
-        wrong = [pair for pair in found if pair not in declared] or [pair for pair in declared if pair not in found]
-        raise DefectError(f"{spec.name}: columns differ from the declaration, first at {wrong[:1] or found[:1]}")
+        wrong = [pair for pair in found if pair not in declared] or [
+            pair for pair in declared if pair not in found
+        ]
+        raise DefectError(
+            f"{spec.name}: columns differ from the declaration, first at {wrong[:1] or found[:1]}"
+        )
     for column in spec.columns:
         if not column.nullable and table.column(column.name).null_count:
             raise DefectError(f"{spec.name}.{column.name}: null where a value is declared")

@@ -107,7 +107,11 @@ def check_as_json(reports: Sequence[StageReport]) -> dict[str, Any]:
 def run_as_json(session: Session, reports: Sequence[StageReport]) -> dict[str, Any]:
     """The run's account and, where it got that far, the rows of `classify`."""
     path = table_path(session.run_folder, "classify")
-    rows = read_table(path, "classify").to_pylist() if reports[-1].verdict.stage in ("classify", "assess") else []
+    rows = (
+        read_table(path, "classify").to_pylist()
+        if reports[-1].verdict.stage in ("classify", "assess")
+        else []
+    )
     return {
         "session": session.settings.session,
         "run_folder": str(session.run_folder),

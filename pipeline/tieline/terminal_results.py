@@ -9,7 +9,7 @@ import pyarrow as pa
 from rich.table import Table
 from rich.text import Text
 
-from tieline.notation import short_D
+from tieline.notation import written
 
 # Class marks are readable without colour; the colours only repeat them.
 CLASS_STYLES = {
@@ -19,7 +19,10 @@ CLASS_STYLES = {
     "unresolved": ("?", "dim"),
 }
 CELL_WIDTH = 13
-LEGEND = "c compatible  i incompatible  h highly incompatible  ? unresolved;  x(y): y is the standard uncertainty in the last digits;  < > limits"
+LEGEND = (
+    "c compatible  i incompatible  h highly incompatible  ? unresolved;  "
+    "x(y): y is the standard uncertainty in the last digits;  < > limits"
+)
 
 
 def partition_tables(classify: pa.Table, width: int) -> Iterator[Table | Text]:
@@ -38,7 +41,9 @@ def partition_tables(classify: pa.Table, width: int) -> Iterator[Table | Text]:
 
 
 def _block(title: str, rows: list[dict[str, Any]], experiments: list[str]) -> Table:
-    table = Table(title=title, title_justify="left", title_style="bold", box=None, pad_edge=False, padding=(0, 1, 0, 0))
+    table = Table(
+        title=title, title_justify="left", title_style="bold", box=None, pad_edge=False, padding=(0, 1, 0, 0)
+    )
     table.add_column("")
     for experiment in experiments:
         table.add_column(experiment, justify="right", no_wrap=True)
@@ -52,4 +57,4 @@ def _cell(row: dict[str, Any] | None) -> Text:
     if row is None:
         return Text("")
     mark, style = CLASS_STYLES[row["class"]]
-    return Text(f"{short_D(row)} {mark}", style=style)
+    return Text(f"{written(row)} {mark}", style=style)

@@ -23,7 +23,9 @@ def copy_demo(folder: Path) -> Path:
     """
     source, target = demo_folder(), folder / "configs"
     if target.exists() and not (target / CONFIGURATION).exists():
-        raise InputError(Problem("exists and holds something else.", str(target), remedy="Name another folder."))
+        raise InputError(
+            Problem("exists and holds something else.", str(target), remedy="Name another folder.")
+        )
     target.mkdir(parents=True, exist_ok=True)
     shutil.copyfile(source / CONFIGURATION, target / CONFIGURATION)
     shutil.copytree(source / "ember", target / "ember", dirs_exist_ok=True)

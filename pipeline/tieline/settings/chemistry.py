@@ -26,10 +26,12 @@ class InternalStandard(Settings):
         default_factory=dict, description="phase -> value assumed when the table was made; * for all others"
     )
     assumed_from: Literal["settings", "table"] = Field(
-        "settings", description="take the assumed value from `assumed`, or from the technique's own column of the element"
+        "settings",
+        description="take the assumed value from `assumed`, or from the technique's own column of the element",
     )
     actual: Literal["probe-mean"] | dict[str, Actual] = Field(
-        "probe-mean", description="probe-mean: robust mean of the phase's spots by another technique; or phase -> value, sd"
+        "probe-mean",
+        description="probe-mean: robust mean of the phase's spots by another technique; or phase -> value, sd",
     )
     source_technique: str = Field("EPMA", description="technique whose mean is the actual value")
     missing: Literal["stop", "as-assumed"] = Field(
@@ -40,7 +42,9 @@ class InternalStandard(Settings):
 class ConvertSettings(Settings):
     """Section [convert]."""
 
-    internal_standard: tuple[InternalStandard, ...] = Field((), description="internal standards, one per technique")
+    internal_standard: tuple[InternalStandard, ...] = Field(
+        (), description="internal standards, one per technique"
+    )
     normalise: dict[str, float] = Field(
         default_factory=dict,
         description="technique -> total in wt% to which the oxide sum of every spot is normalised; off by default",
@@ -50,7 +54,9 @@ class ConvertSettings(Settings):
 class Limits(Settings):
     """A laboratory's own limit on the bias of a reference material."""
 
-    relative: float = Field(0.10, gt=0, description="largest |measured/accepted - 1|; common practice 0.05 to 0.10")
+    relative: float = Field(
+        0.10, gt=0, description="largest |measured/accepted - 1|; common practice 0.05 to 0.10"
+    )
     sigmas: float = Field(2.0, gt=0, description="or fewer standard uncertainties than this away from 1")
 
 
@@ -58,14 +64,19 @@ class CalibrateSettings(Settings):
     """Section [calibrate]."""
 
     correct: Literal[False, "bias", "bias+drift"] = Field(
-        False, description="divide by the measured bias, and remove a supported drift; by default only carry its uncertainty"
+        False,
+        description="divide by the measured bias, and remove a supported drift; by default only carry its uncertainty",
     )
     relative_sd: dict[str, float] = Field(
-        default_factory=dict, description="technique -> relative calibration uncertainty where no reference material tells"
+        default_factory=dict,
+        description="technique -> relative calibration uncertainty where no reference material tells",
     )
     matrix_sd: dict[str, float] = Field(
-        default_factory=dict, description="technique -> relative uncertainty not shared between phases; never cancels"
+        default_factory=dict,
+        description="technique -> relative uncertainty not shared between phases; never cancels",
     )
     tolerance: Limits = Field(Limits(), description="when a reference material passes")
-    drift_p: float = Field(0.01, gt=0, lt=1, description="p-value below which a linear drift is taken as supported")
+    drift_p: float = Field(
+        0.01, gt=0, lt=1, description="p-value below which a linear drift is taken as supported"
+    )
     min_spots_for_drift: int = Field(6, ge=4, description="reference spots needed to test for drift")

@@ -19,10 +19,13 @@ class PairSettings(Settings):
         "random-effects", description="estimator of the phase mean"
     )
     average: Literal["spots", "grains"] = Field(
-        "spots", description="average over spots, or over grain means where spots of a grain are not independent"
+        "spots",
+        description="average over spots, or over grain means where spots of a grain are not independent",
     )
     difference_sigmas: float = Field(
-        3.0, gt=0, description="two techniques differ when their means do by more than this many standard uncertainties"
+        3.0,
+        gt=0,
+        description="two techniques differ when their means do by more than this many standard uncertainties",
     )
 
 
@@ -31,7 +34,9 @@ class PartitionSettings(Settings):
 
     confidence: float = Field(0.95, gt=0.5, lt=1, description="confidence level of intervals and limits")
     interval: Literal["fieller", "gum-s1"] = Field("fieller", description="how intervals are made")
-    prefer: tuple[str, ...] = Field((), description="techniques in order of preference where several measured an element")
+    prefer: tuple[str, ...] = Field(
+        (), description="techniques in order of preference where several measured an element"
+    )
     sigma_from_limit: float = Field(
         3.0, gt=0, description="where a value's sigma is not given, its limit divided by this stands for it"
     )
