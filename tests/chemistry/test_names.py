@@ -91,7 +91,7 @@ def test_limits(header: str, label: str, unit: str | None, level: int | None) ->
 @pytest.mark.parametrize(
     ("header", "name", "role"),
     [("Total", "Total", "total"), ("TOTAL", "Total", "total"), ("Oxide total", "Total", "total"),
-     ("Sum (wt%)", "Total", "total"), ("Mg#", "Mg#", "ratio"), ("Fe/Mg", "Fe/Mg", "ratio"),
+     ("Sum (wt%)", "Total", "total"), ("Mg#", "Mg#", "ratio"), ("Mg# 1s", "Mg#", "sigma"), ("Fe/Mg", "Fe/Mg", "ratio"),
      ("87Sr/86Sr", "87Sr/86Sr", "ratio"), ("O=F", "O=F", "correction"), ("-O=F,Cl", "O=F,Cl", "correction"),
      ("Ni cps", "Ni", "intensity"), ("Si net counts", "Si", "intensity"), ("K-ratio Mg", "Mg", "intensity"),
      ("Mg apfu", "Mg", "cations"), ("Si cations", "Si", "cations")],

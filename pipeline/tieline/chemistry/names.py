@@ -121,9 +121,11 @@ def recognise_analyte(header: str) -> Analyte | None:
     if not rest:
         return _total_column(words)
     if _MAGNESIUM_NUMBER.fullmatch(rest):
-        return Analyte("Mg#", "other", role="ratio")
+        return _ratio("Mg#", words)
     if "/" in rest:
-        return _ratio(rest, words)
+        parts = [part.strip() for part in rest.split("/")]
+        both_known = len(parts) == 2 and all(_read_core(part, has_unit=False) for part in parts)
+        return _ratio("/".join(parts), words) if both_known else None
     core = _read_core(rest, has_unit=words.unit is not None)
     if core is None or (words.total and core.name not in _TOTAL_MEANS_ALL_FORMS):
         return None
@@ -178,18 +180,10 @@ def _total_column(words: HeaderWords) -> Analyte | None:
     return Analyte("Total", "other", unit=words.unit, role="total")
 
 
-def _ratio(rest: str, words: HeaderWords) -> Analyte | None:
-    parts = [part.strip() for part in rest.split("/")]
-    if len(parts) != 2 or any(_read_core(part, has_unit=False) is None for part in parts):
-        return None
+def _ratio(name: str, words: HeaderWords) -> Analyte:
     role: Role = "ratio" if words.role == "value" else words.role
     return Analyte(
-        "/".join(parts),
-        "other",
-        role=role,
-        level=words.level,
-        relative=words.relative,
-        statistic=words.statistic,
+        name, "other", role=role, level=words.level, relative=words.relative, statistic=words.statistic
     )
 
 
