@@ -33,14 +33,26 @@ def ingest_tables(spots: Sequence[Mapping[str, Any]]) -> tuple[pa.Table, pa.Tabl
     rows = [row for number, one in enumerate(spots, start=2) for row in _rows(one, number)]
     long = build(INGEST, {name: [row[name] for row in rows] for name in INGEST.names()})
     keys = [column.name for column in SPOT_KEYS]
-    heads = [{**one, "row": number, "sequence": number - 1, "comment": None} for number, one in enumerate(spots, start=2)]
-    return long, build(INGEST_SPOTS, {name: [head[name] for head in heads] for name in (*keys, "sequence", "comment")})
+    heads = [
+        {**one, "row": number, "sequence": number - 1, "comment": None}
+        for number, one in enumerate(spots, start=2)
+    ]
+    return long, build(
+        INGEST_SPOTS, {name: [head[name] for head in heads] for name in (*keys, "sequence", "comment")}
+    )
 
 
 def _rows(one: Mapping[str, Any], number: int) -> Iterable[dict[str, Any]]:
     keys = {name: one[name] for name in (column.name for column in SPOT_KEYS) if name != "row"}
     for analyte, cell in one["values"].items():
-        yield {**keys, "row": number, "analyte": analyte, "raw": str(cell), "unit": one["unit"], **_cell(cell)}
+        yield {
+            **keys,
+            "row": number,
+            "analyte": analyte,
+            "raw": str(cell),
+            "unit": one["unit"],
+            **_cell(cell),
+        }
 
 
 def _cell(cell: Any) -> dict[str, Any]:

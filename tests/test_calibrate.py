@@ -28,7 +28,9 @@ def unknowns() -> list[dict]:
 def calibrated(spots: list[dict], accepted: str | None = ACCEPTED, **settings):
     ingest, heads = ingest_tables(spots)
     table = convert(ingest, settings=ConvertSettings()).tables["convert"]
-    files = {} if accepted is None else {"accepted.csv": InputFile.from_bytes("accepted.csv", accepted.encode())}
+    files = (
+        {} if accepted is None else {"accepted.csv": InputFile.from_bytes("accepted.csv", accepted.encode())}
+    )
     result = calibrate(table, heads, files=files, settings=CalibrateSettings(**settings))
     result.ledger.check("calibrate")
     rows = result.tables["calibrate"].to_pylist()
@@ -68,7 +70,9 @@ def test_configured_value_where_no_reference_tells_and_unknown_otherwise():
 def test_two_materials_agree_in_the_mean():
     # 0.0254 wt% NiO is 199.6 ppm Ni.
     accepted = 254 * 58.6934 / 74.6924
-    rows, _ = calibrated([*reference([102.0, 102.5, 101.5]), *reference([accepted * 1.02] * 3, "REF-B"), *unknowns()])
+    rows, _ = calibrated(
+        [*reference([102.0, 102.5, 101.5]), *reference([accepted * 1.02] * 3, "REF-B"), *unknowns()]
+    )
     assert rows["Ni"]["n_materials"] == 2
     assert rows["Ni"]["bias"] == pytest.approx(1.02, rel=1e-3)
 
@@ -102,4 +106,8 @@ def test_every_problem_of_the_accepted_values_at_once():
     bad = "material,analyte,value,unit,sd,source\nREF-A,Xx,100,ppm,1,v\nREF-A,Ni,-5,ppm,1,v\nREF-A,Ni,5,furlong,1,v\n"
     with pytest.raises(InputError) as caught:
         calibrated(unknowns(), accepted=bad)
-    assert [(problem.row, problem.column) for problem in caught.value.problems] == [(2, "analyte"), (3, "value"), (4, "unit")]
+    assert [(problem.row, problem.column) for problem in caught.value.problems] == [
+        (2, "analyte"),
+        (3, "value"),
+        (4, "unit"),
+    ]

@@ -26,7 +26,9 @@ def converted(spots: list[dict], settings: ConvertSettings | None = None) -> pa.
 def test_oxide_element_and_isotope_units():
     # Mass fractions by arithmetic from standard atomic weights (Prohaska et al. 2022).
     oxide = {"MgO": (10.0, 0.1, 0.02), "FeOT": 8.0}
-    table = converted([spot("a", oxide), spot("b", {"Ni60": (100.0, 2.0)}, unit="ppm"), spot("c", {"Rb": 5.0}, unit="ppb")])
+    table = converted(
+        [spot("a", oxide), spot("b", {"Ni60": (100.0, 2.0)}, unit="ppm"), spot("c", {"Rb": 5.0}, unit="ppb")]
+    )
     values, sigmas, limits = ppm(table), ppm(table, "sigma_ppm"), ppm(table, "limit_ppm")
     magnesium = 24.305 / (24.305 + 15.999)
     assert values["a", "MgO"] == pytest.approx(1e5 * magnesium, rel=1e-12)
@@ -41,11 +43,15 @@ def test_oxide_element_and_isotope_units():
 def test_limit_only_stays_a_limit():
     table = converted([spot("a", {"Cr2O3": "<0.03"})])
     assert ppm(table)["a", "Cr2O3"] is None
-    assert ppm(table, "limit_ppm")["a", "Cr2O3"] == pytest.approx(300 * 2 * 51.9961 / (2 * 51.9961 + 3 * 15.999), rel=1e-6)
+    assert ppm(table, "limit_ppm")["a", "Cr2O3"] == pytest.approx(
+        300 * 2 * 51.9961 / (2 * 51.9961 + 3 * 15.999), rel=1e-6
+    )
 
 
 def test_ferrous_and_ferric_iron_add_up_to_the_iron_of_the_spot():
-    table = converted([spot("a", {"FeO": (5.0, 0.3), "Fe2O3": (2.0, 0.4)}), spot("b", {"FeO": 4.0, "Fe2O3": 1.0})])
+    table = converted(
+        [spot("a", {"FeO": (5.0, 0.3), "Fe2O3": (2.0, 0.4)}), spot("b", {"FeO": 4.0, "Fe2O3": 1.0})]
+    )
     ferrous, ferric = 55.845 / 71.844, 2 * 55.845 / (2 * 55.845 + 3 * 15.999)
     assert ppm(table)["a", "FeO"] == pytest.approx(1e4 * (5 * ferrous + 2 * ferric), rel=1e-9)
     assert ppm(table)["a", "Fe2O3"] is None
@@ -78,8 +84,20 @@ def laser_session(assumed: dict[str, float], true: dict[str, float]) -> list[dic
         for number in range(4):
             value = concentration * (1 + 0.01 * number) * assumed[phase] / true[phase]
             keys = {"technique": "laser", "batch": "laser-1", "unit": "ppm", "phase": phase}
-            spots.append(spot(f"L{phase}{number}", {"La": (value, 0.02 * value), "Sr88": (7 * value, 0.1 * value)}, **keys))
-            spots.append(spot(f"P{phase}{number}", {"CaO": (true[phase] * (1 + 0.002 * (number - 1.5)), 0.1)}, phase=phase))
+            spots.append(
+                spot(
+                    f"L{phase}{number}",
+                    {"La": (value, 0.02 * value), "Sr88": (7 * value, 0.1 * value)},
+                    **keys,
+                )
+            )
+            spots.append(
+                spot(
+                    f"P{phase}{number}",
+                    {"CaO": (true[phase] * (1 + 0.002 * (number - 1.5)), 0.1)},
+                    phase=phase,
+                )
+            )
     return spots
 
 
@@ -90,10 +108,12 @@ STANDARD = {"technique": "laser", "element": "CaO"}
 def test_rescaling_undoes_wrong_internal_standards_exactly():
     wrong = {"clinopyroxene": 22.0, "glass": 9.0}
     right = converted(
-        laser_session(TRUE, TRUE), ConvertSettings(internal_standard=(InternalStandard(**STANDARD, assumed=TRUE),))
+        laser_session(TRUE, TRUE),
+        ConvertSettings(internal_standard=(InternalStandard(**STANDARD, assumed=TRUE),)),
     )
     mended = converted(
-        laser_session(wrong, TRUE), ConvertSettings(internal_standard=(InternalStandard(**STANDARD, assumed=wrong),))
+        laser_session(wrong, TRUE),
+        ConvertSettings(internal_standard=(InternalStandard(**STANDARD, assumed=wrong),)),
     )
     for column in ("value_ppm", "sigma_ppm"):
         for key, value in ppm(right, column).items():
@@ -107,13 +127,20 @@ def test_rescaling_undoes_wrong_internal_standards_exactly():
 def test_given_internal_standard_with_its_uncertainty():
     actual = {phase: Actual(value=value, sd=0.05 * value) for phase, value in TRUE.items()}
     standard = InternalStandard(**STANDARD, assumed={"*": 10.0}, actual=actual)
-    table = converted(laser_session({"clinopyroxene": 10.0, "glass": 10.0}, TRUE), ConvertSettings(internal_standard=(standard,)))
+    table = converted(
+        laser_session({"clinopyroxene": 10.0, "glass": 10.0}, TRUE),
+        ConvertSettings(internal_standard=(standard,)),
+    )
     assert ppm(table)["Lglass0", "La"] == pytest.approx(20.0, rel=1e-12)
     assert ppm(table, "internal_standard_sd")["Lglass0", "La"] == pytest.approx(0.05)
 
 
 def test_missing_actual_value_stops_or_is_said():
-    spots = [one for one in laser_session(TRUE, TRUE) if one["spot"] != "x" and not one["spot"].startswith("Pglass")]
+    spots = [
+        one
+        for one in laser_session(TRUE, TRUE)
+        if one["spot"] != "x" and not one["spot"].startswith("Pglass")
+    ]
     with pytest.raises(InputError, match="glass of X1: no actual CaO"):
         converted(spots, ConvertSettings(internal_standard=(InternalStandard(**STANDARD, assumed=TRUE),)))
     lenient = InternalStandard(**STANDARD, assumed={**TRUE, "glass": 5.0}, missing="as-assumed")
@@ -125,13 +152,22 @@ def test_missing_actual_value_stops_or_is_said():
 
 def test_missing_assumed_value_names_every_phase():
     with pytest.raises(InputError) as caught:
-        converted(laser_session(TRUE, TRUE), ConvertSettings(internal_standard=(InternalStandard(**STANDARD),)))
+        converted(
+            laser_session(TRUE, TRUE), ConvertSettings(internal_standard=(InternalStandard(**STANDARD),))
+        )
     assert len(caught.value.problems) == 2
 
 
 def test_reference_materials_are_not_rescaled():
     spots = laser_session(TRUE, TRUE)
-    keys = {"technique": "laser", "batch": "laser-1", "unit": "ppm", "phase": "REF", "experiment": None, "material": "REF"}
+    keys = {
+        "technique": "laser",
+        "batch": "laser-1",
+        "unit": "ppm",
+        "phase": "REF",
+        "experiment": None,
+        "material": "REF",
+    }
     spots.append(spot("ref", {"La": 33.0}, **keys))
     standard = InternalStandard(**STANDARD, assumed={"clinopyroxene": 10.0, "glass": 10.0})
     table = converted(spots, ConvertSettings(internal_standard=(standard,)))

@@ -25,7 +25,16 @@ def sides(draw: st.DrawFn) -> tuple[Side, Side]:
 
     def side() -> Side:
         mean = numbers(st.floats(1e-4, 1e5))
-        return Side(mean, numbers(relative), numbers(relative), np.zeros(n), keys(), numbers(relative), np.zeros(n), keys())
+        return Side(
+            mean,
+            numbers(relative),
+            numbers(relative),
+            np.zeros(n),
+            keys(),
+            numbers(relative),
+            np.zeros(n),
+            keys(),
+        )
 
     alpha, beta = side(), side()
     # One variable has one uncertainty, whatever the side that uses it.
@@ -69,11 +78,22 @@ def test_shares_sum_to_one(pair: tuple[Side, Side]):
     assert np.all(np.isnan(total) == (budget.D_sd == 0))
 
 
-def one(mean: float, *, counting=0.0, spread=0.0, calibration=0.0, batch=0, matrix=0.0, standard=0.0, key=-1) -> Side:
+def one(
+    mean: float, *, counting=0.0, spread=0.0, calibration=0.0, batch=0, matrix=0.0, standard=0.0, key=-1
+) -> Side:
     def of(x: float) -> np.ndarray:
         return np.array([x], dtype=float)
 
-    return Side(of(mean), of(counting), of(spread), of(calibration), np.array([batch]), of(matrix), of(standard), np.array([key]))
+    return Side(
+        of(mean),
+        of(counting),
+        of(spread),
+        of(calibration),
+        np.array([batch]),
+        of(matrix),
+        of(standard),
+        np.array([key]),
+    )
 
 
 def monte_carlo_sd(alpha: Side, beta: Side, n: int = 400_000) -> tuple[float, dict[str, float]]:
@@ -109,7 +129,16 @@ def monte_carlo_sd(alpha: Side, beta: Side, n: int = 400_000) -> tuple[float, di
 
 @pytest.mark.parametrize("batches", [(0, 0), (0, 1)])
 def test_budget_against_monte_carlo(batches: tuple[int, int]):
-    alpha = one(2.0, counting=0.02, spread=0.03, calibration=0.03, batch=batches[0], matrix=0.01, standard=0.015, key=4)
+    alpha = one(
+        2.0,
+        counting=0.02,
+        spread=0.03,
+        calibration=0.03,
+        batch=batches[0],
+        matrix=0.01,
+        standard=0.015,
+        key=4,
+    )
     beta = one(40.0, counting=0.01, spread=0.015, calibration=0.03, batch=batches[1], standard=0.02, key=5)
     budget = by_package(alpha, beta)
     sd, shares = monte_carlo_sd(alpha, beta)

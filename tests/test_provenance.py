@@ -16,7 +16,9 @@ cells = st.lists(st.one_of(st.none(), st.text(max_size=3)), max_size=8)
 
 
 def label_table(texts: list[str | None]) -> pa.Table:
-    return pa.table({"label": pa.array(texts, pa.string()).dictionary_encode(), "text": pa.array(texts, pa.string())})
+    return pa.table(
+        {"label": pa.array(texts, pa.string()).dictionary_encode(), "text": pa.array(texts, pa.string())}
+    )
 
 
 @given(cells)
@@ -25,10 +27,15 @@ def test_digest_does_not_depend_on_chunks_or_dictionaries(texts: list[str | None
     table = label_table(texts)
     halves = pa.concat_tables([label_table(texts[:3]), label_table(texts[3:])])
     assert content_digest(halves) == content_digest(table)
-    assert content_digest(pa.concat_tables([label_table(["unused"]), table]).slice(1)) == content_digest(table)
+    assert content_digest(pa.concat_tables([label_table(["unused"]), table]).slice(1)) == content_digest(
+        table
+    )
 
 
-@given(st.lists(st.one_of(st.none(), st.floats(allow_nan=False)), max_size=8), st.lists(st.booleans(), max_size=8))
+@given(
+    st.lists(st.one_of(st.none(), st.floats(allow_nan=False)), max_size=8),
+    st.lists(st.booleans(), max_size=8),
+)
 @settings(deadline=None)
 def test_digest_survives_the_round_trip_through_parquet(numbers: list[float | None], flags: list[bool]):
     n = min(len(numbers), len(flags))
@@ -51,7 +58,9 @@ def test_digest_survives_the_round_trip_through_parquet(numbers: list[float | No
 )
 def test_digest_sees_every_difference(other: dict[str, list[float | None]]):
     table = pa.table({"x": pa.array([1.0, None, 2.0])})
-    assert content_digest(table) != content_digest(pa.table({name: pa.array(x, pa.float64()) for name, x in other.items()}))
+    assert content_digest(table) != content_digest(
+        pa.table({name: pa.array(x, pa.float64()) for name, x in other.items()})
+    )
 
 
 def test_digest_tells_texts_apart_that_join_to_the_same():

@@ -14,13 +14,27 @@ ROOT = Path(__file__).resolve().parents[1]
 
 def call(*command: str | Path, cwd: Path) -> str:
     """The command's standard output; its failure is ours."""
-    return subprocess.run([str(part) for part in command], cwd=cwd, check=True, stdout=subprocess.PIPE, text=True).stdout
+    return subprocess.run(
+        [str(part) for part in command], cwd=cwd, check=True, stdout=subprocess.PIPE, text=True
+    ).stdout
 
 
 def main() -> None:
     with tempfile.TemporaryDirectory() as name:
         folder = Path(name)
-        call(sys.executable, "-m", "pip", "wheel", "-q", "--no-deps", "--no-build-isolation", "-w", folder, ROOT, cwd=folder)
+        call(
+            sys.executable,
+            "-m",
+            "pip",
+            "wheel",
+            "-q",
+            "--no-deps",
+            "--no-build-isolation",
+            "-w",
+            folder,
+            ROOT,
+            cwd=folder,
+        )
         venv.create(folder / "env", with_pip=True)
         python = folder / "env" / ("Scripts" if sys.platform == "win32" else "bin") / "python"
         pip = (python, "-m", "pip", "--disable-pip-version-check", "install", "-q")

@@ -89,7 +89,7 @@ def technique_differences(
     for code in np.flatnonzero(size > 1):
         members = order[start[code] : start[code] + size[code]]
         members = members[np.isfinite(mean[members]) & (mean[members] > 0)]
-        first += [members[0]] * (len(members) - 1)
+        first += [member for member in members[:1] for _ in members[1:]]
         second += list(members[1:])
     one, two = np.array(first, dtype=np.int64), np.array(second, dtype=np.int64)
     shared = _relative_calibration(pair, calibrate)

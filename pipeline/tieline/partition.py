@@ -253,9 +253,12 @@ def _covariance(table: pa.Table, alpha: Side, rows: IntArray, beta: Side) -> pa.
 
 
 def _pair_codes(table: pa.Table) -> IntArray:
-    from tieline.arrays import group_rows
-
-    return group_rows([labels(table, name) for name in ("experiment", "alpha", "beta")]).code
+    """A number per pair in the order of the rows, where the rows of a pair stand together."""
+    columns = [labels(table, name).codes for name in ("experiment", "alpha", "beta")]
+    new = np.zeros(table.num_rows, dtype=np.int64)
+    for codes in columns:
+        new[1:] |= codes[1:] != codes[:-1]
+    return np.cumsum(new)
 
 
 def _pairs_within(code: IntArray) -> tuple[IntArray, IntArray]:
