@@ -22,13 +22,13 @@ import numpy.typing as npt
 from tieline.statistics.groups import BoolArray, FloatArray, IntArray
 from tieline.statistics.overlap_covariance import fit_directions, leverages
 from tieline.statistics.overlap_fit import OverlapFit, fit_group_block, mixing_directions, own_variances
-from tieline.statistics.overlap_level import clean_level
+from tieline.statistics.overlap_level import clean_level, clean_level_without
 
 ORACLE_FACTOR = 4.735
 """Standard deviations between 95 % recall and one false alarm in 1,000: 1.645 + 3.090."""
 
 _FEWEST_SPOTS = 3
-_CELLS_AT_ONCE = 150_000
+_CELLS_AT_ONCE = 300_000
 
 
 @dataclass(frozen=True)
@@ -216,10 +216,11 @@ def _final_scores(
     fit = fit_directions(deviations, inverse, directions, prior)
     coordinate = np.where(state.scored, fit.amplitudes[..., 0], np.nan)
     variance = np.where(state.scored, fit.variances[..., 0], np.nan)
-    takes_part = state.scored & ~state.odd
+    takes_part = state.scored & ~state.odd & np.isfinite(coordinate)
     located = clean_level(coordinate, variance, takes_part)
-    fraction = coordinate - located.mean_without
-    sd_fraction = np.sqrt(variance + located.variance_without)
+    without = clean_level_without(coordinate, variance, takes_part)
+    fraction = coordinate - without.mean
+    sd_fraction = np.sqrt(variance + without.variance)
     z = fraction / sd_fraction
 
     contrast = directions[..., 0]

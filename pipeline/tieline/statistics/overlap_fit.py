@@ -14,7 +14,7 @@ from tieline.statistics.overlap_covariance import (
 )
 from tieline.statistics.overlap_level import clean_level
 
-_ROUNDS = 6
+_ROUNDS = 5
 _FEWEST_SPOTS = 3
 
 
@@ -117,7 +117,8 @@ def _update(state: OverlapFit, directions: FloatArray, prior: FloatArray) -> Non
     deviations = np.where(state.measured, state.x - state.level[:, None, :], 0.0)
     fit = fit_directions(deviations, inverse, directions, prior)
     coordinate = np.where(state.scored, fit.amplitudes[..., 0], np.nan)
-    located = clean_level(coordinate, fit.variances[..., 0], state.scored & ~state.odd)
+    usable = state.scored & ~state.odd & np.isfinite(coordinate)
+    located = clean_level(coordinate, fit.variances[..., 0], usable)
     fraction = np.nan_to_num(coordinate - located.mean[:, None])
     contrast = directions[..., 0]
 

@@ -17,13 +17,10 @@ _GRID = np.arange(-6.0, 6.01, 0.25)  # in sd of one spot about the most probable
 
 
 class CleanLevel(NamedTuple):
-    """Posterior of the clean level: mean and variance (G,), and without each spot in turn (G, n)."""
+    """Posterior mean and variance of the clean level: of the group (G,), or without each spot in turn (G, n)."""
 
     mean: FloatArray
     variance: FloatArray
-    mean_without: FloatArray
-    variance_without: FloatArray
-    probability_clean: FloatArray
 
 
 @cache
@@ -68,46 +65,47 @@ def _log_density(u: FloatArray, row: npt.NDArray[np.intp]) -> FloatArray:
 def clean_level(coordinate: FloatArray, variance: FloatArray, usable: BoolArray) -> CleanLevel:
     """Posterior of the clean level t0 from the coordinates of all spots, any number of them contaminated.
 
-    p(t0) ∝ Π_s [½ clean(t_s − t0) + ½ contaminated(t_s − t0)], flat in t0. Contamination only raises t,
-    over an unknown order of magnitude; with less than that assumed, a level below which nothing lies is not
-    identified. Own method.
+    p(t0) ∝ Π_s [½ clean(t_s − t0) + ½ contaminated(t_s − t0)], flat in t0. Contamination only raises t, over an
+    unknown order of magnitude; with less than that assumed, a level below which nothing lies is not identified.
+    Own method.
 
-    Parameters: coordinate and its variance (G, n); usable (G, n) marks spots that take part. Returns NaN
-    for groups without a usable spot; "without" results are NaN where no other usable spot is left.
-    Evaluated on a grid of ± 6 sd about the best of the spots' own coordinates.
+    Parameters: coordinate and its variance (G, n); usable (G, n) marks spots that take part. Returns NaN for
+    groups without a usable spot. Evaluated on a grid of ± 6 sd about the best of the spots' own coordinates.
     """
-    usable = usable & np.isfinite(coordinate) & (variance > 0)
+    grid, by_spot = _log_likelihood(coordinate, variance, usable)
+    mean, spread = _moments(grid, by_spot.sum(axis=2))
+    empty = ~usable.any(axis=1)
+    return CleanLevel(np.where(empty, np.nan, mean), np.where(empty, np.nan, spread))
+
+
+def clean_level_without(coordinate: FloatArray, variance: FloatArray, usable: BoolArray) -> CleanLevel:
+    """The same (G, n) from all usable spots but one; NaN where no other usable spot is left."""
+    grid, by_spot = _log_likelihood(coordinate, variance, usable)
+    without = np.swapaxes(by_spot.sum(axis=2, keepdims=True) - by_spot, 1, 2)
+    mean, spread = _moments(grid[:, None, :], without)
+    lonely = usable.sum(axis=1, keepdims=True) - usable == 0
+    return CleanLevel(np.where(lonely, np.nan, mean), np.where(lonely, np.nan, spread))
+
+
+def _log_likelihood(
+    coordinate: FloatArray, variance: FloatArray, usable: BoolArray
+) -> tuple[FloatArray, FloatArray]:
+    """Grid of levels (G, k), and every spot's log density there (G, k, n), 0 for a spot that is not usable."""
     t = np.where(usable, coordinate, 0.0)
     sd = np.where(usable, np.sqrt(np.where(usable, variance, 1.0)), 1.0)
     count = usable.sum(axis=1)
-    typical = np.where(count > 0, np.sum(np.where(usable, sd, 0.0), axis=1) / np.maximum(count, 1), 1.0)
+    typical = np.where(count > 0, np.sum(sd, axis=1, where=usable) / np.maximum(count, 1), 1.0)
     scales = np.floor(np.log(_LARGEST_FRACTION / typical) / np.log(_SCALE_STEP)).astype(np.intp)
     row = np.clip(scales, 0, _MOST_SCALES - 1)[:, None, None]
 
-    at_spots = np.where(
-        usable[:, None, :], _log_density((t[:, None, :] - t[:, :, None]) / sd[:, None, :], row), 0.0
-    )
-    merit = np.where(usable, at_spots.sum(axis=2), -np.inf)
+    def of_levels(levels: FloatArray) -> FloatArray:
+        density = _log_density((t[:, None, :] - levels[:, :, None]) / sd[:, None, :], row)
+        return np.where(usable[:, None, :], density, 0.0)
+
+    merit = np.where(usable, of_levels(t).sum(axis=2), -np.inf)
     best = np.take_along_axis(t, np.argmax(merit, axis=1)[:, None], axis=1)
     grid = best + _GRID * typical[:, None]
-    by_spot = np.where(
-        usable[:, None, :], _log_density((t[:, None, :] - grid[:, :, None]) / sd[:, None, :], row), 0.0
-    )
-    total = by_spot.sum(axis=2)
-    mean, spread = _moments(grid, total)
-    without = np.swapaxes(total[:, :, None] - by_spot, 1, 2)
-    mean_without, spread_without = _moments(grid[:, None, :], without)
-    u = (t - mean[:, None]) / sd
-    probability = 0.5 * _clean_density(u) / np.exp(_log_density(u, row[:, :, 0]))
-    empty = count == 0
-    lonely = (count[:, None] - usable) == 0
-    return CleanLevel(
-        np.where(empty, np.nan, mean),
-        np.where(empty, np.nan, spread),
-        np.where(lonely, np.nan, mean_without),
-        np.where(lonely, np.nan, spread_without),
-        np.where(usable, np.clip(probability, 0.0, 1.0), np.nan),
-    )
+    return grid, of_levels(grid)
 
 
 def _moments(grid: FloatArray, log_weight: FloatArray) -> tuple[FloatArray, FloatArray]:
