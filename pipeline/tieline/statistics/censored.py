@@ -1,5 +1,4 @@
-"""Means of groups in which some or all values are known only to lie below a limit, and ratios with such
-means.
+"""Means of groups in which some or all values are known only to lie below a limit.
 
 - `censored_limits(values, sigmas, limits, censored, group, n_groups, *, confidence=0.95) -> MeanLimits`
 
@@ -9,7 +8,7 @@ with `means.phase_means` instead: it carries more information (AMC 2001, Analyst
 Noise model: the variance of value s at the level mu is b_s (1 + kappa mu), with b_s the blank's. Where no
 sigma is given with a censored value, b_s = (L_s/3)², for limits are mostly three blank sigmas. kappa comes
 from the sigmas of the measured values of the group; where there are none, it lets the variance grow by half
-up to the limit, as Poisson counts on a background of about 18 counts do.
+up to the smallest limit, as Poisson counts on a background of about 18 counts do.
 """
 
 from dataclasses import dataclass
@@ -23,6 +22,7 @@ from tieline.statistics.groups import (
     IntArray,
     divide,
     group_count,
+    group_extreme,
     group_mean,
     group_sum,
 )
@@ -30,7 +30,7 @@ from tieline.statistics.limits import MeanLimits
 
 LIMIT_IN_SIGMAS = 3.0
 GROWTH_TO_LIMIT = 0.5
-RELATIVE_SPREADS = np.array([0.0, 0.05, 0.1, 0.15, 0.2, 0.3, 0.4, 0.5, 0.6])
+RELATIVE_SPREADS = np.linspace(0.0, 0.6, 13)
 RELATIVE_SPREADS_ALL_BELOW = np.array([0.0, 0.3])
 
 # Levels at which the likelihood is first looked at, as multiples of the largest value or limit of the group.
@@ -155,8 +155,8 @@ def _noise_model(
     code, level = group[measured], np.maximum(values[measured], 0.0)
     excess = group_sum(sigmas[measured] ** 2 - blank[measured], code, n_groups)
     weight = group_sum(blank[measured] * level, code, n_groups)
-    largest_limit = group_mean(limits[censored], group[censored], n_groups)
-    default = divide(np.full(n_groups, GROWTH_TO_LIMIT), np.nan_to_num(largest_limit), otherwise=0.0)
+    smallest_limit = group_extreme(limits[censored], group[censored], n_groups, largest=False)
+    default = divide(np.full(n_groups, GROWTH_TO_LIMIT), np.nan_to_num(smallest_limit), otherwise=0.0)
     has_measured = weight > 0
     kappa = np.where(has_measured, divide(np.maximum(excess, 0.0), weight, 0.0), default)
     # Sigmas below the blank's: the limit was more than three blank sigmas.

@@ -7,6 +7,7 @@ Public, all ratios at once (every array of shape (K,); `MeanEstimate` comes from
   RatioInterval`
 - `probability_above(alpha, beta, boundaries, *, u_alpha=0.0, u_beta=0.0, method="fieller") -> (K, B)`
 - `ratio_dof(alpha, beta, u_alpha, u_beta) -> dof`
+- `fieller_set(a, b, variance_a, variance_b, quantile) -> ConfidenceSet`
 
 `u_alpha`, `u_beta`: relative standard uncertainties that the two means do not share (0 where a calibration
 is shared by both, for it then cancels); scalar or shape (K,).
@@ -61,8 +62,8 @@ class RatioInterval:
 
 
 @dataclass(frozen=True)
-class _Ends:
-    """Ends of a confidence set; `negative_*` says that a mean is significantly below zero."""
+class ConfidenceSet:
+    """Ends of confidence sets, shape (K,); `negative_*` says that a mean is significantly below zero."""
 
     low: FloatArray
     high: FloatArray
@@ -99,17 +100,17 @@ def ratio_interval(
     tail = 0.5 + 0.5 * confidence
     usable = _usable(alpha, beta)
     t = np.where(usable, special.stdtrit(np.where(usable, dof, 1.0), tail), np.nan)
-    ends = _fieller(alpha.mean, beta.mean, *_variances(alpha, beta, u_alpha, u_beta), t)
+    ends = fieller_set(alpha.mean, beta.mean, *_variances(alpha, beta, u_alpha, u_beta), t)
     draws = usable & _by_draws(alpha, beta, method)
     if draws.any():
         ends = _with_draws(ends, draws, alpha, beta, u_alpha, u_beta, confidence)
-    floor = _fieller(
+    floor = fieller_set(
         alpha.mean,
         beta.mean,
         *_counting_variances(alpha, beta, u_alpha, u_beta),
         np.full(dof.shape, special.ndtri(tail)),
     )
-    ends = _Ends(
+    ends = ConfidenceSet(
         np.minimum(ends.low, floor.low),
         np.maximum(ends.high, floor.high),
         ends.negative_numerator & floor.negative_numerator,
@@ -208,12 +209,13 @@ def _pivot(
     difference: FloatArray, variance_a: FloatArray, variance_b: FloatArray, boundaries: FloatArray
 ) -> FloatArray:
     spread = np.sqrt(variance_a[:, None] + boundaries**2 * variance_b[:, None])
-    return np.where(spread > 0, divide(difference, spread, 0.0), np.sign(difference) * np.inf)
+    exact = np.where(difference == 0, 0.0, np.copysign(np.inf, difference))
+    return np.where(spread == 0, exact, divide(difference, spread, 0.0))
 
 
-def _fieller(
+def fieller_set(
     a: FloatArray, b: FloatArray, variance_a: FloatArray, variance_b: FloatArray, quantile: FloatArray
-) -> _Ends:
+) -> ConfidenceSet:
     """Ends of {D : (a - D b)² <= quantile² (Va + D² Vb)}, -inf and inf where it has none.
 
     With A = b² - q² Vb and C = a² - q² Va the ends solve A D² - 2 a b D + C = 0. They are written so that
@@ -231,18 +233,18 @@ def _fieller(
     # Numerator sure, denominator not: everything beyond one positive end.
     beyond = ~bounded & (C > 0) & (a > 0)
     low = np.where(beyond, divide(C, a * b + root, np.inf), low)
-    return _Ends(low, high, (C > 0) & (a < 0), bounded & (b < 0))
+    return ConfidenceSet(low, high, (C > 0) & (a < 0), bounded & (b < 0))
 
 
 def _with_draws(
-    ends: _Ends,
+    ends: ConfidenceSet,
     draws: BoolArray,
     alpha: MeanEstimate,
     beta: MeanEstimate,
     u_alpha: FloatArray,
     u_beta: FloatArray,
     confidence: float,
-) -> _Ends:
+) -> ConfidenceSet:
     """Replace the ends where `draws`, opened where a mean is not significantly above zero."""
     scaled = _scaled_t(alpha, u_alpha, draws), _scaled_t(beta, u_beta, draws)
     low, high = ends.low.copy(), ends.high.copy()
@@ -250,7 +252,7 @@ def _with_draws(
     tail = 0.5 + 0.5 * confidence
     low[draws & (_at_zero(alpha, tail) | np.isnan(low))] = -np.inf
     high[draws & (_at_zero(beta, tail) | np.isnan(high))] = np.inf
-    return _Ends(low, high, ends.negative_numerator, ends.negative_denominator)
+    return ConfidenceSet(low, high, ends.negative_numerator, ends.negative_denominator)
 
 
 def _at_zero(mean: MeanEstimate, tail: float) -> BoolArray:
@@ -271,7 +273,7 @@ def _result(
     u_alpha: FloatArray,
     u_beta: FloatArray,
     dof: FloatArray,
-    ends: _Ends,
+    ends: ConfidenceSet,
     usable: BoolArray,
     draws: BoolArray,
 ) -> RatioInterval:
