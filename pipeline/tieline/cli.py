@@ -153,7 +153,13 @@ def _exit_status(error: Exception) -> int:
 def _load(config: Path, overrides: list[str] | None, out: Path | None) -> Session:
     from tieline import configuration
 
-    return configuration.load(config, overrides=overrides or (), out=out)
+    session, problems = configuration.read(config, overrides=overrides or (), out=out)
+    if problems:
+        from tieline.errors import InputError
+        from tieline.runner import problems_of
+
+        raise InputError([*problems, *problems_of(session)])
+    return session
 
 
 def _print_json(value: Any) -> None:

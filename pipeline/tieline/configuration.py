@@ -35,6 +35,20 @@ class Session:
 
 def load(path: Path, *, overrides: Sequence[str] = (), out: Path | None = None) -> Session:
     """Reads and validates a configuration; raises InputError with every problem found."""
+    session, problems = read(path, overrides=overrides, out=out)
+    if problems:
+        raise InputError(problems)
+    return session
+
+
+def read(
+    path: Path, *, overrides: Sequence[str] = (), out: Path | None = None
+) -> tuple[Session, list[Problem]]:
+    """The session and the problems of its configuration that do not keep its tables from being looked at.
+
+    Those are unknown keys: without them the rest stands, so that the problems of configuration and tables
+    can be told in one go. Raises InputError for anything worse.
+    """
     text = _read(path)
     try:
         data = tomllib.loads(text)
@@ -44,17 +58,35 @@ def load(path: Path, *, overrides: Sequence[str] = (), out: Path | None = None) 
         ) from None
     for override in overrides:
         _override(data, override)
-    settings = validate(data, str(path))
+    settings, problems = validate(data, str(path))
     folder = (out if out is not None else path.parent / settings.out) / settings.session
-    return Session(path, settings, folder, tuple(overrides))
+    return Session(path, settings, folder, tuple(overrides)), problems
 
 
-def validate(data: dict[str, Any], file: str) -> SessionSettings:
-    """Settings from parsed TOML; strict about types, but TOML arrays serve as tuples."""
+def validate(data: dict[str, Any], file: str) -> tuple[SessionSettings, list[Problem]]:
+    """Settings from parsed TOML, and the unknown keys left out of them.
+
+    Strict about types, but TOML arrays serve as tuples. Raises InputError when more is wrong than keys.
+    """
+    text = json.dumps(data, default=str)
     try:
-        return SessionSettings.model_validate_json(json.dumps(data, default=str), strict=True)
+        return SessionSettings.model_validate_json(text, strict=True), []
     except ValidationError as error:
-        raise InputError([_problem(detail, file) for detail in error.errors()]) from None
+        details = error.errors()
+    problems = [_problem(detail, file) for detail in details]
+    known = json.loads(text)
+    for detail in details:
+        if detail["type"] != "extra_forbidden":
+            raise InputError(problems)
+        *parents, last = detail["loc"]
+        section = known
+        for part in parents:
+            section = section[part]
+        section.pop(last, None)
+    try:
+        return SessionSettings.model_validate_json(json.dumps(known), strict=True), problems
+    except ValidationError:
+        raise InputError(problems) from None
 
 
 def _read(path: Path) -> str:

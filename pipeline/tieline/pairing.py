@@ -41,10 +41,18 @@ def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> t
     columns = list(zip(*rows, strict=True)) if rows else [()] * 7
     names = ("experiment", "alpha", "beta", "n_alpha", "n_beta", "formed", "reason")
     table = build(PAIRS, {name: list(column) for name, column in zip(names, columns, strict=True)})
-    return table, [
-        Remark(f"{alpha}/{beta} not formed: {reason}", name)
-        for name, alpha, beta, *_, formed, reason in rows
-        if not formed
+    return table, _not_formed(rows)
+
+
+def _not_formed(rows: list[tuple[str, str, str, int, int, bool, str | None]]) -> list[Remark]:
+    """One remark per pair and reason, naming the experiments."""
+    experiments: dict[tuple[str, str], list[str]] = {}
+    for name, alpha, beta, _, _, formed, reason in rows:
+        if not formed:
+            experiments.setdefault((f"{alpha}/{beta}", str(reason)), []).append(name)
+    return [
+        Remark(f"not formed in {', '.join(names)}: {reason}", pair)
+        for (pair, reason), names in experiments.items()
     ]
 
 

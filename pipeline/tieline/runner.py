@@ -95,6 +95,15 @@ def check(session: Session) -> list[StageReport]:
     return [_compute(stage, work, None, Verdict(stage.name, "missing")) for stage in STAGES]
 
 
+def problems_of(session: Session) -> tuple[Problem, ...]:
+    """Every problem that `run` would meet in the session's files and tables."""
+    try:
+        check(session)
+    except InputError as error:
+        return error.problems
+    return ()
+
+
 def _selected(only: str | None, until: str | None) -> tuple[Stage, ...]:
     last = only or until
     if last is not None and last not in NAMES:
@@ -116,7 +125,8 @@ def _workspace(session: Session) -> Workspace:
         except (OSError, ValueError) as error:
             problems.append(_unreadable(session, path, error))
     if problems:
-        raise InputError([*problems, *_problems_of_files(STAGES, session, files)])
+        problems += _problems_of_files(STAGES, session, files)
+        raise InputError([*problems, *_problems_of_tables(session, files)])
     digests = {path: bytes_digest(file.data) for path, file in files.items()}
     return Workspace(_with_material_names(session, files), files, digests)
 
@@ -234,6 +244,22 @@ def _problems_of_files(
         except InputError as error:
             problems += error.problems
     return problems
+
+
+def _problems_of_tables(session: Session, files: dict[str, InputFile]) -> tuple[Problem, ...]:
+    """Problems of those spot tables that can be read, where others cannot."""
+    ingest = _with_material_names(session, files).settings.ingest
+    tables = tuple(table for table in ingest.tables if table.path in files)
+    experiments = ingest.experiments if ingest.experiments and ingest.experiments.path in files else None
+    if not tables:
+        return ()
+    try:
+        STAGES[0].function()(
+            files=files, settings=ingest.model_copy(update={"tables": tables, "experiments": experiments})
+        )
+    except InputError as error:
+        return error.problems
+    return ()
 
 
 def _unreadable(session: Session, path: str, error: Exception) -> Problem:

@@ -78,7 +78,7 @@ def _temporary(target: Path) -> Path:
 def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[str, Any]) -> None:
     """One stage table with its field metadata, and `record` in the schema metadata."""
     table = declared(table, TABLES[name])
-    text = json.dumps(record, sort_keys=True, ensure_ascii=False)
+    text = json.dumps(record, ensure_ascii=False)
     table = table.replace_schema_metadata({METADATA_KEY: text.encode()})
     labels = [field.name for field in table.schema if pa.types.is_dictionary(field.type)]
     pq.write_table(
