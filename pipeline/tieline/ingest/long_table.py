@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -18,7 +19,7 @@ from tieline.ingest.matching import sequence_numbers
 from tieline.ingest.roles import AnalyteColumn
 from tieline.ingest.spots import Spots
 from tieline.ingest.texts import Mask, Texts
-from tieline.tables import build
+from tieline.tables import ARROW_TYPES, build
 
 LongBlock = dict[str, pa.Array]
 Ints = npt.NDArray[np.int32]
@@ -138,22 +139,21 @@ def long_table(parts: Sequence[TableParts]) -> pa.Table:
 def spot_table(parts: Sequence[TableParts]) -> pa.Table:
     """`ingest.spots`, with the place of every spot in the order of measurement of its batch."""
     sizes = [len(part.spots) for part in parts]
-    batch = Texts.from_list([part.spots.batch.text(i) for part in parts for i in range(len(part.spots))])
-    number = np.repeat(np.arange(len(parts)), sizes)
-    order = np.concatenate([part.order for part in parts]) if parts else np.empty(0)
-    columns: dict[str, object] = {
-        "sequence": sequence_numbers(batch, number, order),
-        "row": np.concatenate([part.spots.row for part in parts]) if parts else np.empty(0, np.int32),
-        "distance_um": np.concatenate([part.distance_um for part in parts]) if parts else np.empty(0),
-        "table": Texts.from_list([part.table for part in parts for _ in range(len(part.spots))]).arrow(),
-        "comment": pa.chunked_array(
-            [part.spots.comment.arrow().cast(pa.string()) for part in parts], pa.string()
-        ),
-    }
+    columns: dict[str, Any] = {}
     for column in SPOT_KEYS:
-        if column.kind == "label" and column.name not in columns:
-            arrays = [getattr(part.spots, column.name).arrow() for part in parts]
-            columns[column.name] = pa.chunked_array(
-                arrays, pa.dictionary(pa.int32(), pa.string())
-            ).unify_dictionaries()
+        if column.kind == "label":
+            arrays = [
+                Texts.constant(part.table, len(part.spots)).arrow()
+                if column.name == "table"
+                else getattr(part.spots, column.name).arrow()
+                for part in parts
+            ]
+            columns[column.name] = pa.chunked_array(arrays, ARROW_TYPES["label"]).unify_dictionaries()
+    batch = columns["batch"].combine_chunks()
+    order = np.concatenate([part.order for part in parts])
+    table_of = np.repeat(np.arange(len(parts)), sizes)
+    columns["sequence"] = sequence_numbers(batch.indices.to_numpy(), len(batch.dictionary), table_of, order)
+    columns["row"] = np.concatenate([part.spots.row for part in parts])
+    columns["distance_um"] = np.concatenate([part.distance_um for part in parts])
+    columns["comment"] = pa.chunked_array([part.spots.comment.arrow().cast(pa.string()) for part in parts])
     return build(INGEST_SPOTS, columns)

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import replace
-from fnmatch import fnmatchcase
 
 import numpy as np
+import numpy.typing as npt
 
 from tieline.chemistry.phases import PHASES, phase_name
 from tieline.errors import InputError, Problem
@@ -26,9 +26,10 @@ def with_materials(spots: Spots, names: Spellings) -> Spots:
     """
     if not names or not len(spots):
         return spots
-    material = spots.spot.renamed(lambda text: material_of(text, names))
+    material_of = _material_lookup(names)
+    material = spots.spot.renamed(material_of)
     for labels in (spots.experiment, spots.phase):
-        material = labels.renamed(lambda text: material_of(text, names)).filled(material)
+        material = labels.renamed(material_of).filled(material)
     is_material = ~material.is_missing()
     nothing = Texts.constant(None, len(spots))
     return replace(
@@ -39,15 +40,16 @@ def with_materials(spots: Spots, names: Spellings) -> Spots:
     )
 
 
-def material_of(text: str, names: Spellings) -> str | None:
-    """The reference material a label means, or None."""
-    folded = fold(text)
-    for name, spellings in names.items():
-        for spelling in (name, *spellings):
-            known = fold(spelling)
-            if folded == known or (known.endswith("*") and fnmatchcase(folded, known.replace("[", "[[]"))):
-                return name
-    return None
+def _material_lookup(names: Spellings) -> Callable[[str], str | None]:
+    """Tells the reference material a label means, or None."""
+    whole = {fold(spelling): name for name, given in names.items() for spelling in (name, *given)}
+    starts = [(spelling[:-1], name) for spelling, name in whole.items() if spelling.endswith("*")]
+
+    def material_of(text: str) -> str | None:
+        folded = fold(text)
+        return whole.get(folded) or next((name for start, name in starts if folded.startswith(start)), None)
+
+    return material_of
 
 
 def with_phases(spots: Spots, spellings: Spellings) -> Spots:
@@ -108,21 +110,17 @@ def similar_experiments(spots: Spots) -> list[Remark]:
     ]
 
 
-def sequence_numbers(batch: Texts, table: np.ndarray, order: np.ndarray) -> np.ndarray:
-    """Place of every spot within its batch, from 1: by `order` where a batch has it, else by table and row.
+def sequence_numbers(
+    batch: npt.NDArray[np.int32], batches: int, table: npt.NDArray[np.int64], order: npt.NDArray[np.float64]
+) -> npt.NDArray[np.int32]:
+    """Place of every spot within its batch, from 1: by `order` where all of the batch have it, else by table and row.
 
     batch, table, order: one entry per spot, in the order of tables and rows; `order` is NaN where not given.
     """
-    position = np.arange(len(order))
-    known = np.zeros(len(batch.known) + 1, dtype=bool)
-    missing = np.bincount(batch.codes[np.isnan(order)], minlength=len(batch.known)) > 0
-    known[:-1] = ~missing
-    key = np.where(known[batch.codes], order, table.astype(float))
-    ranked = np.lexsort((position, key, batch.codes))
-    sorted_batch = batch.codes[ranked]
-    starts = np.flatnonzero(np.append(True, np.diff(sorted_batch) != 0))
-    sizes = np.diff(np.append(starts, len(ranked)))
-    places = np.arange(len(ranked)) - np.repeat(starts, sizes) + 1
+    incomplete = np.bincount(batch[np.isnan(order)], minlength=batches) > 0
+    key = np.where(incomplete[batch], table.astype(float), order)
+    ranked = np.lexsort((np.arange(len(order)), key, batch))
+    sizes = np.bincount(batch, minlength=batches)
     sequence = np.empty(len(ranked), dtype=np.int32)
-    sequence[ranked] = places
+    sequence[ranked] = np.arange(len(ranked)) - np.repeat(np.cumsum(sizes) - sizes, sizes) + 1
     return sequence

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
@@ -32,6 +33,9 @@ def find_partners(
     else:
         found = _neighbours(work.headers, pattern, values)
     values[:] = [index for index in values if index not in set(found.values())]
+    for partner, count in Counter(found.values()).items():
+        if count > 1:
+            work.problem(f"{what}.pattern gives this column to {count} analytes.", work.headers[partner])
     if not found and values:
         work.problem(
             f"no column fits {what}.pattern.",

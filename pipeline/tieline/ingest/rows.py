@@ -36,11 +36,13 @@ def spot_rows(
     keys = list(labels.values())
     first = Texts.from_column(grid.column(0)) if grid.blocks else Texts.constant(None, 0)
     unlabelled = np.all([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
+    keys = [labels[name] for name in ("spot", "experiment", "phase", "labels") if name in labels]
     some_missing = np.any([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
     header_like = _repeats_header(grid, label_columns, labels)
-    summary = first.where(lambda text: is_summary(text, summary_words))
-    if "spot" in labels:
-        summary |= labels["spot"].where(lambda text: is_summary(text, summary_words))
+    pattern = summary_pattern(summary_words)
+    summary = first.where(lambda text: pattern.match(fold(text)) is not None)
+    if label_columns.get("spot", 0) != 0:
+        summary |= labels["spot"].where(lambda text: pattern.match(fold(text)) is not None)
     blank_count = 0
     for block, start in _placed_blocks(grid):
         stop = start + len(block.rows)
@@ -59,17 +61,16 @@ def spot_rows(
     return keep, blank_count
 
 
-def is_summary(text: str, words: tuple[str, ...]) -> bool:
-    """Whether a row's label says that it sums up others: a known word alone, or a long one followed by more.
+def summary_pattern(words: tuple[str, ...]) -> re.Pattern[str]:
+    """Fits the start of a folded label that says that its row sums up others.
 
-    "Average", "Mean ol (n = 8)"; but "n 3" or "max-2" may be spots and count only when they stand alone.
+    A known word alone, or a long one followed by more: "Average", "Mean ol (n = 8)". But "n 3" or "max-2" may
+    be spots; short words count only when they stand alone.
     """
-    folded = fold(text)
-    for word in words:
-        known = fold(word)
-        if folded == known or (len(known) >= 4 and re.match(rf"{re.escape(known)}[^\w]", folded)):
-            return True
-    return False
+    folded = [fold(word) for word in words if word.strip()]
+    alone = [rf"{re.escape(word)}$" for word in folded]
+    started = [rf"{re.escape(word)}[^\w]" for word in folded if len(word) >= 4]
+    return re.compile("|".join([*alone, *started]) or r"(?!)")
 
 
 def joined(cells: list[str], grid: Grid) -> str:

@@ -15,9 +15,8 @@ import numpy.typing as npt
 from tieline.errors import Problem
 from tieline.ingest.texts import Mask, Texts
 from tieline.results import Remark
-from tieline.settings.ingest import Table
+from tieline.settings.ingest import LABEL_GROUPS, Table
 
-GROUPS = ("spot", "experiment", "phase", "grain", "zone", "distance_um")
 Ints = npt.NDArray[np.int32]
 
 
@@ -98,7 +97,7 @@ def _split(table: Table, labels: Mapping[str, Texts], n: int) -> tuple[dict[str,
     matches = {text: pattern.fullmatch(text) for text in combined.known}
     split = {
         name: combined.renamed(lambda text, name=name: _group(matches[text], name))  # type: ignore[misc]
-        for name in GROUPS
+        for name in LABEL_GROUPS
         if name in pattern.groupindex
     }
     return split, combined.where(lambda text: matches[text] is None)

@@ -55,7 +55,7 @@ def reason_code(name: str) -> int:
 
 def clean(text: str) -> str:
     """Trimmed, with odd spaces as one plain space, invisible characters removed and U+2212 as a minus."""
-    return " ".join(text.translate(_CLEAN).split())
+    return " ".join((text if text.isascii() else text.translate(_CLEAN)).split())
 
 
 def fold(text: str) -> str:

@@ -11,7 +11,7 @@ import numpy.typing as npt
 import pyarrow as pa
 
 from tieline.errors import InputError, Problem, nearest
-from tieline.reading.cell_text import UNREADABLE, VALUE, CellStyle, fold
+from tieline.reading.cell_text import UNREADABLE, VALUE, CellStyle, clean, fold
 from tieline.reading.cells import REASONS, parse_cells
 from tieline.reading.formats import read_grid
 from tieline.reading.grid import Grid
@@ -78,7 +78,9 @@ def read_texts(
     ]
     found: dict[str, int | None] = {}
     for name, header in columns.items():
-        matches = [index for index, text in enumerate(grid.headers) if fold(text) == fold(header)]
+        # Exactly as written first: T and t may be two columns.
+        exact = [index for index, text in enumerate(grid.headers) if clean(text) == clean(header)]
+        matches = exact or [index for index, text in enumerate(grid.headers) if fold(text) == fold(header)]
         found[name] = matches[0] if matches else None
         if len(matches) > 1:
             problems.append(Problem("the header stands twice.", file.path, grid.found.header_row, header))

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import re
 from typing import Annotated, Literal
 
-from pydantic import Field
+from pydantic import Field, field_validator, model_validator
 
 from tieline.settings.base import Settings
 
@@ -27,13 +28,29 @@ class Columns(Settings):
     ignore: tuple[str, ...] = Field((), description="headers of columns that are deliberately not read")
 
 
+LABEL_GROUPS = ("spot", "experiment", "phase", "grain", "zone", "distance_um")
+
+
 class Labels(Settings):
     """Splits one label column into several labels by a regular expression with named groups."""
 
     column: str = Field(description="header of the column that holds the combined label")
     pattern: str = Field(
-        description="regular expression; named groups among spot, experiment, phase, grain, zone, distance_um"
+        description="regular expression that fits the whole label; named groups among spot, experiment, phase, "
+        "grain, zone, distance_um"
     )
+
+    @field_validator("pattern")
+    @classmethod
+    def _usable(cls, pattern: str) -> str:
+        try:
+            groups = set(re.compile(pattern).groupindex)
+        except re.error as error:
+            raise ValueError(f"is not a regular expression: {error}") from None
+        if not groups or groups - set(LABEL_GROUPS):
+            wrong = ", ".join(sorted(groups - set(LABEL_GROUPS))) or "none"
+            raise ValueError(f"named groups must be among {', '.join(LABEL_GROUPS)}; found {wrong}")
+        return pattern
 
 
 PATTERN = (
@@ -77,8 +94,10 @@ class Table(Settings):
     technique: str = Field("EPMA", description="measuring technique, a free name such as EPMA or laser")
     batch: str | None = Field(None, description="measuring session; the file name where nothing is given")
     unit: Unit | None = Field(None, description="unit of columns whose header does not say")
-    experiment: str | None = Field(None, description="experiment of all spots, where no column tells")
-    phase: str | None = Field(None, description="phase of all spots, where no column tells")
+    experiment: str | None = Field(
+        None, min_length=1, description="experiment of spots whose row does not tell"
+    )
+    phase: str | None = Field(None, min_length=1, description="phase of spots whose row does not tell")
     columns: Columns = Field(Columns(), description="headers of the label columns")
     labels: Labels | None = Field(None, description="splitting of a combined label")
     sigma: Sigma | None = Field(None, description="uncertainty columns")
@@ -92,7 +111,9 @@ class Table(Settings):
         None, description="the row after the header holds units; found when not given"
     )
     skip_rows: int = Field(0, ge=0, description="rows before the table")
-    delimiter: str | None = Field(None, description="field separator; found when not given")
+    delimiter: str | None = Field(
+        None, min_length=1, max_length=1, description="field separator; found when not given"
+    )
     decimal: Literal[".", ","] | None = Field(None, description="decimal mark; found when not given")
     thousands: Literal[",", ".", " ", "'"] | None = Field(
         None, description="thousands separator, where one is used"
@@ -113,6 +134,18 @@ class Table(Settings):
         description="first-label texts of summary rows pasted between spots; such rows are set aside",
     )  # fmt: skip
 
+    @model_validator(mode="after")
+    def _one_source_per_label(self) -> Table:
+        groups = set(re.compile(self.labels.pattern).groupindex) if self.labels is not None else set()
+        twice = [
+            name for name in LABEL_GROUPS if name in groups and getattr(self.columns, name, None) is not None
+        ]
+        if twice:
+            raise ValueError(f"{', '.join(twice)} is given both by columns and by the label pattern")
+        if self.thousands is not None and self.thousands == self.decimal:
+            raise ValueError("thousands and decimal are the same mark")
+        return self
+
 
 class ReferenceMaterials(Settings):
     """Which spots are reference materials, and their accepted values."""
@@ -122,7 +155,7 @@ class ReferenceMaterials(Settings):
     )
     names: dict[str, tuple[str, ...]] = Field(
         default_factory=dict,
-        description="material -> its spellings in the tables; by default the materials of the accepted values",
+        description="material -> its spellings in the phase, experiment or spot column; a spelling may end in *",
     )
 
 
