@@ -18,9 +18,10 @@ import tempfile
 import time
 from pathlib import Path
 
-ANALYTES = tuple(
-    ["Li", "Be", "B", "Na", "Mg", "Al", "Si", "P", "K", "Ca", "Sc", "Ti", "V", "Cr", "Mn", "Fe", "Co", "Ni", "Cu", "Zn", "Ga", "Rb", "Sr", "Y", "Zr", "Nb", "Cs", "Ba", "La", "Ce", "Pr", "Nd", "Sm", "Eu", "Gd", "Tb", "Dy", "Ho", "Er", "Yb"]
-)
+ANALYTES = (
+    "Li", "Be", "B", "Na", "Mg", "Al", "Si", "P", "K", "Ca", "Sc", "Ti", "V", "Cr", "Mn", "Fe", "Co", "Ni", "Cu", "Zn",
+    "Ga", "Rb", "Sr", "Y", "Zr", "Nb", "Cs", "Ba", "La", "Ce", "Pr", "Nd", "Sm", "Eu", "Gd", "Tb", "Dy", "Ho", "Er", "Yb",
+)  # fmt: skip
 
 
 def write_table(path: Path, spots: int) -> None:
@@ -135,6 +136,7 @@ def main() -> None:
         [statistics.median(run[kind] for run in runs) for runs in (plain, whole)]
         for kind in ("seconds", "cpu")
     )
+    print(f"processor time: {cpu[0]:.2f} s and {cpu[1]:.2f} s; ratio {cpu[1] / cpu[0]:.2f}")
     peak = max(run["peak"] for run in whole)
     print(f"file: {spots} spots, {5 + 3 * len(ANALYTES)} columns, {size / 1e6:.0f} MB")
     print(
