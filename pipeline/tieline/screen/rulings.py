@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import io
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date
@@ -13,6 +11,7 @@ import numpy as np
 from tieline.arrays import labels
 from tieline.errors import InputError, Problem, nearest
 from tieline.reading.input_file import InputFile
+from tieline.reading.records import read_records
 from tieline.screen.findings import RULING, WHOLE_SPOT, Findings, no_findings
 from tieline.screen.session import Session
 
@@ -52,52 +51,37 @@ def read_rulings(files: Mapping[str, InputFile]) -> tuple[Ruling, ...]:
 
 
 def _rulings_of(file: InputFile) -> tuple[list[Ruling], list[Problem]]:
-    header, records = _records(file)
-    missing = [name for name in COLUMNS if name not in header]
-    if missing:
-        remedy = f"A table of rulings has the columns {', '.join(COLUMNS)} and, where needed, table."
-        return [], [Problem(f'no column "{name}".', file.path, 1, remedy=remedy) for name in missing]
-    rulings, problems = [], []
-    for row, record in records:
-        wrong = _problems_of(file.path, row, record)
-        problems += wrong
-        if not wrong:
-            texts = {name: record[name] for name in COLUMNS}
-            texts["verdict"] = texts["verdict"].casefold()
-            rulings.append(Ruling(**texts, table=record.get("table") or None, file=file.path, row=row))
-    return rulings, problems
+    names = {name: name for name in (*COLUMNS, *OPTIONAL)}
+    problems: list[Problem] = []
+    try:
+        records = read_records(file, names, required=frozenset(COLUMNS))
+    except InputError as error:
+        problems = list(error.problems)
+        try:
+            # Missing columns and blank cells are told; what else is wrong in the file is told with them.
+            records = read_records(file, names, required=frozenset())
+        except InputError:
+            return [], problems
+    rulings = []
+    for position, row in enumerate(records["row"]):
+        record = {name: records[name][position] for name in names}
+        problems += _problems_of(file.path, int(row), record)
+        if all(record[name] for name in COLUMNS):
+            record["verdict"] = record["verdict"].casefold()
+            rulings.append(Ruling(**record, file=file.path, row=int(row)))
+    return rulings, sorted(problems, key=lambda problem: problem.row or 0)
 
 
-def _records(file: InputFile) -> tuple[list[str], list[tuple[int, dict[str, str]]]]:
-    text = file.data.to_pybytes().decode("utf-8-sig")
-    reader = csv.reader(io.StringIO(text))
-    header = [cell.strip() for cell in next(reader, [])]
-    lines = ((reader.line_num, [cell.strip() for cell in line]) for line in reader)
-    return header, [
-        (row, dict(zip(header, [*line, *[""] * len(header)], strict=False)))
-        for row, line in lines
-        if any(line)
-    ]
-
-
-def _problems_of(path: str, row: int, record: Mapping[str, str]) -> list[Problem]:
-    problems = [
-        Problem("is empty; a ruling is complete or it is none.", path, row, name)
-        for name in COLUMNS
-        if not record[name]
-    ]
-    verdict = record["verdict"]
+def _problems_of(path: str, row: int, record: Mapping[str, str | None]) -> list[Problem]:
+    problems = []
+    verdict, day = record["verdict"], record["date"]
     if verdict and verdict.casefold() not in VERDICTS:
-        problems.append(Problem(f'"{verdict}" is neither keep nor drop.', path, row, "verdict"))
-    if record["date"] and not _is_date(record["date"]):
         problems.append(
-            Problem(
-                f'"{record["date"]}" is not a date.',
-                path,
-                row,
-                "date",
-                "Write year-month-day, as 2024-03-09.",
-            )
+            Problem(f'"{verdict}" is neither keep nor drop.', path, row, "verdict", "Write keep or drop.")
+        )
+    if day and not _is_date(day):
+        problems.append(
+            Problem(f'"{day}" is not a date.', path, row, "date", "Write year-month-day, as 2024-03-09.")
         )
     return problems
 

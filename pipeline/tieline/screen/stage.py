@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 
+import numpy as np
 import pyarrow as pa
 
+from tieline.arrays import BoolArray
 from tieline.columns import SCREEN, VALUE_KEYS
 from tieline.correction import calibrated
 from tieline.reading.input_file import InputFile
@@ -13,9 +15,12 @@ from tieline.results import StageResult
 from tieline.screen.cations import cation_findings
 from tieline.screen.findings import findings_table
 from tieline.screen.groups import TestResult, groups_table
+from tieline.screen.identity import identity_findings
+from tieline.screen.overlap import score_overlap
+from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
 from tieline.screen.rulings import read_rulings, ruling_findings
-from tieline.screen.session import Session, session_of
+from tieline.screen.session import Measured, Session, session_of
 from tieline.screen.totals import total_findings
 from tieline.screen.whole_analyses import whole_analyses
 from tieline.settings.screen import ScreenSettings
@@ -59,11 +64,32 @@ def screen(
 
 def _tests(session: Session, settings: ScreenSettings) -> list[TestResult]:
     """Every enabled test on every technique, in document order."""
-    results = []
+    results: list[TestResult] = []
     for measured in session.techniques:
-        analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
-        if settings.total.enabled:
-            results.append(total_findings(session, analyses, settings.total))
-        if settings.cations.enabled:
-            results.append(cation_findings(session, analyses, settings.cations))
+        results += _tests_of(session, measured, settings)
     return results
+
+
+def _tests_of(session: Session, measured: Measured, settings: ScreenSettings) -> list[TestResult]:
+    analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
+    results = []
+    if settings.total.enabled:
+        results.append(total_findings(session, analyses, settings.total))
+    if settings.cations.enabled:
+        results.append(cation_findings(session, analyses, settings.cations))
+    if settings.identity.enabled:
+        results.append(identity_findings(session, analyses, settings.identity))
+    if settings.overlap.enabled:
+        whole = bool(analyses.complete.any())
+        overlap = score_overlap(session, measured, whole, _dropped(session, results), settings.overlap)
+        results.append(overlap_result(session, overlap, settings.overlap))
+    return results
+
+
+def _dropped(session: Session, results: Iterable[TestResult]) -> BoolArray:
+    """Spots (spots,) that the tests so far leave out; rulings come last and are not seen here."""
+    dropped = np.zeros(session.spots.count, dtype=np.bool_)
+    for result in results:
+        for part in result.findings:
+            dropped |= part.dropped_spots(session.spots.count)
+    return dropped

@@ -22,9 +22,7 @@ class TotalSettings(TestSettings):
         ge=0,
         description="a total is outside only if it is by more than this many of its standard uncertainties",
     )
-    min_oxides: int = Field(
-        4, ge=1, description="fewer measured oxides than this make no total; own choice"
-    )
+    min_oxides: int = Field(4, ge=1, description="fewer measured oxides than this make no total; own choice")
     incomplete_below: float = Field(
         85.0,
         ge=0,
@@ -82,6 +80,12 @@ class OverlapSettings(TestSettings):
         gt=0,
         lt=1,
         description="p-value of the residual below which a spot is something else than this mixture",
+    )
+    scatter_p: float = Field(
+        0.001,
+        gt=0,
+        lt=1,
+        description="p-value below which the scatter of unflagged spots along the mixing line is remarked; own choice",
     )
     melt_phase: str = Field("glass", description="the phase taken as the melt")
 

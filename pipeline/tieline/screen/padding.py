@@ -1,0 +1,69 @@
+"""Groups of spots side by side in one array, so that linear algebra runs over many groups at once."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from tieline.arrays import BoolArray, FloatArray, IntArray
+from tieline.screen.session import Measured
+
+# Cells of one block: keeps the working memory of a test to some tens of megabytes.
+CELLS_AT_ONCE = 2_000_000
+
+
+@dataclass(frozen=True)
+class Block:
+    """G groups of at most n spots: `groups` (G,) numbers in `Spots.groups`, `rows` (G, n) rows of `Measured`, -1: none."""
+
+    groups: IntArray
+    rows: IntArray
+
+    @property
+    def occupied(self) -> BoolArray:
+        return np.asarray(self.rows >= 0)
+
+    def of(self, values: FloatArray) -> FloatArray:
+        """Values of `Measured`, one or several per spot, as (G, n, ...) with NaN where there is no spot."""
+        taken = values[self.rows]
+        taken[~self.occupied] = np.nan
+        return np.asarray(taken)
+
+
+def blocks(measured: Measured, groups: IntArray, *, exact: bool = False) -> Iterator[Block]:
+    """The given groups in blocks of similar size; with `exact` of the same size, so that nothing is padded."""
+    first = np.searchsorted(measured.group, groups)
+    size = np.searchsorted(measured.group, groups, side="right") - first
+    order = np.argsort(size, kind="stable")
+    order = order[size[order] > 0]
+    width = max(1, len(measured.analytes))
+    start = 0
+    while start < len(order):
+        end = start + 1
+        while end < len(order) and _fits(size[order[start]], size[order[end]], end + 1 - start, width, exact):
+            end += 1
+        chosen = np.sort(order[start:end])
+        place = np.arange(int(size[chosen].max()))
+        rows = np.where(place < size[chosen][:, None], first[chosen][:, None] + place, -1)
+        yield Block(groups[chosen], rows)
+        start = end
+
+
+def _fits(smallest: int, largest: int, number: int, width: int, exact: bool) -> bool:
+    if exact:
+        return smallest == largest and number * largest * width <= CELLS_AT_ONCE
+    return largest <= max(2 * smallest, 16) and number * largest * width <= CELLS_AT_ONCE
+
+
+def column_medians(values: FloatArray, fewest: int = 1) -> FloatArray:
+    """Medians (..., p) over the last axis but one, NaN left out; NaN where fewer than `fewest` values are known."""
+    present = np.isfinite(values)
+    count = present.sum(axis=-2)
+    ordered = np.sort(np.where(present, values, np.inf), axis=-2)
+    last = values.shape[-2] - 1
+    low = np.take_along_axis(ordered, np.maximum(count - 1, 0)[..., None, :] // 2, axis=-2)[..., 0, :]
+    high = np.take_along_axis(ordered, np.minimum(count // 2, last)[..., None, :], axis=-2)[..., 0, :]
+    enough = count >= max(fewest, 1)
+    return np.where(enough, 0.5 * (np.where(enough, low, 0.0) + np.where(enough, high, 0.0)), np.nan)
