@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import re
 import tomllib
 from collections.abc import Sequence
@@ -59,7 +60,9 @@ def read(
     for override in overrides:
         _override(data, override)
     settings, problems = validate(data, str(path))
-    folder = (out if out is not None else path.parent / settings.out) / settings.session
+    out = out if out is not None else path.parent / settings.out
+    # Tidied for people to read: configs/../runs/x is runs/x.
+    folder = Path(os.path.normpath(out / settings.session))
     return Session(path, settings, folder, tuple(overrides)), problems
 
 

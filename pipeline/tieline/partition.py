@@ -84,10 +84,9 @@ class _Sources:
 
     def side(self, rows: IntArray) -> Side:
         # A mean's counting part can exceed what its scatter shows; D_sd is that of the scatter, so it is cut there.
-        with np.errstate(divide="ignore", invalid="ignore"):
-            total = np.abs(self.se[rows] / self.mean[rows])
-            counting = np.fmin(np.nan_to_num(np.abs(self.counting_se[rows] / self.mean[rows])), total)
-        total, counting = np.nan_to_num(total, posinf=0.0), np.nan_to_num(counting, posinf=0.0)
+        mean = np.where(self.mean[rows] == 0, np.nan, np.abs(self.mean[rows]))
+        total = np.nan_to_num(self.se[rows] / mean)
+        counting = np.fmin(np.nan_to_num(self.counting_se[rows] / mean), total)
         spread = np.sqrt(np.maximum(total**2 - counting**2, 0.0))
         return Side(
             self.mean[rows],

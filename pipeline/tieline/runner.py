@@ -59,7 +59,7 @@ def status(session: Session) -> list[Verdict]:
     verdicts = []
     for stage in STAGES:
         records = read_records(session.run_folder, stage)
-        verdict = judge(stage, session.settings, records, work.digests)
+        verdict = judge(stage, work.session.settings, records, work.digests)
         if verdict.state == "current":
             work.digests.update(_recorded_digests(records))
         verdicts.append(verdict)
@@ -127,8 +127,12 @@ def _workspace(session: Session) -> Workspace:
     if problems:
         problems += _problems_of_files(STAGES, session, files)
         raise InputError([*problems, *_problems_of_tables(session, files)])
-    digests = {path: bytes_digest(file.data) for path, file in files.items()}
-    return Workspace(_with_material_names(session, files), files, digests)
+    try:
+        named = _with_material_names(session, files)
+    except InputError:
+        problems = _problems_of_files(STAGES, session, files)
+        raise InputError([*problems, *_problems_of_tables(session, files)]) from None
+    return Workspace(named, files, {path: bytes_digest(file.data) for path, file in files.items()})
 
 
 def _with_material_names(session: Session, files: dict[str, InputFile]) -> Session:
@@ -142,10 +146,7 @@ def _with_material_names(session: Session, files: dict[str, InputFile]) -> Sessi
     materials = session.settings.ingest.reference_materials
     if materials.names or materials.path is None or materials.path not in files:
         return session
-    try:
-        names = material_names({materials.path: files[materials.path]})
-    except InputError as error:
-        raise InputError([*error.problems, *_problems_of_files(STAGES[:1], session, files)]) from None
+    names = material_names({materials.path: files[materials.path]})
     materials = materials.model_copy(update={"names": names})
     ingest = session.settings.ingest.model_copy(update={"reference_materials": materials})
     return replace(session, settings=session.settings.model_copy(update={"ingest": ingest}))
@@ -248,7 +249,10 @@ def _problems_of_files(
 
 def _problems_of_tables(session: Session, files: dict[str, InputFile]) -> tuple[Problem, ...]:
     """Problems of those spot tables that can be read, where others cannot."""
-    ingest = _with_material_names(session, files).settings.ingest
+    try:
+        ingest = _with_material_names(session, files).settings.ingest
+    except InputError:
+        ingest = session.settings.ingest
     tables = tuple(table for table in ingest.tables if table.path in files)
     experiments = ingest.experiments if ingest.experiments and ingest.experiments.path in files else None
     if not tables:
