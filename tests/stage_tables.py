@@ -6,6 +6,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 import pyarrow as pa
+
 from tieline.columns import INGEST, INGEST_SPOTS, SPOT_KEYS
 from tieline.tables import build
 

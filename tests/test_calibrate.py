@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from stage_tables import ingest_tables, spot
 
+from stage_tables import ingest_tables, spot
 from tieline.calibrate import calibrate
 from tieline.convert import convert
 from tieline.errors import InputError

@@ -8,8 +8,8 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
-from sessions import ROOT, demo_copy, result
 
+from sessions import ROOT, demo_copy, result
 from tieline import runner
 from tieline.configuration import Session, load
 from tieline.errors import InputError

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import pyarrow as pa
 import pytest
-from stage_tables import ingest_tables, spot
 
+from stage_tables import ingest_tables, spot
 from tieline.convert import convert
 from tieline.errors import InputError
 from tieline.settings.chemistry import Actual, ConvertSettings, InternalStandard

@@ -60,8 +60,10 @@ def read_accepted_values(files: Mapping[str, InputFile]) -> dict[tuple[str, str]
 
 
 def material_names(files: Mapping[str, InputFile]) -> dict[str, tuple[str, ...]]:
-    """The materials of the accepted values, each its own only spelling."""
-    return {material: (material,) for material in sorted({key[0] for key in read_accepted_values(files)})}
+    """The materials of the accepted values, each its own only spelling; nothing else of the table is judged."""
+    column = {"material": "material"}
+    names = {name for file in files.values() for name in read_records(file, column)["material"]}
+    return {name: (name,) for name in sorted(names)}
 
 
 def _accepted(
