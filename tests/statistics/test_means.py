@@ -187,14 +187,22 @@ def test_pooling_frees_the_mean_of_few_counts_from_bias():
     assert abs(bias) < 0.005
 
 
-def test_pooling_leaves_different_counting_times_alone():
+def test_pooling_keeps_the_ratio_of_different_counting_times():
+    """Poisson variances x/time, times 1 and 4: at the common mean the sigmas differ by the factor 2 exactly."""
+    time = np.array([1.0, 4.0, 1.0, 4.0, 1.0, 4.0])
+    values = np.array([8.0, 8.0, 10.0, 10.0, 12.0, 12.0])
+    pooled = pooled_sigmas(values, np.sqrt(values / time), np.zeros(6, dtype=np.int64), 1)
+    np.testing.assert_allclose(pooled[::2] / pooled[1::2], 2.0, rtol=1e-12)
+    np.testing.assert_allclose(pooled**2, 10.0 / time, rtol=1e-12)
+
+
+def test_pooling_leaves_falling_and_unknown_sigmas_alone():
     values = np.array([10.0, 10.2, 9.9, 10.1, 9.8])
-    sigmas = np.array([0.1, 0.1, 0.4, 0.1, 0.4])
+    sigmas = np.array([np.nan, 0.1, 0.4, 0.1, 0.4])
     group = np.zeros(5, dtype=np.int64)
-    np.testing.assert_array_equal(pooled_sigmas(values, sigmas, group, 1), sigmas)
-    with_unknown = sigmas.copy()
-    with_unknown[0] = np.nan
-    np.testing.assert_array_equal(pooled_sigmas(values, with_unknown, group, 1), with_unknown)
+    np.testing.assert_allclose(pooled_sigmas(values, sigmas, group, 1), sigmas, rtol=1e-12)
+    zeros = np.zeros(5)
+    np.testing.assert_array_equal(pooled_sigmas(zeros, zeros, group, 1), zeros)
 
 
 def test_pooled_sigma_is_the_fitted_line_at_the_mean():
