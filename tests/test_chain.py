@@ -196,7 +196,7 @@ def test_a_table_split_in_two_of_one_batch_changes_no_result(reduced: Session, t
     assert_same_results(result(session, "classify"), result(reduced, "classify"))
 
 
-def test_scaling_both_phases_alike_changes_no_D(reduced: Session, tmp_path: Path):
+def test_scaling_both_phases_alike_changes_no_ratio(reduced: Session, tmp_path: Path):
     # Traces only: totals and cation sums of majors would rightly notice.
     config = demo_copy(tmp_path)
     path = config.parent / "ember" / "laser.csv"

@@ -123,4 +123,5 @@ def _numbers(
             problems.append(
                 Problem(f'"{text[:60]}": a limit, not a value.', file.path, int(texts.rows[place]), header)
             )
-    return cells.value, np.isnan(cells.value)
+    said = (cells.state == UNREADABLE) | ~np.isnan(cells.limit)
+    return cells.value, np.isnan(cells.value) & ~said
