@@ -1,4 +1,8 @@
-"""One writer per run folder: a lock file that names its holder and outlives no process on its own machine."""
+"""One writer per run folder, and none once it is sealed.
+
+The lock file names its holder and outlives no process on its own machine. A sealed folder holds a list of
+checksums of all its files, which any change would make untrue.
+"""
 
 from __future__ import annotations
 
@@ -12,11 +16,13 @@ from pathlib import Path
 from tieline.errors import InputError, Problem
 
 LOCK_NAME = ".tieline.lock"
+SEAL_NAME = "SHA256SUMS"
 
 
 @contextmanager
 def locked(run_folder: Path) -> Iterator[None]:
-    """Holds the folder's lock; raises InputError naming the holder when another live process has it."""
+    """Holds the folder's lock; raises InputError when it is sealed or another live process has it."""
+    refuse_if_sealed(run_folder)
     path = run_folder / LOCK_NAME
     _acquire(path)
     try:
@@ -24,6 +30,18 @@ def locked(run_folder: Path) -> Iterator[None]:
     finally:
         with suppress(OSError):
             path.unlink()
+
+
+def refuse_if_sealed(run_folder: Path) -> None:
+    """Raises InputError when the folder is sealed."""
+    if (run_folder / SEAL_NAME).exists():
+        raise InputError(
+            Problem(
+                f"is sealed by {SEAL_NAME}; a published reduction is not written to.",
+                str(run_folder),
+                remedy=f"Choose another --out folder or session name, or delete {SEAL_NAME} to break the seal.",
+            )
+        )
 
 
 def _acquire(path: Path) -> None:

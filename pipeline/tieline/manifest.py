@@ -1,4 +1,8 @@
-"""The run folder's own account: `run.json` with every digest, and the settings in effect as TOML."""
+"""The run folder's own account: `run.json` with every digest, and the settings in effect as TOML.
+
+The manifest ends with the digest of its own content, and has one spelling only: a byte changed by hand or by
+a failing disk shows.
+"""
 
 from __future__ import annotations
 
@@ -12,7 +16,7 @@ import pyarrow as pa
 from tieline import __version__
 from tieline.configuration import Session
 from tieline.plan import read_records, table_path
-from tieline.provenance import bytes_digest
+from tieline.provenance import bytes_digest, json_text
 from tieline.stages import STAGES
 from tieline.storage import write_text
 
@@ -48,10 +52,19 @@ def write_manifest(session: Session, inputs: Mapping[str, pa.Buffer]) -> None:
             stage.name: entry for stage in STAGES if (entry := _stage_entry(session.run_folder, stage))
         },
     }
-    write_text(
-        session.run_folder / MANIFEST,
-        json.dumps(manifest, indent=1, sort_keys=True, ensure_ascii=False) + "\n",
-    )
+    write_text(session.run_folder / MANIFEST, manifest_text(manifest))
+
+
+def manifest_text(manifest: Mapping[str, Any]) -> str:
+    """The one text of a manifest; its `digest` is put in anew."""
+    digest = manifest_digest(manifest)
+    return json.dumps({**manifest, "digest": digest}, indent=1, sort_keys=True, ensure_ascii=False) + "\n"
+
+
+def manifest_digest(manifest: Mapping[str, Any]) -> str:
+    """SHA-256 of everything in a manifest but its own digest."""
+    content = {key: value for key, value in manifest.items() if key != "digest"}
+    return bytes_digest(json_text(content).encode())
 
 
 def read_manifest(run_folder: Path) -> dict[str, Any]:

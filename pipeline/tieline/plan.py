@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import zip_longest
 from pathlib import Path
 from typing import Any
 
@@ -42,7 +43,7 @@ def judge(
     `records` holds the recorded origin of each output table, `digests` the content digest of every
     input that is already known; an input that is missing there has still to be recomputed.
     """
-    missing = [f"{table}.parquet is missing" for table in stage.outputs if records.get(table) is None]
+    missing = [f"{table}.parquet is missing or unreadable" for table in stage.outputs if records.get(table) is None]
     if len(missing) == len(stage.outputs):
         return Verdict(stage.name, "missing")
     if missing:
@@ -54,9 +55,10 @@ def judge(
     )
     if reasons:
         return Verdict(stage.name, "stale", tuple(reasons))
-    waiting = sorted({producer(name) for name in stage.inputs if name not in digests})
+    waiting = dict.fromkeys(producer(name) for name in stage.inputs if name not in digests)
     if waiting:
-        return Verdict(stage.name, "waiting", tuple(f"{name} is recomputed first" for name in waiting))
+        reason = f"recomputed only if {' or '.join(waiting)} comes out different"
+        return Verdict(stage.name, "waiting", (reason,))
     expected = stage_fingerprint(stage, settings, {name: digests[name] for name in names})
     odd = [table for table in stage.outputs if (records[table] or {}).get("fingerprint") != expected]
     if odd:
@@ -89,23 +91,39 @@ def _differences(
     return reasons
 
 
+class _NotSet:
+    """Stands for a key that one of two settings does not have."""
+
+
+NOT_SET = _NotSet()
+
+
 def settings_differences(old: Any, new: Any, key: str = "") -> list[str]:
-    """`total.olivine 98.5 -> 98.0` for every setting that differs between two nested values."""
+    """`total.limits.olivine[1] 98.5 → 98.0` for every setting that differs between two nested values."""
     if isinstance(old, dict) and isinstance(new, dict):
-        lines = []
-        for name in sorted({*old, *new}):
-            path = f"{key}.{name}" if key else name
-            lines += settings_differences(old.get(name), new.get(name), path)
-        return lines
-    if isinstance(old, list) and isinstance(new, list) and len(old) == len(new):
         return [
             line
-            for position, (before, after) in enumerate(zip(old, new, strict=True), start=1)
+            for name in sorted({*old, *new})
+            for line in settings_differences(
+                old.get(name, NOT_SET), new.get(name, NOT_SET), f"{key}.{name}" if key else name
+            )
+        ]
+    if isinstance(old, list) and isinstance(new, list) and _item_by_item(old, new):
+        return [
+            line
+            for position, (before, after) in enumerate(zip_longest(old, new, fillvalue=NOT_SET), start=1)
             for line in settings_differences(before, after, f"{key}[{position}]")
         ]
-    return [] if old == new else [f"{key} {_short(old)} -> {_short(new)}"]
+    return [] if old == new else [f"{key} {_short(old)} \N{RIGHTWARDS ARROW} {_short(new)}"]
+
+
+def _item_by_item(old: list[Any], new: list[Any]) -> bool:
+    """Lists of one length, and lists of sections, are compared item by item; others as a whole."""
+    return len(old) == len(new) or any(isinstance(item, dict) for item in (*old, *new))
 
 
 def _short(value: Any) -> str:
-    text = "(none)" if value is None else str(value)
+    if isinstance(value, _NotSet):
+        return "not set"
+    text = "none" if value is None else str(value)
     return text if len(text) <= 60 else f"{text[:57]}..."

@@ -16,14 +16,14 @@ import pyarrow as pa
 from tieline import __version__
 from tieline.configuration import Session
 from tieline.errors import DefectError, InputError, Problem
-from tieline.lock import locked
+from tieline.lock import locked, refuse_if_sealed
 from tieline.manifest import write_manifest
 from tieline.plan import Verdict, judge, read_records, stage_fingerprint, table_path
 from tieline.provenance import bytes_digest, content_digest
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
 from tieline.stages import NAMES, STAGES, Stage
-from tieline.storage import SCHEMA_VERSION, Pending, read_table
+from tieline.storage import SCHEMA_VERSION, Pending, damaged, read_table
 
 Progress = Callable[[str, str], None]
 
@@ -49,19 +49,27 @@ class Workspace:
 
     def table(self, name: str) -> pa.Table:
         if name not in self.tables:
-            self.tables[name] = read_table(table_path(self.session.run_folder, name), name)
+            path = table_path(self.session.run_folder, name)
+            table = read_table(path, name)
+            if content_digest(table) != self.digests[name]:
+                raise InputError(damaged(path, "its contents are not those it was written with"))
+            self.tables[name] = table
         return self.tables[name]
 
 
 def status(session: Session) -> list[Verdict]:
     """The verdict on every stage; reads input files and stage-file footers, writes nothing."""
-    work = _workspace(session)
+    return _verdicts(_workspace(session), STAGES)
+
+
+def _verdicts(work: Workspace, stages: Iterable[Stage]) -> list[Verdict]:
+    digests = dict(work.digests)
     verdicts = []
-    for stage in STAGES:
-        records = read_records(session.run_folder, stage)
-        verdict = judge(stage, work.session.settings, records, work.digests)
+    for stage in stages:
+        records = read_records(work.session.run_folder, stage)
+        verdict = judge(stage, work.session.settings, records, digests)
         if verdict.state == "current":
-            work.digests.update(_recorded_digests(records))
+            digests.update(_recorded_digests(records))
         verdicts.append(verdict)
     return verdicts
 
@@ -73,14 +81,18 @@ def run(
     until: str | None = None,
     fresh: bool = False,
     progress: Progress = lambda stage, state: None,
+    planned: Callable[[list[Verdict]], None] = lambda verdicts: None,
 ) -> list[StageReport]:
     """Brings the run folder up to date and returns what was done, stage by stage.
 
     `only` recomputes one stage from current files before it; `until` stops after a stage; `fresh`
-    recomputes everything. Raises InputError with every problem found, and then has changed nothing.
+    recomputes everything. `planned` is told the verdicts before any work is done. Raises InputError with
+    every problem found, and then has changed nothing.
     """
     stages = _selected(only, until)
+    refuse_if_sealed(session.run_folder)
     work = _workspace(session)
+    planned(_verdicts(work, stages))
     session.run_folder.mkdir(parents=True, exist_ok=True)
     with locked(session.run_folder), Pending() as pending:
         reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]

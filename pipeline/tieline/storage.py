@@ -12,6 +12,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from tieline.columns import TABLES
+from tieline.errors import InputError, Problem
 from tieline.tables import declared
 
 # Raised when the meaning of a stage file changes; a file of another version is stale.
@@ -92,9 +93,24 @@ def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[s
 
 
 def read_table(path: Path, name: str) -> pa.Table:
-    """Reads one stage table; raises DefectError when its columns are not the declared ones."""
-    table = pq.read_table(path, page_checksum_verification=True)
+    """Reads one stage table.
+
+    Raises InputError for a damaged file, DefectError when its columns are not the declared ones.
+    """
+    try:
+        table = pq.read_table(path, page_checksum_verification=True)
+    except (OSError, ValueError, pa.ArrowException) as error:
+        raise InputError(damaged(path, str(error).splitlines()[0] if str(error) else "unreadable")) from None
     return declared(table.replace_schema_metadata(None), TABLES[name])
+
+
+def damaged(path: Path, what: str) -> Problem:
+    """How a stage file that cannot be trusted is reported."""
+    return Problem(
+        f"is damaged: {what}.",
+        str(path),
+        remedy="Delete it, and the next run makes it anew; `tieline audit` tells what else changed.",
+    )
 
 
 def read_record(path: Path) -> dict[str, Any] | None:
