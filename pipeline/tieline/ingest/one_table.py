@@ -115,7 +115,7 @@ def _read_rows(
     keep, blank = spot_rows(grid, roles.labels, labels, table.skip_row_labels, read.asides)
     spots, unmatched = read_spots(table, rows, labels)
     spots = with_phases(with_materials(spots, settings.reference_materials.names), settings.phases)
-    _set_aside_unlabelled(read, grid, spots, keep, unmatched, roles)
+    _set_aside_unlabelled(read, grid, spots, keep, unmatched, settings.on_unreadable)
     spots = spots.kept(keep)
     spots = _unique(read, spots, settings)
     distance = _numbers(read, spots.row, spots.distance_um, "distance_um", grid, roles)
@@ -146,9 +146,9 @@ def _read_rows(
 
 
 def _set_aside_unlabelled(
-    read: TableRead, grid: Grid, spots: Spots, keep: Mask, unmatched: Mask, roles: Roles
+    read: TableRead, grid: Grid, spots: Spots, keep: Mask, unmatched: Mask, on_unreadable: str
 ) -> None:
-    """Rows without a usable spot, phase or experiment label; `keep` loses them.
+    """Rows without a usable spot, phase or experiment label; `keep` loses them when they are set aside.
 
     Where a table has no such label at all, that is one problem and not one for every row.
     """
@@ -159,6 +159,7 @@ def _set_aside_unlabelled(
         "no phase label": spots.phase.is_missing(),
         "no experiment label": spots.experiment.is_missing() & is_unknown,
     }
+    told = np.zeros(len(spots), dtype=bool)
     for reason, mask in missing.items():
         what = reason.removeprefix("no ").removesuffix(" label")
         if what in ("phase", "experiment") and mask[keep].any() and not _can_tell(read.table, what):
@@ -167,8 +168,10 @@ def _set_aside_unlabelled(
                 Problem(f"no column tells the {what}.", read.table.path, grid.found.header_row, remedy=remedy)
             )
             continue
-        _set_aside_rows(read, grid, np.flatnonzero(mask & keep), reason)
-        keep &= ~mask
+        _set_aside_rows(read, grid, np.flatnonzero(mask & keep & ~told), reason)
+        told |= mask
+    if on_unreadable == "set-aside":  # where the run stops, the cells of these rows are looked at as well
+        keep &= ~told
 
 
 def _can_tell(table: Table, what: str) -> bool:

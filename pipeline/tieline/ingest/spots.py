@@ -109,8 +109,9 @@ def _group(match: re.Match[str] | None, name: str) -> str | None:
 
 def duplicates(spots: Spots) -> dict[str, list[int]]:
     """Spot label -> the rows it stands in, for labels that stand in more than one."""
-    counts = np.bincount(spots.spot.codes, minlength=len(spots.spot.known))
-    repeated = np.flatnonzero(counts[spots.spot.codes] > 1)
+    codes = spots.spot.codes
+    counts = np.bincount(codes[codes >= 0], minlength=len(spots.spot.known))
+    repeated = np.flatnonzero(np.append(counts, 0)[codes] > 1)
     found: dict[str, list[int]] = {}
     for place in repeated.tolist():
         found.setdefault(spots.spot.known[spots.spot.codes[place]], []).append(int(spots.row[place]))

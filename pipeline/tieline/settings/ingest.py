@@ -155,7 +155,8 @@ class ReferenceMaterials(Settings):
     )
     names: dict[str, tuple[str, ...]] = Field(
         default_factory=dict,
-        description="material -> its spellings in the phase, experiment or spot column; a spelling may end in *",
+        description="material -> its spellings in the phase, experiment or spot column, which may end in *; "
+        "by default the materials of the accepted values",
     )
 
 
