@@ -64,8 +64,10 @@ def run(
     if only is not None and until is not None:
         _fail_usage("--only and --until exclude each other.")
     session = _load(config, overrides, out)
-    with terminal.progress(quiet or json) as progress:
-        reports = runner.run(session, only=only, until=until, fresh=fresh, progress=progress)
+    with terminal.progress(quiet or json) as (progress, planned):
+        reports = runner.run(
+            session, only=only, until=until, fresh=fresh, progress=progress, planned=planned
+        )
     if json:
         _print_json(terminal.run_as_json(session, reports))
     elif not quiet:
@@ -98,11 +100,12 @@ def status(
     """
     from tieline import runner, terminal
 
-    verdicts = runner.status(_load(config, overrides, out))
+    session = _load(config, overrides, out)
+    verdicts = runner.status(session)
     if json:
-        _print_json({"stages": [vars(verdict) for verdict in verdicts]})
+        _print_json(terminal.status_as_json(session, verdicts))
     else:
-        terminal.show_status(verdicts)
+        terminal.show_status(session, verdicts)
 
 
 @app.command()

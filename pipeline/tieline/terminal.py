@@ -12,6 +12,8 @@ from rich.text import Text
 
 from tieline.configuration import Session
 from tieline.errors import Problem
+from tieline.lock import SEAL_NAME
+from tieline.manifest import read_manifest
 from tieline.plan import Verdict, table_path
 from tieline.runner import StageReport
 from tieline.storage import read_table
@@ -26,15 +28,32 @@ def printable(text: object) -> str:
     return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in str(text))
 
 
+Progress = tuple[Callable[[str, str], None], Callable[[Sequence[Verdict]], None]]
+
+
 @contextmanager
-def progress(quiet: bool) -> Iterator[Callable[[str, str], None]]:
-    """A callback that shows the running stage on a terminal and nothing elsewhere."""
-    console = Console(stderr=True)
-    if quiet or not console.is_terminal:
-        yield lambda stage, state: None
-        return
-    with console.status("starting") as shown:
-        yield lambda stage, state: shown.update(f"{stage} {state}")
+def progress(quiet: bool) -> Iterator[Progress]:
+    """Callbacks for the running stage, shown on a terminal only, and for the plan before any work."""
+    console = Console(stderr=True, highlight=False, soft_wrap=True)
+    if quiet:
+        yield lambda stage, state: None, lambda verdicts: None
+    elif not console.is_terminal:
+        yield lambda stage, state: None, lambda verdicts: _show_plan(console, verdicts)
+    else:
+        with console.status("starting") as shown:
+            yield (
+                lambda stage, state: shown.update(f"{stage} {state}"),
+                lambda verdicts: _show_plan(console, verdicts),
+            )
+
+
+def _show_plan(console: Console, verdicts: Sequence[Verdict]) -> None:
+    """Which stages are recomputed and because of what; nothing on a first run, where all of them are."""
+    stale = [verdict for verdict in verdicts if verdict.state == "stale"]
+    for verdict in stale:
+        console.print(
+            Text(f"recomputing {verdict.stage}: {printable('; '.join(verdict.reasons))}", style="dim")
+        )
 
 
 def show_problems(problems: Sequence[Problem]) -> None:
@@ -55,6 +74,8 @@ def show_run(session: Session, reports: Sequence[StageReport]) -> None:
     if reports[-1].verdict.stage in ("classify", "assess") and path.exists():
         for table in partition_tables(read_table(path, "classify"), console.width):
             console.print(table)
+    for text in session.overrides:
+        console.print(Text(f"With --set {printable(text)}", style="bold"))
     console.print(Text(f"Results: {session.run_folder}", style="bold"))
 
 
@@ -82,15 +103,35 @@ def _show_remarks(console: Console, reports: Sequence[StageReport]) -> None:
         console.print(Text(f"  and {len(remarks) - MOST_REMARKS} more in run.json"))
 
 
-def show_status(verdicts: Sequence[Verdict]) -> None:
-    """One line per stage: its state and the reasons."""
+def show_status(session: Session, verdicts: Sequence[Verdict]) -> None:
+    """One line per stage: its state and the reasons; and what `--set` changed."""
     table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
     for name in ("stage", "state", "because"):
         table.add_column(name)
     for verdict in verdicts:
         state = Text(verdict.state, style=STATE_STYLES[verdict.state])
         table.add_row(verdict.stage, state, printable("; ".join(verdict.reasons)))
-    Console(highlight=False).print(table)
+    console = Console(highlight=False)
+    console.print(table)
+    for text in _recorded_overrides(session):
+        console.print(Text(f"the results were made with --set {printable(text)}"))
+    if (session.run_folder / SEAL_NAME).exists():
+        console.print(Text(f"sealed by {SEAL_NAME}: nothing is written to {session.run_folder}"))
+
+
+def status_as_json(session: Session, verdicts: Sequence[Verdict]) -> dict[str, Any]:
+    return {
+        "session": session.settings.session,
+        "run_folder": str(session.run_folder),
+        "overrides": list(session.overrides),
+        "overrides_of_the_results": _recorded_overrides(session),
+        "sealed": (session.run_folder / SEAL_NAME).exists(),
+        "stages": [vars(verdict) for verdict in verdicts],
+    }
+
+
+def _recorded_overrides(session: Session) -> list[str]:
+    return [str(text) for text in read_manifest(session.run_folder).get("overrides", [])]
 
 
 def show_check(session: Session, reports: Sequence[StageReport]) -> None:
