@@ -67,14 +67,14 @@ def fit_variance_function(values: FloatArray, sigmas: FloatArray) -> VarianceFun
     x = x / scale[:, None, :]
     reference = np.sum(np.where(known, variance, 0.0), axis=1) / np.maximum(count, 1)
     coefficients = np.zeros((*reference.shape, 3))
-    weight_variance = variance
+    weight_variance = np.where(known, variance, 1.0)
     for _ in range(2):
         weight = np.where(known, 1.0 / weight_variance**2, 0.0)
         coefficients = _nonnegative_quadratic(x, variance, weight, reference)
         fitted = coefficients[:, None, :, 0] + x * (
             coefficients[:, None, :, 1] + x * coefficients[:, None, :, 2]
         )
-        weight_variance = np.maximum(fitted, 0.05 * reference[:, None, :]) + np.finfo(float).tiny
+        weight_variance = np.where(known, np.maximum(fitted, 0.05 * reference[:, None, :]), 1.0)
     smallest = np.min(np.where(known, variance, np.inf), axis=1, initial=np.inf)
     unknown = count == 0
     parts = [coefficients[..., 0], coefficients[..., 1] / scale, coefficients[..., 2] / scale**2]

@@ -14,7 +14,7 @@ _DETECTION_PROBABILITY = 0.95
 class ZoningScores(NamedTuple):
     """Zoning of every group, all (G,) but the score (G, n); NaN (zoned False) where it cannot be tested.
 
-    score: relative change of elements of low partition coefficient in that spot; change: its regression
+    score: relative change of elements of low partition coefficient in that spot, to first order; change: its regression
     over the range of distances, with its standard error; p_value two-sided; zoned: p below alpha.
     smallest_change: what this group would have shown in 95 % of cases: nothing smaller can be called
     unzoned. grains, degrees_of_freedom; within_share: share of the variance of distance that lies within
@@ -37,7 +37,9 @@ class ZoningScores(NamedTuple):
         degrees = np.where(self.degrees_of_freedom >= 1, self.degrees_of_freedom, np.nan)
         critical = stdtrit(degrees, 1 - alpha / 2)
         shift = np.abs(change) / self.change_error
-        return np.asarray(1 - nctdtr(degrees, shift, critical) + nctdtr(degrees, shift, -critical))
+        # scipy returns NaN for the opposite tail where it vanishes.
+        opposite = np.nan_to_num(nctdtr(degrees, shift, -critical))
+        return np.asarray(1 - nctdtr(degrees, shift, critical) + opposite)
 
 
 def zoning_scores(
