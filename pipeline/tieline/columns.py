@@ -98,6 +98,61 @@ CONVERT = TableSpec(
     ),
 )
 
+FORMULA_KEYS = tuple(
+    column
+    for column in SPOT_KEYS
+    if column.name in ("spot", "table", "row", "technique", "experiment", "phase")
+)
+COMPONENT_MEANINGS = {
+    "mg_number": "Mg/(Mg+Fe), molar, total iron; Fo in olivine",
+    "cr_number": "Cr/(Cr+Al), molar",
+    "an": "Ca/(Ca+Na+K), molar; feldspars only",
+    "ab": "Na/(Ca+Na+K), molar; feldspars only",
+    "or": "K/(Ca+Na+K), molar; feldspars only",
+    "wo": "Ca/(Ca+Mg+Fe+Mn), molar; pyroxenes only",
+    "en": "Mg/(Ca+Mg+Fe+Mn), molar; pyroxenes only, ferrosilite being the rest",
+}
+
+CONVERT_FORMULA = TableSpec(
+    "convert.formula",
+    "spot with a whole analysis",
+    (
+        *FORMULA_KEYS,
+        Column("total_wt", "number", "oxide total, oxygen replaced by halogens taken off", "wt%", True),
+        Column("total_sd_wt", "number", "its standard uncertainty from counting", "wt%", True),
+        Column("oxygens", "number", "oxygens per formula unit; null for phases without a formula", "1", True),
+        Column("cation_sum", "number", "cations per formula unit, all iron ferrous", "1", True),
+        Column("cation_sum_sd", "number", "its standard uncertainty from counting", "1", True),
+        Column(
+            "ferric_fraction",
+            "number",
+            "ferric over total iron by charge balance, where asked for",
+            "1",
+            True,
+        ),
+        Column("ferric_fraction_sd", "number", "its standard uncertainty from counting", "1", True),
+        *(
+            column
+            for name, meaning in COMPONENT_MEANINGS.items()
+            for column in (
+                Column(name, "number", meaning, "1", True),
+                Column(f"{name}_sd", "number", "its standard uncertainty from counting", "1", True),
+            )
+        ),
+    ),
+)
+
+CONVERT_CATIONS = TableSpec(
+    "convert.cations",
+    "spot with a formula x element",
+    (
+        *FORMULA_KEYS,
+        ELEMENT,
+        Column("cations", "number", "atoms per formula unit, all iron ferrous", "1"),
+        Column("cations_sd", "number", "its standard uncertainty from counting", "1", True),
+    ),
+)
+
 CALIBRATE = TableSpec(
     "calibrate",
     "batch x element",
@@ -440,6 +495,8 @@ TABLES: dict[str, TableSpec] = {
         INGEST_SET_ASIDE,
         INGEST_EXPERIMENTS,
         CONVERT,
+        CONVERT_FORMULA,
+        CONVERT_CATIONS,
         CALIBRATE,
         CALIBRATE_MATERIALS,
         SCREEN,

@@ -15,6 +15,7 @@ from tieline.arrays import BoolArray, FloatArray, Labels, flags, labels, numbers
 from tieline.chemistry.oxides import parse_oxide, wt_percent_per_ppm
 from tieline.columns import CONVERT, VALUE_KEYS
 from tieline.errors import DefectError, InputError, Problem
+from tieline.formula_units import formula_tables
 from tieline.internal_standard import Rescaling, rescaling
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.chemistry import ConvertSettings
@@ -49,6 +50,7 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
     element_labels = _element_labels(analyte, element)
     values, summed, remarks = _iron_in_two_columns(ingest, analyte, values)
     values, normalised = _normalised(ingest, element_labels, values, settings)
+    formulas = formula_tables(ingest, element_labels, values.value, values.sigma, settings.formula)
     rescaled = _internal_standards(ingest, element_labels, values, settings)
     values = values.scaled(rescaled.factor)
     columns = {column.name: ingest.column(column.name) for column in VALUE_KEYS}
@@ -67,7 +69,7 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
         },
     )
     ledger = _ledger(ingest, values, summed, rescaled)
-    return StageResult({"convert": table}, ledger, (*remarks, *normalised, *rescaled.remarks))
+    return StageResult({"convert": table, **formulas}, ledger, (*remarks, *normalised, *rescaled.remarks))
 
 
 def _analytes(ingest: pa.Table) -> tuple[Labels, list[str], FloatArray]:

@@ -82,7 +82,7 @@ STAGES: tuple[Stage, ...] = (
         name="convert",
         revision=1,
         inputs=("ingest",),
-        outputs=("convert",),
+        outputs=("convert", "convert.formula", "convert.cations"),
         settings=lambda settings: settings.convert,
         counted="ingest",
     ),

@@ -39,12 +39,24 @@ class InternalStandard(Settings):
     )
 
 
+class FormulaSettings(Settings):
+    """Formula units of whole analyses."""
+
+    oxygens: dict[str, float] = Field(
+        default_factory=dict, description="phase -> oxygens per formula unit, beside or instead of the phase table's"
+    )
+    ferric: tuple[str, ...] = Field(
+        (), description="phases whose ferric iron is estimated by charge balance (Droop 1987)"
+    )
+
+
 class ConvertSettings(Settings):
     """Section [convert]."""
 
     internal_standard: tuple[InternalStandard, ...] = Field(
         (), description="internal standards, one per technique"
     )
+    formula: FormulaSettings = Field(FormulaSettings(), description="formula units")
     normalise: dict[str, float] = Field(
         default_factory=dict,
         description="technique -> total in wt% to which the oxide sum of every spot is normalised; off by default",
