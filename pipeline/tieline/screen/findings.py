@@ -90,6 +90,22 @@ def no_findings(code: str) -> Findings:
     return Findings(code, whole, whole, nothing, nothing, nothing, [], [])
 
 
+def joined(code: str, parts: Sequence[Findings]) -> Findings:
+    """Findings of one code put together."""
+    if not parts:
+        return no_findings(code)
+    return Findings(
+        code,
+        np.concatenate([part.spot for part in parts]),
+        np.concatenate([part.analyte for part in parts]),
+        np.concatenate([part.statistic for part in parts]),
+        np.concatenate([part.threshold for part in parts]),
+        np.concatenate([part.p_value for part in parts]),
+        action=[entry for part in parts for entry in part.action],
+        detail=[entry for part in parts for entry in part.detail],
+    )
+
+
 def findings_table(parts: Sequence[Findings], session: Session) -> pa.Table:
     """The table of findings: rulings, then tests in document order; within a code by spot and analyte."""
     parts = [part for part in parts if len(part)]

@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
-from tieline.screen.findings import WHOLE_SPOT, Findings, no_findings
+from tieline.screen.findings import Findings, joined, spot_findings
 from tieline.screen.overlap import GLASS_OVERLAP, Scored
 from tieline.screen.session import Session
 from tieline.settings.screen import OverlapSettings
+
+Places = tuple[IntArray, IntArray]  # groups and spots within the arrays of one part
 
 # How many of the most affected elements a finding names.
 NAMED_ELEMENTS = 3
@@ -68,45 +71,46 @@ def overlap_findings(
     With `use = "unmix"` an overlapped spot is only marked, for its overlap is taken out; something else is never
     unmixed.
     """
-    chosen = np.flatnonzero(verdicts.flagged())
-    if not len(chosen):
-        return no_findings(code)
     drop = settings.action if settings.use != "mark" else "mark"
-    columns: dict[str, list[float]] = {"statistic": [], "threshold": [], "p_value": []}
-    actions, details = [], []
-    for at in chosen:
-        part = parts[verdicts.part[at]]
-        place = int(verdicts.group[at]), int(verdicts.spot[at])
-        if verdicts.kind[at] == _FOREIGN:
-            statistic, threshold, p_value = _residual(part, place, settings.something_else_p)
-            actions.append(drop)
-            details.append(_something_else(session, part, place))
-        else:
-            statistic, threshold = float(part.scores.z[place]), settings.z
-            p_value = _upper_tail(statistic)
-            actions.append("mark" if settings.use == "unmix" else drop)
-            details.append(_contains(session, part, place))
-        for name, value in zip(columns, (statistic, threshold, p_value), strict=True):
-            columns[name].append(value)
-    spots = parts[0].measured.spots[verdicts.row[chosen]]
-    numbers = {name: np.array(values) for name, values in columns.items()}
-    return Findings(code, spots, np.full(len(spots), WHOLE_SPOT), **numbers, action=actions, detail=details)
+    found: list[Findings] = []
+    for number, part in enumerate(parts):
+        of_part = verdicts.part == number
+        for kind in (_EXPLAINED_OVERLAP, _FOREIGN):
+            chosen = of_part & (verdicts.kind == kind)
+            at = verdicts.group[chosen], verdicts.spot[chosen]
+            spots = part.measured.spots[verdicts.row[chosen]]
+            if kind == _FOREIGN:
+                statistic, limit, p_value = _residuals(part, at, settings.something_else_p)
+                found.append(
+                    spot_findings(
+                        code, drop, spots, statistic, limit, p_value, _something_else(session, part, at)
+                    )
+                )
+            else:
+                action = "mark" if settings.use == "unmix" else drop
+                z = part.scores.z[at]
+                found.append(
+                    spot_findings(
+                        code, action, spots, z, settings.z, _upper_tail(z), _contains(session, part, at)
+                    )
+                )
+    return joined(code, found)
 
 
-def _upper_tail(z: float) -> float:
+def _upper_tail(z: FloatArray) -> FloatArray:
     from scipy.special import ndtr
 
-    return float(ndtr(-z))
+    return np.asarray(ndtr(-z))
 
 
-def _residual(part: Scored, place: tuple[int, int], p_limit: float) -> tuple[float, float, float]:
-    """Reduced chi-square of what mixing does not explain, its limit, and its p-value."""
+def _residuals(part: Scored, at: Places, p_limit: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Reduced chi-squares of what mixing does not explain, their limits, and p-values."""
     from scipy.special import chdtri
 
     scores = part.scores
-    degrees = max(float(scores.residual_dof[place]), 1.0)
-    limit = float(chdtri(degrees, p_limit)) / degrees
-    return float(scores.residual_chi2[place]) / degrees, limit, float(scores.residual_p[place])
+    degrees = np.maximum(scores.residual_dof[at], 1.0)
+    limit = chdtri(degrees, np.full(len(degrees), p_limit)) / degrees
+    return scores.residual_chi2[at] / degrees, limit, scores.residual_p[at]
 
 
 def phases_of(session: Session, part: Scored, group: int) -> tuple[str, str]:
@@ -115,67 +119,72 @@ def phases_of(session: Session, part: Scored, group: int) -> tuple[str, str]:
     return host, session.spots.group_key(int(part.contaminant[group]))[1]
 
 
-def _contains(session: Session, part: Scored, place: tuple[int, int]) -> str:
-    scores = part.scores
-    fraction, sd = float(scores.fraction[place]), float(scores.sd_fraction[place])
-    host, contaminant = phases_of(session, part, place[0])
-    return f"{percent(fraction, sd)} {contaminant} in {host}; {_effects(part, place[0], fraction)}"
-
-
-def _something_else(session: Session, part: Scored, place: tuple[int, int]) -> str:
-    host, contaminant = phases_of(session, part, place[0])
-    odd = _odd_elements(part, place)
-    return (
-        f"something else than {host} with {contaminant} in it: another phase, an inclusion or a wrong label; "
-        f"farthest off: {', '.join(odd)}"
-    )
+def _contains(session: Session, part: Scored, at: Places) -> list[str]:
+    fraction, sd = part.scores.fraction[at], part.scores.sd_fraction[at]
+    effects = _effects(part, at[0], fraction)
+    texts = []
+    for group, value, uncertainty, effect in zip(at[0], fraction, sd, effects, strict=True):
+        host, contaminant = phases_of(session, part, int(group))
+        texts.append(f"{percent(value, uncertainty)} {contaminant} in {host}; {effect}")
+    return texts
 
 
 def percent(fraction: float, sd: float) -> str:
     """A fraction and its standard uncertainty in per cent, to the uncertainty's second digit."""
-    digits = int(np.clip(1 - np.floor(np.log10(100.0 * sd)), 0, 6)) if sd > 0 else 2
+    digits = max(0, min(6, 1 - math.floor(math.log10(100.0 * sd)))) if sd > 0 else 2
     return f"{100 * fraction:.{digits}f} \N{PLUS-MINUS SIGN} {100 * sd:.{digits}f} %"
 
 
-def _effects(part: Scored, group: int, fraction: float) -> str:
-    """The elements whose D this spot alone would change most, and how."""
-    clean, apparent = apparent_coefficients(part, group, fraction)
+def _effects(part: Scored, groups: IntArray, fraction: FloatArray) -> list[str]:
+    """For each spot, the elements whose D it alone would change most, and how."""
+    clean, apparent = apparent_coefficients(part, groups, fraction)
     with np.errstate(divide="ignore", invalid="ignore"):
         change = np.abs(np.log(apparent / clean))
     change = np.where(np.isfinite(change), change, -np.inf)
-    order = np.argsort(-change, kind="stable")[:NAMED_ELEMENTS]
-    named = [
-        f"{part.measured.analytes[at]} {clean[at]:.2g} to {apparent[at]:.2g}"
-        for at in order
-        if np.isfinite(change[at])
-    ]
-    return f"D of this spot alone: {', '.join(named)}" if named else "no D to compare"
+    most = np.argsort(-change, axis=1, kind="stable")[:, :NAMED_ELEMENTS]
+    texts = []
+    for row, columns in enumerate(most.tolist()):
+        named = [
+            f"{part.measured.analytes[at]} {clean[row, at]:.2g} to {apparent[row, at]:.2g}"
+            for at in columns
+            if change[row, at] >= 0
+        ]
+        texts.append(f"D of this spot alone: {', '.join(named)}" if named else "no D to compare")
+    return texts
 
 
-def apparent_coefficients(part: Scored, group: int, fraction: float) -> tuple[FloatArray, FloatArray]:
-    """Crystal over melt (p,), clean and with this fraction in the spot; NaN where it is not known.
+def apparent_coefficients(
+    part: Scored, groups: IntArray, fraction: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Crystal over melt (k, p), clean and with these fractions (k,) in a spot of these groups; NaN: not known.
 
     A clean level that is not above zero by two standard errors is replaced by them, for D cannot be less than seen.
     """
     scores = part.scores
-    seen = 2.0 * np.sqrt(scores.level_variance[group])
-    level = np.fmax(scores.level[group], seen)
-    other = part.contaminant_mean[group]
-    fraction = float(np.clip(fraction, 0.0, 1.0))
-    mixed = (1.0 - fraction) * level + fraction * other
+    level = np.fmax(scores.level[groups], 2.0 * np.sqrt(scores.level_variance[groups]))
+    other = part.contaminant_mean[groups]
+    share = np.clip(fraction, 0.0, 1.0)[:, None]
+    mixed = (1.0 - share) * level + share * other
     with np.errstate(divide="ignore", invalid="ignore"):
         if part.code == GLASS_OVERLAP:
             return level / other, mixed / other
         return other / level, other / mixed
 
 
-def _odd_elements(part: Scored, place: tuple[int, int]) -> list[str]:
-    """The elements farthest from the fitted mixture, in standard deviations of a clean spot."""
-    group, spot = place
-    scores = part.scores
-    mixture = scores.level[group] + np.nan_to_num(scores.fraction[place]) * scores.contrast[group]
-    harmless = scores.nuisance[group] @ np.nan_to_num(scores.nuisance_amplitude[place])
-    off = (part.values[group, spot] - mixture - harmless) / np.sqrt(scores.spot_variance[group])
+def _something_else(session: Session, part: Scored, at: Places) -> list[str]:
+    """For each spot, the elements farthest from the fitted mixture, in standard deviations of a clean spot."""
+    groups, scores = at[0], part.scores
+    mixture = scores.level[groups] + np.nan_to_num(scores.fraction[at])[:, None] * scores.contrast[groups]
+    harmless = np.einsum("kpi,ki->kp", scores.nuisance[groups], np.nan_to_num(scores.nuisance_amplitude[at]))
+    off = (part.values[at] - mixture - harmless) / np.sqrt(scores.spot_variance[groups])
     off = np.where(np.isfinite(off), off, 0.0)
-    order = np.argsort(-np.abs(off), kind="stable")[:NAMED_ELEMENTS]
-    return [f"{part.measured.analytes[at]} {off[at]:+.1f} sd" for at in order]
+    most = np.argsort(-np.abs(off), axis=1, kind="stable")[:, :NAMED_ELEMENTS]
+    texts = []
+    for row, columns in enumerate(most.tolist()):
+        host, contaminant = phases_of(session, part, int(groups[row]))
+        odd = ", ".join(f"{part.measured.analytes[at]} {off[row, at]:+.1f} sd" for at in columns)
+        texts.append(
+            f"something else than {host} with {contaminant} in it: another phase, an inclusion or a wrong label; "
+            f"farthest off: {odd}"
+        )
+    return texts

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from tieline.arrays import FloatArray, IntArray
+from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.groups import CANNOT_TELL, FOUND, NOT_FOUND, TestResult, Verdict, remarks_by_phase
 from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Overlap, Scored
 from tieline.screen.overlap_findings import (
@@ -20,8 +21,6 @@ from tieline.screen.overlap_findings import (
 from tieline.screen.session import Session
 from tieline.settings.screen import OverlapSettings
 
-Entry = tuple[Scored, int]  # a part and the place of a group in it
-
 # Fewer clean spots than this do not establish the clean level.
 FEWEST_CLEAN = 3
 
@@ -32,28 +31,29 @@ _SCATTER_P = 0.01
 
 
 @dataclass(frozen=True)
-class _Counts:
-    """Of one group: spots judged, containing the contaminant, being something else."""
+class _Facts:
+    """Of one part, per group (G,): what could be seen, scatter of the clean spots, and of classes (G, 2) against sigma."""
 
-    judged: int
-    overlapped: int
-    foreign: int
-
-    @property
-    def clean(self) -> int:
-        return self.judged - self.overlapped - self.foreign
+    visible: FloatArray
+    scatter_p: FloatArray
+    above_lowest: FloatArray
+    majors_only: BoolArray
+    understated: BoolArray
+    overstated: BoolArray
 
 
 def overlap_result(session: Session, overlap: Overlap, settings: OverlapSettings) -> TestResult:
     """Findings on spots, verdicts on every group that was or could not be tested, and what a person must know."""
-    findings, verdicts, doubts = [], [], []
+    findings, verdicts = [], []
+    doubts: list[tuple[str, int]] = []
     for code in (GLASS_OVERLAP, CRYSTAL_OVERLAP):
         parts = [part for part in overlap.scored if part.code == code]
         spots = spot_verdicts(parts)
         findings.append(overlap_findings(session, parts, spots, code, settings))
+        counts = _counts(spots, overlap.measured.group, session.spots.groups.count)
+        facts = [_facts(part) for part in parts]
         for group, entries in _entries(parts).items():
-            counts = _counts(spots, overlap.measured.group, group)
-            verdict, doubt = _verdict(session, group, counts, entries, settings)
+            verdict, doubt = _verdict(session, group, counts[group], parts, facts, entries, settings)
             verdicts.append(verdict)
             doubts += [(message, group) for message in doubt]
     for group, (code, reason) in overlap.unscored.items():
@@ -71,102 +71,128 @@ def overlap_result(session: Session, overlap: Overlap, settings: OverlapSettings
     return TestResult(tuple(findings), tuple(verdicts), tuple(remarks))
 
 
-def _entries(parts: Sequence[Scored]) -> dict[int, list[Entry]]:
-    """group -> what it was scored against."""
-    entries: dict[int, list[Entry]] = {}
-    for part in parts:
+def _entries(parts: Sequence[Scored]) -> dict[int, list[tuple[int, int]]]:
+    """group -> (part, place in it) of everything it was scored against."""
+    entries: dict[int, list[tuple[int, int]]] = {}
+    for number, part in enumerate(parts):
         for place, group in enumerate(part.block.groups.tolist()):
-            entries.setdefault(group, []).append((part, place))
+            entries.setdefault(group, []).append((number, place))
     return entries
 
 
-def _counts(verdicts: SpotVerdicts, group_of_row: IntArray, group: int) -> _Counts:
-    first, last = np.searchsorted(group_of_row[verdicts.row], [group, group + 1])
-    kinds = verdicts.kind[first:last]
-    return _Counts(len(kinds), int(np.sum(kinds == 0)), int(np.sum(kinds == 2)))
+def _counts(spots: SpotVerdicts, group_of_row: IntArray, n_groups: int) -> list[list[int]]:
+    """Per group the spots that contain the contaminant, are clean, are something else."""
+    counts = np.zeros((n_groups, 3), dtype=np.int64)
+    np.add.at(counts, (group_of_row[spots.row], spots.kind), 1)
+    return [list(row) for row in counts.tolist()]
+
+
+def _facts(part: Scored) -> _Facts:
+    from scipy.special import chdtr, chdtrc
+
+    scores = part.scores
+    clean = scores.clean & (scores.sd_fraction > 0)
+    weight = np.where(clean, 1.0 / np.where(clean, scores.sd_fraction, 1.0) ** 2, 0.0)
+    fraction = np.where(clean, scores.fraction, 0.0)
+    number = clean.sum(axis=1)
+    mean = np.sum(weight * fraction, axis=1) / np.maximum(weight.sum(axis=1), np.finfo(float).tiny)
+    chi2 = np.sum(weight * (fraction - mean[:, None]) ** 2, axis=1)
+    lowest = np.min(np.where(clean, fraction, np.inf), axis=1)
+    mswd, degrees = np.nan_to_num(scores.mswd, nan=1.0), np.maximum(np.nan_to_num(scores.mswd_dof), 1.0)
+    enough = number >= FEWEST_CLEAN
+    return _Facts(
+        scores.detectable_fraction,
+        np.where(enough, chdtrc(np.maximum(number - 1.0, 1.0), chi2), np.nan),
+        np.where(enough, fraction.sum(axis=1) / np.maximum(number, 1) - lowest, 0.0),
+        np.logical_not((scores.used & part.is_trace).any(axis=1)),
+        (mswd > UNDERSTATED) & (chdtrc(degrees, mswd * degrees) < _SCATTER_P),
+        (mswd < OVERSTATED) & (chdtr(degrees, mswd * degrees) < _SCATTER_P),
+    )
 
 
 def _verdict(
-    session: Session, group: int, counts: _Counts, entries: Sequence[Entry], settings: OverlapSettings
+    session: Session,
+    group: int,
+    counts: Sequence[int],
+    parts: Sequence[Scored],
+    facts: Sequence[_Facts],
+    entries: Sequence[tuple[int, int]],
+    settings: OverlapSettings,
 ) -> tuple[Verdict, list[str]]:
-    part, place = entries[0]
-    code = part.code
-    visible = [(entry, float(entry[0].scores.detectable_fraction[entry[1]])) for entry in entries]
-    visible = [(entry, fraction) for entry, fraction in visible if np.isfinite(fraction)]
-    if not counts.judged or not visible:
-        size = int(np.sum(np.isfinite(part.values[place]).any(axis=1)))
+    overlapped, clean, foreign = counts
+    judged = sum(counts)
+    first, place = entries[0]
+    part, fact = parts[first], facts[first]
+    visible = {entry: float(facts[entry[0]].visible[entry[1]]) for entry in entries}
+    visible = {entry: fraction for entry, fraction in visible.items() if math.isfinite(fraction)}
+    if not judged or not visible:
+        size = int(np.isfinite(part.values[place]).any(axis=1).sum())
         reason = (
             "fewer than 3 spots"
             if size < FEWEST_CLEAN
             else "no uncertainties, or no element measured in both phases"
         )
-        return Verdict(group, code, size, CANNOT_TELL, f"not tested: {reason}"), []
-    names = [f"{100 * fraction:.2g} % {phases_of(session, *entry)[1]}" for entry, fraction in visible]
-    texts = [_summary(counts), f"smallest fraction visible {', '.join(names)}"]
+        return Verdict(group, part.code, size, CANNOT_TELL, f"not tested: {reason}"), []
+    names = [
+        f"{100 * fraction:.2g} % {phases_of(session, parts[number], at)[1]}"
+        for (number, at), fraction in visible.items()
+    ]
+    texts = [_summary(overlapped, judged, foreign), f"smallest fraction visible {', '.join(names)}"]
     doubts: list[str] = []
-    word = FOUND if counts.overlapped or counts.foreign else NOT_FOUND
+    word = FOUND if overlapped or foreign else NOT_FOUND
     p_value = None
-    if code == GLASS_OVERLAP:
-        p_value, bias = _clean_scatter(part, place)
-        if counts.clean < FEWEST_CLEAN:
+    if part.code == GLASS_OVERLAP:
+        p_value = float(fact.scatter_p[place])
+        if clean < FEWEST_CLEAN:
             word = CANNOT_TELL
             texts.append("clean level not established: D of incompatible elements are upper limits")
             doubts.append("fewer than 3 clean spots: the clean level is not established")
-        elif p_value is not None and p_value < settings.scatter_p:
-            texts.append(f"the unflagged spots scatter toward the {settings.melt_phase}: {bias}")
-            doubts.append(f"unflagged spots scatter toward the {settings.melt_phase}: all may contain some")
-        if not part.is_trace[part.scores.used[place]].any():
+        elif p_value < settings.scatter_p:
+            texts.append(
+                f"the unflagged spots scatter toward the {settings.melt_phase}{_bias(part, fact, place)}"
+            )
+            doubts.append(
+                f"unflagged spots scatter toward the {settings.melt_phase}: all may contain some, or be zoned"
+            )
+        if fact.majors_only[place]:
             texts.append("majors only: D of incompatible elements below that fraction are upper limits")
-    texts += _sigma_doubts(part, place)
-    detail = "; ".join(texts)
+    texts += _sigma_doubts(part, fact, place)
     return Verdict(
-        group, code, counts.judged, word, detail, max(fraction for _, fraction in visible), None, p_value
+        group, part.code, judged, word, "; ".join(texts), max(visible.values()), None, p_value
     ), doubts
 
 
-def _summary(counts: _Counts) -> str:
-    text = f"{counts.overlapped} of {counts.judged} spots overlap"
-    return f"{text}, {counts.foreign} are something else" if counts.foreign else text
+def _summary(overlapped: int, judged: int, foreign: int) -> str:
+    text = f"{overlapped} of {judged} spots overlap"
+    return f"{text}, {foreign} are something else" if foreign else text
 
 
-def _clean_scatter(part: Scored, place: int) -> tuple[float | None, str]:
-    """p-value of the scatter of the unflagged spots along the mixing line, and the bias it may mean."""
-    from scipy.special import chdtrc
-
-    scores = part.scores
-    clean = scores.clean[place] & (scores.sd_fraction[place] > 0)
-    if clean.sum() < FEWEST_CLEAN:
-        return None, ""
-    fraction, sd = scores.fraction[place][clean], scores.sd_fraction[place][clean]
-    weight = 1.0 / sd**2
-    mean = float(np.sum(weight * fraction) / np.sum(weight))
-    chi2 = float(np.sum(weight * (fraction - mean) ** 2))
-    above_lowest = float(np.mean(fraction) - np.min(fraction))
-    lowest, biased = apparent_coefficients(part, place, above_lowest)
-    known = np.flatnonzero(np.isfinite(lowest))
-    at = known[np.argmin(lowest[known])] if len(known) else None
-    bias = ""
-    if at is not None:
-        bias = f"D of {part.measured.analytes[at]} may be {lowest[at]:.2g} instead of {biased[at]:.2g}"
-    return float(chdtrc(clean.sum() - 1, chi2)), bias
+def _bias(part: Scored, fact: _Facts, place: int) -> str:
+    """What the lowest D would be if the lowest unflagged spot were the clean level, and not their mean."""
+    at = np.array([place])
+    lowest, biased = apparent_coefficients(part, at, fact.above_lowest[at])
+    if not np.isfinite(lowest).any():
+        return ""
+    column = int(np.nanargmin(lowest[0]))
+    return f": D of {part.measured.analytes[column]} may be {lowest[0, column]:.2g} instead of {biased[0, column]:.2g}"
 
 
-def _sigma_doubts(part: Scored, place: int) -> list[str]:
+def _sigma_doubts(part: Scored, fact: _Facts, place: int) -> list[str]:
     """Scatter that the stated sigmas do not explain, or that they exceed, for majors and for traces."""
-    from scipy.special import chdtr, chdtrc
-
     texts = []
-    mswd: FloatArray = part.scores.mswd[place]
-    for name, value, degrees in zip(("majors", "traces"), mswd, part.scores.mswd_dof[place], strict=True):
-        if not np.isfinite(value) or degrees < 1:
-            continue
-        root = float(np.sqrt(value))
-        if value > UNDERSTATED and chdtrc(degrees, value * degrees) < _SCATTER_P:
+    for name, mswd, understated, overstated in zip(
+        ("majors", "traces"),
+        part.scores.mswd[place],
+        fact.understated[place],
+        fact.overstated[place],
+        strict=True,
+    ):
+        if understated:
             texts.append(
-                f"{name} scatter {root:.1f} times their stated sigma: real spread, or sigma understated"
+                f"{name} scatter {math.sqrt(mswd):.1f} times their stated sigma: real spread, or sigma understated"
             )
-        elif value < OVERSTATED and chdtr(degrees, value * degrees) < _SCATTER_P:
+        elif overstated:
             texts.append(
-                f"{name} scatter only {root:.2f} times their stated sigma: overstated, so that less is seen"
+                f"{name} scatter only {math.sqrt(mswd):.2f} times their stated sigma: overstated, so that less is seen"
             )
     return texts

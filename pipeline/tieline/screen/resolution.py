@@ -37,24 +37,26 @@ class Resolution:
 
     def why(self) -> pa.DictionaryArray:
         """The codes that keep each value out, in order of precedence, joined by commas; empty when used."""
-        present, position = np.unique(self.reasons, return_inverse=True)
+        present = np.flatnonzero(np.bincount(self.reasons))
+        position = np.zeros(present.max(initial=0) + 1, dtype=np.int32)
+        position[present] = np.arange(len(present))
         texts = [
             ", ".join(code for bit, code in enumerate(_CODES) if reasons >> bit & 1)
             for reasons in present.tolist()
         ]
-        return pa.DictionaryArray.from_arrays(
-            pa.array(position.reshape(-1), pa.int32()), pa.array(texts, pa.string())
-        )
+        return pa.DictionaryArray.from_arrays(pa.array(position[self.reasons]), pa.array(texts, pa.string()))
 
     def ledger(self) -> Ledger:
         """Every value once, under the first of its reasons."""
-        present, number = np.unique(self.reasons, return_counts=True)
+        number = np.bincount(self.reasons)
+        present = np.flatnonzero(number)
+        number = number[present]
         outcomes = {"used": 0, REFERENCE_MATERIAL: 0, NOT_MEASURED: 0}
         for bit, code in enumerate(_CODES):
             first = (present & ((1 << (bit + 1)) - 1)) == 1 << bit
             if first.any():
                 outcomes[code if code in outcomes else f"left out by {code}"] = int(number[first].sum())
-        outcomes["used"] = int(number[present == 0].sum())
+        outcomes["used"] = int(np.sum(self.use))
         return Ledger("values", len(self.reasons), outcomes)
 
 

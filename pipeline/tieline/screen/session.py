@@ -132,9 +132,11 @@ def _measured(
     concentrations: Concentrations,
 ) -> Measured:
     analyte, element = names
-    of_technique, row_of_cell = np.unique(spots.of_row[rows], return_inverse=True)
-    codes, first, column_of_cell = np.unique(analyte.codes[rows], return_index=True, return_inverse=True)
-    cell = row_of_cell.reshape(-1), column_of_cell.reshape(-1)
+    of_technique, row_of_cell = _numbered(spots.of_row[rows], spots.count)
+    codes, column_of_cell = _numbered(analyte.codes[rows], len(analyte.texts))
+    element_of_column = np.empty(len(codes), dtype=np.int64)
+    element_of_column[column_of_cell] = element.codes[rows]
+    cell = row_of_cell, column_of_cell
     shape = (len(of_technique), len(codes))
     filled = np.zeros(shape, dtype=np.bool_)
     filled[cell] = True
@@ -153,7 +155,7 @@ def _measured(
         of_technique,
         spots.groups.code[of_technique],
         tuple(analyte.texts[code] for code in codes),
-        tuple(element.texts[code] for code in element.codes[rows[first]]),
+        tuple(element.texts[code] for code in element_of_column),
         codes,
         filled,
         matrix(concentrations.value),
@@ -161,3 +163,9 @@ def _measured(
         matrix(concentrations.limit),
         below,
     )
+
+
+def _numbered(codes: IntArray, n_codes: int) -> tuple[IntArray, IntArray]:
+    """The codes in use, ascending, and for every entry the place of its code among them."""
+    in_use = np.bincount(codes, minlength=n_codes) > 0
+    return np.flatnonzero(in_use), (np.cumsum(in_use) - 1)[codes]

@@ -16,13 +16,17 @@ from tieline.screen.cations import cation_findings
 from tieline.screen.findings import findings_table
 from tieline.screen.groups import TestResult, groups_table
 from tieline.screen.identity import identity_findings
-from tieline.screen.overlap import score_overlap
+from tieline.screen.imprecision import imprecision_result, reference_remarks
+from tieline.screen.outliers import outlier_result
+from tieline.screen.overlap import Scored, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
+from tieline.screen.ruling_groups import ruling_result
 from tieline.screen.rulings import read_rulings, ruling_findings
-from tieline.screen.session import Measured, Session, session_of
+from tieline.screen.session import Session, session_of
 from tieline.screen.totals import total_findings
-from tieline.screen.whole_analyses import whole_analyses
+from tieline.screen.whole_analyses import WholeAnalyses, whole_analyses
+from tieline.screen.zoning import zoning_result
 from tieline.settings.screen import ScreenSettings
 from tieline.tables import build
 
@@ -45,6 +49,9 @@ def screen(
     ruled = ruling_findings(rulings, session)
     results = _tests(session, settings)
     findings = (ruled, *(part for result in results for part in result.findings))
+    results.append(ruling_result(session, ruled, _dropped(session, results)))
+    if settings.imprecise.enabled:
+        results.append(TestResult(remarks=tuple(reference_remarks(calibrate))))
     resolution = resolve(convert, concentrations, session, findings)
     table = build(
         SCREEN,
@@ -65,13 +72,34 @@ def screen(
 def _tests(session: Session, settings: ScreenSettings) -> list[TestResult]:
     """Every enabled test on every technique, in document order."""
     results: list[TestResult] = []
+    scored: list[Scored] = []
     for measured in session.techniques:
-        results += _tests_of(session, measured, settings)
+        analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
+        before = _tests_of_compositions(session, analyses, settings)
+        results += before
+        if settings.overlap.enabled or settings.zoning.enabled:
+            whole = bool(analyses.complete.any())
+            overlap = score_overlap(session, measured, whole, _dropped(session, before), settings.overlap)
+            scored += overlap.scored
+            if settings.overlap.enabled:
+                results.append(overlap_result(session, overlap, settings.overlap))
+    if settings.zoning.enabled:
+        results.append(zoning_result(session, scored, settings.zoning))
+    dropped = _dropped(session, results)
+    for measured in session.techniques:
+        if settings.outlier.enabled:
+            results.append(outlier_result(session, measured, dropped, settings.outlier))
+        if settings.imprecise.enabled:
+            results.append(
+                imprecision_result(session, measured, settings.overlap.melt_phase, settings.imprecise)
+            )
     return results
 
 
-def _tests_of(session: Session, measured: Measured, settings: ScreenSettings) -> list[TestResult]:
-    analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
+def _tests_of_compositions(
+    session: Session, analyses: WholeAnalyses, settings: ScreenSettings
+) -> list[TestResult]:
+    """Tests of every spot by itself: total, cation sum, identity."""
     results = []
     if settings.total.enabled:
         results.append(total_findings(session, analyses, settings.total))
@@ -79,10 +107,6 @@ def _tests_of(session: Session, measured: Measured, settings: ScreenSettings) ->
         results.append(cation_findings(session, analyses, settings.cations))
     if settings.identity.enabled:
         results.append(identity_findings(session, analyses, settings.identity))
-    if settings.overlap.enabled:
-        whole = bool(analyses.complete.any())
-        overlap = score_overlap(session, measured, whole, _dropped(session, results), settings.overlap)
-        results.append(overlap_result(session, overlap, settings.overlap))
     return results
 
 

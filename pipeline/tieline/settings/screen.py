@@ -94,6 +94,17 @@ class ZoningSettings(TestSettings):
     """Growth zoning within grains."""
 
     p: float = Field(0.01, gt=0, lt=1, description="p-value of the zoning score's trend with distance")
+    least_change: float = Field(
+        0.05,
+        ge=0,
+        description="smallest relative change over the distances that counts as zoning; own choice, a smaller one "
+        "matters less to D than calibration does",
+    )
+    visible: float = Field(
+        0.2,
+        gt=0,
+        description="a group is called not zoned only if this relative change would have been seen; own choice",
+    )
     represent: Literal["all", "rim", "core"] = Field(
         "all", description="which spots of a zoned group represent equilibrium with the melt"
     )
