@@ -173,7 +173,8 @@ def _update_spread(
             )
     variance = counting + state.spread_variance()[:, None, :]
     standardised = squared / variance
-    _update_counting_factor(state, standardised, counting / variance, expected, number)
+    share = np.where(takes_part, counting / variance, 0.0)
+    _update_counting_factor(state, standardised, share, expected, number)
     state.kappa = element_inflation(np.sum(standardised, axis=1), degrees)
 
 
