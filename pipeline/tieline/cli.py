@@ -59,7 +59,7 @@ def run(
 
     Example: tieline run configs/ember.toml
     """
-    from tieline import runner, terminal
+    from tieline import runner, terminal, terminal_rulings
 
     if only is not None and until is not None:
         _fail_usage("--only and --until exclude each other.")
@@ -69,7 +69,7 @@ def run(
             session, only=only, until=until, fresh=fresh, progress=progress, planned=planned
         )
     if json:
-        _print_json(terminal.run_as_json(session, reports))
+        _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
     elif not quiet:
         terminal.show_run(session, reports)
 

@@ -101,6 +101,12 @@ def run(
     return reports
 
 
+def tables_of(session: Session, names: Iterable[str]) -> dict[str, pa.Table]:
+    """Stage tables of the run folder by name; of those that are not there none."""
+    paths = {name: table_path(session.run_folder, name) for name in names}
+    return {name: read_table(path, name) for name, path in paths.items() if path.exists()}
+
+
 def check(session: Session) -> list[StageReport]:
     """Everything `run` would do, without writing: raises InputError with every problem found."""
     work = _workspace(session)

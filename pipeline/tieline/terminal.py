@@ -10,6 +10,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
+from tieline import terminal_rulings
 from tieline.configuration import Session
 from tieline.errors import Problem
 from tieline.lock import SEAL_NAME
@@ -74,6 +75,7 @@ def show_run(session: Session, reports: Sequence[StageReport]) -> None:
     if reports[-1].verdict.stage in ("classify", "assess") and path.exists():
         for table in partition_tables(read_table(path, "classify"), console.width):
             console.print(table)
+    terminal_rulings.show(console, session, reports)
     for text in session.overrides:
         console.print(Text(f"With --set {printable(text)}", style="bold"))
     console.print(Text(f"Results: {session.run_folder}", style="bold"))
