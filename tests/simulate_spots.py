@@ -190,8 +190,8 @@ def simulate(
     return Spots(of, values, sigmas, glass, glass_sigmas, fraction)
 
 
-def oracle_sd_fraction(of: Phase, spread: float = 0.0, *, exchanged: bool = False) -> float:
-    """Standard deviation of the fraction for someone who knows composition, spread and variances exactly."""
+def oracle_filter(of: Phase, spread: float = 0.0, *, exchanged: bool = False) -> tuple[Array, float]:
+    """Weights (p,) and standard deviation of the fraction for someone who knows composition, spread and variances."""
     clean, other = (of.glass_ppm, of.host_ppm) if exchanged else (of.host_ppm, of.glass_ppm)
     own = np.zeros(len(clean)) if exchanged else np.where(of.is_trace, spread / 3, spread / 15)
     covariance = np.diag(of.variance(clean) + (own * clean) ** 2)
@@ -201,4 +201,11 @@ def oracle_sd_fraction(of: Phase, spread: float = 0.0, *, exchanged: bool = Fals
         growth_line = spread * clean * growth_factor(of.coefficients) * of.is_trace
         covariance += np.outer(growth_line, growth_line)
     contrast = other - clean
-    return float(1 / np.sqrt(contrast @ np.linalg.solve(covariance, contrast)))
+    weights = np.linalg.solve(covariance, contrast)
+    information = contrast @ weights
+    return weights / information, float(1 / np.sqrt(information))
+
+
+def oracle_sd_fraction(of: Phase, spread: float = 0.0, *, exchanged: bool = False) -> float:
+    """Standard deviation of the fraction of one clean spot for the same oracle."""
+    return oracle_filter(of, spread, exchanged=exchanged)[1]
