@@ -130,7 +130,10 @@ def reversed_isotopes_gzip() -> Layout:
     names = {"SiO2": "Wt% SiO2", "MgO": "MgO_wt%", "Sr88": "88Sr ppm"}
     bare = {"SiO2": "SiO2", "MgO": "MgO", "Sr88": "88Sr"}
     table = rows(lambda name: [names[name], f"{bare[name]} 2SE", f"LOD {bare[name]}"], _doubled_sigma)
-    setting = {"sigma": {"pattern": "{analyte} 2SE", "level": 2, "kind": "se"}, "limit": {"pattern": "LOD {analyte}"}}
+    setting = {
+        "sigma": {"pattern": "{analyte} 2SE", "level": 2, "kind": "se"},
+        "limit": {"pattern": "LOD {analyte}"},
+    }
     return Layout("t.csv.gz", gzip.compress(as_text(table).encode(), mtime=0), setting)
 
 
@@ -144,7 +147,11 @@ def split_labels() -> Layout:
     joined = [["Comment", *table[0][4:]]]
     joined += [["-".join([row[1], row[2], row[3] or "x", row[0]]), *row[4:]] for row in table[1:]]
     pattern = r"(?P<experiment>TX\d+)-(?P<phase>\w+)-(?:x|(?P<zone>rim|core))-(?P<spot>\d+)"
-    return Layout("t.csv", as_text(joined).encode(), {"columns": {}, "labels": {"column": "Comment", "pattern": pattern}})
+    return Layout(
+        "t.csv",
+        as_text(joined).encode(),
+        {"columns": {}, "labels": {"column": "Comment", "pattern": pattern}},
+    )
 
 
 def averages_between() -> Layout:
@@ -171,7 +178,15 @@ def units_below_xlsx() -> Layout:
     book.active.title = "Notes"
     sheet = book.create_sheet("Data")
     sheet.append(["Laser session"])
-    sheet.append(["Point", "Run", "Phase", "Zone", *(text for name in ANALYTES for text in (name, f"{name} 1s", f"{name} DL"))])
+    sheet.append(
+        [
+            "Point",
+            "Run",
+            "Phase",
+            "Zone",
+            *(text for name in ANALYTES for text in (name, f"{name} 1s", f"{name} DL")),
+        ]
+    )
     sheet.append(["", "", "", "", *(UNITS[name] for name in ANALYTES for _ in range(3))])
     for row in rows()[1:]:
         sheet.append([row[0], row[1], row[2], row[3], *map(_typed, row[4:])])
@@ -197,7 +212,11 @@ def ods() -> Layout:
         line = TableRow()
         for place, text in enumerate(row):
             typed = _typed(text) if number and place > 3 else text
-            cell = TableCell(valuetype="float", value=typed) if isinstance(typed, float) else TableCell(valuetype="string")
+            cell = (
+                TableCell(valuetype="float", value=typed)
+                if isinstance(typed, float)
+                else TableCell(valuetype="string")
+            )
             cell.addElement(P(text=text))
             line.addElement(cell)
         sheet.addElement(line)
@@ -224,7 +243,9 @@ def parquet() -> Layout:
 
 def neighbour_columns() -> Layout:
     """The uncertainty column is called `±` behind every analyte, the limits are constants."""
-    table = rows(lambda name: [f"{name} [{UNITS[name]}]", "±"], lambda spot, i: [spot.value[i], spot.sigma[i]])
+    table = rows(
+        lambda name: [f"{name} [{UNITS[name]}]", "±"], lambda spot, i: [spot.value[i], spot.sigma[i]]
+    )
     limits = {"SiO2": 0.02, "MgO": 0.015, "Sr88": 0.25}
     # The limit of the third analyte is in its own unit, as the setting says where no unit is given.
     return Layout("t.csv", as_text(table).encode(), {"sigma": {"pattern": "±"}, "limit": {"values": limits}})

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import pytest
+
 from ingest.layouts import ALL, ANALYTES, SPOTS, UNITS
 
 LABELS = ("spot", "experiment", "phase", "zone", "analyte", "unit", "technique", "batch")

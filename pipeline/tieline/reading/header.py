@@ -28,8 +28,8 @@ def is_numeric(text: str) -> bool:
 def find_header(rows: Sequence[Sequence[str]], expected: Iterable[str] = ()) -> int | None:
     """Index of the header among the first rows, or None.
 
-    The row holding most of the `expected` headers; without any, the first row that is at least half as wide
-    as the table and has no more than one number in ten cells.
+    The row holding most of the `expected` headers; without any, the first row that fills at least seven in ten
+    columns of the table and has no more than one number in ten cells.
     """
     wanted = {fold(text) for text in expected if text}
     if wanted:
@@ -41,7 +41,7 @@ def find_header(rows: Sequence[Sequence[str]], expected: Iterable[str] = ()) -> 
     usual = max(widths, key=lambda width: (widths[width], width)) if widths else 1
     for index, row in enumerate(rows):
         filled = [cell for cell in row if cell.strip()]
-        if len(filled) >= max(1, usual / 2) and sum(map(is_numeric, filled)) <= len(filled) / 10:
+        if len(filled) >= max(1, 0.7 * usual) and sum(map(is_numeric, filled)) <= len(filled) / 10:
             return index
     return None
 

@@ -1,4 +1,4 @@
-"""Workbook files are zip archives of XML: how large they become, checked before anything is built from them."""
+"""Workbook files are zip archives of XML: checked for size and damage before anything is built from them."""
 
 from __future__ import annotations
 
@@ -12,16 +12,29 @@ import pyarrow as pa
 from tieline.errors import InputError, Problem
 from tieline.reading.grid import ReadLimits
 from tieline.reading.input_file import InputFile
+from tieline.reading.sheet_scan import OdsScan, Places, XlsxScan, unescaped
 
 CHUNK = 1 << 20
-OVERLAP = 256  # an attribute that straddles two pieces is seen whole in one of them
-_CELL = re.compile(rb'<(?:\w+:)?c\b[^>]{0,200}?\br="([A-Z]{1,3})([0-9]{1,7})"')
-_REPEATED = re.compile(rb'number-(columns|rows)-repeated="([0-9]+)"')
 _WORKSHEET = re.compile(r"xl/worksheets/[^/]+\.xml", re.IGNORECASE)
-_SPREADSHEET_ROWS, _SPREADSHEET_COLUMNS = 1 << 20, 1 << 14
+_SHEET = re.compile(rb"<(?:\w+:)?sheet\b([^>]*)>")
+_RELATION = re.compile(rb"<(?:\w+:)?Relationship\b([^>]*)>")
+_ATTRIBUTE = re.compile(rb'([\w:]+)="([^"]*)"')
 
 
-def check_workbook(file: InputFile, limits: ReadLimits) -> None:
+class Scans:
+    """What the scan of a workbook's members found."""
+
+    def __init__(self) -> None:
+        self.members: dict[str, XlsxScan | OdsScan] = {}
+        self.sheet_members: dict[str, str] = {}
+
+    def lost_cells(self, sheet: str) -> Places:
+        """(row, column), from 0, -> text of the cells of a sheet that the reading library leaves out."""
+        member = self.sheet_members.get(sheet, "content.xml")
+        return self.members[member].lost_in(sheet) if member in self.members else {}
+
+
+def scan_workbook(file: InputFile, limits: ReadLimits) -> Scans:
     """Raises InputError for a file that is no zip archive, is damaged, or unpacks to more than allowed.
 
     Unpacks every member in pieces and counts, because the sizes an archive states may be lies; a sheet is
@@ -33,60 +46,69 @@ def check_workbook(file: InputFile, limits: ReadLimits) -> None:
                 raise InputError(
                     Problem("is protected by a password.", file.path, remedy="Save it without one.")
                 )
-            _check_members(file, archive, limits)
+            return _scan_members(file, archive, limits)
     except (zipfile.BadZipFile, zlib.error, EOFError, OSError, NotImplementedError, ValueError) as error:
-        message = f"is not a readable workbook ({str(error)[:120]})."
-        raise InputError(Problem(message, file.path, remedy="Save it again as .xlsx or .csv.")) from error
+        raise InputError(unreadable(file, error)) from error
 
 
-def _check_members(file: InputFile, archive: zipfile.ZipFile, limits: ReadLimits) -> None:
-    total = 0
+def unreadable(file: InputFile, error: BaseException) -> Problem:
+    """The problem of a workbook that cannot be opened."""
+    message = f"is not a readable workbook ({str(error)[:120]})."
+    return Problem(message, file.path, remedy="Save it again as .xlsx or .csv.")
+
+
+def _scan_members(file: InputFile, archive: zipfile.ZipFile, limits: ReadLimits) -> Scans:
+    scans, total = Scans(), 0
     for info in archive.infolist():
-        is_sheet = _WORKSHEET.fullmatch(info.filename) is not None
-        rows, columns = 1, 1
+        scan = _scan_of(info.filename)
         for piece in _pieces(archive, info):
             total += len(piece)
             if total > limits.expanded_bytes:
+                message = f"unpacks to more than {limits.expanded_bytes} bytes."
                 remedy = "If that is right, raise ingest.limits.expanded_mb."
-                raise InputError(
-                    Problem(f"unpacks to more than {limits.expanded_bytes} bytes.", file.path, remedy=remedy)
-                )
-            if is_sheet:
-                rows, columns = _spanned(piece, rows, columns)
-            elif info.filename == "content.xml":
-                _check_repeats(file, piece, limits)
-        if rows * columns > limits.cells:
-            message = f"{info.filename} spans {rows} rows and {columns} columns; at most {limits.cells} cells are read."
-            raise InputError(Problem(message, file.path, remedy="Delete stray cells far from the table."))
+                raise InputError(Problem(message, file.path, remedy=remedy))
+            if scan is not None:
+                scan.see(piece)
+        if scan is not None:
+            scan.end()
+            _check_reach(file, info.filename, scan, limits)
+            scans.members[info.filename] = scan
+    scans.sheet_members = _sheet_members(archive)
+    return scans
+
+
+def _scan_of(name: str) -> XlsxScan | OdsScan | None:
+    if _WORKSHEET.fullmatch(name):
+        return XlsxScan()
+    return OdsScan() if name == "content.xml" else None
 
 
 def _pieces(archive: zipfile.ZipFile, info: zipfile.ZipInfo) -> Iterator[bytes]:
-    """The member's bytes in pieces; each starts with the end of the one before."""
     with archive.open(info) as member:
-        before = b""
         while piece := member.read(CHUNK):
-            yield before + piece
-            before = piece[-OVERLAP:]
+            yield piece
 
 
-def _spanned(piece: bytes, rows: int, columns: int) -> tuple[int, int]:
-    references = set(_CELL.findall(piece))
-    for letters, digits in references:
-        rows = max(rows, int(digits))
-        columns = max(columns, _column_number(letters))
-    return rows, columns
+def _check_reach(file: InputFile, name: str, scan: XlsxScan | OdsScan, limits: ReadLimits) -> None:
+    if scan.rows * scan.columns > limits.cells:
+        message = f"{name} spans {scan.rows} rows and {scan.columns} columns; at most {limits.cells} cells are read."
+        raise InputError(Problem(message, file.path, remedy="Delete stray cells far from the table."))
 
 
-def _column_number(letters: bytes) -> int:
-    number = 0
-    for letter in letters:
-        number = number * 26 + letter - ord("A") + 1
-    return number
-
-
-def _check_repeats(file: InputFile, piece: bytes, limits: ReadLimits) -> None:
-    """A repeated run is written once and read many times; blank runs to the sheet's edge are usual and harmless."""
-    for axis, digits in set(_REPEATED.findall(piece)):
-        edge = _SPREADSHEET_ROWS if axis == b"rows" else _SPREADSHEET_COLUMNS
-        if int(digits[:12]) > edge:
-            raise InputError(Problem(f"repeats a cell {digits[:12].decode()} times.", file.path))
+def _sheet_members(archive: zipfile.ZipFile) -> dict[str, str]:
+    """Sheet name -> member of an XLSX archive; empty for others."""
+    names = set(archive.namelist())
+    if not {"xl/workbook.xml", "xl/_rels/workbook.xml.rels"} <= names:
+        return {}
+    targets = {}
+    for tag in _RELATION.findall(archive.read("xl/_rels/workbook.xml.rels")):
+        attributes = dict(_ATTRIBUTE.findall(tag))
+        target = unescaped(attributes.get(b"Target", b"")).removeprefix("/")
+        targets[attributes.get(b"Id", b"")] = target if target.startswith("xl/") else f"xl/{target}"
+    members = {}
+    for tag in _SHEET.findall(archive.read("xl/workbook.xml")):
+        attributes = dict(_ATTRIBUTE.findall(tag))
+        identity = next((value for key, value in attributes.items() if key.endswith(b":id")), b"")
+        if identity in targets:
+            members[unescaped(attributes.get(b"name", b""))] = targets[identity]
+    return members

@@ -15,7 +15,8 @@ from tieline.reading.delimited import check_width, decided_decimal, locate_heade
 from tieline.reading.grid import Block, Found, Grid, ReadLimits
 from tieline.reading.input_file import InputFile
 from tieline.reading.layout import Layout
-from tieline.reading.packed import check_workbook
+from tieline.reading.packed import scan_workbook, unreadable
+from tieline.reading.sheet_scan import Places
 
 HEAD_ROWS = 1000
 BLOCK_ROWS = 1 << 14
@@ -28,17 +29,23 @@ def read_workbook(file: InputFile, layout: Layout, limits: ReadLimits) -> Grid:
     Numbers are written with as many digits as they need to read back the same, with the layout's decimal
     mark. Cells merged downwards show their text in every row they cover, as they do in the spreadsheet.
     """
-    check_workbook(file, limits)
+    scans = scan_workbook(file, limits)
     try:
         with CalamineWorkbook.from_filelike(BytesIO(memoryview(file.data))) as workbook:
             name = _sheet_name(file, workbook.sheet_names, layout.sheet)
             sheet = workbook.get_sheet_by_name(name)
             _check_size(file, sheet, limits)
             rows: list[list[Cell]] = sheet.to_python(skip_empty_area=False)
+            _put_back(rows, scans.lost_cells(name))
             merged = _fill_merged(rows, sheet)
     except (CalamineError, OSError, ValueError) as error:
-        message = f"is not a readable workbook ({str(error)[:120]})."
-        raise InputError(Problem(message, file.path, remedy="Save it again as .xlsx or .csv.")) from error
+        raise InputError(unreadable(file, error)) from error
+    except BaseException as error:
+        if (
+            type(error).__name__ == "PanicException"
+        ):  # how the library shows that it met what it cannot handle
+            raise InputError(unreadable(file, error)) from error
+        raise
     return _grid(file, layout, limits, name, rows, merged)
 
 
@@ -64,6 +71,20 @@ def _check_size(file: InputFile, sheet: CalamineSheet, limits: ReadLimits) -> No
             f"the sheet has {sheet.total_height} rows and {sheet.total_width} columns, more than is read."
         )
         raise InputError(Problem(message, file.path, remedy="If that is right, raise ingest.limits.cells."))
+
+
+def _put_back(rows: list[list[Cell]], lost: Places) -> None:
+    """Error cells and formulas without a value, which the library reads as blanks."""
+    width = max((len(row) for row in rows), default=0)
+    for (row, column), text in sorted(lost.items()):
+        while row >= len(rows):
+            rows.append([""] * width)
+        if column >= width:
+            width = column + 1
+            for line in rows:
+                line.extend([""] * (width - len(line)))
+        if rows[row][column] == "":
+            rows[row][column] = text
 
 
 def _fill_merged(rows: list[list[Cell]], sheet: CalamineSheet) -> int:
