@@ -36,8 +36,9 @@ class SpotVerdicts:
     spot: IntArray
     kind: IntArray
 
-    def flagged(self) -> BoolArray:
-        return np.asarray(self.kind != _CLEAN)
+    def overlapped(self) -> BoolArray:
+        """Spots that contain some of a contaminant and nothing else."""
+        return np.asarray(self.kind == _EXPLAINED_OVERLAP)
 
 
 def spot_verdicts(parts: Sequence[Scored]) -> SpotVerdicts:

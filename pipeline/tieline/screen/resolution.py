@@ -27,9 +27,13 @@ _REFERENCE_BIT, _MISSING_BIT, _RULING_BIT = 1, 2, 4
 
 @dataclass(frozen=True)
 class Resolution:
-    """`reasons` (rows,): powers of two for the codes that keep the value out, added up; 0 when it is used."""
+    """`reasons` (rows,): powers of two for the codes that keep the value out, added up; 0 when it is used.
+
+    `kept` (rows,): a ruling keeps the value, as it was measured.
+    """
 
     reasons: IntArray
+    kept: BoolArray
 
     @property
     def use(self) -> BoolArray:
@@ -66,6 +70,7 @@ def resolve(
     """What keeps every row of `convert` out, from all findings, rulings among them."""
     cells = _Cells(session)
     reasons = np.zeros(convert.num_rows, dtype=np.int64)
+    kept = np.zeros(convert.num_rows, dtype=np.bool_)
     for part in findings:
         if part.code != RULING and len(part):
             bit = 1 << _CODES.index(part.code)
@@ -75,14 +80,15 @@ def resolve(
         for part in (part for part in findings if part.code == RULING):
             chosen = (part.analyte == WHOLE_SPOT) == whole
             keeps = np.array([action == "keep" for action in part.action], dtype=np.bool_)
-            reasons[cells.marked(part, chosen & keeps)] = 0
-            dropped = cells.marked(part, chosen & ~keeps)
-            reasons[dropped] |= _RULING_BIT
+            keep, drop = cells.marked(part, chosen & keeps), cells.marked(part, chosen & ~keeps)
+            reasons[keep] = 0
+            reasons[drop] |= _RULING_BIT
+            kept = (kept | keep) & ~drop
     has_value = np.isfinite(concentrations.value)
     has_limit = np.isfinite(concentrations.limit) & flags(convert, "below_limit")
     reasons[~has_value & ~has_limit] = _MISSING_BIT
     reasons[labels(convert, "material").codes >= 0] = _REFERENCE_BIT
-    return Resolution(reasons)
+    return Resolution(reasons, kept)
 
 
 class _Cells:

@@ -21,10 +21,10 @@ from tieline.screen.outliers import outlier_result
 from tieline.screen.overlap import Scored, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
-from tieline.screen.ruling_groups import ruling_result
 from tieline.screen.rulings import read_rulings, ruling_findings
 from tieline.screen.session import Session, session_of
 from tieline.screen.totals import total_findings
+from tieline.screen.unmixing import no_unmixing, unmixed_values
 from tieline.screen.whole_analyses import WholeAnalyses, whole_analyses
 from tieline.screen.zoning import zoning_result
 from tieline.settings.screen import ScreenSettings
@@ -47,16 +47,26 @@ def screen(
     concentrations = calibrated(convert, calibrate, ingest_spots)
     session = session_of(convert, concentrations)
     ruled = ruling_findings(rulings, session)
-    results = _tests(session, settings)
+    results, scored = _tests(session, settings)
+    unmixed = no_unmixing(convert.num_rows)
+    if settings.overlap.enabled and settings.overlap.use == "unmix":
+        unmixed, not_unmixed = unmixed_values(session, scored, settings.overlap)
+        results.append(TestResult(tuple(not_unmixed)))
     findings = (ruled, *(part for result in results for part in result.findings))
-    results.append(ruling_result(session, ruled, _dropped(session, results)))
     if settings.imprecise.enabled:
         results.append(TestResult(remarks=tuple(reference_remarks(calibrate))))
     resolution = resolve(convert, concentrations, session, findings)
     table = build(
         SCREEN,
         {column.name: convert.column(column.name) for column in VALUE_KEYS}
-        | {"element": convert.column("element"), "use": resolution.use, "why": resolution.why()},
+        | {
+            "element": convert.column("element"),
+            "use": resolution.use,
+            "why": resolution.why(),
+            "unmixed_ppm": np.where(resolution.kept, np.nan, unmixed.value),
+            "unmixed_sigma_ppm": np.where(resolution.kept, np.nan, unmixed.sigma),
+            "unmixed_shared_ppm": np.where(resolution.kept, np.nan, unmixed.shared),
+        },
     )
     tables = {
         "screen": table,
@@ -69,8 +79,8 @@ def screen(
     return StageResult(tables, resolution.ledger(), remarks)
 
 
-def _tests(session: Session, settings: ScreenSettings) -> list[TestResult]:
-    """Every enabled test on every technique, in document order."""
+def _tests(session: Session, settings: ScreenSettings) -> tuple[list[TestResult], list[Scored]]:
+    """Every enabled test on every technique, in document order; and the overlap scores."""
     results: list[TestResult] = []
     scored: list[Scored] = []
     for measured in session.techniques:
@@ -93,7 +103,7 @@ def _tests(session: Session, settings: ScreenSettings) -> list[TestResult]:
             results.append(
                 imprecision_result(session, measured, settings.overlap.melt_phase, settings.imprecise)
             )
-    return results
+    return results, scored
 
 
 def _tests_of_compositions(

@@ -87,6 +87,13 @@ class OverlapSettings(TestSettings):
         lt=1,
         description="p-value below which the scatter of unflagged spots along the mixing line is remarked; own choice",
     )
+    tracer_share: float = Field(
+        0.2,
+        gt=0,
+        le=1,
+        description="an analyte that carries at least this share of the information on the overlap is not unmixed, "
+        "for it has no value of its own; own choice",
+    )
     melt_phase: str = Field("glass", description="the phase taken as the melt")
 
 
