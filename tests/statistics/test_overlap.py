@@ -180,6 +180,25 @@ def test_values_missing_here_and_there_cost_only_their_information():
     np.testing.assert_array_equal(scores.residual_dof, (~missing & scores.used[:, None, :]).sum(axis=2) - 1.0)
 
 
+def test_values_below_the_limit_given_as_half_of_it_keep_power_and_false_alarms():
+    of = phase("olivine", "laser")
+    limit = 3 * np.sqrt(of.variance(np.zeros_like(of.host_ppm)))
+    rng = np.random.default_rng(23)
+    fraction = np.zeros((400, 8))
+    fraction[:, 0] = 1.4 * ORACLE_FACTOR * oracle_sd_fraction(of)
+    spots = simulate(rng, fraction, technique="laser")
+    below = spots.values < limit
+    assert below.mean() > 0.1
+    halved = score(
+        spots,
+        values=np.where(below, limit / 2, spots.values),
+        sigmas=np.where(below, limit / 2, spots.sigmas),
+    )
+    assert binomtest(int(halved.overlapped[:, 0].sum()), 400, 0.95, alternative="less").pvalue > 1e-3
+    alarms = halved.overlapped[:, 1:]
+    assert binomtest(int(alarms.sum()), alarms.size, 0.004, alternative="greater").pvalue > 1e-3
+
+
 @pytest.mark.parametrize("case", ["two spots", "no contaminant", "one element", "nothing"])
 def test_what_cannot_be_scored_has_no_score_and_no_finding(case):
     spots = some_spots(15, groups=2)

@@ -17,15 +17,12 @@ is_trace                 (p,)      bool; classes with spreads of their own; harm
 from dataclasses import dataclass, fields
 
 import numpy as np
-import numpy.typing as npt
 
 from tieline.statistics.groups import BoolArray, FloatArray, IntArray
-from tieline.statistics.overlap_covariance import fit_directions, leverages
-from tieline.statistics.overlap_fit import OverlapFit, fit_group_block, mixing_directions, own_variances
-from tieline.statistics.overlap_level import clean_level, clean_level_without
+from tieline.statistics.overlap_findings import ORACLE_FACTOR, PER_SPOT, findings
+from tieline.statistics.overlap_fit import fit_group_block, mixing_directions
 
-ORACLE_FACTOR = 4.735
-"""Standard deviations between 95 % recall and one false alarm in 1,000: 1.645 + 3.090."""
+__all__ = ["ORACLE_FACTOR", "OverlapScores", "clean_covariance", "overlap_scores"]
 
 _FEWEST_SPOTS = 3
 _CELLS_AT_ONCE = 300_000
@@ -102,17 +99,10 @@ def overlap_scores(
     Paule & Mandel 1982; Henderson 1975). Holds for up to about 80 % contaminated spots of differing
     fraction; when all are contaminated no test finds the clean level, and `overlap_bound` is what remains.
     """
-    groups, spots, elements = values.shape
-    expected = {"sigmas": (groups, spots, elements), "is_trace": (elements,)}
-    expected |= {"contaminant_mean": (groups, elements), "contaminant_variance": (groups, elements)}
-    given = {"sigmas": sigmas, "is_trace": is_trace}
-    given |= {"contaminant_mean": contaminant_mean, "contaminant_variance": contaminant_variance}
-    for name, shape in expected.items():
-        if given[name].shape != shape:
-            raise ValueError(f"{name} has shape {given[name].shape}; expected {shape}")
+    _check(values, sigmas, contaminant_mean, contaminant_variance, is_trace)
     if nuisance not in ("yield-and-growth", "yield"):
         raise ValueError(f"nuisance is {nuisance!r}; expected 'yield-and-growth' or 'yield'")
-
+    groups, spots, elements = values.shape
     result = _empty_scores(groups, spots, elements)
     occupied: BoolArray = np.any(np.isfinite(values), axis=2)
     last = np.where(occupied.any(axis=1), spots - np.argmax(occupied[:, ::-1], axis=1), 0)
@@ -123,37 +113,41 @@ def overlap_scores(
         width = int(last[rows].max(initial=0))
         if width < _FEWEST_SPOTS:
             continue
-        part = _score_block(
+        state = fit_group_block(
             values[rows, :width],
             sigmas[rows, :width],
             contaminant_mean[rows],
             np.nan_to_num(contaminant_variance[rows]),
             is_trace,
-            (nuisance, z_limit, p_limit),
+            nuisance,
         )
+        part = findings(state, *mixing_directions(state, is_trace, nuisance), z_limit, p_limit)
         for name, value in part.items():
             target = getattr(result, name)
-            if value.ndim >= 2 and name in _PER_SPOT:
+            if name in PER_SPOT:
                 target[rows, :width] = value
             else:
                 target[rows] = value
     return result
 
 
-_PER_SPOT = frozenset(
-    [
-        "fraction",
-        "sd_fraction",
-        "z",
-        "residual_chi2",
-        "residual_dof",
-        "residual_p",
-        "overlapped",
-        "foreign",
-        "clean",
-        "nuisance_amplitude",
-    ]
-)
+def _check(
+    values: FloatArray,
+    sigmas: FloatArray,
+    contaminant_mean: FloatArray,
+    contaminant_variance: FloatArray,
+    is_trace: BoolArray,
+) -> None:
+    groups, _, elements = values.shape
+    per_group = (groups, elements)
+    for name, given, expected in (
+        ("sigmas", sigmas.shape, values.shape),
+        ("contaminant_mean", contaminant_mean.shape, per_group),
+        ("contaminant_variance", contaminant_variance.shape, per_group),
+        ("is_trace", is_trace.shape, (elements,)),
+    ):
+        if given != expected:
+            raise ValueError(f"{name} has shape {given}; expected {expected}")
 
 
 def clean_covariance(scores: OverlapScores) -> FloatArray:
@@ -181,7 +175,7 @@ def _empty_scores(groups: int, spots: int, elements: int) -> OverlapScores:
     per_class = ["spread", "mswd", "mswd_dof"]
     per_element = ["used", "level", "level_variance", "contrast", "spot_variance", "weight_share"]
     shapes: dict[str, tuple[int, ...]] = dict.fromkeys((f.name for f in fields(OverlapScores)), (groups,))
-    shapes |= dict.fromkeys(_PER_SPOT, (groups, spots))
+    shapes |= dict.fromkeys(PER_SPOT, (groups, spots))
     shapes |= dict.fromkeys(per_class, (groups, 2))
     shapes |= dict.fromkeys(per_element, (groups, elements))
     shapes |= {"nuisance": (groups, elements, 2), "nuisance_amplitude": (groups, spots, 2)}
@@ -189,126 +183,3 @@ def _empty_scores(groups: int, spots: int, elements: int) -> OverlapScores:
     made = {name: np.full(shape, False if name in masks else np.nan) for name, shape in shapes.items()}
     made |= {name: np.zeros(groups, dtype=np.int64) for name in ("n_scored", "n_clean")}
     return OverlapScores(**made)
-
-
-def _score_block(
-    values: FloatArray,
-    sigmas: FloatArray,
-    contaminant: FloatArray,
-    contaminant_variance: FloatArray,
-    is_trace: BoolArray,
-    options: tuple[str, float, float],
-) -> dict[str, npt.NDArray[np.generic]]:
-    nuisance, z_limit, p_limit = options
-    state = fit_group_block(values, sigmas, contaminant, contaminant_variance, is_trace, nuisance)
-    directions, prior = mixing_directions(state, is_trace, nuisance)
-    return _final_scores(state, directions, prior, z_limit, p_limit)
-
-
-def _final_scores(
-    state: OverlapFit, directions: FloatArray, prior: FloatArray, z_limit: float, p_limit: float
-) -> dict[str, npt.NDArray[np.generic]]:
-    from scipy.special import chdtrc
-
-    spot_variance = state.spot_variance()
-    inverse = np.where(state.measured, 1.0 / spot_variance[:, None, :], 0.0)
-    deviations = np.where(state.measured, state.x - state.level[:, None, :], 0.0)
-    fit = fit_directions(deviations, inverse, directions, prior)
-    coordinate = np.where(state.scored, fit.amplitudes[..., 0], np.nan)
-    variance = np.where(state.scored, fit.variances[..., 0], np.nan)
-    takes_part = state.scored & ~state.odd & np.isfinite(coordinate)
-    located = clean_level(coordinate, variance, takes_part)
-    without = clean_level_without(coordinate, variance, takes_part)
-    fraction = coordinate - without.mean
-    sd_fraction = np.sqrt(variance + without.variance)
-    z = fraction / sd_fraction
-
-    contrast = directions[..., 0]
-    counting, spread_variance = own_variances(state, np.clip(np.nan_to_num(fraction), 0.0, 1.0), contrast)
-    own = (counting + spread_variance[:, None, :]) * state.kappa[:, None, :]
-    residual = fit_directions(deviations, np.where(state.measured, 1.0 / own, 0.0), directions, prior)
-    degrees = np.maximum(residual.degrees_of_freedom, 0.0)
-    testable = state.scored & (degrees > 0)
-    residual_p = np.where(testable, chdtrc(np.maximum(degrees, 1.0), residual.residual_chi2), np.nan)
-
-    overlapped = state.scored & (np.nan_to_num(z) > z_limit)
-    foreign = testable & (np.nan_to_num(residual_p, nan=1.0) < p_limit)
-    clean = state.scored & ~overlapped & ~foreign & np.isfinite(z)
-    group_scored = state.scored.any(axis=1)
-    result: dict[str, npt.NDArray[np.generic]] = {
-        "fraction": fraction,
-        "sd_fraction": sd_fraction,
-        "z": z,
-        "residual_chi2": np.where(testable, residual.residual_chi2, np.nan),
-        "residual_dof": np.where(testable, degrees, np.nan),
-        "residual_p": residual_p,
-        "overlapped": overlapped,
-        "foreign": foreign,
-        "clean": clean,
-        "used": state.used & group_scored[:, None],
-        "contrast": np.where(state.used, contrast, np.nan),
-        "spot_variance": np.where(state.used, spot_variance, np.nan),
-        "level": np.where(state.used, state.level, np.nan),
-        "level_fraction_variance": np.where(group_scored, located.variance, np.nan),
-        "n_scored": state.scored.sum(axis=1),
-        "n_clean": clean.sum(axis=1),
-        "nuisance": directions[..., 1:],
-        "nuisance_amplitude": np.where(state.scored[..., None], fit.amplitudes[..., 1:], np.nan),
-        "spread": np.sqrt(state.spread_squared),
-    }
-    weight = np.where(state.measured & takes_part[..., None], 1.0 / own, 0.0).sum(axis=1)
-    result["level_variance"] = np.where(
-        state.used & (weight > 0), 1.0 / np.where(weight > 0, weight, 1.0), np.nan
-    )
-    information = np.where(state.used, contrast**2 / spot_variance, 0.0)
-    whole = information.sum(axis=1, keepdims=True)
-    result["weight_share"] = np.where(
-        state.used & (whole > 0), information / np.where(whole > 0, whole, 1.0), np.nan
-    )
-    residuals = np.where(
-        state.measured, deviations - np.nan_to_num(fit.amplitudes) @ np.swapaxes(directions, 1, 2), 0.0
-    )
-    taken = leverages(np.where(state.used, 1.0 / spot_variance, 0.0), directions, prior)
-    return result | _group_remarks(
-        state, coordinate, variance, sd_fraction, clean, (residuals, counting, taken)
-    )
-
-
-def _group_remarks(
-    state: OverlapFit,
-    coordinate: FloatArray,
-    variance: FloatArray,
-    sd_fraction: FloatArray,
-    clean: BoolArray,
-    scatter: tuple[FloatArray, FloatArray, FloatArray],
-) -> dict[str, npt.NDArray[np.generic]]:
-    """What could be seen, scatter of all spots on the mixing line, and scatter against the stated sigma."""
-    from scipy.special import chdtrc
-
-    takes_part = state.scored & ~state.odd & np.isfinite(coordinate)
-    weight = np.where(takes_part, 1.0 / variance, 0.0)
-    total = np.maximum(weight.sum(axis=1), np.finfo(float).tiny)
-    mean = np.sum(weight * np.nan_to_num(coordinate), axis=1) / total
-    chi2 = np.sum(weight * (np.nan_to_num(coordinate) - mean[:, None]) ** 2, axis=1)
-    degrees = np.maximum(takes_part.sum(axis=1) - 1.0, 0.0)
-    testable = degrees > 0
-    seen = np.where(clean | (~clean.any(axis=1, keepdims=True) & state.scored), sd_fraction, np.inf)
-    seen = np.sort(np.where(np.isfinite(seen), seen, np.inf), axis=1)
-    place = np.maximum(np.isfinite(seen).sum(axis=1) - 1, 0) // 2
-    typical = np.take_along_axis(seen, place[:, None], axis=1)[:, 0]
-
-    residuals, counting, taken = scatter
-    part = state.measured & takes_part[..., None]
-    ratio = (
-        np.where(part, residuals**2 / counting, 0.0).sum(axis=1) * state.counting_scale()
-    ) @ state.in_class
-    number = part.sum(axis=1)
-    expected = (np.maximum(number - 1.0, 0.0) * (1.0 - taken) * state.used) @ state.in_class
-    return {
-        "overdispersion_chi2": np.where(testable, chi2, np.nan),
-        "overdispersion_dof": np.where(testable, degrees, np.nan),
-        "overdispersion_p": np.where(testable, chdtrc(np.maximum(degrees, 1.0), chi2), np.nan),
-        "detectable_fraction": np.where(np.isfinite(typical), ORACLE_FACTOR * typical, np.nan),
-        "mswd": np.where(expected > 0, ratio / np.where(expected > 0, expected, 1.0), np.nan),
-        "mswd_dof": expected,
-    }
