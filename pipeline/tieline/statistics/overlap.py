@@ -35,16 +35,20 @@ class OverlapScores:
     Per spot (G, n): fraction of the contaminant and its standard deviation; z, the excess over the clean
     level found without this spot; residual_chi2, residual_dof, residual_p of what mixing does not explain;
     overlapped (z above the limit), foreign (residual p below the limit: something else than this
-    contaminant), clean (scored, neither). Per group and element (G, p): used; level, the clean composition;
-    level_variance, its independent part (the full covariance: `clean_covariance`); contrast g − c;
-    spot_variance, the diagonal part of one clean spot's covariance; weight_share, the element's part of the
-    information on the fraction. Per group (G,): level_fraction_variance, the posterior variance of the
-    clean level in units of fraction; detectable_fraction, found in 95 % of cases at one false alarm in
-    1,000; overdispersion_chi2, _dof and _p of all coordinates about their mean (small p: spots contain
-    varying, possibly all some, contaminant); n_scored, n_clean. Per group and class (G, 2), majors then
-    traces: spread, relative; mswd, scatter left by the directions over the stated sigma (far above 1: real
-    spread or sigma understated; far below: overstated), with mswd_dof. nuisance (G, p, 2) and
-    nuisance_amplitude (G, n, 2): the harmless directions and every spot's part of them.
+    contaminant), clean (scored, neither).
+
+    Per group and element (G, p): used; level, the clean composition; level_variance, its independent part
+    (the full covariance: `clean_covariance`); contrast g − c; spot_variance, the diagonal part of one clean
+    spot's covariance; weight_share, the element's part of the information on the fraction.
+
+    Per group (G,): level_fraction_variance, the posterior variance of the clean level in units of fraction;
+    detectable_fraction, found in 95 % of cases at one false alarm in 1,000; overdispersion_chi2, _dof and _p
+    of all coordinates about their mean (small p: spots contain varying, possibly all some, contaminant);
+    n_scored, n_clean.
+
+    Per group and class (G, 2), majors then traces: spread, relative; mswd, scatter left by the directions
+    over the stated sigma (far above 1: real spread or sigma understated; far below: overstated), mswd_dof.
+    nuisance (G, p, 2), nuisance_amplitude (G, n, 2): the harmless directions and each spot's part of them.
     """
 
     fraction: FloatArray
