@@ -64,7 +64,7 @@ def remarks_by_phase(message: str, groups: Iterable[int], spots: Spots) -> list[
         experiment, phase, technique = spots.group_key(group)
         experiments.setdefault((phase, technique), []).append(experiment)
     return [
-        Remark(f"{message} ({_named(names)})", f"screen: {phase} by {technique}")
+        Remark(f"{message} ({_named(names)})", f"{phase} by {technique}")
         for (phase, technique), names in sorted(experiments.items())
     ]
 

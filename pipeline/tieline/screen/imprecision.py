@@ -102,7 +102,7 @@ def reference_remarks(calibrate: pa.Table) -> list[Remark]:
     return [
         Remark(
             f"reference materials are out of tolerance for {_named(sorted(elements))}",
-            f"screen: {batch} by {technique}",
+            f"{batch} by {technique}",
         )
         for (technique, batch), elements in sorted(failed.items())
     ]

@@ -55,7 +55,7 @@ def outlier_result(
             remarks = (
                 Remark(
                     "values are left out by a single-analyte outlier test: intervals then cover less than stated",
-                    f"screen: {measured.technique}",
+                    measured.technique,
                 ),
             )
     return TestResult(tuple(findings), (), remarks)

@@ -46,6 +46,13 @@ class Scored:
     scores: OverlapScores
 
 
+def provisional_groups(session: Session, part: Scored, zoned: frozenset[tuple[str | None, ...]]) -> BoolArray:
+    """Groups (G,) of zoned crystals seen by majors alone, which cannot tell zoning from overlap."""
+    keys = session.spots.groups.keys
+    is_zoned = np.array([keys[group][:2] in zoned for group in part.block.groups], dtype=np.bool_)
+    return np.asarray(is_zoned & ~(part.scores.used & part.is_trace).any(axis=1))
+
+
 @dataclass(frozen=True)
 class Overlap:
     """All that was scored of one technique, and the groups that could not be: group -> why."""

@@ -10,11 +10,14 @@ import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.findings import Findings, joined, spot_findings
-from tieline.screen.overlap import GLASS_OVERLAP, Scored
+from tieline.screen.overlap import GLASS_OVERLAP, Scored, provisional_groups
 from tieline.screen.session import Session
 from tieline.settings.screen import OverlapSettings
 
 Places = tuple[IntArray, IntArray]  # groups and spots within the arrays of one part
+Chosen = tuple[IntArray, Places]
+
+PROVISIONAL = "; provisional: the crystals are zoned, which majors alone cannot tell from overlap"
 
 # How many of the most affected elements a finding names.
 NAMED_ELEMENTS = 3
@@ -35,6 +38,16 @@ class SpotVerdicts:
     group: IntArray
     spot: IntArray
     kind: IntArray
+
+    def within(self, part: int, groups: BoolArray) -> BoolArray:
+        """Spots of some groups (G,) of one part."""
+        inside = np.asarray(self.part == part)
+        inside[inside] = groups[self.group[inside]]
+        return np.asarray(inside)
+
+    def at(self, chosen: BoolArray) -> Chosen:
+        """Rows of `Measured` of the chosen spots, and their places in their part."""
+        return self.row[chosen], (self.group[chosen], self.spot[chosen])
 
     def overlapped(self) -> BoolArray:
         """Spots that contain some of a contaminant and nothing else."""
@@ -65,37 +78,55 @@ def spot_verdicts(parts: Sequence[Scored]) -> SpotVerdicts:
 
 
 def overlap_findings(
-    session: Session, parts: Sequence[Scored], verdicts: SpotVerdicts, code: str, settings: OverlapSettings
+    session: Session,
+    parts: Sequence[Scored],
+    verdicts: SpotVerdicts,
+    settings: OverlapSettings,
+    zoned: frozenset[tuple[str | None, ...]],
 ) -> Findings:
     """Findings on the spots that contain something, or are something else than this mixture.
 
     With `use = "unmix"` an overlapped spot is only marked, for its overlap is taken out; something else is never
-    unmixed.
+    unmixed. `zoned`: experiments and phases whose crystals are zoned; where only majors were measured there, findings
+    are provisional and only mark.
     """
+    code = parts[0].code if parts else GLASS_OVERLAP
     drop = settings.action if settings.use != "mark" else "mark"
+    taken_out = "mark" if settings.use == "unmix" else drop
     found: list[Findings] = []
     for number, part in enumerate(parts):
-        of_part = verdicts.part == number
-        for kind in (_EXPLAINED_OVERLAP, _FOREIGN):
-            chosen = of_part & (verdicts.kind == kind)
-            at = verdicts.group[chosen], verdicts.spot[chosen]
-            spots = part.measured.spots[verdicts.row[chosen]]
-            if kind == _FOREIGN:
-                statistic, limit, p_value = _residuals(part, at, settings.something_else_p)
-                found.append(
-                    spot_findings(
-                        code, drop, spots, statistic, limit, p_value, _something_else(session, part, at)
-                    )
-                )
-            else:
-                action = "mark" if settings.use == "unmix" else drop
-                z = part.scores.z[at]
-                found.append(
-                    spot_findings(
-                        code, action, spots, z, settings.z, _upper_tail(z), _contains(session, part, at)
-                    )
-                )
+        doubtful = provisional_groups(session, part, zoned)
+        provisional, certain = verdicts.within(number, doubtful), verdicts.within(number, ~doubtful)
+        foreign, overlapped = verdicts.kind == _FOREIGN, verdicts.overlapped()
+        found += [
+            _foreign_findings(session, part, verdicts.at(certain & foreign), drop, settings, ""),
+            _foreign_findings(
+                session, part, verdicts.at(provisional & foreign), "mark", settings, PROVISIONAL
+            ),
+            _overlap_findings(session, part, verdicts.at(certain & overlapped), taken_out, settings, ""),
+            _overlap_findings(
+                session, part, verdicts.at(provisional & overlapped), "mark", settings, PROVISIONAL
+            ),
+        ]
     return joined(code, found)
+
+
+def _foreign_findings(
+    session: Session, part: Scored, chosen: Chosen, action: str, settings: OverlapSettings, more: str
+) -> Findings:
+    rows, at = chosen
+    statistic, limit, p_value = _residuals(part, at, settings.something_else_p)
+    texts = [text + more for text in _something_else(session, part, at)]
+    return spot_findings(part.code, action, part.measured.spots[rows], statistic, limit, p_value, texts)
+
+
+def _overlap_findings(
+    session: Session, part: Scored, chosen: Chosen, action: str, settings: OverlapSettings, more: str
+) -> Findings:
+    rows, at = chosen
+    z = part.scores.z[at]
+    texts = [text + more for text in _contains(session, part, at)]
+    return spot_findings(part.code, action, part.measured.spots[rows], z, settings.z, _upper_tail(z), texts)
 
 
 def _upper_tail(z: FloatArray) -> FloatArray:

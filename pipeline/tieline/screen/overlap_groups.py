@@ -10,7 +10,7 @@ import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.groups import CANNOT_TELL, FOUND, NOT_FOUND, TestResult, Verdict, remarks_by_phase
-from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Overlap, Scored
+from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Overlap, Scored, provisional_groups
 from tieline.screen.overlap_findings import (
     SpotVerdicts,
     apparent_coefficients,
@@ -40,18 +40,21 @@ class _Facts:
     majors_only: BoolArray
     understated: BoolArray
     overstated: BoolArray
+    provisional: BoolArray
 
 
-def overlap_result(session: Session, overlap: Overlap, settings: OverlapSettings) -> TestResult:
+def overlap_result(
+    session: Session, overlap: Overlap, settings: OverlapSettings, zoned: frozenset[tuple[str | None, ...]]
+) -> TestResult:
     """Findings on spots, verdicts on every group that was or could not be tested, and what a person must know."""
     findings, verdicts = [], []
     doubts: list[tuple[str, int]] = []
     for code in (GLASS_OVERLAP, CRYSTAL_OVERLAP):
         parts = [part for part in overlap.scored if part.code == code]
         spots = spot_verdicts(parts)
-        findings.append(overlap_findings(session, parts, spots, code, settings))
+        findings.append(overlap_findings(session, parts, spots, settings, zoned))
         counts = _counts(spots, overlap.measured.group, session.spots.groups.count)
-        facts = [_facts(part) for part in parts]
+        facts = [_facts(part, provisional_groups(session, part, zoned)) for part in parts]
         for group, entries in _entries(parts).items():
             verdict, doubt = _verdict(session, group, counts[group], parts, facts, entries, settings)
             verdicts.append(verdict)
@@ -87,7 +90,7 @@ def _counts(spots: SpotVerdicts, group_of_row: IntArray, n_groups: int) -> list[
     return [list(row) for row in counts.tolist()]
 
 
-def _facts(part: Scored) -> _Facts:
+def _facts(part: Scored, provisional: BoolArray) -> _Facts:
     from scipy.special import chdtr, chdtrc
 
     scores = part.scores
@@ -107,6 +110,7 @@ def _facts(part: Scored) -> _Facts:
         np.logical_not((scores.used & part.is_trace).any(axis=1)),
         (mswd > UNDERSTATED) & (chdtrc(degrees, mswd * degrees) < _SCATTER_P),
         (mswd < OVERSTATED) & (chdtr(degrees, mswd * degrees) < _SCATTER_P),
+        provisional,
     )
 
 
@@ -153,6 +157,10 @@ def _verdict(
             )
             doubts.append(
                 f"unflagged spots scatter toward the {settings.melt_phase}: all may contain some, or be zoned"
+            )
+        if fact.provisional[place]:
+            texts.append(
+                "findings provisional: the crystals are zoned, which majors cannot tell from overlap"
             )
         if fact.majors_only[place]:
             texts.append("majors only: D of incompatible elements below that fraction are upper limits")

@@ -18,15 +18,15 @@ from tieline.screen.groups import TestResult, groups_table
 from tieline.screen.identity import identity_findings
 from tieline.screen.imprecision import imprecision_result, reference_remarks
 from tieline.screen.outliers import outlier_result
-from tieline.screen.overlap import Scored, score_overlap
+from tieline.screen.overlap import Overlap, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
 from tieline.screen.rulings import read_rulings, ruling_findings
 from tieline.screen.session import Session, session_of
 from tieline.screen.totals import total_findings
-from tieline.screen.unmixing import no_unmixing, unmixed_values
+from tieline.screen.unmixing import UnmixedValues, no_unmixing, unmixed_values
 from tieline.screen.whole_analyses import WholeAnalyses, whole_analyses
-from tieline.screen.zoning import zoning_result
+from tieline.screen.zoning import NO_ZONING, zoning_result
 from tieline.settings.screen import ScreenSettings
 from tieline.tables import build
 
@@ -47,11 +47,7 @@ def screen(
     concentrations = calibrated(convert, calibrate, ingest_spots)
     session = session_of(convert, concentrations)
     ruled = ruling_findings(rulings, session)
-    results, scored = _tests(session, settings)
-    unmixed = no_unmixing(convert.num_rows)
-    if settings.overlap.enabled and settings.overlap.use == "unmix":
-        unmixed, not_unmixed = unmixed_values(session, scored, settings.overlap)
-        results.append(TestResult(tuple(not_unmixed)))
+    results, unmixed = _tests(session, convert.num_rows, settings)
     findings = (ruled, *(part for result in results for part in result.findings))
     if settings.imprecise.enabled:
         results.append(TestResult(remarks=tuple(reference_remarks(calibrate))))
@@ -79,31 +75,36 @@ def screen(
     return StageResult(tables, resolution.ledger(), remarks)
 
 
-def _tests(session: Session, settings: ScreenSettings) -> tuple[list[TestResult], list[Scored]]:
-    """Every enabled test on every technique, in document order; and the overlap scores."""
+def _tests(session: Session, n_rows: int, settings: ScreenSettings) -> tuple[list[TestResult], UnmixedValues]:
+    """Every enabled test on every technique, in document order; and what overlap was taken out."""
     results: list[TestResult] = []
-    scored: list[Scored] = []
+    overlaps: list[Overlap] = []
     for measured in session.techniques:
         analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
         before = _tests_of_compositions(session, analyses, settings)
         results += before
         if settings.overlap.enabled or settings.zoning.enabled:
             whole = bool(analyses.complete.any())
-            overlap = score_overlap(session, measured, whole, _dropped(session, before), settings.overlap)
-            scored += overlap.scored
-            if settings.overlap.enabled:
-                results.append(overlap_result(session, overlap, settings.overlap))
-    if settings.zoning.enabled:
-        results.append(zoning_result(session, scored, settings.zoning))
+            dropped = _dropped(session, before)
+            overlaps.append(score_overlap(session, measured, whole, dropped, settings.overlap))
+    scored = [part for overlap in overlaps for part in overlap.scored]
+    # The overlap findings need to know what is zoned, though they come first.
+    zoning = zoning_result(session, scored, settings.zoning) if settings.zoning.enabled else NO_ZONING
+    unmixed = no_unmixing(n_rows)
+    if settings.overlap.enabled:
+        results += [overlap_result(session, each, settings.overlap, zoning.phases) for each in overlaps]
+        if settings.overlap.use == "unmix":
+            unmixed, not_unmixed = unmixed_values(session, scored, settings.overlap, zoning.phases)
+            results.append(TestResult(tuple(not_unmixed)))
+    results.append(zoning.result)
     dropped = _dropped(session, results)
     for measured in session.techniques:
         if settings.outlier.enabled:
             results.append(outlier_result(session, measured, dropped, settings.outlier))
         if settings.imprecise.enabled:
-            results.append(
-                imprecision_result(session, measured, settings.overlap.melt_phase, settings.imprecise)
-            )
-    return results, scored
+            melt = settings.overlap.melt_phase
+            results.append(imprecision_result(session, measured, melt, settings.imprecise))
+    return results, unmixed
 
 
 def _tests_of_compositions(

@@ -14,8 +14,8 @@ import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.findings import Findings, joined
-from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Scored
-from tieline.screen.overlap_findings import SpotVerdicts, spot_verdicts
+from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Scored, provisional_groups
+from tieline.screen.overlap_findings import Chosen, spot_verdicts
 from tieline.screen.session import Measured, Session
 from tieline.settings.screen import OverlapSettings
 
@@ -39,9 +39,15 @@ def no_unmixing(n_rows: int) -> UnmixedValues:
 
 
 def unmixed_values(
-    session: Session, scored: Sequence[Scored], settings: OverlapSettings
+    session: Session,
+    scored: Sequence[Scored],
+    settings: OverlapSettings,
+    zoned: frozenset[tuple[str | None, ...]],
 ) -> tuple[UnmixedValues, list[Findings]]:
-    """Unmixed values of all spots with overlap, and findings on the analytes that cannot be unmixed."""
+    """Unmixed values of all spots with overlap, and findings on the analytes that cannot be unmixed.
+
+    Where findings are only provisional, because majors cannot tell overlap from zoning, nothing is taken out.
+    """
     cells = np.full((3, session.spots.count, len(session.analyte.texts)), np.nan)
     findings = []
     techniques = sorted({part.measured.technique for part in scored})
@@ -49,19 +55,20 @@ def unmixed_values(
         for code in (GLASS_OVERLAP, CRYSTAL_OVERLAP):
             parts = [part for part in scored if part.code == code and part.measured.technique == technique]
             verdicts = spot_verdicts(parts)
-            found = [_unmix(part, verdicts, number, cells, settings) for number, part in enumerate(parts)]
+            found = []
+            for number, part in enumerate(parts):
+                certain = verdicts.within(number, ~provisional_groups(session, part, zoned))
+                chosen = verdicts.at(certain & verdicts.overlapped())
+                found.append(_unmix(part, chosen, cells, settings))
             findings.append(joined(code, found))
     at_rows = cells[:, session.spots.of_row, session.analyte.codes]
     return UnmixedValues(*at_rows), findings
 
 
-def _unmix(
-    part: Scored, verdicts: SpotVerdicts, number: int, cells: FloatArray, settings: OverlapSettings
-) -> Findings:
+def _unmix(part: Scored, chosen: Chosen, cells: FloatArray, settings: OverlapSettings) -> Findings:
     """Fills the cells of one part's overlapped spots; findings on those it must leave out."""
     measured, scores = part.measured, part.scores
-    chosen = verdicts.overlapped() & (verdicts.part == number)
-    row, group, spot = verdicts.row[chosen], verdicts.group[chosen], verdicts.spot[chosen]
+    row, (group, spot) = chosen
     fraction = np.clip(scores.fraction[group, spot], 0.0, 1.0)[:, None]
     fraction_sd = scores.sd_fraction[group, spot][:, None]
     contrast, used = scores.contrast[group], scores.used[group]

@@ -73,6 +73,14 @@ class _Zoned:
     technique: str
 
 
+@dataclass(frozen=True)
+class Zoning:
+    """What the test says, and the (experiment, phase) whose crystals are zoned by any technique."""
+
+    result: TestResult
+    phases: frozenset[tuple[str | None, ...]]
+
+
 def places_of(session: Session) -> Places:
     """Distances, zones and grains of all spots; a grain code is -1 where there is none."""
     keys = session.spots.keys
@@ -81,7 +89,10 @@ def places_of(session: Session) -> Places:
     return Places(numbers(keys, "distance_um"), known[zone.codes], labels(keys, "grain").codes)
 
 
-def zoning_result(session: Session, scored: Iterable[Scored], settings: ZoningSettings) -> TestResult:
+NO_ZONING = Zoning(TestResult(), frozenset())
+
+
+def zoning_result(session: Session, scored: Iterable[Scored], settings: ZoningSettings) -> Zoning:
     """Verdicts on every crystal group with known places, and findings on the spots of zoned ones.
 
     With `represent` rim or core the other spots of a zoned group are left out, and those of that zone have no finding;
@@ -89,7 +100,7 @@ def zoning_result(session: Session, scored: Iterable[Scored], settings: ZoningSe
     """
     places = places_of(session)
     if not places.known().any():
-        return TestResult()
+        return NO_ZONING
     verdicts: list[Verdict] = []
     zoned: dict[int, _Zoned] = {}
     for part in scored:
@@ -97,7 +108,8 @@ def zoning_result(session: Session, scored: Iterable[Scored], settings: ZoningSe
             _judge(session, part, places, settings, verdicts, zoned)
     findings = _findings(session, places, zoned, settings)
     remarks = remarks_by_phase("zoned crystals", zoned, session.spots)
-    return TestResult((findings,), tuple(verdicts), tuple(remarks))
+    phases = frozenset(session.spots.groups.keys[group][:2] for group in zoned)
+    return Zoning(TestResult((findings,), tuple(verdicts), tuple(remarks)), phases)
 
 
 def _judge(
