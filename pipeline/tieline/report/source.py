@@ -1,0 +1,101 @@
+"""The stage files of one run folder with what they record of themselves: all that a report is made from."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import pyarrow as pa
+
+from tieline.columns import TABLES
+from tieline.configuration import Session
+from tieline.correction import Concentrations, calibrated
+from tieline.errors import InputError, Problem
+from tieline.plan import read_records, table_path
+from tieline.reading.input_file import InputFile
+from tieline.screen.rulings import Ruling, read_rulings
+from tieline.settings import SessionSettings
+from tieline.stages import STAGES
+from tieline.storage import read_table
+
+
+@dataclass(frozen=True)
+class Source:
+    """Tables by name, the stages' records by stage name, the settings in effect and the rulings as filed."""
+
+    tables: Mapping[str, pa.Table]
+    records: Mapping[str, Mapping[str, Any]]
+    settings: SessionSettings
+    rulings: tuple[Ruling, ...] = ()
+
+    def table(self, name: str) -> pa.Table:
+        return self.tables[name]
+
+    @property
+    def title(self) -> str:
+        return self.settings.report.title or self.settings.session
+
+    @property
+    def confidence(self) -> float:
+        return self.settings.partition.confidence
+
+    @property
+    def version(self) -> str:
+        return str(self.records["classify"]["version"])
+
+    @property
+    def fingerprint(self) -> str:
+        """Identity of the classified D's: the same inputs and settings give the same."""
+        return str(self.records["classify"]["fingerprint"])
+
+    def concentrations(self) -> Concentrations:
+        """The values as the phase means used them: those of `convert`, calibrated where that is configured."""
+        return calibrated(self.table("convert"), self.table("calibrate"), self.table("ingest.spots"))
+
+
+def read_source(session: Session) -> Source:
+    """Reads a complete and current run folder; raises InputError where a stage is missing or stale."""
+    from tieline import runner
+
+    _refuse_unless_current(runner.status(session))
+    return read_finished(session)
+
+
+def read_finished(session: Session) -> Source:
+    """As `read_source`, for a run folder that is known to be current."""
+    records: dict[str, Mapping[str, Any]] = {}
+    tables: dict[str, pa.Table] = {}
+    for stage in STAGES:
+        records[stage.name] = read_records(session.run_folder, stage)[stage.outputs[0]] or {}
+        for name in stage.outputs:
+            tables[name] = read_table(table_path(session.run_folder, name), name)
+    return Source(tables, records, session.settings, _filed_rulings(session))
+
+
+def optional_table(source: Source, name: str) -> pa.Table | None:
+    """A table that not every version of the chain writes; None where it is not there or has no rows."""
+    table = source.tables.get(name)
+    return table if name in TABLES and table is not None and table.num_rows else None
+
+
+def _refuse_unless_current(verdicts: list[Any]) -> None:
+    problems = [
+        Problem(
+            f"{verdict.stage} is {verdict.state}"
+            f"{f' ({chr(59).join(verdict.reasons)})' if verdict.reasons else ''}: a report would describe other settings.",
+            remedy="Run `tieline run CONFIG` first.",
+        )
+        for verdict in verdicts
+        if verdict.state != "current"
+    ]
+    if problems:
+        raise InputError(problems[:1])
+
+
+def _filed_rulings(session: Session) -> tuple[Ruling, ...]:
+    """The rulings as they stand in their file: the page hands all of them back with the new ones."""
+    path = session.settings.screen.rulings
+    if path is None:
+        return ()
+    return read_rulings({path: InputFile.from_bytes(path, session.resolve(path).read_bytes())})

@@ -1,0 +1,85 @@
+"""Writes the report of a run folder: the page, the hand-over files, and on request the pictures on their own."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
+from tieline.report.csv_files import csv_bytes
+from tieline.report.latex import partition_document
+from tieline.report.left_out import left_out_sheet
+from tieline.report.methods import methods
+from tieline.report.page import page
+from tieline.report.references import bibliography
+from tieline.report.sheets import (
+    Sheet,
+    declared_sheet,
+    means_sheet,
+    partition_sheet,
+    readme_sheet,
+    runs_sheet,
+    settings_sheet,
+)
+from tieline.report.source import Source, read_finished, read_source
+from tieline.report.spots import spot_use
+from tieline.report.values_sheet import spots_sheet
+from tieline.report.workbook import workbook_bytes
+from tieline.storage import write_atomically
+
+if TYPE_CHECKING:
+    from tieline.configuration import Session
+
+
+def write_report(session: Session, figures: Path | None = None, *, known_current: bool = False) -> list[Path]:
+    """Writes all files of the report into the run folder, and the pictures into `figures`; returns their paths.
+
+    Everything is made before anything is written. Raises InputError when a stage is missing or stale;
+    `known_current` skips that check, right after a run.
+    """
+    source = read_finished(session) if known_current else read_source(session)
+    made = {session.run_folder / name: data for name, data in report_files(source).items()}
+    if figures is not None:
+        from tieline.report.figures import figure_files
+
+        made |= {figures / name: data for name, data in figure_files(source).items()}
+    for path, data in made.items():
+        path.parent.mkdir(parents=True, exist_ok=True)
+        write_atomically(path, lambda stream, data=data: stream.write(data))  # type: ignore[misc]
+    return list(made)
+
+
+def report_files(source: Source) -> Mapping[str, bytes]:
+    """File name to content: pure, the same tables give the same bytes."""
+    spots = spot_use(source)
+    left_out = left_out_sheet(source, spots)
+    partition = partition_sheet(source)
+    paragraph = methods(source, spots)
+    return {
+        "partition_coefficients.csv": csv_bytes(partition),
+        "partition_coefficients.xlsx": workbook_bytes(
+            _workbook_sheets(source, partition, left_out), source.title
+        ),
+        "partition_coefficients.tex": partition_document(source).encode(),
+        "left_out.csv": csv_bytes(left_out),
+        "methods.txt": paragraph.text().encode(),
+        "methods.tex": paragraph.latex().encode(),
+        "references.bib": bibliography(paragraph.keys()).encode(),
+        "report.html": page(source, spots, left_out, paragraph.text()).encode(),
+    }
+
+
+def _workbook_sheets(source: Source, partition: Sheet, left_out: Sheet) -> list[Sheet]:
+    spots = spot_use(source)
+    sheets = [
+        runs_sheet(source, spots),
+        partition,
+        means_sheet(source),
+        spots_sheet(source, spots),
+        left_out,
+        declared_sheet("reference materials", source.table("calibrate.materials"), CALIBRATE_MATERIALS),
+        declared_sheet("calibration", source.table("calibrate"), CALIBRATE),
+        settings_sheet(source),
+    ]
+    return [readme_sheet(source, sheets), *sheets]
