@@ -6,7 +6,7 @@ The statistics of the means stand in `tieline.statistics.means` and, where value
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pyarrow as pa
@@ -51,14 +51,16 @@ def pair(
     settings: PairSettings,
 ) -> StageResult:
     """Phase means with their variance and its parts, and the alpha/beta pairs that can be formed."""
-    concentrations = calibrated(convert, calibrate, ingest_spots)
+    concentrations, shared = _unmixed(calibrated(convert, calibrate, ingest_spots), screen)
     use = flags(screen, "use")
     unknown = labels(convert, "experiment").codes >= 0
     groups = group_rows([labels(convert, name) for name in GROUP_COLUMNS], unknown)
     measured = use & unknown & np.isfinite(concentrations.value)
     limit_only = use & unknown & ~measured & np.isfinite(concentrations.limit)
     used = Used(measured, limit_only)
-    means = _means(convert, concentrations, groups, used, settings)
+    means = _with_shared_error(
+        _means(convert, concentrations, groups, used, settings), shared, groups, measured
+    )
     table = _pair_table(convert, concentrations, groups, used, means)
     pairs, remarks = phase_pairs(convert, measured | limit_only, settings)
     differences, difference_remarks = technique_differences(table, calibrate, settings)
@@ -87,6 +89,30 @@ def _means(
     grains = _grains(convert)[rows] if settings.average == "grains" else None
     return phase_means(
         values.value[rows], sigma, code, groups.count, estimator=settings.mean, subgroup=grains
+    )
+
+
+def _unmixed(values: Concentrations, screen: pa.Table) -> tuple[Concentrations, FloatArray | None]:
+    """Values freed of overlap where `screen` was asked to unmix, and the error that these share, per row."""
+    if screen.column("unmixed_ppm").null_count == screen.num_rows:
+        return values, None
+    unmixed = numbers(screen, "unmixed_ppm")
+    taken = np.isfinite(unmixed)
+    value = np.where(taken, unmixed, values.value)
+    sigma = np.where(taken, numbers(screen, "unmixed_sigma_ppm"), values.sigma)
+    return Concentrations(value, sigma, values.limit), np.nan_to_num(numbers(screen, "unmixed_shared_ppm"))
+
+
+def _with_shared_error(
+    means: PhaseMeans, shared: FloatArray | None, groups: Groups, measured: BoolArray
+) -> PhaseMeans:
+    """Adds to every variance what the unmixed values of a group have in common, which averaging does not reduce."""
+    if shared is None:
+        return means
+    total = np.bincount(groups.code[measured], weights=shared[measured], minlength=groups.count)
+    common = (total / np.maximum(means.n_values, 1)) ** 2
+    return replace(
+        means, variance=means.variance + common, counting_variance=means.counting_variance + common
     )
 
 
