@@ -19,7 +19,7 @@ from tieline.ingest.roles import LABELS, Assigning, Roles, assign_roles
 from tieline.ingest.rows import joined, spot_rows
 from tieline.ingest.spots import Spots, duplicate_problems, duplicates, numbered, read_spots
 from tieline.ingest.texts import Mask, Texts
-from tieline.ingest.values import Counts, long_blocks
+from tieline.ingest.values import Counts, check_blocks, long_blocks
 from tieline.reading.cell_text import REASONS, UNREADABLE, CellStyle
 from tieline.reading.cells import parse_cells
 from tieline.reading.formats import read_grid
@@ -67,7 +67,9 @@ def read_table(
     read.remarks += work.remarks
     if not grid.row_count and not grid.ragged:
         read.problems.append(Problem("the header has no rows below it.", table.path, grid.found.header_row))
-    if roles is not None:
+    if work.problems:
+        _check_cells(read, grid, roles)
+    else:
         _read_rows(read, grid, roles, settings, shared)
     if settings.on_unreadable == "stop":
         read.problems += read.asides.problems(SET_ASIDE_REMEDY)
@@ -104,14 +106,25 @@ def _full_headers(grid: Grid) -> list[str]:
     ]
 
 
+def _check_cells(read: TableRead, grid: Grid, roles: Roles) -> None:
+    """Problems of the cells, where those of the columns leave the spots unknown."""
+    labels = _label_texts(grid, roles)
+    keep, _ = spot_rows(grid, roles.labels, labels, read.table.skip_row_labels, read.asides)
+    check_blocks(grid, read.table, roles, keep, read.asides)
+
+
+def _label_texts(grid: Grid, roles: Roles) -> dict[str, Texts]:
+    if not grid.blocks:
+        return {name: Texts.constant(None, 0) for name in roles.labels}
+    return {name: Texts.from_column(grid.column(index)) for name, index in roles.labels.items()}
+
+
 def _read_rows(
     read: TableRead, grid: Grid, roles: Roles, settings: IngestSettings, shared: SharedCodes
 ) -> None:
     table = read.table
     rows, row_count = grid.rows(), grid.row_count
-    labels = {name: Texts.from_column(grid.column(index)) for name, index in roles.labels.items()}
-    if not grid.blocks:
-        labels = {name: Texts.constant(None, 0) for name in roles.labels}
+    labels = _label_texts(grid, roles)
     keep, blank = spot_rows(grid, roles.labels, labels, table.skip_row_labels, read.asides)
     spots, unmatched = read_spots(table, rows, labels)
     spots = with_phases(with_materials(spots, settings.reference_materials.names), settings.phases)

@@ -56,6 +56,9 @@ def _by_header(work: Assigning, pattern: str, values: Sequence[int], taken: set[
     for index, header in enumerate(work.headers):  # a full match goes before one that leaves the unit out
         if header.strip() and index not in taken:
             by_text[fold(header)] = index
+    for index, header in enumerate(work.full):  # the word for the uncertainty may stand in the units row
+        if header.strip() and index not in taken:
+            by_text.setdefault(fold(header), index)
     found = {}
     for index in values:
         for variant in _variants(work, index):

@@ -65,8 +65,8 @@ class Assigning:
         self.remarks.append(Remark(message, self.path))
 
 
-def assign_roles(work: Assigning) -> Roles | None:
-    """The role of every column; None, with problems, where the configuration and the headers disagree."""
+def assign_roles(work: Assigning) -> Roles:
+    """The role of every column; with problems, where the configuration and the headers disagree."""
     labels = _label_columns(work)
     ignored = _ignored_columns(work)
     taken = set(labels.values()) | ignored
@@ -87,8 +87,6 @@ def assign_roles(work: Assigning) -> Roles | None:
     read = set(labels.values()) | set(values) | partners
     read_or_known = read | ignored | (set() if total is None else {total})
     _remark_unread(work, recognised, set(range(len(work.headers))) - read_or_known)
-    if work.problems:
-        return None
     return Roles(labels, analytes, total, tuple(sorted(set(range(len(work.headers))) - read)))
 
 
@@ -256,7 +254,7 @@ def _analytes(
         if unit is None:
             remedy = 'State unit = "wt%", "ppm" or "ppb", or write it into the header.'
             work.problem("its unit is not stated.", work.headers[index], remedy)
-            continue
+            unit = "wt%"  # only so that the column's cells are checked all the same
         sigma_index, limit_index = sigmas.get(index), limits.get(index)
         if sigma_index is not None:
             _check_sigma_words(work, sigma_index, recognised[sigma_index])

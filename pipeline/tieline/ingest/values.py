@@ -92,6 +92,15 @@ def long_blocks(
     return blocks
 
 
+def check_blocks(grid: Grid, table: Table, roles: Roles, keep: Mask, asides: Asides) -> None:
+    """Sends unreadable cells to `asides` and makes nothing of the others; the grid is emptied on the way."""
+    start = 0
+    for block in grid.drain():
+        kept = keep[start : start + len(block.rows)]
+        start += len(block.rows)
+        _matrices(block.kept(kept), table, roles, grid.found.decimal, asides, Counts())
+
+
 def _matrices(
     block: Block, table: Table, roles: Roles, decimal: str, asides: Asides, counts: Counts
 ) -> Matrices:

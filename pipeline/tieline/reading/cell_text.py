@@ -159,7 +159,7 @@ def _diagnose(shown: str) -> str:
         return "error word"
     if folded.strip("+-") in {"inf", "infinity", "nan", "-nan", "1.#inf", "1.#qnan", "\u221e"}:
         return "infinite"
-    if folded[0] in ">\u2265":
+    if folded.startswith((">", "\u2265")):
         return "greater than"
     if _DATE.fullmatch(folded):
         return "date"

@@ -42,6 +42,11 @@ def read_delimited(file: InputFile, layout: Layout, limits: ReadLimits) -> Grid:
     whole = len(head) == len(data)
     delimiter = layout.delimiter or find_delimiter(head)
     records = list(_head_records(head, delimiter, whole))
+    if not records and not whole:
+        remedy = "Is a quotation mark left open, or is this no table?"
+        raise InputError(
+            Problem(f"its first row is longer than {HEAD_BYTES >> 10} kB.", file.path, 1, remedy=remedy)
+        )
     header_index = locate_header(file, [record.cells for record in records], layout)
     units_index = locate_units(records_cells(records), header_index, layout)
     first = (units_index if units_index is not None else header_index) + 1
@@ -136,7 +141,6 @@ def _head_records(head: bytes, delimiter: str, whole: bool) -> Iterator[Record]:
     ends = np.cumsum([len(line) for line in lines]).tolist()
     texts = (line.decode("utf-8", "replace") for line in lines)
     reader = csv.reader(texts, delimiter=delimiter)
-    csv.field_size_limit(HEAD_BYTES * 2)
     while True:
         try:
             cells = next(reader)

@@ -56,7 +56,11 @@ def is_units_row(row: Sequence[str]) -> bool:
 
 
 def find_decimal(rows: Iterable[Sequence[str]]) -> str | None:
-    """`.` or `,` from the numbers in some rows; None where commas may be decimal marks or thousands separators."""
+    """`.` or `,` from the numbers in some rows; None where commas may be decimal marks or thousands separators.
+
+    The majority decides, for labels may look like numbers. A wrong mark cannot change a number: a number with
+    the other mark is unreadable.
+    """
     comma_only, proof, point = 0, 0, 0
     for row in rows:
         for cell in row:
@@ -67,9 +71,9 @@ def find_decimal(rows: Iterable[Sequence[str]]) -> str | None:
                 proof += len(match.group(2)) != 3 or match.group(1).startswith("0") or len(match.group(1)) > 3
             elif _POINT_NUMBER.fullmatch(text):
                 point += 1
-    if comma_only == 0 or point:
-        return "."
-    return "," if proof else None
+    if proof > point:
+        return ","
+    return None if comma_only and not point else "."
 
 
 def _filled(row: Sequence[str]) -> int:
