@@ -20,7 +20,7 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 
-WRONG_INPUT, INTERRUPTED = 2, 130
+WRONG_INPUT, DIFFERENT, INTERRUPTED = 2, 3, 130
 
 ConfigArgument = Annotated[
     Path, typer.Argument(metavar="CONFIG", help="Configuration of the session, a TOML file.")
@@ -65,9 +65,7 @@ def run(
         _fail_usage("--only and --until exclude each other.")
     session = _load(config, overrides, out)
     with terminal.progress(quiet or json) as (progress, planned):
-        reports = runner.run(
-            session, only=only, until=until, fresh=fresh, progress=progress, planned=planned
-        )
+        reports = runner.run(session, only=only, until=until, fresh=fresh, progress=progress, planned=planned)
     if json:
         _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
     elif not quiet:
@@ -123,6 +121,36 @@ def demo(
 
     config = copy_demo(folder)
     run(config, only=None, until=None, fresh=False, out=None, overrides=None, quiet=False, json=json)
+
+
+@app.command()
+def audit(
+    run_folder: Annotated[Path, typer.Argument(metavar="RUN_FOLDER", help="Folder that a run wrote.")],
+    against: Annotated[
+        Path | None,
+        typer.Option("--against", metavar="LABFILE", help="Settings of the laboratory, a TOML file."),
+    ] = None,
+    seal: Annotated[
+        bool,
+        typer.Option("--seal", help="Seal the folder if nothing differs; later runs refuse to write there."),
+    ] = False,
+    json: JsonOption = False,
+) -> None:
+    """Verify every file against its recorded digests and run the chain again; list what was left out and why.
+
+    Exit status 3 where anything differs. Example: tieline audit example_runs/ember
+    """
+    from tieline.auditing.audit import audit as audit_folder
+
+    result = audit_folder(run_folder, against=against, with_seal=seal)
+    if json:
+        _print_json(result.as_json())
+    else:
+        from tieline.terminal_audit import show_audit
+
+        show_audit(result)
+    if result.differences:
+        raise typer.Exit(DIFFERENT)
 
 
 def main() -> None:

@@ -43,7 +43,9 @@ def judge(
     `records` holds the recorded origin of each output table, `digests` the content digest of every
     input that is already known; an input that is missing there has still to be recomputed.
     """
-    missing = [f"{table}.parquet is missing or unreadable" for table in stage.outputs if records.get(table) is None]
+    missing = [
+        f"{table}.parquet is missing or unreadable" for table in stage.outputs if records.get(table) is None
+    ]
     if len(missing) == len(stage.outputs):
         return Verdict(stage.name, "missing")
     if missing:
@@ -98,23 +100,31 @@ class _NotSet:
 NOT_SET = _NotSet()
 
 
-def settings_differences(old: Any, new: Any, key: str = "") -> list[str]:
-    """`total.limits.olivine[1] 98.5 → 98.0` for every setting that differs between two nested values."""
+def settings_differences(old: Any, new: Any, key: str = "", *, longest: int | None = 60) -> list[str]:
+    """`total.limits.olivine[1] 98.5 → 98.0` for every setting that differs between two nested values.
+
+    A value longer than `longest` characters is cut; None shows all of it.
+    """
     if isinstance(old, dict) and isinstance(new, dict):
         return [
             line
             for name in sorted({*old, *new})
             for line in settings_differences(
-                old.get(name, NOT_SET), new.get(name, NOT_SET), f"{key}.{name}" if key else name
+                old.get(name, NOT_SET),
+                new.get(name, NOT_SET),
+                f"{key}.{name}" if key else name,
+                longest=longest,
             )
         ]
     if isinstance(old, list) and isinstance(new, list) and _item_by_item(old, new):
         return [
             line
             for position, (before, after) in enumerate(zip_longest(old, new, fillvalue=NOT_SET), start=1)
-            for line in settings_differences(before, after, f"{key}[{position}]")
+            for line in settings_differences(before, after, f"{key}[{position}]", longest=longest)
         ]
-    return [] if old == new else [f"{key} {_short(old)} \N{RIGHTWARDS ARROW} {_short(new)}"]
+    if old == new:
+        return []
+    return [f"{key} {_short(old, longest)} \N{RIGHTWARDS ARROW} {_short(new, longest)}"]
 
 
 def _item_by_item(old: list[Any], new: list[Any]) -> bool:
@@ -122,8 +132,8 @@ def _item_by_item(old: list[Any], new: list[Any]) -> bool:
     return len(old) == len(new) or any(isinstance(item, dict) for item in (*old, *new))
 
 
-def _short(value: Any) -> str:
+def _short(value: Any, longest: int | None) -> str:
     if isinstance(value, _NotSet):
         return "not set"
     text = "none" if value is None else str(value)
-    return text if len(text) <= 60 else f"{text[:57]}..."
+    return text if longest is None or len(text) <= longest else f"{text[: longest - 3]}..."

@@ -75,9 +75,7 @@ def effect_as_json(effect: RulingEffect) -> dict[str, Any]:
     }
 
 
-def _effects(
-    session: Session, reports: Sequence[StageReport]
-) -> tuple[list[RulingEffect], list[str]] | None:
+def _effects(session: Session, reports: Sequence[StageReport]) -> tuple[list[RulingEffect], list[str]] | None:
     """None where there is no ruling, or the run stopped before there was a D."""
     done = {report.verdict.stage for report in reports}
     if "partition" not in done or session.settings.screen.rulings is None:
