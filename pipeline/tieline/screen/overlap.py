@@ -46,11 +46,17 @@ class Scored:
     scores: OverlapScores
 
 
+def majors_decide(part: Scored) -> BoolArray:
+    """Groups (G,) in which the majors carry most of the information on the overlap."""
+    shares = np.where(part.is_trace, np.nan_to_num(part.scores.weight_share), 0.0)
+    return np.asarray(shares.sum(axis=1) < 0.5)
+
+
 def provisional_groups(session: Session, part: Scored, zoned: frozenset[tuple[str | None, ...]]) -> BoolArray:
-    """Groups (G,) of zoned crystals seen by majors alone, which cannot tell zoning from overlap."""
+    """Groups (G,) of zoned crystals seen by majors, which cannot tell zoning from overlap."""
     keys = session.spots.groups.keys
     is_zoned = np.array([keys[group][:2] in zoned for group in part.block.groups], dtype=np.bool_)
-    return np.asarray(is_zoned & ~(part.scores.used & part.is_trace).any(axis=1))
+    return np.asarray(is_zoned & majors_decide(part))
 
 
 @dataclass(frozen=True)

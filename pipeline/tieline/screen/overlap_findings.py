@@ -11,13 +11,14 @@ import numpy as np
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.findings import Findings, joined, spot_findings
 from tieline.screen.overlap import GLASS_OVERLAP, Scored, provisional_groups
+from tieline.screen.padding import column_medians
 from tieline.screen.session import Session
 from tieline.settings.screen import OverlapSettings
 
 Places = tuple[IntArray, IntArray]  # groups and spots within the arrays of one part
 Chosen = tuple[IntArray, Places]
 
-PROVISIONAL = "; provisional: the crystals are zoned, which majors alone cannot tell from overlap"
+PROVISIONAL = "; provisional: the crystals are zoned, which majors cannot tell from overlap"
 
 # How many of the most affected elements a finding names.
 NAMED_ELEMENTS = 3
@@ -152,13 +153,23 @@ def phases_of(session: Session, part: Scored, group: int) -> tuple[str, str]:
 
 
 def _contains(session: Session, part: Scored, at: Places) -> list[str]:
-    fraction, sd = part.scores.fraction[at], part.scores.sd_fraction[at]
+    fraction = part.scores.fraction[at]
+    # What differs from spot to spot in the contaminant itself makes the fraction uncertain in proportion.
+    sd = np.hypot(part.scores.sd_fraction[at], fraction * _contaminant_spread(part)[at[0]])
     effects = _effects(part, at[0], fraction)
     texts = []
     for group, value, uncertainty, effect in zip(at[0], fraction, sd, effects, strict=True):
         host, contaminant = phases_of(session, part, int(group))
         texts.append(f"{percent(value, uncertainty)} {contaminant} in {host}; {effect}")
     return texts
+
+
+def _contaminant_spread(part: Scored) -> FloatArray:
+    """Typical relative standard deviation of one local composition of the contaminant (G,), 0 where not known."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = np.sqrt(part.contaminant_variance) / np.abs(part.contaminant_mean)
+    relative = np.where(part.scores.used & np.isfinite(relative), relative, np.nan)
+    return np.nan_to_num(column_medians(relative[:, :, None])[:, 0])
 
 
 def percent(fraction: float, sd: float) -> str:

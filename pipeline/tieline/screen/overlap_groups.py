@@ -10,7 +10,14 @@ import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.groups import CANNOT_TELL, FOUND, NOT_FOUND, TestResult, Verdict, remarks_by_phase
-from tieline.screen.overlap import CRYSTAL_OVERLAP, GLASS_OVERLAP, Overlap, Scored, provisional_groups
+from tieline.screen.overlap import (
+    CRYSTAL_OVERLAP,
+    GLASS_OVERLAP,
+    Overlap,
+    Scored,
+    majors_decide,
+    provisional_groups,
+)
 from tieline.screen.overlap_findings import (
     SpotVerdicts,
     apparent_coefficients,
@@ -37,7 +44,7 @@ class _Facts:
     visible: FloatArray
     scatter_p: FloatArray
     above_lowest: FloatArray
-    majors_only: BoolArray
+    majors_decide: BoolArray
     understated: BoolArray
     overstated: BoolArray
     provisional: BoolArray
@@ -107,7 +114,7 @@ def _facts(part: Scored, provisional: BoolArray) -> _Facts:
         scores.detectable_fraction,
         np.where(enough, chdtrc(np.maximum(number - 1.0, 1.0), chi2), np.nan),
         np.where(enough, fraction.sum(axis=1) / np.maximum(number, 1) - lowest, 0.0),
-        np.logical_not((scores.used & part.is_trace).any(axis=1)),
+        majors_decide(part),
         (mswd > UNDERSTATED) & (chdtrc(degrees, mswd * degrees) < _SCATTER_P),
         (mswd < OVERSTATED) & (chdtr(degrees, mswd * degrees) < _SCATTER_P),
         provisional,
@@ -162,8 +169,8 @@ def _verdict(
             texts.append(
                 "findings provisional: the crystals are zoned, which majors cannot tell from overlap"
             )
-        if fact.majors_only[place]:
-            texts.append("majors only: D of incompatible elements below that fraction are upper limits")
+        if fact.majors_decide[place]:
+            texts.append("majors decide: D of incompatible elements below that fraction are upper limits")
     texts += _sigma_doubts(part, fact, place)
     return Verdict(
         group, part.code, judged, word, "; ".join(texts), max(visible.values()), None, p_value
