@@ -38,6 +38,7 @@ class TableRead:
     """One table read. `parts` is None when its problems left nothing to read."""
 
     table: Table
+    name: str
     asides: Asides
     parts: TableParts | None = None
     entered: int = 0
@@ -47,26 +48,26 @@ class TableRead:
 
 
 def read_table(
-    files: Mapping[str, InputFile], table: Table, settings: IngestSettings, shared: SharedCodes
+    files: Mapping[str, InputFile], table: Table, name: str, settings: IngestSettings, shared: SharedCodes
 ) -> TableRead:
-    """Reads one table; problems of its columns and cells are collected, not raised.
+    """Reads one table, called `name`; problems of its columns and cells are collected, not raised.
 
     Raises InputError where the file is missing or is no table.
     """
     if table.path not in files:
         raise InputError(Problem("no such file.", table.path))
-    read = TableRead(table, Asides(table.path))
+    read = TableRead(table, name, Asides(name))
     grid = read_grid(files[table.path], _layout(table), _limits(settings))
-    read.remarks += [Remark(f"{note}.", table.path) for note in grid.notes]
+    read.remarks += [Remark(f"{note}.", name) for note in grid.notes]
     for ragged in grid.ragged:
         reason = f"the row has {ragged.cells} cells, the header {grid.width}"
         read.asides.add(ragged.row, None, ragged.text, ragged.cells, reason)
-    work = Assigning(table.path, table, grid.headers, _full_headers(grid), grid.found.header_row)
+    work = Assigning(name, table, grid.headers, _full_headers(grid), grid.found.header_row)
     roles = assign_roles(work)
     read.problems += work.problems
     read.remarks += work.remarks
     if not grid.row_count and not grid.ragged:
-        read.problems.append(Problem("the header has no rows below it.", table.path, grid.found.header_row))
+        read.problems.append(Problem("the header has no rows below it.", name, grid.found.header_row))
     if work.problems:
         _check_cells(read, grid, roles)
     else:
@@ -137,10 +138,10 @@ def _read_rows(
         1 for column in read.asides.columns if column is not None
     )
     counts = Counts()
-    spread = LongLabels(table.path, spots, distance, roles.analytes, shared)
+    spread = LongLabels(read.name, spots, distance, roles.analytes, shared)
     width, ragged = grid.width, sum(row.cells for row in grid.ragged)
     blocks = long_blocks(grid, table, roles, keep, spread, read.asides, counts)
-    read.parts = TableParts(table.path, spots, distance, order, blocks)
+    read.parts = TableParts(read.name, spots, distance, order, blocks)
     read.entered = width * (row_count - blank) + ragged
     read.outcomes = {
         "values": counts.values,
@@ -154,7 +155,7 @@ def _read_rows(
     }
     materials = settings.reference_materials.names
     remarks = [*phase_remarks(spots, settings.phases, materials), *similar_experiments(spots)]
-    read.remarks += [Remark(remark.message, table.path) for remark in remarks]
+    read.remarks += [Remark(remark.message, read.name) for remark in remarks]
     read.remarks += cell_remarks(table, counts, read.asides)
 
 
@@ -178,7 +179,7 @@ def _set_aside_unlabelled(
         if what in ("phase", "experiment") and mask[keep].any() and not _can_tell(read.table, what):
             remedy = f"State columns.{what}, a label pattern with {what}, or {what} for the whole table."
             read.problems.append(
-                Problem(f"no column tells the {what}.", read.table.path, grid.found.header_row, remedy=remedy)
+                Problem(f"no column tells the {what}.", read.name, grid.found.header_row, remedy=remedy)
             )
             continue
         _set_aside_rows(read, grid, np.flatnonzero(mask & keep & ~told), reason)
@@ -211,9 +212,9 @@ def _unique(read: TableRead, spots: Spots, settings: IngestSettings) -> Spots:
     if not repeated:
         return spots
     if settings.on_duplicate_spot == "stop":
-        read.problems += duplicate_problems(read.table.path, read.table.columns.spot, repeated)
+        read.problems += duplicate_problems(read.name, read.table.columns.spot, repeated)
         return spots
-    spots, remarks = numbered(spots, repeated, read.table.path)
+    spots, remarks = numbered(spots, repeated, read.name)
     read.remarks += remarks
     return spots
 
@@ -236,7 +237,7 @@ def _numbers(
         if name in roles.labels:
             read.asides.add_cells([int(rows[place])], header, [raw], [reason])
         else:
-            read.problems.append(Problem(f'"{raw}": {reason}.', read.table.path, int(rows[place]), header))
+            read.problems.append(Problem(f'"{raw}": {reason}.', read.name, int(rows[place]), header))
     return np.where(texts.is_missing(), np.nan, cells.value[texts.codes])
 
 

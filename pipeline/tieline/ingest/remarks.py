@@ -36,4 +36,4 @@ def cell_remarks(table: Table, counts: Counts, asides: Asides) -> list[Remark]:
         f"{count} {'line' if count == 1 else 'lines'} set aside: {reason}."
         for reason, count in sorted(Counter(asides.reasons).items())
     ]
-    return [Remark(message, table.path) for message in messages]
+    return [Remark(message, asides.table) for message in messages]

@@ -37,7 +37,7 @@ def spot_rows(
     first = Texts.from_column(grid.column(0)) if grid.blocks else Texts.constant(None, 0)
     unlabelled = np.all([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
     keys = [labels[name] for name in ("spot", "experiment", "phase", "labels") if name in labels]
-    some_missing = np.any([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
+    nameless = np.all([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
     header_like = _repeats_header(grid, label_columns, labels)
     pattern = summary_pattern(summary_words)
     summary = first.where(lambda text: pattern.match(fold(text)) is not None)
@@ -49,7 +49,7 @@ def spot_rows(
         blank = _blank_rows(block, np.flatnonzero(unlabelled[start:stop]))
         keep[start + blank] = False
         blank_count += len(blank)
-        for position in np.flatnonzero((header_like | summary | some_missing)[start:stop] & keep[start:stop]):
+        for position in np.flatnonzero((header_like | summary | nameless)[start:stop] & keep[start:stop]):
             cells = [column[int(position)].as_py() for column in block.cells]
             reason = _row_reason(
                 cells, grid, bool(header_like[start + position]), bool(summary[start + position])

@@ -14,6 +14,7 @@ import numpy.typing as npt
 
 from tieline.errors import Problem
 from tieline.ingest.texts import Mask, Texts
+from tieline.reading.formats import ending
 from tieline.results import Remark
 from tieline.settings.ingest import LABEL_GROUPS, Table
 
@@ -84,9 +85,9 @@ def read_spots(table: Table, rows: Ints, labels: Mapping[str, Texts]) -> tuple[S
 
 
 def batch_of_path(path: str) -> str:
-    """The file name without its endings."""
+    """The file name without the ending of its format."""
     name = PurePosixPath(path.replace("\\", "/")).name
-    return name.split(".")[0] or name
+    return name[: len(name) - len(ending(name))] or name
 
 
 def _split(table: Table, labels: Mapping[str, Texts], n: int) -> tuple[dict[str, Texts], Mask]:

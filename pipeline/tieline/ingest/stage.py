@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections import Counter
+from collections.abc import Callable, Mapping, Sequence
 from typing import TypeVar
 
 from tieline.errors import InputError, Problem
@@ -11,9 +12,10 @@ from tieline.ingest.conditions import conditions_table
 from tieline.ingest.long_table import SharedCodes, long_table, spot_table
 from tieline.ingest.matching import check_spellings
 from tieline.ingest.one_table import TableRead, read_table
+from tieline.ingest.spots import batch_of_path
 from tieline.reading.input_file import InputFile
-from tieline.results import Ledger, StageResult
-from tieline.settings.ingest import IngestSettings
+from tieline.results import Ledger, Remark, StageResult
+from tieline.settings.ingest import IngestSettings, Table
 
 OUTCOMES = ("values", "below limit only", "not measured", "set aside", "labels", "sigma", "limit", "not read")
 Result = TypeVar("Result")
@@ -33,12 +35,14 @@ def ingest(files: Mapping[str, InputFile], *, settings: IngestSettings) -> Stage
     """
     problems: list[Problem] = []
     names = settings.reference_materials.names
-    spellings_agree = _collect(problems, lambda: check_spellings(settings.phases, names))
+    _collect(problems, lambda: check_spellings(settings.phases, names))
+    if problems:  # the tables are looked at all the same
+        settings = settings.model_copy(update={"phases": {}})
     conditions = _collect(problems, lambda: conditions_table(files, settings.experiments))
     reads: list[TableRead] = []
     shared = SharedCodes()
-    for table in settings.tables if spellings_agree else ():
-        read = _collect(problems, lambda table=table: read_table(files, table, settings, shared))  # type: ignore[misc]
+    for table, name in zip(settings.tables, table_names(settings.tables), strict=True):
+        read = _collect(problems, lambda t=table, n=name: read_table(files, t, n, settings, shared))  # type: ignore[misc]
         if read is not None:
             problems += read.problems
             reads.append(read)
@@ -57,8 +61,34 @@ def ingest(files: Mapping[str, InputFile], *, settings: IngestSettings) -> Stage
             sum(read.entered for read in reads),
             {name: sum(read.outcomes[name] for read in reads) for name in OUTCOMES},
         ),
-        remarks=tuple(remark for read in reads for remark in read.remarks),
+        remarks=(*shared_batches(settings.tables), *(remark for read in reads for remark in read.remarks)),
     )
+
+
+def table_names(tables: Sequence[Table]) -> list[str]:
+    """What tables are called: their path, and their sheet as well where several are in one file."""
+    times = Counter(table.path for table in tables)
+    names: list[str] = []
+    for table in tables:
+        name = table.path if times[table.path] == 1 else f"{table.path} [{table.sheet or 1}]"
+        same = sum(1 for other in names if other == name or other.startswith(f"{name} ("))
+        names.append(f"{name} ({same + 1})" if same else name)
+    return names
+
+
+def shared_batches(tables: Sequence[Table]) -> list[Remark]:
+    """Tables that share a batch only because their file names are alike."""
+    paths: dict[str, list[str]] = {}
+    for table in tables:
+        if table.batch is None and table.columns.batch is None:
+            paths.setdefault(batch_of_path(table.path), []).append(table.path)
+    return [
+        Remark(
+            f'{", ".join(sorted(set(found)))} count as one batch, "{batch}"; state batch where they are not.'
+        )
+        for batch, found in paths.items()
+        if len(found) > 1
+    ]
 
 
 def _collect(problems: list[Problem], read: Callable[[], Result]) -> Result | None:

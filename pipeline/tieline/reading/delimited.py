@@ -98,9 +98,10 @@ def locate_units(rows: Sequence[Sequence[str]], header_index: int, layout: Layou
 
 def decided_decimal(file: InputFile, sample: Sequence[Sequence[str]], layout: Layout) -> str:
     """The decimal mark, given or found; raises InputError where the cells allow two readings."""
-    decimal = layout.decimal or find_decimal(sample)
-    if decimal is None and layout.thousands == ",":
-        return "."
+    announced = {",": ".", ".": ","}.get(
+        layout.thousands or ""
+    )  # the mark that groups thousands is not the decimal
+    decimal = layout.decimal or announced or find_decimal(sample)
     if decimal is None:
         raise InputError(
             Problem(

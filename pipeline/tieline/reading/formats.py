@@ -49,6 +49,6 @@ def read_grid(file: InputFile, layout: Layout | None = None, limits: ReadLimits 
 def ending(path: str) -> str:
     """The file name's ending in small letters, `.csv.gz` for packed text."""
     suffixes = [suffix.lower() for suffix in PurePosixPath(path.replace("\\", "/")).suffixes]
-    if suffixes[-1:] == [".gz"]:
+    if suffixes[-1:] == [".gz"] and suffixes[-2:-1] and suffixes[-2] in TEXT:
         return "".join(suffixes[-2:])
     return suffixes[-1] if suffixes else ""

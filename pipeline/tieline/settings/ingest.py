@@ -169,6 +169,13 @@ class Experiments(Settings):
         description="name used from here on -> header; must include experiment",
     )
 
+    @field_validator("columns")
+    @classmethod
+    def _has_experiment(cls, columns: dict[str, str]) -> dict[str, str]:
+        if "experiment" not in columns:
+            raise ValueError("must include experiment")
+        return columns
+
 
 class TableLimits(Settings):
     """Beyond these a table is refused, so that memory stays bounded whatever a file claims to be."""
