@@ -53,9 +53,12 @@ def run(
     out: OutOption = None,
     overrides: SetOption = None,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="Print nothing but problems.")] = False,
+    everything: Annotated[
+        bool, typer.Option("--all", help="Show every stage, remark and D instead of one screen.")
+    ] = False,
     json: JsonOption = False,
 ) -> None:
-    """Reduce a session: recompute what is not current, then show the partition coefficients.
+    """Reduce a session: recompute what is not current, write the report, show the results on one screen.
 
     Example: tieline run configs/ember.toml
     """
@@ -66,10 +69,23 @@ def run(
     session = _load(config, overrides, out)
     with terminal.progress(quiet or json) as (progress, planned):
         reports = runner.run(session, only=only, until=until, fresh=fresh, progress=progress, planned=planned)
+    files = _report_after(session, len(reports))
     if json:
         _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
     elif not quiet:
-        terminal.show_run(session, reports)
+        terminal.show_run(session, reports, files=files, everything=everything)
+
+
+def _report_after(session: Session, n_stages: int) -> tuple[str, ...]:
+    """Renews the report after a run through all stages, so that no older one lies beside newer results."""
+    from tieline.stages import STAGES
+
+    if n_stages < len(STAGES) or not session.settings.report.after_run:
+        return ()
+    from tieline.report.write import FILES, refresh_report
+
+    refresh_report(session)
+    return FILES
 
 
 @app.command()
@@ -107,6 +123,31 @@ def status(
 
 
 @app.command()
+def report(
+    config: ConfigArgument,
+    figures: Annotated[
+        Path | None,
+        typer.Option("--figures", metavar="DIR", help="Also write the pictures there, as SVG and PDF."),
+    ] = None,
+    out: OutOption = None,
+    overrides: SetOption = None,
+    json: JsonOption = False,
+) -> None:
+    """Write the report from the results of the last run: page, tables, methods paragraph.
+
+    Example: tieline report configs/ember.toml --figures figures
+    """
+    from tieline.report.write import write_report
+
+    written = [str(path) for path in write_report(_load(config, overrides, out), figures)]
+    if json:
+        _print_json({"written": written})
+    else:
+        for path in written:
+            typer.echo(path)
+
+
+@app.command()
 def demo(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="Where the demo session is copied.")] = Path(
         "tieline-demo"
@@ -120,7 +161,17 @@ def demo(
     from tieline.demo import copy_demo
 
     config = copy_demo(folder)
-    run(config, only=None, until=None, fresh=False, out=None, overrides=None, quiet=False, json=json)
+    run(
+        config,
+        only=None,
+        until=None,
+        fresh=False,
+        out=None,
+        overrides=None,
+        quiet=False,
+        everything=False,
+        json=json,
+    )
 
 
 @app.command()
@@ -151,6 +202,27 @@ def audit(
         show_audit(result)
     if result.differences:
         raise typer.Exit(DIFFERENT)
+
+
+@app.command()
+def compare(
+    run_a: Annotated[Path, typer.Argument(metavar="RUN_A", help="Run folder that changes are counted from.")],
+    run_b: Annotated[Path, typer.Argument(metavar="RUN_B", help="Run folder that is compared with it.")],
+    json: JsonOption = False,
+) -> None:
+    """Show what differs between two reductions: settings, spots used and by which rule, D, class.
+
+    Example: tieline compare example_runs/ember other_runs/ember
+    """
+    from tieline import comparing
+
+    found = comparing.compare(comparing.read_reduction(run_a), comparing.read_reduction(run_b))
+    if json:
+        _print_json(found)
+    else:
+        from tieline.terminal_compare import show_comparison
+
+        show_comparison(found)
 
 
 def main() -> None:
