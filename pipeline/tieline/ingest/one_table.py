@@ -57,13 +57,11 @@ def read_table(
     if table.path not in files:
         raise InputError(Problem("no such file.", table.path))
     read = TableRead(table, name, Asides(name))
-    grid = read_grid(files[table.path], _layout(table), _limits(settings))
+    grid, work, roles = open_table(files[table.path], table, name, settings)
     read.remarks += [Remark(f"{note}.", name) for note in grid.notes]
     for ragged in grid.ragged:
         reason = f"the row has {ragged.cells} cells, the header {grid.width}"
         read.asides.add(ragged.row, None, ragged.text, ragged.cells, reason)
-    work = Assigning(name, table, grid.headers, _full_headers(grid), grid.found.header_row)
-    roles = assign_roles(work)
     read.problems += work.problems
     read.remarks += work.remarks
     if not grid.row_count and not grid.ragged:
@@ -75,6 +73,15 @@ def read_table(
     if settings.on_unreadable == "stop":
         read.problems += read.asides.problems(SET_ASIDE_REMEDY)
     return read
+
+
+def open_table(
+    file: InputFile, table: Table, name: str, settings: IngestSettings
+) -> tuple[Grid, Assigning, Roles]:
+    """The cells of one table, and what its columns are; problems of the columns are collected in the second."""
+    grid = read_grid(file, _layout(table), _limits(settings))
+    work = Assigning(name, table, grid.headers, _full_headers(grid), grid.found.header_row)
+    return grid, work, assign_roles(work)
 
 
 def _layout(table: Table) -> Layout:
