@@ -30,6 +30,12 @@ def classify(partition: pa.Table, *, settings: ClassifySettings) -> StageResult:
     probabilities = class_probabilities(p_above)
     number = declared_class(p_above, kind, settings.confidence)
     names = np.array([*CLASSES, UNRESOLVED], dtype=object)[number]
+    for name, bounds in _widest_first(settings):
+        # Judged against its own two bounds alone, of which class 1 is the inside.
+        inside = (
+            declared_class(_probability_above(partition, np.array(bounds)), kind, settings.confidence) == 1
+        )
+        names[inside] = name
     columns = {column.name: partition.column(column.name) for column in PARTITION.columns}
     table = build(
         CLASSIFY,
@@ -41,8 +47,14 @@ def classify(partition: pa.Table, *, settings: ClassifySettings) -> StageResult:
             "p_compatible": probabilities[:, 2],
         },
     )
-    outcomes = {name: int((names == name).sum()) for name in (*reversed(CLASSES), UNRESOLVED)}
+    declarable = (*reversed(CLASSES), *settings.extra, UNRESOLVED)
+    outcomes = {name: int((names == name).sum()) for name in declarable}
     return StageResult({"classify": table}, Ledger("D", partition.num_rows, outcomes))
+
+
+def _widest_first(settings: ClassifySettings) -> list[tuple[str, tuple[float, float]]]:
+    """Extra classes by falling width on a log scale, so that a narrower one is declared last and stands."""
+    return sorted(settings.extra.items(), key=lambda item: (item[1][0] / item[1][1], item[0]))
 
 
 def _probability_above(partition: pa.Table, boundaries: FloatArray) -> FloatArray:

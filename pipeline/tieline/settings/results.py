@@ -49,10 +49,23 @@ class ClassifySettings(Settings):
     highly_incompatible_below: float = Field(
         0.01, gt=0, description="D below this is highly incompatible; a convention, others use 0.1"
     )
-    confidence: float = Field(0.95, gt=0.5, lt=1, description="probability a class needs to be declared")
+    confidence: float = Field(
+        0.95,
+        gt=0.5,
+        lt=1,
+        description="a class is declared when the interval at this confidence lies inside it",
+    )
+    extra: dict[str, tuple[float, float]] = Field(
+        default_factory=dict,
+        description="further class -> [low, high] in D; declared instead of the plain class where the interval lies "
+        "inside it, the narrowest first",
+    )
 
     @model_validator(mode="after")
     def _ordered(self) -> ClassifySettings:
+        for name, (low, high) in self.extra.items():
+            if not 0 <= low < high:
+                raise ValueError(f"extra.{name} must be [low, high] with 0 <= low < high")
         if self.highly_incompatible_below >= self.compatible_above:
             raise ValueError("highly_incompatible_below must be smaller than compatible_above")
         return self
@@ -66,3 +79,7 @@ class ReportSettings(Settings):
     """Section [report]."""
 
     title: str | None = Field(None, description="title of the report; the session's name by default")
+    after_run: bool = Field(
+        True,
+        description="write the report after every run that went through all stages, where it is not current",
+    )
