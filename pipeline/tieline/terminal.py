@@ -10,23 +10,20 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from tieline import terminal_rulings
+from tieline import terminal_rulings, terminal_summary
 from tieline.configuration import Session
 from tieline.errors import Problem
 from tieline.lock import SEAL_NAME
 from tieline.manifest import read_manifest
 from tieline.plan import Verdict, table_path
-from tieline.runner import StageReport
+from tieline.runner import StageReport, tables_of
+from tieline.stages import STAGES
 from tieline.storage import read_table
 from tieline.terminal_results import partition_tables
+from tieline.terminal_summary import printable as printable
 
 STATE_STYLES = {"current": "green", "stale": "yellow", "missing": "yellow", "waiting": "cyan"}
 MOST_REMARKS = 12
-
-
-def printable(text: object) -> str:
-    """The text without control characters, which a table from a stranger could use to drive the terminal."""
-    return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in str(text))
 
 
 Progress = tuple[Callable[[str, str], None], Callable[[Sequence[Verdict]], None]]
@@ -66,9 +63,25 @@ def show_problems(problems: Sequence[Problem]) -> None:
         console.print(Text(f"  {printable(problem)}"))
 
 
-def show_run(session: Session, reports: Sequence[StageReport]) -> None:
-    """Stages and ledgers, the partition coefficients, what needs attention, where the files are."""
+def show_run(
+    session: Session, reports: Sequence[StageReport], *, files: Sequence[str] = (), everything: bool = False
+) -> None:
+    """One screen: spots, the table of D in brief, what needs attention, where the files are.
+
+    `everything`, or a run that stopped early: stages, remarks and every D. `files`: what the report wrote.
+    """
     console = Console(highlight=False)
+    complete = reports[-1].verdict.stage == STAGES[-1].name
+    if complete and not everything:
+        terminal_summary.show_summary(console, session, tables_of(session, terminal_summary.NEEDED), files)
+    else:
+        _show_everything(console, session, reports)
+        console.print(Text(f"Results: {session.run_folder}", style="bold"))
+    for text in session.overrides:
+        console.print(Text(f"With --set {printable(text)}", style="bold"))
+
+
+def _show_everything(console: Console, session: Session, reports: Sequence[StageReport]) -> None:
     console.print(_stage_table(reports))
     _show_remarks(console, reports)
     path = table_path(session.run_folder, "classify")
@@ -76,9 +89,6 @@ def show_run(session: Session, reports: Sequence[StageReport]) -> None:
         for table in partition_tables(read_table(path, "classify"), console.width):
             console.print(table)
     terminal_rulings.show(console, session, reports)
-    for text in session.overrides:
-        console.print(Text(f"With --set {printable(text)}", style="bold"))
-    console.print(Text(f"Results: {session.run_folder}", style="bold"))
 
 
 def _stage_table(reports: Sequence[StageReport]) -> Table:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter, defaultdict
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -17,7 +17,7 @@ _PER_D = {"reference": 3.0, "technique": 3.0, "overlap": 2.0, "evidence": 2.0, "
           "spread": 0.5, "unresolved": 0.5, "pair": 0.25}  # fmt: skip
 FEW_SPOTS = 2
 LARGE_SHARE_LEFT_OUT = 0.25
-MOST_NAMES = 6
+MOST_NAMES = 4
 
 
 @dataclass(frozen=True)
@@ -33,7 +33,7 @@ class Attention:
         return _PER_D[self.kind] * self.n_affected
 
 
-def attention(tables: dict[str, pa.Table]) -> list[Attention]:
+def attention(tables: Mapping[str, pa.Table]) -> list[Attention]:
     """At most one remark per kind, the heaviest first. Reads calibrate, pair, pair.pairs, pair.techniques,
     classify and assess."""
     d_rows = tables["classify"].to_pylist()
@@ -89,7 +89,8 @@ def _techniques(rows: list[dict[str, Any]], d_rows: list[dict[str, Any]]) -> Att
         for row in d_rows
     )
     text = (
-        f"Two measurements of one phase mean disagree {len(differ)} times: {listed(row['element'] for row in differ)}; "
+        f"Two measurements of one phase mean disagree in {len(differ)} of {len(rows)} cases: "
+        f"{listed(row['element'] for row in differ)}; "
         f"worst {worst['element']} in {worst['phase']} of {worst['experiment']}, a factor {worst['ratio']:.3g}."
     )
     return Attention("technique", text, touched)

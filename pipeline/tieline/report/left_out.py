@@ -60,6 +60,11 @@ def by_test(spots: SpotUse) -> list[Reason]:
     return _reasons(spots, lambda one: [code for code in one.why.split(", ") if code != RULING])
 
 
+def by_reason(spots: SpotUse) -> list[Reason]:
+    """Tests and, as one, all rulings."""
+    return _reasons(spots, lambda one: one.why.split(", "))
+
+
 def by_person(source: Source, spots: SpotUse) -> list[Reason]:
     """Analysts in order of the values their rulings keep out."""
 

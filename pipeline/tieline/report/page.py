@@ -9,14 +9,16 @@ from importlib.resources import files
 from typing import Any
 
 from tieline.columns import ASSESS
+from tieline.notation import written
 from tieline.report.attention import attention
 from tieline.report.compact import script_json
 from tieline.report.conventions import conventions, percent, short_convention
 from tieline.report.left_out import Reason, by_person, by_test
 from tieline.report.page_data import Curve, page_data
 from tieline.report.sheets import Cell, Heading, Sheet, declared_sheet, runs_sheet, settings_rows
-from tieline.report.source import Source
+from tieline.report.source import Source, stamp
 from tieline.report.spots import SpotUse
+from tieline.rulings_effect import leaning_remarks, ruling_effects
 
 SCRIPTS = ("base.js", "plot.js", "pictures.js", "table.js", "spot.js", "main.js")
 SECTIONS = (
@@ -52,13 +54,14 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         script_digest=base64.b64encode(hashlib.sha256(script.encode()).digest()).decode(),
         data=Markup(script_json(data)),
         title=source.title,
+        stamp=stamp(source),
         version=source.version,
         fingerprint=source.fingerprint,
         level=percent(source.confidence),
         n_experiments=len(set(source.table("classify").column("experiment").to_pylist())),
         sections=SECTIONS,
         counts=_counts(source, spots),
-        attention=attention(dict(source.tables)),
+        attention=attention(source.tables),
         runs=_short(runs_sheet(source, spots)),
         stages=_stages(source),
         remarks=remarks,
@@ -68,23 +71,35 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         ranges=any(
             one["expected_lo"] is not None and one["expected_hi"] is not None for one in data["checks"]
         ),
+        effects=_effects(source),
+        leaning=leaning_remarks(source.tables) if source.rulings else [],
         by_test=_reasons("test", by_test(spots)),
         by_person=_reasons("analyst", by_person(source, spots)),
         left_out=_left_out_rows(left_out, spots),
         rulings_file=f" ({rulings})" if rulings else ", which is not set yet",
-        settings=_changed(source),
+        settings=_changed(source, reading=False),
+        reading=_changed(source, reading=True),
         methods=methods,
     )
 
 
-_GRID = """<div class="scroll"><table><thead><tr>{% for one in sheet.headings %}<th scope="col">{{ one.name }}</th>{% endfor %}
-</tr></thead><tbody>{% for row in rows %}<tr>{% for cell in row %}<td{% if cell[1] %} class="num"{% endif %}>{{ cell[0] }}</td>
-{% endfor %}</tr>{% endfor %}</tbody></table></div>"""
+_GRID = """<div class="scroll"><table><thead><tr>
+{% for one in sheet.headings %}<th scope="col"{{ right if numeric[loop.index0] }}>{{ one.name }}</th>{% endfor %}
+</tr></thead><tbody>
+{% for row in rows %}<tr>{% for text, is_number in row %}<td{{ right if is_number }}>{{ text }}</td>{% endfor %}</tr>
+{% endfor %}</tbody></table></div>"""
 
 
 def _grid(environment: Any, sheet: Sheet) -> str:
+    from markupsafe import Markup
+
     rows = [[_shown(cell) for cell in row] for row in zip(*sheet.columns, strict=True)]
-    return str(environment.from_string(_GRID).render(sheet=sheet, rows=rows))
+    numeric = [any(row[place][1] for row in rows) for place in range(len(sheet.headings))]
+    return str(
+        environment.from_string(_GRID).render(
+            sheet=sheet, rows=rows, numeric=numeric, right=Markup(' class="num"')
+        )
+    )
 
 
 def _shown(cell: Cell) -> tuple[str, bool]:
@@ -171,7 +186,27 @@ def _left_out_rows(sheet: Sheet, spots: SpotUse) -> list[dict[str, Any]]:
     ]
 
 
-def _changed(source: Source) -> Sheet:
-    rows = [row for row in settings_rows(source) if row[3]]
+def _effects(source: Source) -> Sheet:
+    """D's that the rulings change by more than a standard uncertainty."""
+    found = ruling_effects(source.tables, source.settings) if source.rulings else []
+    names = ("experiment", "pair", "element", "with rulings", "without", "change, standard uncertainties")
+    rows = [
+        (
+            one.key[0],
+            f"{one.key[1]}/{one.key[2]}",
+            one.key[3],
+            written(one.with_rulings) if one.with_rulings else "none",
+            written(one.without) if one.without else "none",
+            one.change,
+        )
+        for one in found
+    ]
+    columns = tuple([row[place] for row in rows] for place in range(len(names)))
+    return Sheet("effects", tuple(Heading(name) for name in names), columns)
+
+
+def _changed(source: Source, reading: bool) -> Sheet:
+    """Settings that differ from their defaults: those that say how tables are read, or all others."""
+    rows = [row for row in settings_rows(source) if row[3] and row[0].startswith("ingest.") == reading]
     headings = (Heading("setting"), Heading("value"), Heading("default"))
     return Sheet("settings", headings, tuple([row[place] for row in rows] for place in range(3)))

@@ -123,6 +123,7 @@ def settings_rows(source: Source) -> list[tuple[str, str, str, str]]:
     return [
         (key, value, default.get(key, ""), "yes" if key in changed else "")
         for key, value in effective.items()
+        if key != "session"
     ]
 
 

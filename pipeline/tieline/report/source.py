@@ -6,13 +6,17 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
 import pyarrow as pa
 
+from tieline import __version__
+from tieline.arrays import numbers
 from tieline.columns import TABLES
 from tieline.configuration import Session
 from tieline.correction import Concentrations, calibrated
 from tieline.errors import InputError, Problem
 from tieline.plan import read_records, table_path
+from tieline.provenance import bytes_digest, json_text
 from tieline.reading.input_file import InputFile
 from tieline.screen.rulings import Ruling, read_rulings
 from tieline.settings import SessionSettings
@@ -50,8 +54,16 @@ class Source:
         return str(self.records["classify"]["fingerprint"])
 
     def concentrations(self) -> Concentrations:
-        """The values as the phase means used them: those of `convert`, calibrated where that is configured."""
-        return calibrated(self.table("convert"), self.table("calibrate"), self.table("ingest.spots"))
+        """The values as the phase means used them: calibrated and unmixed where that is configured."""
+        screen = self.table("screen")
+        values = calibrated(self.table("convert"), self.table("calibrate"), self.table("ingest.spots"))
+        unmixed = numbers(screen, "unmixed_ppm")
+        taken = np.isfinite(unmixed)
+        return Concentrations(
+            np.where(taken, unmixed, values.value),
+            np.where(taken, numbers(screen, "unmixed_sigma_ppm"), values.sigma),
+            values.limit,
+        )
 
 
 def read_source(session: Session) -> Source:
@@ -77,6 +89,17 @@ def optional_table(source: Source, name: str) -> pa.Table | None:
     """A table that not every version of the chain writes; None where it is not there or has no rows."""
     table = source.tables.get(name)
     return table if name in TABLES and table is not None and table.num_rows else None
+
+
+def stamp(source: Source) -> str:
+    """A digest of all that a report is made from; it stands in the page, and tells whether the page is current."""
+    parts = {name: record["fingerprint"] for name, record in source.records.items()}
+    made_from = {
+        "version": __version__,
+        "stages": parts,
+        "report": source.settings.report.model_dump(mode="json"),
+    }
+    return f"report-{bytes_digest(json_text(made_from).encode())}"
 
 
 def _refuse_unless_current(verdicts: list[Any]) -> None:

@@ -11,7 +11,6 @@ import numpy as np
 import pyarrow as pa
 
 from tieline.arrays import IntArray, flags, labels, numbers
-from tieline.report.source import Source
 from tieline.screen.resolution import NOT_MEASURED, REFERENCE_MATERIAL
 
 # Nobody left these out: there is nothing to use, or they serve the calibration.
@@ -51,9 +50,9 @@ class SpotUse:
         return ["; ".join(parts.get(spot, ())) for spot in range(self.count)]
 
 
-def spot_use(source: Source) -> SpotUse:
-    """What became of every spot of a session."""
-    spots, screen = source.table("ingest.spots"), source.table("screen")
+def spot_use(tables: Mapping[str, pa.Table]) -> SpotUse:
+    """What became of every spot of a session, from `ingest.spots` and `screen`."""
+    spots, screen = tables["ingest.spots"], tables["screen"]
     order = np.lexsort(
         (numbers(spots, "row"), labels(spots, "table").codes, labels(spots, "technique").codes)
     )

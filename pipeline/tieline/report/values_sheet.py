@@ -43,8 +43,9 @@ def spots_sheet(source: Source, spots: SpotUse) -> Sheet:
             ("value", "before any calibration factor"),
             ("sigma", "one standard uncertainty"),
             ("limit", "detection limit"),
+            ("unmixed", "value with the overlapping phase removed by calculation, calibrated"),
         ):
-            values = numbers(convert, f"{part}_ppm")[rows]
+            values = numbers(screen if part == "unmixed" else convert, f"{part}_ppm")[rows]
             if not np.isfinite(values).any():
                 continue
             column: list[Cell] = [None] * spots.count

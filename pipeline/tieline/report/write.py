@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import partial
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, BinaryIO
 
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
+from tieline.lock import locked
 from tieline.report.csv_files import csv_bytes
 from tieline.report.latex import partition_document
 from tieline.report.left_out import left_out_sheet
@@ -22,8 +24,8 @@ from tieline.report.sheets import (
     runs_sheet,
     settings_sheet,
 )
-from tieline.report.source import Source, read_finished, read_source
-from tieline.report.spots import spot_use
+from tieline.report.source import Source, read_finished, read_source, stamp
+from tieline.report.spots import SpotUse, spot_use
 from tieline.report.values_sheet import spots_sheet
 from tieline.report.workbook import workbook_bytes
 from tieline.storage import write_atomically
@@ -32,34 +34,70 @@ if TYPE_CHECKING:
     from tieline.configuration import Session
 
 
-def write_report(session: Session, figures: Path | None = None, *, known_current: bool = False) -> list[Path]:
+FILES = (
+    "report.html",
+    "partition_coefficients.csv",
+    "partition_coefficients.xlsx",
+    "partition_coefficients.tex",
+    "left_out.csv",
+    "methods.txt",
+    "methods.tex",
+    "references.bib",
+)
+
+
+def write_report(session: Session, figures: Path | None = None) -> list[Path]:
     """Writes all files of the report into the run folder, and the pictures into `figures`; returns their paths.
 
-    Everything is made before anything is written. Raises InputError when a stage is missing or stale;
-    `known_current` skips that check, right after a run.
+    Everything is made before anything is written. Raises InputError when a stage is missing or stale, or the
+    folder is sealed or being written.
     """
-    source = read_finished(session) if known_current else read_source(session)
+    source = read_source(session)
     made = {session.run_folder / name: data for name, data in report_files(source).items()}
     if figures is not None:
         from tieline.report.figures import figure_files
 
         made |= {figures / name: data for name, data in figure_files(source).items()}
-    for path, data in made.items():
-        path.parent.mkdir(parents=True, exist_ok=True)
-        write_atomically(path, lambda stream, data=data: stream.write(data))  # type: ignore[misc]
+    _write(session, made)
     return list(made)
+
+
+def refresh_report(session: Session) -> None:
+    """Right after a run: writes the report unless the one in the run folder is of the same tables."""
+    source = read_finished(session)
+    page_path = session.run_folder / "report.html"
+    missing = [name for name in FILES if not (session.run_folder / name).exists()]
+    if missing or not _holds(page_path, stamp(source)):
+        _write(session, {session.run_folder / name: data for name, data in report_files(source).items()})
+
+
+def _holds(path: Path, text: str) -> bool:
+    """Whether the first lines of a file hold a text."""
+    with path.open("rb") as stream:
+        return text.encode() in stream.read(4096)
+
+
+def _write(session: Session, made: Mapping[Path, bytes]) -> None:
+    with locked(session.run_folder):
+        for path, data in made.items():
+            path.parent.mkdir(parents=True, exist_ok=True)
+            write_atomically(path, partial(_write_bytes, data))
+
+
+def _write_bytes(data: bytes, stream: BinaryIO) -> None:
+    stream.write(data)
 
 
 def report_files(source: Source) -> Mapping[str, bytes]:
     """File name to content: pure, the same tables give the same bytes."""
-    spots = spot_use(source)
+    spots = spot_use(source.tables)
     left_out = left_out_sheet(source, spots)
     partition = partition_sheet(source)
     paragraph = methods(source, spots)
     return {
         "partition_coefficients.csv": csv_bytes(partition),
         "partition_coefficients.xlsx": workbook_bytes(
-            _workbook_sheets(source, partition, left_out), source.title
+            _workbook_sheets(source, spots, partition, left_out), source.title
         ),
         "partition_coefficients.tex": partition_document(source).encode(),
         "left_out.csv": csv_bytes(left_out),
@@ -70,8 +108,7 @@ def report_files(source: Source) -> Mapping[str, bytes]:
     }
 
 
-def _workbook_sheets(source: Source, partition: Sheet, left_out: Sheet) -> list[Sheet]:
-    spots = spot_use(source)
+def _workbook_sheets(source: Source, spots: SpotUse, partition: Sheet, left_out: Sheet) -> list[Sheet]:
     sheets = [
         runs_sheet(source, spots),
         partition,

@@ -29,7 +29,7 @@ function filled(element, attributes, children) {
     if (key.startsWith("on")) element.addEventListener(key.slice(2), value);
     else if (value !== null && value !== undefined && value !== false) element.setAttribute(key, value === true ? "" : value);
   }
-  for (const child of children.flat()) if (child !== null && child !== undefined) element.append(child);
+  for (const child of children.flat(Infinity)) if (child !== null && child !== undefined) element.append(child);
   return element;
 }
 
@@ -85,4 +85,5 @@ const analytesOf = (element) => DATA.analytes.filter((analyte) => analyte.elemen
 
 // Colour and shape go together, so that neither is needed to tell two things apart.
 const SHAPES = ["circle", "square", "triangle", "diamond", "down", "bar", "plus", "star"];
-const styleOf = (place) => ({ shape: SHAPES[place % SHAPES.length], colour: `k${place % 8}` });
+// Eight shapes and seven colours: 56 pairs before the first repeats.
+const styleOf = (place) => ({ shape: SHAPES[place % 8], colour: `k${place % 7}` });

@@ -66,7 +66,7 @@ PICTURES.elements = () => {
   const marks = [], place = new Map(names.map((name, at) => [name, at]));
   const spread = (name) => (experiments.length > 1 ? (experiments.indexOf(name) / (experiments.length - 1) - 0.5) * 8 : 0);
   for (const at of rows) {
-    const mark = markOfD(at, place.get(D.element[at]), styleOf(experiments.indexOf(D.experiment[at])));
+    const mark = markOfD(at, place.get(D.element[at]), styleOf(EXPERIMENTS.indexOf(D.experiment[at])));
     if (mark) marks.push({ ...mark, shift: spread(D.experiment[at]), size: 3.4, faint: chosen.experiment && D.experiment[at] !== chosen.experiment });
   }
   return {
@@ -74,7 +74,7 @@ PICTURES.elements = () => {
     x: { title: "element, by increasing D", categories: names },
     y: axis(`D ${chosen.pair}`, marks.flatMap((mark) => [mark.y, mark.lo, mark.hi]), true),
     bands: [{ y0: DATA.highlyBelow, y1: DATA.compatibleAbove, class: "between", label: "between the class boundaries" }],
-    legend: [...experiments.map((name, at) => ({ ...styleOf(at), label: name })), { colour: "k7", limit: true, label: "upper limit" }, { band: "between", label: `${DATA.highlyBelow} < D < ${DATA.compatibleAbove}` }],
+    legend: [...experiments.map((name) => ({ ...styleOf(EXPERIMENTS.indexOf(name)), label: name })), { colour: "k7", limit: true, label: "upper limit" }, { band: "between", label: `${DATA.highlyBelow} < D < ${DATA.compatibleAbove}` }],
   };
 };
 

@@ -86,14 +86,15 @@ function grid(spec, x, y, width, height) {
     if (!tick.minor) group.append(draw("line", { x1: MARGIN.left, x2: right, y1: y(tick.at), y2: y(tick.at) }));
     if (tick.label !== "") group.append(draw("text", { x: MARGIN.left - 7, y: y(tick.at) + 4, "text-anchor": "end" }, tick.label));
   }
-  const ticks = ticksOf(spec.x), tight = spec.x.categories && ticks.some((tick) => tick.label.length * 7 > (right - MARGIN.left) / ticks.length);
-  const every = tight ? Math.ceil((ticks.length * 15) / (right - MARGIN.left)) : 1;
+  const ticks = ticksOf(spec.x), tight = spec.x.categories && ticks.some((tick) => tick.label.length * 7 + 3 > (right - MARGIN.left) / ticks.length);
+  // Long labels are turned, short ones take two rows; where even that is too tight, some are left out.
+  const turned = tight && ticks.some((tick) => tick.label.length > 2), rows = tight && !turned ? 2 : 1;
+  const every = tight ? Math.ceil((ticks.length * (turned ? 15 : 8)) / (right - MARGIN.left)) : 1;
   ticks.forEach((tick, place) => {
     const at = x(tick.at);
     if (!spec.x.categories) group.append(draw("line", { x1: at, x2: at, y1: bottom, y2: bottom + 5 }));
     if (tick.label === "" || place % every) return;
-    const turned = tight && ticks.some((one) => one.label.length > 2);
-    group.append(draw("text", { x: at, y: bottom + 18, "text-anchor": turned ? "end" : "middle", transform: turned ? `rotate(-40 ${at} ${bottom + 14})` : null }, tick.label));
+    group.append(draw("text", { x: at, y: bottom + (rows === 2 ? 12 + 11 * ((place / every) % 2) : 18), "text-anchor": turned ? "end" : "middle", transform: turned ? `rotate(-40 ${at} ${bottom + 14})` : null }, tick.label));
   });
   group.append(draw("path", { class: "frame", d: `M${MARGIN.left} ${MARGIN.top}V${bottom}H${right}` }));
   group.append(draw("text", { class: "title", x: (MARGIN.left + right) / 2, y: height - 6, "text-anchor": "middle" }, spec.x.title));

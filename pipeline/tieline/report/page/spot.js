@@ -32,7 +32,7 @@ function findingsOf(spot) {
   const own = DATA.findings.filter(([at]) => at === spot);
   if (!own.length) return make("p", { class: "note" }, "No test and no person remarked on it.");
   return make("ul", { class: "findings" }, own.map(([, analyte, code, statistic, threshold, p, action, detail]) =>
-    make("li", {}, make("b", {}, `${code} (${action})`), ` ${analyte === null ? "" : analyte + ": "}${detail}`, known(statistic) && known(threshold) ? make("span", { class: "note" }, ` statistic ${number(statistic, 3)}, threshold ${number(threshold, 3)}${known(p) ? `, p ${number(p, 2)}` : ""}`) : null)));
+    make("li", {}, make("b", {}, `${code} (${action})`), ` ${analyte === null ? "" : analyte + ": "}${detail}`, known(statistic) && known(threshold) ? make("span", { class: "note" }, ` statistic ${number(statistic, 3)}, threshold ${number(threshold, 3)}${known(p) ? `, p ${p ? number(p, 2) : "below 1e-300"}` : ""}`) : null)));
 }
 
 function valuesOf(spot) {
@@ -45,11 +45,16 @@ function valuesOf(spot) {
     const at = means.get([spotExperiment[spot], spotPhase[spot], DATA.techniques[analyte.technique].name, analyte.name].join("|"));
     const mean = at === undefined ? null : DATA.means.mean_ppm[at], sd = at === undefined ? null : Math.hypot(cell.sigma || 0, DATA.means.spread_sd_ppm[at] || 0);
     const off = known(mean) && cell.value !== null && sd > 0 ? (cell.value - mean) / sd : null;
-    rows.push(make("tr", { class: cell.used ? null : "is-out" }, make("th", { scope: "row" }, analyte.name), make("td", { class: "num" }, cell.value === null ? `<${number(cell.limit, 3)}` : number(cell.value)), make("td", { class: "num" }, cell.sigma === null ? "" : number(cell.sigma, 2)), make("td", { class: "num" }, number(cell.limit, 2)), make("td", { class: "num" }, off === null ? "" : `${off > 0 ? "+" : off < 0 ? "−" : ""}${Math.abs(off).toFixed(1)}`), make("td", {}, cell.why)));
+    rows.push(make("tr", { class: cell.used ? null : "is-out" }, make("th", { scope: "row" }, analyte.name), make("td", { class: "num" }, cell.value === null ? `<${number(cell.limit, 3)}` : number(cell.value)), make("td", { class: "num" }, cell.sigma === null ? "" : number(cell.sigma, 2)), make("td", { class: "num" }, number(cell.limit, 2)), make("td", { class: "num" }, off === null ? "" : signed(off)), make("td", {}, cell.why)));
   }
   const heads = ["analyte", "ppm", "σ", "limit", "off", "left out"];
   return make("div", { class: "scroll" }, make("table", {}, make("caption", {}, "Values as element, µg/g, with one standard uncertainty from counting. Off: from the phase mean, in standard deviations of a spot."), make("thead", {}, make("tr", {}, heads.map((name, place) => make("th", { scope: "col", class: place && place < 5 ? "num" : null }, name)))), make("tbody", {}, rows)));
 }
+
+const signed = (value) => {
+  const shown = Math.abs(value).toFixed(1);
+  return shown === "0.0" ? shown : `${value > 0 ? "+" : "−"}${shown}`;
+};
 
 function rulingForm(spot) {
   if (text(SPOTS.material, spot) !== null) return make("p", { class: "note" }, "A reference material never enters a phase mean; there is nothing to rule.");

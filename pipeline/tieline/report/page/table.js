@@ -13,8 +13,7 @@ const COLUMNS = [
   { title: "D", by: levelOf, number: true },
   { title: `${percent(DATA.confidence)} interval`, by: (at) => DATA.D.D_lo[at], number: true },
   { title: "Class", by: (at) => D.class[at] },
-  { title: "n alpha", by: (at) => DATA.D.n_alpha[at], number: true },
-  { title: "n beta", by: (at) => DATA.D.n_beta[at], number: true },
+  { title: "n, alpha and beta", by: (at) => DATA.D.n_alpha[at], number: true },
   { title: "Uncertainty from", by: (at) => DATA.D.share_counting[at] ?? 2 },
   { title: "Remark", by: (at) => remarkOf(at) },
 ];
@@ -28,12 +27,12 @@ function remarkOf(at) {
 
 function rowOf(at) {
   const { D_lo, D_hi, n_alpha, n_beta, written } = DATA.D;
-  const interval = D.kind[at] === "value" ? `${number(D_lo[at])} to ${number(D_hi[at])}` : "";
+  const interval = D.kind[at] === "value" ? `${number(D_lo[at], 3)} to ${number(D_hi[at], 3)}` : "";
   const open = make("button", { type: "button", class: "link", onclick: () => choose({ pair: D.pair[at], element: D.element[at], experiment: D.experiment[at] }), title: "Show this element, pair and experiment in the pictures" }, D.element[at]);
   return make("tr", { "data-at": at },
     make("td", {}, D.experiment[at]), make("td", {}, D.pair[at]), make("td", {}, open), make("td", { class: "num" }, written[at]), make("td", { class: "num" }, interval),
-    make("td", {}, make("span", { class: `class-${MARKS[D.class[at]] === "?" ? "open" : MARKS[D.class[at]]}` }, make("b", { "aria-hidden": "true" }, MARKS[D.class[at]]), ` ${D.class[at]}`)),
-    make("td", { class: "num" }, n_alpha[at]), make("td", { class: "num" }, n_beta[at]), make("td", {}, budgetBar(at)), make("td", { class: "remark" }, remarkOf(at)));
+    make("td", {}, make("span", { class: `class class-${MARKS[D.class[at]] === "?" ? "open" : MARKS[D.class[at]]}` }, make("b", { "aria-hidden": "true" }, MARKS[D.class[at]]), ` ${D.class[at]}`)),
+    make("td", { class: "num" }, `${n_alpha[at]}, ${n_beta[at]}`), make("td", {}, budgetBar(at)), make("td", { class: "remark" }, remarkOf(at)));
 }
 
 function budgetBar(at) {
