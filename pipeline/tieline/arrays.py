@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -13,6 +15,10 @@ FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
 TextArray = npt.NDArray[np.object_]
+
+# Keys are ranked by a table of all possible ones while it stays of the size of the rows, else by sorting.
+DENSE_KEYS_PER_ROW = 4
+LARGEST_KEY = 2**62
 
 
 @dataclass(frozen=True)
@@ -26,6 +32,15 @@ class Labels:
         """The texts row by row, None for null."""
         return np.array([*self.texts, None], dtype=object)[self.codes]
 
+    def take(self, rows: IntArray) -> Labels:
+        """The labels of some rows."""
+        return Labels(self.codes[rows], self.texts)
+
+    def array(self) -> pa.DictionaryArray:
+        """The labels as an Arrow column."""
+        codes = pa.array(self.codes.astype(np.int32), mask=self.codes < 0)
+        return pa.DictionaryArray.from_arrays(codes, pa.array(self.texts, pa.string()))
+
     def is_one_of(self, wanted: Sequence[str]) -> BoolArray:
         """Rows whose label is among `wanted`."""
         among = np.array([text in wanted for text in self.texts] + [False])
@@ -36,21 +51,27 @@ class Labels:
 class Groups:
     """Rows sorted into groups by several label columns.
 
-    `code` has one entry per row (-1: in no group), `keys` one tuple of texts per group, in sorted order,
-    `first` the first row of each group.
+    `code` has one entry per row (-1: in no group), `labels` one entry per group, in sorted order, for every
+    column, `first` the first row of each group.
     """
 
     code: IntArray
-    keys: tuple[tuple[str | None, ...], ...]
+    labels: tuple[Labels, ...]
     first: IntArray
 
     @property
     def count(self) -> int:
-        return len(self.keys)
+        return len(self.first)
+
+    @cached_property
+    def keys(self) -> tuple[tuple[str | None, ...], ...]:
+        """One tuple of texts per group."""
+        return tuple(zip(*(self.key(position) for position in range(len(self.labels))), strict=True))
 
     def key(self, position: int) -> list[str | None]:
         """One key column, one entry per group."""
-        return [key[position] for key in self.keys]
+        texts: list[str | None] = self.labels[position].text().tolist()
+        return texts
 
 
 def numbers(table: pa.Table, name: str) -> FloatArray:
@@ -72,36 +93,65 @@ def flags(table: pa.Table, name: str) -> BoolArray:
 
 def labels(table: pa.Table, name: str) -> Labels:
     """A label column as codes into its sorted texts in use."""
-    array = table.column(name).combine_chunks()
-    if isinstance(array, pa.ChunkedArray):
+    return label_codes(one_array(table.column(name)))
+
+
+def label_codes(array: pa.DictionaryArray) -> Labels:
+    """A label array as codes into its sorted texts in use, whatever the order of its dictionary."""
+    indices = array.indices.fill_null(-1) if array.null_count else array.indices
+    codes, texts = indices.to_numpy(zero_copy_only=False), array.dictionary.to_pylist()
+    used = np.zeros(len(texts) + 1, dtype=np.bool_)
+    used[codes] = True  # -1, null, marks the extra place at the end
+    in_use = [text for text, is_used in zip(texts, used, strict=False) if is_used]
+    if all(before < after for before, after in pairwise(in_use)) and len(in_use) == len(texts):
+        return Labels(codes.astype(np.int64), tuple(texts))
+    in_use = sorted(set(in_use))
+    place = {text: position for position, text in enumerate(in_use)}
+    places = np.array([*(place.get(text, -1) for text in texts), -1], dtype=np.int64)
+    return Labels(places[codes], tuple(in_use))
+
+
+def one_array(column: pa.ChunkedArray) -> pa.Array:
+    """A column as one array, without a copy where it already is one."""
+    array = column.combine_chunks()
+    if isinstance(array, pa.ChunkedArray):  # Arrow keeps chunks where one array could not hold them
         array = pa.concat_arrays(array.chunks) if array.num_chunks else pa.array([], array.type)
-    texts = array.dictionary.to_pylist()
-    codes = array.indices.fill_null(-1).to_numpy(zero_copy_only=False)
-    used = np.bincount(codes[codes >= 0], minlength=len(texts)) > 0
-    in_use = sorted({text for text, is_used in zip(texts, used, strict=True) if is_used})
-    rank = {text: position for position, text in enumerate(in_use)}
-    mapping = np.array([*(rank.get(text, -1) for text in texts), -1], dtype=np.int64)
-    return Labels(mapping[codes], tuple(in_use))
+    return array
 
 
 def group_rows(columns: Sequence[Labels], rows: BoolArray | None = None) -> Groups:
     """Groups rows by label columns; only `rows` where given. A null label is a label of its own, sorted first."""
-    size = len(columns[0].codes)
-    combined = np.zeros(size, dtype=np.int64)
+    chosen = None if rows is None or rows.all() else np.flatnonzero(rows)
+    combined, size = np.zeros(len(columns[0].codes) if chosen is None else len(chosen), dtype=np.int64), 1
     for column in columns:
-        # Re-numbering after every column keeps the product of many label counts within 64 bits.
-        combined = combined * (len(column.texts) + 1) + column.codes + 1
-        if len(columns) > 2:
-            combined = np.unique(combined, return_inverse=True)[1].reshape(-1)
-    chosen = np.arange(size) if rows is None else np.flatnonzero(rows)
-    _, first, inverse = np.unique(combined[chosen], return_index=True, return_inverse=True)
-    code = np.full(size, -1, dtype=np.int64)
-    code[chosen] = inverse.reshape(-1)
-    first = chosen[first]
-    columns_of_keys = [
-        [column.texts[c] if c >= 0 else None for c in column.codes[first]] for column in columns
-    ]
-    return Groups(code, tuple(zip(*columns_of_keys, strict=True)), first)
+        choices = len(column.texts) + 1
+        if size * choices > LARGEST_KEY:
+            combined, first = ranked(combined, size)
+            size = len(first)
+        codes = column.codes if chosen is None else column.codes[chosen]
+        combined = combined * choices + codes + 1
+        size *= choices
+    rank, first = ranked(combined, size)
+    code = rank
+    if chosen is not None:
+        code = np.full(len(columns[0].codes), -1, dtype=np.int64)
+        code[chosen] = rank
+        first = chosen[first]
+    return Groups(code, tuple(column.take(first) for column in columns), first)
+
+
+def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
+    """The place of every key, 0 <= key < size, among the different keys, and the first row of each of these."""
+    if size > DENSE_KEYS_PER_ROW * len(keys):
+        _, first, rank = np.unique(keys, return_index=True, return_inverse=True)
+        return rank.reshape(-1), first
+    row = np.full(size, -1, dtype=np.int64)
+    row[keys[::-1]] = np.arange(
+        len(keys) - 1, -1, -1
+    )  # of rows with one key the last written, the first, stays
+    present = row >= 0
+    place: IntArray = np.cumsum(present) - 1
+    return place[keys], row[present]
 
 
 def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
@@ -112,5 +162,4 @@ def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
     tables = labels(table, "table")
     rows = counts(table, "row")
     widest = int(rows.max(initial=0)) + 1
-    _, first, inverse = np.unique(tables.codes * widest + rows, return_index=True, return_inverse=True)
-    return inverse.reshape(-1), first
+    return ranked(tables.codes * widest + rows, len(tables.texts) * widest)

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -81,8 +82,9 @@ def calibrate(
     batch_of = _batch_of(groups, batches)
     bias, bias_se, spread, n_materials = _bias(materials, known, batch_of, batches.count)
     usable = measured & np.append(known, False)[groups.code]
-    sequence = sequence_of(convert, ingest_spots)
-    drift = _drift(usable, value, sequence, materials, batches, settings)
+    rows = np.flatnonzero(usable)
+    sequence = sequence_of(convert, ingest_spots, rows)
+    drift = _drift(rows, value[rows], sequence, materials, batches, batch_of, settings)
     columns = _columns(batches, (bias, bias_se, spread), drift, settings)
     n_spots = np.bincount(batches.code[usable], minlength=batches.count)
     table = build(CALIBRATE, {**columns, "n_spots": n_spots, "n_materials": n_materials})
@@ -144,19 +146,20 @@ def _bias(
 
 
 def _drift(
-    usable: BoolArray,
+    rows: IntArray,
     value: FloatArray,
     sequence: FloatArray,
     materials: Materials,
     batches: Groups,
+    batch_of: IntArray,
     settings: CalibrateSettings,
 ) -> Drift:
     """Straight line of the relative deviations on the run order, one level per material, by least squares.
 
+    rows: the usable rows of `convert`, with their values in ppm and places in the run order.
     With a level per material both variables are taken relative to the material's mean; the slope's t has
     n - materials - 1 degrees of freedom.
     """
-    rows = np.flatnonzero(usable)
     material, batch = materials.groups.code[rows], batches.code[rows]
     count = np.bincount(material, minlength=materials.groups.count)
 
@@ -164,9 +167,9 @@ def _drift(
         mean = np.bincount(material, weights=x, minlength=len(count)) / np.maximum(count, 1)
         return np.asarray(x - mean[material])
 
-    reference_mean = np.bincount(material, weights=value[rows], minlength=len(count)) / np.maximum(count, 1)
-    deviation = centred(value[rows] / np.where(reference_mean == 0, np.nan, reference_mean)[material])
-    place = centred(sequence[rows])
+    reference_mean = np.bincount(material, weights=value, minlength=len(count)) / np.maximum(count, 1)
+    deviation = centred(value / np.where(reference_mean == 0, np.nan, reference_mean)[material])
+    place = centred(sequence)
     n_batches = batches.count
 
     def total(x: FloatArray) -> FloatArray:
@@ -174,7 +177,7 @@ def _drift(
 
     sxx, sxy, syy = total(place**2), total(place * deviation), total(deviation**2)
     n = np.bincount(batch, minlength=n_batches)
-    levels = np.array([len(np.unique(material[batch == code])) for code in range(n_batches)])
+    levels = np.bincount(batch_of[count > 0], minlength=n_batches)
     dof = n - levels - 1
     testable = (n >= settings.min_spots_for_drift) & (dof > 0) & (sxx > 0) & np.isfinite(syy)
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -182,7 +185,7 @@ def _drift(
         residual = np.maximum(syy - slope * sxy, 0.0) / np.where(testable, dof, 1)
         t = np.abs(slope) / np.sqrt(residual / sxx)
         p = np.where(testable & np.isfinite(t), 2.0 * special.stdtr(np.where(testable, dof, 1), -t), np.nan)
-        centre = np.where(n > 0, total(sequence[rows]) / np.maximum(n, 1), np.nan)
+        centre = np.where(n > 0, total(sequence) / np.maximum(n, 1), np.nan)
     return Drift(slope, p, centre)
 
 
@@ -265,15 +268,17 @@ def _remarks(
     table: pa.Table, accepted: Mapping[tuple[str, str], AcceptedValue], groups: Groups
 ) -> tuple[Remark, ...]:
     remarks = []
-    rows = table.to_pylist()
-    for batch in sorted({row["batch"] for row in rows}):
-        failed = [row for row in rows if row["batch"] == batch and row["passed"] is False]
+    by_batch: dict[str, list[dict[str, Any]]] = {}
+    for row in table.to_pylist():
+        by_batch.setdefault(row["batch"], []).append(row)
+    for batch, rows in sorted(by_batch.items()):
+        failed = [row for row in rows if row["passed"] is False]
         if failed:
             worst = ", ".join(f"{row['element']} {row['bias']:.3f}" for row in failed)
             remarks.append(
                 Remark(f"reference materials outside the laboratory's limit: {worst} of accepted", batch)
             )
-        drifting = [row for row in rows if row["batch"] == batch and (row["drift_p"] or 1.0) < 0.001]
+        drifting = [row for row in rows if (row["drift_p"] or 1.0) < 0.001]
         if drifting:
             named = ", ".join(row["element"] for row in drifting)
             remarks.append(

@@ -59,8 +59,10 @@ def calibrate_row(convert: pa.Table, calibrate: pa.Table) -> IntArray:
     return rows
 
 
-def sequence_of(convert: pa.Table, spots: pa.Table) -> FloatArray:
-    """The place in the run order of the spot of every row of `convert`."""
+def sequence_of(convert: pa.Table, spots: pa.Table, rows: IntArray | None = None) -> FloatArray:
+    """The place in the run order of the spot of every row of `convert`, or of the `rows` named."""
+    if rows is not None:
+        convert = convert.select(["table", "row"]).take(pa.array(rows))
     all_tables = sorted({*labels(convert, "table").texts, *labels(spots, "table").texts})
     rank = {text: position for position, text in enumerate(all_tables)}
     widest = int(max(counts(convert, "row").max(initial=0), counts(spots, "row").max(initial=0))) + 1

@@ -143,7 +143,7 @@ def _pair_table(
     return build(
         PAIR,
         {
-            **{name: groups.key(position) for position, name in enumerate(GROUP_COLUMNS)},
+            **dict(zip(GROUP_COLUMNS, groups.labels, strict=True)),
             "n_used": count(taken),
             "n_left_out": count(groups.code >= 0) - count(taken),
             "n_below_limit": count(below),

@@ -23,11 +23,12 @@ def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> t
     experiment, phase = labels(convert, "experiment"), labels(convert, "phase")
     unknown = experiment.codes >= 0
     groups = group_rows([experiment, phase], unknown)
-    spot, _ = spot_codes(convert)
-    chosen = np.flatnonzero(used)
+    spot, first = spot_codes(convert)
     # A spot counts once, however many of its values are used.
-    spots_used = np.unique(np.stack([groups.code[chosen], spot[chosen]]), axis=1)[0]
-    n_used = dict(zip(groups.keys, np.bincount(spots_used, minlength=groups.count).tolist(), strict=True))
+    has_used = np.zeros(len(first), dtype=np.bool_)
+    has_used[spot[used]] = True
+    spots_used = np.bincount(groups.code[first[has_used]], minlength=groups.count)
+    n_used = dict(zip(groups.keys, spots_used.tolist(), strict=True))
     phases = sorted({str(key[1]) for key in groups.keys})
     wanted = _wanted(phases, settings)
     rows = []
@@ -90,18 +91,17 @@ def technique_differences(
     """
     groups = group_rows([labels(pair, name) for name in ("experiment", "phase", "element")])
     mean, se = numbers(pair, "mean_ppm"), numbers(pair, "se_ppm")
-    order = np.argsort(groups.code, kind="stable")
-    size = np.bincount(groups.code, minlength=groups.count)
-    start = np.cumsum(size) - size
-    first, second = [], []
-    for code in np.flatnonzero(size > 1):
-        members = order[start[code] : start[code] + size[code]]
-        members = members[np.isfinite(mean[members]) & (mean[members] > 0)]
-        first += [member for member in members[:1] for _ in members[1:]]
-        second += list(members[1:])
-    one, two = np.array(first, dtype=np.int64), np.array(second, dtype=np.int64)
+    usable = np.flatnonzero(np.isfinite(mean) & (mean > 0))
+    usable = usable[np.argsort(groups.code[usable], kind="stable")]
+    code = groups.code[usable]
+    is_first = np.ones(len(code), dtype=np.bool_)
+    is_first[1:] = code[1:] != code[:-1]
+    # The first mean of each group stands against every other of it.
+    two = usable[~is_first]
+    one = usable[is_first][np.cumsum(is_first) - 1][~is_first]
     shared = _relative_calibration(pair, calibrate)
-    same_batch = _texts(pair, "batch", one) == _texts(pair, "batch", two)
+    batch = labels(pair, "batch").codes
+    same_batch = batch[one] == batch[two]
     calibration = np.where(same_batch, 0.0, np.hypot(shared[one] * mean[one], shared[two] * mean[two]))
     total = np.sqrt(np.nan_to_num(se[one]) ** 2 + np.nan_to_num(se[two]) ** 2 + calibration**2)
     deviation = (mean[two] - mean[one]) / np.where(total > 0, total, np.nan)
@@ -109,9 +109,9 @@ def technique_differences(
     table = build(
         PAIR_TECHNIQUES,
         {
-            "experiment": [groups.keys[code][0] for code in groups.code[one]],
-            "phase": [groups.keys[code][1] for code in groups.code[one]],
-            "element": [groups.keys[code][2] for code in groups.code[one]],
+            "experiment": groups.labels[0].take(groups.code[one]),
+            "phase": groups.labels[1].take(groups.code[one]),
+            "element": groups.labels[2].take(groups.code[one]),
             "first": _described(pair, one),
             "second": _described(pair, two),
             "first_ppm": mean[one],

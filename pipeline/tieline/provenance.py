@@ -11,6 +11,8 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from tieline.arrays import label_codes, one_array
+
 
 def bytes_digest(data: bytes | memoryview | pa.Buffer) -> str:
     """SHA-256 of a file's bytes, in hexadecimal."""
@@ -38,49 +40,38 @@ def content_digest(table: pa.Table) -> str:
     The same for a table in memory and read back from its Parquet file. Values hidden under nulls and
     unused dictionary entries do not count.
     """
-    digest = hashlib.sha256(json_text([[field.name, str(field.type)] for field in table.schema]).encode())
-    digest.update(str(table.num_rows).encode())
-    for column in table.columns:
-        array = column.combine_chunks()
-        if isinstance(array, pa.ChunkedArray):  # pyarrow keeps a chunked array when it would not fit one
-            array = pa.concat_arrays(array.chunks) if array.num_chunks else pa.array([], array.type)
-        for part in _canonical(array):
-            digest.update(part)
+    columns = [
+        [field.name, str(field.type), column_digest(column)]
+        for field, column in zip(table.schema, table.columns, strict=True)
+    ]
+    return bytes_digest(json_text([table.num_rows, columns]).encode())
+
+
+def column_digest(column: pa.ChunkedArray) -> str:
+    """SHA-256 of a column's values and nulls."""
+    array = one_array(column)
+    digest = hashlib.sha256()
+    if pa.types.is_dictionary(array.type):
+        labels = label_codes(array)
+        digest.update(json_text(labels.texts).encode())
+        digest.update(labels.codes.astype(_narrow_type(len(labels.texts))))
+        return digest.hexdigest()
+    if array.null_count:
+        digest.update(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)))
+    if pa.types.is_string(array.type):
+        filled = array.fill_null("") if array.null_count else array
+        digest.update(pc.binary_length(filled).to_numpy(zero_copy_only=False))
+        digest.update(_text_bytes(filled))
+        return digest.hexdigest()
+    if array.null_count:
+        array = array.fill_null(pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type))
+    digest.update(np.ascontiguousarray(array.to_numpy(zero_copy_only=False)))
     return digest.hexdigest()
 
 
-def _canonical(array: pa.Array) -> list[bytes | memoryview]:
-    if pa.types.is_dictionary(array.type):
-        return _canonical_labels(array)
-    parts: list[bytes | memoryview] = []
-    numbers: np.ndarray[Any, Any]
-    if array.null_count:
-        parts.append(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)).tobytes())
-    if pa.types.is_string(array.type):
-        filled = array.fill_null("")
-        lengths: np.ndarray[Any, Any] = pc.binary_length(filled).to_numpy(zero_copy_only=False)
-        parts.append(lengths.tobytes())
-        parts.append(_text_bytes(filled))
-        return parts
-    zero = pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type)
-    numbers = array.fill_null(zero).to_numpy(zero_copy_only=False)
-    if len(numbers):
-        parts.append(numbers.tobytes())
-    return parts
-
-
-def _canonical_labels(array: pa.DictionaryArray) -> list[bytes | memoryview]:
-    """Codes into the sorted list of the texts in use; null is -1."""
-    texts = array.dictionary.to_pylist()
-    codes = array.indices.fill_null(-1).to_numpy(zero_copy_only=False)
-    used = np.bincount(codes[codes >= 0], minlength=len(texts)) > 0
-    in_use = sorted({text for text, is_used in zip(texts, used, strict=True) if is_used})
-    rank = {text: position for position, text in enumerate(in_use)}
-    mapping = np.array([*(rank.get(text, -1) for text in texts), -1], dtype=np.int32)
-    parts: list[bytes | memoryview] = [json_text(in_use).encode()]
-    if len(codes):
-        parts.append(mapping[codes].tobytes())
-    return parts
+def _narrow_type(count: int) -> type[np.signedinteger[Any]]:
+    """The smallest integer type for the codes -1 .. count - 1: most label columns have few texts."""
+    return np.int8 if count < 2**7 else np.int16 if count < 2**15 else np.int32
 
 
 def _text_bytes(array: pa.StringArray) -> bytes | memoryview:

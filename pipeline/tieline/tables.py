@@ -12,6 +12,7 @@ from typing import Any, Literal
 
 import pyarrow as pa
 
+from tieline.arrays import Labels
 from tieline.errors import DefectError
 
 Kind = Literal["label", "text", "number", "count", "flag"]
@@ -57,7 +58,7 @@ class TableSpec:
 
 
 def build(spec: TableSpec, columns: Mapping[str, Any]) -> pa.Table:
-    """A table with the declared columns in the declared order from arrays, lists or Arrow columns.
+    """A table with the declared columns in the declared order from arrays, lists, Labels or Arrow columns.
 
     NaN in a float array becomes null: a stage file has one way of saying "no number".
     Raises DefectError when a column is missing, undeclared, or of another type than declared.
@@ -102,6 +103,8 @@ def declared(table: pa.Table, spec: TableSpec) -> pa.Table:
 def _column(spec: TableSpec, column: Column, data: Any) -> pa.Array | pa.ChunkedArray:
     target = ARROW_TYPES[column.kind]
     try:
+        if isinstance(data, Labels):
+            data = data.array()
         if isinstance(data, pa.Array | pa.ChunkedArray):
             return _arrow_column(data, target)
         if column.kind == "label":

@@ -11,11 +11,12 @@ must be finite. A group whose sigmas are all unknown has counting variance and m
 unknown, these take the root mean square of the known ones.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 
 from tieline.statistics.groups import (
+    BoolArray,
     FloatArray,
     IntArray,
     divide,
@@ -208,28 +209,64 @@ def paule_mandel(values: FloatArray, variances: FloatArray, group: IntArray, n_g
     high = np.where(n > 1, np.fmax(scatter - smallest, 0.0), 0.0)
     # A zero variance would make a weight infinite at tau = 0: start a hair above.
     start = np.where(np.nan_to_num(smallest) > 0, 0.0, 1e-14 * high)
-    active = high > 0
-    if not active.any():
-        return low
     statistic, slope = _weighted_scatter(deviation, variances, start, group, n_groups)
-    active &= statistic > freedom
-    high = np.where(active, high, 0.0)
-    between = np.where(active, start, 0.0)
-    tolerance = 1e-13 * high
+    active = (high > 0) & (statistic > freedom)
+    between = np.zeros(n_groups)
+    search = _Search(np.arange(n_groups), start, low, high, freedom, 1e-13 * high, statistic, slope)
+    rows = deviation, variances, group
     for _ in range(200):
-        step = divide(statistic * (statistic / freedom - 1.0), slope, otherwise=0.0)
-        proposal = between + step
-        inside = (proposal >= low) & (proposal <= high)
-        proposal = np.where(inside, proposal, 0.5 * (low + high))
-        proposal = np.where(active, proposal, between)
-        active &= np.abs(proposal - between) > tolerance
-        between = proposal
-        if not active.any():
+        # Most groups are done after a few steps: the rows of the others alone are looked at again.
+        search, rows = search.of(active), _rows_of(active, *rows)
+        if not len(search.group):
             break
-        statistic, slope = _weighted_scatter(deviation, variances, between, group, n_groups)
-        low = np.where(statistic > freedom, between, low)
-        high = np.where(statistic < freedom, between, high)
+        active, search = search.step()
+        between[search.group] = search.between
+        statistic, slope = _weighted_scatter(rows[0], rows[1], search.between, rows[2], len(search.group))
+        search = search.bracketed(statistic, slope)
     return between
+
+
+@dataclass(frozen=True)
+class _Search:
+    """The between-spot variances looked for, of the groups not yet settled; shape (groups,) each."""
+
+    group: IntArray
+    between: FloatArray
+    low: FloatArray
+    high: FloatArray
+    freedom: FloatArray
+    tolerance: FloatArray
+    statistic: FloatArray
+    slope: FloatArray
+
+    def of(self, chosen: BoolArray) -> "_Search":
+        """The chosen groups alone."""
+        return _Search(*(getattr(self, field.name)[chosen] for field in fields(self)))
+
+    def step(self) -> tuple[BoolArray, "_Search"]:
+        """Newton's step, or the middle of the bracket where it leads outside; and which are not settled by it."""
+        step = divide(self.statistic * (self.statistic / self.freedom - 1.0), self.slope, otherwise=0.0)
+        proposal = self.between + step
+        inside = (proposal >= self.low) & (proposal <= self.high)
+        proposal = np.where(inside, proposal, 0.5 * (self.low + self.high))
+        unsettled = np.abs(proposal - self.between) > self.tolerance
+        return unsettled, replace(self, between=proposal)
+
+    def bracketed(self, statistic: FloatArray, slope: FloatArray) -> "_Search":
+        """With the statistic at the present place, and the bracket drawn closer by it."""
+        low = np.where(statistic > self.freedom, self.between, self.low)
+        high = np.where(statistic < self.freedom, self.between, self.high)
+        return replace(self, low=low, high=high, statistic=statistic, slope=slope)
+
+
+def _rows_of(
+    chosen: BoolArray, deviation: FloatArray, variances: FloatArray, group: IntArray
+) -> tuple[FloatArray, FloatArray, IntArray]:
+    """The rows of the chosen groups, these numbered anew."""
+    if chosen.all():
+        return deviation, variances, group
+    rows = np.flatnonzero(chosen[group])
+    return deviation[rows], variances[rows], (np.cumsum(chosen) - 1)[group[rows]]
 
 
 def _weighted_scatter(
