@@ -122,19 +122,19 @@ def ratio_interval(
 def ratio_dof(alpha: MeanEstimate, beta: MeanEstimate, u_alpha: FloatArray, u_beta: FloatArray) -> FloatArray:
     """Degrees of freedom of alpha / beta, shape (K,); 0 where a mean has none.
 
-    1/dof = sum(r_i^p / dof_i) with r_i the shares of the two means in the variance, p = 1 + q (1 - r_cal)²,
-    q the smaller over the larger of the dof, r_cal the share of the calibration. p = 2 is
-    Welch-Satterthwaite (Welch 1947; GUM G.4); the exponent is ours and mends its undercoverage for unequal
-    numbers of values.
+    1/dof = sum(r_i^p / dof_i) with r_i the shares of the two means in the variance, r_cal that of the
+    calibration, q the smaller over the larger dof, and p = 1 + q (1 - r_cal)^4 - r_cal (1 - r_cal)/2. p = 2
+    is Welch-Satterthwaite (Welch 1947; GUM G.4). The exponent is ours: it mends the undercoverage of
+    Welch-Satterthwaite for unequal numbers of values and where a part without error of its own, such as the
+    calibration, makes a luckily small scatter look unimportant.
     """
     part_a, part_b = beta.mean**2 * alpha.variance, alpha.mean**2 * beta.variance
     calibration = (alpha.mean * beta.mean) ** 2 * (u_alpha**2 + u_beta**2)
     total = part_a + part_b + calibration
     share_a, share_b = divide(part_a, total, 0.5), divide(part_b, total, 0.5)
-    larger = np.maximum(alpha.dof, beta.dof)
-    exponent = (
-        1.0 + divide(np.minimum(alpha.dof, beta.dof), larger, 1.0) * divide(part_a + part_b, total, 1.0) ** 2
-    )
+    means_share = divide(part_a + part_b, total, 1.0)
+    balance = divide(np.minimum(alpha.dof, beta.dof), np.maximum(alpha.dof, beta.dof), 1.0)
+    exponent = 1.0 + balance * means_share**4 - 0.5 * means_share * (1.0 - means_share)
     inverse = divide(share_a**exponent, alpha.dof, np.inf) + divide(share_b**exponent, beta.dof, np.inf)
     return np.where(np.isfinite(inverse), divide(np.ones_like(inverse), inverse, np.inf), 0.0)
 
