@@ -114,6 +114,13 @@ def test_imprecise_values_are_those_above_their_limit_with_a_large_sigma():
     assert rows[0]["action"] == "mark"
 
 
+def test_without_limits_three_sigmas_stand_for_them():
+    values, sigmas = np.array([[10.0, 10.0, 10.0]]), np.array([[2.0, 2.9, 4.0]])
+    block = Block("E1", "glass", ["Ni", "Co", "Zn"], values, sigmas)
+    rows = inputs([block]).screen(imprecise={"relative_sigma": 0.25}).tables["screen.findings"].to_pylist()
+    assert [row["analyte"] for row in rows] == ["Co"]
+
+
 def test_limits_above_the_melt_are_told_per_group():
     ones = np.ones((3, 2))
     glass = Block("E1", "glass", ["Ni", "Co"], ones * [2.0, 50.0], ones)

@@ -114,6 +114,28 @@ def test_the_order_of_rows_changes_nothing():
         assert first.tables[name].to_pylist() == second.tables[name].to_pylist()
 
 
+def test_splitting_a_table_changes_nothing_but_the_place():
+    scale = [1.0, 0.9, 1.0, 1.02, 0.99, 1.01]
+    labels = [f"p{at}" for at in range(6)]
+    whole = inputs([olivine(scale, labels=labels)]).screen()
+    parts = [
+        olivine(scale[:2], labels=labels[:2], table="z.csv"),
+        olivine(scale[2:], labels=labels[2:], table="a.csv"),
+    ]
+    split = inputs(parts).screen()
+    assert why(whole) == why(split)
+    assert whole.tables["screen.groups"].to_pylist() == split.tables["screen.groups"].to_pylist()
+    places = ("table", "row")
+    rows = [
+        [
+            {name: value for name, value in row.items() if name not in places}
+            for row in result.tables["screen.findings"].to_pylist()
+        ]
+        for result in (whole, split)
+    ]
+    assert rows[0] == rows[1]
+
+
 @pytest.mark.parametrize(
     ("line", "column"),
     [

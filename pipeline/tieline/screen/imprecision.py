@@ -9,7 +9,7 @@ import pyarrow as pa
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.results import Remark
-from tieline.screen.composition import compositions, values_for_tests
+from tieline.screen.composition import SIGMAS_PER_LIMIT, compositions, values_for_tests
 from tieline.screen.findings import Findings
 from tieline.screen.groups import CANNOT_TELL, TestResult, Verdict
 from tieline.screen.session import Measured, Session
@@ -22,10 +22,12 @@ NAMED_ANALYTES = 10
 def imprecision_result(
     session: Session, measured: Measured, melt_phase: str, settings: ImpreciseSettings
 ) -> TestResult:
-    """Values above their limit with a large relative sigma, and analytes whose limits hide even the melt's value.
+    """Values above their limit with a large relative sigma, and analytes whose limits hide even the melt's
+    value.
 
-    A value below its limit is imprecise by nature and is treated as such later; it is not remarked here. Dropping
-    imprecise values prefers high ones and biases the mean, which is why the default only marks.
+    A value below its limit (where none is stated, below three of its sigmas) is imprecise by nature and is
+    treated as such later; it is not remarked here. Dropping imprecise values prefers high ones and biases
+    the mean, which is why the default only marks.
     """
     findings = _imprecise_values(measured, settings)
     verdicts = tuple(_hidden_by_limits(session, measured, melt_phase))
@@ -35,7 +37,9 @@ def imprecision_result(
 def _imprecise_values(measured: Measured, settings: ImpreciseSettings) -> Findings:
     positive = measured.value > 0
     relative = measured.sigma / np.where(positive, measured.value, np.nan)
-    rows, columns = np.nonzero((np.nan_to_num(relative) > settings.relative_sigma) & ~measured.below_limit)
+    limit = np.where(np.isfinite(measured.limit), measured.limit, SIGMAS_PER_LIMIT * measured.sigma)
+    detected = positive & ~measured.below_limit & (measured.value >= limit)
+    rows, columns = np.nonzero(detected & (relative > settings.relative_sigma))
     statistic = relative[rows, columns]
     return Findings(
         "imprecise",
