@@ -166,7 +166,9 @@ def joint_outliers(values: FloatArray, alpha: float = 0.05, session_rate: float 
 
     Measured on 3,000 normal groups of 30 analytes, n = 4 … 16: clean groups marked, at most 0.1 % at a
     correlation of 0.3, 1.1 % at 0.5, 2.3 % at 0.7, 4.4 % at 0.9; a shift of 8 sd in 8 analytes found in
-    15–24 % at n = 4, 62–75 % at n = 5, over 92 % from n = 8 (correlation up to 0.7).
+    15–24 % at n = 4, 62–75 % at n = 5, over 92 % from n = 8 (correlation up to 0.7). Simulated crystals
+    with a common spread of 15 %, where some analytes correlate far more than the mean: 2–4 % of clean
+    groups.
 
     Parameters: values (G, n, p). Groups with fewer than 4 spots or 2 analytes get p = NaN.
     """

@@ -37,8 +37,8 @@ def unmix(
     only that of the clean level assumed.
 
     Parameters: values, sigmas (G, n, p), contaminant_variance (G, p) as given to `overlap_scores`. Own
-    method; the widening restores coverage (92–99 % in simulations) where all spots contain some and the
-    level is uncertain.
+    method. In simulations the widened intervals cover 92–100 % while some spots are clean or the fractions
+    small, 69–86 % where all spots hold much; elements near their own detection come out up to 9 % low.
     """
     takes_part = (
         np.isfinite(values) & (np.isfinite(scores.z) & ~scores.foreign)[..., None] & scores.used[:, None, :]
