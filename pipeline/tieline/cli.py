@@ -148,6 +148,29 @@ def report(
 
 
 @app.command()
+def start(
+    tables: Annotated[list[Path], typer.Argument(metavar="TABLE...", help="Spot tables, in any accepted format.")],
+    to: Annotated[
+        Path | None,
+        typer.Option("--to", metavar="FILE", help="Configuration to write; session.toml beside the first table."),
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Write a first configuration for tables never seen before, with questions where they do not tell.
+
+    Example: tieline start probe.csv laser.csv
+    """
+    from tieline import terminal
+    from tieline.starting.write import write_first_configuration
+
+    path, questions = write_first_configuration(tables, to)
+    if json:
+        _print_json({"configuration": str(path), "questions": questions})
+    else:
+        terminal.show_start(path, questions)
+
+
+@app.command()
 def demo(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="Where the demo session is copied.")] = Path(
         "tieline-demo"

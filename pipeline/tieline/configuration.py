@@ -60,10 +60,25 @@ def read(
     for override in overrides:
         _override(data, override)
     settings, problems = validate(data, str(path))
+    problems = [*_open_questions(text, str(path)), *problems]
     out = out if out is not None else path.parent / settings.out
     # Tidied for people to read: configs/../runs/x is runs/x.
     folder = Path(os.path.normpath(out / settings.session))
     return Session(path, settings, folder, tuple(overrides)), problems
+
+
+def _open_questions(text: str, file: str) -> list[Problem]:
+    """Lines that `tieline start` wrote because the tables do not tell."""
+    return [
+        Problem(
+            f"not decided: {line.split(':', 1)[1].strip()}",
+            file,
+            row,
+            remedy="Answer it and delete the line.",
+        )
+        for row, line in enumerate(text.splitlines(), start=1)
+        if re.match(r"\s*#\s*decide:", line)
+    ]
 
 
 def validate(data: dict[str, Any], file: str) -> tuple[SessionSettings, list[Problem]]:

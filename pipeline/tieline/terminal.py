@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from pathlib import Path
 from typing import Any
 
 from rich.console import Console
@@ -151,6 +152,17 @@ def show_check(session: Session, reports: Sequence[StageReport]) -> None:
     console = Console(highlight=False)
     console.print(Text(f"{session.path}: no problem found; nothing was written.", style="green"))
     _show_remarks(console, reports)
+
+
+def show_start(path: Path, questions: Sequence[str]) -> None:
+    """Where the configuration is and what is left to answer."""
+    console = Console(highlight=False, soft_wrap=True)
+    console.print(Text(f"Wrote {printable(path)}", style="bold"))
+    if questions:
+        console.print(f"{len(questions)} questions are left; each is a line `# decide:` there:")
+    for question in questions:
+        console.print(Text(f"  {printable(question)}"))
+    console.print(Text(f"Then: tieline check {printable(path)}"))
 
 
 def check_as_json(reports: Sequence[StageReport]) -> dict[str, Any]:

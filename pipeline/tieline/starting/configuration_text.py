@@ -1,0 +1,186 @@
+"""The text of a first configuration, with the evidence as comments and what nobody can tell as questions.
+
+A question is a line `# decide: ...` above the key it is about. A configuration with such a line is refused
+until the line is deleted, so that no guess becomes a number unnoticed.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+
+from tieline.reading.input_file import InputFile
+from tieline.starting.combined_labels import label_pattern
+from tieline.starting.look import Look, look_at, phases_of
+
+QUESTION = "# decide:"
+
+
+def first_configuration(files: Sequence[InputFile], session: str) -> str:
+    """A commented TOML configuration for the tables. Raises InputError where a file is no table."""
+    looks = [look_at(file) for file in files]
+    lines = [
+        "# Made by `tieline start` from the tables named below. Every line that starts with",
+        f"# `{QUESTION}` is a question: answer it in the key below it, then delete the line.",
+        "",
+        f"session = {_text(session)}",
+        "",
+    ]
+    for look in looks:
+        lines += [*_table(look), ""]
+    lines += _phases(looks)
+    lines += _reference_materials(looks)
+    lines += _internal_standards(looks)
+    return "\n".join(lines).rstrip("\n") + "\n"
+
+
+def _table(look: Look) -> list[str]:
+    kinds = "isotopes" if look.isotopes else "oxides and elements"
+    lines = [
+        "[[ingest.tables]]",
+        f"path = {_text(look.file)}    # {look.n_rows} rows, {len(look.analytes)} analytes ({kinds})",
+    ]
+    if look.isotopes:
+        lines.append('technique = "laser"    # isotopes are reported')
+    else:
+        if look.unit != "wt%":
+            lines.append(f"{QUESTION} which technique measured this table?")
+        lines.append('technique = "EPMA"')
+    if "batch" not in look.labels:
+        lines += [f"{QUESTION} which measuring session? Spots of one batch share their calibration errors."]
+        lines += [f"batch = {_text(look.file.rsplit('/', 1)[-1].split('.')[0])}"]
+    lines += _unit(look)
+    lines += _columns(look)
+    lines += _sigma(look)
+    if look.limit_pattern:
+        lines.append(f"limit = {{ pattern = {_text(look.limit_pattern)} }}")
+    if look.doubtful:
+        names = ", ".join(look.doubtful)
+        lines.append(
+            f"{QUESTION} are these elements: {names}? If so give the column a unit; else add to columns.ignore."
+        )
+    return lines
+
+
+def _unit(look: Look) -> list[str]:
+    if look.unit is not None:
+        return [f"unit = {_text(look.unit)}    # {look.unit_evidence}"]
+    if not look.unit_evidence:
+        return ["# the headers state the units"]
+    why = "" if look.unit_evidence == "?" else f" ({look.unit_evidence})"
+    guess = "ppm" if look.isotopes else "wt%"
+    return [f"{QUESTION} in which unit are the values, wt%, ppm or ppb?{why}", f"unit = {_text(guess)}"]
+
+
+def _columns(look: Look) -> list[str]:
+    entries = [f"{name} = {_text(look.headers[index])}" for name, index in look.labels.items()]
+    ignored = [look.headers[index] for index in look.unused]
+    if look.total is not None:
+        ignored.append(look.headers[look.total])
+    if ignored:
+        entries.append(f"ignore = [{', '.join(_text(header) for header in ignored)}]")
+    lines = [f"columns = {{ {', '.join(entries)} }}"]
+    needed = [name for name in ("experiment", "phase") if name not in look.labels]
+    if not needed:
+        return lines
+    pattern = label_pattern(look.texts.get("spot", []))
+    if pattern is None:
+        return [
+            *lines,
+            f"{QUESTION} where do {' and '.join(needed)} stand? Name the columns above, or give labels.",
+        ]
+    example = next(label for label in look.texts["spot"] if label)
+    column = look.headers[look.labels["spot"]]
+    kept = [entry for entry in entries if not entry.startswith("spot =")]
+    return [
+        f"columns = {{ {', '.join(kept)} }}",
+        f"{QUESTION} is the label (such as {example}) split rightly: experiment, phase, grain?",
+        f"labels = {{ column = {_text(column)}, pattern = '{pattern}' }}",
+    ]
+
+
+def _sigma(look: Look) -> list[str]:
+    if look.sigma_pattern is None:
+        return []
+    words = look.sigma_words
+    level = words.level if words is not None else None
+    relative = words.relative if words is not None else None
+    asked = []
+    if level is None:
+        asked.append("how many standard uncertainties do they give (level 1 or 2)")
+    if relative is None:
+        asked.append("are they absolute, or relative in per cent")
+    lines = [f"{QUESTION} of the uncertainty columns: {'; '.join(asked)}?"] if asked else []
+    stated = "true" if relative else "false"
+    return [
+        *lines,
+        f"sigma = {{ pattern = {_text(look.sigma_pattern)}, level = {level or 1}, relative = {stated} }}",
+    ]
+
+
+def _phases(looks: Sequence[Look]) -> list[str]:
+    texts = [text for look in looks for text in look.texts.get("phase", [])]
+    known, unknown = phases_of(texts)
+    lines = ["[ingest.phases]    # name used from here on = spellings in the tables"]
+    for name, spellings in sorted(known.items()):
+        lines.append(f"{_key(name)} = [{', '.join(_text(text) for text in spellings)}]")
+    materials = _material_labels(looks)
+    for text, (count, near) in sorted(unknown.items()):
+        if text in materials:
+            continue
+        hint = f" Perhaps {' or '.join(near)}?" if near else ""
+        lines.append(
+            f'{QUESTION} {count} spots are on "{text}".{hint} Add it to a phase above, or name it here.'
+        )
+    return [*lines, ""]
+
+
+def _material_labels(looks: Sequence[Look]) -> list[str]:
+    """Phase labels that no phase is called by, on spots without an experiment: reference materials, it seems."""
+    found = set()
+    for look in looks:
+        experiments = look.texts.get("experiment")
+        if experiments is None:
+            continue
+        _, unknown = phases_of(look.texts.get("phase", []))
+        pairs = zip(look.texts.get("phase", []), experiments, strict=True)
+        found |= {phase for phase, experiment in pairs if phase in unknown and not experiment}
+    return sorted(found)
+
+
+def _reference_materials(looks: Sequence[Look]) -> list[str]:
+    materials = _material_labels(looks)
+    if not materials:
+        return []
+    names = ", ".join(f"{_key(name)} = [{_text(name)}]" for name in materials)
+    return [
+        "[ingest.reference_materials]",
+        f"{QUESTION} are these reference materials? If so give the table of their accepted values in path.",
+        '# path = "accepted.csv"    # columns material, analyte, value, unit, sd, source',
+        f"names = {{ {names} }}",
+        "",
+    ]
+
+
+def _internal_standards(looks: Sequence[Look]) -> list[str]:
+    if not any(look.isotopes for look in looks):
+        return []
+    return [
+        f"{QUESTION} with which internal-standard values was the laser table made? Concentrations scale with them.",
+        "# [[convert.internal_standard]]",
+        '# technique = "laser"',
+        '# element = "SiO2"',
+        "# assumed = { olivine = 40.0, glass = 50.0 }    # as assumed when the table was made",
+        '# actual = "probe-mean"                           # rescaled to what the probe measured on the phase',
+        "",
+    ]
+
+
+def _text(value: str) -> str:
+    """A TOML basic string; JSON's escapes are TOML's."""
+    return json.dumps(value, ensure_ascii=False)
+
+
+def _key(name: str) -> str:
+    plain = name.replace("-", "").replace("_", "")
+    return name if plain.isascii() and plain.isalnum() else _text(name)

@@ -1,0 +1,196 @@
+"""Looks at one table: which columns are analytes, uncertainties, limits, labels, and how sure that is."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from tieline.chemistry.names import Analyte, nearest_names, recognise_analyte
+from tieline.chemistry.phases import phase_name
+from tieline.reading.cell_text import CellStyle, clean, fold
+from tieline.reading.cells import parse_cells
+from tieline.reading.formats import read_grid
+from tieline.reading.grid import Grid
+from tieline.reading.input_file import InputFile
+
+# Words of a header, in small letters, that name what a label column holds; common practice.
+LABEL_WORDS: dict[str, tuple[str, ...]] = {
+    "spot": ("spot", "point", "analysis", "label", "sample", "name", "no", "no.", "#", "id", "spot id", "datapoint"),
+    "experiment": ("experiment", "run", "exp", "exp.", "charge", "capsule", "run no", "run no.", "experiment no"),
+    "phase": ("phase", "mineral", "material"),
+    "grain": ("grain", "crystal", "grain no", "crystal no"),
+    "zone": ("zone", "position", "area", "domain", "core/rim", "where"),
+    "distance_um": ("distance", "dist", "rim um", "distance um", "distance (um)", "dist um", "distance_um", "rim (um)"),
+    "batch": ("session", "batch", "date", "day", "block"),
+    "technique": ("technique", "method"),
+    "sequence": ("sequence", "order", "run order", "seq", "time"),
+    "comment": ("comment", "comments", "note", "notes", "remark", "remarks"),
+}  # fmt: skip
+WHOLE_TOTAL_WT = (90.0, 105.0)
+MOSTLY = 0.6
+
+
+@dataclass
+class Look:
+    """What one table shows. Columns are indices into `headers`; `questions` are what it does not show."""
+
+    file: str
+    headers: tuple[str, ...]
+    full: tuple[str, ...]
+    analytes: dict[int, Analyte]
+    labels: dict[str, int]
+    texts: dict[str, list[str]]
+    total: int | None
+    unused: list[int]
+    sigma_pattern: str | None = None
+    sigma_words: Analyte | None = None
+    limit_pattern: str | None = None
+    unit: str | None = None
+    unit_evidence: str = ""
+    isotopes: bool = False
+    n_rows: int = 0
+    doubtful: list[str] = field(default_factory=list)
+
+
+def look_at(file: InputFile) -> Look:
+    """Reads a table's cells and columns. Raises InputError where it is no table at all."""
+    grid = read_grid(file)
+    full = _with_units(grid)
+    recognised = {
+        index: analyte
+        for index, text in enumerate(full)
+        if text and (analyte := recognise_analyte(text)) is not None
+    }
+    values = {i: a for i, a in recognised.items() if a.usable and a.role == "value"}
+    doubtful = [grid.headers[i] for i, a in values.items() if not a.certain]
+    analytes = {i: a for i, a in values.items() if a.certain}
+    total = next((i for i, a in recognised.items() if a.role == "total"), None)
+    labels, texts = _label_columns(grid, set(recognised))
+    used = {*recognised, *labels.values()}
+    look = Look(
+        file=file.path,
+        headers=grid.headers,
+        full=full,
+        analytes=analytes,
+        labels=labels,
+        texts=texts,
+        total=total,
+        unused=[i for i, header in enumerate(grid.headers) if header.strip() and i not in used],
+        isotopes=any(a.kind == "isotope" for a in analytes.values()),
+        n_rows=grid.row_count,
+        doubtful=doubtful,
+    )
+    look.sigma_pattern, sigma = _partner_pattern(look, recognised, "sigma")
+    look.sigma_words = sigma
+    look.limit_pattern, _ = _partner_pattern(look, recognised, "limit")
+    look.unit, look.unit_evidence = _unit(grid, look)
+    return look
+
+
+def _with_units(grid: Grid) -> tuple[str, ...]:
+    units = grid.units or ("",) * grid.width
+    return tuple(f"{h} {u}".strip() if h.strip() else "" for h, u in zip(grid.headers, units, strict=True))
+
+
+def _label_columns(grid: Grid, recognised: set[int]) -> tuple[dict[str, int], dict[str, list[str]]]:
+    """Label columns by the words of their headers, the phase column by its content too."""
+    labels: dict[str, int] = {}
+    contents = {
+        i: _texts(grid, i) for i in range(grid.width) if i not in recognised and grid.headers[i].strip()
+    }
+    for name, words in LABEL_WORDS.items():
+        for index in contents:
+            if fold(grid.headers[index]) in words and index not in labels.values():
+                labels[name] = index
+                break
+    if "phase" not in labels:
+        for index, texts in contents.items():
+            filled = [text for text in texts if text]
+            known = sum(phase_name(text) is not None for text in filled)
+            if filled and known >= MOSTLY * len(filled) and index not in labels.values():
+                labels["phase"] = index
+                break
+    return labels, {name: contents[index] for name, index in labels.items()}
+
+
+def _texts(grid: Grid, index: int) -> list[str]:
+    return [clean(text) for text in grid.column(index).to_pylist()]
+
+
+def _partner_pattern(
+    look: Look, recognised: dict[int, Analyte], role: str
+) -> tuple[str | None, Analyte | None]:
+    """The pattern that most uncertainty (or limit) headers follow, and what one of them says of itself."""
+    patterns: Counter[str] = Counter()
+    words: dict[str, Analyte] = {}
+    by_name = {analyte.label: look.headers[index] for index, analyte in look.analytes.items()}
+    for index, analyte in recognised.items():
+        own = by_name.get(analyte.label)
+        if analyte.role != role or own is None:
+            continue
+        header, plain = look.headers[index], own.strip()
+        base = plain if plain in header else analyte.label
+        pattern = (
+            header.replace(base, "{analyte}", 1)
+            if base in header
+            else header.replace(analyte.name, "{analyte}", 1)
+        )
+        patterns[pattern.strip()] += 1
+        words.setdefault(pattern.strip(), analyte)
+    if not patterns:
+        bare = _bare_partner(look, role)
+        return (bare, recognise_analyte(f"Ni {bare}")) if bare else (None, None)
+    best = patterns.most_common(1)[0][0]
+    return best, words[best]
+
+
+def _bare_partner(look: Look, role: str) -> str | None:
+    """A header such as `1s` or `DL` that stands again and again beside the analytes."""
+    counts = Counter(header.strip() for header in look.headers if header.strip())
+    for header, count in counts.most_common():
+        analyte = recognise_analyte(f"Ni {header}")
+        if count > 1 and analyte is not None and analyte.role == role:
+            return header
+    return None
+
+
+def _unit(grid: Grid, look: Look) -> tuple[str | None, str]:
+    """The table's unit where headers do not say: wt% when oxides add up to about 100."""
+    silent = [index for index, analyte in look.analytes.items() if analyte.unit is None]
+    if not silent:
+        return None, ""
+    oxides = [index for index in silent if look.analytes[index].kind == "oxide"]
+    if len(oxides) < 4:
+        return None, "?"
+    style = CellStyle(decimal=grid.found.decimal, not_measured=("", "-", "n.d.", "bdl"))
+    cells = [
+        np.concatenate([parse_cells(block.cells[index], style).value for block in grid.blocks])
+        for index in oxides
+    ]
+    totals = np.nansum(np.array(cells), axis=0)
+    middle = float(np.median(totals[totals > 0])) if (totals > 0).any() else np.nan
+    if WHOLE_TOTAL_WT[0] <= middle <= WHOLE_TOTAL_WT[1]:
+        return "wt%", f"the oxides add up to {middle:.1f} in the middle row"
+    return None, f"the oxides add up to {middle:.3g} in the middle row, which is no total in wt%"
+
+
+def phases_of(texts: Sequence[str]) -> tuple[dict[str, list[str]], dict[str, tuple[int, list[str]]]]:
+    """Recognised phase -> spellings, and unrecognised label -> (how often, nearest phases)."""
+    known: dict[str, list[str]] = {}
+    unknown: dict[str, tuple[int, list[str]]] = {}
+    for text, count in Counter(text for text in texts if text).items():
+        name = phase_name(text)
+        if name is None:
+            unknown[text] = (count, nearest_names(text, _phase_words()))
+        else:
+            known.setdefault(name, []).append(text)
+    return known, unknown
+
+
+def _phase_words() -> list[str]:
+    from tieline.chemistry.phases import all_phases
+
+    return list(all_phases())
