@@ -54,6 +54,15 @@ class Asides:
         self.reasons.extend(reasons)
         self.expected.extend([False] * len(rows))
 
+    def add_all(self, other: Asides) -> None:
+        """The lines of another block of the same table."""
+        self.rows += other.rows
+        self.columns += other.columns
+        self.raws += other.raws
+        self.cells += other.cells
+        self.reasons += other.reasons
+        self.expected += other.expected
+
     def cell_count(self) -> int:
         return sum(self.cells)
 

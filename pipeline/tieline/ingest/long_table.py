@@ -38,21 +38,26 @@ class TableParts:
 
 
 class SharedCodes:
-    """Code arrays that say the same in every row, as slices of one buffer."""
+    """Arrays that say the same in every row, as slices of one buffer.
+
+    Threads may share it: at worst a buffer is made twice.
+    """
 
     def __init__(self) -> None:
         self._zeros: pa.Array = pa.array(np.zeros(0, np.int32))
         self._nulls: dict[pa.DataType, pa.Array] = {}
 
     def zeros(self, count: int) -> pa.Int32Array:
-        if len(self._zeros) < count:
-            self._zeros = pa.array(np.zeros(count, np.int32))
-        return self._zeros.slice(0, count)
+        zeros = self._zeros
+        if len(zeros) < count:
+            zeros = self._zeros = pa.array(np.zeros(count, np.int32))
+        return zeros.slice(0, count)
 
     def nulls(self, count: int, kind: pa.DataType) -> pa.Array:
-        if kind not in self._nulls or len(self._nulls[kind]) < count:
-            self._nulls[kind] = pa.nulls(count, kind)
-        return self._nulls[kind].slice(0, count)
+        nulls = self._nulls.get(kind)
+        if nulls is None or len(nulls) < count:
+            nulls = self._nulls[kind] = pa.nulls(count, kind)
+        return nulls.slice(0, count)
 
 
 class LongLabels:

@@ -14,12 +14,13 @@ from tieline.errors import InputError, Problem
 from tieline.ingest.asides import Asides
 from tieline.ingest.long_table import LongLabels, SharedCodes, TableParts
 from tieline.ingest.matching import phase_remarks, similar_experiments, with_materials, with_phases
+from tieline.ingest.matrices import Counts
 from tieline.ingest.remarks import cell_remarks
 from tieline.ingest.roles import LABELS, Assigning, Roles, assign_roles
 from tieline.ingest.rows import joined, spot_rows
 from tieline.ingest.spots import Spots, duplicate_problems, duplicates, numbered, read_spots
 from tieline.ingest.texts import Mask, Texts
-from tieline.ingest.values import Counts, check_blocks, long_blocks
+from tieline.ingest.values import check_blocks, long_blocks
 from tieline.reading.cell_text import REASONS, UNREADABLE, CellStyle
 from tieline.reading.cells import parse_cells
 from tieline.reading.formats import read_grid

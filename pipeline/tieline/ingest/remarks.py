@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections import Counter
 
 from tieline.ingest.asides import Asides
-from tieline.ingest.values import TOTAL_TOLERANCE, Counts
+from tieline.ingest.matrices import TOTAL_TOLERANCE, Counts
 from tieline.results import Remark
 from tieline.settings.ingest import Table
 

@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from tieline.ingest.asides import Asides
 from tieline.ingest.texts import Texts
-from tieline.reading.cell_text import fold
+from tieline.reading.cell_text import clean, fold
 from tieline.reading.grid import Block, Grid
 from tieline.reading.header import is_units_row
 
@@ -40,9 +40,9 @@ def spot_rows(
     nameless = np.all([texts.is_missing() for texts in keys], axis=0) if keys else first.is_missing()
     header_like = _repeats_header(grid, label_columns, labels)
     pattern = summary_pattern(summary_words)
-    summary = first.where(lambda text: pattern.match(fold(text)) is not None)
+    summary = first.fitting(pattern)
     if label_columns.get("spot", 0) != 0:
-        summary |= labels["spot"].where(lambda text: pattern.match(fold(text)) is not None)
+        summary |= labels["spot"].fitting(pattern)
     blank_count = 0
     for block, start in _placed_blocks(grid):
         stop = start + len(block.rows)
@@ -61,16 +61,16 @@ def spot_rows(
     return keep, blank_count
 
 
-def summary_pattern(words: tuple[str, ...]) -> re.Pattern[str]:
-    """Fits the start of a folded label that says that its row sums up others.
+def summary_pattern(words: tuple[str, ...]) -> str:
+    """Fits the start of a label that says that its row sums up others.
 
     A known word alone, or a long one followed by more: "Average", "Mean ol (n = 8)". But "n 3" or "max-2" may
     be spots; short words count only when they stand alone.
     """
-    folded = [fold(word) for word in words if word.strip()]
-    alone = [rf"{re.escape(word)}$" for word in folded]
-    started = [rf"{re.escape(word)}[^\w]" for word in folded if len(word) >= 4]
-    return re.compile("|".join([*alone, *started]) or r"(?!)")
+    cleaned = [clean(word) for word in words if word.strip()]
+    alone = [rf"^{re.escape(word)}$" for word in cleaned]
+    started = [rf"^{re.escape(word)}[^\w]" for word in cleaned if len(word) >= 4]
+    return "|".join([*alone, *started]) or r"^$"
 
 
 def joined(cells: list[str], grid: Grid) -> str:
@@ -86,11 +86,9 @@ def _placed_blocks(grid: Grid) -> list[tuple[Block, int]]:
 def _repeats_header(grid: Grid, label_columns: dict[str, int], labels: dict[str, Texts]) -> Mask:
     found = np.zeros(grid.row_count, dtype=bool)
     for name, texts in labels.items():
-        header = fold(grid.headers[label_columns[name]])
-        found |= texts.where(lambda text, header=header: fold(text) == header)  # type: ignore[misc]
+        found |= texts.fitting(f"^{re.escape(clean(grid.headers[label_columns[name]]))}$")
     if not labels and grid.blocks:
-        header = fold(grid.headers[0])
-        found |= Texts.from_column(grid.column(0)).where(lambda text: fold(text) == header)
+        found |= Texts.from_column(grid.column(0)).fitting(f"^{re.escape(clean(grid.headers[0]))}$")
     return found
 
 

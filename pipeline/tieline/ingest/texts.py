@@ -12,6 +12,9 @@ import pyarrow.compute as pc
 
 from tieline.reading.cell_text import clean
 
+# Blank, or with something that `clean` changes: blanks at the ends or in a row, control and odd characters.
+UNCLEAN = r"^ | $|  |^$|[^\x20-\x7e]"
+
 Codes = npt.NDArray[np.int32]
 Mask = npt.NDArray[np.bool_]
 
@@ -30,8 +33,11 @@ class Texts:
         if len(column) == 0:
             return Texts(np.empty(0, np.int32), ())
         codes = np.concatenate([chunk.indices.to_numpy(zero_copy_only=False) for chunk in encoded.chunks])
-        raw = encoded.chunk(0).dictionary.to_pylist()
-        return Texts(codes.astype(np.int32), tuple(raw)).renamed(lambda text: clean(text) or None)
+        known = encoded.chunk(0).dictionary
+        texts = Texts(codes.astype(np.int32), tuple(known.to_pylist()))
+        if pc.any(pc.match_substring_regex(known, UNCLEAN)).as_py():
+            return texts.renamed(lambda text: clean(text) or None)
+        return texts
 
     @staticmethod
     def constant(text: str | None, count: int) -> Texts:
@@ -62,12 +68,19 @@ class Texts:
     def is_missing(self) -> Mask:
         return self.codes < 0
 
+    def fitting(self, pattern: str) -> Mask:
+        """Rows whose text fits a regular expression, without regard to case; the syntax is Arrow's (RE2)."""
+        fits = pc.match_substring_regex(self.dictionary(), pattern, ignore_case=True)
+        return np.append(fits.to_numpy(zero_copy_only=False), False)[self.codes]
+
     def where(self, test: Callable[[str], bool]) -> Mask:
         """Rows whose text passes a test."""
         return np.array([*(test(text) for text in self.known), False])[self.codes]
 
     def kept(self, keep: Mask) -> Texts:
         """The rows that are kept; texts no longer in use are dropped."""
+        if keep.all():
+            return self
         codes = self.codes[keep]
         used = np.zeros(len(self.known) + 1, dtype=bool)
         used[codes] = True
@@ -77,6 +90,8 @@ class Texts:
 
     def filled(self, other: Texts) -> Texts:
         """This text, or the other one where it is missing."""
+        if not self.is_missing().any():
+            return self
         offset = len(self.known)
         shifted = np.where(other.codes < 0, np.int32(-1), other.codes + np.int32(offset))
         codes = np.where(self.codes < 0, shifted, self.codes).astype(np.int32)

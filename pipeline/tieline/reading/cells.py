@@ -46,13 +46,8 @@ PLAIN_NUMBER = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?$"
 DIGITS = b"0123456789"
 
 
-def _byte_table(allowed: bytes) -> npt.NDArray[np.bool_]:
-    table = np.zeros(256, dtype=bool)
-    table[list(allowed)] = True
-    return table
-
-
-PLAIN_BYTES = {mark: _byte_table(DIGITS + b"+-eE" + mark.encode()) for mark in ".,"}
+PLAIN_BYTES = {mark: DIGITS + b"+-eE" + mark.encode() for mark in ".,"}
+_BYTE_TABLES = {allowed: np.isin(np.arange(256), list(allowed)) for allowed in PLAIN_BYTES.values()}
 COMMA_TO_POINT = np.arange(256, dtype=np.uint8)
 COMMA_TO_POINT[ord(",")] = ord(".")
 
@@ -120,12 +115,12 @@ def text_buffers(texts: pa.StringArray) -> tuple[npt.NDArray[np.int32], npt.NDAr
     return offsets - offsets[0], data
 
 
-def _looks_plain(offsets: npt.NDArray[np.int32], data: npt.NDArray[np.uint8], table: Mask) -> Mask:
+def _looks_plain(offsets: npt.NDArray[np.int32], data: npt.NDArray[np.uint8], allowed: bytes) -> Mask:
     """Cells of 1 to 64 characters made of digits, signs, decimal marks and exponents only."""
     lengths = np.diff(offsets)
     plain = (lengths > 0) & (lengths <= LONGEST)
-    other = np.flatnonzero(~table[data])
-    if other.size:
+    if data.tobytes().translate(None, allowed):  # far cheaper than the byte by byte look, and mostly enough
+        other = np.flatnonzero(~_BYTE_TABLES[allowed].take(data))
         plain[np.searchsorted(offsets, other, side="right") - 1] = False
     single = np.flatnonzero(lengths == 1)
     if single.size:  # a lone dash is a common word for "not measured"

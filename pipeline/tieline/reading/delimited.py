@@ -21,7 +21,7 @@ from tieline.reading.layout import Layout
 from tieline.reading.text_bytes import utf8_bytes
 
 HEAD_BYTES = 1 << 22
-HEAD_RECORDS = 1000
+HEAD_RECORDS = 300
 BLOCK_BYTES = 1 << 23
 DELIMITERS = "\t;|,"  # preferred in this order: a comma may be a decimal mark
 _LINE = re.compile(rb"[^\r\n]*(?:\r\n|\r|\n)|[^\r\n]+$")

@@ -87,3 +87,5 @@ class Grid:
         """The blocks in order, each dropped from the grid so that its memory can be freed."""
         while self.blocks:
             yield self.blocks.pop(0)
+            # Arrow keeps freed memory for itself, but what is built from the blocks is allocated elsewhere.
+            pa.default_memory_pool().release_unused()
