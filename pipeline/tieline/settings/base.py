@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Collection
 from typing import Literal
 
 from pydantic import BaseModel, ConfigDict, Field
@@ -13,6 +14,29 @@ class Settings(BaseModel):
     """A frozen section of the configuration; unknown keys are refused."""
 
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
+
+
+def phases_into(
+    field: str, data: object, known: Collection[str], is_entry: Callable[[object], bool]
+) -> object:
+    """Moves entries that stand directly in a section, phase = ..., into the mapping they belong to.
+
+    `[screen.total] olivine = [98, 102]` is short for `[screen.total.limits] olivine = [98, 102]`. What does not
+    look like an entry stays where it is, to be refused as an unknown key.
+    """
+    if not isinstance(data, dict):
+        return data
+    direct = {key: value for key, value in data.items() if key not in known and is_entry(value)}
+    rest = {key: value for key, value in data.items() if key not in direct}
+    entries = rest.get(field, {})
+    if not isinstance(entries, dict):
+        return data
+    # Behind a validator arrays no longer pass for tuples by themselves.
+    together = {
+        key: tuple(value) if isinstance(value, list) else value
+        for key, value in {**direct, **entries}.items()
+    }
+    return {**rest, field: together} if together else rest
 
 
 class TestSettings(Settings):

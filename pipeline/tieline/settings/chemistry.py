@@ -43,7 +43,8 @@ class FormulaSettings(Settings):
     """Formula units of whole analyses."""
 
     oxygens: dict[str, float] = Field(
-        default_factory=dict, description="phase -> oxygens per formula unit, beside or instead of the phase table's"
+        default_factory=dict,
+        description="phase -> oxygens per formula unit, beside or instead of the phase table's",
     )
     ferric: tuple[str, ...] = Field(
         (), description="phases whose ferric iron is estimated by charge balance (Droop 1987)"

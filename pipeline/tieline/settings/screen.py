@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from typing import Literal
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
-from tieline.settings.base import Settings, TestSettings
+from tieline.settings.base import Settings, TestSettings, phases_into
 
 
 class TotalSettings(TestSettings):
@@ -15,7 +15,7 @@ class TotalSettings(TestSettings):
     action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
     limits: dict[str, tuple[float, float]] = Field(
         default_factory=dict,
-        description="phase -> [low, high] in wt%; beside the phase table's (98.5-101.5 for anhydrous minerals, common practice)",
+        description="phase -> [low, high] in wt%, also directly as phase = [low, high]; beside the phase table's (98.5-101.5 for anhydrous minerals, common practice)",
     )
     sigmas: float = Field(
         2.0,
@@ -29,6 +29,11 @@ class TotalSettings(TestSettings):
         description="a technique whose totals have a lower median than this, in wt%, does not measure everything: "
         "its totals and cation sums are not judged; own choice",
     )
+
+    @model_validator(mode="before")
+    @classmethod
+    def _phases(cls, data: object) -> object:
+        return phases_into("limits", data, cls.model_fields, lambda value: isinstance(value, list))
 
 
 class CationRule(Settings):
@@ -44,7 +49,8 @@ class CationSettings(TestSettings):
 
     action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
     rules: dict[str, CationRule] = Field(
-        default_factory=dict, description="phase -> rule; beside the phase table's (common practice)"
+        default_factory=dict,
+        description="phase -> rule, also directly as phase = { ... }; beside the phase table's (common practice)",
     )
     sigmas: float = Field(2.0, ge=0, description="as for totals")
     ferric: bool = Field(
@@ -52,6 +58,11 @@ class CationSettings(TestSettings):
         description="accept a sum that is too high where ferric iron explains it (charge balance, Droop 1987), "
         "for phases that take ferric iron",
     )
+
+    @model_validator(mode="before")
+    @classmethod
+    def _phases(cls, data: object) -> object:
+        return phases_into("rules", data, cls.model_fields, lambda value: isinstance(value, dict))
 
 
 class IdentitySettings(TestSettings):
