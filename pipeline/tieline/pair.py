@@ -24,7 +24,7 @@ from tieline.arrays import (
 )
 from tieline.columns import PAIR, PAIR_LIMITS
 from tieline.correction import Concentrations, calibrated
-from tieline.pairing import phase_pairs, technique_differences
+from tieline.pairing import phase_pairs, technique_differences, with_parts
 from tieline.results import Ledger, StageResult
 from tieline.settings.results import PairSettings
 from tieline.statistics.means import PhaseMeans, phase_means, pooled_sigmas
@@ -51,6 +51,7 @@ def pair(
     settings: PairSettings,
 ) -> StageResult:
     """Phase means with their variance and its parts, and the alpha/beta pairs that can be formed."""
+    convert = with_parts(convert, settings)
     concentrations, shared = _unmixed(calibrated(convert, calibrate, ingest_spots), screen)
     use = flags(screen, "use")
     unknown = labels(convert, "experiment").codes >= 0

@@ -15,6 +15,35 @@ from tieline.tables import build
 MELT = "glass"
 
 
+def with_parts(convert: pa.Table, settings: PairSettings) -> pa.Table:
+    """`convert` with phases split as the settings ask: `olivine (rim)`; a spot without the label keeps its phase.
+
+    With `separate` the melt stays whole; with `local` every phase is split, for its parts to be paired.
+    """
+    name = settings.local if settings.local != "none" else settings.separate
+    if name == "none":
+        return convert
+    phase, part = labels(convert, "phase"), labels(convert, name)
+    whole = (
+        phase.is_one_of((MELT,)) if settings.local == "none" else np.zeros(convert.num_rows, dtype=np.bool_)
+    )
+    n_parts = len(part.texts) + 1
+    code = phase.codes * n_parts + np.where(whole, -1, part.codes) + 1
+    texts = [_part_name(text, suffix) for text in phase.texts for suffix in (None, *part.texts)]
+    split = pa.DictionaryArray.from_arrays(pa.array(code.astype(np.int32)), pa.array(texts, pa.string()))
+    column = convert.schema.get_field_index("phase")
+    return convert.set_column(column, convert.schema.field(column), split)
+
+
+def _part_name(phase: str, part: str | None) -> str:
+    return phase if part is None else f"{phase} ({part})"
+
+
+def whole_phase(name: str) -> str:
+    """`olivine (rim)` -> `olivine`."""
+    return name.split(" (")[0]
+
+
 def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> tuple[pa.Table, list[Remark]]:
     """One row per experiment and wanted pair: the configured ones, or every other phase over glass.
 
@@ -59,8 +88,10 @@ def _not_formed(rows: list[tuple[str, str, str, int, int, bool, str | None]]) ->
 
 def _wanted(phases: list[str], settings: PairSettings) -> list[tuple[str, str]]:
     if settings.pairs is None:
-        return [(phase, MELT) for phase in phases if phase != MELT]
-    unknown = [(pair, name) for pair in settings.pairs for name in pair if name not in phases]
+        alphas = dict.fromkeys(whole_phase(phase) for phase in phases if whole_phase(phase) != MELT)
+        return _with_their_parts([(alpha, MELT) for alpha in alphas], phases, settings)
+    known = {*phases, *(whole_phase(phase) for phase in phases)}
+    unknown = [(pair, name) for pair in settings.pairs for name in pair if name not in known]
     if unknown:
         raise InputError(
             [
@@ -72,7 +103,27 @@ def _wanted(phases: list[str], settings: PairSettings) -> list[tuple[str, str]]:
                 for _, name in unknown
             ]
         )
-    return list(settings.pairs)
+    return _with_their_parts(list(settings.pairs), phases, settings)
+
+
+def _with_their_parts(
+    pairs: list[tuple[str, str]], phases: list[str], settings: PairSettings
+) -> list[tuple[str, str]]:
+    """The pairs with every part of their phases; parts of a local pair have the same name."""
+    if settings.separate == "none" and settings.local == "none":
+        return pairs
+
+    def parts(name: str) -> list[str]:
+        return [phase for phase in phases if name in (phase, whole_phase(phase))]
+
+    every = [(alpha, beta) for one, other in pairs for alpha in parts(one) for beta in parts(other)]
+    if settings.local == "none":
+        return every
+    return [
+        (alpha, beta)
+        for alpha, beta in every
+        if alpha.removeprefix(whole_phase(alpha)) == beta.removeprefix(whole_phase(beta))
+    ]
 
 
 def _reason(phase: str, n_used: int | None) -> str | None:

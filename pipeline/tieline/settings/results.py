@@ -22,11 +22,28 @@ class PairSettings(Settings):
         "spots",
         description="average over spots, or over grain means where spots of a grain are not independent",
     )
+    separate: Literal["none", "zone", "grain"] = Field(
+        "none",
+        description="own means, and own D over the whole melt, for every zone or grain of a crystal phase, named "
+        "such as `olivine (rim)`",
+    )
+    local: Literal["none", "zone", "grain"] = Field(
+        "none",
+        description="pair the spots of all phases that carry the same zone or grain label, such as an area of the "
+        "charge, only with one another",
+    )
     difference_sigmas: float = Field(
         3.0,
         gt=0,
         description="two techniques differ when their means do by more than this many standard uncertainties",
     )
+
+
+    @model_validator(mode="after")
+    def _one_way(self) -> PairSettings:
+        if self.separate != "none" and self.local != "none":
+            raise ValueError("separate and local exclude each other")
+        return self
 
 
 class PartitionSettings(Settings):
