@@ -19,6 +19,7 @@ CLASS_STYLES = {
     "highly incompatible": ("h", "magenta"),
     "unresolved": ("?", "dim"),
 }
+EXTRA_CLASS = ("+", "green")  # any class that the configuration names
 CELL_WIDTH = 13
 LEGEND = (
     "c compatible  i incompatible  h highly incompatible  ? unresolved;  "
@@ -57,7 +58,7 @@ def _block(title: str, rows: list[dict[str, Any]], experiments: list[str]) -> Ta
 def _cell(row: dict[str, Any] | None) -> Text:
     if row is None:
         return Text("")
-    mark, style = CLASS_STYLES[row["class"]]
+    mark, style = CLASS_STYLES.get(row["class"], EXTRA_CLASS)
     return Text(f"{written(row)} {mark}", style=style)
 
 
@@ -72,7 +73,9 @@ def brief_lines(classify: pa.Table, width: int) -> Iterator[Text]:
     """
     columns = ["experiment", "alpha", "beta", "element", "D", "D_sd", "D_lo", "D_hi", "kind", "class"]
     rows = classify.select(columns).to_pylist()
-    marks = {name: mark for name, (mark, _) in CLASS_STYLES.items()}
+    extra = [name for name in dict.fromkeys(row["class"] for row in rows) if name not in CLASS_STYLES]
+    marks = {name: mark for name, (mark, _) in CLASS_STYLES.items()} | {name: f"+{name}" for name in extra}
+    styles = (*CLASS_STYLES.values(), *((f"+{name}", EXTRA_CLASS[1]) for name in extra), VARIES)
     for alpha, beta in dict.fromkeys((row["alpha"], row["beta"]) for row in rows):
         own = [row for row in rows if (row["alpha"], row["beta"]) == (alpha, beta)]
         experiments = {row["experiment"] for row in own}
@@ -82,13 +85,13 @@ def brief_lines(classify: pa.Table, width: int) -> Iterator[Text]:
         for row in own:
             by_element.setdefault(row["element"], []).append(row)
         ordered = sorted(by_element.items(), key=lambda item: -max(_level(row) for row in item[1]))
-        for mark, style in (*CLASS_STYLES.values(), VARIES):
+        for mark, style in styles:
             items = [
                 _brief(element, members, marks)
                 for element, members in ordered
                 if _mark_of(members, marks) == mark
             ]
-            for line in _paragraph(items, width - 3):
+            for line in _paragraph(items, width - len(mark) - 2):
                 yield Text.assemble((f" {mark} ", f"{style} bold".strip()), (line, style))
     if rows:
         yield Text(

@@ -20,7 +20,7 @@ from tieline.report.spots import spot_use
 ONE_COLUMN_MM, TWO_COLUMNS_MM = 90.0, 190.0
 MM_PER_INCH = 25.4
 # Colours that stay apart for colour-blind readers (after Okabe and Ito 2008, from memory), each with a shape of its own.
-COLOURS = ("#0072b2", "#d55e00", "#009e73", "#cc79a7", "#b07d00", "#56b4e9", "#666a00", "#555555")
+COLOURS = ("#0072b2", "#d55e00", "#009e73", "#cc79a7", "#b07d00", "#56b4e9", "#666a00")
 SHAPES = ("o", "s", "^", "D", "v", "P", "X", "*")
 STYLE: dict[Any, Any] = {
     "font.size": 8,

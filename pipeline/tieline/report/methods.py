@@ -306,9 +306,11 @@ def _classified(source: Source, spots: SpotUse) -> Iterable[str]:
     settings = source.settings.classify
     yield (
         f"An element is called compatible where D > {settings.compatible_above:g}, incompatible below, and highly "
-        f"incompatible where D < {settings.highly_incompatible_below:g} (a convention), each with a probability of at least "
-        f"{percent(settings.confidence)}; otherwise its class is left open."
+        f"incompatible where D < {settings.highly_incompatible_below:g} (a convention), where the "
+        f"{percent(settings.confidence)} interval of D lies inside the class; otherwise its class is left open."
     )
+    for name, (low, high) in settings.extra.items():
+        yield f"The class {name} was declared where that interval lies between {low:g} and {high:g}."
 
 
 def _and(parts: list[str]) -> str:

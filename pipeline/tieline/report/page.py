@@ -119,7 +119,8 @@ def _counts(source: Source, spots: SpotUse) -> list[tuple[int, str]]:
     unknown = [place for place in range(spots.count) if spots.keys["material"][place] is None]
     used = sum(1 for place in unknown if spots.n_used[place])
     classes = source.table("classify").column("class").to_pylist()
-    names = ("compatible", "incompatible", "highly incompatible", "unresolved")
+    usual = ("compatible", "incompatible", "highly incompatible")
+    names = (*usual, *source.settings.classify.extra, "unresolved")
     return [
         (len(unknown), "spots on unknowns"),
         (used, "of them used"),

@@ -16,6 +16,13 @@ LONGEST_TEXT = 32767  # of a cell, by the file format
 WIDEST, NARROWEST = 40, 8
 
 
+class _Exact(float):
+    """A number that is written with all its digits; the writing library would keep sixteen."""
+
+    def __format__(self, form: str) -> str:
+        return float.__repr__(self)
+
+
 def workbook_bytes(sheets: Sequence[Sheet], title: str) -> bytes:
     """One worksheet per sheet, header frozen and filterable; cells in `shaded` are grey."""
     import xlsxwriter
@@ -50,14 +57,14 @@ def _write(worksheet: Any, sheet: Sheet, header: Any, shade: Any) -> None:
 
 
 def _write_cell(worksheet: Any, row: int, column: int, cell: Cell, style: Any) -> None:
-    if cell is None:
+    if cell is None or cell == "":
         return
     if isinstance(cell, bool):
         worksheet.write_boolean(row, column, cell, style)
     elif isinstance(cell, str):
         worksheet.write_string(row, column, cell[:LONGEST_TEXT], style)
     elif math.isfinite(cell):
-        worksheet.write_number(row, column, cell, style)
+        worksheet.write_number(row, column, _Exact(cell), style)
     else:  # an infinite limit has no number format in the file
         worksheet.write_string(row, column, str(cell), style)
 

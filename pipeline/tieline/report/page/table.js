@@ -1,6 +1,9 @@
 // The table of D: sorting, filtering, copying; and the uncertainty budget beside it.
 
+// A class that the configuration names has no letter of its own.
 const MARKS = { compatible: "c", incompatible: "i", "highly incompatible": "h", unresolved: "?" };
+const markOfClass = (name) => MARKS[name] || "+";
+const STYLES = { c: "class-c", i: "class-i", h: "class-h", "?": "class-open", "+": "class-extra" };
 const SHARES = ["share_counting", "share_spread", "share_calibration", "share_internal_standard"];
 const SHARE_NAMES = ["counting", "spread between spots", "calibration", "internal standard"];
 
@@ -31,7 +34,7 @@ function rowOf(at) {
   const open = make("button", { type: "button", class: "link", onclick: () => choose({ pair: D.pair[at], element: D.element[at], experiment: D.experiment[at] }), title: "Show this element, pair and experiment in the pictures" }, D.element[at]);
   return make("tr", { "data-at": at },
     make("td", {}, D.experiment[at]), make("td", {}, D.pair[at]), make("td", {}, open), make("td", { class: "num" }, written[at]), make("td", { class: "num" }, interval),
-    make("td", {}, make("span", { class: `class class-${MARKS[D.class[at]] === "?" ? "open" : MARKS[D.class[at]]}` }, make("b", { "aria-hidden": "true" }, MARKS[D.class[at]]), ` ${D.class[at]}`)),
+    make("td", {}, make("span", { class: `class ${STYLES[markOfClass(D.class[at])]}` }, make("b", { "aria-hidden": "true" }, markOfClass(D.class[at])), ` ${D.class[at]}`)),
     make("td", { class: "num" }, `${n_alpha[at]}, ${n_beta[at]}`), make("td", {}, budgetBar(at)), make("td", { class: "remark" }, remarkOf(at)));
 }
 
@@ -71,7 +74,7 @@ function buildTable() {
     showTable();
   } }, column.title)));
   document.querySelector("#d-table thead").append(make("tr", {}, head));
-  const lists = { experiment: unique(D.experiment), pair: PAIRS, element: ELEMENTS, class: Object.keys(MARKS).filter((name) => D.class.includes(name)) };
+  const lists = { experiment: unique(D.experiment), pair: PAIRS, element: ELEMENTS, class: unique([...Object.keys(MARKS), ...D.class]).filter((name) => D.class.includes(name)) };
   for (const [name, values] of Object.entries(lists)) {
     const select = make("select", { id: `filter-${name}`, onchange: () => { shown.filters[name] = select.value; showTable(); } }, make("option", { value: "" }, "all"), values.map((value) => make("option", { value }, value)));
     document.getElementById("d-filters").append(make("label", {}, `${name} `, select));
