@@ -1,0 +1,153 @@
+"""Which partition coefficients of a pair belong on one lattice-strain curve, with their radii and errors."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from tieline.chemistry.radii import ionic_radius, known_radii, usual_charges
+from tieline.statistics.lattice_strain import Coefficients
+from tieline.statistics.moderated_variance import moderated_variance
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+# Why an element is compared with the curve but does not shape it unless it is asked for (common practice, from memory).
+OFF_THE_CURVE = {
+    "Al": "also in tetrahedra",
+    "Ga": "also in tetrahedra",
+    "Si": "in tetrahedra",
+    "Ti": "on the smaller site",
+    "Cr": "crystal-field effects and more than one charge",
+    "Ni": "crystal-field effects",
+    "Co": "crystal-field effects",
+    "Cu": "more than one charge",
+    "Fe": "more than one charge",
+    "Eu": "more than one charge",
+    "V": "more than one charge",
+    "U": "more than one charge",
+    "Mo": "more than one charge",
+    "W": "more than one charge",
+    "Pb": "lone pair of electrons",
+}
+_LIMIT_OVER_SD = 3.0
+_NORMAL_975 = 1.959964
+
+
+@dataclass(frozen=True)
+class Series:
+    """The ions of one charge in one pair of phases.
+
+    data: what is fitted, in the order of `elements` and `limit_elements`. compared: element -> (radius, D, D_sd) measured
+    but kept off the fit, with the reason in `remarks`. unmeasured: element -> radius. missing: element -> why it is of no use.
+    """
+
+    charge: int
+    coordination: int
+    data: Coefficients
+    elements: tuple[str, ...]
+    limit_elements: tuple[str, ...]
+    compared: Mapping[str, tuple[float, float, float]]
+    unmeasured: Mapping[str, float]
+    missing: Mapping[str, str]
+    remarks: tuple[str, ...]
+
+
+def charge_of(element: str, charges: Mapping[str, int]) -> int | None:
+    """The given charge of an element, else its usual one; None for what is no cation."""
+    if element in charges:
+        return charges[element]
+    usual = usual_charges(element)
+    return usual[0] if usual else None
+
+
+def collect_series(
+    partition: pd.DataFrame,
+    covariances: Mapping[tuple[str, str], float],
+    charge: int,
+    coordination: int,
+    *,
+    charges: Mapping[str, int] | None = None,
+    leave_out: tuple[str, ...] = (),
+) -> Series:
+    """Sort one pair's rows of the partition table into a series.
+
+    partition: rows of one experiment, alpha and beta, columns as in the stage file. covariances: (element, other) -> covariance
+    of the two D. charges: element -> charge, for elements whose usual charge is not the one here; naming an element also
+    lets it shape the curve where `OFF_THE_CURVE` would keep it off. leave_out: compared, not fitted.
+
+    The scatter of few spots is moderated over the elements of the series (`moderated_variance`). An upper limit D_hi enters
+    as a value known to lie below L with a blur of L/3, L such that a true D = D_hi would be found below L in 2.5 % of
+    cases (ours: the stage file keeps D_hi, not the limits of the spots).
+    """
+    given = charges or {}
+    fitted, compared, missing, remarks = [], {}, {}, []
+    limits: list[tuple[str, float, float]] = []
+    of_charge = partition[[charge_of(element, given) == charge for element in partition["element"]]]
+    for row in of_charge.sort_values("element").to_dict("records"):
+        element = str(row["element"])
+        radius = ionic_radius(element, charge, coordination)
+        if not np.isfinite(radius):
+            missing[element] = f"no radius for charge {charge} and coordination {coordination}"
+        elif row["kind"] == "upper-limit" and np.isfinite(row["D_hi"]) and row["D_hi"] > 0:
+            if element not in leave_out and (element not in OFF_THE_CURVE or element in given):
+                limits.append((element, radius, float(row["D_hi"])))
+        elif row["kind"] != "value" or not (row["D"] > 0 and row["D_sd"] > 0):
+            missing[element] = f"its D is {row['kind']}"
+        elif element in leave_out or (element in OFF_THE_CURVE and element not in given):
+            compared[element] = (radius, float(row["D"]), float(row["D_sd"]))
+            why = "left out by the settings" if element in leave_out else OFF_THE_CURVE[element]
+            remarks.append(f"{element} is compared, not fitted: {why}")
+        else:
+            fitted.append({**row, "radius": radius})
+    data, trouble = _coefficients(fitted, limits, covariances)
+    measured = set(of_charge["element"])
+    return Series(
+        charge, coordination, data, tuple(str(row["element"]) for row in fitted),
+        tuple(element for element, _radius, _limit in limits), compared,
+        {
+            element: radius
+            for (element, its_charge, its_coordination), radius in sorted(known_radii().items())
+            if (its_charge, its_coordination) == (charge, coordination)
+            and charge_of(element, given) == charge and element not in measured and element not in OFF_THE_CURVE
+        },
+        missing, (*remarks, *trouble),
+    )  # fmt: skip
+
+
+def _coefficients(
+    rows: list[dict[Any, Any]],
+    limits: list[tuple[str, float, float]],
+    covariances: Mapping[tuple[str, str], float],
+) -> tuple[Coefficients, list[str]]:
+    elements = [str(row["element"]) for row in rows]
+    value = np.array([float(row["D"]) for row in rows])
+    total = np.array([(float(row["D_sd"]) / float(row["D"])) ** 2 for row in rows])
+    dof = np.array([float(row["dof"]) for row in rows])
+    share = np.array([float(row["share_counting"]) + float(row["share_spread"]) for row in rows])
+    spots = total * np.clip(np.where(np.isfinite(share), share, 1.0), 0.0, 1.0)
+    shared = np.diag(total - spots)
+    for one, first in enumerate(elements):
+        for two, second in enumerate(elements[:one]):
+            pair = covariances.get((first, second), covariances.get((second, first), 0.0))
+            shared[one, two] = shared[two, one] = pair / (value[one] * value[two])
+    trouble = []
+    few = np.isfinite(dof) & (dof > 0)
+    moderated = np.where(few, moderated_variance(spots, np.where(few, dof, np.inf)), 0.0)
+    relative = shared + np.diag(moderated)
+    variance = np.where(few, 0.0, spots * value**2)
+    whole = relative + np.diag(variance / value**2) if rows else relative
+    if rows and np.linalg.eigvalsh(whole).min() <= 1e-9 * np.trace(whole) / len(rows):
+        trouble.append("the covariances of the D contradict their errors and were left out")
+        relative = np.diag(np.diag(shared)) + np.diag(moderated)
+    limit = np.array([high for _element, _radius, high in limits]) / (1.0 + _NORMAL_975 / _LIMIT_OVER_SD)
+    return (
+        Coefficients(
+            np.array([float(row["radius"]) for row in rows]), value, variance, relative,
+            np.array([radius for _element, radius, _high in limits]), limit, limit / _LIMIT_OVER_SD,
+        ),
+        trouble,
+    )  # fmt: skip

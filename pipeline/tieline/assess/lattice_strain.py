@@ -1,0 +1,276 @@
+"""Lattice-strain curves of every pair and charge: parameters, elements, overlap, and the checks they make."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from tieline.assess.exchange import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, by_pair
+from tieline.assess.lattice_series import Series, charge_of, collect_series
+from tieline.chemistry.phases import all_phases
+from tieline.statistics.lattice_strain import FITTED, CurveFit, Prior, fit_curve
+from tieline.statistics.lattice_strain_overlap import OVERLAP_FOUND, OverlapComparison, compare_overlap
+from tieline.statistics.lattice_strain_prediction import leave_one_out, predict
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+# E = 1125 Z / (r0 + 1.38 Å)³ GPa, 1.38 Å the radius of oxygen (Wood & Blundy 2003, Treatise on Geochemistry 2.09; from
+# memory). Published fits lie within about 40 % of it (from memory).
+_ELASTIC_GPA, _OXYGEN_ANGSTROM, _ELASTIC_RELATIVE_SD = 1125.0, 1.38, 0.4
+_EXCESS = 0.05
+
+
+@dataclass(frozen=True)
+class CurveResult:
+    """One series with its fit; `held` says which priors were needed, empty where the values sufficed."""
+
+    series: Series
+    fit: CurveFit
+    held: str
+    comparison: OverlapComparison
+
+
+@dataclass(frozen=True)
+class LatticeTables:
+    """curves: a row per pair and charge; elements: a row per pair, charge and element; checks: rows of `assess`."""
+
+    curves: pd.DataFrame
+    elements: pd.DataFrame
+    checks: pd.DataFrame
+
+
+def fit_series(
+    series: Series, temperature_K: float, priors: Mapping[str, Prior] | None = None, confidence: float = 0.95
+) -> CurveResult:
+    """Fit a series from its values alone where they suffice, else with what is known beforehand, and say so.
+
+    First no prior; then the given prior of E, or the elastic estimate for an ion as large as the mean of those measured;
+    then the given prior of r0 besides. The comparison with an overlap fraction uses the same priors.
+    """
+    given = dict(priors or {})
+    steps: list[dict[str, Prior]] = [{}]
+    if len(series.data.radius):
+        size = given["r0"].value if "r0" in given else float(np.mean(series.data.radius))
+        elastic = _ELASTIC_GPA * series.charge / (size + _OXYGEN_ANGSTROM) ** 3
+        modulus = given.get("E", Prior(elastic, _ELASTIC_RELATIVE_SD * elastic))
+        steps.append({"E": modulus})
+        if "r0" in given:
+            steps.append({"E": modulus, "r0": given["r0"]})
+    for used in steps:
+        fit = fit_curve(series.data, temperature_K, priors=used, confidence=confidence)
+        if fit.verdict == FITTED:
+            break
+    else:
+        used = {}
+        fit = fit_curve(series.data, temperature_K, confidence=confidence)
+    held = "; ".join(f"{name} {prior.value:.4g} ± {prior.sd:.2g} beforehand" for name, prior in used.items())
+    comparison = compare_overlap(series.data, temperature_K, priors=used, confidence=confidence)
+    return CurveResult(series, fit, held, comparison)
+
+
+def lattice_strain_tables(
+    partition: pd.DataFrame,
+    covariance: pd.DataFrame,
+    temperatures_C: Mapping[str, float],
+    *,
+    coordination: Mapping[str, int] | None = None,
+    charges: Mapping[str, int] | None = None,
+    leave_out: Sequence[str] = (),
+    priors: Mapping[tuple[str, int], Mapping[str, Prior]] | None = None,
+    confidence: float = 0.95,
+) -> LatticeTables:
+    """Fit every pair and charge that has D's of at least two elements.
+
+    partition, covariance: columns as in the stage files of those names; temperatures_C: experiment -> °C. coordination: phase ->
+    coordination of its site, in the place of the published one; phases without either have no curve, and say so.
+    priors: (phase, charge) -> parameter -> prior, used only where the values do not suffice. charges, leave_out: see
+    `collect_series`.
+    """
+    import pandas as pd
+
+    curves: list[dict[str, Any]] = []
+    elements: list[dict[str, Any]] = []
+    checks: list[dict[str, Any]] = []
+    variances = by_pair(covariance)
+    for (experiment, alpha, beta), group in partition.groupby(
+        ["experiment", "alpha", "beta"], sort=True, observed=True
+    ):
+        pair = {"experiment": experiment, "alpha": alpha, "beta": beta}
+        site = _site(alpha, coordination or {})
+        temperature_K = temperatures_C.get(experiment, np.nan) + 273.15
+        for charge, count in _charges(group, charges or {}).items():
+            if count < 2:
+                continue
+            if site is None or not temperature_K > 0:
+                lacks = (
+                    "the coordination of its site" if site is None else "the temperature of the experiment"
+                )
+                checks.append(
+                    _check(pair, f"{charge}+ curve", CANNOT_TELL, f"No curve: {lacks} is not known.")
+                )
+                continue
+            series = collect_series(
+                group, variances.get((experiment, alpha, beta), {}), charge, site,
+                charges=charges, leave_out=tuple(leave_out),
+            )  # fmt: skip
+            result = fit_series(series, temperature_K, (priors or {}).get((alpha, charge)), confidence)
+            curves.append(pair | curve_row(result, temperature_K))
+            elements.extend(pair | row for row in element_rows(result))
+            checks.extend(_checks(pair, result, confidence))
+    return LatticeTables(
+        pd.DataFrame(curves, columns=[*_PAIR, *CURVE_COLUMNS]),
+        pd.DataFrame(elements, columns=[*_PAIR, *ELEMENT_COLUMNS]),
+        pd.DataFrame(checks, columns=list(CHECK_COLUMNS)),
+    )
+
+
+_PAIR = ("experiment", "alpha", "beta")
+_PARAMETER_COLUMNS = tuple(
+    f"{name}{part}"
+    for name in ("D0", "r0_angstrom", "E_GPa", "overlap")
+    for part in ("", "_sd", "_lo", "_hi", "_status")
+)
+CURVE_COLUMNS = (
+    "charge", "coordination", "temperature_K", "n_values", "n_limits", "verdict", "reason", "held",
+    *_PARAMETER_COLUMNS, "cov_lnD0_r0", "cov_lnD0_E", "cov_r0_E", "chi_square", "dof", "p_value", "scale",
+    "joint_verdict", "joint_D0", "joint_r0_angstrom", "joint_E_GPa", "overlap_p", "overlap_verdict", "remarks",
+)  # fmt: skip
+ELEMENT_COLUMNS = (
+    "charge", "element", "radius_angstrom", "role", "D", "D_sd", "curve_D", "curve_lo", "curve_hi", "sigmas",
+    "deleted_sigmas", "shift_D0", "shift_r0", "shift_E", "corrected_D", "corrected_lo", "corrected_hi", "remark",
+)  # fmt: skip
+
+
+def _site(phase: str, given: Mapping[str, int]) -> int | None:
+    facts = all_phases().get(phase)
+    return given.get(phase, facts.large_site if facts else None)
+
+
+def _charges(group: pd.DataFrame, given: Mapping[str, int]) -> dict[int, int]:
+    """How many measured elements each charge has, charges in order."""
+    found = [charge_of(element, given) for element in group["element"]]
+    return {charge: found.count(charge) for charge in sorted({one for one in found if one is not None})}
+
+
+def curve_row(result: CurveResult, temperature_K: float) -> dict[str, Any]:
+    """The columns `CURVE_COLUMNS` of one fit; the overlap is that of the joint fit."""
+    fit, joint, series = result.fit, result.comparison.joint, result.series
+    row: dict[str, Any] = {}
+    for name, one in zip(
+        ("D0", "r0_angstrom", "E_GPa", "overlap"), (fit.D0, fit.r0, fit.E, joint.overlap), strict=True
+    ):
+        row |= {
+            name: one.value, f"{name}_sd": one.sd, f"{name}_lo": one.low, f"{name}_hi": one.high,
+            f"{name}_status": one.status,
+        }  # fmt: skip
+    return row | {
+        "charge": series.charge, "coordination": series.coordination, "temperature_K": temperature_K,
+        "n_values": len(series.elements), "n_limits": len(series.limit_elements),
+        "verdict": fit.verdict, "reason": fit.reason, "held": result.held,
+        "cov_lnD0_r0": fit.covariance[0, 1], "cov_lnD0_E": fit.covariance[0, 2], "cov_r0_E": fit.covariance[1, 2],
+        "chi_square": fit.chi_square, "dof": fit.dof, "p_value": fit.p_value, "scale": fit.scale,
+        "joint_verdict": joint.verdict, "joint_D0": joint.D0.value, "joint_r0_angstrom": joint.r0.value,
+        "joint_E_GPa": joint.E.value, "overlap_p": result.comparison.p_value,
+        "overlap_verdict": result.comparison.verdict,
+        "remarks": "; ".join([*fit.remarks, *series.remarks, *(f"{e}: {why}" for e, why in series.missing.items())]),
+    }  # fmt: skip
+
+
+def element_rows(result: CurveResult) -> list[dict[str, Any]]:
+    """The columns `ELEMENT_COLUMNS`: fitted, limits, compared, and elements of the charge that were not measured."""
+    series, fit, corrected = result.series, result.fit, result.comparison.corrected
+    influence = leave_one_out(series.data, fit)
+    rows: list[dict[str, Any]] = []
+    on_curve = predict(fit, series.data.radius)
+    sd = np.sqrt(np.diag(series.data.covariance_at(series.data.value)))
+    for index, element in enumerate(series.elements):
+        shift = dict(zip(("shift_D0", "shift_r0", "shift_E"), influence.shift[index], strict=True))
+        rows.append(
+            {
+                "element": element, "radius_angstrom": series.data.radius[index], "role": "fitted",
+                "D": series.data.value[index], "D_sd": sd[index], "sigmas": fit.sigmas[index],
+                "curve_D": on_curve.value[index], "curve_lo": on_curve.low[index], "curve_hi": on_curve.high[index],
+                "deleted_sigmas": influence.deleted_sigmas[index], **shift,
+                "corrected_D": corrected.value[index], "corrected_lo": corrected.low[index],
+                "corrected_hi": corrected.high[index], "remark": "",
+            }
+        )  # fmt: skip
+    others = [
+        *((e, r, "limit", np.nan, np.nan) for e, r in zip(series.limit_elements, series.data.limit_radius, strict=True)),
+        *((e, r, "compared", d, d_sd) for e, (r, d, d_sd) in series.compared.items()),
+        *((e, r, "predicted", np.nan, np.nan) for e, r in series.unmeasured.items()),
+    ]  # fmt: skip
+    guess = predict(fit, np.array([radius for _element, radius, *_rest in others]))
+    for index, (element, radius, role, measured, measured_sd) in enumerate(others):
+        sigmas = (measured - guess.value[index]) / np.hypot(measured_sd, np.sqrt(fit.scale) * guess.sd[index])
+        rows.append(
+            {
+                "element": element, "radius_angstrom": radius, "role": role, "D": measured, "D_sd": measured_sd,
+                "curve_D": guess.value[index], "curve_lo": guess.low[index], "curve_hi": guess.high[index],
+                "sigmas": sigmas, "remark": "",
+            }
+        )  # fmt: skip
+    return [{"charge": series.charge, **row} for row in rows]
+
+
+def _check(
+    pair: Mapping[str, Any], subject: str, verdict: str, detail: str, **numbers: float
+) -> dict[str, Any]:
+    empty = dict.fromkeys(("value", "sd", "expected_lo", "expected_hi"), np.nan)
+    check = "overlap" if "overlap" in subject else "lattice-strain"
+    return {
+        "check": check,
+        **pair,
+        "subject": subject,
+        **empty,
+        **numbers,
+        "verdict": verdict,
+        "detail": detail,
+    }
+
+
+def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> list[dict[str, Any]]:
+    """One row on the curve's fit, one on the overlap that the values show against it."""
+    fit, joint, both = result.fit, result.comparison.joint, result.comparison
+    charge = result.series.charge
+    held = f" Held by what is known: {result.held}." if result.held else ""
+    if fit.verdict != FITTED:
+        curve = _check(pair, f"{charge}+ curve", CANNOT_TELL, f"No curve: {fit.reason}.{held}")
+    else:
+        words = (
+            f"D0 {fit.D0.value:.3g} ({fit.D0.low:.3g} to {fit.D0.high:.3g}, {fit.D0.status}), r0 {fit.r0.value:.4g} Å "
+            f"({fit.r0.low:.4g} to {fit.r0.high:.4g}, {fit.r0.status}), E {fit.E.value:.3g} GPa ({fit.E.low:.3g} to "
+            f"{fit.E.high:.3g}, {fit.E.status}) at {confidence:.0%}; Blundy & Wood (1994). value: chi-square over degrees "
+            f"of freedom. A curve shows consistency between elements; it is no proof of equilibrium.{held}"
+        )
+        words += "".join(f" {remark[0].upper()}{remark[1:]}." for remark in fit.remarks)
+        if fit.dof == 0:
+            curve = _check(pair, f"{charge}+ curve", CANNOT_TELL, f"As many parameters as values. {words}")
+        else:
+            from scipy.special import chdtri
+
+            numbers = {
+                "value": fit.chi_square / fit.dof,
+                "expected_lo": float(chdtri(fit.dof, 1 - _EXCESS / 2)) / fit.dof,
+                "expected_hi": float(chdtri(fit.dof, _EXCESS / 2)) / fit.dof,
+            }
+            verdict = DIFFERS if fit.p_value < _EXCESS else CONSISTENT
+            curve = _check(pair, f"{charge}+ curve", verdict, words, **numbers)
+    if both.verdict == CANNOT_TELL:
+        floor = _check(pair, f"{charge}+ overlap", CANNOT_TELL, f"No overlap fraction: {both.reason}.")
+    else:
+        f = joint.overlap
+        found = both.verdict == OVERLAP_FOUND
+        words = (
+            f"Fraction of {pair['beta']} in {pair['alpha']} from curve and floor together: {f.value:.3g}, {f.low:.3g} to "
+            f"{f.high:.3g} at {confidence:.0%}; p {both.p_value:.2g} that there is none."
+        )
+        floor = _check(
+            pair, f"{charge}+ overlap", DIFFERS if found else CONSISTENT, words,
+            value=f.value, sd=f.sd, expected_lo=0.0, expected_hi=0.0,
+        )  # fmt: skip
+    return [curve, floor]
