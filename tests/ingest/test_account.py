@@ -117,6 +117,19 @@ def test_thousands_of_problems_are_counted_not_listed():
     assert "800 more cells or rows" in found[-1].message
 
 
+def test_far_more_problems_than_are_kept_are_counted():
+    text = "Point,Run,Phase,MgO,CaO\n" + "".join(f"{i},A,gl,x,y\n" for i in range(3000))
+    assert "5800 more cells or rows" in problems(text)[-1].message
+    assert run(text, on_unreadable="set-aside").tables["ingest.set_aside"].num_rows == 6000
+
+
+def test_a_wrong_phase_column_gives_few_remarks():
+    text = "Point,Run,Phase,MgO\n" + "".join(f"{i},A,note number {i},1\n" for i in range(500))
+    told = run(text).remarks
+    assert len(told) == 21
+    assert "480 more phase labels" in str(told[-1])
+
+
 def test_control_characters_do_not_reach_messages():
     found = problems("Point,Run,Phase,MgO\n1,A,gl,\x1b[31mred\n")
     assert "\x1b" not in str(found[0])

@@ -17,6 +17,7 @@ from tieline.reading.formats import read_grid
 from tieline.reading.grid import Grid, ReadLimits
 from tieline.reading.input_file import InputFile
 from tieline.reading.layout import Layout
+from tieline.reading.sheet_scan import XlsxScan
 from tieline.reading.workbook import cell_as_text
 
 
@@ -116,6 +117,23 @@ def test_error_cells_and_formulas_without_a_value_do_not_become_blanks():
         f"<table:table-row>{ods_cell('a')}{ods_cell('#DIV/0!', ODS_ERROR)}</table:table-row>"
     )
     assert texts(read(sheet, "t.ods")) == [["a", "#DIV/0!"]]
+
+
+def test_a_sheet_seen_in_pieces_is_seen_like_a_whole_one():
+    rows = "".join(
+        f'<row r="{i}"><c r="A{i}" t="e"><v>#N/A</v></c><c r="AB{i}"><f>A1</f></c><c r="C{i}"><v>1</v></c></row>'
+        for i in range(1, 40)
+    )
+    xml = f"<sheetData>{rows}</sheetData>".encode()
+    whole = XlsxScan()
+    whole.see(xml)
+    assert (whole.rows, whole.columns, len(whole.lost)) == (39, 28, 78)
+    assert whole.lost[3, 27] == "=A1"
+    for size in (7, 64, 1000):
+        pieces = XlsxScan()
+        for start in range(0, len(xml), size):
+            pieces.see(xml[start : start + size])
+        assert (pieces.rows, pieces.columns, pieces.lost) == (whole.rows, whole.columns, whole.lost)
 
 
 def test_what_is_no_workbook_is_refused():

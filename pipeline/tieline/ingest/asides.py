@@ -13,6 +13,7 @@ from tieline.tables import build
 
 SHOWN_TEXT = 60
 MOST_PROBLEMS = 200
+MOST_LINES = 2_000
 
 
 def shown(text: str) -> str:
@@ -23,9 +24,14 @@ def shown(text: str) -> str:
 
 @dataclass
 class Asides:
-    """Lines of `ingest.set_aside` for one table. `expected` lines never stop a run, the others may."""
+    """Lines of `ingest.set_aside` for one table. `expected` lines never stop a run, the others may.
+
+    Where they do, their text is not needed beyond the first ones: `most` lines are kept, `more` counts the rest.
+    """
 
     table: str
+    most: int | None = None
+    more: int = 0
     rows: list[int] = field(default_factory=list)
     columns: list[str | None] = field(default_factory=list)
     raws: list[str] = field(default_factory=list)
@@ -47,6 +53,10 @@ class Asides:
         self, rows: Sequence[int], column: str, raws: Sequence[str], reasons: Sequence[str]
     ) -> None:
         """Unreadable cells of one column."""
+        if self.most is not None:
+            free = max(self.most - len(self.rows), 0)
+            self.more += len(rows[free:])
+            rows, raws, reasons = rows[:free], raws[:free], reasons[:free]
         self.rows.extend(rows)
         self.columns.extend([column] * len(rows))
         self.raws.extend(raws)
@@ -56,6 +66,7 @@ class Asides:
 
     def add_all(self, other: Asides) -> None:
         """The lines of another block of the same table."""
+        self.more += other.more
         self.rows += other.rows
         self.columns += other.columns
         self.raws += other.raws
@@ -78,10 +89,9 @@ class Asides:
             )
             for row, place in order[:MOST_PROBLEMS]
         ]
-        if len(order) > MOST_PROBLEMS:
-            found.append(
-                Problem(f"{len(order) - MOST_PROBLEMS} more cells or rows cannot be used.", self.table)
-            )
+        left = len(order) - len(found) + self.more
+        if left:
+            found.append(Problem(f"{left} more cells or rows cannot be used.", self.table))
         if found:
             last = found[-1]
             found[-1] = Problem(last.message, last.file, last.row, last.column, remedy)

@@ -10,11 +10,13 @@ import numpy.typing as npt
 
 from tieline.chemistry.phases import PHASES, phase_name
 from tieline.errors import InputError, Problem
+from tieline.ingest.asides import shown
 from tieline.ingest.spots import Spots
 from tieline.ingest.texts import Texts
 from tieline.reading.cell_text import fold
 from tieline.results import Remark
 
+MOST_REMARKS = 20
 Spellings = Mapping[str, tuple[str, ...]]
 
 
@@ -85,13 +87,21 @@ def phase_remarks(spots: Spots, configured: Spellings, materials: Spellings) -> 
     known = set(PHASES) | set(configured)
     unknown = spots.phase.kept(spots.material.is_missing())
     candidates = sorted({*known, *materials, *(s for given in configured.values() for s in given)})
+    counts = unknown.counts()
+    strange = sorted(
+        (label for label in counts if label not in known), key=lambda label: (-counts[label], label)
+    )
     remarks = []
-    for label, count in sorted(unknown.counts().items()):
-        if label in known:
-            continue
+    for label in strange[:MOST_REMARKS]:
         near = nearest_names(label, candidates)
         guess = f"Nearest: {', '.join(near)}." if near else "Nothing known comes near."
-        remarks.append(Remark(f'phase "{label}" ({count} spots) is not known and kept as it is. {guess}'))
+        remarks.append(
+            Remark(f'phase "{shown(label)}" ({counts[label]} spots) is not known and kept as it is. {guess}')
+        )
+    if len(strange) > MOST_REMARKS:
+        remarks.append(
+            Remark(f"{len(strange) - MOST_REMARKS} more phase labels are not known and kept as they are.")
+        )
     return remarks
 
 
@@ -101,12 +111,12 @@ def similar_experiments(spots: Spots) -> list[Remark]:
     for label in spots.experiment.counts():
         key = "".join(character for character in fold(label) if character.isalnum())
         groups.setdefault(key, []).append(label)
+    alike = [sorted(labels) for labels in groups.values() if len(labels) > 1]
     return [
         Remark(
-            f"experiments {', '.join(sorted(labels))} differ only in case or punctuation and are kept apart."
+            f"experiments {shown(', '.join(labels))} differ only in case or punctuation and are kept apart."
         )
-        for labels in groups.values()
-        if len(labels) > 1
+        for labels in alike[:MOST_REMARKS]
     ]
 
 

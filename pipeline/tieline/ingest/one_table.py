@@ -11,12 +11,13 @@ import numpy.typing as npt
 import pyarrow as pa
 
 from tieline.errors import InputError, Problem
-from tieline.ingest.asides import Asides
+from tieline.ingest.asides import MOST_LINES, Asides
+from tieline.ingest.assigning import Assigning
 from tieline.ingest.long_table import LongLabels, SharedCodes, TableParts
 from tieline.ingest.matching import phase_remarks, similar_experiments, with_materials, with_phases
 from tieline.ingest.matrices import Counts
 from tieline.ingest.remarks import cell_remarks
-from tieline.ingest.roles import LABELS, Assigning, Roles, assign_roles
+from tieline.ingest.roles import LABELS, Roles, assign_roles
 from tieline.ingest.rows import joined, spot_rows
 from tieline.ingest.spots import Spots, duplicate_problems, duplicates, numbered, read_spots
 from tieline.ingest.texts import Mask, Texts
@@ -57,7 +58,8 @@ def read_table(
     """
     if table.path not in files:
         raise InputError(Problem("no such file.", table.path))
-    read = TableRead(table, name, Asides(name))
+    most = MOST_LINES if settings.on_unreadable == "stop" else None
+    read = TableRead(table, name, Asides(name, most))
     grid, work, roles = open_table(files[table.path], table, name, settings)
     read.remarks += [Remark(f"{note}.", name) for note in grid.notes]
     for ragged in grid.ragged:

@@ -4,14 +4,11 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from typing import TYPE_CHECKING
 
 from tieline.chemistry.names import recognise_analyte
+from tieline.ingest.assigning import Assigning
 from tieline.ingest.headers import without_unit
 from tieline.reading.cell_text import fold
-
-if TYPE_CHECKING:
-    from tieline.ingest.roles import Assigning
 
 HOLE = "{analyte}"
 

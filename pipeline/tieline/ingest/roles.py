@@ -3,16 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 from tieline.chemistry.header_words import PPM_PER_UNIT, normalise_header, read_words
-from tieline.chemistry.names import Analyte, looks_like_analyte, nearest_names, recognise_analyte
-from tieline.errors import Problem, nearest
+from tieline.chemistry.names import Analyte, recognise_analyte
+from tieline.errors import nearest
+from tieline.ingest.assigning import Assigning, did_you_mean, listed, role_words
 from tieline.ingest.headers import column_letter, find_header
 from tieline.ingest.partners import find_partners
+from tieline.ingest.unread import remark_unread
 from tieline.reading.cell_text import fold
-from tieline.results import Remark
-from tieline.settings.ingest import Table
 
 LABELS = (
     "spot", "experiment", "phase", "grain", "zone", "distance_um", "batch", "technique", "sequence", "comment",
@@ -46,25 +46,6 @@ class Roles:
     not_read: tuple[int, ...] = ()
 
 
-@dataclass
-class Assigning:
-    """What is known while the columns of one table are being assigned."""
-
-    path: str
-    table: Table
-    headers: Sequence[str]
-    full: Sequence[str]  # header with the text of the units row
-    header_row: int
-    problems: list[Problem] = field(default_factory=list)
-    remarks: list[Remark] = field(default_factory=list)
-
-    def problem(self, message: str, column: str | None = None, remedy: str = "") -> None:
-        self.problems.append(Problem(message, self.path, self.header_row, column, remedy))
-
-    def remark(self, message: str) -> None:
-        self.remarks.append(Remark(message, self.path))
-
-
 def assign_roles(work: Assigning) -> Roles:
     """The role of every column; with problems, where the configuration and the headers disagree."""
     labels = _label_columns(work)
@@ -86,7 +67,7 @@ def assign_roles(work: Assigning) -> Roles:
     total = _total_column(work, recognised, taken | partners)
     read = set(labels.values()) | set(values) | partners
     read_or_known = read | ignored | (set() if total is None else {total})
-    _remark_unread(work, recognised, set(range(len(work.headers))) - read_or_known)
+    remark_unread(work, recognised, set(range(len(work.headers))) - read_or_known)
     return Roles(labels, analytes, total, tuple(sorted(set(range(len(work.headers))) - read)))
 
 
@@ -174,15 +155,10 @@ def _listed_columns(work: Assigning, recognised: Sequence[Analyte | None], taken
         if not matches:
             work.problem("there is no such analyte column.", wanted, nearest(wanted, work.headers))
         elif (analyte := recognised[matches[0]]) is None or not analyte.usable or analyte.role != "value":
-            work.problem("is not the name of an oxide, element or isotope.", wanted, _did_you_mean(wanted))
+            work.problem("is not the name of an oxide, element or isotope.", wanted, did_you_mean(wanted))
         else:
             found.append(matches[0])
     return sorted(dict.fromkeys(found))
-
-
-def _did_you_mean(text: str) -> str:
-    names = nearest_names(text)
-    return f"Did you mean {' or '.join(names)}?" if names else ""
 
 
 def _check_stated_sigmas(work: Assigning, recognised: Sequence[Analyte | None], used: set[int]) -> None:
@@ -190,11 +166,11 @@ def _check_stated_sigmas(work: Assigning, recognised: Sequence[Analyte | None], 
     left = [
         index
         for index, header in enumerate(work.full)
-        if index not in used and header.strip() and _role_words(header, recognised[index]) == "sigma"
+        if index not in used and header.strip() and role_words(header, recognised[index]) == "sigma"
     ]
     if not left:
         return
-    shown = _listed([work.headers[index] for index in left])
+    shown = listed([work.headers[index] for index in left])
     if work.table.sigma is None:
         work.problem(
             f"{len(left)} columns look like uncertainties ({shown}), but what they are is not stated.",
@@ -203,14 +179,6 @@ def _check_stated_sigmas(work: Assigning, recognised: Sequence[Analyte | None], 
         )
     else:
         work.remark(f"columns that look like uncertainties are not read: {shown}.")
-
-
-def _role_words(header: str, analyte: Analyte | None) -> str:
-    """The role a header's words tell, even where no analyte stands beside them (`1s`, `2SE`)."""
-    if analyte is not None:
-        return analyte.role
-    words = read_words(normalise_header(header))
-    return words.role if not words.rest.strip(" ()[]") else ""
 
 
 def _check_duplicates(
@@ -235,7 +203,7 @@ def _check_duplicates(
         headers = list(dict.fromkeys(work.headers[index] for index in where))
         if len(headers) > 1:
             remedy = "Name one of them in columns.ignore."
-            work.problem(f"{_listed(headers)} report the same analyte, {name}.", headers[0], remedy)
+            work.problem(f"{listed(headers)} report the same analyte, {name}.", headers[0], remedy)
 
 
 def _analytes(
@@ -332,36 +300,3 @@ def _total_column(work: Assigning, recognised: Sequence[Analyte | None], used: s
         if analyte is not None and analyte.role == "total" and index not in used
     ]
     return totals[0] if totals else None
-
-
-def _remark_unread(work: Assigning, recognised: Sequence[Analyte | None], unread: set[int]) -> None:
-    """Nothing is passed over in silence: unread columns are told, with the nearest name where one is likely."""
-    plain, limits, known = [], [], []
-    for index, header in enumerate(work.full):
-        if index not in unread or not header.strip():
-            continue
-        analyte = recognised[index]
-        role = _role_words(header, analyte)
-        if role == "limit":
-            limits.append(work.headers[index])
-        elif analyte is not None:
-            known.append(work.headers[index])
-        elif looks_like_analyte(header):
-            guess = _did_you_mean(header)
-            work.remark(
-                f'"{work.headers[index]}" looks like an analyte but is not recognised; not read. {guess}'.strip()
-            )
-        elif role != "sigma":
-            plain.append(work.headers[index])
-    if limits:
-        remedy = 'state limit = { pattern = "{analyte} ..." } to use them'
-        work.remark(f"columns that look like detection limits are not read ({remedy}): {_listed(limits)}.")
-    if known:
-        work.remark(f"recognised columns that are not read: {_listed(known)}.")
-    if plain:
-        work.remark(f"columns not read: {_listed(plain)}.")
-
-
-def _listed(texts: Sequence[str], most: int = 8) -> str:
-    shown = ", ".join(f'"{text}"' for text in texts[:most])
-    return shown if len(texts) <= most else f"{shown} and {len(texts) - most} more"

@@ -30,7 +30,7 @@ def long_blocks(
     """
 
     def work(spots: Block, place: int) -> tuple[LongBlock, Asides, Counts]:
-        own_asides, own_counts = Asides(asides.table), Counts()
+        own_asides, own_counts = Asides(asides.table, asides.most), Counts()
         matrices = cell_matrices(spots, table, roles, grid.found.decimal, own_asides, own_counts)
         return _interleaved(spots, roles, labels, place, matrices), own_asides, own_counts
 

@@ -13,12 +13,11 @@ import re
 Places = dict[tuple[int, int], str]
 
 _REFERENCE = re.compile(rb'<(?:\w+:)?c\b[^>]{0,200}?\br="([A-Z]{1,3})([0-9]{1,7})"')
-_CELL = re.compile(rb"<(?:\w+:)?c\b([^>]*[^>/])>(.*?)</(?:\w+:)?c>", re.DOTALL)
 _CELL_PLACE = re.compile(rb'\br="([A-Z]{1,3})([0-9]{1,7})"')
 _CELL_VALUE = re.compile(rb"<(?:\w+:)?v\b[^>]*>([^<]*)</")
 _CELL_FORMULA = re.compile(rb"<(?:\w+:)?f\b[^>]*?(?:/>|>([^<]*)</)")
 
-_ODS_TAG = re.compile(rb"<table:(table-row|table-cell|covered-table-cell|table)\b([^>]*)>")
+_ODS_TAG = re.compile(rb"<table:(table-row|table-cell|covered-table-cell|table)\b([^>]{0,4000})>")
 _ODS_NAME = re.compile(rb'table:name="([^"]*)"')
 _ODS_TEXT = re.compile(rb"<text:p[^>]*>([^<]*)<")
 _ROWS_REPEATED = re.compile(rb"number-rows-repeated=[\"']([0-9]+)")
@@ -47,19 +46,17 @@ class XlsxScan:
         self._rest = text[cut:][-LONGEST_CELL:]
 
     def _find_lost(self, text: bytes) -> None:
-        for attributes, content in _CELL.findall(text):
-            place = _CELL_PLACE.search(attributes)
+        opening = b"<c " if b"<c " in text else b":c "
+        for cell in text.split(opening)[1:]:
+            if b't="e"' not in cell and b"<f" not in cell and b":f" not in cell:
+                continue
+            attributes, _, content = cell.partition(b">")
+            place = _CELL_PLACE.search(b" " + attributes)
             if place is None or b't="str"' in attributes:
                 continue
-            value, formula = _CELL_VALUE.search(content), _CELL_FORMULA.search(content)
-            shown = value.group(1) if value is not None else b""
-            if b't="e"' in attributes:
-                lost = shown or b"#N/A"
-            elif formula is not None and not shown:
-                lost = b"=" + (formula.group(1) or b"")
-            else:
-                continue
-            self.lost[int(place.group(2)) - 1, _column_number(place.group(1)) - 1] = unescaped(lost)
+            lost = _lost_text(attributes, content)
+            if lost:
+                self.lost[int(place.group(2)) - 1, _column_number(place.group(1)) - 1] = unescaped(lost)
 
     def end(self) -> None:
         """Nothing is kept back."""
@@ -117,6 +114,15 @@ class OdsScan:
     def lost_in(self, sheet: str) -> Places:
         """Lost cells of one sheet."""
         return self.lost.get(sheet, {})
+
+
+def _lost_text(attributes: bytes, content: bytes) -> bytes:
+    """The error word of a cell, or its formula where no value is stored; empty for other cells."""
+    value, formula = _CELL_VALUE.search(content), _CELL_FORMULA.search(content)
+    shown = value.group(1) if value is not None else b""
+    if b't="e"' in attributes:
+        return shown or b"#N/A"
+    return b"=" + (formula.group(1) or b"") if formula is not None and not shown else b""
 
 
 def _repeats(pattern: re.Pattern[bytes], attributes: bytes) -> int:
