@@ -198,6 +198,37 @@ def demo(
 
 
 @app.command()
+def trace(
+    config: ConfigArgument,
+    experiment: Annotated[str, typer.Argument(metavar="EXPERIMENT", help="Experiment as in the table of D.")],
+    pair: Annotated[str, typer.Argument(metavar="ALPHA/BETA", help="The two phases, such as olivine/glass.")],
+    element: Annotated[str, typer.Argument(metavar="ELEMENT", help="Element symbol.")],
+    out: OutOption = None,
+    overrides: SetOption = None,
+    json: JsonOption = False,
+) -> None:
+    """Follow one D back to its spots, findings, rulings, uncertainty budget and the cells of the tables.
+
+    Example: tieline trace configs/ember.toml EM-02 olivine/glass Ni
+    """
+    from tieline import runner
+    from tieline.tracing.page import Source
+    from tieline.tracing.page import trace as trace_page
+
+    alpha, separator, beta = pair.partition("/")
+    if not (alpha and separator and beta):
+        _fail_usage(f'"{pair}" is not of the form ALPHA/BETA, such as olivine/glass.')
+    session, tables, files = runner.finished(_load(config, overrides, out), "classify")
+    page = trace_page(Source(tables, session.settings, files), experiment, alpha, beta, element)
+    if json:
+        _print_json(page)
+    else:
+        from tieline.terminal_trace import show_trace
+
+        show_trace(page)
+
+
+@app.command()
 def audit(
     run_folder: Annotated[Path, typer.Argument(metavar="RUN_FOLDER", help="Folder that a run wrote.")],
     against: Annotated[

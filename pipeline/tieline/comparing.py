@@ -71,7 +71,7 @@ def _rows(table: pa.Table, columns: Iterable[str]) -> list[dict[str, Any]]:
 
 def compare(a: Reduction, b: Reduction) -> dict[str, Any]:
     """Everything that differs, as plain data; `a` is what the changes are counted from."""
-    D = changed_D(a.rows["classify"], b.rows["classify"])
+    D = changed_coefficients(a.rows["classify"], b.rows["classify"])
     return {
         "a": a.path,
         "b": b.path,
@@ -94,11 +94,11 @@ def _of_reduction(run: Reduction) -> dict[str, Any]:
 def version_differences(a: Mapping[str, Any], b: Mapping[str, Any]) -> list[str]:
     """Program version and stage revisions that differ."""
     lines = settings_differences({"tieline": a.get("tieline")}, {"tieline": b.get("tieline")})
-    revisions = [
+    one, two = (
         {name: stage.get("revision") for name, stage in manifest.get("stages", {}).items()}
         for manifest in (a, b)
-    ]
-    return [*lines, *settings_differences(*revisions, "revision of")] if all(revisions) else lines
+    )
+    return [*lines, *settings_differences(one, two, "revision of")] if one and two else lines
 
 
 def input_differences(a: Mapping[str, Any], b: Mapping[str, Any]) -> list[str]:
@@ -163,7 +163,7 @@ def _details(run: Reduction, keys: Any) -> dict[tuple[Any, str], str]:
     }
 
 
-def changed_D(one: list[dict[str, Any]], two: list[dict[str, Any]]) -> list[dict[str, Any]]:
+def changed_coefficients(one: list[dict[str, Any]], two: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """D's that changed by more than the last digits, largest change first, then changes of kind.
 
     `change_in_sigma`: (D of B − D of A) over the smaller of their standard uncertainties; None where one of

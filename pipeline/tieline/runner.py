@@ -107,6 +107,24 @@ def tables_of(session: Session, names: Iterable[str]) -> dict[str, pa.Table]:
     return {name: read_table(path, name) for name, path in paths.items() if path.exists()}
 
 
+def finished(
+    session: Session, until: str
+) -> tuple[Session, dict[str, pa.Table], dict[str, InputFile]]:
+    """The session with its settings in effect, every stage table up to one stage, and the input files.
+
+    Raises InputError where one of these stages is not current: its tables would tell of other settings.
+    """
+    work = _workspace(session)
+    stages = STAGES[: NAMES.index(until) + 1]
+    for verdict in _verdicts(work, stages):
+        if verdict.state != "current":
+            reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
+            raise InputError(
+                Problem(f"{verdict.stage} is {verdict.state}{reasons}.", remedy="Run `tieline run` first.")
+            )
+    return work.session, tables_of(session, (name for stage in stages for name in stage.outputs)), work.files
+
+
 def check(session: Session) -> list[StageReport]:
     """Everything `run` would do, without writing: raises InputError with every problem found."""
     work = _workspace(session)
