@@ -54,10 +54,10 @@ def column_digest(column: pa.ChunkedArray) -> str:
     if pa.types.is_dictionary(array.type):
         labels = label_codes(array)
         digest.update(json_text(labels.texts).encode())
-        digest.update(labels.codes.astype(_narrow_type(len(labels.texts))))
+        digest.update(labels.codes.astype(_narrow_type(len(labels.texts))).data)
         return digest.hexdigest()
     if array.null_count:
-        digest.update(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)))
+        digest.update(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)).data)
     if pa.types.is_string(array.type):
         filled = array.fill_null("") if array.null_count else array
         digest.update(pc.binary_length(filled).to_numpy(zero_copy_only=False))
@@ -65,7 +65,7 @@ def column_digest(column: pa.ChunkedArray) -> str:
         return digest.hexdigest()
     if array.null_count:
         array = array.fill_null(pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type))
-    digest.update(np.ascontiguousarray(array.to_numpy(zero_copy_only=False)))
+    digest.update(np.ascontiguousarray(array.to_numpy(zero_copy_only=False)).data)
     return digest.hexdigest()
 
 

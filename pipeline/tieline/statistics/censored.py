@@ -27,6 +27,7 @@ from tieline.statistics.groups import (
     group_sum,
 )
 from tieline.statistics.limits import MeanLimits
+from tieline.statistics.search import root, summit
 
 LIMIT_IN_SIGMAS = 3.0
 GROWTH_TO_LIMIT = 0.5
@@ -34,32 +35,47 @@ GROWTH_TO_LIMIT = 0.5
 RELATIVE_SPREADS = np.array([*np.linspace(0.0, 0.4, 9), 0.5, 0.6, 0.8, 1.0, 1.4])
 RELATIVE_SPREADS_ALL_BELOW = np.array([0.0, 0.3])
 
-# Levels at which the likelihood is first looked at, as multiples of the largest value or limit of the group.
-_COARSE = np.concatenate([np.linspace(0.0, 2.0, 33), np.geomspace(2.0, 64.0, 16)[1:]])
-_FINE_STEPS = 9
-_REFINEMENTS = 3
-_CHUNK_CELLS = 2_000_000
+# Levels at which the likelihood is first looked at, as multiples of the largest value or limit of the group;
+# the far ones only where the near ones do not hold the upper limit.
+_NEAR = np.linspace(0.0, 2.0, 33)
+_FAR = np.geomspace(2.0, 64.0, 16)[1:]
+# So many groups at a time stay in the processor's cache.
+_CHUNK_GROUPS = 2000
+
+
+@dataclass(frozen=True)
+class _Rows:
+    """Values or limits of groups as rows, and their blank variances, shape (G, N); `present` is 1 or 0."""
+
+    level: FloatArray
+    blank: FloatArray
+    present: FloatArray
+
+    def of(self, chosen: IntArray) -> "_Rows":
+        return _Rows(self.level[chosen], self.blank[chosen], self.present[chosen])
 
 
 @dataclass(frozen=True)
 class _Padded:
-    """Groups as rows: values (or limits), blank variances, kappa, flags; shape (G, N), kappa (G,)."""
+    """Groups as rows: measured values, limits of the others, and the growth kappa of the noise, shape (G,)."""
 
-    level: FloatArray
-    blank: FloatArray
+    measured: _Rows
+    below: _Rows
     kappa: FloatArray
-    censored: BoolArray
-    present: BoolArray
 
-    def rows(self, chosen: IntArray) -> "_Padded":
-        width = int(self.present[chosen].sum(axis=1).max(initial=0))
-        return _Padded(
-            self.level[chosen, :width],
-            self.blank[chosen, :width],
-            self.kappa[chosen],
-            self.censored[chosen, :width],
-            self.present[chosen, :width],
-        )
+    def of(self, chosen: IntArray) -> "_Padded":
+        if len(chosen) == len(self.kappa):
+            return self
+        return _Padded(self.measured.of(chosen), self.below.of(chosen), self.kappa[chosen])
+
+    @property
+    def scale(self) -> FloatArray:
+        """The largest value or limit of every group."""
+        largest = [
+            (part.present * np.abs(part.level)).max(axis=1, initial=0.0)
+            for part in (self.measured, self.below)
+        ]
+        return np.asarray(np.maximum(*largest), dtype=np.float64)
 
 
 def censored_limits(
@@ -90,52 +106,58 @@ def censored_limits(
     n = group_count(group, n_groups)
     n_censored = group_count(group[censored], n_groups)
     mean, low, high = (np.full(n_groups, np.nan) for _ in range(3))
+    rectangle = _Rectangles(values, sigmas, limits, censored, group, n_groups)
     affected = np.flatnonzero(n_censored > 0)
-    if len(affected):
-        padded = _pad(values, sigmas, limits, censored, group, n_groups, affected)
-        every = n_censored[affected] == n[affected]
-        below = affected[every]
-        mean[below] = low[below] = 0.0
-        high[below] = _highest_level(padded.rows(np.flatnonzero(every)), 0.5 * (1.0 - confidence))
-        partly = affected[~every]
-        mean[partly], low[partly], high[partly] = _profile(
-            padded, np.flatnonzero(~every), n[partly], confidence
-        )
+    # Groups of like size together: little of a rectangle is then empty.
+    affected = affected[np.lexsort((n_censored[affected], n[affected]))]
+    every = n_censored[affected] == n[affected]
+    for chosen, solve in ((affected[every], _all_below), (affected[~every], _partly_below)):
+        for first in range(0, len(chosen), _CHUNK_GROUPS):
+            part = chosen[first : first + _CHUNK_GROUPS]
+            padded = rectangle(part)
+            mean[part], low[part], high[part] = solve(padded, n[part], confidence)
     return MeanLimits(mean, low, high, n, n_censored)
 
 
-def _pad(
-    values: FloatArray,
-    sigmas: FloatArray,
-    limits: FloatArray,
-    censored: BoolArray,
-    group: IntArray,
-    n_groups: int,
-    affected: IntArray,
-) -> _Padded:
-    """The affected groups as rows of a rectangle, with their noise model."""
-    blank, kappa = _noise_model(values, sigmas, limits, censored, group, n_groups)
-    row_of_group = np.full(n_groups, -1)
-    row_of_group[affected] = np.arange(len(affected))
-    kept = np.flatnonzero(row_of_group[group] >= 0)
-    kept = kept[np.argsort(group[kept], kind="stable")]
-    count = group_count(group, n_groups)[affected]
-    column = np.arange(len(kept)) - np.repeat(np.cumsum(count) - count, count)
-    row = row_of_group[group[kept]]
-    shape = (len(affected), int(count.max()))
+class _Rectangles:
+    """Cuts groups out of the flat arrays as rows of rectangles, with their noise model."""
 
-    def rectangle(flat: FloatArray | BoolArray, fill: float) -> FloatArray:
-        out = np.full(shape, fill)
-        out[row, column] = flat[kept]
-        return out
+    def __init__(
+        self,
+        values: FloatArray,
+        sigmas: FloatArray,
+        limits: FloatArray,
+        censored: BoolArray,
+        group: IntArray,
+        n_groups: int,
+    ) -> None:
+        blank, self.kappa = _noise_model(values, sigmas, limits, censored, group, n_groups)
+        self.parts = [
+            (rows[np.argsort(group[rows], kind="stable")], level, blank, group_count(group[rows], n_groups))
+            for rows, level in ((np.flatnonzero(~censored), values), (np.flatnonzero(censored), limits))
+        ]
 
-    return _Padded(
-        level=rectangle(np.where(censored, limits, values), 0.0),
-        blank=rectangle(blank, 1.0),
-        kappa=kappa[affected],
-        censored=rectangle(censored, 0.0) > 0,
-        present=rectangle(np.ones(len(values)), 0.0) > 0,
-    )
+    def __call__(self, chosen: IntArray) -> _Padded:
+        measured, below = (self._rows(*part, chosen) for part in self.parts)
+        return _Padded(measured, below, self.kappa[chosen])
+
+    @staticmethod
+    def _rows(
+        ordered: IntArray, level: FloatArray, blank: FloatArray, count: IntArray, chosen: IntArray
+    ) -> _Rows:
+        start = (np.cumsum(count) - count)[chosen, None]
+        place = np.arange(int(count[chosen].max(initial=0)))
+        present = place < count[chosen, None]
+        rows = (
+            ordered[np.where(present, start + place, 0)]
+            if present.any()
+            else np.zeros(present.shape, np.int64)
+        )
+        return _Rows(
+            np.where(present, level[rows], 0.0),
+            np.where(present, blank[rows], 1.0),
+            present.astype(np.float64),
+        )
 
 
 def _noise_model(
@@ -168,84 +190,105 @@ def _noise_model(
     return np.where(given, blank, blank * shrink[group]), kappa
 
 
-def _log_likelihood(groups: _Padded, level: FloatArray, spreads: FloatArray) -> FloatArray:
-    """Log-likelihood maximised over the relative spreads; level: (G, M) -> (G, M)."""
-    best = np.full(level.shape, -np.inf)
-    mu = level[:, :, None]
-    counting = groups.blank[:, None, :] * (1.0 + groups.kappa[:, None, None] * mu)
-    distance = groups.level[:, None, :] - mu
-    weight = groups.present[:, None, :]
-    for spread in spreads:
-        variance = counting + (spread * mu) ** 2
-        deviate = distance / np.sqrt(variance)
-        density = -0.5 * deviate**2 - 0.5 * np.log(variance)
-        terms = np.where(groups.censored[:, None, :], special.log_ndtr(deviate), density)
-        best = np.maximum(best, np.where(weight, terms, 0.0).sum(axis=2))
-    return best
+def _log_likelihood(groups: _Padded, level: FloatArray, spread: FloatArray | float) -> FloatArray:
+    """Log-likelihood of one level and one relative spread of every group, shape (G,) each."""
+    growth, extra = (1.0 + groups.kappa * level)[:, None], ((spread * level) ** 2)[:, None]
+    mu, measured, below = level[:, None], groups.measured, groups.below
+    variance = measured.blank * growth + extra
+    deviance = (measured.level - mu) ** 2 / variance + np.log(variance)
+    tail = special.log_ndtr((below.level - mu) / np.sqrt(below.blank * growth + extra))
+    return _row_sums(tail, below.present) - 0.5 * _row_sums(deviance, measured.present)
 
 
-def _highest_level(groups: _Padded, tail: float) -> FloatArray:
-    """Largest level at which all values fall below their limits with probability `tail`, shape (G,)."""
-    highest = np.zeros(len(groups.level))
-    top = 64.0 * np.where(groups.present, groups.level, 0.0).max(axis=1, initial=0.0)
+def _row_sums(terms: FloatArray, present: FloatArray) -> FloatArray:
+    return np.asarray(np.einsum("gn,gn->g", terms, present), dtype=np.float64)
+
+
+class _Profile:
+    """Log-likelihood of levels, maximised over the relative spreads.
+
+    The best spread moves slowly with the level: it is looked for uphill from where it was at the last one.
+    """
+
+    def __init__(self, groups: _Padded) -> None:
+        self.groups = groups
+        self.spread = np.zeros(len(groups.kappa), dtype=np.int64)
+
+    def __call__(self, level: FloatArray, chosen: IntArray) -> FloatArray:
+        """One level of each of the chosen groups."""
+        groups, spread = self.groups.of(chosen), self.spread[chosen]
+        best = _log_likelihood(groups, level, RELATIVE_SPREADS[spread])
+        started = spread.copy()
+        for step in (1, -1):
+            moving = np.flatnonzero(spread == started)
+            while len(moving := moving[_is_place(spread[moving] + step)]):
+                trial = _log_likelihood(
+                    groups.of(moving), level[moving], RELATIVE_SPREADS[spread[moving] + step]
+                )
+                better = trial > best[moving]
+                moving = moving[better]
+                best[moving], spread[moving] = trial[better], spread[moving] + step
+        self.spread[chosen] = spread
+        return best
+
+
+def _is_place(position: IntArray) -> BoolArray:
+    return np.asarray((position >= 0) & (position < len(RELATIVE_SPREADS)))
+
+
+def _all_below(groups: _Padded, n: IntArray, confidence: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Mean and low are 0; high is the largest level at which all values still fall below their limits."""
+    none, top = np.zeros(len(n)), 64.0 * groups.scale
+    cut = np.log(0.5 * (1.0 - confidence))
+    highest = none
     for spread in RELATIVE_SPREADS_ALL_BELOW:
-        low, high = np.zeros(len(top)), top.copy()
-        for _ in range(60):
-            middle = 0.5 * (low + high)
-            possible = _log_likelihood(groups, middle[:, None], np.array([spread]))[:, 0] > np.log(tail)
-            low, high = np.where(possible, middle, low), np.where(possible, high, middle)
-        highest = np.maximum(highest, high)
-    return highest
+
+        def above(level: FloatArray, chosen: IntArray, spread: float = spread) -> FloatArray:
+            return np.asarray(_log_likelihood(groups.of(chosen), level, spread) - cut)
+
+        every = np.arange(len(n))
+        ends = above(none, every), above(top, every)
+        highest = np.maximum(highest, root(above, none, top, *ends, 1e-11))
+    return none, none, highest
 
 
-def _profile(
-    padded: _Padded, chosen: IntArray, n: IntArray, confidence: float
+def _partly_below(
+    groups: _Padded, n: IntArray, confidence: float
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Maximum and limits of the profile likelihood of the chosen rows, a bounded number at a time."""
+    """Maximum and limits of the profile likelihood."""
     t = special.stdtrit(np.maximum(n - 1, 1), 0.5 + 0.5 * confidence)
     drop = 0.5 * n * np.log1p(t**2 / np.maximum(n - 1, 1))
-    mean, low, high = (np.empty(len(chosen)) for _ in range(3))
-    by_size = np.argsort(n, kind="stable")
-    step = max(1, _CHUNK_CELLS // (len(_COARSE) * max(1, int(n.max(initial=1)))))
-    for first in range(0, len(chosen), step):
-        rows = by_size[first : first + step]
-        mean[rows], low[rows], high[rows] = _profile_rows(padded.rows(chosen[rows]), drop[rows])
-    return mean, low, high
-
-
-def _profile_rows(groups: _Padded, drop: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    scale = np.where(groups.present, np.abs(groups.level), 0.0).max(axis=1)
-    level = scale[:, None] * _COARSE
-    curve = _log_likelihood(groups, level, RELATIVE_SPREADS)
-    at = np.arange(len(scale))
+    profile, at, scale = _Profile(groups), np.arange(len(n)), groups.scale
+    level = scale[:, None] * np.concatenate([_NEAR, _FAR])
+    curve, spread = np.full(level.shape, -np.inf), np.zeros(level.shape, dtype=np.int64)
+    for column in range(len(_NEAR)):
+        curve[:, column], spread[:, column] = profile(level[:, column], at), profile.spread
+    # Where the likelihood is still within reach of its cut at the last level, it may be so beyond.
+    for column in range(len(_NEAR), level.shape[1]):
+        far = np.flatnonzero(curve[:, column - 1] >= curve.max(axis=1) - drop)
+        curve[far, column], spread[:, column] = profile(level[far, column], far), profile.spread
     peak = curve.argmax(axis=1)
-    left, right = level[at, np.maximum(peak - 1, 0)], level[at, np.minimum(peak + 1, len(_COARSE) - 1)]
-    for _ in range(_REFINEMENTS + 2):
-        fine = np.linspace(left, right, _FINE_STEPS, axis=1)
-        likelihood = _log_likelihood(groups, fine, RELATIVE_SPREADS)
-        best = likelihood.argmax(axis=1)
-        left, right = fine[at, np.maximum(best - 1, 0)], fine[at, np.minimum(best + 1, _FINE_STEPS - 1)]
-    mean = fine[at, best]
-    cut = likelihood.max(axis=1) - drop
+    profile.spread = spread[at, peak]
+    mean, highest = summit(
+        profile, *(level[at, np.clip(peak + step, 0, level.shape[1] - 1)] for step in (-1, 1))
+    )
+    cut = highest - drop
     allowed = curve >= cut[:, None]
     allowed[at, peak] = True
-    first, last = allowed.argmax(axis=1), len(_COARSE) - 1 - allowed[:, ::-1].argmax(axis=1)
-    low = _crossing(groups, cut, level[at, np.maximum(first - 1, 0)], level[at, first])
-    high = _crossing(groups, cut, level[at, np.minimum(last + 1, len(_COARSE) - 1)], level[at, last])
+    first, last = allowed.argmax(axis=1), level.shape[1] - 1 - allowed[:, ::-1].argmax(axis=1)
+
+    def below_cut(level: FloatArray, chosen: IntArray) -> FloatArray:
+        return np.asarray(cut[chosen] - profile(level, chosen))
+
+    def crossing(outside: IntArray, inside: IntArray) -> FloatArray:
+        a, b = (np.where(place == peak, mean, level[at, place]) for place in (outside, inside))
+        f_a, f_b = (cut - np.where(place == peak, highest, curve[at, place]) for place in (outside, inside))
+        return root(below_cut, a, b, f_a, f_b, 1e-7)
+
+    low = crossing(np.maximum(first - 1, 0), first)
+    high = crossing(np.minimum(last + 1, level.shape[1] - 1), last)
     return (
         mean,
         np.where(first == 0, 0.0, np.minimum(low, mean)),
-        np.where(last == len(_COARSE) - 1, np.inf, np.maximum(high, mean)),
+        np.where(last == level.shape[1] - 1, np.inf, np.maximum(high, mean)),
     )
-
-
-def _crossing(groups: _Padded, cut: FloatArray, outside: FloatArray, inside: FloatArray) -> FloatArray:
-    """Level between `outside` and `inside` where the likelihood passes the cut, the outermost if several."""
-    at = np.arange(len(cut))
-    for _ in range(_REFINEMENTS):
-        fine = np.linspace(outside, inside, _FINE_STEPS, axis=1)
-        above = _log_likelihood(groups, fine, RELATIVE_SPREADS) >= cut[:, None]
-        above[:, -1] = True
-        first = np.maximum(above.argmax(axis=1), 1)
-        outside, inside = fine[at, first - 1], fine[at, first]
-    return 0.5 * (outside + inside)
