@@ -1,6 +1,6 @@
 """How often the intervals of D hold the truth: a seeded study that drives the program's own functions.
 
-    python tests/benchmarks/coverage.py --out DIR            the full study, about 10 minutes of one core
+    python tests/benchmarks/coverage.py --out DIR            the full study, about 4 minutes of one core
     python tests/benchmarks/coverage.py --out DIR --quick    a few cells, seconds
 
 Writes coverage.csv (every cell), coverage.md (worst cell of every family and size against its target) and
