@@ -13,8 +13,8 @@ import time
 from pathlib import Path
 
 import numpy as np
-from sessions import small_session
 
+from sessions import small_session
 from tieline import runner
 from tieline.chemistry.elements import SYMBOLS
 from tieline.chemistry.radii import known_radii
