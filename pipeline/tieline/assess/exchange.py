@@ -9,13 +9,23 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import special
 
+from tieline.assess.evidence import (
+    CANNOT_TELL,
+    CHECK_COLUMNS,
+    CONSISTENT,
+    DIFFERS,
+    PAIR_KEYS,
+    Variances,
+    base_phase,
+    by_pair,
+    check,
+)  # fmt: skip
 from tieline.assess.ferric import FerricShare
 from tieline.chemistry.exchange import windows_for
 
 if TYPE_CHECKING:
     import pandas as pd
 
-CONSISTENT, DIFFERS, CANNOT_TELL = "consistent", "differs", "cannot tell"
 MELTS = ("glass", "melt", "liquid")
 
 
@@ -97,9 +107,10 @@ def exchange_checks(
     import pandas as pd
 
     rows = []
-    keys = ["experiment", "alpha", "beta"]
     variances = by_pair(covariance)
-    for (experiment, alpha, beta), rows_of_pair in partition.groupby(keys, sort=True, observed=True):
+    for (experiment, alpha, beta), rows_of_pair in partition.groupby(
+        list(PAIR_KEYS), sort=True, observed=True
+    ):
         group = rows_of_pair.set_index("element")
         for first, second in pairs:
             if first not in group.index or second not in group.index:
@@ -123,19 +134,13 @@ def exchange_checks(
             )  # fmt: skip
             low, high, source = _window(alpha, beta, f"{first}-{second}", windows or {})
             rows.append(
-                {
-                    "check": "exchange", "experiment": experiment, "alpha": alpha, "beta": beta,
-                    "subject": f"K_D({first}-{second})", "value": found.value, "sd": found.sd,
-                    "expected_lo": low, "expected_hi": high, "verdict": compare(found, low, high),
-                    "detail": _words(found, source, confidence) + assumption,
-                }
+                check(
+                    "exchange", dict(zip(PAIR_KEYS, (experiment, alpha, beta), strict=True)), f"K_D({first}-{second})",
+                    compare(found, low, high), _words(found, source, confidence) + assumption,
+                    value=found.value, sd=found.sd, expected_lo=low, expected_hi=high,
+                )
             )  # fmt: skip
     return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
-
-
-CHECK_COLUMNS = (
-    "check", "experiment", "alpha", "beta", "subject", "value", "sd", "expected_lo", "expected_hi", "verdict", "detail",
-)  # fmt: skip
 
 
 def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
@@ -150,9 +155,11 @@ def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
 def _window(
     alpha: str, beta: str, exchange: str, given: Mapping[tuple[str, str], tuple[float, float, str]]
 ) -> tuple[float, float, str]:
-    if (alpha, exchange) in given:
-        return given[alpha, exchange]
-    known = windows_for(alpha, "Fe-Mg") if exchange == "Fe-Mg" and beta in MELTS else ()
+    if (base_phase(alpha), exchange) in given:
+        return given[base_phase(alpha), exchange]
+    known = (
+        windows_for(base_phase(alpha), "Fe-Mg") if exchange == "Fe-Mg" and base_phase(beta) in MELTS else ()
+    )
     for window in known:
         if window.half_width is not None:
             memory = "" if window.verified else "; from memory in part"
@@ -169,18 +176,6 @@ def _words(found: ExchangeCoefficient, source: str, confidence: float) -> str:
         f"K_D {found.value:.4g}, {found.low:.4g} to {found.high:.4g} at {confidence:.0%}; by mass and by amount alike."
         + window
     )
-
-
-Variances = dict[tuple[str, str], float]
-
-
-def by_pair(covariance: pd.DataFrame) -> dict[tuple[str, str, str], Variances]:
-    """The covariance table as (experiment, alpha, beta) -> (element, other) -> covariance."""
-    found: dict[tuple[str, str, str], Variances] = {}
-    columns = ["experiment", "alpha", "beta", "element", "other", "covariance"]
-    for experiment, alpha, beta, element, other, value in covariance[columns].itertuples(index=False):
-        found.setdefault((experiment, alpha, beta), {})[element, other] = float(value)
-    return found
 
 
 def _matrix(variances: Variances, first: str, second: str) -> np.ndarray:

@@ -8,7 +8,17 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from tieline.assess.exchange import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, by_pair
+from tieline.assess.evidence import (
+    CANNOT_TELL,
+    CHECK_COLUMNS,
+    CONSISTENT,
+    DIFFERS,
+    EXCESS,
+    PAIR_KEYS,
+    base_phase,
+    by_pair,
+    check,
+)  # fmt: skip
 from tieline.assess.lattice_series import Series, charge_of, collect_series
 from tieline.chemistry.phases import all_phases
 from tieline.statistics.lattice_strain import FITTED, CurveFit, Prior, fit_curve
@@ -21,7 +31,6 @@ if TYPE_CHECKING:
 # E = 1125 Z / (r0 + 1.38 Å)³ GPa, 1.38 Å the radius of oxygen (Wood & Blundy 2003, Treatise on Geochemistry 2.09; from
 # memory). Published fits lie within about 40 % of it (from memory).
 _ELASTIC_GPA, _OXYGEN_ANGSTROM, _ELASTIC_RELATIVE_SD = 1125.0, 1.38, 0.4
-_EXCESS = 0.05
 
 
 @dataclass(frozen=True)
@@ -96,9 +105,7 @@ def lattice_strain_tables(
     elements: list[dict[str, Any]] = []
     checks: list[dict[str, Any]] = []
     variances = by_pair(covariance)
-    for (experiment, alpha, beta), group in partition.groupby(
-        ["experiment", "alpha", "beta"], sort=True, observed=True
-    ):
+    for (experiment, alpha, beta), group in partition.groupby(list(PAIR_KEYS), sort=True, observed=True):
         pair = {"experiment": experiment, "alpha": alpha, "beta": beta}
         site = _site(alpha, coordination or {})
         temperature_K = temperatures_C.get(experiment, np.nan) + 273.15
@@ -110,25 +117,32 @@ def lattice_strain_tables(
                     "the coordination of its site" if site is None else "the temperature of the experiment"
                 )
                 checks.append(
-                    _check(pair, f"{charge}+ curve", CANNOT_TELL, f"No curve: {lacks} is not known.")
+                    check(
+                        "lattice-strain",
+                        pair,
+                        f"{charge}+ curve",
+                        CANNOT_TELL,
+                        f"No curve: {lacks} is not known.",
+                    )
                 )
                 continue
             series = collect_series(
                 group, variances.get((experiment, alpha, beta), {}), charge, site,
                 charges=charges, leave_out=tuple(leave_out),
             )  # fmt: skip
-            result = fit_series(series, temperature_K, (priors or {}).get((alpha, charge)), confidence)
+            result = fit_series(
+                series, temperature_K, (priors or {}).get((base_phase(alpha), charge)), confidence
+            )
             curves.append(pair | curve_row(result, temperature_K))
             elements.extend(pair | row for row in element_rows(result))
             checks.extend(_checks(pair, result, confidence))
     return LatticeTables(
-        pd.DataFrame(curves, columns=[*_PAIR, *CURVE_COLUMNS]),
-        pd.DataFrame(elements, columns=[*_PAIR, *ELEMENT_COLUMNS]),
+        pd.DataFrame(curves, columns=[*PAIR_KEYS, *CURVE_COLUMNS]),
+        pd.DataFrame(elements, columns=[*PAIR_KEYS, *ELEMENT_COLUMNS]),
         pd.DataFrame(checks, columns=list(CHECK_COLUMNS)),
     )
 
 
-_PAIR = ("experiment", "alpha", "beta")
 _PARAMETER_COLUMNS = tuple(
     f"{name}{part}"
     for name in ("D0", "r0_angstrom", "E_GPa", "overlap")
@@ -146,8 +160,9 @@ ELEMENT_COLUMNS = (
 
 
 def _site(phase: str, given: Mapping[str, int]) -> int | None:
-    facts = all_phases().get(phase)
-    return given.get(phase, facts.large_site if facts else None)
+    name = base_phase(phase)
+    facts = all_phases().get(name)
+    return given.get(name, facts.large_site if facts else None)
 
 
 def _charges(group: pd.DataFrame, given: Mapping[str, int]) -> dict[int, int]:
@@ -239,7 +254,9 @@ def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> 
     charge = result.series.charge
     held = f" Held by what is known: {result.held}." if result.held else ""
     if fit.verdict != FITTED:
-        curve = _check(pair, f"{charge}+ curve", CANNOT_TELL, f"No curve: {fit.reason}.{held}")
+        curve = check(
+            "lattice-strain", pair, f"{charge}+ curve", CANNOT_TELL, f"No curve: {fit.reason}.{held}"
+        )
     else:
         words = (
             f"D0 {fit.D0.value:.3g} ({fit.D0.low:.3g} to {fit.D0.high:.3g}, {fit.D0.status}), r0 {fit.r0.value:.4g} Å "
@@ -249,19 +266,27 @@ def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> 
         )
         words += "".join(f" {remark[0].upper()}{remark[1:]}." for remark in fit.remarks)
         if fit.dof == 0:
-            curve = _check(pair, f"{charge}+ curve", CANNOT_TELL, f"As many parameters as values. {words}")
+            curve = check(
+                "lattice-strain",
+                pair,
+                f"{charge}+ curve",
+                CANNOT_TELL,
+                f"As many parameters as values. {words}",
+            )
         else:
             from scipy.special import chdtri
 
             numbers = {
                 "value": fit.chi_square / fit.dof,
-                "expected_lo": float(chdtri(fit.dof, 1 - _EXCESS / 2)) / fit.dof,
-                "expected_hi": float(chdtri(fit.dof, _EXCESS / 2)) / fit.dof,
+                "expected_lo": float(chdtri(fit.dof, 1 - EXCESS / 2)) / fit.dof,
+                "expected_hi": float(chdtri(fit.dof, EXCESS / 2)) / fit.dof,
             }
-            verdict = DIFFERS if fit.p_value < _EXCESS else CONSISTENT
-            curve = _check(pair, f"{charge}+ curve", verdict, words, **numbers)
+            verdict = DIFFERS if fit.p_value < EXCESS else CONSISTENT
+            curve = check("lattice-strain", pair, f"{charge}+ curve", verdict, words, **numbers)
     if both.verdict == CANNOT_TELL:
-        floor = _check(pair, f"{charge}+ overlap", CANNOT_TELL, f"No overlap fraction: {both.reason}.")
+        floor = check(
+            "overlap", pair, f"{charge}+ overlap", CANNOT_TELL, f"No overlap fraction: {both.reason}."
+        )
     else:
         f = joint.overlap
         found = both.verdict == OVERLAP_FOUND
@@ -269,8 +294,7 @@ def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> 
             f"Fraction of {pair['beta']} in {pair['alpha']} from curve and floor together: {f.value:.3g}, {f.low:.3g} to "
             f"{f.high:.3g} at {confidence:.0%}; p {both.p_value:.2g} that there is none."
         )
-        floor = _check(
-            pair, f"{charge}+ overlap", DIFFERS if found else CONSISTENT, words,
+        floor = check("overlap", pair, f"{charge}+ overlap", DIFFERS if found else CONSISTENT, words,
             value=f.value, sd=f.sd, expected_lo=0.0, expected_hi=0.0,
         )  # fmt: skip
     return [curve, floor]

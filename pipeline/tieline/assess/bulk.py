@@ -1,0 +1,103 @@
+"""Bulk partition coefficients of a crystal assemblage from the D's of its phases and their proportions."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from tieline.statistics.least_squares import FloatArray
+from tieline.statistics.mass_balance import weighted_sum
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+BULK_COLUMNS = (
+    "experiment",
+    "beta",
+    "element",
+    "bulk_D",
+    "bulk_D_sd",
+    "bulk_D_lo",
+    "bulk_D_hi",
+    "kind",
+    "reason",
+)
+
+
+def bulk_partition(
+    partition: pd.DataFrame,
+    modes: Mapping[str, tuple[tuple[str, ...], FloatArray, FloatArray]],
+    beta: str,
+    beta_relative_sd: Mapping[tuple[str, str], float] | None = None,
+    quantile: float = 1.96,
+) -> pd.DataFrame:
+    """Bulk D = sum X D / sum X over the crystals of each experiment and element, X by mass.
+
+    partition: columns as in the stage file. modes: experiment -> phases, their proportions (k,) and covariance (k, k), beta
+    left aside where it is among them. beta_relative_sd: (experiment, element) -> relative standard deviation of beta's mean,
+    which all D's over it share; without it the D's are taken as independent and the error of the bulk D is too small.
+
+    `kind` is value; bounds where a phase's D is a limit, its interval then running from none of it to its limit; or
+    undetermined, with the reason, where a phase that is present has no D.
+    """
+    import pandas as pd
+
+    rows: list[dict[str, Any]] = []
+    over = partition[partition["beta"] == beta]
+    for (experiment, element), group in over.groupby(["experiment", "element"], sort=True, observed=True):
+        if experiment not in modes:
+            continue
+        names, proportions, covariance = modes[experiment]
+        crystals = [index for index, name in enumerate(names) if name != beta and proportions[index] > 0]
+        keys = {"experiment": experiment, "beta": beta, "element": element}
+        shared = (beta_relative_sd or {}).get((str(experiment), str(element)), 0.0)
+        found = _bulk(
+            group.set_index("alpha"), [names[index] for index in crystals], np.asarray(proportions)[crystals],
+            np.asarray(covariance)[np.ix_(crystals, crystals)], shared, quantile,
+        )  # fmt: skip
+        rows.append(keys | found)
+    return pd.DataFrame(rows, columns=list(BULK_COLUMNS))
+
+
+def _bulk(
+    group: pd.DataFrame,
+    phases: list[str],
+    weights: FloatArray,
+    covariance: FloatArray,
+    shared: float,
+    quantile: float,
+) -> dict[str, Any]:
+    if not phases:
+        return _nothing("no crystals")
+    absent = [phase for phase in phases if phase not in group.index]
+    if absent:
+        return _nothing(f"no D for {', '.join(absent)}")
+    rows = group.loc[phases]
+    if not rows["kind"].isin(["value", "upper-limit"]).all():
+        bad = rows[~rows["kind"].isin(["value", "upper-limit"])]
+        return _nothing("; ".join(f"D of {phase} is {kind}" for phase, kind in bad["kind"].items()))
+    limits = (rows["kind"] == "upper-limit").to_numpy()
+    D = np.where(limits, 0.0, rows["D"].to_numpy(dtype=np.float64))
+    sd = np.where(limits, 0.0, rows["D_sd"].to_numpy(dtype=np.float64))
+    variances = np.outer(D, D) * shared**2
+    np.fill_diagonal(variances, np.maximum(sd**2, np.diag(variances)))
+    mean, error = weighted_sum(weights, covariance, D, variances)
+    if not limits.any():
+        return {
+            "bulk_D": mean, "bulk_D_sd": error, "bulk_D_lo": max(mean - quantile * error, 0.0),
+            "bulk_D_hi": mean + quantile * error, "kind": "value", "reason": "",
+        }  # fmt: skip
+    most = np.where(limits, rows["D_hi"].to_numpy(dtype=np.float64), D)
+    highest, highest_error = weighted_sum(weights, covariance, most, variances)
+    return {
+        "bulk_D": np.nan, "bulk_D_sd": np.nan, "bulk_D_lo": max(mean - quantile * error, 0.0),
+        "bulk_D_hi": highest + quantile * highest_error, "kind": "bounds",
+        "reason": f"D of {', '.join(np.array(phases)[limits])} is a limit",
+    }  # fmt: skip
+
+
+def _nothing(reason: str) -> dict[str, Any]:
+    blank = dict.fromkeys(("bulk_D", "bulk_D_sd", "bulk_D_lo", "bulk_D_hi"), np.nan)
+    return {**blank, "kind": "undetermined", "reason": reason}

@@ -1,0 +1,232 @@
+"""Mass balance of an experiment: proportions of its phases, what is missing or lost, and bulk partition coefficients."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, EXCESS, base_phase, check
+from tieline.chemistry.oxides import wt_percent_per_ppm
+from tieline.statistics.least_squares import FloatArray
+from tieline.statistics.mass_balance import FITTED, Mixture, Shortfall, mix, shortfall
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+LOSABLE = ("Fe", "Na", "K")
+"""Elements lost to the capsule or under the beam: judged against the balance of the others, not fitted."""
+LARGEST_SQUARES = 1.0
+"""wt%², sum of squared residuals of oxides still called acceptable (common practice, from memory)."""
+_STANDS_OUT = 3.0
+
+
+@dataclass(frozen=True)
+class BalanceTables:
+    """proportions: experiment x phase; residuals: experiment x element, oxide wt%; checks: rows of `assess`."""
+
+    proportions: pd.DataFrame
+    residuals: pd.DataFrame
+    checks: pd.DataFrame
+    mixtures: dict[str, tuple[tuple[str, ...], Mixture]]
+
+
+@dataclass(frozen=True)
+class _Balance:
+    """Oxide wt% of one experiment: start (m,), phases (m, k), with errors; why elements could not be used."""
+
+    elements: tuple[str, ...]
+    phases: tuple[str, ...]
+    start: FloatArray
+    start_sd: FloatArray
+    composition: FloatArray
+    composition_sd: FloatArray
+    unusable: dict[str, str]
+
+
+def mass_balance_tables(
+    pair: pd.DataFrame,
+    starting: pd.DataFrame,
+    *,
+    losable: Sequence[str] = LOSABLE,
+    relative_sd: float = 0.0,
+    sum_to_one: bool = False,
+    largest_squares: float = LARGEST_SQUARES,
+    confidence: float = 0.95,
+) -> BalanceTables:
+    """Balance every experiment that has a starting composition.
+
+    pair: columns experiment, phase, element, mean_ppm, se_ppm as in the stage file; zones of a phase (`olivine (rim)`) are
+    left aside, and of several means of one element the most precise is taken. starting: experiment, element, value_ppm,
+    sd_ppm. relative_sd: calibration uncertainty added to the phases' errors. losable: elements kept out of the fit and judged
+    by what the others leave for them.
+    """
+    import pandas as pd
+
+    proportions: list[dict[str, Any]] = []
+    residuals: list[dict[str, Any]] = []
+    checks: list[dict[str, Any]] = []
+    mixtures: dict[str, tuple[tuple[str, ...], Mixture]] = {}
+    for experiment, given in starting.groupby("experiment", sort=True, observed=True):
+        own = pair[(pair["experiment"] == experiment) & (pair["phase"].map(base_phase) == pair["phase"])]
+        balance = _collect(own, given, relative_sd)
+        kept = np.array([element not in losable for element in balance.elements], dtype=bool)
+        mixture = mix(
+            balance.start[kept], balance.start_sd[kept], balance.composition[kept], balance.composition_sd[kept],
+            sum_to_one=sum_to_one, confidence=confidence,
+        )  # fmt: skip
+        mixtures[experiment] = (balance.phases, mixture)
+        lost = shortfall(
+            mixture, balance.start[~kept], balance.start_sd[~kept],
+            balance.composition[~kept], balance.composition_sd[~kept],
+        )  # fmt: skip
+        proportions += _proportion_rows(experiment, balance.phases, mixture)
+        residuals += _residual_rows(experiment, balance, kept, mixture, lost)
+        checks += _checks(experiment, balance, kept, mixture, lost, largest_squares)
+    return BalanceTables(
+        pd.DataFrame(proportions, columns=list(PROPORTION_COLUMNS)),
+        pd.DataFrame(residuals, columns=list(RESIDUAL_COLUMNS)),
+        pd.DataFrame(checks, columns=list(CHECK_COLUMNS)),
+        mixtures,
+    )
+
+
+PROPORTION_COLUMNS = (
+    "experiment", "phase", "proportion", "proportion_sd", "proportion_lo", "proportion_hi", "unweighted",
+)  # fmt: skip
+RESIDUAL_COLUMNS = (
+    "experiment", "element", "use", "start_wt", "start_sd_wt", "phases_wt", "residual_wt", "sigmas",
+    "loss", "loss_sd", "loss_lo", "loss_hi", "loss_p",
+)  # fmt: skip
+
+
+def _collect(own: pd.DataFrame, given: pd.DataFrame, relative_sd: float) -> _Balance:
+    """Elements measured, with errors, in the start and in every phase."""
+    best = own.assign(relative=own["se_ppm"] / own["mean_ppm"].abs()).sort_values("relative", kind="stable")
+    best = best.drop_duplicates(["phase", "element"])
+    means = best.pivot(index="element", columns="phase", values="mean_ppm").sort_index(axis=1)
+    errors = best.pivot(index="element", columns="phase", values="se_ppm").sort_index(axis=1)
+    start = given.set_index("element")
+    unusable: dict[str, str] = {}
+    elements: list[str] = []
+    for element in sorted(start.index):
+        if element not in means.index or means.loc[element].isna().any():
+            missing = [
+                phase
+                for phase in means.columns
+                if element not in means.index or np.isnan(means.loc[element, phase])
+            ]
+            unusable[element] = f"not measured in {', '.join(missing) or 'any phase'}"
+        elif errors.loc[element].isna().any() and relative_sd == 0:
+            unusable[element] = "a mean has no standard error"
+        elif not start.loc[element, "sd_ppm"] >= 0:
+            unusable[element] = "the starting composition has no error"
+        else:
+            elements.append(element)
+    factor = wt_percent_per_ppm(elements)[:, None]
+    composition = means.loc[elements].to_numpy(dtype=np.float64) * factor
+    errors_wt = np.nan_to_num(errors.loc[elements].to_numpy(dtype=np.float64)) * factor
+    begin = start.loc[elements, ["value_ppm", "sd_ppm"]].to_numpy(dtype=np.float64) * factor
+    composition_sd = np.hypot(errors_wt, relative_sd * composition)
+    certain = (begin[:, 1] == 0) & np.all(composition_sd == 0, axis=1)
+    unusable |= {
+        element: "no error anywhere" for element, sure in zip(elements, certain, strict=True) if sure
+    }
+    kept = ~certain
+    return _Balance(
+        tuple(element for element, keep in zip(elements, kept, strict=True) if keep), tuple(means.columns),
+        begin[kept, 0], begin[kept, 1], composition[kept], composition_sd[kept], unusable,
+    )  # fmt: skip
+
+
+def _proportion_rows(experiment: str, phases: tuple[str, ...], mixture: Mixture) -> list[dict[str, Any]]:
+    columns = (mixture.proportions, mixture.sd, mixture.low, mixture.high, mixture.unweighted)
+    return [
+        dict(zip(PROPORTION_COLUMNS, (experiment, phase, *(float(one[index]) for one in columns)), strict=True))
+        for index, phase in enumerate(phases)
+    ]  # fmt: skip
+
+
+def _residual_rows(
+    experiment: str, balance: _Balance, kept: np.ndarray, mixture: Mixture, lost: Shortfall
+) -> list[dict[str, Any]]:
+    rows = []
+    fitted, left = iter(range(int(kept.sum()))), iter(range(int((~kept).sum())))
+    for index, element in enumerate(balance.elements):
+        held = float(balance.composition[index] @ mixture.proportions)
+        row: dict[str, Any] = {
+            "experiment": experiment, "element": element, "use": bool(kept[index]),
+            "start_wt": balance.start[index], "start_sd_wt": balance.start_sd[index], "phases_wt": held,
+            "residual_wt": balance.start[index] - held,
+        }  # fmt: skip
+        if kept[index]:
+            row["sigmas"] = mixture.sigmas[next(fitted)]
+        else:
+            place = next(left)
+            row |= {
+                "loss": lost.loss[place], "loss_sd": lost.sd[place], "loss_lo": lost.low[place],
+                "loss_hi": lost.high[place], "loss_p": lost.p_value[place],
+            }  # fmt: skip
+        rows.append(row)
+    return rows
+
+
+def _checks(
+    experiment: str, balance: _Balance, kept: np.ndarray, mixture: Mixture, lost: Shortfall, largest: float
+) -> list[dict[str, Any]]:
+    """The fit as a whole, the older yardstick, and every loss."""
+    keys = {"experiment": experiment}
+    unusable = "".join(f" {element} not used: {why}." for element, why in balance.unusable.items())
+    if mixture.verdict != FITTED:
+        words = f"No mass balance: {mixture.reason}.{unusable}"
+        return [check("mass-balance", keys, "phase proportions", CANNOT_TELL, words)]
+    names = np.array(balance.elements)[kept]
+    parts = ", ".join(
+        f"{phase} {x:.3f} ({low:.3f} to {high:.3f})"
+        for phase, x, low, high in zip(
+            balance.phases, mixture.proportions, mixture.low, mixture.high, strict=True
+        )
+    )
+    more = [f"{e} {s:+.1f}" for e, s in zip(names, mixture.sigmas, strict=True) if s > _STANDS_OUT]
+    less = [f"{e} {s:+.1f}" for e, s in zip(names, mixture.sigmas, strict=True) if s < -_STANDS_OUT]
+    pattern = f" Phases rich in {', '.join(more)} (sigmas) may be missing." if more else ""
+    pattern += f" The phases hold too much {', '.join(less)} (sigmas)." if less else ""
+    words = f"Proportions of the starting mass: {parts}; sum {mixture.total:.3f} ± {mixture.total_sd:.3f}.{pattern}{unusable}"
+    rows = [_fit_check(keys, mixture, words)]
+    rows.append(
+        check(
+            "mass-balance", keys, "sum of squared residuals, wt%²",
+            CONSISTENT if mixture.squares <= largest else DIFFERS,
+            f"Unweighted fit of {', '.join(names)} as oxides; {largest:g} is common practice, not a test.",
+            value=mixture.squares, expected_lo=0.0, expected_hi=largest,
+        )
+    )  # fmt: skip
+    for element, loss, sd, low, high, p_value in zip(
+        np.array(balance.elements)[~kept], lost.loss, lost.sd, lost.low, lost.high, lost.p_value, strict=True
+    ):
+        if not np.isfinite(p_value):
+            continue
+        gone = "lost" if loss > 0 else "gained"
+        rows.append(
+            check(
+                "mass-balance", keys, f"{element} loss", DIFFERS if p_value < EXCESS else CONSISTENT,
+                f"{element} {gone} {abs(loss):.1%} of the start ({low:.1%} to {high:.1%}), p {p_value:.2g}; not fitted.",
+                value=float(loss), sd=float(sd), expected_lo=0.0, expected_hi=0.0,
+            )
+        )  # fmt: skip
+    return rows
+
+
+def _fit_check(keys: dict[str, Any], mixture: Mixture, words: str) -> dict[str, Any]:
+    from scipy.special import chdtri
+
+    subject = "chi-square over degrees of freedom"
+    if mixture.dof <= 0:
+        return check("mass-balance", keys, subject, CANNOT_TELL, f"As many proportions as elements. {words}")
+    return check(
+        "mass-balance", keys, subject, DIFFERS if mixture.p_value < EXCESS else CONSISTENT,
+        f"p {mixture.p_value:.2g}. {words}", value=mixture.chi_square / mixture.dof, expected_lo=0.0,
+        expected_hi=float(chdtri(mixture.dof, EXCESS)) / mixture.dof,
+    )  # fmt: skip
