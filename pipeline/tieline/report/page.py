@@ -54,7 +54,7 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         script_digest=base64.b64encode(hashlib.sha256(script.encode()).digest()).decode(),
         data=Markup(script_json(data)),
         title=source.title,
-        stamp=stamp(source),
+        stamp=stamp(source.records, source.settings),
         version=source.version,
         fingerprint=source.fingerprint,
         level=percent(source.confidence),

@@ -76,13 +76,14 @@ def read_source(session: Session) -> Source:
 
 def read_finished(session: Session) -> Source:
     """As `read_source`, for a run folder that is known to be current."""
-    records: dict[str, Mapping[str, Any]] = {}
-    tables: dict[str, pa.Table] = {}
-    for stage in STAGES:
-        records[stage.name] = read_records(session.run_folder, stage)[stage.outputs[0]] or {}
-        for name in stage.outputs:
-            tables[name] = read_table(table_path(session.run_folder, name), name)
-    return Source(tables, records, session.settings, _filed_rulings(session))
+    names = [name for stage in STAGES for name in stage.outputs]
+    tables = {name: read_table(table_path(session.run_folder, name), name) for name in names}
+    return Source(tables, finished_records(session), session.settings, _filed_rulings(session))
+
+
+def finished_records(session: Session) -> dict[str, Mapping[str, Any]]:
+    """What every stage's main file records of itself, by stage name."""
+    return {stage.name: read_records(session.run_folder, stage)[stage.outputs[0]] or {} for stage in STAGES}
 
 
 def optional_table(source: Source, name: str) -> pa.Table | None:
@@ -91,13 +92,13 @@ def optional_table(source: Source, name: str) -> pa.Table | None:
     return table if name in TABLES and table is not None and table.num_rows else None
 
 
-def stamp(source: Source) -> str:
+def stamp(records: Mapping[str, Mapping[str, Any]], settings: SessionSettings) -> str:
     """A digest of all that a report is made from; it stands in the page, and tells whether the page is current."""
-    parts = {name: record["fingerprint"] for name, record in source.records.items()}
+    parts = {name: record["fingerprint"] for name, record in records.items()}
     made_from = {
         "version": __version__,
         "stages": parts,
-        "report": source.settings.report.model_dump(mode="json"),
+        "report": settings.report.model_dump(mode="json"),
     }
     return f"report-{bytes_digest(json_text(made_from).encode())}"
 

@@ -24,7 +24,7 @@ from tieline.report.sheets import (
     runs_sheet,
     settings_sheet,
 )
-from tieline.report.source import Source, read_finished, read_source, stamp
+from tieline.report.source import Source, finished_records, read_finished, read_source, stamp
 from tieline.report.spots import SpotUse, spot_use
 from tieline.report.values_sheet import spots_sheet
 from tieline.report.workbook import workbook_bytes
@@ -64,11 +64,11 @@ def write_report(session: Session, figures: Path | None = None) -> list[Path]:
 
 def refresh_report(session: Session) -> None:
     """Right after a run: writes the report unless the one in the run folder is of the same tables."""
-    source = read_finished(session)
     page_path = session.run_folder / "report.html"
     missing = [name for name in FILES if not (session.run_folder / name).exists()]
-    if missing or not _holds(page_path, stamp(source)):
-        _write(session, {session.run_folder / name: data for name, data in report_files(source).items()})
+    if missing or not _holds(page_path, stamp(finished_records(session), session.settings)):
+        files = report_files(read_finished(session))
+        _write(session, {session.run_folder / name: data for name, data in files.items()})
 
 
 def _holds(path: Path, text: str) -> bool:
