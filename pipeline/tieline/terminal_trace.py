@@ -127,7 +127,8 @@ def _add_phase(tree: Tree, side: str, phase: Row, told: set[str]) -> None:
 
 def _add_mean(branch: Tree, mean: Row, told: set[str]) -> None:
     names = {"mean_ppm": "m", "se_ppm": "se", "counting_se_ppm": "counting se", "dof": "dof", "n": "n"}
-    node = _branch(branch, f"mean ({mean['estimator']}), ppm: {_pairs(mean, names)}")
+    numbers = _pairs(mean, names)
+    node = _branch(branch, f"mean ({mean['estimator']})" + (f", ppm: {numbers}" if numbers else ""))
     steps = {
         "tau_ppm": "τ", "sum_p2_v": "Σp²v", "sum_p_d2": "Σp(x − m)²", "sum_p_1p_v": "Σp(1 − p)v",
         "sum_p2_counting": "Σp²σ²", "sigma_slope_per_ppm": "k", "scale_ppm": "scale", "constant": "c",

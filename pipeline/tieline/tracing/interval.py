@@ -24,7 +24,7 @@ FIELLER = "ends: roots D of (b² − q²·V_b) D² − 2 a b D + (a² − q²·V
 UNSHARED = "u: √(calibration² + matrix² + internal standard²) of a mean, as far as they do not cancel"
 DOF = (
     "1/dof = Σ rᵢ^x / dofᵢ, r: share of each mean in (b²·se_a² + a²·se_b² + (a b)²(u_a² + u_b²)), "
-    "x = 1 + (smaller dof / larger dof)(1 − r_u)²"
+    "x = 1 + (smaller dof / larger dof)(1 − r_u)⁴ − ½ r_u (1 − r_u)"
 )
 DRAWS = (
     "ends: quantiles of the ratio of mean + se·t(dof), t drawn at 8192 fixed points, both means positive; "
@@ -40,12 +40,21 @@ LIMITS = (
 )
 
 
+PROBABILITIES = {
+    "gum-s1": ["P(D > B): share of the same draws, or by counting, the one nearer to ½"],
+    "likelihood": [
+        "P(D > B): normal probability of z(D − B)/(distance of D to its end on B's side); "
+        "upper limit: −z·B/D_hi; lower limit: z·D_lo/B"
+    ],
+}
+
+
 def interval_account(
-    row: Row, pair_rows: Mapping[str, Row], limits: pa.Table, settings: SessionSettings
+    row: Row, pair_rows: Mapping[str, Row], limits: Mapping[str, pa.Table]
 ) -> dict[str, Any]:
     """How the ends of D came about. row: of `classify`; pair_rows: of `pair` for alpha and beta.
 
-    limits: the rows of `pair.limits`, empty where no mean holds a limit.
+    limits: their rows of `pair.limits`, empty where a mean holds no limit.
     """
     account: dict[str, Any] = {
         "method": row["interval"],
@@ -60,7 +69,7 @@ def interval_account(
     account["z"] = z
     if row["interval"] == "likelihood":
         for side in SIDES:
-            account[f"limits_{side}"] = _limits(pair_rows[side], limits, row["confidence"])
+            account[f"limits_{side}"] = _limits(pair_rows[side], limits[side], row["confidence"])
         return account | {"how": [UNSHARED, LIMITS, MOVER]}
     if row["interval"] not in ("fieller", "gum-s1"):
         return account | {"how": ["no interval"]}
@@ -109,7 +118,7 @@ def _dof_parts(row: Row) -> dict[str, Any]:
         "r_alpha": shares["alpha"],
         "r_beta": shares["beta"],
         "r_u": shares["u"],
-        "exponent": 1.0 + q * (1.0 - shares["u"]) ** 2,
+        "exponent": 1.0 + q * (1.0 - shares["u"]) ** 4 - 0.5 * shares["u"] * (1.0 - shares["u"]),
         "dof_alpha": dofs[0],
         "dof_beta": dofs[1],
     }
@@ -162,6 +171,7 @@ def class_account(row: Row, interval: Mapping[str, Any], settings: SessionSettin
         ],
     }
     if interval["method"] != "fieller":
+        account["how"] += PROBABILITIES.get(interval["method"], [])
         return account
     account["how"].append(
         "P(D > B): t or normal probability of (a − B b) / √(V_a + B² V_b), the one nearer to ½"

@@ -48,8 +48,8 @@ def trace(source: Source, experiment: str, alpha: str, beta: str, element: str) 
     }
     same_batch = groups["alpha"]["batch"] == groups["beta"]["batch"]
     pair_rows = {side: _rows(source.tables["pair"], groups[side])[0] for side in sides}
-    limits = _rows_table(source.tables["pair.limits"], groups)
-    interval = interval_account(row, pair_rows, limits, source.settings)
+    limits = {side: _limit_rows(source.tables["pair.limits"], groups[side]) for side in sides}
+    interval = interval_account(row, pair_rows, limits)
     phases = {side: _phase(source, groups[side], pair_rows[side], same_batch) for side in sides}
     return {
         **{name: row[name] for name in KEYS},
@@ -88,14 +88,10 @@ def _chosen(table: pa.Table, where: Row) -> BoolArray:
     return chosen
 
 
-def _rows_table(limits: pa.Table, groups: Mapping[str, Row]) -> pa.Table:
-    """The rows of `pair.limits` that belong to the numerator's mean, or else to the denominator's."""
+def _limit_rows(limits: pa.Table, key: Row) -> pa.Table:
+    """The rows of `pair.limits` that belong to one mean."""
     names = ("experiment", "phase", "element", "batch", "analyte")
-    parts = [
-        limits.filter(pa.array(_chosen(limits, {name: key[name] for name in names})))
-        for key in groups.values()
-    ]
-    return parts[0] if parts[0].num_rows else parts[1]
+    return limits.filter(pa.array(_chosen(limits, {name: key[name] for name in names})))
 
 
 def _result(row: Row) -> dict[str, Any]:

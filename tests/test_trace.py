@@ -1,0 +1,344 @@
+"""Every number on the page of a D can be recomputed from the page's own numbers, by formulas written out here."""
+
+from __future__ import annotations
+
+import io
+import json
+import math
+import re
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from scipy import optimize, special
+from typer.testing import CliRunner
+
+from sessions import demo_copy
+from test_audit import short_session
+from tieline import runner
+from tieline.cli import app
+from tieline.configuration import load
+from tieline.errors import InputError
+from tieline.terminal_trace import trace_tree
+from tieline.tracing.page import Source, trace
+
+Page = dict[str, Any]
+RTOL = 1e-9
+
+
+def source_of(config: Path, overrides: Sequence[str] = ()) -> Source:
+    session = load(config, overrides=overrides)
+    runner.run(session)
+    session, tables, files = runner.finished(session, "classify")
+    return Source(tables, session.settings, files)
+
+
+@pytest.fixture(scope="module")
+def source(tmp_path_factory: pytest.TempPathFactory) -> Source:
+    return source_of(short_session(tmp_path_factory.mktemp("trace")))
+
+
+def pages(source: Source, step: int = 1, **where: str) -> Iterator[Page]:
+    rows = source.tables["classify"].to_pylist()
+    for row in [row for row in rows if all(row[name] == text for name, text in where.items())][::step]:
+        yield trace(source, row["experiment"], row["alpha"], row["beta"], row["element"])
+
+
+def phases(page: Page) -> Iterator[Page]:
+    yield page["alpha_phase"]
+    yield page["beta_phase"]
+
+
+def column(spots: Sequence[Page], name: str) -> np.ndarray:
+    return np.array([spot[name] for spot in spots], dtype=np.float64)
+
+
+def number(cell: Page | None) -> float:
+    assert cell is not None
+    return float(cell["raw"])
+
+
+def check_random_effects(mean: Page, x: np.ndarray, sigma: np.ndarray) -> None:
+    """The mean from the values and the sigmas used, tau solved for here."""
+    n = len(x)
+
+    def excess(tau2: float) -> float:
+        w = 1 / (sigma**2 + tau2)
+        return float(np.sum(w * (x - np.sum(w * x) / np.sum(w)) ** 2) - (n - 1))
+
+    tau2 = (
+        0.0
+        if excess(0.0) <= 0
+        else optimize.brentq(excess, 0.0, 1e3 * np.var(x) + 1e-30, xtol=1e-18, rtol=1e-14)
+    )
+    np.testing.assert_allclose(mean["tau_ppm"], math.sqrt(tau2), rtol=1e-6, atol=1e-9 * np.std(x))
+    w = 1 / (sigma**2 + max(tau2, 4 * np.mean(sigma**2) / (n - 1)))
+    p, v = w / w.sum(), sigma**2 + tau2
+    m = np.sum(p * x)
+    np.testing.assert_allclose(mean["weights"], p, rtol=1e-6)
+    np.testing.assert_allclose(mean["mean_ppm"], m, rtol=1e-8)
+    se2 = np.sum(p**2 * v) * np.sum(p * (x - m) ** 2) / np.sum(p * (1 - p) * v)
+    np.testing.assert_allclose(mean["se_ppm"], math.sqrt(se2), rtol=1e-6)
+    np.testing.assert_allclose(mean["counting_se_ppm"], math.sqrt(np.sum(p**2 * sigma**2)), rtol=1e-6)
+    assert mean["dof"] == n - 1
+    w0 = 1 / sigma**2
+    mswd = np.sum((x - np.sum(w0 * x) / w0.sum()) ** 2 / sigma**2) / (n - 1)
+    np.testing.assert_allclose(mean["mswd"], mswd, rtol=1e-8)
+
+
+def check_phase(phase: Page) -> None:
+    assert phase["mean"]["agrees"]
+    units, standard = phase["units"], phase["internal_standard"]
+    factor = units["ppm_per_unit"] * units["element_fraction"] * (standard["factor"] if standard else 1.0)
+    for spot in [*phase["spots_used"], *phase["spots_left_out"]]:
+        if spot["value_ppm"] is None:
+            limit = number(spot["cells"]["limit"]) * factor / spot.get("calibration_factor", 1.0)
+            np.testing.assert_allclose(spot["limit_ppm"], limit, rtol=RTOL)
+            continue
+        own = factor * spot.get("other_factor", 1.0) / spot.get("calibration_factor", 1.0)
+        np.testing.assert_allclose(spot["value_ppm"], number(spot["cells"]["value"]) * own, rtol=RTOL)
+        sigma = number(spot["cells"]["sigma"]) / units["sigma"]["divided_by"]
+        np.testing.assert_allclose(spot["sigma_ppm"], sigma * own, rtol=RTOL)
+    mean = phase["mean"]
+    if mean["estimator"] != "random-effects" or len(phase["spots_used"]) < 2:
+        return
+    x, sigma = (column(phase["spots_used"], name) for name in ("value_ppm", "sigma_ppm"))
+    k = mean["sigma_slope_per_ppm"]
+    used = sigma if k is None else sigma / np.sqrt(np.maximum(1 + k * (x - x.mean()), 0.1))
+    np.testing.assert_allclose(column(phase["spots_used"], "sigma_used_ppm"), used, rtol=1e-7)
+    weights = column(phase["spots_used"], "weight")
+    check_random_effects(mean | {"weights": weights}, x, used)
+
+
+def check_standard(standard: Page | None) -> None:
+    if standard is None:
+        return
+    x = np.array([float(spot["raw"]) for spot in standard["spots"]]) * standard["ppm_per_unit"]
+    m, scale, n = standard["mean"]["mean_ppm"], standard["mean"]["scale_ppm"], len(x)
+    drawn_in = np.clip(x, m - 1.5 * scale, m + 1.5 * scale)
+    np.testing.assert_allclose(drawn_in.mean(), m, rtol=1e-9)
+    np.testing.assert_allclose(np.sum((drawn_in - m) ** 2) / (n - 1) / 0.778465, scale**2, rtol=1e-5)
+    np.testing.assert_allclose(
+        math.sqrt(standard["mean"]["constant"] / n) * scale, standard["actual_sd_ppm"], rtol=1e-9
+    )
+    np.testing.assert_allclose(standard["factor"], m / standard["assumed_ppm"], rtol=RTOL)
+    np.testing.assert_allclose(standard["relative_sd"], standard["actual_sd_ppm"] / m, rtol=RTOL)
+
+
+def check_calibration(calibration: Page) -> None:
+    for one in calibration["materials"]:
+        x, sigma = column(one["spots"], "value_ppm"), column(one["spots"], "sigma_ppm")
+        check_random_effects(one["mean"], x, sigma)
+        np.testing.assert_allclose(one["mean"]["mean_ppm"], one["measured_ppm"], rtol=RTOL)
+        ratio = one["measured_ppm"] / one["accepted_ppm"]
+        np.testing.assert_allclose(one["ratio"], ratio, rtol=RTOL)
+        own = math.hypot(
+            one["measured_se_ppm"] / one["accepted_ppm"], ratio * one["accepted_sd_ppm"] / one["accepted_ppm"]
+        )
+        np.testing.assert_allclose(one["ratio_se"], own, rtol=RTOL)
+    if calibration["bias"] is not None and len(calibration["materials"]) == 1:
+        np.testing.assert_allclose(calibration["bias"], calibration["materials"][0]["ratio"], rtol=RTOL)
+    if calibration["bias"] is not None and calibration["factor"] == 1.0:
+        relative = math.hypot(calibration["bias"] - 1, calibration["bias_se"])
+        np.testing.assert_allclose(calibration["relative_sd"], relative, rtol=RTOL)
+
+
+def check_result(page: Page) -> None:
+    result, interval = page["result"], page["interval"]
+    a, b = (phase["mean"]["mean_ppm"] for phase in phases(page))
+    if result["D"] is not None and a is not None and b is not None:
+        np.testing.assert_allclose(result["D"], a / b, rtol=RTOL)
+    if interval["method"] != "fieller":
+        return
+    budget = {line["source"]: line for line in page["budget"]}
+    for side, phase in zip(("alpha", "beta"), phases(page), strict=True):
+        mean = phase["mean"]
+        counting = min(mean["counting_se_ppm"], mean["se_ppm"])
+        np.testing.assert_allclose(budget["counting"][side], counting / mean["mean_ppm"], rtol=RTOL)
+        spread = math.sqrt(max(mean["se_ppm"] ** 2 - counting**2, 0.0)) / mean["mean_ppm"]
+        np.testing.assert_allclose(budget["spread"][side], spread, rtol=1e-6, atol=1e-12)
+        u2 = sum(
+            (line[side] or 0.0) ** 2
+            for name, line in budget.items()
+            if name in ("calibration", "matrix", "internal standard") and not line["cancels"]
+        )
+        np.testing.assert_allclose(interval[f"u_{side}"], math.sqrt(u2), rtol=RTOL)
+        np.testing.assert_allclose(
+            interval[f"V_{side}"], mean["se_ppm"] ** 2 + u2 * mean["mean_ppm"] ** 2, rtol=RTOL
+        )
+    total = sum(line["squared"] for line in page["budget"])
+    if result["D_sd"] is not None:
+        np.testing.assert_allclose(result["D_sd"], result["D"] * math.sqrt(total), rtol=RTOL)
+        for line in page["budget"]:
+            np.testing.assert_allclose(line["share"], line["squared"] / total, rtol=RTOL)
+        check_ends(page, a, b)
+
+
+def roots(a: float, b: float, v_a: float, v_b: float, q: float) -> np.ndarray:
+    return np.sort(np.roots([b**2 - q**2 * v_b, -2 * a * b, a**2 - q**2 * v_a]).real)
+
+
+def check_ends(page: Page, a: float, b: float) -> None:
+    interval, result = page["interval"], page["result"]
+    r = {name: interval[f"r_{name}"] for name in ("alpha", "beta", "u")}
+    np.testing.assert_allclose(sum(r.values()), 1.0, rtol=RTOL)
+    dofs = interval["dof_alpha"], interval["dof_beta"]
+    x = 1 + min(dofs) / max(dofs) * (1 - r["u"]) ** 4 - r["u"] * (1 - r["u"]) / 2
+    np.testing.assert_allclose(interval["exponent"], x, rtol=RTOL)
+    dof = 1 / (r["alpha"] ** x / dofs[0] + r["beta"] ** x / dofs[1])
+    np.testing.assert_allclose(interval["dof"], dof, rtol=1e-8)
+    t = special.stdtrit(dof, 0.5 + result["confidence"] / 2)
+    np.testing.assert_allclose(interval["t"], t, rtol=1e-8)
+    scatter = roots(a, b, interval["V_alpha"], interval["V_beta"], t)
+    counting = roots(a, b, interval["V_alpha_counting"], interval["V_beta_counting"], interval["z"])
+    np.testing.assert_allclose(result["D_lo"], min(scatter[0], counting[0]), rtol=1e-7)
+    np.testing.assert_allclose(result["D_hi"], max(scatter[1], counting[1]), rtol=1e-7)
+    classification = page["classification"]
+    for one, name in zip(classification["boundaries"], ("highly", "compatible"), strict=True):
+        B = one["value"]
+        pivot = (a - B * b) / math.sqrt(interval["V_alpha"] + B**2 * interval["V_beta"])
+        p = special.stdtr(dof, pivot)
+        floor = special.ndtr(
+            (a - B * b) / math.sqrt(interval["V_alpha_counting"] + B**2 * interval["V_beta_counting"])
+        )
+        above = min(p, floor) if a > B * b else max(p, floor)
+        shown = (
+            1 - classification["p_highly_incompatible"]
+            if name == "highly"
+            else classification["p_compatible"]
+        )
+        np.testing.assert_allclose(shown, above, rtol=1e-8, atol=1e-12)
+
+
+def test_every_page_of_a_session_is_recomputed(source: Source):
+    methods = set()
+    for page in pages(source, step=7):
+        methods.add(page["interval"]["method"])
+        for phase in phases(page):
+            check_phase(phase)
+            check_standard(phase["internal_standard"])
+            check_calibration(phase["calibration"])
+        check_result(page)
+    assert {"fieller", "likelihood"} <= methods
+
+
+def test_limits_of_a_censored_mean_give_the_interval(source: Source):
+    """MOVER-R written out; the limits of the means themselves come from the likelihood."""
+    checked = 0
+    for page in pages(source, interval="likelihood", kind="upper-limit"):
+        interval, result = page["interval"], page["result"]
+        a, b = (interval[f"limits_{side}"] for side in ("alpha", "beta"))
+        u = interval["z"] * math.hypot(interval["u_alpha"], interval["u_beta"])
+        low_b = b["mean_ppm"] - math.hypot(b["mean_ppm"] - b["low_ppm"], u * b["mean_ppm"])
+        # high of a/b is 1 / low of b/a
+        numerator = low_b * (2 * b["mean_ppm"] - low_b)
+        product = a["mean_ppm"] * b["mean_ppm"]
+        inside = product**2 - numerator * a["high_ppm"] * (2 * a["mean_ppm"] - a["high_ppm"])
+        np.testing.assert_allclose(result["D_hi"], (product + math.sqrt(inside)) / numerator, rtol=1e-8)
+        checked += 1
+    assert checked > 3
+
+
+@pytest.mark.parametrize(
+    "overrides",
+    [
+        ["calibrate.correct=bias"],
+        ["calibrate.correct=bias+drift", "calibrate.drift_p=0.9"],
+        ["pair.mean=arithmetic"],
+        ["pair.mean=huber"],
+        ["pair.mean=median"],
+        ["pair.average=grains"],
+        ["partition.interval=gum-s1"],
+        ["calibrate.matrix_sd={laser=0.02}"],
+        ["screen.overlap.use=unmix"],
+    ],
+)
+def test_page_agrees_under_other_settings(tmp_path: Path, overrides: list[str]):
+    source = source_of(short_session(tmp_path), overrides)
+    for page in pages(source, step=29):
+        for phase in phases(page):
+            assert phase["mean"]["agrees"]
+            for unit in (mean := phase["mean"]).get("units") or ():
+                assert unit["sd_ppm"] >= unit["counting_sd_ppm"]
+            if mean.get("units"):
+                grains = column(mean["units"], "mean_ppm")
+                np.testing.assert_allclose(np.sum(mean["weights"] * grains), mean["mean_ppm"], rtol=1e-8)
+            if "average" not in overrides[0] and "unmix" not in overrides[0]:
+                check_phase(phase)
+        if "partition" not in overrides[0]:
+            check_result(page)
+
+
+def test_across_batches_the_calibration_is_followed_to_the_reference_spots(tmp_path: Path):
+    source = source_of(demo_copy(tmp_path))
+    rows = [row for row in source.tables["classify"].to_pylist() if row["batch_alpha"] != row["batch_beta"]]
+    assert rows
+    for row in rows[::20]:
+        page = trace(source, row["experiment"], row["alpha"], row["beta"], row["element"])
+        for phase in phases(page):
+            assert phase["calibration"]["materials"]
+            check_calibration(phase["calibration"])
+        check_result(page)
+
+
+def test_ruling_and_finding_are_told_with_person_date_and_reason(source: Source):
+    page = trace(source, "EM-02", "olivine", "glass", "Ni")
+    (left_out,) = page["alpha_phase"]["spots_left_out"]
+    assert left_out["spot"] == "EM02-ol-L2"
+    (ruling,) = [one for one in left_out["findings"] if one["code"] == "ruling"]
+    assert (ruling["analyst"], ruling["date"]) == ("K.V.", "2026-03-12")
+    assert ruling["reason"] == "too high, by far (see notes)"
+    # Its other values are used: the ruling is on one analyte.
+    other = trace(source, "EM-02", "olivine", "glass", "Co")
+    assert "EM02-ol-L2" in {spot["spot"] for spot in other["alpha_phase"]["spots_used"]}
+
+
+def test_cells_are_those_of_the_file(source: Source):
+    page = trace(source, "EM-02", "olivine", "glass", "Ni")
+    (table,) = {spot["table"] for spot in page["alpha_phase"]["spots_used"]}
+    lines = bytes(source.files[table].data).decode().splitlines()
+    header = lines[0].split(",")
+    for spot in page["alpha_phase"]["spots_used"]:
+        for cell in spot["cells"].values():
+            assert lines[cell["row"] - 1].split(",")[header.index(cell["column"])] == cell["raw"]
+
+
+def test_the_printed_page_holds_the_numbers(source: Source):
+    """D from the printed means, and the mean from the printed weights, to the digits printed."""
+    from rich.console import Console
+
+    page = trace(source, "EM-05", "clinopyroxene", "glass", "Cr")
+    for width in (80, 120):
+        console = Console(width=width, record=True, file=io.StringIO())
+        console.print(trace_tree(page))
+        text = console.export_text()
+        assert max(len(line) for line in text.splitlines()) <= width
+        a, b, D = (float(one) for one in re.search(r"D = (\S+) / (\S+) = (\S+)", text).groups())  # type: ignore[union-attr]
+        assert pytest.approx(a / b, rel=2e-6) == D
+        rows = [line.split() for line in text.splitlines() if re.search(r"EM05-cpx-L\d +\d+ ", line)]
+        used = len(page["alpha_phase"]["spots_used"])
+        start = 1 + rows[0].index(page["alpha_phase"]["spots_used"][0]["spot"])
+        rows = [row[start:] for row in rows[:used]]
+        x = np.array([float(row[3]) for row in rows])
+        p = np.array([float(row[-1]) for row in rows])
+        assert np.sum(p * x) == pytest.approx(a, rel=1e-6)
+
+
+def test_command_and_its_refusals(tmp_path: Path):
+    config = short_session(tmp_path)
+    session = load(config)
+    with pytest.raises(InputError, match="ingest is missing"):
+        runner.finished(session, "classify")
+    runner.run(session)
+    arguments = ["trace", str(config), "EM-02", "olivine/glass", "Ni"]
+    result = CliRunner().invoke(app, [*arguments, "--json"])
+    assert json.loads(result.stdout)["result"]["kind"] == "value"
+    assert "reference materials" in CliRunner().invoke(app, arguments).stdout
+    for wrong, told in ((["EM-2", "olivine/glass", "Ni"], "EM-02"), (["EM-02", "olivine/glass", "Xx"], "Ni")):
+        error = CliRunner().invoke(app, ["trace", str(config), *wrong]).exception
+        assert isinstance(error, InputError)
+        assert told in str(error)
+    with pytest.raises(InputError, match="stale"):
+        runner.finished(load(config, overrides=["partition.confidence=0.9"]), "classify")
