@@ -13,7 +13,8 @@ if TYPE_CHECKING:
 
 app = typer.Typer(
     name="tieline",
-    help="Partition coefficients with honest intervals, from raw microprobe and laser spot tables.",
+    help="Partition coefficients with honest intervals, from raw microprobe and laser spot tables.\n\n"
+    "First steps: tieline demo, then tieline start YOUR-TABLES. All pages of the documentation: tieline help.",
     no_args_is_help=True,
     add_completion=True,
     pretty_exceptions_enable=False,
@@ -38,6 +39,29 @@ SetOption = Annotated[
         help="Try a setting without editing the file, such as screen.total.sigmas=3. Repeatable.",
     ),
 ]
+
+
+def _print_versions(wanted: bool) -> None:
+    if wanted:
+        from tieline.versions import versions
+
+        typer.echo(versions())
+        raise typer.Exit
+
+
+@app.callback()
+def _common(
+    version: Annotated[
+        bool,
+        typer.Option(
+            "--version",
+            is_eager=True,
+            callback=_print_versions,
+            help="Print the versions that results depend on, and stop.",
+        ),
+    ] = False,
+) -> None:
+    pass
 
 
 @app.command()
@@ -77,15 +101,21 @@ def run(
 
 
 def _report_after(session: Session, n_stages: int) -> tuple[str, ...]:
-    """Renews the report after a run through all stages, so that no older one lies beside newer results."""
+    """Renews the report after a run through all stages, so that no older one lies beside newer results.
+
+    After every run the description of the folder is renewed.
+    """
+    from tieline.crate import write_crate
     from tieline.stages import STAGES
 
-    if n_stages < len(STAGES) or not session.settings.report.after_run:
+    complete = n_stages == len(STAGES) and session.settings.report.after_run
+    if not complete:
+        write_crate(session)
         return ()
     from tieline.report.write import FILES, refresh_report
 
     refresh_report(session)
-    return FILES
+    return (*FILES, *write_crate(session))
 
 
 @app.command()
@@ -137,9 +167,12 @@ def report(
 
     Example: tieline report configs/ember.toml --figures figures
     """
+    from tieline.crate import write_crate
     from tieline.report.write import write_report
 
-    written = [str(path) for path in write_report(_load(config, overrides, out), figures)]
+    session = _load(config, overrides, out)
+    paths = write_report(session, figures)
+    written = [str(path) for path in (*paths, *(session.run_folder / name for name in write_crate(session)))]
     if json:
         _print_json({"written": written})
     else:
@@ -149,10 +182,14 @@ def report(
 
 @app.command()
 def start(
-    tables: Annotated[list[Path], typer.Argument(metavar="TABLE...", help="Spot tables, in any accepted format.")],
+    tables: Annotated[
+        list[Path], typer.Argument(metavar="TABLE...", help="Spot tables, in any accepted format.")
+    ],
     to: Annotated[
         Path | None,
-        typer.Option("--to", metavar="FILE", help="Configuration to write; session.toml beside the first table."),
+        typer.Option(
+            "--to", metavar="FILE", help="Configuration to write; session.toml beside the first table."
+        ),
     ] = None,
     json: JsonOption = False,
 ) -> None:
@@ -277,6 +314,27 @@ def compare(
         from tieline.terminal_compare import show_comparison
 
         show_comparison(found)
+
+
+@app.command(name="help")
+def help_(
+    page: Annotated[
+        str | None, typer.Argument(metavar="[PAGE]", help="Name of a page; all names without it.")
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Show a page of the documentation, or list the pages.
+
+    Example: tieline help own-tables
+    """
+    from tieline import help_pages, terminal
+
+    if page is not None:
+        text = help_pages.read_page(page)
+        _print_json({"page": page, "markdown": text}) if json else terminal.show_page(text)
+        return
+    titles = {name: help_pages.title(path) for name, path in help_pages.pages().items()}
+    _print_json(titles) if json else terminal.show_pages(titles)
 
 
 def main() -> None:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -14,6 +14,7 @@ from rich.text import Text
 from tieline import terminal_rulings, terminal_summary
 from tieline.configuration import Session
 from tieline.errors import Problem
+from tieline.help_pages import page_for
 from tieline.lock import SEAL_NAME
 from tieline.manifest import read_manifest
 from tieline.plan import Verdict, table_path
@@ -62,6 +63,32 @@ def show_problems(problems: Sequence[Problem]) -> None:
     console.print(Text(f"{count} problem{'s' if count > 1 else ''}; nothing was written.", style="bold red"))
     for problem in sorted(problems, key=lambda one: (one.file or "", one.row or 0)):
         console.print(Text(f"  {printable(problem)}"))
+    page = page_for(problems)
+    if page is not None:
+        console.print(Text(f"More on this: tieline help {page}", style="dim"))
+
+
+def show_pages(titles: Mapping[str, str]) -> None:
+    """Names and headings of the documentation's pages."""
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
+    for name in ("page", "about"):
+        table.add_column(name)
+    for name, title in titles.items():
+        table.add_row(name, title)
+    console = Console(highlight=False)
+    console.print(table)
+    console.print("tieline help PAGE shows one of them.")
+
+
+def show_page(markdown: str) -> None:
+    """A page for the terminal; its plain Markdown where the output is not one."""
+    console = Console(highlight=False)
+    if console.is_terminal:
+        from rich.markdown import Markdown
+
+        console.print(Markdown(markdown))
+    else:
+        print(markdown)
 
 
 def show_run(

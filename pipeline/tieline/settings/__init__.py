@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pydantic import Field, field_validator
 
+from tieline.settings.about import AboutSettings
 from tieline.settings.base import Settings
 from tieline.settings.chemistry import CalibrateSettings, ConvertSettings
 from tieline.settings.ingest import IngestSettings
@@ -52,3 +53,4 @@ class SessionSettings(Settings):
     classify: ClassifySettings = ClassifySettings()
     assess: AssessSettings = AssessSettings()
     report: ReportSettings = ReportSettings()
+    about: AboutSettings = AboutSettings()
