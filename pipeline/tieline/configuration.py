@@ -18,6 +18,7 @@ from tieline.settings import SessionSettings
 
 # A spot-table configuration is a few kilobytes; anything far larger is not one.
 LARGEST_CONFIGURATION_BYTES = 2_000_000
+DEEPEST = 50  # no key stands deeper than six sections
 
 
 @dataclass(frozen=True)
@@ -53,7 +54,7 @@ def read(
     text = _read(path)
     try:
         data = tomllib.loads(text)
-    except (tomllib.TOMLDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:  # a number of thousands of digits is a plain ValueError
         raise InputError(
             Problem(f"not valid TOML: {error}.", str(path), remedy="Correct the line named.")
         ) from None
@@ -62,6 +63,8 @@ def read(
     settings, problems = validate(data, str(path))
     problems = [*_open_questions(text, str(path)), *problems]
     out = out if out is not None else path.parent / settings.out
+    if "\0" in str(out):
+        raise InputError(Problem("no folder's name holds a NUL character.", str(path), column="out"))
     # Tidied for people to read: configs/../runs/x is runs/x.
     folder = Path(os.path.normpath(out / settings.session))
     return Session(path, settings, folder, tuple(overrides)), problems
@@ -86,7 +89,15 @@ def validate(data: dict[str, Any], file: str) -> tuple[SessionSettings, list[Pro
 
     Strict about types, but TOML arrays serve as tuples. Raises InputError when more is wrong than keys.
     """
-    text = json.dumps(data, default=str)
+    if _deeper_than(data, DEEPEST):
+        raise InputError(
+            Problem(f"sections within sections, more than {DEEPEST} deep; no key stands there.", file)
+        )
+    # A date is no text: as a section it is refused wherever it stands.
+    try:
+        text = json.dumps(data, default=lambda value: {"date or time": str(value)})
+    except ValueError as error:
+        raise InputError(Problem(f"a whole number is too large: {error}.", file)) from None
     try:
         return SessionSettings.model_validate_json(text, strict=True), []
     except ValidationError as error:
@@ -107,8 +118,25 @@ def validate(data: dict[str, Any], file: str) -> tuple[SessionSettings, list[Pro
         raise InputError(problems) from None
 
 
+def _deeper_than(data: Any, most: int) -> bool:
+    """Whether sections and arrays are nested deeper than `most`; level by level, for any depth."""
+    level = [data]
+    for _ in range(most):
+        level = [
+            item
+            for value in level
+            if isinstance(value, dict | list)
+            for item in (value.values() if isinstance(value, dict) else value)
+        ]
+    return any(isinstance(value, dict | list) for value in level)
+
+
 def _read(path: Path) -> str:
     try:
+        if path.is_dir():
+            raise InputError(Problem("is a folder.", str(path), remedy="Name the TOML file in it."))
+        if not path.is_file() and path.exists():
+            raise InputError(Problem("is a device or a pipe.", str(path), remedy="Name a TOML file."))
         if path.stat().st_size > LARGEST_CONFIGURATION_BYTES:
             raise InputError(
                 Problem("too large for a configuration.", str(path), remedy="Name the TOML file.")
@@ -120,8 +148,9 @@ def _read(path: Path) -> str:
         raise InputError(Problem("no such configuration file.", str(path), remedy=remedy)) from None
     except UnicodeDecodeError:
         raise InputError(Problem("not a UTF-8 text.", str(path), remedy="Save it as UTF-8.")) from None
-    except OSError as error:
-        raise InputError(Problem(f"cannot be read: {error.strerror}.", str(path))) from None
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or error
+        raise InputError(Problem(f"cannot be read: {reason}.", str(path))) from None
 
 
 def _override(data: dict[str, Any], text: str) -> None:
@@ -143,7 +172,7 @@ def _override(data: dict[str, Any], text: str) -> None:
             )
     try:
         data[last] = tomllib.loads(f"value = {match.group(2)}")["value"]
-    except tomllib.TOMLDecodeError:
+    except (ValueError, RecursionError):
         data[last] = match.group(2)
 
 

@@ -1,35 +1,75 @@
 """One writer per run folder, and none once it is sealed.
 
-The lock file names its holder and outlives no process on its own machine. A sealed folder holds a list of
-checksums of all its files, which any change would make untrue.
+The lock file names its holder and outlives no process: it is taken over when the process is gone, or, where
+that cannot be asked (another machine, another container), when it has not touched the file for SILENT_S. Both
+times of that comparison are the file server's, so that clocks need not agree. A writer that slept that long asks
+`Hold.check` before it shows its results, and finds the lock gone. A sealed folder holds a list of checksums of
+all its files, which any change would make untrue.
 """
 
 from __future__ import annotations
 
 import json
 import os
+import secrets
 import socket
+import threading
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
+from dataclasses import dataclass
 from pathlib import Path
 
 from tieline.errors import InputError, Problem
+from tieline.storage import remove_left_overs, temporary_path
 
 LOCK_NAME = ".tieline.lock"
 SEAL_NAME = "SHA256SUMS"
+BEAT_S = 30.0
+SILENT_S = 600.0  # twenty missed beats: a network folder may stop answering for minutes and come back
+ATTEMPTS = 20
+
+
+@dataclass(frozen=True)
+class Hold:
+    """A lock that was taken; `text` is what the lock file says and is unique to this hold."""
+
+    path: Path
+    text: str
+
+    def ours(self) -> bool:
+        return _text(self.path) == self.text
+
+    def check(self) -> None:
+        """Raises InputError where the lock was lost: somebody else may be writing."""
+        if not self.ours():
+            raise InputError(
+                Problem(
+                    "was taken over by another run, or its lock was deleted, while this one was silent.",
+                    str(self.path.parent),
+                    remedy="Nothing of this run was shown; run again.",
+                )
+            )
 
 
 @contextmanager
-def locked(run_folder: Path) -> Iterator[None]:
-    """Holds the folder's lock; raises InputError when it is sealed or another live process has it."""
+def locked(run_folder: Path) -> Iterator[Hold]:
+    """Holds the folder's lock and removes what dead runs left half-written.
+
+    Raises InputError when the folder is sealed, another live process holds it, or it cannot be written to.
+    """
     refuse_if_sealed(run_folder)
-    path = run_folder / LOCK_NAME
-    _acquire(path)
+    hold = _acquire(run_folder / LOCK_NAME)
+    stop = threading.Event()
+    beat = threading.Thread(target=_beat, args=(hold, stop), daemon=True, name="tieline-lock")
     try:
-        yield
+        remove_left_overs(run_folder)
+        beat.start()
+        yield hold
     finally:
+        stop.set()
         with suppress(OSError):
-            path.unlink()
+            if hold.ours():
+                hold.path.unlink()
 
 
 def refuse_if_sealed(run_folder: Path) -> None:
@@ -44,45 +84,132 @@ def refuse_if_sealed(run_folder: Path) -> None:
         )
 
 
-def _acquire(path: Path) -> None:
-    me = json.dumps({"pid": os.getpid(), "host": socket.gethostname()})
-    for _ in range(2):
+def _beat(hold: Hold, stop: threading.Event) -> None:
+    while not stop.wait(BEAT_S):
+        with suppress(OSError):
+            if hold.ours():
+                os.utime(hold.path)
+
+
+def _acquire(path: Path) -> Hold:
+    hold = Hold(path, _myself())
+    for _ in range(ATTEMPTS):
+        draft = temporary_path(path)
         try:
-            descriptor = os.open(path, os.O_CREAT | os.O_EXCL | os.O_WRONLY)
-        except FileExistsError:
-            if not _is_stale(path):
-                raise InputError(_held(path)) from None
-            with suppress(OSError):
-                path.unlink()
-            continue
+            _write_draft(draft, hold.text)
+            now = draft.stat().st_mtime
+            if _place(draft, hold):
+                return hold
+        except FileNotFoundError:
+            if path.parent.is_dir():
+                continue  # the holder tidied the draft away, and may be done by now
+            raise
         except OSError as error:
-            raise InputError(
-                Problem(
-                    f"cannot be written: {error.strerror}.",
-                    str(path.parent),
-                    remedy="Choose another --out folder.",
-                )
-            ) from None
-        with os.fdopen(descriptor, "w") as stream:
-            stream.write(me)
-        return
-    raise InputError(_held(path))
+            raise InputError(_not_writable(path.parent, error)) from None
+        finally:
+            with suppress(OSError):
+                draft.unlink()
+        found = _text(path)
+        if found is None:
+            continue
+        if not _is_stale(path, found, now):
+            raise InputError(_held(path, found))
+        _take_away(path, found)
+    raise InputError(_held(path, _text(path) or ""))
 
 
-def _holder(path: Path) -> dict[str, object]:
+def _myself() -> str:
+    me = {
+        "host": socket.gethostname(),
+        "pid": os.getpid(),
+        "started": _started(os.getpid()),
+        "token": secrets.token_hex(8),
+    }
+    return json.dumps(me, sort_keys=True)
+
+
+def _write_draft(draft: Path, text: str) -> None:
+    with draft.open("xb") as stream:
+        stream.write(text.encode())
+        stream.flush()
+
+
+def _place(draft: Path, hold: Hold) -> bool:
+    """Gives the draft the lock's name unless that is taken: never is there a lock that names no holder."""
     try:
-        holder = json.loads(path.read_text())
-    except (OSError, ValueError):
+        os.link(draft, hold.path)
+    except FileExistsError:
+        return hold.ours()  # a network file system may repeat a request that had succeeded
+    except FileNotFoundError:
+        raise
+    except OSError:  # a file system without links
+        return _place_without_links(hold)
+    return True
+
+
+def _place_without_links(hold: Hold) -> bool:
+    try:
+        with hold.path.open("xb") as stream:
+            stream.write(hold.text.encode())
+    except FileExistsError:
+        return False
+    return True
+
+
+def _take_away(path: Path, found: str) -> None:
+    """Removes the stale lock that says `found`, and no other that may have come in its place."""
+    aside = temporary_path(path)
+    with suppress(OSError):
+        os.rename(path, aside)
+        if _text(aside) != found:
+            with suppress(OSError):
+                os.link(aside, path)
+        aside.unlink()
+
+
+def _text(path: Path) -> str | None:
+    """What a lock file says; None where there is none, an empty text where it cannot be read."""
+    try:
+        return path.read_bytes().decode("utf-8", "replace")
+    except FileNotFoundError:
+        return None
+    except OSError:
+        return ""
+
+
+def _holder(text: str) -> dict[str, object]:
+    try:
+        holder = json.loads(text)
+    except ValueError:
         return {}
     return holder if isinstance(holder, dict) else {}
 
 
-def _is_stale(path: Path) -> bool:
-    holder = _holder(path)
+def _is_stale(path: Path, text: str, now: float) -> bool:
+    """Whether the holder is gone; `now` is the time of the file system."""
+    holder = _holder(text)
     pid = holder.get("pid")
-    if not isinstance(pid, int) or holder.get("host") != socket.gethostname():
-        return False  # a holder on another machine cannot be asked; a person decides
-    return not _alive(pid)
+    if isinstance(pid, int) and pid > 0 and holder.get("host") == socket.gethostname():
+        if not _alive(pid):
+            return True
+        started = _started(pid)
+        if started and holder.get("started"):
+            return started != holder["started"]  # the number was given to another process since
+    try:
+        return now - path.stat().st_mtime > SILENT_S
+    except OSError:
+        return False
+
+
+def _started(pid: int) -> str:
+    """When a process of this machine began, as a text to compare; empty where the system does not tell."""
+    try:
+        boot = Path("/proc/sys/kernel/random/boot_id").read_bytes().decode().strip()
+        # After the name in brackets: state, parent, ... and as the 20th the start in ticks since the boot.
+        fields = Path(f"/proc/{pid}/stat").read_bytes().decode(errors="replace").rpartition(")")[2].split()
+        return "ended" if fields[0] in "ZX" else f"{boot} {fields[19]}"
+    except (OSError, IndexError):
+        return ""
 
 
 def _alive(pid: int) -> bool:
@@ -95,18 +222,25 @@ def _alive(pid: int) -> bool:
         return bool(handle)
     try:
         os.kill(pid, 0)
-    except ProcessLookupError:
+    except (ProcessLookupError, OverflowError):
         return False
     except PermissionError:
         return True
     return True
 
 
-def _held(path: Path) -> Problem:
-    holder = _holder(path)
+def _not_writable(folder: Path, error: OSError) -> Problem:
+    return Problem(
+        f"cannot be written: {error.strerror or error}.", str(folder), remedy="Choose another --out folder."
+    )
+
+
+def _held(path: Path, text: str) -> Problem:
+    holder = _holder(text)
     who = f"process {holder.get('pid')} on {holder.get('host')}" if holder else "another process"
     return Problem(
         f"is being written by {who}.",
         str(path.parent),
-        remedy=f"Wait for it, or delete {path.name} there if it is gone.",
+        remedy=f"Wait for it. If it is gone, its lock is void {SILENT_S / 60:.0f} minutes after its last sign of life; "
+        f"or delete {path.name} there.",
     )

@@ -23,7 +23,14 @@ from tieline.provenance import bytes_digest, content_digest
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
 from tieline.stages import NAMES, STAGES, Stage
-from tieline.storage import SCHEMA_VERSION, Pending, damaged, read_table
+from tieline.storage import (
+    SCHEMA_VERSION,
+    Pending,
+    damaged,
+    read_input,
+    read_table,
+    run_folder_for_writing,
+)
 
 Progress = Callable[[str, str], None]
 
@@ -93,10 +100,11 @@ def run(
     refuse_if_sealed(session.run_folder)
     work = _workspace(session)
     planned(_verdicts(work, stages))
-    session.run_folder.mkdir(parents=True, exist_ok=True)
-    with locked(session.run_folder), Pending() as pending:
-        reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
-        pending.commit()
+    with run_folder_for_writing(session.run_folder), locked(session.run_folder) as hold:
+        with Pending() as pending:
+            reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
+            hold.check()
+            pending.commit()
         write_manifest(work.session, {path: file.data for path, file in work.files.items()})
     return reports
 
@@ -107,22 +115,37 @@ def tables_of(session: Session, names: Iterable[str]) -> dict[str, pa.Table]:
     return {name: read_table(path, name) for name, path in paths.items() if path.exists()}
 
 
-def finished(
-    session: Session, until: str
-) -> tuple[Session, dict[str, pa.Table], dict[str, InputFile]]:
+def finished(session: Session, until: str) -> tuple[Session, dict[str, pa.Table], dict[str, InputFile]]:
     """The session with its settings in effect, every stage table up to one stage, and the input files.
 
     Raises InputError where one of these stages is not current: its tables would tell of other settings.
     """
     work = _workspace(session)
     stages = STAGES[: NAMES.index(until) + 1]
+    before = _fingerprints(session, stages)
     for verdict in _verdicts(work, stages):
         if verdict.state != "current":
             reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
             raise InputError(
                 Problem(f"{verdict.stage} is {verdict.state}{reasons}.", remedy="Run `tieline run` first.")
             )
-    return work.session, tables_of(session, (name for stage in stages for name in stage.outputs)), work.files
+    tables = tables_of(session, (name for stage in stages for name in stage.outputs))
+    if _fingerprints(session, stages) != before:
+        raise InputError(
+            Problem(
+                "was written by another run while it was read.", str(session.run_folder), remedy="Try again."
+            )
+        )
+    return work.session, tables, work.files
+
+
+def _fingerprints(session: Session, stages: Iterable[Stage]) -> list[object]:
+    """Of all files of some stages: the same before and after reading means that one run's files were read."""
+    return [
+        (record or {}).get("fingerprint")
+        for stage in stages
+        for record in read_records(session.run_folder, stage).values()
+    ]
 
 
 def check(session: Session) -> list[StageReport]:
@@ -153,11 +176,14 @@ def _selected(only: str | None, until: str | None) -> tuple[Stage, ...]:
 def _workspace(session: Session) -> Workspace:
     """Every input file of the session, whichever stages are wanted: they are named and checked together."""
     paths = dict.fromkeys(path for stage in STAGES for path in stage.files(session.settings))
-    files, problems = {}, []
+    files: dict[str, InputFile] = {}
+    problems: list[Problem] = []
+    largest = session.settings.ingest.limits.expanded_mb * 1_000_000
     for path in paths:
         try:
-            with pa.OSFile(str(session.resolve(path)), "rb") as stream:
-                files[path] = InputFile(path, stream.read_buffer())
+            files[path] = read_input(session.resolve(path), path, largest)
+        except InputError as error:
+            problems += error.problems
         except (OSError, ValueError) as error:
             problems.append(_unreadable(session, path, error))
     if problems:
@@ -306,12 +332,12 @@ def _unreadable(session: Session, path: str, error: Exception) -> Problem:
     from tieline.errors import nearest
 
     target = session.resolve(path)
-    reason = (
-        "no such file"
-        if not target.exists()
-        else f"cannot be read ({getattr(error, 'strerror', None) or error})"
-    )
-    others = [other.name for other in target.parent.iterdir()] if target.parent.is_dir() else []
+    missing = isinstance(error, FileNotFoundError | NotADirectoryError)
+    reason = "no such file" if missing else f"cannot be read ({getattr(error, 'strerror', None) or error})"
+    try:
+        others = [other.name for other in target.parent.iterdir()]
+    except (OSError, ValueError):
+        others = []
     remedy = nearest(target.name, others) or f"The path is relative to {session.path}."
     return Problem(f"{reason}.", path, remedy=remedy)
 

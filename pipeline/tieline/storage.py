@@ -4,7 +4,11 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Callable, Mapping
+import secrets
+import stat
+import time
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -13,6 +17,7 @@ import pyarrow.parquet as pq
 
 from tieline.columns import TABLES
 from tieline.errors import InputError, Problem
+from tieline.reading.input_file import InputFile
 from tieline.tables import declared
 
 # Raised when the meaning of a stage file changes; a file of another version is stale.
@@ -22,16 +27,18 @@ METADATA_KEY = b"tieline"
 
 def write_atomically(path: Path, write: Callable[[BinaryIO], None]) -> None:
     """Writes beside the target, flushes to disk, then renames: readers see the old file or the new one."""
-    temporary = _temporary(path)
+    temporary = temporary_path(path)
     try:
-        with temporary.open("wb") as stream:
+        with temporary.open("xb") as stream:
             write(stream)
             stream.flush()
             os.fsync(stream.fileno())
-        os.replace(temporary, path)
+        _show(temporary, path)
     except BaseException:
-        temporary.unlink(missing_ok=True)
+        with suppress(OSError):
+            temporary.unlink()
         raise
+    sync_folder(path.parent)
 
 
 def write_text(path: Path, text: str) -> None:
@@ -54,26 +61,121 @@ class Pending:
 
     def __exit__(self, *_: object) -> None:
         for temporary, _target in self._moves:
-            temporary.unlink(missing_ok=True)
+            with suppress(OSError):
+                temporary.unlink()
 
     def add(self, target: Path, name: str, table: pa.Table, record: Mapping[str, Any]) -> None:
         """Writes a stage table beside its target under a temporary name."""
-        temporary = _temporary(target)
+        temporary = temporary_path(target)
         self._moves.append((temporary, target))
-        with temporary.open("wb") as stream:
+        with temporary.open("xb") as stream:
             _write_table(stream, name, table, record)
             stream.flush()
             os.fsync(stream.fileno())
 
     def commit(self) -> None:
-        """Renames all, side tables before the main table of their stage."""
+        """Renames all, side tables before the main table of their stage.
+
+        Stopped half-way it leaves whole files of two runs, and their fingerprints tell which stages are stale.
+        """
         for temporary, target in self._moves:
-            os.replace(temporary, target)
+            _show(temporary, target)
+        for folder in dict.fromkeys(target.parent for _, target in self._moves):
+            sync_folder(folder)
         self._moves.clear()
 
 
-def _temporary(target: Path) -> Path:
-    return target.with_name(f".{target.name}.{os.getpid()}.tmp")
+def temporary_path(target: Path) -> Path:
+    """A name beside the target that no other writer uses and no reader looks at."""
+    return target.with_name(f".{target.name}.{os.getpid()}-{secrets.token_hex(4)}.tmp")
+
+
+def remove_left_overs(folder: Path) -> None:
+    """Removes the temporary files of writers that are gone; only for who holds the folder's lock."""
+    for path in folder.glob(".*.tmp"):
+        with suppress(OSError):
+            path.unlink()
+
+
+def sync_folder(folder: Path) -> None:
+    """Makes renames in a folder outlast a loss of power, where the file system can."""
+    if os.name == "nt":
+        return
+    with suppress(OSError):
+        descriptor = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(descriptor)
+        finally:
+            os.close(descriptor)
+
+
+def _show(temporary: Path, target: Path) -> None:
+    """Renames; on Windows a reader or a virus scanner may hold the target for a moment."""
+    for wait_s in (0.05, 0.2, 1.0) if os.name == "nt" else ():
+        try:
+            os.replace(temporary, target)
+        except PermissionError:
+            time.sleep(wait_s)
+        else:
+            return
+    os.replace(temporary, target)
+
+
+@contextmanager
+def run_folder_for_writing(folder: Path) -> Iterator[None]:
+    """Makes the run folder, and takes it away again where the run fails before anything lies in it.
+
+    Raises InputError where it cannot be made, or is a link that leads out of the folder of run folders.
+    """
+    _refuse_link_out(folder)
+    new = [path for path in (folder, *folder.parents) if not path.exists()]
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or error
+        raise InputError(
+            Problem(f"cannot be made: {reason}.", str(folder), remedy="Choose another --out folder.")
+        ) from None
+    try:
+        yield
+    except BaseException:
+        with suppress(OSError):
+            for path in new:
+                path.rmdir()
+        raise
+
+
+def _refuse_link_out(folder: Path) -> None:
+    try:
+        outside = folder.is_symlink() and not folder.resolve().is_relative_to(folder.parent.resolve())
+    except (OSError, ValueError, RuntimeError):  # a link to itself
+        outside = True
+    if outside:
+        raise InputError(
+            Problem(
+                "is a symbolic link out of the folder of run folders; nothing is written through it.",
+                str(folder),
+                remedy="Name the folder it leads to with out or --out.",
+            )
+        )
+
+
+def read_input(path: Path, name: str, largest: int) -> InputFile:
+    """Reads an input file whole; `name` is what messages call it.
+
+    Raises OSError, ValueError where it is no regular file, and InputError where it is larger than `largest` bytes.
+    """
+    found = path.stat()
+    if stat.S_ISDIR(found.st_mode):
+        raise ValueError("it is a folder")
+    if not stat.S_ISREG(found.st_mode):
+        raise ValueError("it is a device or a pipe, not a file")
+    if found.st_size > largest:
+        remedy = "If that is right, raise ingest.limits.expanded_mb."
+        message = f"has {found.st_size / 1e6:.0f} MB; at most {largest / 1e6:g} MB are read."
+        raise InputError(Problem(message, name, remedy=remedy))
+    with pa.OSFile(str(path), "rb") as stream:
+        return InputFile(name, stream.read_buffer())
 
 
 def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[str, Any]) -> None:
