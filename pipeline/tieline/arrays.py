@@ -154,6 +154,41 @@ def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
     return place[keys], row[present]
 
 
+def common_keys(tables: Sequence[pa.Table], names: Sequence[Sequence[str]]) -> list[IntArray]:
+    """One key per row of every table, equal where the labels of the named columns are equal.
+
+    names: the label columns of each table, in the same order of meaning.
+    """
+    keys, size = [np.zeros(table.num_rows, dtype=np.int64) for table in tables], 1
+    for columns in zip(*names, strict=True):
+        found = [labels(table, name) for table, name in zip(tables, columns, strict=True)]
+        texts = sorted({text for column in found for text in column.texts})
+        place = {text: position for position, text in enumerate(texts, start=1)}
+        if size * (len(texts) + 1) > LARGEST_KEY:
+            keys, size = _ranked_together(keys, size)
+        size *= len(texts) + 1
+        for position, column in enumerate(found):
+            places = np.array([*(place[text] for text in column.texts), 0], dtype=np.int64)
+            keys[position] = keys[position] * (len(texts) + 1) + places[column.codes]
+    return keys
+
+
+def _ranked_together(keys: Sequence[IntArray], size: int) -> tuple[list[IntArray], int]:
+    rank, first = ranked(np.concatenate(keys), size)
+    return np.split(rank, np.cumsum([len(key) for key in keys])[:-1]), len(first)
+
+
+def matches(wanted: IntArray, keys: IntArray) -> tuple[IntArray, IntArray]:
+    """All pairs of positions (i, j) with wanted[i] == keys[j], in the order of i, then j."""
+    order = np.argsort(keys, kind="stable")
+    ordered = keys[order]
+    start, end = (np.searchsorted(ordered, wanted, side=side) for side in ("left", "right"))
+    count = end - start
+    first = np.repeat(np.arange(len(wanted)), count)
+    offset = np.arange(len(first)) - np.repeat(np.cumsum(count) - count, count)
+    return first, order[start[first] + offset]
+
+
 def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
     """A number 0..n-1 for the spot of every row, in order of table and row, and the first row of each spot.
 

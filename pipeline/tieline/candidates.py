@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, flags, labels, numbers
+from tieline.arrays import BoolArray, FloatArray, IntArray, common_keys, flags, labels, matches, numbers
 
 RULE = (
     "both means from one batch before two; then the preferred technique; then two values before a limit; "
@@ -36,37 +36,29 @@ def candidates(
 
     relative_sd: relative standard uncertainty of every mean with its unshared errors, shape (rows of pair,).
     """
-    import pandas as pd
-
-    experiment, phase, element = (labels(pair, name) for name in ("experiment", "phase", "element"))
     usable = np.flatnonzero(numbers(pair, "n_used") > 0)
-    means = pd.DataFrame(
-        {
-            "experiment": experiment.text()[usable],
-            "phase": phase.text()[usable],
-            "element": element.codes[usable],
-            "row": usable,
-        }
-    )
     formed = np.flatnonzero(flags(pairs, "formed"))
-    wanted = pd.DataFrame(
-        {name: labels(pairs, name).text()[formed] for name in ("experiment", "alpha", "beta")}
-    )
-    wanted["pair"] = formed
-    joined = wanted.merge(
-        means.rename(columns={"phase": "alpha", "row": "row_alpha"}), on=["experiment", "alpha"]
-    )
-    joined = joined.merge(
-        means.rename(columns={"phase": "beta", "row": "row_beta"}), on=["experiment", "beta", "element"]
-    )
-    return _ranked(joined, pair, relative_sd, prefer)
+    sides = [("experiment", "alpha"), ("experiment", "beta"), ("experiment", "phase")]
+    of_alpha, of_beta, of_mean = common_keys((pairs, pairs, pair), sides)
+    element = labels(pair, "element")
+    n_elements = len(element.texts) + 1
+    number, alpha = matches(of_alpha[formed], of_mean[usable])
+    pairs_row, alpha = formed[number], usable[alpha]
+    of_element = of_mean * n_elements + element.codes
+    wanted = of_beta[pairs_row] * n_elements + element.codes[alpha]
+    number, beta = matches(wanted, of_element[usable])
+    return _ranked(pairs_row[number], alpha[number], usable[beta], pair, relative_sd, prefer)
 
 
-def _ranked(joined: object, pair: pa.Table, relative_sd: FloatArray, prefer: tuple[str, ...]) -> Candidates:
-    pairs_row, element, alpha, beta = (
-        np.asarray(joined[name], dtype=np.int64)  # type: ignore[index]
-        for name in ("pair", "element", "row_alpha", "row_beta")
-    )
+def _ranked(
+    pairs_row: IntArray,
+    alpha: IntArray,
+    beta: IntArray,
+    pair: pa.Table,
+    relative_sd: FloatArray,
+    prefer: tuple[str, ...],
+) -> Candidates:
+    element = labels(pair, "element").codes[alpha]
     batch, technique, analyte = (labels(pair, name) for name in ("batch", "technique", "analyte"))
     preference = np.array(
         [prefer.index(t) if t in prefer else len(prefer) for t in technique.texts], dtype=np.int64

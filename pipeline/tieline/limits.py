@@ -7,7 +7,17 @@ from dataclasses import replace
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, TextArray, group_rows, labels, numbers
+from tieline.arrays import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    TextArray,
+    common_keys,
+    group_rows,
+    labels,
+    matches,
+    numbers,
+)
 from tieline.settings.results import PartitionSettings
 from tieline.statistics.censored import censored_limits
 from tieline.statistics.limits import MeanLimits, limits_ratio, mean_limits
@@ -72,14 +82,12 @@ def _means_with_limits(
     likelihood = censored_limits(
         value, sigma, limit, np.isnan(value), groups.code, groups.count, confidence=settings.confidence
     )
-    rows_of = {
-        key: row
-        for row, key in enumerate(zip(*(pair.column(name).to_pylist() for name in KEYS), strict=True))
-        if censored[row]
-    }
-    rows = np.array([rows_of[key] for key in groups.keys], dtype=np.int64)
+    with_limits = np.flatnonzero(censored)
+    of_limits, of_means = common_keys((limits, pair), (KEYS, KEYS))
+    group, place = matches(of_limits[groups.first], of_means[with_limits])
+    rows = with_limits[place]
     for name in ("mean", "low", "high", "n", "n_censored"):
-        getattr(plain, name)[rows] = getattr(likelihood, name)
+        getattr(plain, name)[rows] = getattr(likelihood, name)[group]
     return plain
 
 

@@ -2,21 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-
 import numpy as np
 from scipy import special
 
-from tieline.arrays import FloatArray, TextArray
+from tieline.arrays import FloatArray, IntArray
 from tieline.statistics.overlap_bound import overlap_bound
 from tieline.statistics.ratios import RatioInterval
 
 
 def overlap_allowance(
-    names: Mapping[str, TextArray], D: FloatArray, interval: RatioInterval, confidence: float
+    pair: IntArray, D: FloatArray, interval: RatioInterval, confidence: float
 ) -> tuple[FloatArray, FloatArray]:
     """Lower end of every D with overlap allowed for, and the largest fraction its pair allows, shape (K,) each.
 
+    pair: a number per pair of phases, shape (K,); the D's of a pair stand together.
     An upper limit on D bounds the overlap as well: it enters as zero with the standard uncertainty that
     puts the limit at the configured confidence.
     """
@@ -25,11 +24,9 @@ def overlap_allowance(
     apparent = np.where(is_limit, 0.0, D)
     se = np.where(is_limit, interval.high / quantile, interval.sd)
     dof = np.where(is_limit | ~(np.nan_to_num(interval.dof) > 0), 1e9, interval.dof)
-    keys = list(zip(names["experiment"], names["alpha"], names["beta"], strict=True))
-    order = {key: row for row, key in enumerate(dict.fromkeys(keys))}
-    pair = np.array([order[key] for key in keys], dtype=np.int64)
     place = _place_within(pair)
-    shape = (len(order), int(place.max(initial=-1)) + 1)
+    pair = np.cumsum(place == 0) - 1
+    shape = (int((place == 0).sum()), int(place.max(initial=-1)) + 1)
 
     def rectangle(flat: FloatArray, fill: float) -> FloatArray:
         out = np.full(shape, fill)
@@ -41,7 +38,7 @@ def overlap_allowance(
     return lowest, bound.fraction[pair] if len(pair) else np.zeros(0)
 
 
-def _place_within(code: np.ndarray) -> np.ndarray:
+def _place_within(code: IntArray) -> IntArray:
     """0, 1, 2, ... within each code; equal codes stand together."""
     new = np.ones(len(code), dtype=np.bool_)
     new[1:] = code[1:] != code[:-1]

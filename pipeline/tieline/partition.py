@@ -8,8 +8,9 @@ from __future__ import annotations
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, labels, numbers
+from tieline.arrays import BoolArray, FloatArray, IntArray, Labels, TextArray, labels, numbers
 from tieline.candidates import RULE, Candidates, candidates
 from tieline.columns import PARTITION, PARTITION_ALTERNATIVES, PARTITION_COVARIANCE
 from tieline.correction import calibrate_row
@@ -134,15 +135,15 @@ def _partition_table(
     is_value = (interval.kind == "value") | (np.isfinite(interval.value) & (interval.kind == "undetermined"))
     D = np.where(is_value, interval.value, np.nan)
     from_means = is_value & np.isfinite(budget.D[rows])
-    names = {name: labels(pairs, name).text()[found.pair[rows]] for name in ("experiment", "alpha", "beta")}
+    names = {name: labels(pairs, name).take(found.pair[rows]) for name in ("experiment", "alpha", "beta")}
     reason = _with_calibration_remark(interval.reason, sources, alpha, beta)
-    D_overlap_lo, bound = overlap_allowance(names, D, interval, settings.confidence)
+    D_overlap_lo, bound = overlap_allowance(found.pair[rows], D, interval, settings.confidence)
 
     def share(part: FloatArray) -> FloatArray:
         return np.where(from_means, part[rows], np.nan)
 
-    def of(column: str, side: IntArray) -> object:
-        return labels(pair, column).text()[side]
+    def of(column: str, side: IntArray) -> Labels:
+        return labels(pair, column).take(side)
 
     return build(
         PARTITION,
@@ -185,27 +186,28 @@ def _partition_table(
     )
 
 
-def _with_calibration_remark(reason: object, sources: _Sources, alpha: IntArray, beta: IntArray) -> list[str]:
+def _with_calibration_remark(
+    reason: TextArray, sources: _Sources, alpha: IntArray, beta: IntArray
+) -> TextArray:
     apart = sources.calibration_key[alpha] != sources.calibration_key[beta]
     unknown = apart & ~(sources.calibration_known[alpha] & sources.calibration_known[beta])
-    return [
-        "; ".join(text for text in (own, UNKNOWN_CALIBRATION if is_unknown else "") if text)
-        for own, is_unknown in zip(reason, unknown, strict=True)  # type: ignore[call-overload]
+    reason = reason.copy()
+    reason[unknown] = [
+        f"{own}; {UNKNOWN_CALIBRATION}" if own else UNKNOWN_CALIBRATION for own in reason[unknown]
     ]
+    return reason
 
 
 def _alternatives(pair: pa.Table, pairs: pa.Table, found: Candidates, budget: Budget) -> pa.Table:
     rows = np.flatnonzero(~found.chosen)
 
-    def of(column: str, side: IntArray) -> object:
-        return labels(pair, column).text()[side[rows]]
+    def of(column: str, side: IntArray) -> Labels:
+        return labels(pair, column).take(side[rows])
 
     return build(
         PARTITION_ALTERNATIVES,
         {
-            **{
-                name: labels(pairs, name).text()[found.pair[rows]] for name in ("experiment", "alpha", "beta")
-            },
+            **{name: labels(pairs, name).take(found.pair[rows]) for name in ("experiment", "alpha", "beta")},
             "element": of("element", found.alpha),
             "D": budget.D[rows],
             "D_sd": budget.D_sd[rows],
@@ -225,27 +227,35 @@ def _covariance(table: pa.Table, alpha: Side, rows: IntArray, beta: Side) -> pa.
     rescaled technique: cov(D_i, D_j) = D_i D_j (u_a² + u_b²). Everything else is independent between elements.
     """
     D, sd = numbers(table, "D"), numbers(table, "D_sd")
-    usable = np.flatnonzero(np.isfinite(D) & np.isfinite(sd))
-    pair_key = _pair_codes(table)
-    first, second = _pairs_within(pair_key[usable])
-    first, second = usable[first], usable[second]
+    usable = np.isfinite(D) & np.isfinite(sd)
+    keys = [
+        np.where(side.internal_standard[rows] > 0, side.internal_standard_key[rows], -1)
+        for side in (alpha, beta)
+    ]
+    # A standard that both phases share cancels in D.
+    keys = [np.where(keys[0] == keys[1], -1, key) for key in keys]
+    alone = np.flatnonzero(usable)
+    sharing = np.flatnonzero(usable & ((keys[0] >= 0) | (keys[1] >= 0)))
+    first, second = _pairs_within(_pair_codes(table)[sharing])
+    first, second = sharing[first], sharing[second]
     shared = np.zeros(len(first))
-    for side, other in ((alpha, beta), (beta, alpha)):
-        key = side.internal_standard_key[rows]
-        cancels = key == other.internal_standard_key[rows]
-        same = (key[first] == key[second]) & ~cancels[first] & ~cancels[second]
+    for side, key in zip((alpha, beta), keys, strict=True):
         relative = side.internal_standard[rows]
+        same = (key[first] == key[second]) & (key[first] >= 0)
         shared += np.where(same, relative[first] * relative[second], 0.0)
-    covariance = np.where(first == second, sd[first] ** 2, D[first] * D[second] * shared)
-    kept = (first == second) | (covariance != 0)
-    first, second, covariance = first[kept], second[kept], covariance[kept]
-    element = labels(table, "element").text()
+    kept = shared != 0
+    first, second, shared = first[kept], second[kept], shared[kept]
+    covariance = np.concatenate([sd[alone] ** 2, D[first] * D[second] * shared])
+    first, second = np.concatenate([alone, first]), np.concatenate([alone, second])
+    order = np.lexsort((second, first))
+    first, second, covariance = first[order], second[order], covariance[order]
+    element = labels(table, "element")
     return build(
         PARTITION_COVARIANCE,
         {
-            **{name: labels(table, name).text()[first] for name in ("experiment", "alpha", "beta")},
-            "element": element[first],
-            "other": element[second],
+            **{name: labels(table, name).take(first) for name in ("experiment", "alpha", "beta")},
+            "element": element.take(first),
+            "other": element.take(second),
             "covariance": covariance,
         },
     )
@@ -261,15 +271,15 @@ def _pair_codes(table: pa.Table) -> IntArray:
 
 
 def _pairs_within(code: IntArray) -> tuple[IntArray, IntArray]:
-    """Positions (i, j), i <= j, of all two rows with one code; rows of one code stand together."""
+    """Positions (i, j), i < j, of all two rows with one code; rows of one code stand together."""
     n = len(code)
     if n == 0:
         return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64)
     end = np.searchsorted(code, code, side="right")
-    size = end - np.arange(n)
+    size = end - np.arange(n) - 1
     first = np.repeat(np.arange(n), size)
     start = np.cumsum(size) - size
-    second = np.arange(len(first)) - start[first] + first
+    second = np.arange(len(first)) - start[first] + first + 1
     return first, second
 
 
@@ -291,8 +301,7 @@ def _ledger(pair: pa.Table, found: Candidates) -> Ledger:
 
 
 def _remarks(table: pa.Table) -> tuple[Remark, ...]:
-    reasons = table.column("reason").to_pylist()
-    unknown = sum(UNKNOWN_CALIBRATION in reason for reason in reasons)
+    unknown = pc.sum(pc.match_substring(table.column("reason"), UNKNOWN_CALIBRATION)).as_py()
     if not unknown:
         return ()
     text = f"{unknown} D across batches have no calibration uncertainty; set calibrate.relative_sd or measure a reference"
