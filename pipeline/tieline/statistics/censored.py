@@ -39,6 +39,7 @@ RELATIVE_SPREADS_ALL_BELOW = np.array([0.0, 0.3])
 # the far ones only where the near ones do not hold the upper limit.
 _NEAR = np.linspace(0.0, 2.0, 33)
 _FAR = np.geomspace(2.0, 64.0, 16)[1:]
+_STEPS = 2.0**16
 # So many groups at a time stay in the processor's cache.
 _CHUNK_GROUPS = 2000
 
@@ -287,6 +288,8 @@ def _partly_below(
 
     low = crossing(np.maximum(first - 1, 0), first)
     high = crossing(np.minimum(last + 1, level.shape[1] - 1), last)
+    # Rounded far below what the likelihood can tell: the same whatever the unit and the order of the rows.
+    mean, low, high = (np.round(place / scale * _STEPS) / _STEPS * scale for place in (mean, low, high))
     return (
         mean,
         np.where(first == 0, 0.0, np.minimum(low, mean)),
