@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import io
+import os
 import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -22,6 +24,7 @@ app = typer.Typer(
 )
 
 WRONG_INPUT, DIFFERENT, INTERRUPTED = 2, 3, 130
+MACHINE = 1  # a full disk, too little memory, a folder that vanished: nothing is wrong with the input
 
 ConfigArgument = Annotated[
     Path, typer.Argument(metavar="CONFIG", help="Configuration of the session, a TOML file.")
@@ -91,9 +94,17 @@ def run(
     if only is not None and until is not None:
         _fail_usage("--only and --until exclude each other.")
     session = _load(config, overrides, out)
+    files: list[str] = []
     with terminal.progress(quiet or json) as (progress, planned):
-        reports = runner.run(session, only=only, until=until, fresh=fresh, progress=progress, planned=planned)
-    files = _report_after(session, len(reports))
+        reports = runner.run(
+            session,
+            only=only,
+            until=until,
+            fresh=fresh,
+            progress=progress,
+            planned=planned,
+            after=lambda n_stages: files.extend(_report_after(session, n_stages)),
+        )
     if json:
         _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
     elif not quiet:
@@ -138,18 +149,19 @@ def check(config: ConfigArgument, overrides: SetOption = None, json: JsonOption 
 def status(
     config: ConfigArgument, out: OutOption = None, overrides: SetOption = None, json: JsonOption = False
 ) -> None:
-    """Show which stages are current, which are stale and because of what.
+    """Show which stages, and whether the report, are current, which are stale and because of what.
 
     Example: tieline status configs/ember.toml
     """
     from tieline import runner, terminal
+    from tieline.report.write import report_verdict
 
     session = _load(config, overrides, out)
-    verdicts = runner.status(session)
+    verdicts, report = runner.status(session), report_verdict(session)
     if json:
-        _print_json(terminal.status_as_json(session, verdicts))
+        _print_json(terminal.status_as_json(session, verdicts, report))
     else:
-        terminal.show_status(session, verdicts)
+        terminal.show_status(session, [*verdicts, report])
 
 
 @app.command()
@@ -176,8 +188,10 @@ def report(
     if json:
         _print_json({"written": written})
     else:
+        from tieline.terminal_console import printable
+
         for path in written:
-            typer.echo(path)
+            typer.echo(printable(path))
 
 
 @app.command()
@@ -339,12 +353,21 @@ def help_(
 
 def main() -> None:
     """Entry point: turns what a user can get wrong into messages and exit status 2."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):  # what its encoding lacks must not stop the program
+            stream.reconfigure(errors="replace")
     try:
         status = app(standalone_mode=False)
+        if sys.stdout is not None:
+            sys.stdout.flush()
         sys.exit(status if isinstance(status, int) else 0)
     except (KeyboardInterrupt, typer.Abort):
-        sys.stderr.write("interrupted; the results are as they were before\n")
+        sys.stderr.write("interrupted; every result file is whole, and the next run completes them\n")
         sys.exit(INTERRUPTED)
+    except BrokenPipeError:
+        # Whoever read the output has left; nothing more can be said there, not even by the interpreter as it ends.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(MACHINE)
     except Exception as error:
         sys.exit(_exit_status(error))
 
@@ -353,8 +376,16 @@ def _exit_status(error: Exception) -> int:
     # What the parser finds wrong with the command line knows how to show itself.
     show = getattr(error, "show", None)
     if callable(show):
+        from tieline.terminal_console import printable
+
+        error.message = printable(getattr(error, "message", ""))  # type: ignore[attr-defined]
         show()
         return WRONG_INPUT
+    if isinstance(error, OSError | MemoryError):
+        from tieline.terminal import show_machine_failure
+
+        show_machine_failure(error)
+        return MACHINE
     from tieline.errors import InputError
 
     if isinstance(error, InputError):
@@ -378,9 +409,9 @@ def _load(config: Path, overrides: list[str] | None, out: Path | None) -> Sessio
 
 
 def _print_json(value: Any) -> None:
-    import json
+    from tieline.terminal_console import json_for_output
 
-    sys.stdout.write(json.dumps(value, ensure_ascii=False, indent=1, allow_nan=False) + "\n")
+    sys.stdout.write(json_for_output(value) + "\n")
 
 
 def _fail_usage(text: str) -> None:

@@ -17,7 +17,7 @@ from urllib.parse import quote
 
 from tieline import __version__
 from tieline.configuration import Session
-from tieline.lock import SEAL_NAME
+from tieline.lock import SEAL_NAME, locked
 from tieline.manifest import read_manifest
 from tieline.settings.about import AboutSettings
 from tieline.stages import STAGES
@@ -64,10 +64,11 @@ Entity = dict[str, Any]
 def write_crate(session: Session) -> tuple[str, ...]:
     """Writes both descriptions into the run folder, after everything else there; returns their names."""
     folder = session.run_folder
-    package = {name: _csv_facts(folder / name) for name in CSV_FILES if (folder / name).exists()}
-    if package:
-        write_text(folder / DATA_PACKAGE, _text(data_package(session.settings.session, package)))
-    write_text(folder / METADATA, _text(crate(session, _files(folder))))
+    with locked(folder):
+        package = {name: _csv_facts(folder / name) for name in CSV_FILES if (folder / name).exists()}
+        if package:
+            write_text(folder / DATA_PACKAGE, _text(data_package(session.settings.session, package)))
+        write_text(folder / METADATA, _text(crate(session, _files(folder))))
     return (DATA_PACKAGE, METADATA)
 
 

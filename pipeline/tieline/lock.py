@@ -51,14 +51,24 @@ class Hold:
             )
 
 
+# What this process holds, by folder. A thread of its own that wrote the same folder would have to wait elsewhere.
+_HELD: dict[Path, Hold] = {}
+
+
 @contextmanager
 def locked(run_folder: Path) -> Iterator[Hold]:
     """Holds the folder's lock and removes what dead runs left half-written.
 
-    Raises InputError when the folder is sealed, another live process holds it, or it cannot be written to.
+    Who holds it already, such as a run that goes on to write its report, holds it once more. Raises InputError
+    when the folder is sealed, another live process holds it, or it cannot be written to.
     """
     refuse_if_sealed(run_folder)
+    held = _HELD.get(run_folder.resolve())
+    if held is not None and held.ours():
+        yield held
+        return
     hold = _acquire(run_folder / LOCK_NAME)
+    _HELD[run_folder.resolve()] = hold
     stop = threading.Event()
     beat = threading.Thread(target=_beat, args=(hold, stop), daemon=True, name="tieline-lock")
     try:
@@ -67,6 +77,7 @@ def locked(run_folder: Path) -> Iterator[Hold]:
         yield hold
     finally:
         stop.set()
+        _HELD.pop(run_folder.resolve(), None)
         with suppress(OSError):
             if hold.ours():
                 hold.path.unlink()

@@ -19,7 +19,7 @@ from tieline.errors import DefectError, InputError, Problem
 from tieline.lock import locked, refuse_if_sealed
 from tieline.manifest import write_manifest
 from tieline.plan import Verdict, judge, read_records, stage_fingerprint, table_path
-from tieline.provenance import bytes_digest, content_digest
+from tieline.provenance import ColumnDigests, bytes_digest, content_digest
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
 from tieline.stages import NAMES, STAGES, Stage
@@ -47,18 +47,20 @@ class StageReport:
 
 @dataclass
 class Workspace:
-    """What is known so far in one run: input files, records, content digests, tables in memory."""
+    """What is known so far in one run: input files, digests of files and tables, tables in memory."""
 
     session: Session
     files: dict[str, InputFile]
-    digests: dict[str, str] = field(default_factory=dict)
+    input_digests: dict[str, str]
+    digests: dict[str, str]
     tables: dict[str, pa.Table] = field(default_factory=dict)
+    columns: ColumnDigests = field(default_factory=ColumnDigests)
 
     def table(self, name: str) -> pa.Table:
         if name not in self.tables:
             path = table_path(self.session.run_folder, name)
             table = read_table(path, name)
-            if content_digest(table) != self.digests[name]:
+            if content_digest(table, self.columns) != self.digests[name]:
                 raise InputError(damaged(path, "its contents are not those it was written with"))
             self.tables[name] = table
         return self.tables[name]
@@ -89,12 +91,14 @@ def run(
     fresh: bool = False,
     progress: Progress = lambda stage, state: None,
     planned: Callable[[list[Verdict]], None] = lambda verdicts: None,
+    after: Callable[[int], None] = lambda n_stages: None,
 ) -> list[StageReport]:
     """Brings the run folder up to date and returns what was done, stage by stage.
 
     `only` recomputes one stage from current files before it; `until` stops after a stage; `fresh`
-    recomputes everything. `planned` is told the verdicts before any work is done. Raises InputError with
-    every problem found, and then has changed nothing.
+    recomputes everything. `planned` is told the verdicts before any work is done; `after` is called with the
+    number of stages once they are written, while the folder is still locked. Raises InputError with every
+    problem found, and then has changed nothing.
     """
     stages = _selected(only, until)
     refuse_if_sealed(session.run_folder)
@@ -105,7 +109,8 @@ def run(
             reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
             hold.check()
             pending.commit()
-        write_manifest(work.session, {path: file.data for path, file in work.files.items()})
+        write_manifest(work.session, work.input_digests)
+        after(len(reports))
     return reports
 
 
@@ -194,7 +199,8 @@ def _workspace(session: Session) -> Workspace:
     except InputError:
         problems = _problems_of_files(STAGES, session, files)
         raise InputError([*problems, *_problems_of_tables(session, files)]) from None
-    return Workspace(named, files, {path: bytes_digest(file.data) for path, file in files.items()})
+    digests = {path: bytes_digest(file.data) for path, file in files.items()}
+    return Workspace(named, files, digests, dict(digests))
 
 
 def _with_material_names(session: Session, files: dict[str, InputFile]) -> Session:
@@ -263,7 +269,7 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
         "remarks": [{"message": remark.message, "place": remark.place} for remark in result.remarks],
     }
     for name in reversed(stage.outputs):
-        work.digests[name] = content_digest(result.tables[name])
+        work.digests[name] = content_digest(result.tables[name], work.columns)
         if pending is not None:
             path = table_path(work.session.run_folder, name)
             pending.add(path, name, result.tables[name], {**record, "content": work.digests[name]})
@@ -283,12 +289,13 @@ def _check_result(stage: Stage, result: StageResult, work: Workspace) -> None:
 
 
 def _forget(stage: Stage, work: Workspace) -> None:
-    """Drops tables from memory that no later stage reads."""
-    later = {
-        name for other in STAGES[NAMES.index(stage.name) + 1 :] for name in (*other.inputs, other.counted)
-    }
-    for name in [name for name in work.tables if name not in later]:
-        del work.tables[name]
+    """Drops tables and input files from memory that no later stage reads."""
+    stages = STAGES[NAMES.index(stage.name) + 1 :]
+    later = {name for other in stages for name in (*other.inputs, other.counted)}
+    work.tables = {name: table for name, table in work.tables.items() if name in later}
+    work.columns.keep(work.tables.values())
+    files = {path for other in stages for path in other.files(work.session.settings)}
+    work.files = {path: file for path, file in work.files.items() if path in files}
 
 
 def _recorded_digests(records: dict[str, dict[str, Any] | None]) -> dict[str, str]:

@@ -21,8 +21,9 @@ from tieline.plan import Verdict, table_path
 from tieline.runner import StageReport, tables_of
 from tieline.stages import STAGES
 from tieline.storage import read_table
+from tieline.terminal_console import console as new_console
+from tieline.terminal_console import printable
 from tieline.terminal_results import partition_tables
-from tieline.terminal_summary import printable as printable
 
 STATE_STYLES = {"current": "green", "stale": "yellow", "missing": "yellow", "waiting": "cyan"}
 MOST_REMARKS = 12
@@ -34,7 +35,7 @@ Progress = tuple[Callable[[str, str], None], Callable[[Sequence[Verdict]], None]
 @contextmanager
 def progress(quiet: bool) -> Iterator[Progress]:
     """Callbacks for the running stage, shown on a terminal only, and for the plan before any work."""
-    console = Console(stderr=True, highlight=False, soft_wrap=True)
+    console = new_console(stderr=True, soft_wrap=True)
     if quiet:
         yield lambda stage, state: None, lambda verdicts: None
     elif not console.is_terminal:
@@ -58,7 +59,7 @@ def _show_plan(console: Console, verdicts: Sequence[Verdict]) -> None:
 
 def show_problems(problems: Sequence[Problem]) -> None:
     """Every problem on standard error, grouped by file in the order found."""
-    console = Console(stderr=True, highlight=False, soft_wrap=True)
+    console = new_console(stderr=True, soft_wrap=True)
     count = len(problems)
     console.print(Text(f"{count} problem{'s' if count > 1 else ''}; nothing was written.", style="bold red"))
     for problem in sorted(problems, key=lambda one: (one.file or "", one.row or 0)):
@@ -68,6 +69,19 @@ def show_problems(problems: Sequence[Problem]) -> None:
         console.print(Text(f"More on this: tieline help {page}", style="dim"))
 
 
+def show_machine_failure(error: OSError | MemoryError) -> None:
+    """What stopped the program that is no fault of the input: a full disk, a folder that vanished, no memory."""
+    what = error.strerror if isinstance(error, OSError) else "out of memory"
+    place = f": {error.filename}" if isinstance(error, OSError) and error.filename is not None else ""
+    out = new_console(stderr=True, soft_wrap=True)
+    out.print(Text(f"stopped: {printable(what or error)}{printable(place)}", style="bold red"))
+    out.print(
+        Text(
+            "Every result file is whole; `tieline status` tells what is current, and the next run completes it."
+        )
+    )
+
+
 def show_pages(titles: Mapping[str, str]) -> None:
     """Names and headings of the documentation's pages."""
     table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
@@ -75,14 +89,14 @@ def show_pages(titles: Mapping[str, str]) -> None:
         table.add_column(name)
     for name, title in titles.items():
         table.add_row(name, title)
-    console = Console(highlight=False)
+    console = new_console()
     console.print(table)
     console.print("tieline help PAGE shows one of them.")
 
 
 def show_page(markdown: str) -> None:
     """A page for the terminal; its plain Markdown where the output is not one."""
-    console = Console(highlight=False)
+    console = new_console()
     if console.is_terminal:
         from rich.markdown import Markdown
 
@@ -98,7 +112,7 @@ def show_run(
 
     `everything`, or a run that stopped early: stages, remarks and every D. `files`: what the report wrote.
     """
-    console = Console(highlight=False)
+    console = new_console()
     complete = reports[-1].verdict.stage == STAGES[-1].name
     if complete and not everything:
         terminal_summary.show_summary(console, session, tables_of(session, terminal_summary.NEEDED), files)
@@ -151,7 +165,7 @@ def show_status(session: Session, verdicts: Sequence[Verdict]) -> None:
     for verdict in verdicts:
         state = Text(verdict.state, style=STATE_STYLES[verdict.state])
         table.add_row(verdict.stage, state, printable("; ".join(verdict.reasons)))
-    console = Console(highlight=False)
+    console = new_console()
     console.print(table)
     for text in _recorded_overrides(session):
         console.print(Text(f"the results were made with --set {printable(text)}"))
@@ -159,7 +173,7 @@ def show_status(session: Session, verdicts: Sequence[Verdict]) -> None:
         console.print(Text(f"sealed by {SEAL_NAME}: nothing is written to {session.run_folder}"))
 
 
-def status_as_json(session: Session, verdicts: Sequence[Verdict]) -> dict[str, Any]:
+def status_as_json(session: Session, verdicts: Sequence[Verdict], report: Verdict) -> dict[str, Any]:
     return {
         "session": session.settings.session,
         "run_folder": str(session.run_folder),
@@ -167,6 +181,7 @@ def status_as_json(session: Session, verdicts: Sequence[Verdict]) -> dict[str, A
         "overrides_of_the_results": _recorded_overrides(session),
         "sealed": (session.run_folder / SEAL_NAME).exists(),
         "stages": [vars(verdict) for verdict in verdicts],
+        "report": {"state": report.state, "reasons": list(report.reasons)},
     }
 
 
@@ -176,14 +191,14 @@ def _recorded_overrides(session: Session) -> list[str]:
 
 def show_check(session: Session, reports: Sequence[StageReport]) -> None:
     """That nothing stands in the way, with the remarks a run would make."""
-    console = Console(highlight=False)
+    console = new_console()
     console.print(Text(f"{session.path}: no problem found; nothing was written.", style="green"))
     _show_remarks(console, reports)
 
 
 def show_start(path: Path, questions: Sequence[str]) -> None:
     """Where the configuration is and what is left to answer."""
-    console = Console(highlight=False, soft_wrap=True)
+    console = new_console(soft_wrap=True)
     console.print(Text(f"Wrote {printable(path)}", style="bold"))
     if questions:
         console.print(f"{len(questions)} questions are left; each is a line `# decide:` there:")

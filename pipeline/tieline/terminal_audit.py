@@ -10,7 +10,8 @@ from rich.table import Table
 from rich.text import Text
 
 from tieline.auditing.audit import Audit
-from tieline.terminal import printable
+from tieline.terminal_console import console as new_console
+from tieline.terminal_console import printable
 
 MOST_LINES = 30
 SHOWN_OF_DIGEST = 16
@@ -18,7 +19,7 @@ SHOWN_OF_DIGEST = 16
 
 def show_audit(audit: Audit) -> None:
     """Differences first; then what was left out, settings, reference materials and labels."""
-    console = Console(highlight=False)
+    console = new_console()
     console.print(Text(f"Audit of {audit.run_folder}, session {audit.session or 'unknown'}", style="bold"))
     _show_differences(console, audit)
     for note in audit.notes:

@@ -10,14 +10,15 @@ from rich.table import Table
 from rich.text import Text
 
 from tieline.notation import written
-from tieline.terminal import printable
+from tieline.terminal_console import console as new_console
+from tieline.terminal_console import printable
 
 MOST_ROWS = 30
 
 
 def show_comparison(found: Mapping[str, Any]) -> None:
     """Settings, inputs, spots and the rule that left them out, D's by size of change, classes."""
-    console = Console(highlight=False)
+    console = new_console()
     console.print(Text(f"A  {found['a']}\nB  {found['b']}", style="bold"))
     _lines(console, "Versions (A → B)", found["versions"])
     _lines(console, "Settings (A → B)", found["settings"])

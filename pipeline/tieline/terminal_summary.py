@@ -13,6 +13,7 @@ from tieline.configuration import Session
 from tieline.report.attention import attention
 from tieline.report.left_out import by_reason
 from tieline.report.spots import spot_use
+from tieline.terminal_console import printable
 from tieline.terminal_results import brief_lines
 
 MOST_THINGS = 3
@@ -38,11 +39,6 @@ def show_summary(
             shown.add_row(f"{number}", Text(printable(one.text)))
         console.print(shown)
     _show_files(console, session, files, len(things) - MOST_THINGS)
-
-
-def printable(text: object) -> str:
-    """The text without control characters, which a table from a stranger could use to drive the terminal."""
-    return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in str(text))
 
 
 def _spots(tables: Mapping[str, pa.Table]) -> Text:

@@ -5,12 +5,12 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from typing import Any
 
-from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 from rich.tree import Tree
 
-from tieline.terminal import printable
+from tieline.terminal_console import console as new_console
+from tieline.terminal_console import printable
 
 Row = Mapping[str, Any]
 DIGITS = 7
@@ -18,7 +18,7 @@ DIGITS = 7
 
 def show_trace(page: Row) -> None:
     """Prints the tree of one D."""
-    console = Console(highlight=False)
+    console = new_console()
     console.print(trace_tree(page))
 
 

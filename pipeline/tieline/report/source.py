@@ -77,8 +77,12 @@ def read_source(session: Session) -> Source:
 def read_finished(session: Session) -> Source:
     """As `read_source`, for a run folder that is known to be current."""
     names = [name for stage in STAGES for name in stage.outputs]
+    records = finished_records(session)
     tables = {name: read_table(table_path(session.run_folder, name), name) for name in names}
-    return Source(tables, finished_records(session), session.settings, _filed_rulings(session))
+    if finished_records(session) != records:
+        message = "was written by another run while it was read."
+        raise InputError(Problem(message, str(session.run_folder), remedy="Try again."))
+    return Source(tables, records, session.settings, _filed_rulings(session))
 
 
 def finished_records(session: Session) -> dict[str, Mapping[str, Any]]:

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from functools import partial
 from pathlib import Path
-from typing import TYPE_CHECKING, BinaryIO
+from typing import TYPE_CHECKING
 
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.lock import locked
+from tieline.plan import Verdict
 from tieline.report.csv_files import csv_bytes
 from tieline.report.latex import partition_document
 from tieline.report.left_out import left_out_sheet
@@ -28,14 +28,15 @@ from tieline.report.source import Source, finished_records, read_finished, read_
 from tieline.report.spots import SpotUse, spot_use
 from tieline.report.values_sheet import spots_sheet
 from tieline.report.workbook import workbook_bytes
-from tieline.storage import write_atomically
+from tieline.storage import Pending
 
 if TYPE_CHECKING:
     from tieline.configuration import Session
 
 
+PAGE = "report.html"
 FILES = (
-    "report.html",
+    PAGE,
     "partition_coefficients.csv",
     "partition_coefficients.xlsx",
     "partition_coefficients.tex",
@@ -64,11 +65,24 @@ def write_report(session: Session, figures: Path | None = None) -> list[Path]:
 
 def refresh_report(session: Session) -> None:
     """Right after a run: writes the report unless the one in the run folder is of the same tables."""
-    page_path = session.run_folder / "report.html"
-    missing = [name for name in FILES if not (session.run_folder / name).exists()]
-    if missing or not _holds(page_path, stamp(finished_records(session), session.settings)):
+    if report_verdict(session).state != "current":
         files = report_files(read_finished(session))
         _write(session, {session.run_folder / name: data for name, data in files.items()})
+
+
+def report_verdict(session: Session) -> Verdict:
+    """Whether the report that lies in the run folder was made from the stage files that lie there."""
+    missing = [name for name in FILES if not (session.run_folder / name).exists()]
+    if len(missing) == len(FILES):
+        return Verdict("report", "missing")
+    if missing:
+        return Verdict("report", "stale", tuple(f"{name} is missing" for name in missing))
+    records = finished_records(session)
+    if not all("fingerprint" in record for record in records.values()):
+        return Verdict("report", "stale", ("not all results it was made from are here",))
+    if not _holds(session.run_folder / PAGE, stamp(records, session.settings)):
+        return Verdict("report", "stale", ("it was made from other results or with other settings",))
+    return Verdict("report", "current")
 
 
 def _holds(path: Path, text: str) -> bool:
@@ -78,14 +92,13 @@ def _holds(path: Path, text: str) -> bool:
 
 
 def _write(session: Session, made: Mapping[Path, bytes]) -> None:
-    with locked(session.run_folder):
+    """All files or, where that is interrupted half-way, no page: the page tells which results the others are of."""
+    with locked(session.run_folder), Pending() as pending:
         for path, data in made.items():
             path.parent.mkdir(parents=True, exist_ok=True)
-            write_atomically(path, partial(_write_bytes, data))
-
-
-def _write_bytes(data: bytes, stream: BinaryIO) -> None:
-    stream.write(data)
+            pending.add_bytes(path, data)
+        (session.run_folder / PAGE).unlink(missing_ok=True)
+        pending.commit()
 
 
 def report_files(source: Source) -> Mapping[str, bytes]:
@@ -104,7 +117,7 @@ def report_files(source: Source) -> Mapping[str, bytes]:
         "methods.txt": paragraph.text().encode(),
         "methods.tex": paragraph.latex().encode(),
         "references.bib": bibliography(paragraph.keys()).encode(),
-        "report.html": page(source, spots, left_out, paragraph.text()).encode(),
+        PAGE: page(source, spots, left_out, paragraph.text()).encode(),  # the last, see `_write`
     }
 
 
