@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from itertools import pairwise
+from itertools import compress
 
 import numpy as np
 import numpy.typing as npt
@@ -102,10 +102,9 @@ def label_codes(array: pa.DictionaryArray) -> Labels:
     codes, texts = indices.to_numpy(zero_copy_only=False), array.dictionary.to_pylist()
     used = np.zeros(len(texts) + 1, dtype=np.bool_)
     used[codes] = True  # -1, null, marks the extra place at the end
-    in_use = [text for text, is_used in zip(texts, used, strict=False) if is_used]
-    if all(before < after for before, after in pairwise(in_use)) and len(in_use) == len(texts):
+    in_use = sorted(set(compress(texts, used)))
+    if in_use == texts:
         return Labels(codes.astype(np.int64), tuple(texts))
-    in_use = sorted(set(in_use))
     place = {text: position for position, text in enumerate(in_use)}
     places = np.array([*(place.get(text, -1) for text in texts), -1], dtype=np.int64)
     return Labels(places[codes], tuple(in_use))

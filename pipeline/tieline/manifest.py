@@ -11,8 +11,6 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-import pyarrow as pa
-
 from tieline import __version__
 from tieline.configuration import Session
 from tieline.plan import read_records, table_path
@@ -24,14 +22,16 @@ MANIFEST = "run.json"
 EFFECTIVE = "effective.toml"
 
 
-def write_manifest(session: Session, inputs: Mapping[str, pa.Buffer]) -> None:
-    """Records what lies in the run folder. No time and no absolute path: same results, same bytes."""
+def write_manifest(session: Session, inputs: Mapping[str, str]) -> None:
+    """Records what lies in the run folder. No time and no absolute path: same results, same bytes.
+
+    inputs: the digest of every input file by its path in the configuration.
+    """
     import os
 
     settings = effective_toml(session)
     write_text(session.run_folder / EFFECTIVE, settings)
     known = read_manifest(session.run_folder).get("inputs", {})
-    digests = {path: bytes_digest(data) for path, data in inputs.items()}
     try:
         configuration = Path(os.path.relpath(session.path, session.run_folder)).as_posix()
     except ValueError:  # another drive on Windows: there is no relative way there
@@ -44,9 +44,9 @@ def write_manifest(session: Session, inputs: Mapping[str, pa.Buffer]) -> None:
         "overrides": list(session.overrides),
         "effective": {EFFECTIVE: bytes_digest(settings.encode())},
         "inputs": {
-            path: digests.get(path) or known[path]
+            path: inputs.get(path) or known[path]
             for path in _input_paths(session)
-            if path in digests or path in known
+            if path in inputs or path in known
         },
         "stages": {
             stage.name: entry for stage in STAGES if (entry := _stage_entry(session.run_folder, stage))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Mapping
+from collections.abc import Hashable, Iterable, Mapping
 from typing import Any
 
 import numpy as np
@@ -34,14 +34,51 @@ def fingerprint(stage: str, revision: int, settings: Mapping[str, Any], inputs: 
     return bytes_digest(json_text(identity).encode())
 
 
-def content_digest(table: pa.Table) -> str:
+class ColumnDigests:
+    """Digests of columns in memory, so that one which several tables share is digested once."""
+
+    def __init__(self) -> None:
+        self._known: dict[Hashable, tuple[pa.ChunkedArray, str]] = {}
+
+    def of(self, column: pa.ChunkedArray) -> str:
+        """The column's digest. The column is kept in memory, for its place there is what it is known by."""
+        key = _place(column)
+        if key not in self._known:
+            self._known[key] = column, column_digest(column)
+        return self._known[key][1]
+
+    def keep(self, tables: Iterable[pa.Table]) -> None:
+        """Forgets all columns but those of some tables."""
+        places = {_place(column) for table in tables for column in table.columns}
+        self._known = {place: known for place, known in self._known.items() if place in places}
+
+
+def _place(column: pa.ChunkedArray) -> Hashable:
+    """Where a column lies in memory."""
+    return tuple(
+        (str(part.type), part.offset, len(part), *(_buffer_place(buffer) for buffer in part.buffers()))
+        for chunk in column.chunks
+        for part in _parts(chunk)
+    )
+
+
+def _buffer_place(buffer: pa.Buffer | None) -> tuple[int, int] | None:
+    return None if buffer is None else (buffer.address, buffer.size)
+
+
+def _parts(array: pa.Array) -> list[pa.Array]:
+    return [array.indices, array.dictionary] if pa.types.is_dictionary(array.type) else [array]
+
+
+def content_digest(table: pa.Table, known: ColumnDigests | None = None) -> str:
     """SHA-256 of a table's names, types and values, whatever its chunks, dictionaries and metadata.
 
     The same for a table in memory and read back from its Parquet file. Values hidden under nulls and
     unused dictionary entries do not count.
     """
+    known = known or ColumnDigests()
     columns = [
-        [field.name, str(field.type), column_digest(column)]
+        [field.name, str(field.type), known.of(column)]
         for field, column in zip(table.schema, table.columns, strict=True)
     ]
     return bytes_digest(json_text([table.num_rows, columns]).encode())
