@@ -179,7 +179,7 @@ def main(arguments: list[str] | None = None) -> int:
         for fraction in (0.002,) if chosen.quick else (0.0005, 0.002, 0.01):
             for label in labels:
                 seed += 1
-                figures = overlap_coverage(crystal, label, fraction, max(cases // 2, 20), seed)
+                figures = overlap_coverage(crystal, label, fraction, max(cases // 2, 1), seed)
                 print(line(f"{crystal.name}, overlap {fraction:.2%}, error {label}", figures), flush=True)
     return 0
 

@@ -77,7 +77,7 @@ def fit_series(
         used = {}
         fit = fit_curve(series.data, temperature_K, confidence=confidence)
     held = "; ".join(f"{name} {prior.value:.4g} ± {prior.sd:.2g} beforehand" for name, prior in used.items())
-    comparison = compare_overlap(series.data, temperature_K, priors=used, confidence=confidence)
+    comparison = compare_overlap(series.data, temperature_K, plain=fit, priors=used, confidence=confidence)
     return CurveResult(series, fit, held, comparison)
 
 

@@ -193,7 +193,11 @@ def solve(
     starts = _starts(data, temperature_K, free, base)
     problem = Problem(data, temperature_K, data.covariance_at(np.maximum(data.value, 0.0)), priors)
     for _ in range(4):
-        found = minimise(problem.residuals, starts, np.tile(free, (len(starts), 1)), *problem.bounds)
+        found = minimise(
+            problem.residuals, starts, np.tile(free, (len(starts), 1)), *problem.bounds, iterations=40
+        )
+        leading = found.theta[np.argsort(found.sum_of_squares, kind="stable")[:3]]
+        found = minimise(problem.residuals, leading, np.tile(free, (len(leading), 1)), *problem.bounds)
         best = int(np.argmin(found.sum_of_squares))
         found = Minimum(found.theta[[best]], found.sum_of_squares[[best]], found.converged[[best]])
         if data.relative_covariance is None:
@@ -203,7 +207,7 @@ def solve(
         if np.allclose(updated, problem.covariance, rtol=1e-6, atol=0.0):
             break
         problem = Problem(data, temperature_K, updated, priors)
-        starts = np.concatenate([found.theta, starts]) if len(starts) == 1 else found.theta
+        starts = found.theta
     return problem, found
 
 

@@ -15,7 +15,9 @@ from tieline.statistics.least_squares import BoolArray, FloatArray, covariance, 
 FITTED, CANNOT_TELL = "fitted", "cannot tell"
 _EXCESS = 0.05
 _MOST = 100.0
-_SUM_SD = 1e-6  # the sum is held at one to within this: far below any error of a proportion
+_SUM_SD = (
+    1e-4  # the sum is held at one to within this: far below any error of a proportion, and quick to solve
+)
 _ABSENT = 1e-9
 
 

@@ -1,0 +1,161 @@
+"""Mass balance of experiments from tables, and bulk partition coefficients."""
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from assess.frames import partition
+from tieline.assess.bulk import bulk_partition
+from tieline.assess.mass_balance import mass_balance_tables
+
+# invented element contents, ppm
+CONTENTS = {
+    "olivine": {"Si": 187_000, "Mg": 290_000, "Fe": 80_000, "Ca": 1_500, "Al": 300, "Ti": 60, "Na": 50},
+    "clinopyroxene": {"Si": 240_000, "Mg": 100_000, "Fe": 45_000, "Ca": 150_000, "Al": 20_000, "Ti": 3_000, "Na": 2_000},
+    "glass": {"Si": 233_000, "Mg": 45_000, "Fe": 75_000, "Ca": 85_000, "Al": 80_000, "Ti": 9_000, "Na": 20_000},
+}  # fmt: skip
+TRUTH = {"olivine": 0.15, "clinopyroxene": 0.25, "glass": 0.60}
+
+
+def means(loss: float = 0.0, error: float = 0.005, seed: int = 1, phases=tuple(CONTENTS)) -> pd.DataFrame:
+    rng = np.random.default_rng(seed)
+    rows = []
+    for phase in phases:
+        for element, ppm in CONTENTS[phase].items():
+            true = ppm * (1 - loss if element == "Fe" else 1)
+            value = true * (1 + error * rng.standard_normal())
+            rows.append(
+                {
+                    "experiment": "A",
+                    "phase": phase,
+                    "element": element,
+                    "mean_ppm": value,
+                    "se_ppm": error * true,
+                }
+            )
+    return pd.DataFrame(rows)
+
+
+def start(**change) -> pd.DataFrame:
+    rows = []
+    for element in CONTENTS["glass"]:
+        value = sum(part * CONTENTS[phase][element] for phase, part in TRUTH.items())
+        rows.append({"experiment": "A", "element": element, "value_ppm": value, "sd_ppm": 0.005 * value})
+    table = pd.DataFrame(rows)
+    for element, factor in change.items():
+        table.loc[table["element"] == element, "value_ppm"] *= factor
+    return table
+
+
+def test_proportions_hold_the_truth():
+    found = mass_balance_tables(means(), start())
+    rows = found.proportions.set_index("phase")
+    for phase, truth in TRUTH.items():
+        assert rows.loc[phase, "proportion_lo"] < truth < rows.loc[phase, "proportion_hi"]
+        assert rows.loc[phase, "unweighted"] == pytest.approx(truth, abs=0.03)
+    checks = found.checks.set_index("subject")
+    assert checks.loc["chi-square over degrees of freedom", "verdict"] == "consistent"
+    assert checks.loc["sum of squared residuals, wt%²", "verdict"] == "consistent"
+    assert checks.loc["Fe loss", "verdict"] == "consistent"
+
+
+def test_sum_of_squares_is_that_of_oxides():
+    found = mass_balance_tables(means(error=1e-6), start(Si=1.02), losable=())
+    silica = 0.02 * start().set_index("element").loc["Si", "value_ppm"] / 0.46744 / 1e4  # 0.46744 Si in SiO2
+    assert 0 < found.checks.set_index("subject").loc["sum of squared residuals, wt%²", "value"] < silica**2
+
+
+def test_lost_iron_is_found_and_does_not_move_the_proportions():
+    found = mass_balance_tables(means(loss=0.2), start())
+    loss = found.residuals.set_index("element").loc["Fe"]
+    assert loss["loss_lo"] < 0.2 < loss["loss_hi"]
+    assert not loss["use"]
+    check = found.checks.set_index("subject").loc["Fe loss"]
+    assert check["verdict"] == "differs"
+    assert "lost" in check["detail"]
+    kept = mass_balance_tables(means(), start()).proportions["proportion"]
+    np.testing.assert_allclose(found.proportions["proportion"], kept, rtol=1e-6)
+
+
+def test_iron_kept_in_the_fit_spoils_it():
+    found = mass_balance_tables(means(loss=0.2), start(), losable=("Na",))
+    assert found.checks.set_index("subject").loc["chi-square over degrees of freedom", "verdict"] == "differs"
+
+
+def test_a_missing_phase_is_hinted_at():
+    found = mass_balance_tables(means(phases=("olivine", "glass")), start())
+    words = found.checks.set_index("subject").loc["chi-square over degrees of freedom", "detail"]
+    assert "Phases rich in Ca" in words
+    assert "may be missing" in words
+
+
+def test_unusable_elements_are_named():
+    table = means()
+    table.loc[(table["phase"] == "olivine") & (table["element"] == "Ti"), "mean_ppm"] = np.nan
+    table.loc[(table["phase"] == "glass") & (table["element"] == "Al"), "se_ppm"] = np.nan
+    found = mass_balance_tables(table, start())
+    words = found.checks["detail"][0]
+    assert "Ti not used: not measured in olivine" in words
+    assert "Al not used: a mean has no standard error" in words
+    with_floor = mass_balance_tables(table, start(), relative_sd=0.01)
+    assert "Al" in set(with_floor.residuals["element"])
+
+
+def test_too_few_elements_say_so():
+    found = mass_balance_tables(means(), start()[lambda table: table["element"].isin(["Si", "Mg"])])
+    assert found.checks["verdict"].tolist() == ["cannot tell"]
+    assert "cannot determine" in found.checks["detail"][0]
+    assert found.proportions["proportion"].isna().all()
+
+
+def test_no_phases_measured():
+    found = mass_balance_tables(means().iloc[:0], start())
+    assert found.checks["verdict"].tolist() == ["cannot tell"]
+
+
+def modes():
+    return {
+        "A": (("clinopyroxene", "glass", "olivine"), np.array([0.25, 0.6, 0.15]), np.diag([1e-4, 1e-4, 1e-4]))
+    }
+
+
+def bulk_table(**olivine):
+    return partition(
+        [
+            {"alpha": "olivine", "element": "La", "D": 0.001} | olivine,
+            {"alpha": "clinopyroxene", "element": "La", "D": 0.08},
+        ]
+    )
+
+
+def test_bulk_D_weights_by_mode():
+    found = bulk_partition(bulk_table(), modes(), "glass").iloc[0]
+    assert found["kind"] == "value"
+    assert found["bulk_D"] == pytest.approx((0.15 * 0.001 + 0.25 * 0.08) / 0.4)
+    share = 0.25 / 0.4
+    slope = np.array([0.08, 0.001]) - found["bulk_D"]
+    by_hand = np.sqrt(
+        (share * 0.05 * 0.08) ** 2 + (0.15 / 0.4 * 0.05 * 0.001) ** 2 + np.sum(slope**2) * 1e-4 / 0.4**2
+    )
+    assert found["bulk_D_sd"] == pytest.approx(by_hand)
+
+
+def test_a_shared_melt_adds_up():
+    alone = bulk_partition(bulk_table(D=0.08, D_sd=0.004), modes(), "glass").iloc[0]
+    shared = bulk_partition(bulk_table(D=0.08, D_sd=0.004), modes(), "glass", {("A", "La"): 0.05}).iloc[0]
+    assert alone["bulk_D_sd"] < shared["bulk_D_sd"]
+    assert shared["bulk_D_sd"] == pytest.approx(0.004)
+
+
+def test_limits_and_gaps_do_not_become_numbers():
+    limit = bulk_partition(
+        bulk_table(kind="upper-limit", D=np.nan, D_sd=np.nan, D_hi=0.01), modes(), "glass"
+    ).iloc[0]
+    assert limit["kind"] == "bounds"
+    assert np.isnan(limit["bulk_D"])
+    assert limit["bulk_D_lo"] < 0.25 / 0.4 * 0.08 < limit["bulk_D_hi"]
+    gap = bulk_partition(bulk_table().iloc[1:], modes(), "glass").iloc[0]
+    assert gap["kind"] == "undetermined"
+    assert "olivine" in gap["reason"]
+    unsure = bulk_partition(bulk_table(kind="undetermined"), modes(), "glass").iloc[0]
+    assert unsure["kind"] == "undetermined"
