@@ -25,6 +25,7 @@ from tieline.configuration import load
 from tieline.errors import InputError
 from tieline.manifest import manifest_text
 from tieline.provenance import bytes_digest, content_digest
+from tieline.report.write import refresh_report
 from tieline.storage import METADATA_KEY
 
 EXPERIMENTS = ("EM-02", "EM-05")
@@ -265,6 +266,17 @@ def test_stage_recomputed_alone_leaves_the_later_ones_stale(own: Path):
     runner.run(session)
     assert audit(own).differences == []
     assert audit(own).overrides == [TRIED]
+
+
+def test_edited_report_and_report_of_other_results(own: Path):
+    session = load(configs(own) / "ember.toml")
+    refresh_report(session)
+    assert audit(own).differences == []
+    path = own / "partition_coefficients.csv"
+    path.write_bytes(path.read_bytes().replace(b"1", b"2", 1))
+    assert told(audit(own)) == {"partition_coefficients.csv": "edited"}
+    runner.run(load(session.path, overrides=["partition.confidence=0.9"]))
+    assert told(audit(own)) == {"report.html": "stale"}
 
 
 def test_later_edit_of_the_configuration_is_a_note_and_no_difference(own: Path):

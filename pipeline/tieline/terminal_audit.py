@@ -42,7 +42,7 @@ def _show_differences(console: Console, audit: Audit) -> None:
         text = (
             f"No difference: {checked['stage_files']} stage files, {checked['inputs']} inputs, the settings in effect "
             f"and the manifest fit their digests, the accounts add up, and {checked['recomputed_alike']} stage files "
-            "came out the same when recomputed."
+            "came out the same when recomputed; so did the report, where there is one."
         )
         console.print(Text(text, style="green"))
         return

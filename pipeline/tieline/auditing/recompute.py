@@ -4,17 +4,18 @@ from __future__ import annotations
 
 import tempfile
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
-from tieline import runner
+from tieline import __version__, runner
 from tieline.arrays import flags, labels, numbers
 from tieline.auditing.contents import compare_tables
 from tieline.auditing.folder import Difference, RunFolder, read_stage_file
 from tieline.configuration import Session
 from tieline.errors import InputError
 from tieline.plan import table_path
+from tieline.settings import SessionSettings
 from tieline.stages import NAMES, STAGES
 
 
@@ -52,6 +53,7 @@ def recompute(folder: RunFolder) -> Recomputation:
             result.why_not = f"{error.problems[0]}{more}"
             return result
         _compare_files(folder, session.run_folder, result)
+        result.differences += _report_differences(folder, session)
     ledgers = {report.verdict.stage: vars(report.ledger) for report in reports}
     result.differences += _ledger_differences(folder, ledgers)
     result.done = True
@@ -74,6 +76,51 @@ def _compare_files(folder: RunFolder, made: Path, result: Recomputation) -> None
                 result.last_digits.append(f"{name}.parquet")
             else:
                 result.differences.append(Difference("recomputed", f"{name}.parquet", comparison.detail))
+
+
+def _report_differences(folder: RunFolder, again: Session) -> list[Difference]:
+    """Report files that are not what the recomputed results give; `again` is the recomputed run."""
+    from tieline.report.write import FILES, report_verdict
+
+    present = {name: (folder.path / name).read_bytes() for name in FILES if (folder.path / name).exists()}
+    complete = all(stage.name in folder.files for stage in STAGES)
+    if not present or not complete or folder.manifest.get("tieline") != __version__:
+        return []
+    verdict = report_verdict(replace(again, run_folder=folder.path))
+    if verdict.state != "current":
+        words = f"the report does not belong to these results: {'; '.join(verdict.reasons)}"
+        return [Difference("stale", next(iter(present)), words)]
+    wrong = _unlike(present, again)
+    return [
+        Difference("edited", name, "is not what the results give: changed after the report was written")
+        for name in wrong
+    ]
+
+
+def _unlike(present: Mapping[str, bytes], again: Session) -> list[str]:
+    """Report files that differ from those of the recomputed results."""
+    from tieline.report.source import read_finished
+    from tieline.report.write import report_files
+
+    # A run fills in the names of the reference materials where the configuration leaves them to the accepted
+    # values; the report lists the configuration's own settings, and which it was can no longer be told.
+    possible = []
+    for settings in (_without_material_names(again.settings), again.settings):
+        made = report_files(read_finished(replace(again, settings=settings)))
+        possible.append([name for name, data in present.items() if made.get(name) != data])
+        if not possible[-1]:
+            break
+    return min(possible, key=len)
+
+
+def _without_material_names(settings: SessionSettings) -> SessionSettings:
+    materials = settings.ingest.reference_materials
+    if materials.path is None:
+        return settings
+    ingest = settings.ingest.model_copy(
+        update={"reference_materials": materials.model_copy(update={"names": {}})}
+    )
+    return settings.model_copy(update={"ingest": ingest})
 
 
 def _ledger_differences(folder: RunFolder, ledgers: Mapping[str, Mapping[str, Any]]) -> list[Difference]:
