@@ -86,7 +86,7 @@ def test_a_prior_steps_in_and_is_named():
     assert full["E_GPa"] > 250
 
 
-def test_one_value_with_everything_held_gives_D0_only_with_r0():
+def test_one_value_with_everything_held_gives_a_level_only_with_r0():
     table = partition([{"element": "Y", "D": 0.5}], alpha="clinopyroxene")
     series = collect_series(table, {}, 3, 8)
     assert fit_series(series, 1573.15).fit.verdict == "cannot tell"

@@ -128,7 +128,7 @@ def bulk_table(**olivine):
     )
 
 
-def test_bulk_D_weights_by_mode():
+def test_bulk_coefficient_weights_by_mode():
     found = bulk_partition(bulk_table(), modes(), "glass").iloc[0]
     assert found["kind"] == "value"
     assert found["bulk_D"] == pytest.approx((0.15 * 0.001 + 0.25 * 0.08) / 0.4)

@@ -71,7 +71,7 @@ def test_order_of_elements_is_irrelevant():
     assert fit_curve(back, T).E.value == pytest.approx(fit_curve(data, T).E.value, rel=1e-6)
 
 
-def test_scaling_every_D_scales_only_D0():
+def test_scaling_every_value_scales_only_the_level():
     data = noisy(2)
     fit, ten = (
         fit_curve(data, T),
@@ -81,7 +81,7 @@ def test_scaling_every_D_scales_only_D0():
     assert (ten.r0.value, ten.E.value) == pytest.approx((fit.r0.value, fit.E.value), rel=1e-6)
 
 
-def test_a_shared_error_widens_D0_and_nothing_else():
+def test_a_shared_error_widens_the_level_and_nothing_else():
     data = noisy(3)
     plain = fit_curve(data, T)
     shared = fit_curve(replace(data, relative_covariance=np.full((11, 11), 0.1**2)), T)
