@@ -5,14 +5,16 @@ VENV ?= .venv
 BIN := $(VENV)/bin
 CORE := $(VENV)/.core-installed
 DEV := $(VENV)/.dev-installed
+# The validators of the open standards need other versions of libraries than the program has: a place of their own.
+STANDARDS := .venv-standards
 PIP := $(BIN)/python -m pip --disable-pip-version-check --quiet
 
-.PHONY: demo test check format bench lock wheel-demo clean
+.PHONY: demo test check format bench lock wheel-demo docs pages standards clean
 
 demo: $(CORE)  ## set up and reduce the demo session
 	@$(BIN)/tieline run configs/ember.toml
 
-test: $(DEV)  ## set up and run all tests
+test: $(DEV) $(STANDARDS)/.installed  ## set up and run all tests
 	@$(BIN)/python -m pytest -q
 
 check: $(DEV)  ## format, lint, types
@@ -27,6 +29,23 @@ format: $(DEV)
 bench: $(DEV)  ## what is measured and never timed in a test
 	@$(BIN)/python tests/benchmarks/ingest.py
 
+docs: $(DEV)  ## build the documentation in site/; a warning is an error
+	@$(BIN)/python -m sphinx -q -W --keep-going -b html -d build/doctrees docs site
+	@echo "site/index.html"
+
+pages: $(DEV)  ## renew the reference pages and the outputs shown in the documentation
+	@$(BIN)/python docs/generate_reference.py
+	@$(BIN)/python tests/docs/transcripts.py --write
+	@$(BIN)/python tests/docs/notebook.py --write
+
+standards: $(STANDARDS)/.installed  ## validate the demo's run folder with the standards' own validators
+	@$(BIN)/python -m pytest -q tests/test_crate.py
+
+$(STANDARDS)/.installed: requirements/standards.txt | $(VENV)/bin/python
+	@$(BIN)/python -m venv $(STANDARDS)
+	@$(STANDARDS)/bin/python -m pip --disable-pip-version-check --quiet install --require-hashes -r requirements/standards.txt
+	@touch $@
+
 wheel-demo: $(DEV)  ## build a wheel, install it in an empty environment, run the demo from it
 	@$(BIN)/python tests/wheel_demo.py
 
@@ -34,7 +53,9 @@ lock: $(DEV)  ## renew the pinned requirement files
 	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
 	  pyproject.toml --extra build -o requirements/core.txt
 	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
-	  pyproject.toml --extra build --extra dev -c requirements/core.txt -o requirements/dev.txt
+	  pyproject.toml --extra build --extra dev --extra docs --extra query -c requirements/core.txt -o requirements/dev.txt
+	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
+	  requirements/standards.in -o requirements/standards.txt
 
 $(VENV)/bin/python:
 	@$(PYTHON) -c 'import sys; sys.exit(0 if sys.version_info >= (3, 11) else "tieline needs Python 3.11 or newer; set PYTHON=...")'
@@ -52,4 +73,4 @@ $(DEV): requirements/dev.txt $(CORE)
 	@touch $@
 
 clean:
-	rm -rf $(VENV) dist build
+	rm -rf $(VENV) $(STANDARDS) dist build site
