@@ -31,10 +31,6 @@ from typing import Any
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 sys.path.insert(0, str(Path(__file__).resolve().parents[2] / "pipeline"))
 
-import tieline.crate
-import tieline.report.write
-import tieline.terminal
-import tieline.terminal_rulings
 from faults.operations import Striking
 from faults.small import change_settings, write_session
 from tieline import cli, runner

@@ -23,6 +23,7 @@ from tieline.reading.text_bytes import utf8_bytes
 HEAD_BYTES = 1 << 22
 HEAD_RECORDS = 300
 BLOCK_BYTES = 1 << 23
+MOST_RAGGED = 100_000  # as many are kept to be set aside one by one; beyond, it is the table that is wrong
 DELIMITERS = "\t;|,"  # preferred in this order: a comma may be a decimal mark
 _LINE = re.compile(rb"[^\r\n]*(?:\r\n|\r|\n)|[^\r\n]+$")
 
@@ -55,6 +56,7 @@ def read_delimited(file: InputFile, layout: Layout, limits: ReadLimits) -> Grid:
     check_width(file, len(headers), limits)
     units = None if units_index is None else _padded(records[units_index].cells, len(headers))
     start = records[first - 1].end
+    _check_cells(file, data.slice(start), len(headers), limits)
     blocks, ragged = _parse(file, data.slice(start), delimiter, len(headers), first)
     found = Found(
         kind="text",
@@ -119,6 +121,19 @@ def check_width(file: InputFile, width: int, limits: ReadLimits) -> None:
         raise InputError(
             Problem(f"{width} columns; at most {limits.columns} are read.", file.path, remedy=remedy)
         )
+
+
+def _check_cells(file: InputFile, data: pa.Buffer, width: int, limits: ReadLimits) -> None:
+    """Every line end may end a row of the table's width, and is held as one, however little it says."""
+    most = limits.cells // width
+    view = memoryview(data)
+    if len(view) <= most:
+        return
+    pieces = (bytes(view[start : start + BLOCK_BYTES]) for start in range(0, len(view), BLOCK_BYTES))
+    lines = sum(max(piece.count(b"\n"), piece.count(b"\r")) for piece in pieces)
+    if lines > most:
+        message = f"{lines} rows of {width} columns; at most {limits.cells} cells are read."
+        raise InputError(Problem(message, file.path, remedy="If that is right, raise ingest.limits.cells."))
 
 
 def find_delimiter(head: bytes) -> str:
@@ -205,6 +220,8 @@ def _arrow_read(
     ragged: list[RaggedRow] = []
 
     def refuse(row: pyarrow.csv.InvalidRow) -> str:
+        if len(ragged) == MOST_RAGGED:
+            return "error"
         ragged.append(RaggedRow(row.number or 0, row.actual_columns, row.text))
         return "skip"
 
@@ -225,8 +242,15 @@ def _arrow_read(
             ),
         )
     except pa.ArrowInvalid as error:
+        if len(ragged) == MOST_RAGGED:
+            raise InputError(_too_ragged(file, width)) from None
         raise InputError(_arrow_problem(file, error)) from error
     return table, ragged
+
+
+def _too_ragged(file: InputFile, width: int) -> Problem:
+    message = f"more than {MOST_RAGGED} rows have another number of cells than the header, which has {width}."
+    return Problem(message, file.path, remedy="State delimiter or header_row if they were not found rightly.")
 
 
 def _has_quote(data: pa.Buffer) -> bool:

@@ -181,7 +181,7 @@ class TableLimits(Settings):
     """Beyond these a table is refused, so that memory stays bounded whatever a file claims to be."""
 
     columns: int = Field(5_000, ge=1, description="columns of one table")
-    cells: int = Field(100_000_000, ge=1, description="cells of one spreadsheet or Parquet table")
+    cells: int = Field(100_000_000, ge=1, description="cells of one table, blank ones included")
     expanded_mb: int = Field(2_000, ge=1, description="megabytes of one file, and what a packed one may unpack to")
 
 
