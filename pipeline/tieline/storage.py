@@ -44,9 +44,14 @@ def write_atomically(path: Path, write: Callable[[BinaryIO], None]) -> None:
 
 def write_text(path: Path, text: str) -> None:
     """A UTF-8 text file with `\\n` line ends, whole or not at all."""
+    write_bytes(path, text.encode())
+
+
+def write_bytes(path: Path, data: bytes) -> None:
+    """A file of bytes, whole or not at all."""
 
     def write(stream: BinaryIO) -> None:
-        stream.write(text.encode())
+        stream.write(data)
 
     write_atomically(path, write)
 

@@ -33,6 +33,11 @@ class AboutSettings(Settings):
         pattern=r"^(https?://\S+|[A-Za-z0-9.+-]+)$",
         description="terms of use: an SPDX identifier such as CC-BY-4.0, or an address",
     )
+    laboratory: str | None = Field(
+        None,
+        pattern=r"^[A-Za-z0-9][A-Za-z0-9 ._-]{0,79}$",
+        description="whose measurements: `lab` in an archive; the first folder below its root where not given",
+    )
     publisher: str | None = Field(None, min_length=1, description="institution that publishes the folder")
     date: str | None = Field(None, description="date of publication, YYYY-MM-DD")
 
