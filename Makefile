@@ -12,7 +12,7 @@ PIP := $(BIN)/python -m pip --disable-pip-version-check --quiet
 .PHONY: demo test check format bench lock wheel-demo docs pages standards clean
 
 demo: $(CORE)  ## set up and reduce the demo session
-	@$(BIN)/tieline run configs/ember.toml
+	@$(BIN)/tieline run configs/ember.toml --report
 
 test: $(DEV) $(STANDARDS)/.installed  ## set up and run all tests
 	@$(BIN)/python -m pytest -q

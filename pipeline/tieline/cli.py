@@ -83,9 +83,12 @@ def run(
     everything: Annotated[
         bool, typer.Option("--all", help="Show every stage, remark and D instead of one screen.")
     ] = False,
+    with_report: Annotated[
+        bool, typer.Option("--report", help="Write the report too, where it is not current.")
+    ] = False,
     json: JsonOption = False,
 ) -> None:
-    """Reduce a session: recompute what is not current, write the report, show the results on one screen.
+    """Reduce a session: recompute what is not current, show the results on one screen.
 
     Example: tieline run configs/ember.toml
     """
@@ -103,7 +106,7 @@ def run(
             fresh=fresh,
             progress=progress,
             planned=planned,
-            after=lambda n_stages: files.extend(_report_after(session, n_stages)),
+            after=lambda n_stages: files.extend(_report_after(session, n_stages, with_report)),
         )
     if json:
         _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
@@ -111,16 +114,12 @@ def run(
         terminal.show_run(session, reports, files=files, everything=everything)
 
 
-def _report_after(session: Session, n_stages: int) -> tuple[str, ...]:
-    """Renews the report after a run through all stages, so that no older one lies beside newer results.
-
-    After every run the description of the folder is renewed.
-    """
+def _report_after(session: Session, n_stages: int, wanted: bool) -> tuple[str, ...]:
+    """Renews the report after a run through all stages where it is wanted, and the description of the folder."""
     from tieline.crate import write_crate
     from tieline.stages import STAGES
 
-    complete = n_stages == len(STAGES) and session.settings.report.after_run
-    if not complete:
+    if n_stages < len(STAGES) or not (wanted or session.settings.report.after_run):
         write_crate(session)
         return ()
     from tieline.report.write import FILES, refresh_report
@@ -244,6 +243,7 @@ def demo(
         overrides=None,
         quiet=False,
         everything=False,
+        with_report=True,
         json=json,
     )
 
@@ -328,6 +328,44 @@ def compare(
         from tieline.terminal_compare import show_comparison
 
         show_comparison(found)
+
+
+@app.command()
+def archive(
+    root: Annotated[Path, typer.Argument(metavar="ROOT", help="Folder above the sessions.")],
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", metavar="DATASET", help="Folder of the dataset; ROOT/archive where not given."),
+    ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option("--scheduler", metavar="ADDRESS", help="A running Dask scheduler, instead of own workers."),
+    ] = None,
+    workers: Annotated[
+        int | None,
+        typer.Option("--workers", metavar="N", min=1, help="Worker processes; one per processor if not given."),
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Reduce every session below a folder that is not current, and gather all D in one dataset.
+
+    Each session is reduced on its own; one that fails is reported and does not stop the others.
+
+    Example: tieline archive sessions --workers 4
+    """
+    from tieline import terminal_archive
+    from tieline.archive.command import reduce_archive
+
+    with terminal_archive.progress(json) as (started, finished):
+        summary = reduce_archive(
+            root, out=out, scheduler=scheduler, workers=workers, started=started, finished=finished
+        )
+    if json:
+        _print_json(summary.as_json())
+    else:
+        terminal_archive.show(summary)
+    if summary.failures:
+        raise typer.Exit(WRONG_INPUT)
 
 
 @app.command(name="help")

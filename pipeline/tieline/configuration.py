@@ -35,6 +35,11 @@ class Session:
         return self.path.parent / path
 
 
+def configured_run_folder(session: Session) -> Path:
+    """The run folder that the configuration itself names, whatever `--out` said."""
+    return Path(os.path.normpath(session.path.parent / session.settings.out / session.settings.session))
+
+
 def load(path: Path, *, overrides: Sequence[str] = (), out: Path | None = None) -> Session:
     """Reads and validates a configuration; raises InputError with every problem found."""
     session, problems = read(path, overrides=overrides, out=out)

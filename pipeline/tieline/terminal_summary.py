@@ -9,10 +9,11 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from tieline.configuration import Session
+from tieline.configuration import Session, configured_run_folder
 from tieline.report.attention import attention
 from tieline.report.left_out import by_reason
 from tieline.report.spots import spot_use
+from tieline.report.write import FILES, report_verdict
 from tieline.terminal_console import printable
 from tieline.terminal_results import brief_lines
 
@@ -65,3 +66,19 @@ def _show_files(console: Console, session: Session, files: Sequence[str], n_more
     console.print(Text(f"Results: {session.run_folder}", style="bold"))
     if files:
         console.print(Text(f"  {', '.join(files)}"))
+        return
+    verdict = report_verdict(session)
+    if verdict.state == "current":
+        console.print(Text(f"  {', '.join(FILES)}"))
+    else:
+        state = "no report yet" if verdict.state == "missing" else "the report there is of an earlier reduction"
+        console.print(Text(f"  {state}: {_report_command(session)}", style="yellow"))
+
+
+def _report_command(session: Session) -> str:
+    """The command that writes the report of these very results."""
+    words = ["tieline report", str(session.path)]
+    if session.run_folder != configured_run_folder(session):
+        words += ["--out", str(session.run_folder.parent)]
+    words += [f"--set '{override}'" for override in session.overrides]
+    return " ".join(words)

@@ -36,7 +36,7 @@ FENCE = re.compile(r"^```(\w+)\n(.*?)^```$", re.MULTILINE | re.DOTALL)
 COMMENT = re.compile(r"<!-- (file|append|exit): (\S+) -->\s*$")
 # Pages that are made from code hold no examples to execute.
 SKIPPED = ("reference/", "measured/", "performance.md")
-DEMO = ("make demo", "tieline run configs/ember.toml")
+DEMO = ("make demo", "tieline run configs/ember.toml --report")
 
 
 def pages() -> list[Path]:

@@ -97,6 +97,7 @@ class ReportSettings(Settings):
 
     title: str | None = Field(None, description="title of the report; the session's name by default")
     after_run: bool = Field(
-        True,
-        description="write the report after every run that went through all stages, where it is not current",
+        False,
+        description="write the report after every run that went through all stages, where it is not current; off by "
+        "default, because it takes longer than a changed filter does. `run --report` asks for it once",
     )
