@@ -43,6 +43,12 @@ def spot_rows(
     summary = first.fitting(pattern)
     if label_columns.get("spot", 0) != 0:
         summary |= labels["spot"].fitting(pattern)
+    if "spot" in labels:
+        # "Average" in the column of phases, the spot's own cell left empty.
+        unnamed = labels["spot"].is_missing()
+        for name in ("experiment", "phase", "grain"):
+            if name in labels:
+                summary |= unnamed & labels[name].fitting(pattern)
     blank_count = 0
     for block, start in _placed_blocks(grid):
         stop = start + len(block.rows)

@@ -7,9 +7,12 @@ until the line is deleted, so that no guess becomes a number unnoticed.
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Sequence
 
+from tieline.ingest.rows import summary_pattern
 from tieline.reading.input_file import InputFile
+from tieline.settings.ingest import Table
 from tieline.starting.combined_labels import label_pattern
 from tieline.starting.look import Look, look_at, phases_of
 
@@ -125,8 +128,9 @@ def _phases(looks: Sequence[Look]) -> list[str]:
     for name, spellings in sorted(known.items()):
         lines.append(f"{_key(name)} = [{', '.join(_text(text) for text in spellings)}]")
     materials = _material_labels(looks)
+    summary = re.compile(summary_pattern(Table.model_fields["skip_row_labels"].default), re.IGNORECASE)
     for text, (count, near) in sorted(unknown.items()):
-        if text in materials:
+        if text in materials or summary.search(text):
             continue
         hint = f" Perhaps {' or '.join(near)}?" if near else ""
         lines.append(
