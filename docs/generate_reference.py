@@ -367,7 +367,7 @@ def measured() -> str:
         "known truth. They hold for their noise models: normal counting errors (Poisson where named), normal spread between\n"
         "spots, uncertainties that are stated correctly unless said otherwise, invented compositions. Run them again with\n\n"
         "```text\npython tests/benchmarks/coverage.py --out docs/measured\n"
-        "python tests/benchmarks/screening.py --out docs/measured\n```"
+        "python tests/benchmarks/screening.py --out docs/measured/screening\n```"
     )
     parts = [
         "## Coverage of the intervals of D\n\n"
@@ -377,7 +377,8 @@ def measured() -> str:
         + coverage
     ]
     parts += [
-        f"## {TITLES[name]}\n\n{NOTES[name]}\n\n{_csv(DOCS / 'measured' / f'{name}.csv')}" for name in TITLES
+        f"## {TITLES[name]}\n\n{NOTES[name]}\n\n{_csv(DOCS / 'measured' / 'screening' / f'{name}.csv')}"
+        for name in TITLES
     ]
     return page("What was measured", intro, *parts)
 
