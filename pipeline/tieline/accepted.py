@@ -11,7 +11,7 @@ from tieline.chemistry.names import nearest_names, recognise_analyte
 from tieline.chemistry.oxides import parse_oxide
 from tieline.errors import InputError, Problem
 from tieline.reading.input_file import InputFile
-from tieline.reading.records import read_records
+from tieline.reading.records import read_labels, read_records
 
 PPM_PER_UNIT = {"wt%": 1e4, "ppm": 1.0, "ppb": 1e-3}
 COLUMNS = ("material", "analyte", "value", "unit", "sd", "source")
@@ -61,8 +61,7 @@ def read_accepted_values(files: Mapping[str, InputFile]) -> dict[tuple[str, str]
 
 def material_names(files: Mapping[str, InputFile]) -> dict[str, tuple[str, ...]]:
     """The materials of the accepted values, each its own only spelling; nothing else of the table is judged."""
-    column = {"material": "material"}
-    names = {name for file in files.values() for name in read_records(file, column)["material"]}
+    names = {name for file in files.values() for name in read_labels(file, "material")}
     return {name: (name,) for name in sorted(names)}
 
 

@@ -92,7 +92,7 @@ def run(
 
     Example: tieline run configs/ember.toml
     """
-    from tieline import runner, terminal, terminal_rulings
+    from tieline import runner, terminal
 
     if only is not None and until is not None:
         _fail_usage("--only and --until exclude each other.")
@@ -109,6 +109,8 @@ def run(
             after=lambda n_stages: files.extend(_report_after(session, n_stages, with_report)),
         )
     if json:
+        from tieline import terminal_rulings
+
         _print_json(terminal.run_as_json(session, reports) | terminal_rulings.as_json(session, reports))
     elif not quiet:
         terminal.show_run(session, reports, files=files, everything=everything)
@@ -122,7 +124,8 @@ def _report_after(session: Session, n_stages: int, wanted: bool) -> tuple[str, .
     if n_stages < len(STAGES) or not (wanted or session.settings.report.after_run):
         write_crate(session)
         return ()
-    from tieline.report.write import FILES, refresh_report
+    from tieline.report.currency import FILES
+    from tieline.report.write import refresh_report
 
     refresh_report(session)
     return (*FILES, *write_crate(session))
@@ -153,7 +156,7 @@ def status(
     Example: tieline status configs/ember.toml
     """
     from tieline import runner, terminal
-    from tieline.report.write import report_verdict
+    from tieline.report.currency import report_verdict
 
     session = _load(config, overrides, out)
     verdicts, report = runner.status(session), report_verdict(session)

@@ -11,7 +11,6 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from tieline import terminal_rulings, terminal_summary
 from tieline.configuration import Session
 from tieline.errors import Problem
 from tieline.help_pages import page_for
@@ -115,6 +114,8 @@ def show_run(
     console = new_console()
     complete = reports[-1].verdict.stage == STAGES[-1].name
     if complete and not everything:
+        from tieline import terminal_summary
+
         terminal_summary.show_summary(console, session, tables_of(session, terminal_summary.NEEDED), files)
     else:
         _show_everything(console, session, reports)
@@ -130,6 +131,8 @@ def _show_everything(console: Console, session: Session, reports: Sequence[Stage
     if reports[-1].verdict.stage in ("classify", "assess") and path.exists():
         for table in partition_tables(read_table(path, "classify"), console.width):
             console.print(table)
+    from tieline import terminal_rulings
+
     terminal_rulings.show(console, session, reports)
 
 

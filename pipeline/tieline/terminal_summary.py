@@ -11,9 +11,9 @@ from rich.text import Text
 
 from tieline.configuration import Session, configured_run_folder
 from tieline.report.attention import attention
+from tieline.report.currency import FILES, report_verdict
 from tieline.report.left_out import by_reason
 from tieline.report.spots import spot_use
-from tieline.report.write import FILES, report_verdict
 from tieline.terminal_console import printable
 from tieline.terminal_results import brief_lines
 

@@ -35,7 +35,7 @@ from faults.operations import Striking
 from faults.small import change_settings, write_session
 from tieline import cli, runner
 from tieline.configuration import load
-from tieline.report.write import FILES, report_verdict
+from tieline.report.currency import FILES, report_verdict
 from tieline.stages import NAMES, STAGES
 
 ERRORS = (errno.ENOSPC, errno.EACCES, errno.EIO)

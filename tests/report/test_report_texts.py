@@ -19,13 +19,14 @@ from tieline.columns import ASSESS, CALIBRATE, CLASSIFY
 from tieline.configuration import Session, load
 from tieline.errors import InputError
 from tieline.report.attention import attention
+from tieline.report.currency import FILES
 from tieline.report.figures import figure_files
 from tieline.report.methods import methods
 from tieline.report.references import REFERENCES
 from tieline.report.sheets import settings_rows
 from tieline.report.source import Source, read_source
 from tieline.report.spots import spot_use
-from tieline.report.write import FILES, refresh_report, write_report
+from tieline.report.write import refresh_report, write_report
 from tieline.tables import build
 from tieline.terminal_results import brief_lines
 

@@ -80,7 +80,7 @@ def _compare_files(folder: RunFolder, made: Path, result: Recomputation) -> None
 
 def _report_differences(folder: RunFolder, again: Session) -> list[Difference]:
     """Report files that are not what the recomputed results give; `again` is the recomputed run."""
-    from tieline.report.write import FILES, report_verdict
+    from tieline.report.currency import FILES, report_verdict
 
     present = {name: (folder.path / name).read_bytes() for name in FILES if (folder.path / name).exists()}
     complete = all(stage.name in folder.files for stage in STAGES)

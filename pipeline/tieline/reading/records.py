@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import compress
 from typing import Any
 
 import numpy as np
@@ -68,6 +69,20 @@ def read_texts(
     file: InputFile, columns: Mapping[str, str], required: frozenset[str] | None = None
 ) -> TextRecords:
     """The named columns as texts. Raises InputError for missing and doubled columns and rows of another length."""
+    texts, rows, decimal = _texts(*_matched(file, columns, required))
+    arrays = {name: pa.array(column, pa.string()) for name, column in texts.items()}
+    return TextRecords(arrays, rows, decimal)
+
+
+def read_labels(file: InputFile, header: str) -> list[str]:
+    """One column as texts, blanks left out; raises InputError as `read_texts` does."""
+    texts, _, _ = _texts(*_matched(file, {header: header}, None))
+    return [text.strip() for text in texts[header] if text.strip()]
+
+
+def _matched(
+    file: InputFile, columns: Mapping[str, str], required: frozenset[str] | None
+) -> tuple[Grid, dict[str, int | None]]:
     required = frozenset(columns) if required is None else required
     from tieline.reading.layout import Layout
 
@@ -91,10 +106,13 @@ def read_texts(
             )
     if problems:
         raise InputError(problems)
-    return _texts(grid, found)
+    return grid, found
 
 
-def _texts(grid: Grid, found: Mapping[str, int | None]) -> TextRecords:
+def _texts(
+    grid: Grid, found: Mapping[str, int | None]
+) -> tuple[dict[str, list[str]], npt.NDArray[np.int32], str]:
+    """The columns as lists: Arrow would import pandas to look at one, and `status` needs no more than this."""
     rows = grid.rows()
     cells = [[column.to_pylist() for column in block.cells] for block in grid.blocks]
     filled = np.array(
@@ -103,10 +121,8 @@ def _texts(grid: Grid, found: Mapping[str, int | None]) -> TextRecords:
     columns = {}
     for name, index in found.items():
         texts = [""] * len(rows) if index is None else [text for block in cells for text in block[index]]
-        columns[name] = pa.array(
-            [text for text, keep in zip(texts, filled, strict=True) if keep], pa.string()
-        )
-    return TextRecords(columns, rows[filled] if len(rows) else rows, grid.found.decimal)
+        columns[name] = list(compress(texts, filled))
+    return columns, rows[filled] if len(rows) else rows, grid.found.decimal
 
 
 def _numbers(

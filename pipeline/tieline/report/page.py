@@ -13,10 +13,11 @@ from tieline.notation import written
 from tieline.report.attention import attention
 from tieline.report.compact import script_json
 from tieline.report.conventions import conventions, percent, short_convention
+from tieline.report.currency import stamp
 from tieline.report.left_out import Reason, by_person, by_test
 from tieline.report.page_data import Curve, page_data
 from tieline.report.sheets import Cell, Heading, Sheet, declared_sheet, runs_sheet, settings_rows
-from tieline.report.source import Source, stamp
+from tieline.report.source import Source
 from tieline.report.spots import SpotUse
 from tieline.rulings_effect import leaning_remarks, ruling_effects
 

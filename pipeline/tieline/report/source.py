@@ -9,15 +9,14 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline import __version__
 from tieline.arrays import numbers
 from tieline.columns import TABLES
 from tieline.configuration import Session
 from tieline.correction import Concentrations, calibrated
 from tieline.errors import InputError, Problem
-from tieline.plan import read_records, table_path
-from tieline.provenance import bytes_digest, json_text
+from tieline.plan import table_path
 from tieline.reading.input_file import InputFile
+from tieline.report.currency import finished_records
 from tieline.screen.rulings import Ruling, read_rulings
 from tieline.settings import SessionSettings
 from tieline.stages import STAGES
@@ -85,26 +84,10 @@ def read_finished(session: Session) -> Source:
     return Source(tables, records, session.settings, _filed_rulings(session))
 
 
-def finished_records(session: Session) -> dict[str, Mapping[str, Any]]:
-    """What every stage's main file records of itself, by stage name."""
-    return {stage.name: read_records(session.run_folder, stage)[stage.outputs[0]] or {} for stage in STAGES}
-
-
 def optional_table(source: Source, name: str) -> pa.Table | None:
     """A table that not every version of the chain writes; None where it is not there or has no rows."""
     table = source.tables.get(name)
     return table if name in TABLES and table is not None and table.num_rows else None
-
-
-def stamp(records: Mapping[str, Mapping[str, Any]], settings: SessionSettings) -> str:
-    """A digest of all that a report is made from; it stands in the page, and tells whether the page is current."""
-    parts = {name: record["fingerprint"] for name, record in records.items()}
-    made_from = {
-        "version": __version__,
-        "stages": parts,
-        "report": settings.report.model_dump(mode="json"),
-    }
-    return f"report-{bytes_digest(json_text(made_from).encode())}"
 
 
 def _refuse_unless_current(verdicts: list[Any]) -> None:

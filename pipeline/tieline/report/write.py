@@ -8,8 +8,8 @@ from typing import TYPE_CHECKING
 
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.lock import locked
-from tieline.plan import Verdict
 from tieline.report.csv_files import csv_bytes
+from tieline.report.currency import PAGE, report_verdict
 from tieline.report.latex import partition_document
 from tieline.report.left_out import left_out_sheet
 from tieline.report.methods import methods
@@ -24,7 +24,7 @@ from tieline.report.sheets import (
     runs_sheet,
     settings_sheet,
 )
-from tieline.report.source import Source, finished_records, read_finished, read_source, stamp
+from tieline.report.source import Source, read_finished, read_source
 from tieline.report.spots import SpotUse, spot_use
 from tieline.report.values_sheet import spots_sheet
 from tieline.report.workbook import workbook_bytes
@@ -32,19 +32,6 @@ from tieline.storage import Pending
 
 if TYPE_CHECKING:
     from tieline.configuration import Session
-
-
-PAGE = "report.html"
-FILES = (
-    PAGE,
-    "partition_coefficients.csv",
-    "partition_coefficients.xlsx",
-    "partition_coefficients.tex",
-    "left_out.csv",
-    "methods.txt",
-    "methods.tex",
-    "references.bib",
-)
 
 
 def write_report(session: Session, figures: Path | None = None) -> list[Path]:
@@ -68,27 +55,6 @@ def refresh_report(session: Session) -> None:
     if report_verdict(session).state != "current":
         files = report_files(read_finished(session))
         _write(session, {session.run_folder / name: data for name, data in files.items()})
-
-
-def report_verdict(session: Session) -> Verdict:
-    """Whether the report that lies in the run folder was made from the stage files that lie there."""
-    missing = [name for name in FILES if not (session.run_folder / name).exists()]
-    if len(missing) == len(FILES):
-        return Verdict("report", "missing")
-    if missing:
-        return Verdict("report", "stale", tuple(f"{name} is missing" for name in missing))
-    records = finished_records(session)
-    if not all("fingerprint" in record for record in records.values()):
-        return Verdict("report", "stale", ("not all results it was made from are here",))
-    if not _holds(session.run_folder / PAGE, stamp(records, session.settings)):
-        return Verdict("report", "stale", ("it was made from other results or with other settings",))
-    return Verdict("report", "current")
-
-
-def _holds(path: Path, text: str) -> bool:
-    """Whether the first lines of a file hold a text."""
-    with path.open("rb") as stream:
-        return text.encode() in stream.read(4096)
 
 
 def _write(session: Session, made: Mapping[Path, bytes]) -> None:
