@@ -5,20 +5,22 @@ from __future__ import annotations
 import re
 import zipfile
 import zlib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 
 import pyarrow as pa
 
 from tieline.errors import InputError, Problem
 from tieline.reading.grid import ReadLimits
 from tieline.reading.input_file import InputFile
-from tieline.reading.sheet_scan import OdsScan, Places, XlsxScan, unescaped
+from tieline.reading.sheet_scan import OdsScan, Places, XlsxScan, elements
 
 CHUNK = 1 << 20
-_WORKSHEET = re.compile(r"xl/worksheets/[^/]+\.xml", re.IGNORECASE)
-_SHEET = re.compile(rb"<(?:\w+:)?sheet\b([^>]*)>")
-_RELATION = re.compile(rb"<(?:\w+:)?Relationship\b([^>]*)>")
-_ATTRIBUTE = re.compile(rb'([\w:]+)="([^"]*)"')
+_ODS_CONTENT = "content.xml"
+_BINARY_WORKBOOK = "xl/workbook.bin"  # its sheets are no XML and could not be measured
+_SHEET_WORD = b"sheetData"  # without it no member is read as a sheet
+_TEXTS = "xl/sharedstrings.xml"
+_TEXT_COUNT = re.compile(rb"uniqueCount\s*=\s*[\"']([0-9]+)")
+_SHORTEST_TEXT = len("<si/>")
 
 
 class Scans:
@@ -30,7 +32,7 @@ class Scans:
 
     def lost_cells(self, sheet: str) -> Places:
         """(row, column), from 0, -> text of the cells of a sheet that the reading library leaves out."""
-        member = self.sheet_members.get(sheet, "content.xml")
+        member = self.sheet_members.get(sheet, _ODS_CONTENT)
         return self.members[member].lost_in(sheet) if member in self.members else {}
 
 
@@ -60,27 +62,82 @@ def unreadable(file: InputFile, error: BaseException) -> Problem:
 def _scan_members(file: InputFile, archive: zipfile.ZipFile, limits: ReadLimits) -> Scans:
     scans, total = Scans(), 0
     for info in archive.infolist():
-        scan = _scan_of(info.filename)
+        name = _member_name(info.filename)
+        if name == _BINARY_WORKBOOK:
+            raise InputError(Problem("is a binary workbook.", file.path, remedy="Save it as .xlsx or .csv."))
+        member, texts = _Member(name), _StatedTexts() if name == _TEXTS else None
         for piece in _pieces(archive, info):
             total += len(piece)
             if total > limits.expanded_bytes:
                 message = f"unpacks to more than {limits.expanded_bytes} bytes."
                 remedy = "If that is right, raise ingest.limits.expanded_mb."
                 raise InputError(Problem(message, file.path, remedy=remedy))
-            if scan is not None:
-                scan.see(piece)
+            if texts is not None:
+                texts.see(piece)
+            member.see(piece)
+        scan = member.end()
+        if texts is not None and texts.stated * _SHORTEST_TEXT > texts.size:
+            message = (
+                f"is damaged: it states {texts.stated} different texts and has {texts.size} bytes of them."
+            )
+            raise InputError(Problem(message, file.path, remedy="Save it again as .xlsx or .csv."))
         if scan is not None:
-            scan.end()
             _check_reach(file, info.filename, scan, limits)
-            scans.members[info.filename] = scan
+            scans.members[name] = scan
     scans.sheet_members = _sheet_members(archive)
     return scans
 
 
-def _scan_of(name: str) -> XlsxScan | OdsScan | None:
-    if _WORKSHEET.fullmatch(name):
-        return XlsxScan()
-    return OdsScan() if name == "content.xml" else None
+def _member_name(name: str) -> str:
+    """How the reading library looks for members: without regard to case."""
+    return name.replace("\\", "/").lower()
+
+
+class _Member:
+    """One member of the archive, scanned as a sheet for as long as it is XML.
+
+    What is no XML (pictures, macros) is only asked whether it could be read as a sheet all the same.
+    """
+
+    def __init__(self, name: str) -> None:
+        self._scan: XlsxScan | OdsScan | None = OdsScan() if name == _ODS_CONTENT else XlsxScan()
+        self._why: ValueError | None = None
+        self._is_sheet, self._rest = name == _ODS_CONTENT, b""
+
+    def see(self, piece: bytes) -> None:
+        text = self._rest + piece
+        self._is_sheet |= _SHEET_WORD in text
+        self._rest = text[-len(_SHEET_WORD) :]
+        self._try(lambda scan: scan.see(piece))
+
+    def end(self) -> XlsxScan | OdsScan | None:
+        """The scan of a sheet, None for anything else; raises ValueError for a sheet that is no proper XML."""
+        self._try(lambda scan: scan.end())
+        if self._why is not None and self._is_sheet:
+            raise self._why
+        return self._scan if self._is_sheet else None
+
+    def _try(self, step: Callable[[XlsxScan | OdsScan], None]) -> None:
+        if self._scan is not None:
+            try:
+                step(self._scan)
+            except ValueError as error:
+                self._scan, self._why = None, error
+
+
+class _StatedTexts:
+    """How many texts the list of texts says it holds: the reading library believes it and makes room for them."""
+
+    def __init__(self) -> None:
+        self.stated, self.size = 0, 0
+        self._rest = b""
+
+    def see(self, piece: bytes) -> None:
+        self.size += len(piece)
+        text = self._rest + piece
+        for digits in _TEXT_COUNT.findall(text):
+            self.stated = max(self.stated, int(digits[:18]))
+        self._rest = text[-100:]
 
 
 def _pieces(archive: zipfile.ZipFile, info: zipfile.ZipInfo) -> Iterator[bytes]:
@@ -97,18 +154,16 @@ def _check_reach(file: InputFile, name: str, scan: XlsxScan | OdsScan, limits: R
 
 def _sheet_members(archive: zipfile.ZipFile) -> dict[str, str]:
     """Sheet name -> member of an XLSX archive; empty for others."""
-    names = set(archive.namelist())
-    if not {"xl/workbook.xml", "xl/_rels/workbook.xml.rels"} <= names:
+    names = {_member_name(name): name for name in archive.namelist()}
+    if not {"xl/workbook.xml", "xl/_rels/workbook.xml.rels"} <= set(names):
         return {}
     targets = {}
-    for tag in _RELATION.findall(archive.read("xl/_rels/workbook.xml.rels")):
-        attributes = dict(_ATTRIBUTE.findall(tag))
-        target = unescaped(attributes.get(b"Target", b"")).removeprefix("/")
-        targets[attributes.get(b"Id", b"")] = target if target.startswith("xl/") else f"xl/{target}"
+    for relation in elements(archive.read(names["xl/_rels/workbook.xml.rels"]), "Relationship"):
+        target = _member_name(relation.get("Target", "")).removeprefix("/")
+        targets[relation.get("Id", "")] = target if target.startswith("xl/") else f"xl/{target}"
     members = {}
-    for tag in _SHEET.findall(archive.read("xl/workbook.xml")):
-        attributes = dict(_ATTRIBUTE.findall(tag))
-        identity = next((value for key, value in attributes.items() if key.endswith(b":id")), b"")
+    for sheet in elements(archive.read(names["xl/workbook.xml"]), "sheet"):
+        identity = next((value for key, value in sheet.items() if key.endswith(":id")), "")
         if identity in targets:
-            members[unescaped(attributes.get(b"name", b""))] = targets[identity]
+            members[sheet.get("name", "")] = targets[identity]
     return members

@@ -1,142 +1,219 @@
-"""What the XML of a sheet says before a library builds the sheet: how far it reaches, and its lost cells.
+"""What the XML of a workbook says before a library builds a sheet: how far it reaches, and its lost cells.
 
-A sheet is built as a whole rectangle in memory, so its reach must be known first. And the reading library
-hands over error cells (`#DIV/0!`) and formulas that were never calculated as blanks, which would turn them
-into "not measured": they are found here and put back.
+A sheet is built as a whole rectangle in memory, so its reach must be known first, and known from the XML itself: a
+pattern that looked for cells would miss those written another way. And the reading library hands over error
+cells (`#DIV/0!`) and formulas that were never calculated as blanks, which would turn them into "not
+measured": they are found here and put back.
 """
 
 from __future__ import annotations
 
-import html
 import re
+from collections.abc import Mapping
+from xml.parsers import expat
 
 Places = dict[tuple[int, int], str]
 
-_REFERENCE = re.compile(rb'<(?:\w+:)?c\b[^>]{0,200}?\br="([A-Z]{1,3})([0-9]{1,7})"')
-_CELL_PLACE = re.compile(rb'\br="([A-Z]{1,3})([0-9]{1,7})"')
-_CELL_VALUE = re.compile(rb"<(?:\w+:)?v\b[^>]*>([^<]*)</")
-_CELL_FORMULA = re.compile(rb"<(?:\w+:)?f\b[^>]*?(?:/>|>([^<]*)</)")
-
-_ODS_TAG = re.compile(rb"<table:(table-row|table-cell|covered-table-cell|table)\b([^>]{0,4000})>")
-_ODS_NAME = re.compile(rb'table:name="([^"]*)"')
-_ODS_TEXT = re.compile(rb"<text:p[^>]*>([^<]*)<")
-_ROWS_REPEATED = re.compile(rb"number-rows-repeated=[\"']([0-9]+)")
-_COLUMNS_REPEATED = re.compile(rb"number-columns-repeated=[\"']([0-9]+)")
-
-LONGEST_CELL = 1 << 20
+_LETTERS = re.compile(r"[A-Za-z]{1,3}")
+_REPEAT_DIGITS = 12
 
 
-class XlsxScan:
+class UnusualXmlError(ValueError):
+    """XML that no spreadsheet program writes: entities of its own, cells that are nowhere."""
+
+
+class _Scan:
+    """Feeds an XML document piece by piece to `start`; texts go to `texts` while that is not None."""
+
+    def __init__(self) -> None:
+        self.rows, self.columns = 0, 0
+        self.texts: list[str] | None = None
+        self._parser = expat.ParserCreate()
+        self._parser.StartElementHandler = self.start
+        self._parser.StartDoctypeDeclHandler = _refuse_document_type
+
+    def see(self, piece: bytes) -> None:
+        """Raises ValueError for what is not XML, or unusual."""
+        try:
+            self._parser.Parse(piece, False)
+        except expat.ExpatError as error:
+            raise UnusualXmlError(f"damaged XML: {error}") from None
+
+    def end(self) -> None:
+        """Raises ValueError where the document is not complete."""
+        try:
+            self._parser.Parse(b"", True)
+        except expat.ExpatError as error:
+            raise UnusualXmlError(f"damaged XML: {error}") from None
+        self.finish_cell()
+
+    def start(self, name: str, attributes: Mapping[str, str]) -> None:
+        raise NotImplementedError
+
+    def finish_cell(self) -> None:
+        raise NotImplementedError
+
+    def collect(self) -> list[str]:
+        """A list that takes the texts from here on."""
+        texts: list[str] = []
+        self.texts = texts
+        self._parser.CharacterDataHandler = texts.append
+        return texts
+
+    def collect_no_more(self) -> None:
+        self.texts = None
+        self._parser.CharacterDataHandler = None
+
+
+def _refuse_document_type(*_: object) -> None:
+    raise UnusualXmlError("a document type declaration, which no spreadsheet program writes")
+
+
+class XlsxScan(_Scan):
     """One XLSX sheet, seen piece by piece. `lost` maps (row, column), from 0, to the text to put back."""
 
     def __init__(self) -> None:
+        super().__init__()
         self.rows, self.columns = 1, 1
         self.lost: Places = {}
-        self._rest = b""
+        self._row, self._column = 0, 0
+        self._numbers: dict[str, int] = {}  # column letters -> number from 1
+        self._kind = ""
+        self._formula: list[str] | None = None
+        self._value: list[str] | None = None
 
-    def see(self, piece: bytes) -> None:
-        text = self._rest + piece
-        for letters, digits in set(_REFERENCE.findall(text)):
-            self.rows = max(self.rows, int(digits))
-            self.columns = max(self.columns, _column_number(letters))
-        if b't="e"' in text or b"<f" in text or b":f" in text:
-            self._find_lost(text)
-        last = max(text.rfind(b"<c "), text.rfind(b":c "))
-        cut = text.rfind(b"<", 0, last + 1) if last >= 0 else 0
-        self._rest = text[cut:][-LONGEST_CELL:]
+    def start(self, name: str, attributes: Mapping[str, str]) -> None:
+        name = name.rpartition(":")[2]
+        if name == "c":
+            self.finish_cell()
+            self._place(attributes.get("r"))
+            self._kind = attributes.get("t", "n")
+        elif name == "row":
+            self.finish_cell()
+            row = attributes.get("r", "")
+            self._row = _number(row) if row else self._row + 1
+            self._column = 0
+        elif name == "f" and self._kind:
+            self._formula = self.collect()
+        elif name == "v" and (self._kind == "e" or self._formula is not None):
+            self._value = self.collect()
 
-    def _find_lost(self, text: bytes) -> None:
-        opening = b"<c " if b"<c " in text else b":c "
-        for cell in text.split(opening)[1:]:
-            if b't="e"' not in cell and b"<f" not in cell and b":f" not in cell:
-                continue
-            attributes, _, content = cell.partition(b">")
-            place = _CELL_PLACE.search(b" " + attributes)
-            if place is None or b't="str"' in attributes:
-                continue
-            lost = _lost_text(attributes, content)
-            if lost:
-                self.lost[int(place.group(2)) - 1, _column_number(place.group(1)) - 1] = unescaped(lost)
+    def _place(self, reference: str | None) -> None:
+        """Where a cell stands: at its reference, or after the one before."""
+        if reference is None:
+            self._column += 1
+        else:
+            letters = reference.rstrip("0123456789")
+            column = self._numbers.get(letters) or self._new_letters(reference, letters)
+            self._row, self._column = _number(reference[len(letters) :]), column
+        self.rows = max(self.rows, self._row)
+        self.columns = max(self.columns, self._column)
 
-    def end(self) -> None:
-        """Nothing is kept back."""
+    def _new_letters(self, reference: str, letters: str) -> int:
+        if not _LETTERS.fullmatch(letters):
+            raise UnusualXmlError(f'a cell at "{reference[:20]}"')
+        number = 0
+        for letter in letters.upper():
+            number = number * 26 + ord(letter) - ord("A") + 1
+        return self._numbers.setdefault(letters, number)
+
+    def finish_cell(self) -> None:
+        """Notes the cell that ends here if the reading library loses it."""
+        if self.texts is not None or self._kind == "e":
+            shown = "".join(self._value or ()).strip()
+            place = (max(self._row, 1) - 1, self._column - 1)
+            if self._kind == "e":
+                self.lost[place] = shown or "#N/A"
+            elif self._formula is not None and not shown and self._kind != "str":
+                self.lost[place] = "=" + "".join(self._formula).strip()
+            self.collect_no_more()
+        self._kind, self._formula, self._value = "", None, None
 
     def lost_in(self, sheet: str) -> Places:
         """All lost cells: an XLSX member holds one sheet."""
         return self.lost
 
 
-class OdsScan:
+class OdsScan(_Scan):
     """All sheets of an ODS file, with repeats written out and blank runs at the edges left out."""
 
     def __init__(self) -> None:
-        self.rows, self.columns = 0, 0
+        super().__init__()
         self.lost: dict[str, Places] = {}
-        self._rest, self._sheet = b"", ""
-        self._row, self._repeat, self._column = 0, 0, 0
+        self._sheet = ""
+        self._row, self._row_repeat, self._column, self._cell_repeat = 0, 0, 0, 0
+        self._cell: Mapping[str, str] | None = None
+        self._has_content = False
 
-    def see(self, piece: bytes) -> None:
-        text = self._rest + piece
-        end = max(text.rfind(b"<table:"), 0)  # the last tag and its text may be cut
-        self._tags(text, end)
-        self._rest = text[end:][-LONGEST_CELL:]
-
-    def end(self) -> None:
-        """Sees what was kept back for the next piece."""
-        self._tags(self._rest, len(self._rest))
-
-    def _tags(self, text: bytes, end: int) -> None:
-        for match in _ODS_TAG.finditer(text, 0, end):
-            self._tag(match.group(1), match.group(2), text, match.end())
-
-    def _tag(self, name: bytes, attributes: bytes, text: bytes, end: int) -> None:
-        if name == b"table":
-            found = _ODS_NAME.search(attributes)
-            self._sheet = unescaped(found.group(1)) if found else ""
-            self._row, self._repeat = 0, 0
-        elif name == b"table-row":
-            self._row += self._repeat
-            self._repeat, self._column = _repeats(_ROWS_REPEATED, attributes), 0
+    def start(self, name: str, attributes: Mapping[str, str]) -> None:
+        if name in ("table:table-cell", "table:covered-table-cell"):
+            self.finish_cell()
+            self._cell, self._has_content = attributes, False
+            if (
+                attributes.get("calcext:value-type") == "error"
+                or attributes.get("office:value-type") == "error"
+            ):
+                self.collect()
+        elif name == "table:table-row":
+            self.finish_cell()
+            self._row += self._row_repeat
+            self._row_repeat, self._column = _repeats(attributes, "table:number-rows-repeated"), 0
+        elif name == "table:table":
+            self.finish_cell()
+            self._sheet = attributes.get("table:name", "")
+            self._row, self._row_repeat = 0, 0
         else:
-            if b'value-type="error"' in attributes:
-                shown = _ODS_TEXT.search(text, end, end + 200)
-                word = (
-                    unescaped(shown.group(1))
-                    if shown and shown.group(1).startswith((b"#", b"Err"))
-                    else "#N/A"
-                )
-                self.lost.setdefault(self._sheet, {})[self._row, self._column] = word
-            self._column += _repeats(_COLUMNS_REPEATED, attributes)
-            if not attributes.endswith(b"/") or b"value" in attributes:
-                self.columns = max(self.columns, self._column)
-                self.rows = max(self.rows, self._row + self._repeat)
+            self._has_content = True
+
+    def finish_cell(self) -> None:
+        """Counts the cell that ends here, and notes an error, which the reading library loses."""
+        cell, self._cell = self._cell, None
+        if cell is None:
+            return
+        if self.texts is not None:
+            word = "".join(self.texts).strip()
+            shown = word if word.startswith(("#", "Err")) else "#N/A"
+            self.lost.setdefault(self._sheet, {})[self._row, self._column] = shown
+            self.collect_no_more()
+        self._column += _repeats(cell, "table:number-columns-repeated")
+        if self._has_content or any("value" in name for name in cell):
+            self.columns = max(self.columns, self._column)
+            self.rows = max(self.rows, self._row + self._row_repeat)
 
     def lost_in(self, sheet: str) -> Places:
         """Lost cells of one sheet."""
         return self.lost.get(sheet, {})
 
 
-def _lost_text(attributes: bytes, content: bytes) -> bytes:
-    """The error word of a cell, or its formula where no value is stored; empty for other cells."""
-    value, formula = _CELL_VALUE.search(content), _CELL_FORMULA.search(content)
-    shown = value.group(1) if value is not None else b""
-    if b't="e"' in attributes:
-        return shown or b"#N/A"
-    return b"=" + (formula.group(1) or b"") if formula is not None and not shown else b""
+class ElementList(_Scan):
+    """The attributes of all elements of one name, whatever its prefix."""
+
+    def __init__(self, name: str) -> None:
+        super().__init__()
+        self._name = name
+        self.found: list[dict[str, str]] = []
+
+    def start(self, name: str, attributes: Mapping[str, str]) -> None:
+        if name.rpartition(":")[2] == self._name:
+            self.found.append(dict(attributes))
+
+    def finish_cell(self) -> None:
+        """Nothing is kept for the end."""
 
 
-def _repeats(pattern: re.Pattern[bytes], attributes: bytes) -> int:
-    match = pattern.search(attributes)
-    return int(match.group(1)[:12]) if match else 1
+def elements(xml: bytes, name: str) -> list[dict[str, str]]:
+    """The attributes of all elements of a name in a whole document; raises ValueError for unusual XML."""
+    scan = ElementList(name)
+    scan.see(xml)
+    scan.end()
+    return scan.found
 
 
-def _column_number(letters: bytes) -> int:
-    number = 0
-    for letter in letters:
-        number = number * 26 + letter - ord("A") + 1
-    return number
+def _number(digits: str) -> int:
+    if not (digits.isascii() and digits.isdigit() and len(digits) <= _REPEAT_DIGITS):
+        raise UnusualXmlError(f'a cell in row "{digits[:20]}"')
+    return int(digits)
 
 
-def unescaped(xml: bytes) -> str:
-    """XML text without its entities."""
-    return html.unescape(xml.decode("utf-8", "replace"))
+def _repeats(attributes: Mapping[str, str], name: str) -> int:
+    return _number(attributes.get(name, "1").strip())

@@ -90,6 +90,9 @@ def _put_back(rows: list[list[Cell]], lost: Places) -> None:
 def _fill_merged(rows: list[list[Cell]], sheet: CalamineSheet) -> int:
     """Writes the text of cells merged downwards into all rows they cover; how many merged areas there were."""
     areas = [area for area in sheet.merged_cell_ranges or () if area[1][0] > area[0][0]]
+    cells = sum(min(bottom + 1, len(rows)) - top for (top, _), (bottom, _) in areas)
+    if cells > len(rows) * max(sheet.total_width, 1):
+        raise ValueError("its merged areas cover one another")
     for (top, left), (bottom, _) in areas:
         for row in range(top + 1, min(bottom + 1, len(rows))):
             if left < len(rows[row]) and rows[row][left] == "":
