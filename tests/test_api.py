@@ -76,7 +76,6 @@ def test_overrides_take_every_kind_of_value(tmp_path: Path):
     overrides = {
         "classify.extra": {"nearly one": [0.8, 1.2]},
         "partition.prefer": ["EPMA", "laser"],
-        "report.after_run": False,
         "report.title": 'a "quoted" title',
     }
     run = tieline.reduce(config, overrides=overrides, out=tmp_path / "elsewhere")
@@ -85,6 +84,12 @@ def test_overrides_take_every_kind_of_value(tmp_path: Path):
     assert run.settings["report"]["title"] == 'a "quoted" title'
     assert "nearly one" in set(run.table("classify")["class"])
     assert (run.table("classify").query("element == 'Ni'")["technique_alpha"] == "EPMA").all()
+
+
+def test_a_report_on_request(tmp_path: Path):
+    config = demo_copy(tmp_path)
+    assert not (tieline.reduce(config).folder / "report.html").exists()
+    assert (tieline.reduce(config, report=True).folder / "report.html").exists()
 
 
 def test_problems_say_what_to_do(run: tieline.Run, tmp_path: Path):
@@ -100,7 +105,7 @@ def test_problems_say_what_to_do(run: tieline.Run, tmp_path: Path):
 
 def test_inputs_that_moved_are_named(tmp_path: Path):
     config = demo_copy(tmp_path)
-    run = tieline.reduce(config, overrides={"report.after_run": False})
+    run = tieline.reduce(config)
     (config.parent / "ember" / "rulings.csv").unlink()
     with pytest.raises(tieline.InputError, match=r"rulings\.csv"):
         run.recompute("screen")

@@ -35,12 +35,14 @@ ABOUT = {
 
 @pytest.fixture(scope="module")
 def described(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    return tieline.reduce(demo_copy(tmp_path_factory.mktemp("described")), overrides=ABOUT).folder
+    return tieline.reduce(
+        demo_copy(tmp_path_factory.mktemp("described")), overrides=ABOUT, report=True
+    ).folder
 
 
 @pytest.fixture(scope="module")
 def plain(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    return tieline.reduce(demo_copy(tmp_path_factory.mktemp("plain"))).folder
+    return tieline.reduce(demo_copy(tmp_path_factory.mktemp("plain")), report=True).folder
 
 
 def graph(folder: Path) -> dict[str, dict]:
@@ -154,7 +156,7 @@ def test_what_describes_a_session_makes_no_stage_stale(plain: Path, tmp_path: Pa
 
 
 def test_same_bytes_again(plain: Path, tmp_path: Path):
-    other = tieline.reduce(demo_copy(tmp_path)).folder
+    other = tieline.reduce(demo_copy(tmp_path), report=True).folder
     for name in (METADATA, DATA_PACKAGE):
         assert (other / name).read_bytes() == (plain / name).read_bytes()
 

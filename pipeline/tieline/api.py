@@ -1,6 +1,6 @@
 """The Python interface: reduce a session, open what a run wrote, try one stage with other settings.
 
-- `reduce(config, *, overrides=None, out=None, fresh=False) -> Run`
+- `reduce(config, *, overrides=None, out=None, fresh=False, report=False) -> Run`
 - `open_run(folder) -> Run`
 - `Run.table(name)`, `Run.tables`, `Run.settings`, `Run.recompute(stage, settings)`
 """
@@ -134,12 +134,13 @@ def reduce(
     overrides: Mapping[str, object] | None = None,
     out: str | Path | None = None,
     fresh: bool = False,
+    report: bool = False,
 ) -> Run:
-    """Brings the run folder of a configuration up to date, with its report, as `tieline run` does.
+    """Brings the run folder of a configuration up to date, as `tieline run` does.
 
     `overrides` replaces settings for this run: `{"screen.total.sigmas": 3}`. `out` is the folder of run folders,
-    instead of the configured one; `fresh` recomputes every stage. Raises InputError with every problem found, and
-    then has changed nothing.
+    instead of the configured one; `fresh` recomputes every stage; `report` writes the report too, where it is not
+    current. Raises InputError with every problem found, and then has changed nothing.
     """
     from tieline import configuration, runner
     from tieline.crate import write_crate
@@ -148,7 +149,7 @@ def reduce(
     texts = [f"{key}={_toml(value)}" for key, value in (overrides or {}).items()]
     session = configuration.load(Path(config), overrides=texts, out=None if out is None else Path(out))
     runner.run(session, fresh=fresh)
-    if session.settings.report.after_run:
+    if report or session.settings.report.after_run:
         refresh_report(session)
     write_crate(session)
     return Run(session.run_folder)
