@@ -58,30 +58,38 @@ def _ranked(
     relative_sd: FloatArray,
     prefer: tuple[str, ...],
 ) -> Candidates:
-    element = labels(pair, "element").codes[alpha]
+    elements = labels(pair, "element")
+    quotient = pairs_row * (len(elements.texts) + 1) + elements.codes[alpha]
+    order = np.argsort(quotient, kind="stable")
+    new = _first_of_equals(quotient[order])
+    if not new.all():
+        order = np.lexsort((*_preferences(alpha, beta, pair, relative_sd, prefer), quotient))
+        new = _first_of_equals(quotient[order])
+    chosen_row = np.flatnonzero(new)[np.cumsum(new) - 1] if len(new) else order
+    return Candidates(pairs_row[order], alpha[order], beta[order], new, chosen_row)
+
+
+def _first_of_equals(ordered: IntArray) -> BoolArray:
+    new = np.ones(len(ordered), dtype=np.bool_)
+    new[1:] = ordered[1:] != ordered[:-1]
+    return new
+
+
+def _preferences(
+    alpha: IntArray, beta: IntArray, pair: pa.Table, relative_sd: FloatArray, prefer: tuple[str, ...]
+) -> tuple[IntArray | FloatArray | BoolArray, ...]:
+    """What `RULE` goes by, the least important first; smaller is better."""
     batch, technique, analyte = (labels(pair, name) for name in ("batch", "technique", "analyte"))
-    preference = np.array(
-        [prefer.index(t) if t in prefer else len(prefer) for t in technique.texts], dtype=np.int64
-    )
-    preference = preference[technique.codes] if len(technique.codes) else preference
+    places = [prefer.index(t) if t in prefer else len(prefer) for t in technique.texts]
+    preference = np.array([*places, len(prefer)], dtype=np.int64)[technique.codes]
     is_limit = ~np.isfinite(numbers(pair, "mean_ppm"))
-    order = np.lexsort(
-        (
-            batch.codes[beta],
-            batch.codes[alpha],
-            analyte.codes[beta],
-            analyte.codes[alpha],
-            np.nan_to_num(np.hypot(relative_sd[alpha], relative_sd[beta]), nan=np.inf),
-            is_limit[alpha].astype(np.int64) + is_limit[beta],
-            preference[alpha] + preference[beta],
-            batch.codes[alpha] != batch.codes[beta],
-            element,
-            pairs_row,
-        )
-    )
-    pairs_row, element, alpha, beta = pairs_row[order], element[order], alpha[order], beta[order]
-    new = np.ones(len(order), dtype=np.bool_)
-    new[1:] = (pairs_row[1:] != pairs_row[:-1]) | (element[1:] != element[:-1])
-    return Candidates(
-        pairs_row, alpha, beta, new, np.flatnonzero(new)[np.cumsum(new) - 1] if len(new) else order
+    return (
+        batch.codes[beta],
+        batch.codes[alpha],
+        analyte.codes[beta],
+        analyte.codes[alpha],
+        np.nan_to_num(np.hypot(relative_sd[alpha], relative_sd[beta]), nan=np.inf),
+        is_limit[alpha].astype(np.int64) + is_limit[beta],
+        preference[alpha] + preference[beta],
+        batch.codes[alpha] != batch.codes[beta],
     )

@@ -58,6 +58,10 @@ class _Sources:
     """The phase means and everything that makes them uncertain, row by row of `pair`."""
 
     def __init__(self, pair: pa.Table, calibrate: pa.Table) -> None:
+        self.labels = {
+            name: labels(pair, name)
+            for name in ("experiment", "phase", "element", "technique", "batch", "analyte")
+        }
         row = calibrate_row(pair, calibrate)
         shared = np.append(numbers(calibrate, "relative_sd"), np.nan)[row]
         self.mean, self.se, self.counting_se, self.dof = (
@@ -66,12 +70,12 @@ class _Sources:
         self.n = np.asarray(numbers(pair, "n_used"), dtype=np.int64)
         self.calibration_known: BoolArray = np.isfinite(shared)
         self.calibration = np.nan_to_num(shared)
-        batch, element = labels(pair, "batch"), labels(pair, "element")
+        batch, element = self.labels["batch"], self.labels["element"]
         self.calibration_key = batch.codes * (len(element.texts) + 1) + element.codes
         self.matrix = np.append(numbers(calibrate, "matrix_sd"), 0.0)[row]
         standard = numbers(pair, "internal_standard_sd")
         self.internal_standard = np.nan_to_num(standard)
-        experiment, phase, technique = (labels(pair, name) for name in ("experiment", "phase", "technique"))
+        experiment, phase, technique = (self.labels[name] for name in ("experiment", "phase", "technique"))
         key = (experiment.codes * (len(phase.texts) + 1) + phase.codes) * (
             len(technique.texts) + 1
         ) + technique.codes
@@ -143,7 +147,7 @@ def _partition_table(
         return np.where(from_means, part[rows], np.nan)
 
     def of(column: str, side: IntArray) -> Labels:
-        return labels(pair, column).take(side)
+        return sources.labels[column].take(side)
 
     return build(
         PARTITION,
@@ -234,21 +238,16 @@ def _covariance(table: pa.Table, alpha: Side, rows: IntArray, beta: Side) -> pa.
     ]
     # A standard that both phases share cancels in D.
     keys = [np.where(keys[0] == keys[1], -1, key) for key in keys]
-    alone = np.flatnonzero(usable)
-    sharing = np.flatnonzero(usable & ((keys[0] >= 0) | (keys[1] >= 0)))
-    first, second = _pairs_within(_pair_codes(table)[sharing])
-    first, second = sharing[first], sharing[second]
+    first, second = _pairs_within(_pair_codes(table), usable, usable & ((keys[0] >= 0) | (keys[1] >= 0)))
     shared = np.zeros(len(first))
     for side, key in zip((alpha, beta), keys, strict=True):
         relative = side.internal_standard[rows]
         same = (key[first] == key[second]) & (key[first] >= 0)
         shared += np.where(same, relative[first] * relative[second], 0.0)
-    kept = shared != 0
-    first, second, shared = first[kept], second[kept], shared[kept]
-    covariance = np.concatenate([sd[alone] ** 2, D[first] * D[second] * shared])
-    first, second = np.concatenate([alone, first]), np.concatenate([alone, second])
-    order = np.lexsort((second, first))
-    first, second, covariance = first[order], second[order], covariance[order]
+    covariance = np.where(first == second, sd[first] ** 2, D[first] * D[second] * shared)
+    kept = (first == second) | (shared != 0)
+    if not kept.all():
+        first, second, covariance = first[kept], second[kept], covariance[kept]
     element = labels(table, "element")
     return build(
         PARTITION_COVARIANCE,
@@ -270,17 +269,21 @@ def _pair_codes(table: pa.Table) -> IntArray:
     return np.cumsum(new)
 
 
-def _pairs_within(code: IntArray) -> tuple[IntArray, IntArray]:
-    """Positions (i, j), i < j, of all two rows with one code; rows of one code stand together."""
-    n = len(code)
-    if n == 0:
-        return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64)
-    end = np.searchsorted(code, code, side="right")
-    size = end - np.arange(n) - 1
-    first = np.repeat(np.arange(n), size)
-    start = np.cumsum(size) - size
-    second = np.arange(len(first)) - start[first] + first + 1
-    return first, second
+def _pairs_within(code: IntArray, usable: BoolArray, sharing: BoolArray) -> tuple[IntArray, IntArray]:
+    """Row pairs (i, j), sorted: every usable row with itself, and i < j of all sharing rows with one code.
+
+    Rows of one code stand together; a sharing row is usable.
+    """
+    alone, among = np.flatnonzero(usable), np.flatnonzero(sharing)
+    place = np.cumsum(sharing)[alone]  # of the next sharing row after each
+    end = np.searchsorted(code[among], code[alone], side="right")
+    size = np.where(sharing[alone], end - place, 0) + 1
+    first = np.repeat(np.arange(len(alone)), size)
+    offset = np.arange(len(first)) - np.repeat(np.cumsum(size) - size, size)
+    second = alone[first]
+    later = offset > 0
+    second[later] = among[place[first[later]] + offset[later] - 1]
+    return alone[first], second
 
 
 def _ledger(pair: pa.Table, found: Candidates) -> Ledger:

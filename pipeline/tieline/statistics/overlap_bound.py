@@ -43,8 +43,7 @@ def overlap_bound(
     number = np.maximum(known.sum(axis=-1, keepdims=True), 1)
     single = np.full(apparent.shape, 1 - (1 - confidence) / 2)
     joint = np.broadcast_to(1 - (1 - confidence) / number, apparent.shape)
-    upper = apparent + _quantile(joint, degrees_of_freedom) * standard_error
-    limit = np.min(np.where(known, upper, np.inf), axis=-1, initial=np.inf)
+    limit = _smallest_upper_end(apparent, standard_error, degrees_of_freedom, joint, known)
     fraction = np.where(known.any(axis=-1), np.clip(limit, 0.0, 1.0), np.nan)
     half = _quantile(single, degrees_of_freedom) * standard_error
     f = fraction[..., None]
@@ -56,6 +55,34 @@ def overlap_bound(
     high = np.where(all_overlap, np.where(apparent + half > 1, np.inf, apparent + half), high)
     only_upper = known & (f >= 0.3 * apparent)
     return OverlapBound(fraction, np.where(known, low, np.nan), np.where(known, high, np.nan), only_upper)
+
+
+def _smallest_upper_end(
+    apparent: FloatArray,
+    standard_error: FloatArray,
+    degrees_of_freedom: FloatArray | None,
+    probability: FloatArray,
+    known: BoolArray,
+) -> FloatArray:
+    """min over the elements of D_app + q s, shape (...); infinite without data.
+
+    Student's quantile takes long and is above the normal one: only elements whose normal end is below the
+    smallest end found so far can have a smaller one.
+    """
+    normal = np.where(known, apparent + ndtri(probability) * standard_error, np.inf)
+    if degrees_of_freedom is None or not apparent.size:
+        return np.asarray(normal.min(axis=-1, initial=np.inf))
+    smallest = normal.argmin(axis=-1)[..., None]
+    first, s, dof, p = (
+        np.take_along_axis(part, smallest, axis=-1)
+        for part in (apparent, standard_error, degrees_of_freedom, probability)
+    )
+    found = np.where(np.take_along_axis(known, smallest, axis=-1), first + stdtrit(dof, p) * s, np.inf)
+    asked = known & ((normal <= found) | (probability < 0.5))
+    upper = np.full(apparent.shape, np.inf)
+    quantile = stdtrit(degrees_of_freedom[asked], probability[asked])
+    upper[asked] = apparent[asked] + quantile * standard_error[asked]
+    return np.asarray(upper.min(axis=-1))
 
 
 def _quantile(probability: FloatArray, degrees_of_freedom: FloatArray | None) -> FloatArray:
