@@ -34,7 +34,7 @@ def first_configuration(files: Sequence[InputFile], session: str) -> str:
     lines += _phases(looks)
     lines += _reference_materials(looks)
     lines += _internal_standards(looks)
-    return "\n".join(lines).rstrip("\n") + "\n"
+    return "\n".join(map(_one_line, lines)).rstrip("\n") + "\n"
 
 
 def _table(look: Look) -> list[str]:
@@ -181,8 +181,14 @@ def _internal_standards(looks: Sequence[Look]) -> list[str]:
 
 
 def _text(value: str) -> str:
-    """A TOML basic string; JSON's escapes are TOML's."""
-    return json.dumps(value, ensure_ascii=False)
+    """A TOML basic string; JSON's escapes are TOML's, and whatever does not print is escaped too."""
+    text = json.dumps(value, ensure_ascii=False)
+    return "".join(c if c.isprintable() else f"\\U{ord(c):08X}" for c in text)
+
+
+def _one_line(line: str) -> str:
+    """The line without anything that could end it: a label in a comment must not become a key."""
+    return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in line)
 
 
 def _key(name: str) -> str:
