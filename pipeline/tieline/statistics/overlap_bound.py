@@ -6,6 +6,7 @@ import numpy as np
 from scipy.special import ndtri, stdtrit
 
 from tieline.statistics.groups import BoolArray, FloatArray
+from tieline.statistics.student import student_quantile
 
 
 class OverlapBound(NamedTuple):
@@ -41,11 +42,10 @@ def overlap_bound(
     """
     known = np.isfinite(apparent) & np.isfinite(standard_error)
     number = np.maximum(known.sum(axis=-1, keepdims=True), 1)
-    single = np.full(apparent.shape, 1 - (1 - confidence) / 2)
     joint = np.broadcast_to(1 - (1 - confidence) / number, apparent.shape)
     limit = _smallest_upper_end(apparent, standard_error, degrees_of_freedom, joint, known)
     fraction = np.where(known.any(axis=-1), np.clip(limit, 0.0, 1.0), np.nan)
-    half = _quantile(single, degrees_of_freedom) * standard_error
+    half = _quantile(1 - (1 - confidence) / 2, degrees_of_freedom) * standard_error
     f = fraction[..., None]
     with np.errstate(divide="ignore", invalid="ignore"):
         low = np.minimum(apparent - half, (apparent - half - f) / (1 - f))
@@ -85,7 +85,7 @@ def _smallest_upper_end(
     return np.asarray(upper.min(axis=-1))
 
 
-def _quantile(probability: FloatArray, degrees_of_freedom: FloatArray | None) -> FloatArray:
+def _quantile(probability: float, degrees_of_freedom: FloatArray | None) -> FloatArray:
     if degrees_of_freedom is None:
         return np.asarray(ndtri(probability))
-    return np.asarray(stdtrit(degrees_of_freedom, probability))
+    return student_quantile(degrees_of_freedom, probability)

@@ -22,6 +22,7 @@ from scipy import special
 from tieline.statistics.groups import BoolArray, FloatArray, divide
 from tieline.statistics.gum_s1 import ScaledT, ratio_draws_interval, share_above
 from tieline.statistics.means import MeanEstimate
+from tieline.statistics.student import student_quantile
 
 METHODS = ("fieller", "gum-s1")
 
@@ -99,7 +100,7 @@ def ratio_interval(
     dof = ratio_dof(alpha, beta, u_alpha, u_beta)
     tail = 0.5 + 0.5 * confidence
     usable = _usable(alpha, beta)
-    t = np.where(usable, special.stdtrit(np.where(usable, dof, 1.0), tail), np.nan)
+    t = np.where(usable, student_quantile(np.where(usable, dof, 1.0), tail), np.nan)
     ends = fieller_set(alpha.mean, beta.mean, *_variances(alpha, beta, u_alpha, u_beta), t)
     draws = usable & _by_draws(alpha, beta, method)
     if draws.any():
