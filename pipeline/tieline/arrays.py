@@ -98,16 +98,22 @@ def labels(table: pa.Table, name: str) -> Labels:
 
 def label_codes(array: pa.DictionaryArray) -> Labels:
     """A label array as codes into its sorted texts in use, whatever the order of its dictionary."""
-    indices = array.indices.fill_null(-1) if array.null_count else array.indices
-    codes, texts = indices.to_numpy(zero_copy_only=False), array.dictionary.to_pylist()
-    used = np.zeros(len(texts) + 1, dtype=np.bool_)
-    used[codes] = True  # -1, null, marks the extra place at the end
+    texts = array.dictionary.to_pylist()
+    # One above the code, 0 for null, while counting which are in use.
+    codes = _codes_from_one(array.indices)
+    used = np.bincount(codes, minlength=len(texts) + 1)[1:]
+    codes -= 1
     in_use = sorted(set(compress(texts, used)))
     if in_use == texts:
-        return Labels(codes.astype(np.int64), tuple(texts))
+        return Labels(codes, tuple(texts))
     place = {text: position for position, text in enumerate(in_use)}
     places = np.array([*(place.get(text, -1) for text in texts), -1], dtype=np.int64)
     return Labels(places[codes], tuple(in_use))
+
+
+def _codes_from_one(indices: pa.Array) -> IntArray:
+    known = indices.fill_null(-1) if indices.null_count else indices
+    return np.asarray(known.to_numpy() + np.int64(1))
 
 
 def one_array(column: pa.ChunkedArray) -> pa.Array:

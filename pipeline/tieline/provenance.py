@@ -12,6 +12,10 @@ import pyarrow as pa
 import pyarrow.compute as pc
 
 from tieline.arrays import label_codes, one_array
+from tieline.statistics.threads import side_by_side
+
+# Below this a thread costs more than it saves.
+ROWS_FOR_THREADS = 100_000
 
 
 def bytes_digest(data: bytes | memoryview | pa.Buffer) -> str:
@@ -77,9 +81,13 @@ def content_digest(table: pa.Table, known: ColumnDigests | None = None) -> str:
     unused dictionary entries do not count.
     """
     known = known or ColumnDigests()
+    digests = (
+        side_by_side(known.of, table.columns)
+        if table.num_rows > ROWS_FOR_THREADS
+        else [known.of(column) for column in table.columns]
+    )
     columns = [
-        [field.name, str(field.type), known.of(column)]
-        for field, column in zip(table.schema, table.columns, strict=True)
+        [field.name, str(field.type), digest] for field, digest in zip(table.schema, digests, strict=True)
     ]
     return bytes_digest(json_text([table.num_rows, columns]).encode())
 

@@ -11,7 +11,9 @@ from the sigmas of the measured values of the group; where there are none, it le
 up to the smallest limit, as Poisson counts on a background of about 18 counts do.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from scipy import special
@@ -28,6 +30,7 @@ from tieline.statistics.groups import (
 )
 from tieline.statistics.limits import MeanLimits
 from tieline.statistics.search import root, summit
+from tieline.statistics.threads import side_by_side
 
 LIMIT_IN_SIGMAS = 3.0
 GROWTH_TO_LIMIT = 0.5
@@ -88,11 +91,13 @@ def censored_limits(
     n_groups: int,
     *,
     confidence: float = 0.95,
+    limit_in_sigmas: float = LIMIT_IN_SIGMAS,
 ) -> MeanLimits:
     """Mean and limits of every group with a censored value; groups without one get NaN.
 
     All arrays of shape (S,). values: read where not censored; sigmas: NaN where not given; limits: > 0
-    where censored, NaN allowed elsewhere.
+    where censored, NaN allowed elsewhere; limit_in_sigmas: how many blank sigmas a limit is, where no sigma
+    is given with it.
 
     Partly censored: profile likelihood of the mean with normal tail areas for the censored values (Cohen
     1959; Helsel 2005), the relative spread between values profiled over 0-1.4, cut where twice the drop
@@ -107,17 +112,27 @@ def censored_limits(
     n = group_count(group, n_groups)
     n_censored = group_count(group[censored], n_groups)
     mean, low, high = (np.full(n_groups, np.nan) for _ in range(3))
-    rectangle = _Rectangles(values, sigmas, limits, censored, group, n_groups)
+    rectangle = _Rectangles(values, sigmas, limits, censored, group, n_groups, limit_in_sigmas)
     affected = np.flatnonzero(n_censored > 0)
     # Groups of like size together: little of a rectangle is then empty.
     affected = affected[np.lexsort((n_censored[affected], n[affected]))]
     every = n_censored[affected] == n[affected]
     for chosen, solve in ((affected[every], _all_below), (affected[~every], _partly_below)):
-        for first in range(0, len(chosen), _CHUNK_GROUPS):
-            part = chosen[first : first + _CHUNK_GROUPS]
-            padded = rectangle(part)
-            mean[part], low[part], high[part] = solve(padded, n[part], confidence)
+        parts = [chosen[first : first + _CHUNK_GROUPS] for first in range(0, len(chosen), _CHUNK_GROUPS)]
+        solved = side_by_side(partial(_solved, solve, rectangle, n, confidence), parts)
+        for part, limits_of_part in zip(parts, solved, strict=True):
+            mean[part], low[part], high[part] = limits_of_part
     return MeanLimits(mean, low, high, n, n_censored)
+
+
+def _solved(
+    solve: Callable[[_Padded, IntArray, float], tuple[FloatArray, FloatArray, FloatArray]],
+    rectangle: "_Rectangles",
+    n: IntArray,
+    confidence: float,
+    part: IntArray,
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    return solve(rectangle(part), n[part], confidence)
 
 
 class _Rectangles:
@@ -131,8 +146,9 @@ class _Rectangles:
         censored: BoolArray,
         group: IntArray,
         n_groups: int,
+        limit_in_sigmas: float,
     ) -> None:
-        blank, self.kappa = _noise_model(values, sigmas, limits, censored, group, n_groups)
+        blank, self.kappa = _noise_model(values, sigmas, limits, censored, group, n_groups, limit_in_sigmas)
         self.parts = [
             (rows[np.argsort(group[rows], kind="stable")], level, blank, group_count(group[rows], n_groups))
             for rows, level in ((np.flatnonzero(~censored), values), (np.flatnonzero(censored), limits))
@@ -168,9 +184,10 @@ def _noise_model(
     censored: BoolArray,
     group: IntArray,
     n_groups: int,
+    limit_in_sigmas: float,
 ) -> tuple[FloatArray, FloatArray]:
     """Blank variance of every value, shape (S,), and kappa of every group, shape (n_groups,)."""
-    from_limit = (limits / LIMIT_IN_SIGMAS) ** 2
+    from_limit = (limits / limit_in_sigmas) ** 2
     blank = np.where(censored & ~np.isnan(sigmas), sigmas**2, from_limit)
     known = ~np.isnan(blank)
     usual = group_mean(blank[known], group[known], n_groups)

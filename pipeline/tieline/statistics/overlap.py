@@ -19,8 +19,9 @@ from dataclasses import dataclass, fields
 import numpy as np
 
 from tieline.statistics.groups import BoolArray, FloatArray, IntArray
-from tieline.statistics.overlap_findings import ORACLE_FACTOR, PER_SPOT, findings
+from tieline.statistics.overlap_findings import ORACLE_FACTOR, PER_SPOT, Results, findings
 from tieline.statistics.overlap_fit import fit_group_block, mixing_directions
+from tieline.statistics.threads import side_by_side
 
 __all__ = ["ORACLE_FACTOR", "OverlapScores", "clean_covariance", "overlap_scores"]
 
@@ -112,11 +113,11 @@ def overlap_scores(
     last = np.where(occupied.any(axis=1), spots - np.argmax(occupied[:, ::-1], axis=1), 0)
     order = np.argsort(last, kind="stable")
     step = max(1, _CELLS_AT_ONCE // max(1, spots * elements))
-    for start in range(0, groups, step):
-        rows = order[start : start + step]
-        width = int(last[rows].max(initial=0))
-        if width < _FEWEST_SPOTS:
-            continue
+    blocks = [order[start : start + step] for start in range(0, groups, step)]
+    blocks = [rows for rows in blocks if last[rows].max(initial=0) >= _FEWEST_SPOTS]
+
+    def score(rows: IntArray) -> Results:
+        width = int(last[rows].max())
         state = fit_group_block(
             values[rows, :width],
             sigmas[rows, :width],
@@ -125,11 +126,13 @@ def overlap_scores(
             is_trace,
             nuisance,
         )
-        part = findings(state, *mixing_directions(state, is_trace, nuisance), z_limit, p_limit)
+        return findings(state, *mixing_directions(state, is_trace, nuisance), z_limit, p_limit)
+
+    for rows, part in zip(blocks, side_by_side(score, blocks), strict=True):
         for name, value in part.items():
             target = getattr(result, name)
             if name in PER_SPOT:
-                target[rows, :width] = value
+                target[rows, : value.shape[1]] = value
             else:
                 target[rows] = value
     return result
