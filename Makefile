@@ -27,7 +27,11 @@ format: $(DEV)
 	@$(BIN)/ruff check --fix .
 
 bench: $(DEV)  ## what is measured and never timed in a test
+	@$(BIN)/python tests/benchmarks/chain.py
 	@$(BIN)/python tests/benchmarks/ingest.py
+	@$(BIN)/python tests/benchmarks/partition.py
+	@$(BIN)/python tests/benchmarks/commands.py
+	@$(BIN)/python tests/benchmarks/archive.py
 
 docs: $(DEV)  ## build the documentation in site/; a warning is an error
 	@$(BIN)/python -m sphinx -q -W --keep-going -b html -d build/doctrees docs site
