@@ -63,7 +63,7 @@ def main() -> None:
             )
         again, counts = reduce(root, 2)
         print(f"all current: {again:.1f} s for {counts['current']} sessions")
-        files = [path for path in root.rglob("*.parquet")]
+        files = list(root.rglob("*.parquet"))
         size = sum(path.stat().st_size for path in files)
         print(f"{len(files)} Parquet files, {size / 1e6:.0f} MB, {size / sessions / 1e3:.0f} kB per session")
         ratio = seconds[1] / seconds[2]
