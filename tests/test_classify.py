@@ -29,6 +29,8 @@ def partition_table(
     columns: dict[str, object] = {}
     for column in PARTITION.columns:
         columns[column.name] = np.zeros(size) if column.kind == "number" else ["x"] * size
+        if column.kind == "flag":
+            columns[column.name] = np.ones(size, dtype=bool)
         if column.kind == "count":
             columns[column.name] = np.full(size, n)
     columns |= {"D": interval.value, "D_sd": interval.sd, "D_lo": interval.low, "D_hi": interval.high}

@@ -101,6 +101,13 @@ def laser_session(assumed: dict[str, float], true: dict[str, float]) -> list[dic
     return spots
 
 
+def with_standards(spots: list[dict], **standard: object) -> tuple[pa.Table, list[dict]]:
+    settings = ConvertSettings(internal_standard=(InternalStandard(**STANDARD, **standard),))
+    ingest, _ = ingest_tables(spots)
+    tables = convert(ingest, settings=settings).tables
+    return tables["convert"], tables["convert.standards"].to_pylist()
+
+
 TRUE = {"clinopyroxene": 20.0, "glass": 11.0}
 STANDARD = {"technique": "laser", "element": "CaO"}
 
@@ -118,21 +125,61 @@ def test_rescaling_undoes_wrong_internal_standards_exactly():
     for column in ("value_ppm", "sigma_ppm"):
         for key, value in ppm(right, column).items():
             assert ppm(mended, column)[key] == pytest.approx(value, rel=1e-12), key
-    relative = ppm(right, "internal_standard_sd")
-    assert relative["Lglass0", "La"] > 0
-    assert relative["Lglass0", "La"] == relative["Lglass1", "Sr88"]
-    assert relative["Pglass0", "CaO"] is None
+    _, standards = with_standards(laser_session(TRUE, TRUE), assumed=TRUE)
+    assert [(row["phase"], row["technique"]) for row in standards] == [
+        ("clinopyroxene", "laser"),
+        ("glass", "laser"),
+    ]
+    assert all(row["relative_sd"] > 0 and row["dof"] == pytest.approx(3, abs=0.2) for row in standards)
+    assert {row["source_batch"] for row in standards} == {"probe-1"}
+    assert {row["source_analyte"] for row in standards} == {"CaO"}
 
 
 def test_given_internal_standard_with_its_uncertainty():
     actual = {phase: Actual(value=value, sd=0.05 * value) for phase, value in TRUE.items()}
-    standard = InternalStandard(**STANDARD, assumed={"*": 10.0}, actual=actual)
-    table = converted(
-        laser_session({"clinopyroxene": 10.0, "glass": 10.0}, TRUE),
-        ConvertSettings(internal_standard=(standard,)),
-    )
+    spots = laser_session({"clinopyroxene": 10.0, "glass": 10.0}, TRUE)
+    table, standards = with_standards(spots, assumed={"*": 10.0}, actual=actual)
     assert ppm(table)["Lglass0", "La"] == pytest.approx(20.0, rel=1e-12)
-    assert ppm(table, "internal_standard_sd")["Lglass0", "La"] == pytest.approx(0.05)
+    assert [row["relative_sd"] for row in standards] == [pytest.approx(0.05)] * 2
+    assert {row["source_batch"] for row in standards} == {None}
+    assert {row["dof"] for row in standards} == {None}
+
+
+def test_assumed_values_of_the_table_are_taken_spot_by_spot():
+    # The same concentration, computed with another assumed CaO in every spot, which the table reports beside it.
+    spots = [one for one in laser_session(TRUE, TRUE) if one["spot"].startswith("P")]
+    for number, assumed in enumerate((9.0, 10.0, 12.0)):
+        keys = {"technique": "laser", "batch": "laser-1", "unit": "ppm", "phase": "glass"}
+        calcium = assumed * 1e4 * 40.078 / (40.078 + 15.999)
+        spots.append(spot(f"L{number}", {"Ca43": calcium, "La": 20.0 * assumed / TRUE["glass"]}, **keys))
+    table, _ = with_standards(spots, assumed_from="table")
+    assert [ppm(table)[f"L{number}", "La"] for number in range(3)] == [pytest.approx(20.0, rel=1e-6)] * 3
+
+
+def test_two_standards_share_a_technique_phase_by_phase():
+    spots = laser_session({"clinopyroxene": 10.0, "glass": 12.0}, TRUE)
+    both = (
+        InternalStandard(**STANDARD, assumed={"clinopyroxene": 10.0}),
+        InternalStandard(**STANDARD, assumed={"glass": 12.0}),
+    )
+    table = converted(spots, ConvertSettings(internal_standard=both))
+    assert ppm(table)["Lglass0", "La"] == pytest.approx(20.0, rel=1e-12)
+    assert ppm(table)["Lclinopyroxene0", "La"] == pytest.approx(2.0, rel=1e-12)
+    twice = (both[0], InternalStandard(**STANDARD, assumed={"clinopyroxene": 11.0, "glass": 12.0}))
+    with pytest.raises(InputError, match="clinopyroxene twice"):
+        converted(spots, ConvertSettings(internal_standard=twice))
+
+
+def test_iron_of_which_only_a_part_is_known_has_no_value():
+    spots = [
+        spot("a", {"FeO": 5.0, "Fe2O3": 2.0}),
+        spot("b", {"Fe2O3": 2.0}),
+        spot("c", {"FeO": "<0.3", "Fe2O3": 2.0}),
+    ]
+    values = ppm(converted(spots))
+    assert values["a", "FeO"] is not None
+    assert values["b", "Fe2O3"] is None
+    assert (values["c", "FeO"], values["c", "Fe2O3"]) == (None, None)
 
 
 def test_missing_actual_value_stops_or_is_said():

@@ -25,7 +25,8 @@ PPM = {"unit": "ppm", "technique": "laser", "batch": "laser-1"}
 
 def paired(spots: Sequence[dict[str, Any]], dropped: Sequence[str] = (), **settings: Any) -> StageResult:
     ingest, heads = ingest_tables(spots)
-    table = convert(ingest, settings=ConvertSettings()).tables["convert"]
+    tables = convert(ingest, settings=ConvertSettings()).tables
+    table = tables["convert"]
     batches = calibrate(table, heads, files={}, settings=CalibrateSettings()).tables["calibrate"]
     use = [name not in dropped for name in table.column("spot").to_pylist()]
     columns: dict[str, Any] = {
@@ -35,7 +36,14 @@ def paired(spots: Sequence[dict[str, Any]], dropped: Sequence[str] = (), **setti
         if column.name not in columns:
             columns[column.name] = np.full(table.num_rows, np.nan)
     columns |= {"use": use, "why": ["" if used else "ruling" for used in use]}
-    result = pair(table, batches, build(SCREEN, columns), heads, settings=PairSettings(**settings))
+    result = pair(
+        table,
+        tables["convert.standards"],
+        batches,
+        build(SCREEN, columns),
+        heads,
+        settings=PairSettings(**settings),
+    )
     result.ledger.check("pair")
     return result
 

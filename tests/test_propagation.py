@@ -34,6 +34,8 @@ def sides(draw: st.DrawFn) -> tuple[Side, Side]:
             numbers(relative),
             np.zeros(n),
             keys(),
+            np.zeros(n),
+            keys(),
         )
 
     alpha, beta = side(), side()
@@ -50,6 +52,8 @@ def sides(draw: st.DrawFn) -> tuple[Side, Side]:
             one.matrix,
             table[one.internal_standard_key] / 2,
             one.internal_standard_key,
+            table[one.standard_calibration_key] / 3,
+            one.standard_calibration_key,
         )
 
     return complete(alpha), complete(beta)
@@ -79,7 +83,17 @@ def test_shares_sum_to_one(pair: tuple[Side, Side]):
 
 
 def one(
-    mean: float, *, counting=0.0, spread=0.0, calibration=0.0, batch=0, matrix=0.0, standard=0.0, key=-1
+    mean: float,
+    *,
+    counting=0.0,
+    spread=0.0,
+    calibration=0.0,
+    batch=0,
+    matrix=0.0,
+    standard=0.0,
+    key=-1,
+    standard_calibration=0.0,
+    standard_batch=-1,
 ) -> Side:
     def of(x: float) -> np.ndarray:
         return np.array([x], dtype=float)
@@ -93,6 +107,8 @@ def one(
         of(matrix),
         of(standard),
         np.array([key]),
+        of(standard_calibration),
+        np.array([standard_batch]),
     )
 
 
@@ -117,6 +133,11 @@ def monte_carlo_sd(alpha: Side, beta: Side, n: int = 400_000) -> tuple[float, di
                 * variable("calibration", side.calibration_key[0], side.calibration[0])
                 * factor("calibration", side.matrix[0])
                 * variable("internal_standard", side.internal_standard_key[0], side.internal_standard[0])
+                * variable(
+                    "calibration",
+                    ("standard", side.standard_calibration_key[0]),
+                    side.standard_calibration[0],
+                )
             )
 
         return concentration(alpha) / concentration(beta)
@@ -138,8 +159,20 @@ def test_budget_against_monte_carlo(batches: tuple[int, int]):
         matrix=0.01,
         standard=0.015,
         key=4,
+        standard_calibration=0.02,
+        standard_batch=8,
     )
-    beta = one(40.0, counting=0.01, spread=0.015, calibration=0.03, batch=batches[1], standard=0.02, key=5)
+    beta = one(
+        40.0,
+        counting=0.01,
+        spread=0.015,
+        calibration=0.03,
+        batch=batches[1],
+        standard=0.02,
+        key=5,
+        standard_calibration=0.02,
+        standard_batch=9,
+    )
     budget = by_package(alpha, beta)
     sd, shares = monte_carlo_sd(alpha, beta)
     assert budget.D_sd[0] == pytest.approx(sd, rel=0.02)

@@ -7,13 +7,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from tieline.chemistry.header_words import PPM_PER_UNIT
 from tieline.chemistry.names import nearest_names, recognise_analyte
 from tieline.chemistry.oxides import parse_oxide
 from tieline.errors import InputError, Problem
 from tieline.reading.input_file import InputFile
 from tieline.reading.records import read_labels, read_records
 
-PPM_PER_UNIT = {"wt%": 1e4, "ppm": 1.0, "ppb": 1e-3}
 COLUMNS = ("material", "analyte", "value", "unit", "sd", "source")
 
 
@@ -68,14 +68,26 @@ def material_names(files: Mapping[str, InputFile]) -> dict[str, tuple[str, ...]]
 def _accepted(
     record: Mapping[str, object], file: str, row: int, problems: list[Problem]
 ) -> tuple[tuple[str, str], AcceptedValue] | None:
-    analyte = recognise_analyte(str(record["analyte"] or ""))
-    unit = str(record["unit"] or "").strip()
-    value, sd = float(record["value"]), float(record["sd"])  # type: ignore[arg-type]
-    before = len(problems)
+    found = concentration(record, file, row, problems)
     if not record["material"]:
         problems.append(
             Problem("the material has no name.", file, row, "material", "Name it as in the spot tables.")
         )
+        return None
+    return None if found is None else ((str(record["material"]), found[0]), found[1])
+
+
+def concentration(
+    record: Mapping[str, object], file: str, row: int, problems: list[Problem]
+) -> tuple[str, AcceptedValue] | None:
+    """Element and concentration of a record with analyte, value, unit and, if given, sd and source.
+
+    sd_ppm is 0 where none is given. None, and the reasons added to `problems`, where it cannot be used.
+    """
+    analyte = recognise_analyte(str(record["analyte"] or ""))
+    unit = str(record["unit"] or "").strip()
+    value, sd = float(record["value"]), float(record["sd"])  # type: ignore[arg-type]
+    before = len(problems)
     if analyte is None or analyte.element is None:
         names = nearest_names(str(record["analyte"]))
         remedy = f'Did you mean "{names[0]}"?' if names else "Write an oxide, element or isotope."
@@ -97,9 +109,7 @@ def _accepted(
     fraction = parse_oxide(analyte.name).element_fraction if analyte.kind == "oxide" else 1.0
     factor = PPM_PER_UNIT[_unit(unit) or "ppm"] * fraction
     sd_ppm = 0.0 if np.isnan(sd) else sd * factor
-    return (str(record["material"]), analyte.element), AcceptedValue(
-        value * factor, sd_ppm, str(record["source"] or "")
-    )
+    return analyte.element, AcceptedValue(value * factor, sd_ppm, str(record.get("source") or ""))
 
 
 def _unit(text: str) -> str | None:

@@ -21,7 +21,7 @@ from tieline.correction import sequence_of
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.chemistry import CalibrateSettings
-from tieline.statistics.means import phase_means
+from tieline.statistics.means import paule_mandel, phase_means
 from tieline.tables import build
 
 __all__ = ["calibrate", "read_accepted_values"]
@@ -36,6 +36,10 @@ class Reference:
     sequence: FloatArray
     material_group: Groups
     batch_group: IntArray
+
+
+# A reference material whose mean is less sure than this is left out where a surer one is there; own choice.
+MOST_RELATIVE_SE = 0.1
 
 
 @dataclass(frozen=True)
@@ -70,24 +74,24 @@ def calibrate(
     Raises InputError for accepted values that cannot be used.
     """
     accepted = read_accepted_values(files)
-    batches = group_rows([labels(convert, name) for name in ("technique", "batch", "element")])
+    batches = group_rows([labels(convert, name) for name in ("technique", "batch", "element", "analyte")])
     value, sigma = numbers(convert, "value_ppm"), numbers(convert, "sigma_ppm")
     is_reference = labels(convert, "material").codes >= 0
     measured = is_reference & np.isfinite(value)
     groups = group_rows(
-        [labels(convert, name) for name in ("technique", "batch", "material", "element")], measured
+        [labels(convert, name) for name in ("technique", "batch", "material", "element", "analyte")], measured
     )
     materials = _materials(groups, value, sigma, accepted)
     known = np.array([item is not None for item in materials.accepted], dtype=np.bool_)
     batch_of = _batch_of(groups, batches)
-    bias, bias_se, spread, n_materials = _bias(materials, known, batch_of, batches.count)
+    bias = _bias(materials, known, batch_of, batches.count)
     usable = measured & np.append(known, False)[groups.code]
     rows = np.flatnonzero(usable)
     sequence = sequence_of(convert, ingest_spots, rows)
     drift = _drift(rows, value[rows], sequence, materials, batches, batch_of, settings)
-    columns = _columns(batches, (bias, bias_se, spread), drift, settings)
+    columns = _columns(batches, bias, drift, settings)
     n_spots = np.bincount(batches.code[usable], minlength=batches.count)
-    table = build(CALIBRATE, {**columns, "n_spots": n_spots, "n_materials": n_materials})
+    table = build(CALIBRATE, {**columns, "n_spots": n_spots, "n_materials": bias.n_materials})
     by_material = _material_table(materials, settings)
     outcomes = {
         "reference values with an accepted value": int(usable.sum()),
@@ -97,7 +101,9 @@ def calibrate(
     }
     ledger = Ledger("values", convert.num_rows, outcomes)
     return StageResult(
-        {"calibrate": table, "calibrate.materials": by_material}, ledger, _remarks(table, accepted, groups)
+        {"calibrate": table, "calibrate.materials": by_material},
+        ledger,
+        _remarks(table, accepted, groups, settings),
     )
 
 
@@ -126,23 +132,67 @@ def _materials(
 def _batch_of(groups: Groups, batches: Groups) -> IntArray:
     """For every batch x material x element its batch x element."""
     position = {key: code for code, key in enumerate(batches.keys)}
-    return np.array([position[(key[0], key[1], key[3])] for key in groups.keys], dtype=np.int64)
+    return np.array([position[(key[0], key[1], key[3], key[4])] for key in groups.keys], dtype=np.int64)
 
 
-def _bias(
-    materials: Materials, known: BoolArray, batch_of: IntArray, n_batches: int
-) -> tuple[FloatArray, FloatArray, FloatArray, IntArray]:
-    """Mean ratio over the materials, its standard error, the spread within materials, and how many there are."""
-    total = np.sqrt(materials.variance + materials.accepted_variance)[known]
-    means = phase_means(materials.ratio[known], total, batch_of[known], n_batches)
-    # Two or three materials rarely show less scatter than their own errors for a good reason.
-    variance = np.fmax(means.variance, np.nan_to_num(means.counting_variance))
+@dataclass(frozen=True)
+class Bias:
+    """Measured over accepted of every batch and analyte, shape (B,); NaN where no reference material tells."""
+
+    ratio: FloatArray
+    se: FloatArray
+    dof: FloatArray
+    spread: FloatArray
+    n_materials: IntArray
+
+
+def _bias(materials: Materials, known: BoolArray, batch_of: IntArray, n_batches: int) -> Bias:
+    """Mean of the materials' ratios with weights 1/(variance + spread between materials).
+
+    A material near its detection limit says nothing of the calibration and is left out where a better one is there.
+    No bias is given where the ratio is not significantly above zero.
+    """
+    variance = materials.variance + materials.accepted_variance
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = np.sqrt(variance) / np.abs(materials.ratio)
+    best = np.full(n_batches, np.inf)
+    np.fmin.at(best, batch_of[known], relative[known])
+    enough = np.fmax(MOST_RELATIVE_SE, 3.0 * best)[batch_of]
+    kept = np.flatnonzero(known & (~(relative > enough)))
+    batch, ratio = batch_of[kept], materials.ratio[kept]
+
+    def total(x: FloatArray) -> FloatArray:
+        return np.bincount(batch, weights=x, minlength=n_batches).astype(np.float64)
+
+    own = variance[kept]
+    between = paule_mandel(ratio, np.nan_to_num(own), batch, n_batches)
+    weight = 1.0 / np.fmax(own + between[batch], 1e-12)
+    weight = np.where(np.isfinite(weight), weight, 1.0)  # an unknown variance makes the whole unknown, below
+    whole = total(weight)
+    safe = np.where(whole > 0, whole, np.nan)
+    mean = total(weight * ratio) / safe
+    parts = (weight / safe[batch]) ** 2 * (own + between[batch])
+    squared = total(parts)
+    # Welch-Satterthwaite; the accepted value's part and the counting of a single spot have no degrees of freedom to lose.
+    count = materials.count[kept]
+    measured_part = (weight / safe[batch]) ** 2 * materials.variance[kept]
+    lost = total(np.where(count > 1, measured_part**2 / np.maximum(count - 1, 1), 0.0))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        dof = squared**2 / lost
+    n_materials = np.bincount(batch, minlength=n_batches)
+    dof = np.where(between > 0, np.fmin(dof, n_materials - 1), dof)
+    se = np.sqrt(squared)
+    defined = ~(mean - 2.0 * np.nan_to_num(se) <= 0)
+    spread = _pooled_spread(materials, known, batch_of, n_batches)
+    return Bias(np.where(defined, mean, np.nan), np.where(defined, se, np.nan), dof, spread, n_materials)
+
+
+def _pooled_spread(materials: Materials, known: BoolArray, batch_of: IntArray, n_batches: int) -> FloatArray:
     squares = np.where(np.isfinite(materials.spread), materials.spread, 0.0)[known] ** 2
     weights = materials.count[known].astype(np.float64)
     total_weight = np.bincount(batch_of[known], weights=weights, minlength=n_batches)
     pooled = np.bincount(batch_of[known], weights=weights * squares, minlength=n_batches)
-    spread = np.sqrt(pooled / np.where(total_weight > 0, total_weight, np.nan))
-    return means.mean, np.sqrt(variance), spread, means.n
+    return np.sqrt(pooled / np.where(total_weight > 0, total_weight, np.nan))
 
 
 def _drift(
@@ -184,18 +234,15 @@ def _drift(
         slope = np.where(testable, sxy / sxx, np.nan)
         residual = np.maximum(syy - slope * sxy, 0.0) / np.where(testable, dof, 1)
         t = np.abs(slope) / np.sqrt(residual / sxx)
-        p = np.where(testable & np.isfinite(t), 2.0 * special.stdtr(np.where(testable, dof, 1), -t), np.nan)
+        # No residual at all: a drift without doubt, or none.
+        t = np.where(testable & (residual == 0), np.where(slope == 0, 0.0, np.inf), t)
+        p = np.where(testable, 2.0 * special.stdtr(np.where(testable, dof, 1), -t), np.nan)
         centre = np.where(n > 0, total(sequence) / np.maximum(n, 1), np.nan)
     return Drift(slope, p, centre)
 
 
-def _columns(
-    batches: Groups,
-    bias: tuple[FloatArray, FloatArray, FloatArray],
-    drift: Drift,
-    settings: CalibrateSettings,
-) -> dict[str, object]:
-    ratio, ratio_se, spread = bias
+def _columns(batches: Groups, bias: Bias, drift: Drift, settings: CalibrateSettings) -> dict[str, object]:
+    ratio, se = bias.ratio, bias.se
     measured = np.isfinite(ratio)
     techniques = batches.key(0)
     configured = np.array(
@@ -203,27 +250,31 @@ def _columns(
     )
     matrix = np.array([settings.matrix_sd.get(str(name), 0.0) for name in techniques], dtype=np.float64)
     corrects = settings.correct is not False
-    factor = np.where(measured & corrects, ratio, 1.0)
     # An uncorrected bias is itself the error the values carry; a corrected one leaves its own uncertainty.
-    left = ratio_se / ratio if corrects else np.hypot(ratio - 1.0, ratio_se)
-    supported = (settings.correct == "bias+drift") & (np.nan_to_num(drift.p, nan=1.0) < settings.drift_p)
-    within = np.abs(ratio - 1.0) <= np.fmax(settings.tolerance.relative, settings.tolerance.sigmas * ratio_se)
+    left = se / ratio if corrects else np.hypot(ratio - 1.0, se)
+    supported = np.nan_to_num(drift.p, nan=1.0) < settings.drift_p
+    removed = supported & (settings.correct == "bias+drift")
+    within = np.abs(ratio - 1.0) <= np.fmax(settings.tolerance.relative, settings.tolerance.sigmas * se)
     origin = np.where(
         measured, "reference materials", np.where(np.isfinite(configured), "configured", "unknown")
     )
+    slope = np.nan_to_num(drift.slope)
     return {
         "technique": techniques,
         "batch": batches.key(1),
         "element": batches.key(2),
+        "analyte": batches.key(3),
         "bias": ratio,
-        "bias_se": ratio_se,
-        "reproducibility_sd": spread,
+        "bias_se": se,
+        "reproducibility_sd": bias.spread,
         "drift_per_spot": drift.slope,
         "drift_p": drift.p,
         "drift_centre": np.where(np.isfinite(drift.slope), drift.centre, np.nan),
-        "factor": factor,
-        "drift_applied": np.where(supported, drift.slope, 0.0),
+        "factor": np.where(measured & corrects, ratio, 1.0),
+        "drift_applied": np.where(removed, slope, 0.0),
+        "drift_left": np.where(supported & ~removed, slope, 0.0),
         "relative_sd": np.where(measured, left, configured),
+        "relative_dof": np.where(measured & corrects & np.isfinite(bias.dof), bias.dof, np.nan),
         "matrix_sd": matrix,
         "origin": origin.astype(object),
         "passed": _or_null(within, measured),
@@ -249,6 +300,7 @@ def _material_table(materials: Materials, settings: CalibrateSettings) -> pa.Tab
             "batch": materials.groups.key(1),
             "material": materials.groups.key(2),
             "element": materials.groups.key(3),
+            "analyte": materials.groups.key(4),
             "n_spots": materials.count,
             "measured_ppm": materials.mean_ppm,
             "measured_se_ppm": np.sqrt(materials.mean_variance),
@@ -265,9 +317,18 @@ def _material_table(materials: Materials, settings: CalibrateSettings) -> pa.Tab
 
 
 def _remarks(
-    table: pa.Table, accepted: Mapping[tuple[str, str], AcceptedValue], groups: Groups
+    table: pa.Table,
+    accepted: Mapping[tuple[str, str], AcceptedValue],
+    groups: Groups,
+    settings: CalibrateSettings,
 ) -> tuple[Remark, ...]:
-    remarks = []
+    techniques = set(table.column("technique").to_pylist())
+    remarks = [
+        Remark(
+            f'no table has the technique "{name}" that calibrate names; found: {", ".join(sorted(techniques))}'
+        )
+        for name in sorted({*settings.relative_sd, *settings.matrix_sd} - techniques)
+    ]
     by_batch: dict[str, list[dict[str, Any]]] = {}
     for row in table.to_pylist():
         by_batch.setdefault(row["batch"], []).append(row)
@@ -278,12 +339,11 @@ def _remarks(
             remarks.append(
                 Remark(f"reference materials outside the laboratory's limit: {worst} of accepted", batch)
             )
-        drifting = [row for row in rows if (row["drift_p"] or 1.0) < 0.001]
+        drifting = [row for row in rows if row["drift_left"]]
         if drifting:
             named = ", ".join(row["element"] for row in drifting)
-            remarks.append(
-                Remark(f"the reference materials drift with the run order (p < 0.001): {named}", batch)
-            )
+            text = f"the reference materials drift with the run order, and the drift stays in the values: {named}"
+            remarks.append(Remark(text, batch))
     measured = {key[2] for key in groups.keys}
     unmeasured = sorted({material for material, _ in accepted} - measured)
     remarks += [Remark("accepted values given, but no spot of it was measured", name) for name in unmeasured]

@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import FloatArray, labels, numbers
+from tieline.arrays import FloatArray, flags, labels, numbers
 from tieline.columns import CLASSIFY, PARTITION
 from tieline.results import Ledger, StageResult
 from tieline.settings.results import ClassifySettings
@@ -28,13 +28,15 @@ def classify(partition: pa.Table, *, settings: ClassifySettings) -> StageResult:
     p_above = _probability_above(partition, boundaries)
     kind = labels(partition, "kind").text()
     probabilities = class_probabilities(p_above)
+    # Where a needed uncertainty is unknown, the interval is too narrow to declare anything by.
+    kind = np.where(flags(partition, "complete"), kind, "undetermined")
     number = declared_class(p_above, kind, settings.confidence)
     names = np.array([*CLASSES, UNRESOLVED], dtype=object)[number]
     for name, bounds in _widest_first(settings):
-        # Judged against its own two bounds alone, of which class 1 is the inside.
-        inside = (
-            declared_class(_probability_above(partition, np.array(bounds)), kind, settings.confidence) == 1
-        )
+        # Judged against its own bounds alone, of which class 1 is the inside; D is never below zero.
+        p_inside = _probability_above(partition, np.array(bounds))
+        p_inside[:, 0] = np.where(bounds[0] == 0, 1.0, p_inside[:, 0])
+        inside = declared_class(p_inside, kind, settings.confidence) == 1
         names[inside] = name
     columns = {column.name: partition.column(column.name) for column in PARTITION.columns}
     table = build(
@@ -54,7 +56,7 @@ def classify(partition: pa.Table, *, settings: ClassifySettings) -> StageResult:
 
 def _widest_first(settings: ClassifySettings) -> list[tuple[str, tuple[float, float]]]:
     """Extra classes by falling width on a log scale, so that a narrower one is declared last and stands."""
-    return sorted(settings.extra.items(), key=lambda item: (item[1][0] / item[1][1], item[0]))
+    return sorted(settings.extra.items(), key=lambda item: (item[1][0] / item[1][1], -item[1][1], item[0]))
 
 
 def _probability_above(partition: pa.Table, boundaries: FloatArray) -> FloatArray:
@@ -87,5 +89,5 @@ def _estimate(partition: pa.Table, side: str) -> MeanEstimate:
         numbers(partition, f"se_{side}_ppm") ** 2,
         numbers(partition, f"counting_se_{side}_ppm") ** 2,
         np.nan_to_num(numbers(partition, f"dof_{side}")),
-        np.asarray(numbers(partition, f"n_{side}"), dtype=np.int64),
+        np.asarray(numbers(partition, f"n_independent_{side}"), dtype=np.int64),
     )

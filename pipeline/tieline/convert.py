@@ -12,16 +12,15 @@ import numpy as np
 import pyarrow as pa
 
 from tieline.arrays import BoolArray, FloatArray, Labels, flags, labels, numbers, spot_codes
+from tieline.chemistry.header_words import PPM_PER_UNIT
 from tieline.chemistry.oxides import parse_oxide, wt_percent_per_ppm
-from tieline.columns import CONVERT, VALUE_KEYS
-from tieline.errors import DefectError, InputError, Problem
+from tieline.columns import CONVERT, CONVERT_STANDARDS, VALUE_KEYS
+from tieline.errors import DefectError
 from tieline.formula_units import formula_tables
-from tieline.internal_standard import Rescaling, rescaling
+from tieline.internal_standard import Rescaling, internal_standards
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.chemistry import ConvertSettings
 from tieline.tables import build
-
-PPM_PER_UNIT = {"wt%": 1e4, "ppm": 1.0, "ppb": 1e-3}
 
 # FeO and Fe2O3 columns whose ratio is that of one and the same iron to this precision repeat each other.
 SAME_IRON = 2e-3
@@ -51,7 +50,9 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
     values, summed, remarks = _iron_in_two_columns(ingest, analyte, values)
     values, normalised = _normalised(ingest, element_labels, values, settings)
     formulas = formula_tables(ingest, element_labels, values.value, values.sigma, settings.formula)
-    rescaled = _internal_standards(ingest, element_labels, values, settings)
+    rescaled = internal_standards(
+        ingest, element_labels, (values.value, values.sigma), settings.internal_standard
+    )
     values = values.scaled(rescaled.factor)
     columns = {column.name: ingest.column(column.name) for column in VALUE_KEYS}
     table = build(
@@ -65,11 +66,14 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
             "sigma_ppm": values.sigma,
             "limit_ppm": values.limit,
             "below_limit": ingest.column("below_limit"),
-            "internal_standard_sd": rescaled.relative_sd,
         },
     )
     ledger = _ledger(ingest, values, summed, rescaled)
-    return StageResult({"convert": table, **formulas}, ledger, (*remarks, *normalised, *rescaled.remarks))
+    return StageResult(
+        {"convert": table, "convert.standards": _standard_table(rescaled), **formulas},
+        ledger,
+        (*remarks, *normalised, *rescaled.remarks),
+    )
 
 
 def _analytes(ingest: pa.Table) -> tuple[Labels, list[str], FloatArray]:
@@ -116,20 +120,30 @@ def _iron_in_two_columns(
     ferric_rows = np.flatnonzero(ferric & np.isfinite(values.value))
     partner = row_of_ferrous[spot[ferric_rows]]
     both = (partner >= 0) & np.isfinite(values.value[partner])
-    ferric_rows, partner = ferric_rows[both], partner[both]
-    if not len(partner):
+    added, total = ferric_rows[both], partner[both]
+    if not len(total):
         return values, nothing, []
-    ratio = values.value[ferric_rows] / np.where(values.value[partner] != 0, values.value[partner], np.nan)
+    ratio = values.value[added] / np.where(values.value[total] != 0, values.value[total], np.nan)
     if np.nanmedian(np.abs(ratio - 1.0)) < SAME_IRON:
         remark = Remark("FeO and Fe2O3 hold the same iron twice; they are kept apart and one is used")
         return values, nothing, [remark]
-    value, sigma = values.value.copy(), values.sigma.copy()
-    value[partner] += value[ferric_rows]
-    sigma[partner] = np.hypot(sigma[partner], np.nan_to_num(sigma[ferric_rows]))
-    value[ferric_rows] = np.nan
-    nothing[ferric_rows] = True
-    remark = Remark(f"FeO and Fe2O3 of {len(partner)} spots are added up to total iron in the FeO rows")
-    return Values(value, sigma, values.limit), nothing, [remark]
+    value, sigma, limit = values.value.copy(), values.sigma.copy(), values.limit.copy()
+    value[total] += value[added]
+    sigma[total] = np.hypot(sigma[total], np.nan_to_num(sigma[added]))
+    value[added] = np.nan
+    nothing[added] = True
+    # Of the other spots that have Fe2O3, the ferrous part is unknown or only a limit, and so is the whole.
+    alone = ferric_rows[~both]
+    unknown = np.concatenate([alone, partner[~both][partner[~both] >= 0]])
+    value[unknown] = limit[unknown] = np.nan
+    remarks = [Remark(f"FeO and Fe2O3 of {len(total)} spots are added up to total iron in the FeO rows")]
+    if len(alone):
+        remarks.append(
+            Remark(
+                f"the iron of {len(alone)} spots is unknown: they have Fe2O3 but no measured FeO beside it"
+            )
+        )
+    return Values(value, sigma, limit), nothing, remarks
 
 
 def _normalised(
@@ -165,20 +179,16 @@ def _normalised(
     return values, remarks
 
 
-def _internal_standards(
-    ingest: pa.Table, element: Labels, values: Values, settings: ConvertSettings
-) -> Rescaling:
-    """The factor and its relative uncertainty of every row, all internal standards together."""
-    combined = Rescaling.none(len(values.value))
-    problems: list[Problem] = []
-    for standard in settings.internal_standard:
-        try:
-            combined = combined.combined(rescaling(ingest, element, values.value, values.sigma, standard))
-        except InputError as error:
-            problems += error.problems
-    if problems:
-        raise InputError(problems)
-    return combined
+def _standard_table(rescaled: Rescaling) -> pa.Table:
+    rows = rescaled.standards
+    columns: dict[str, object] = {
+        name: [getattr(row, name) for row in rows]
+        for name in ("experiment", "phase", "technique", "analyte", "actual_ppm", "relative_sd")
+    }
+    columns["dof"] = np.array([row.dof if np.isfinite(row.dof) else np.nan for row in rows], dtype=np.float64)
+    for place, name in enumerate(("source_technique", "source_batch", "source_analyte")):
+        columns[name] = [row.source[place] for row in rows]
+    return build(CONVERT_STANDARDS, columns)
 
 
 def _ledger(ingest: pa.Table, values: Values, summed: BoolArray, rescaled: Rescaling) -> Ledger:

@@ -24,7 +24,16 @@ from tieline.statistics.limits import MeanLimits, limits_ratio, mean_limits
 from tieline.statistics.means import MeanEstimate
 from tieline.statistics.ratios import RatioInterval
 
-KEYS = ("experiment", "phase", "element", "batch", "analyte")
+KEYS = ("experiment", "phase", "element", "technique", "batch", "analyte")
+
+
+def lowest_limits(pair: pa.Table, limits: pa.Table) -> FloatArray:
+    """The lowest limit among the values of every mean, NaN where a mean has none, shape (rows of pair,)."""
+    lowest = np.full(pair.num_rows, np.inf)
+    of_limits, of_means = common_keys((limits, pair), (KEYS, KEYS))
+    value, mean = matches(of_limits, of_means)
+    np.fmin.at(lowest, mean, numbers(limits, "limit_ppm")[value])
+    return np.where(np.isfinite(lowest), lowest, np.nan)
 
 
 def resolve_limits(
@@ -56,7 +65,7 @@ def resolve_limits(
 def _made_by(
     interval: RatioInterval, pair: pa.Table, sides: tuple[IntArray, IntArray], settings: PartitionSettings
 ) -> TextArray:
-    n = numbers(pair, "n_used")
+    n = numbers(pair, "n_independent")
     two = (n[sides[0]] == 2) | (n[sides[1]] == 2)
     how = np.where(two, "gum-s1", settings.interval).astype(object)
     how[interval.kind == "undetermined"] = "none"
@@ -73,14 +82,21 @@ def _means_with_limits(
             numbers(pair, "se_ppm") ** 2,
             numbers(pair, "counting_se_ppm") ** 2,
             np.nan_to_num(numbers(pair, "dof")),
-            np.asarray(numbers(pair, "n_used"), dtype=np.int64),
+            np.asarray(numbers(pair, "n_independent"), dtype=np.int64),
         ),
         confidence=settings.confidence,
     )
     groups = group_rows([labels(limits, name) for name in KEYS])
     value, sigma, limit = (numbers(limits, f"{name}_ppm") for name in ("value", "sigma", "limit"))
     likelihood = censored_limits(
-        value, sigma, limit, np.isnan(value), groups.code, groups.count, confidence=settings.confidence
+        value,
+        sigma,
+        limit,
+        np.isnan(value),
+        groups.code,
+        groups.count,
+        confidence=settings.confidence,
+        limit_in_sigmas=settings.sigma_from_limit,
     )
     with_limits = np.flatnonzero(censored)
     of_limits, of_means = common_keys((limits, pair), (KEYS, KEYS))

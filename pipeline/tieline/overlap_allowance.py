@@ -34,7 +34,8 @@ def overlap_allowance(
         return out
 
     bound = overlap_bound(rectangle(apparent, np.nan), rectangle(se, np.nan), rectangle(dof, 1e9), confidence)
-    lowest = np.where(is_limit, 0.0, bound.lowest[pair, place])
+    # Never above the interval itself, which may reach further down than its standard uncertainty tells.
+    lowest = np.where(is_limit, 0.0, np.fmin(bound.lowest[pair, place], interval.low))
     return lowest, bound.fraction[pair] if len(pair) else np.zeros(0)
 
 

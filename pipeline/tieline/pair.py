@@ -6,7 +6,9 @@ The statistics of the means stand in `tieline.statistics.means` and, where value
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -16,6 +18,7 @@ from tieline.arrays import (
     FloatArray,
     Groups,
     IntArray,
+    Labels,
     flags,
     group_rows,
     labels,
@@ -23,7 +26,7 @@ from tieline.arrays import (
     spot_codes,
 )
 from tieline.columns import PAIR, PAIR_LIMITS
-from tieline.correction import Concentrations, calibrated
+from tieline.correction import SOURCE_KEYS, Concentrations, calibrated, sequence_of, standard_row
 from tieline.pairing import phase_pairs, technique_differences, with_parts
 from tieline.results import Ledger, StageResult
 from tieline.settings.results import PairSettings
@@ -44,6 +47,7 @@ class Used:
 
 def pair(
     convert: pa.Table,
+    convert_standards: pa.Table,
     calibrate: pa.Table,
     screen: pa.Table,
     ingest_spots: pa.Table,
@@ -51,8 +55,9 @@ def pair(
     settings: PairSettings,
 ) -> StageResult:
     """Phase means with their variance and its parts, and the alpha/beta pairs that can be formed."""
-    convert = with_parts(convert, settings)
-    concentrations, shared = _unmixed(calibrated(convert, calibrate, ingest_spots), screen)
+    concentrations, shared = _unmixed(calibrated(convert, calibrate, ingest_spots, convert_standards), screen)
+    standard = standard_row(convert, convert_standards)
+    convert, wholes = with_parts(convert, settings)
     use = flags(screen, "use")
     unknown = labels(convert, "experiment").codes >= 0
     groups = group_rows([labels(convert, name) for name in GROUP_COLUMNS], unknown)
@@ -62,8 +67,12 @@ def pair(
     means = _with_shared_error(
         _means(convert, concentrations, groups, used, settings), shared, groups, measured
     )
-    table = _pair_table(convert, concentrations, groups, used, means)
-    pairs, remarks = phase_pairs(convert, measured | limit_only, settings)
+    context = {
+        "mean_sequence": _mean_sequence(convert, calibrate, ingest_spots, groups, used),
+        **_standard_columns(convert_standards, standard[groups.first]),
+    }
+    table = _pair_table(convert, concentrations, groups, used, means, context)
+    pairs, remarks = phase_pairs(convert, measured | limit_only, settings, wholes)
     differences, difference_remarks = technique_differences(table, calibrate, settings)
     outcomes = {
         "in a phase mean": int(measured.sum()),
@@ -124,8 +133,44 @@ def _grains(convert: pa.Table) -> IntArray:
     return np.where(grain.codes >= 0, grain.codes, len(grain.texts) + spot)
 
 
+def _mean_sequence(
+    convert: pa.Table, calibrate: pa.Table, spots: pa.Table, groups: Groups, used: Used
+) -> FloatArray:
+    """Mean place of every group's spots in the run order; NaN where no drift stays in the values."""
+    if not np.any(numbers(calibrate, "drift_left")):
+        return np.full(groups.count, np.nan)
+    rows = np.flatnonzero(used.measured | used.limit_only)
+    total = np.bincount(groups.code[rows], weights=sequence_of(convert, spots, rows), minlength=groups.count)
+    count = np.bincount(groups.code[rows], minlength=groups.count)
+    return total / np.where(count > 0, count, np.nan)
+
+
+def _standard_columns(standards: pa.Table, rows: IntArray) -> dict[str, Any]:
+    """What `convert.standards` says of the internal standard of every group; rows: -1 where none applies."""
+
+    def number(name: str) -> FloatArray:
+        values: FloatArray = np.append(numbers(standards, name), np.nan)[rows]
+        return values
+
+    def text(name: str) -> Labels:
+        known = labels(standards, name)
+        return Labels(np.append(known.codes, -1)[rows], known.texts)
+
+    return {
+        "internal_standard": rows >= 0,
+        "internal_standard_sd": number("relative_sd"),
+        "internal_standard_dof": number("dof"),
+        **{name: text(name).array() for name in SOURCE_KEYS},
+    }
+
+
 def _pair_table(
-    convert: pa.Table, values: Concentrations, groups: Groups, used: Used, means: PhaseMeans
+    convert: pa.Table,
+    values: Concentrations,
+    groups: Groups,
+    used: Used,
+    means: PhaseMeans,
+    context: Mapping[str, Any],
 ) -> pa.Table:
     def count(rows: BoolArray) -> IntArray:
         return np.bincount(groups.code[rows], minlength=groups.count)
@@ -158,7 +203,8 @@ def _pair_table(
             "mswd": unless_censored(np.where(means.n > 1, means.mswd, np.nan)),
             "mswd_lo": np.where(means.n > 1, mswd_lo, np.nan),
             "mswd_hi": np.where(means.n > 1, mswd_hi, np.nan),
-            "internal_standard_sd": numbers(convert, "internal_standard_sd")[groups.first],
+            "n_independent": np.where(censored, count(taken), means.n),
+            **context,
         },
     )
 
@@ -177,7 +223,7 @@ def _limit_rows(convert: pa.Table, values: Concentrations, groups: Groups, used:
     rows = np.flatnonzero(chosen)
     # One order whatever the order of the source rows.
     rows = rows[np.lexsort((values.limit[rows], values.value[rows], groups.code[rows]))]
-    names = ("experiment", "phase", "element", "batch", "analyte")
+    names = ("experiment", "phase", "element", "technique", "batch", "analyte")
     return build(
         PAIR_LIMITS,
         {

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 import pyarrow as pa
 
@@ -15,38 +17,39 @@ from tieline.tables import build
 MELT = "glass"
 
 
-def with_parts(convert: pa.Table, settings: PairSettings) -> pa.Table:
-    """`convert` with phases split as the settings ask: `olivine (rim)`; a spot without the label keeps its phase.
+def with_parts(convert: pa.Table, settings: PairSettings) -> tuple[pa.Table, dict[str, str]]:
+    """`convert` with phases split as the settings ask, and part -> whole phase for every name that results.
 
-    With `separate` the melt stays whole; with `local` every phase is split, for its parts to be paired.
+    A part is named `olivine (rim)`; a spot without the label keeps its phase. With `separate` the melt stays whole;
+    with `local` every phase is split, for its parts to be paired.
     """
     name = settings.local if settings.local != "none" else settings.separate
+    phase = labels(convert, "phase")
     if name == "none":
-        return convert
-    phase, part = labels(convert, "phase"), labels(convert, name)
+        return convert, {text: text for text in phase.texts}
+    part = labels(convert, name)
     whole = (
         phase.is_one_of((MELT,)) if settings.local == "none" else np.zeros(convert.num_rows, dtype=np.bool_)
     )
     n_parts = len(part.texts) + 1
     code = phase.codes * n_parts + np.where(whole, -1, part.codes) + 1
     texts = [_part_name(text, suffix) for text in phase.texts for suffix in (None, *part.texts)]
+    wholes = {_part_name(text, suffix): text for text in phase.texts for suffix in (None, *part.texts)}
     split = pa.DictionaryArray.from_arrays(pa.array(code.astype(np.int32)), pa.array(texts, pa.string()))
     column = convert.schema.get_field_index("phase")
-    return convert.set_column(column, convert.schema.field(column), split)
+    return convert.set_column(column, convert.schema.field(column), split), wholes
 
 
 def _part_name(phase: str, part: str | None) -> str:
     return phase if part is None else f"{phase} ({part})"
 
 
-def whole_phase(name: str) -> str:
-    """`olivine (rim)` -> `olivine`."""
-    return name.split(" (")[0]
-
-
-def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> tuple[pa.Table, list[Remark]]:
+def phase_pairs(
+    convert: pa.Table, used: BoolArray, settings: PairSettings, wholes: Mapping[str, str]
+) -> tuple[pa.Table, list[Remark]]:
     """One row per experiment and wanted pair: the configured ones, or every other phase over glass.
 
+    wholes: part -> whole phase, from `with_parts`.
     Raises InputError when a configured pair names a phase that no table has.
     """
     experiment, phase = labels(convert, "experiment"), labels(convert, "phase")
@@ -59,7 +62,7 @@ def phase_pairs(convert: pa.Table, used: BoolArray, settings: PairSettings) -> t
     spots_used = np.bincount(groups.code[first[has_used]], minlength=groups.count)
     n_used = dict(zip(groups.keys, spots_used.tolist(), strict=True))
     phases = sorted({str(key[1]) for key in groups.keys})
-    wanted = _wanted(phases, settings)
+    wanted = _wanted(phases, settings, wholes)
     rows = []
     for name in sorted({str(key[0]) for key in groups.keys}):
         for alpha, beta in wanted:
@@ -86,11 +89,11 @@ def _not_formed(rows: list[tuple[str, str, str, int, int, bool, str | None]]) ->
     ]
 
 
-def _wanted(phases: list[str], settings: PairSettings) -> list[tuple[str, str]]:
+def _wanted(phases: list[str], settings: PairSettings, wholes: Mapping[str, str]) -> list[tuple[str, str]]:
     if settings.pairs is None:
-        alphas = dict.fromkeys(whole_phase(phase) for phase in phases if whole_phase(phase) != MELT)
-        return _with_their_parts([(alpha, MELT) for alpha in alphas], phases, settings)
-    known = {*phases, *(whole_phase(phase) for phase in phases)}
+        alphas = dict.fromkeys(wholes[phase] for phase in phases if wholes[phase] != MELT)
+        return _with_their_parts([(alpha, MELT) for alpha in alphas], phases, settings, wholes)
+    known = {*phases, *(wholes[phase] for phase in phases)}
     unknown = [(pair, name) for pair in settings.pairs for name in pair if name not in known]
     if unknown:
         raise InputError(
@@ -103,18 +106,18 @@ def _wanted(phases: list[str], settings: PairSettings) -> list[tuple[str, str]]:
                 for _, name in unknown
             ]
         )
-    return _with_their_parts(list(settings.pairs), phases, settings)
+    return _with_their_parts(list(settings.pairs), phases, settings, wholes)
 
 
 def _with_their_parts(
-    pairs: list[tuple[str, str]], phases: list[str], settings: PairSettings
+    pairs: list[tuple[str, str]], phases: list[str], settings: PairSettings, wholes: Mapping[str, str]
 ) -> list[tuple[str, str]]:
     """The pairs with every part of their phases; parts of a local pair have the same name."""
     if settings.separate == "none" and settings.local == "none":
         return pairs
 
     def parts(name: str) -> list[str]:
-        return [phase for phase in phases if name in (phase, whole_phase(phase))]
+        return [phase for phase in phases if name in (phase, wholes[phase])]
 
     every = [(alpha, beta) for one, other in pairs for alpha in parts(one) for beta in parts(other)]
     if settings.local == "none":
@@ -122,7 +125,7 @@ def _with_their_parts(
     return [
         (alpha, beta)
         for alpha, beta in every
-        if alpha.removeprefix(whole_phase(alpha)) == beta.removeprefix(whole_phase(beta))
+        if alpha.removeprefix(wholes[alpha]) == beta.removeprefix(wholes[beta])
     ]
 
 

@@ -6,6 +6,8 @@ Means become D here and nowhere else. The propagation stands in `tieline.propaga
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
@@ -13,20 +15,21 @@ import pyarrow.compute as pc
 from tieline.arrays import BoolArray, FloatArray, IntArray, Labels, TextArray, labels, numbers
 from tieline.candidates import RULE, Candidates, candidates
 from tieline.columns import PARTITION, PARTITION_ALTERNATIVES, PARTITION_COVARIANCE
-from tieline.correction import calibrate_row
-from tieline.limits import resolve_limits
+from tieline.limits import lowest_limits, resolve_limits
+from tieline.mean_sources import MeanSources
 from tieline.overlap_allowance import overlap_allowance
 from tieline.propagation import Budget, Side, propagate, unshared
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.results import PartitionSettings
-from tieline.statistics.means import MeanEstimate
 from tieline.statistics.ratios import ratio_interval
 from tieline.tables import build
 
 UNKNOWN_CALIBRATION = (
-    "the phases are from different batches and no calibration uncertainty is known: "
-    "the interval covers counting and spread only"
+    "the phases, or their internal standards, are from different batches and no calibration uncertainty is known: "
+    "the interval does not cover it"
 )
+UNKNOWN_STANDARD = "the uncertainty of an internal standard is unknown: the interval does not cover it"
+DRIFT = "the batch drifts with the run order, and the drift stays in the values: it is part of the interval"
 
 
 def partition(
@@ -38,9 +41,11 @@ def partition(
     settings: PartitionSettings,
 ) -> StageResult:
     """D of every element of every pair that was formed, the possible D's not chosen, and the covariances."""
-    sources = _Sources(pair, calibrate)
-    found = candidates(pair_pairs, pair, sources.relative_sd(), settings.prefer)
-    alpha, beta = sources.side(found.alpha), sources.side(found.beta)
+    sources = MeanSources(pair, calibrate)
+    found = candidates(pair_pairs, pair, sources, lowest_limits(pair, pair_limits), settings.prefer)
+    alpha, beta = sources.with_drift(
+        (sources.side(found.alpha), sources.side(found.beta)), found.alpha, found.beta
+    )
     budget = propagate(alpha, beta)
     rows = np.flatnonzero(found.chosen)
     table = _partition_table(
@@ -49,69 +54,9 @@ def partition(
     tables = {
         "partition": table,
         "partition.alternatives": _alternatives(pair, pair_pairs, found, budget),
-        "partition.covariance": _covariance(table, alpha, rows, beta),
+        "partition.covariance": _covariance(table, (alpha, beta), found, sources),
     }
     return StageResult(tables, _ledger(pair, found), _remarks(table))
-
-
-class _Sources:
-    """The phase means and everything that makes them uncertain, row by row of `pair`."""
-
-    def __init__(self, pair: pa.Table, calibrate: pa.Table) -> None:
-        self.labels = {
-            name: labels(pair, name)
-            for name in ("experiment", "phase", "element", "technique", "batch", "analyte")
-        }
-        row = calibrate_row(pair, calibrate)
-        shared = np.append(numbers(calibrate, "relative_sd"), np.nan)[row]
-        self.mean, self.se, self.counting_se, self.dof = (
-            numbers(pair, name) for name in ("mean_ppm", "se_ppm", "counting_se_ppm", "dof")
-        )
-        self.n = np.asarray(numbers(pair, "n_used"), dtype=np.int64)
-        self.calibration_known: BoolArray = np.isfinite(shared)
-        self.calibration = np.nan_to_num(shared)
-        batch, element = self.labels["batch"], self.labels["element"]
-        self.calibration_key = batch.codes * (len(element.texts) + 1) + element.codes
-        self.matrix = np.append(numbers(calibrate, "matrix_sd"), 0.0)[row]
-        standard = numbers(pair, "internal_standard_sd")
-        self.internal_standard = np.nan_to_num(standard)
-        experiment, phase, technique = (self.labels[name] for name in ("experiment", "phase", "technique"))
-        key = (experiment.codes * (len(phase.texts) + 1) + phase.codes) * (
-            len(technique.texts) + 1
-        ) + technique.codes
-        self.internal_standard_key: IntArray = np.where(np.isfinite(standard), key, -1 - np.arange(len(key)))
-
-    def relative_sd(self) -> FloatArray:
-        """Relative standard uncertainty of every mean with all its sources; infinite where there is none."""
-        with np.errstate(divide="ignore", invalid="ignore"):
-            own = np.where(self.mean > 0, self.se / self.mean, np.inf)
-        return np.asarray(np.sqrt(own**2 + self.calibration**2 + self.matrix**2 + self.internal_standard**2))
-
-    def side(self, rows: IntArray) -> Side:
-        # A mean's counting part can exceed what its scatter shows; D_sd is that of the scatter, so it is cut there.
-        mean = np.where(self.mean[rows] == 0, np.nan, np.abs(self.mean[rows]))
-        total = np.nan_to_num(self.se[rows] / mean)
-        counting = np.fmin(np.nan_to_num(self.counting_se[rows] / mean), total)
-        spread = np.sqrt(np.maximum(total**2 - counting**2, 0.0))
-        return Side(
-            self.mean[rows],
-            counting,
-            spread,
-            self.calibration[rows],
-            self.calibration_key[rows],
-            self.matrix[rows],
-            self.internal_standard[rows],
-            self.internal_standard_key[rows],
-        )
-
-    def estimate(self, rows: IntArray) -> MeanEstimate:
-        return MeanEstimate(
-            self.mean[rows],
-            self.se[rows] ** 2,
-            self.counting_se[rows] ** 2,
-            np.nan_to_num(self.dof[rows]),
-            self.n[rows],
-        )
 
 
 def _partition_table(
@@ -122,11 +67,15 @@ def _partition_table(
     rows: IntArray,
     sides: tuple[Side, Side],
     budget: Budget,
-    sources: _Sources,
+    sources: MeanSources,
     settings: PartitionSettings,
 ) -> pa.Table:
     alpha, beta = found.alpha[rows], found.beta[rows]
-    u_alpha, u_beta = (u[rows] for u in unshared(*sides))
+    wide = (
+        sources.widened(side, own, settings.confidence)
+        for side, own in zip(sides, (found.alpha, found.beta), strict=True)
+    )
+    u_alpha, u_beta = (u[rows] for u in unshared(*wide))
     interval = ratio_interval(
         sources.estimate(alpha),
         sources.estimate(beta),
@@ -140,7 +89,15 @@ def _partition_table(
     D = np.where(is_value, interval.value, np.nan)
     from_means = is_value & np.isfinite(budget.D[rows])
     names = {name: labels(pairs, name).take(found.pair[rows]) for name in ("experiment", "alpha", "beta")}
-    reason = _with_calibration_remark(interval.reason, sources, alpha, beta)
+    no_calibration, no_standard = sources.unknown(alpha, beta)
+    reason = _with_remarks(
+        interval.reason,
+        (
+            (no_calibration, UNKNOWN_CALIBRATION),
+            (no_standard, UNKNOWN_STANDARD),
+            (sources.drift[alpha] != sources.drift[beta], DRIFT),
+        ),
+    )
     D_overlap_lo, bound = overlap_allowance(found.pair[rows], D, interval, settings.confidence)
 
     def share(part: FloatArray) -> FloatArray:
@@ -161,8 +118,11 @@ def _partition_table(
             "confidence": np.full(len(rows), settings.confidence),
             "kind": interval.kind,
             "reason": reason,
+            "complete": ~(no_calibration | no_standard),
             "n_alpha": sources.n[alpha],
             "n_beta": sources.n[beta],
+            "n_independent_alpha": sources.n_independent[alpha],
+            "n_independent_beta": sources.n_independent[beta],
             **{
                 f"{column}_{side}": of(column, side_rows)
                 for column in ("batch", "technique", "analyte")
@@ -182,23 +142,19 @@ def _partition_table(
             "interval": how,
             "share_counting": share(budget.counting),
             "share_spread": share(budget.spread),
-            "share_calibration": share(budget.calibration),
-            "share_internal_standard": share(budget.internal_standard),
+            "share_calibration": np.where(no_calibration, np.nan, share(budget.calibration)),
+            "share_internal_standard": np.where(no_standard, np.nan, share(budget.internal_standard)),
             "D_overlap_lo": D_overlap_lo,
             "overlap_bound": bound,
         },
     )
 
 
-def _with_calibration_remark(
-    reason: TextArray, sources: _Sources, alpha: IntArray, beta: IntArray
-) -> TextArray:
-    apart = sources.calibration_key[alpha] != sources.calibration_key[beta]
-    unknown = apart & ~(sources.calibration_known[alpha] & sources.calibration_known[beta])
+def _with_remarks(reason: TextArray, remarks: Sequence[tuple[BoolArray, str]]) -> TextArray:
+    """The reasons with further texts behind them, where these apply."""
     reason = reason.copy()
-    reason[unknown] = [
-        f"{own}; {UNKNOWN_CALIBRATION}" if own else UNKNOWN_CALIBRATION for own in reason[unknown]
-    ]
+    for applies, text in remarks:
+        reason[applies] = [f"{own}; {text}" if own else text for own in reason[applies]]
     return reason
 
 
@@ -224,26 +180,45 @@ def _alternatives(pair: pa.Table, pairs: pa.Table, found: Candidates, budget: Bu
     )
 
 
-def _covariance(table: pa.Table, alpha: Side, rows: IntArray, beta: Side) -> pa.Table:
-    """Variances, and the covariances that internal standards shared between elements make.
+def _covariance(
+    table: pa.Table, sides: tuple[Side, Side], found: Candidates, sources: MeanSources
+) -> pa.Table:
+    """Variances, and the covariances that internal standards make between the elements of a pair.
 
-    Two elements of one pair share the internal-standard factor of a phase when both were measured by the same
-    rescaled technique: cov(D_i, D_j) = D_i D_j (u_a² + u_b²). Everything else is independent between elements.
+    Elements measured by one rescaled technique share the factor of each phase, with the calibration behind it:
+    cov(D_i, D_j) = D_i D_j (u_a² + u_b²). The measurement that gave the actual values has it in common with all of
+    them. Everything else is taken as independent between elements.
     """
+    rows = np.flatnonzero(found.chosen)
     D, sd = numbers(table, "D"), numbers(table, "D_sd")
     usable = np.isfinite(D) & np.isfinite(sd)
     keys = [
-        np.where(side.internal_standard[rows] > 0, side.internal_standard_key[rows], -1)
-        for side in (alpha, beta)
+        np.where(side.internal_standard[rows] > 0, side.internal_standard_key[rows], -1) for side in sides
     ]
     # A standard that both phases share cancels in D.
     keys = [np.where(keys[0] == keys[1], -1, key) for key in keys]
-    first, second = _pairs_within(_pair_codes(table), usable, usable & ((keys[0] >= 0) | (keys[1] >= 0)))
+    means = [found.alpha[rows], found.beta[rows]]
+    measured = [sources.calibration_key[mean] for mean in means]
+    behind = [
+        np.where(key >= 0, sources.source_of_standard[mean], -1)
+        for key, mean in zip(keys, means, strict=True)
+    ]
+    is_source = np.isin(measured[0], behind[0][behind[0] >= 0]) | np.isin(
+        measured[1], behind[1][behind[1] >= 0]
+    )
+    first, second = _pairs_within(
+        _pair_codes(table), usable, usable & ((keys[0] >= 0) | (keys[1] >= 0) | is_source)
+    )
+    apart = sides[0].standard_calibration_key[rows] != sides[1].standard_calibration_key[rows]
     shared = np.zeros(len(first))
-    for side, key in zip((alpha, beta), keys, strict=True):
+    for side, key, own, source in zip(sides, keys, measured, behind, strict=True):
         relative = side.internal_standard[rows]
+        calibration = np.where(apart, side.standard_calibration[rows], 0.0)
         same = (key[first] == key[second]) & (key[first] >= 0)
-        shared += np.where(same, relative[first] * relative[second], 0.0)
+        common = relative[first] * relative[second] + calibration[first] * calibration[second]
+        shared += np.where(same, common, 0.0)
+        shared += np.where((source[second] >= 0) & (own[first] == source[second]), relative[second] ** 2, 0.0)
+        shared += np.where((source[first] >= 0) & (own[second] == source[first]), relative[first] ** 2, 0.0)
     covariance = np.where(first == second, sd[first] ** 2, D[first] * D[second] * shared)
     kept = (first == second) | (shared != 0)
     if not kept.all():

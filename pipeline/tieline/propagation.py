@@ -2,9 +2,10 @@
 
 The model of one D is
 
-    D = (mean_a · calibration_a · matrix_a · standard_a) / (mean_b · calibration_b · matrix_b · standard_b)
+    D = (mean_a · calibration_a · matrix_a · standard_a · standard_calibration_a) / (the same of b)
 
-with every factor 1 ± its relative uncertainty. A factor that both phases share is one variable and cancels
+with every factor 1 ± its relative uncertainty. The internal standard's own calibration is that of the measurement
+that gave its actual value. A factor that both phases share is one variable and cancels
 exactly. The `uncertainties` package carries the model for small tables; beyond `ARRAYS_ABOVE` D's the same
 first-order propagation (JCGM 100:2008, 5.1 and 5.2) runs on arrays, several hundred times faster. A property
 test holds the two equal.
@@ -26,7 +27,7 @@ class Side:
     """One phase of K D's: mean and the relative standard uncertainties of its factors, shape (K,) each.
 
     `counting` and `spread` are the two parts of the mean's own uncertainty. The keys say which variable a
-    factor is: equal keys on both sides are one variable.
+    factor is: equal keys on both sides are one variable. `matrix` is never shared.
     """
 
     mean: FloatArray
@@ -37,6 +38,8 @@ class Side:
     matrix: FloatArray
     internal_standard: FloatArray
     internal_standard_key: IntArray
+    standard_calibration: FloatArray
+    standard_calibration_key: IntArray
 
 
 @dataclass(frozen=True)
@@ -60,11 +63,13 @@ def unshared(alpha: Side, beta: Side) -> tuple[FloatArray, FloatArray]:
     """Relative uncertainty of alpha and of beta from factors that do not cancel between them, shape (K,) each."""
     apart = alpha.calibration_key != beta.calibration_key
     different = alpha.internal_standard_key != beta.internal_standard_key
+    elsewhere = alpha.standard_calibration_key != beta.standard_calibration_key
 
     def total(side: Side) -> FloatArray:
         calibration = np.where(apart, side.calibration, 0.0)
         standard = np.where(different, side.internal_standard, 0.0)
-        return np.asarray(np.sqrt(calibration**2 + side.matrix**2 + standard**2))
+        behind = np.where(elsewhere, side.standard_calibration, 0.0)
+        return np.asarray(np.sqrt(calibration**2 + side.matrix**2 + standard**2 + behind**2))
 
     return total(alpha), total(beta)
 
@@ -76,9 +81,10 @@ def by_arrays(alpha: Side, beta: Side) -> Budget:
     counting = alpha.counting**2 + beta.counting**2
     spread = alpha.spread**2 + beta.spread**2
     apart = alpha.calibration_key != beta.calibration_key
-    calibration = (
-        np.where(apart, alpha.calibration**2 + beta.calibration**2, 0.0) + alpha.matrix**2 + beta.matrix**2
-    )
+    calibration = np.where(apart, alpha.calibration**2 + beta.calibration**2, 0.0)
+    elsewhere = alpha.standard_calibration_key != beta.standard_calibration_key
+    calibration += np.where(elsewhere, alpha.standard_calibration**2 + beta.standard_calibration**2, 0.0)
+    calibration += alpha.matrix**2 + beta.matrix**2
     different = alpha.internal_standard_key != beta.internal_standard_key
     standard = np.where(different, alpha.internal_standard**2 + beta.internal_standard**2, 0.0)
     total = counting + spread + calibration + standard
@@ -94,12 +100,12 @@ def by_package(alpha: Side, beta: Side) -> Budget:
 
     shared: dict[tuple[str, int], UFloat | float] = {}
 
-    def factor(kind: str, sd: float, key: int | None = None) -> UFloat | float:
+    def factor(source: str, sd: float, key: int | None = None, kind: str = "") -> UFloat | float:
         if sd == 0:
             return 1.0  # an exact factor is no variable
         if key is None:
-            return ufloat(1.0, sd, tag=kind)
-        return shared.setdefault((kind, key), ufloat(1.0, sd, tag=kind))
+            return ufloat(1.0, sd, tag=source)
+        return shared.setdefault((kind or source, key), ufloat(1.0, sd, tag=source))
 
     def concentration(side: Side, row: int) -> UFloat | float:
         return (
@@ -109,7 +115,15 @@ def by_package(alpha: Side, beta: Side) -> Budget:
             * factor("calibration", float(side.calibration[row]), int(side.calibration_key[row]))
             * factor("calibration", float(side.matrix[row]))
             * factor(
-                "internal_standard", float(side.internal_standard[row]), int(side.internal_standard_key[row])
+                "internal_standard",
+                float(side.internal_standard[row]),
+                int(side.internal_standard_key[row]),
+            )
+            * factor(
+                "calibration",
+                float(side.standard_calibration[row]),
+                int(side.standard_calibration_key[row]),
+                kind="calibration of the standard",
             )
         )
 

@@ -22,7 +22,15 @@ from tieline.statistics.groups import divide, group_count, group_mean, group_sum
 
 KEYS = ("experiment", "alpha", "beta", "element")
 GROUP = ("experiment", "phase", "element", "technique", "batch", "analyte")
-NEEDED = ("convert", "calibrate", "screen", "screen.findings", "ingest.spots", "partition")
+NEEDED = (
+    "convert",
+    "convert.standards",
+    "calibrate",
+    "screen",
+    "screen.findings",
+    "ingest.spots",
+    "partition",
+)
 
 # Below three exclusions "all on one side" says nothing: two are on one side half of the time.
 FEWEST_EXCLUSIONS = 3
@@ -155,7 +163,9 @@ def leaning_remarks(tables: Mapping[str, pa.Table]) -> list[str]:
     if not has_rulings(tables["screen.findings"]):
         return []
     convert, screen = tables["convert"], tables["screen"]
-    value = calibrated(convert, tables["calibrate"], tables["ingest.spots"]).value
+    value = calibrated(
+        convert, tables["calibrate"], tables["ingest.spots"], tables["convert.standards"]
+    ).value
     excluded = labels(screen, "why").is_one_of((RULING,)) & np.isfinite(value)
     if not excluded.any():
         return []

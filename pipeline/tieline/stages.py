@@ -82,7 +82,7 @@ STAGES: tuple[Stage, ...] = (
         name="convert",
         revision=1,
         inputs=("ingest",),
-        outputs=("convert", "convert.formula", "convert.cations"),
+        outputs=("convert", "convert.standards", "convert.formula", "convert.cations"),
         settings=lambda settings: settings.convert,
         counted="ingest",
     ),
@@ -100,7 +100,7 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="screen",
         revision=1,
-        inputs=("convert", "calibrate", "ingest.spots"),
+        inputs=("convert", "convert.standards", "calibrate", "ingest.spots"),
         outputs=("screen", "screen.findings", "screen.groups"),
         settings=lambda settings: settings.screen,
         files=lambda settings: _optional(settings.screen.rulings),
@@ -111,7 +111,7 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="pair",
         revision=1,
-        inputs=("convert", "calibrate", "screen", "ingest.spots"),
+        inputs=("convert", "convert.standards", "calibrate", "screen", "ingest.spots"),
         outputs=("pair", "pair.pairs", "pair.limits", "pair.techniques"),
         settings=lambda settings: settings.pair,
         counted="screen",
@@ -135,9 +135,22 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="assess",
         revision=1,
-        inputs=("classify", "partition.covariance", "pair", "ingest.experiments"),
-        outputs=("assess",),
+        inputs=("partition", "partition.covariance", "pair", "ingest.experiments"),
+        outputs=(
+            "assess",
+            "assess.exchange",
+            "assess.curves",
+            "assess.elements",
+            "assess.proportions",
+            "assess.balance",
+            "assess.bulk",
+            "assess.trends",
+            "assess.trend_points",
+        ),
         settings=lambda settings: settings.assess,
+        files=lambda settings: _optional(settings.assess.mass_balance.starting_composition),
+        reads_files=True,
+        reader="read_starting_composition",
     ),
 )
 

@@ -60,11 +60,14 @@ def stage_tables(experiments: int, rescaled: bool) -> dict[str, Any]:
         "mean_ppm": mean,
         "se_ppm": se,
         "counting_se_ppm": se * rng.uniform(0.3, 0.9, n),
+        "n_independent": 0,
+        "internal_standard": np.full(n, rescaled),
         "internal_standard_sd": np.where(
             rescaled, rng.uniform(0.005, 0.02, n // len(ELEMENTS)).repeat(len(ELEMENTS)), np.nan
         ),
     }
     columns["dof"] = columns["n_used"] - 1.0
+    columns["n_independent"] = columns["n_used"]
     of_pair = np.arange(experiments * len(PAIRS))
     calibration = [(batch, element) for batch in ("first", "second") for element in ELEMENTS]
     return {
@@ -91,6 +94,7 @@ def stage_tables(experiments: int, rescaled: bool) -> dict[str, Any]:
                     "technique": ["laser"] * len(calibration),
                     "batch": [batch for batch, _ in calibration],
                     "element": [element for _, element in calibration],
+                    "analyte": [element for _, element in calibration],
                     "n_spots": [9] * len(calibration),
                     "n_materials": [1] * len(calibration),
                     "factor": [1.0] * len(calibration),

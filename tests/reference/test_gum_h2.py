@@ -64,7 +64,16 @@ def test_the_same_ratio_through_the_program():
     def side(row: int) -> Side:
         zero = np.zeros(1)
         return Side(
-            mean[[row]], own[[row]], zero, np.array([shared]), np.array([7]), zero, zero, np.array([-1 - row])
+            mean[[row]],
+            own[[row]],
+            zero,
+            np.array([shared]),
+            np.array([7]),
+            zero,
+            zero,
+            np.array([-1 - row]),
+            zero,
+            np.array([-1 - row]),
         )
 
     assert by_arrays(side(0), side(1)).D_sd[0] == pytest.approx((V / I).s, rel=1e-3)

@@ -119,7 +119,6 @@ def inputs(blocks: Sequence[Block]) -> Inputs:
             "limit_ppm": limit,
             "below_limit": only_limit
             | (np.nan_to_num(value, nan=np.inf) < np.nan_to_num(limit, nan=-np.inf)),
-            "internal_standard_sd": np.full(len(value), np.nan),
         },
     )
     return Inputs(convert, empty(CALIBRATE), spots)

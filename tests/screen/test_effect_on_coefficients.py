@@ -7,11 +7,11 @@ import numpy as np
 
 from screen.synthetic import Block, inputs
 from simulate_spots import phase, simulate
-from tieline.columns import CALIBRATE
+from tieline.columns import CALIBRATE, CONVERT_STANDARDS
 from tieline.pair import pair
 from tieline.partition import partition
 from tieline.settings.results import PairSettings, PartitionSettings
-from tieline.tables import build
+from tieline.tables import build, empty
 
 OFF = {
     name: {"enabled": False}
@@ -33,22 +33,24 @@ def session(seed, fraction, spread=0.05):
     )
 
 
-def exact_calibration(elements):
-    """A calibration without any error: what is tested is what screening alone does."""
-    size = len(elements)
+def exact_calibration(analytes):
+    """A calibration without any error: what is tested is what screening alone does. analytes: analyte -> element."""
+    size = len(analytes)
     columns = {column.name: [None] * size for column in CALIBRATE.columns}
-    columns |= {"technique": ["laser"] * size, "batch": ["laser-1"] * size, "element": list(elements)}
+    columns |= {"technique": ["laser"] * size, "batch": ["laser-1"] * size, "analyte": list(analytes)}
+    columns["element"] = list(analytes.values())
     columns |= {"n_spots": [0] * size, "n_materials": [0] * size, "factor": [1.0] * size}
-    columns |= {name: [0.0] * size for name in ("drift_applied", "relative_sd", "matrix_sd")}
+    columns |= {name: [0.0] * size for name in ("drift_applied", "drift_left", "relative_sd", "matrix_sd")}
     return build(CALIBRATE, {**columns, "origin": ["configured"] * size})
 
 
 def coefficients(tables, **settings):
     """True D, D and whether its interval covers the truth, one entry per experiment and element."""
     of = phase("olivine", "laser")
-    calibrate = exact_calibration(sorted(of.elements))
+    names = tables.convert.select(["analyte", "element"]).to_pylist()
+    calibrate = exact_calibration({row["analyte"]: row["element"] for row in names})
     used = tables.screen(**settings).tables["screen"]
-    means = pair(tables.convert, calibrate, used, tables.spots, settings=PairSettings()).tables
+    means = pair(tables.convert, empty(CONVERT_STANDARDS), calibrate, used, tables.spots, settings=PairSettings()).tables
     table = partition(
         means["pair"], means["pair.pairs"], means["pair.limits"], calibrate, settings=PartitionSettings()
     ).tables["partition"]

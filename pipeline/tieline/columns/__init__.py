@@ -4,13 +4,24 @@ from __future__ import annotations
 
 from tieline.columns.calibration import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.columns.coefficients import (
-    ASSESS,
     CLASSIFY,
     PARTITION,
     PARTITION_ALTERNATIVES,
     PARTITION_COVARIANCE,
     PARTITION_KEYS,
     PARTITION_VALUES,
+)
+from tieline.columns.evidence import (
+    ASSESS,
+    ASSESS_BALANCE,
+    ASSESS_BULK,
+    ASSESS_CURVES,
+    ASSESS_ELEMENTS,
+    ASSESS_EXCHANGE,
+    ASSESS_PROPORTIONS,
+    ASSESS_TREND_POINTS,
+    ASSESS_TRENDS,
+    EVIDENCE,
 )
 from tieline.columns.keys import ANALYTE, ELEMENT, SPOT_KEYS, VALUE_KEYS
 from tieline.columns.means import PAIR, PAIR_LIMITS, PAIR_TECHNIQUES, PAIRS
@@ -20,6 +31,7 @@ from tieline.columns.values import (
     CONVERT,
     CONVERT_CATIONS,
     CONVERT_FORMULA,
+    CONVERT_STANDARDS,
     FORMULA_KEYS,
     INGEST,
     INGEST_EXPERIMENTS,
@@ -31,6 +43,14 @@ from tieline.tables import TableSpec
 __all__ = [
     "ANALYTE",
     "ASSESS",
+    "ASSESS_BALANCE",
+    "ASSESS_BULK",
+    "ASSESS_CURVES",
+    "ASSESS_ELEMENTS",
+    "ASSESS_EXCHANGE",
+    "ASSESS_PROPORTIONS",
+    "ASSESS_TRENDS",
+    "ASSESS_TREND_POINTS",
     "CALIBRATE",
     "CALIBRATE_MATERIALS",
     "CLASSIFY",
@@ -38,6 +58,7 @@ __all__ = [
     "CONVERT",
     "CONVERT_CATIONS",
     "CONVERT_FORMULA",
+    "CONVERT_STANDARDS",
     "ELEMENT",
     "FINDINGS",
     "FORMULA_KEYS",
@@ -69,6 +90,7 @@ TABLES: dict[str, TableSpec] = {
         INGEST_SET_ASIDE,
         INGEST_EXPERIMENTS,
         CONVERT,
+        CONVERT_STANDARDS,
         CONVERT_FORMULA,
         CONVERT_CATIONS,
         CALIBRATE,
@@ -84,6 +106,6 @@ TABLES: dict[str, TableSpec] = {
         PARTITION_ALTERNATIVES,
         PARTITION_COVARIANCE,
         CLASSIFY,
-        ASSESS,
+        *EVIDENCE,
     )
 }

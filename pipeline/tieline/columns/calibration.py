@@ -2,16 +2,17 @@
 
 from __future__ import annotations
 
-from tieline.columns.keys import ELEMENT
+from tieline.columns.keys import ANALYTE, ELEMENT
 from tieline.tables import Column, TableSpec
 
 CALIBRATE = TableSpec(
     "calibrate",
-    "batch x element",
+    "batch x element, and analyte where an element has several",
     (
         Column("technique", "label", "measuring technique"),
         Column("batch", "label", "measuring session"),
         ELEMENT,
+        ANALYTE,
         Column("n_spots", "count", "reference-material spots that measured the element", "1"),
         Column("n_materials", "count", "reference materials with an accepted value", "1"),
         Column("bias", "number", "measured over accepted, weighted over materials", "1", True),
@@ -43,6 +44,19 @@ CALIBRATE = TableSpec(
             "1",
             True,
         ),
+        Column(
+            "relative_dof",
+            "number",
+            "degrees of freedom of relative_sd; null where it is configured or no standard error",
+            "1",
+            True,
+        ),
+        Column(
+            "drift_left",
+            "number",
+            "relative drift per place that the data support and that stays in the values",
+            "1",
+        ),
         Column("matrix_sd", "number", "relative standard uncertainty not shared between phases", "1"),
         Column("origin", "label", "where relative_sd comes from: reference materials, configured or unknown"),
         Column(
@@ -63,6 +77,7 @@ CALIBRATE_MATERIALS = TableSpec(
         Column("batch", "label", "measuring session"),
         Column("material", "label", "reference material"),
         ELEMENT,
+        ANALYTE,
         Column("n_spots", "count", "spots that measured the element", "1"),
         Column("measured_ppm", "number", "mean of the measured values", "ug/g", True),
         Column("measured_se_ppm", "number", "standard error of that mean", "ug/g", True),

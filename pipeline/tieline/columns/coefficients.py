@@ -1,4 +1,4 @@
-"""Columns of `partition`, `classify` and `assess`."""
+"""Columns of `partition` and `classify`."""
 
 from __future__ import annotations
 
@@ -21,8 +21,11 @@ PARTITION_VALUES = (
     Column("confidence", "number", "confidence level of the interval or limit", "1"),
     Column("kind", "label", "value, upper-limit, lower-limit or undetermined"),
     Column("reason", "text", "why it is not a plain value with an interval; empty otherwise"),
+    Column("complete", "flag", "the interval covers every source of uncertainty that D needs"),
     Column("n_alpha", "count", "spots in the mean of alpha", "1"),
     Column("n_beta", "count", "spots in the mean of beta", "1"),
+    Column("n_independent_alpha", "count", "independent units of alpha's mean: spots, or grains", "1"),
+    Column("n_independent_beta", "count", "independent units of beta's mean: spots, or grains", "1"),
     Column("batch_alpha", "label", "batch of alpha's mean"),
     Column("batch_beta", "label", "batch of beta's mean"),
     Column("technique_alpha", "label", "technique of alpha's mean"),
@@ -40,7 +43,8 @@ PARTITION_VALUES = (
     Column(
         "shared_sd_alpha",
         "number",
-        "relative uncertainty of alpha from calibration, matrix and internal standard that does not cancel",
+        "relative uncertainty of alpha from calibration, matrix, drift and internal standard that does not cancel, as "
+        "it enters the interval: known from few measurements it counts by Student's over the normal quantile",
         "1",
     ),
     Column("shared_sd_beta", "number", "the same for beta", "1"),
@@ -108,27 +112,5 @@ CLASSIFY = TableSpec(
         Column(
             "p_highly_incompatible", "number", "probability that D is below the lower boundary", "1", True
         ),
-    ),
-)
-
-ASSESS = TableSpec(
-    "assess",
-    "check",
-    (
-        Column(
-            "check",
-            "label",
-            "which line of evidence: exchange, lattice-strain, mass-balance, trend, overlap, ...",
-        ),
-        Column("experiment", "label", "experiment; null when the check spans experiments", nullable=True),
-        Column("alpha", "label", "numerator phase", nullable=True),
-        Column("beta", "label", "denominator phase", nullable=True),
-        Column("subject", "text", "what was checked: elements, charge, quantity"),
-        Column("value", "number", "the result", "see detail", True),
-        Column("sd", "number", "its standard uncertainty", "see detail", True),
-        Column("expected_lo", "number", "lower end of what is expected", "see detail", True),
-        Column("expected_hi", "number", "upper end of what is expected", "see detail", True),
-        Column("verdict", "label", "consistent, differs or cannot tell"),
-        Column("detail", "text", "the result, its assumptions and sources in words"),
     ),
 )

@@ -69,14 +69,28 @@ CONVERT = TableSpec(
         Column("sigma_ppm", "number", "one standard uncertainty of the single value", "ug/g", True),
         Column("limit_ppm", "number", "detection limit as element", "ug/g", True),
         Column("below_limit", "flag", "the value is below its limit, or only the limit was reported"),
+    ),
+)
+
+CONVERT_STANDARDS = TableSpec(
+    "convert.standards",
+    "experiment x phase x rescaled technique",
+    (
+        Column("experiment", "label", "experiment"),
+        Column("phase", "label", "phase"),
+        Column("technique", "label", "technique whose values are rescaled"),
+        Column("analyte", "label", "internal standard, as the settings name it"),
+        Column("actual_ppm", "number", "actual concentration of its element", "ug/g"),
+        Column("relative_sd", "number", "its relative standard uncertainty; null where unknown", "1", True),
+        Column("dof", "number", "degrees of freedom of that uncertainty; null for a given value", "1", True),
         Column(
-            "internal_standard_sd",
-            "number",
-            "relative standard uncertainty of the internal-standard factor, shared by all elements of the phase "
-            "and experiment; null where none applies",
-            "1",
-            True,
+            "source_technique",
+            "label",
+            "technique of the mean it comes from; null where given",
+            nullable=True,
         ),
+        Column("source_batch", "label", "batch of that mean", nullable=True),
+        Column("source_analyte", "label", "analyte of that mean", nullable=True),
     ),
 )
 

@@ -55,7 +55,9 @@ class Source:
     def concentrations(self) -> Concentrations:
         """The values as the phase means used them: calibrated and unmixed where that is configured."""
         screen = self.table("screen")
-        values = calibrated(self.table("convert"), self.table("calibrate"), self.table("ingest.spots"))
+        values = calibrated(
+            self.table("convert"), self.table("calibrate"), self.table("ingest.spots"), self.table("convert.standards")
+        )
         unmixed = numbers(screen, "unmixed_ppm")
         taken = np.isfinite(unmixed)
         return Concentrations(

@@ -35,6 +35,7 @@ def screen(
     convert: pa.Table,
     calibrate: pa.Table,
     ingest_spots: pa.Table,
+    convert_standards: pa.Table | None = None,
     *,
     files: Mapping[str, InputFile],
     settings: ScreenSettings,
@@ -44,7 +45,7 @@ def screen(
     Raises InputError for rulings that are incomplete, contradict each other or name spots that do not exist.
     """
     rulings = read_rulings(files)
-    concentrations = calibrated(convert, calibrate, ingest_spots)
+    concentrations = calibrated(convert, calibrate, ingest_spots, convert_standards)
     session = session_of(convert, concentrations)
     ruled = ruling_findings(rulings, session)
     results, unmixed = _tests(session, convert.num_rows, settings)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Annotated, Literal
 
 from pydantic import Field
 
@@ -22,7 +22,7 @@ class InternalStandard(Settings):
     technique: str = Field("laser", description="technique whose tables are rescaled")
     element: str = Field(description="internal-standard analyte as in `assumed`, such as CaO or Si")
     unit: Literal["wt%", "ppm"] = Field("wt%", description="unit of `assumed` and `actual`")
-    assumed: dict[str, float] = Field(
+    assumed: dict[str, Annotated[float, Field(gt=0)]] = Field(
         default_factory=dict, description="phase -> value assumed when the table was made; * for all others"
     )
     assumed_from: Literal["settings", "table"] = Field(
@@ -58,7 +58,7 @@ class ConvertSettings(Settings):
         (), description="internal standards, one per technique"
     )
     formula: FormulaSettings = Field(FormulaSettings(), description="formula units")
-    normalise: dict[str, float] = Field(
+    normalise: dict[str, Annotated[float, Field(gt=0, le=200)]] = Field(
         default_factory=dict,
         description="technique -> total in wt% to which the oxide sum of every spot is normalised; off by default",
     )
@@ -80,11 +80,11 @@ class CalibrateSettings(Settings):
         False,
         description="divide by the measured bias, and remove a supported drift; by default only carry its uncertainty",
     )
-    relative_sd: dict[str, float] = Field(
+    relative_sd: dict[str, Annotated[float, Field(ge=0, lt=1)]] = Field(
         default_factory=dict,
         description="technique -> relative calibration uncertainty where no reference material tells",
     )
-    matrix_sd: dict[str, float] = Field(
+    matrix_sd: dict[str, Annotated[float, Field(ge=0, lt=1)]] = Field(
         default_factory=dict,
         description="technique -> relative uncertainty not shared between phases; never cancels",
     )

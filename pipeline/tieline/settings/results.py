@@ -1,4 +1,4 @@
-"""Settings of `pair`, `partition`, `classify` and `assess`."""
+"""Settings of `pair`, `partition`, `classify` and the report."""
 
 from __future__ import annotations
 
@@ -38,6 +38,14 @@ class PairSettings(Settings):
         description="two techniques differ when their means do by more than this many standard uncertainties",
     )
 
+    @model_validator(mode="after")
+    def _two_phases(self) -> PairSettings:
+        for alpha, beta in self.pairs or ():
+            if alpha == beta:
+                raise ValueError(f"pairs: {alpha}/{beta} is no pair of two phases")
+        if self.pairs is not None and len(set(self.pairs)) < len(self.pairs):
+            raise ValueError("pairs: a pair stands twice")
+        return self
 
     @model_validator(mode="after")
     def _one_way(self) -> PairSettings:
@@ -80,16 +88,15 @@ class ClassifySettings(Settings):
 
     @model_validator(mode="after")
     def _ordered(self) -> ClassifySettings:
+        reserved = {"compatible", "incompatible", "highly incompatible", "unresolved"} & set(self.extra)
+        if reserved:
+            raise ValueError(f"extra: {sorted(reserved)[0]} is the name of a plain class")
         for name, (low, high) in self.extra.items():
             if not 0 <= low < high:
                 raise ValueError(f"extra.{name} must be [low, high] with 0 <= low < high")
         if self.highly_incompatible_below >= self.compatible_above:
             raise ValueError("highly_incompatible_below must be smaller than compatible_above")
         return self
-
-
-class AssessSettings(Settings):
-    """Section [assess]."""
 
 
 class ReportSettings(Settings):

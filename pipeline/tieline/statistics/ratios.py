@@ -30,7 +30,7 @@ VALUE, UPPER_LIMIT, LOWER_LIMIT, UNDETERMINED = "value", "upper-limit", "lower-l
 
 NO_VALUES = "no values"
 ONE_VALUE = "a mean rests on one value: its scatter is unknown, no interval"
-NO_SCATTER = "the values of a mean are all equal and their uncertainty is unknown: no interval"
+NO_SCATTER = "the values of a mean are all equal and their uncertainty is unknown or zero: no interval"
 TWO_VALUES = "a mean rests on two values: interval by propagating scaled t distributions"
 NUMERATOR_AT_ZERO = "the numerator is not significantly above zero"
 DENOMINATOR_AT_ZERO = "the denominator is not significantly above zero"
@@ -181,7 +181,7 @@ def _usable(alpha: MeanEstimate, beta: MeanEstimate) -> BoolArray:
     """Both means have a variance that means something."""
     usable: BoolArray = (alpha.dof > 0) & (beta.dof > 0)
     for mean in (alpha, beta):
-        usable &= ~((mean.variance == 0) & np.isnan(mean.counting_variance))
+        usable &= ~((mean.variance == 0) & ~(mean.counting_variance > 0))
     return usable
 
 
@@ -257,8 +257,12 @@ def _with_draws(
 
 
 def _at_zero(mean: MeanEstimate, tail: float) -> BoolArray:
-    """A mean not significantly above zero; of two values (t = 12.7) only sign and counting can tell."""
-    reach = np.where(mean.dof > 1.5, special.stdtrit(np.maximum(mean.dof, 1.0), tail), 0.0)
+    """A mean not significantly above zero; of two values (t = 12.7) only sign and counting can tell.
+
+    Where the counting of two values is unknown too, a mean within two of its standard errors counts as zero (ours).
+    """
+    of_two = np.where(np.isnan(mean.counting_variance), 2.0, 0.0)
+    reach = np.where(mean.dof > 1.5, special.stdtrit(np.maximum(mean.dof, 1.0), tail), of_two)
     return np.asarray(mean.mean <= reach * np.sqrt(mean.variance))
 
 
@@ -282,6 +286,8 @@ def _result(
     value = divide(alpha.mean, beta.mean)
     variance_a, variance_b = _variances(alpha, beta, u_alpha, u_beta)
     sd = divide(np.sqrt(variance_a + value**2 * variance_b), np.abs(beta.mean))
+    # A mean that claims no uncertainty of its own makes that of the ratio unknown, not small.
+    sd = np.where((alpha.variance == 0) | (beta.variance == 0), np.nan, sd)
     at_zero = usable & ~(ends.low > 0)
     no_top = usable & ~np.isfinite(ends.high)
     empty = (alpha.n == 0) | (beta.n == 0)

@@ -10,7 +10,7 @@ import pyarrow as pa
 
 from tieline.arrays import labels, numbers
 from tieline.chemistry.oxides import parse_oxide
-from tieline.convert import PPM_PER_UNIT
+from tieline.chemistry.header_words import PPM_PER_UNIT
 from tieline.correction import sequence_of
 from tieline.settings.chemistry import CalibrateSettings, InternalStandard
 from tieline.tracing.means import mean_account, with_constant

@@ -223,7 +223,9 @@ def _spots(
 ) -> list[dict[str, Any]]:
     """Every spot of the group: value with its factors and cells, and what tests and people said of it."""
     convert, ingest, screen = (part.to_pylist() for part in parts)
-    values = calibrated(parts[0], source.tables["calibrate"], source.tables["ingest.spots"])
+    values = calibrated(
+        parts[0], source.tables["calibrate"], source.tables["ingest.spots"], source.tables["convert.standards"]
+    )
     sequence = sequence_of(parts[0], source.tables["ingest.spots"])
     remarks = _findings(source.tables["screen.findings"])
     cells = source_cells(
