@@ -39,7 +39,7 @@ def test_types(monkeypatch: pytest.MonkeyPatch):
 
 
 @settings(deadline=None)
-@given(st.lists(st.floats(-1e11, 1e11), min_size=1, max_size=20))
+@given(st.lists(st.floats(-1e11, 1e11).filter(lambda x: x == 0 or abs(x) > 1e-50), min_size=1, max_size=20))
 def test_numbers_read_back_exactly(numbers: list[float]):
     grid = read(parquet(pa.table({"MgO": numbers})), "t.parquet")
     assert parse_cells(grid.blocks[0].cells[0], CellStyle()).value.tolist() == [

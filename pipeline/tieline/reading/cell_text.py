@@ -10,6 +10,8 @@ from typing import NamedTuple
 VALUE, BELOW_LIMIT, NOT_MEASURED, UNREADABLE = 0, 1, 2, 3
 
 LARGEST = 1e12  # no concentration in wt%, ppm or ppb, distance or run number is larger
+# One atom in a gram is 1e-16 ppm, and squares of squares of a smaller number could no longer be told from zero.
+SMALLEST = 1e-50
 LONGEST = 64  # characters of a number; longer ones are damage, not precision
 
 REASONS: tuple[tuple[str, str], ...] = (
@@ -19,7 +21,7 @@ REASONS: tuple[tuple[str, str], ...] = (
     ("date", "a date or time where a number should be"),
     ("infinite", "infinity or not-a-number is no measurement"),
     ("too large", "number above 1e12"),
-    ("too small", "number too small to be held, but not zero"),
+    ("too small", "number below 1e-50, but not zero"),
     ("limit not positive", "a limit must be a positive number"),
     ("too long", "more than 64 characters"),
     ("greater than", "a lower bound, not a value"),
@@ -134,7 +136,7 @@ def _number(shown: str, style: CellStyle) -> float | str:
     if unit is not None and fold(unit) not in style.units:
         return "other unit" if fold(unit) in KNOWN_UNITS else _diagnose(shown)
     number = float(match.group(1))
-    if number == 0 and re.match(r"[^eE]*[1-9]", match.group(1)):
+    if (number == 0 and re.match(r"[^eE]*[1-9]", match.group(1))) or 0 < abs(number) < SMALLEST:
         return "too small"
     return number if abs(number) <= LARGEST else "too large"
 

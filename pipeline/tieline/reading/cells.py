@@ -21,6 +21,7 @@ from tieline.reading.cell_text import (
     LONGEST,
     NOT_MEASURED,
     REASONS,
+    SMALLEST,
     UNREADABLE,
     VALUE,
     CellStyle,
@@ -184,8 +185,10 @@ def _check_numbers(texts: pa.StringArray, style: CellStyle, cells: Cells) -> Non
     """Refuses numbers no concentration can have, and applies what zero and numeric code words mean."""
     with np.errstate(invalid="ignore"):
         too_large = np.abs(cells.value) > LARGEST
-        bad_limit = ~(cells.limit > 0) & ~np.isnan(cells.limit) | (cells.limit > LARGEST)
+        too_small = (np.abs(cells.value) < SMALLEST) & (cells.value != 0)
+        bad_limit = ~(cells.limit >= SMALLEST) & ~np.isnan(cells.limit) | (cells.limit > LARGEST)
     _refuse(cells, np.flatnonzero(too_large), "too large")
+    _refuse(cells, np.flatnonzero(too_small), "too small")
     _refuse(cells, np.flatnonzero(bad_limit), "limit not positive")
     zero = np.flatnonzero((cells.value == 0) & (cells.state == VALUE))
     if zero.size:

@@ -91,12 +91,10 @@ def _elements(
     axes = figure.add_subplot()
     level: dict[str, list[float]] = {}
     for row in rows:
-        level.setdefault(row["element"], []).append(
-            row["D"] if row["D"] is not None else row["D_hi"] or np.nan
-        )
-    names = sorted(
-        level, key=lambda element: float(np.nanmedian([*level[element], 1e300][: len(level[element])]))
-    )
+        known = [row[name] for name in ("D", "D_hi", "D_lo") if row[name] is not None]
+        level.setdefault(row["element"], []).extend(known[:1])
+    # An element of which nothing is known comes last.
+    names = sorted(level, key=lambda element: float(np.median(level[element] or [np.inf])))
     experiments = sorted({row["experiment"] for row in rows})
     for place, experiment in enumerate(experiments):
         own = [row for row in rows if row["experiment"] == experiment]

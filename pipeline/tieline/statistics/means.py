@@ -32,6 +32,7 @@ ESTIMATORS = ("random-effects", "arithmetic", "median", "huber")
 # Least value of a fitted variance line, as a share of its value at the mean: counts near zero say little
 # about it.
 LOWEST_LINE = 0.1
+EQUAL_RELATIVE = 1e-9  # values closer than this are the same number: no instrument resolves it
 
 
 @dataclass(frozen=True)
@@ -97,7 +98,8 @@ def phase_means(
     spot from ruling the mean. With equal sigmas the variance is s²/n exactly. "arithmetic": s²/n. "median",
     "huber": see `robust`.
 
-    n = 1: variance sigma², dof 0. n = 0: NaN, dof 0. Raises ValueError for an unknown estimator or shapes
+    n = 1: variance sigma², dof 0. Values that are all equal: variance sigma²/n from counting, 0 where the sigmas
+    are 0 or unknown, which stands for unknown. n = 0: NaN, dof 0. Raises ValueError for an unknown estimator or shapes
     that differ.
     """
     if estimator not in ESTIMATORS:
@@ -149,6 +151,9 @@ def _estimate(
         counting_variance = divide(group_mean(counting, group, n_groups), n) * efficiency_factor
     single = n == 1
     variance = np.where(single, np.where(sigma_known, counting_variance, np.nan), variance)
+    # Values equal in every digit tell nothing of their scatter: it is below what was written down.
+    equal = (n > 1) & (variance <= (EQUAL_RELATIVE * mean) ** 2)
+    variance = np.where(equal, np.where(sigma_known, counting_variance, 0.0), variance)
     return PhaseMeans(
         mean=mean,
         variance=variance,
