@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from assess.frames import covariance, partition
-from tieline.assess.exchange import compare, exchange_checks, exchange_coefficient, ferrous_factor
+from tieline.assess.exchange import compare, exchange_tables, exchange_coefficient, ferrous_factor
 from tieline.assess.ferric import FerricShare, kress_carmichael
 
 
@@ -73,7 +73,7 @@ def test_table_uses_windows_for_melts_only_and_states_the_ferric_share():
     rows = [{"element": "Fe", "D": 1.25}, {"element": "Mg", "D": 4.2}]
     both = partition([*rows, *[row | {"beta": "orthopyroxene"} for row in rows]])
     ferric = {("A", "glass"): FerricShare(0.10, 0.02, "stated")}
-    table = exchange_checks(both, covariance(both), ferric=ferric).set_index("beta")
+    table = exchange_tables(both, covariance(both), ferric=ferric)[1].set_index("beta")
     assert table.loc["glass", "value"] == pytest.approx(1.25 / 4.2 / 0.9)
     assert table.loc["glass", "verdict"] == "consistent"
     assert (table.loc["glass", "expected_lo"], table.loc["glass", "expected_hi"]) == pytest.approx(
@@ -87,12 +87,15 @@ def test_table_uses_windows_for_melts_only_and_states_the_ferric_share():
 
 def test_other_pairs_and_given_windows():
     table = partition([{"element": "Ni", "D": 8.0}, {"element": "Mg", "D": 4.0}, {"element": "Fe", "D": 1.2}])
-    found = exchange_checks(
+    coefficients, checks = exchange_tables(
         table,
         covariance(table),
         pairs=(("Ni", "Mg"), ("Mg", "Fe")),
         windows={("olivine", "Ni-Mg"): (2.2, 2.8, "ours")},
-    ).set_index("subject")
+    )
+    assert coefficients["K_D"].tolist() == checks["value"].tolist()
+    assert coefficients["window_source"].tolist() == ["ours", ""]
+    found = checks.set_index("subject")
     assert found.loc["K_D(Ni-Mg)", "value"] == pytest.approx(2.0)
     assert "ours" in found.loc["K_D(Ni-Mg)", "detail"]
     assert found.loc["K_D(Mg-Fe)", "value"] == pytest.approx(4.0 / 1.2)
@@ -101,13 +104,13 @@ def test_other_pairs_and_given_windows():
 def test_iron_as_the_second_element_takes_the_inverse_factor():
     table = partition([{"element": "Mg", "D": 4.2}, {"element": "Fe", "D": 1.2}])
     ferric = {("A", "glass"): FerricShare(0.20, 0.0, "stated")}
-    found = exchange_checks(table, covariance(table), pairs=(("Mg", "Fe"),), ferric=ferric)
+    found = exchange_tables(table, covariance(table), pairs=(("Mg", "Fe"),), ferric=ferric)[1]
     assert found["value"][0] == pytest.approx(4.2 / (1.2 / 0.8))
 
 
 def test_a_limit_gives_no_coefficient():
     table = partition([{"element": "Fe", "kind": "upper-limit", "D_hi": 0.2}, {"element": "Mg", "D": 4.2}])
-    found = exchange_checks(table, covariance(table))
+    found = exchange_tables(table, covariance(table))[1]
     assert found["verdict"][0] == "cannot tell"
     assert np.isnan(found["value"][0])
 

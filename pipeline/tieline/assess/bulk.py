@@ -45,16 +45,19 @@ def bulk_partition(
     import pandas as pd
 
     rows: list[dict[str, Any]] = []
-    over = partition[partition["beta"] == beta]
-    for (experiment, element), group in over.groupby(["experiment", "element"], sort=True, observed=True):
+    groups: dict[tuple[str, str], dict[str, dict[str, Any]]] = {}
+    names = ["experiment", "element", "alpha", "kind", "D", "D_sd", "D_hi"]
+    for row in partition.loc[partition["beta"] == beta, names].to_dict("records"):
+        groups.setdefault((row["experiment"], row["element"]), {})[row["alpha"]] = row
+    for (experiment, element), group in sorted(groups.items()):
         if experiment not in modes:
             continue
-        names, proportions, covariance = modes[experiment]
-        crystals = [index for index, name in enumerate(names) if name != beta and proportions[index] > 0]
+        phases, proportions, covariance = modes[experiment]
+        crystals = [index for index, name in enumerate(phases) if name != beta and proportions[index] > 0]
         keys = {"experiment": experiment, "beta": beta, "element": element}
-        shared = (beta_relative_sd or {}).get((str(experiment), str(element)), 0.0)
+        shared = (beta_relative_sd or {}).get((experiment, element), 0.0)
         found = _bulk(
-            group.set_index("alpha"), [names[index] for index in crystals], np.asarray(proportions)[crystals],
+            group, [phases[index] for index in crystals], np.asarray(proportions)[crystals],
             np.asarray(covariance)[np.ix_(crystals, crystals)], shared, quantile,
         )  # fmt: skip
         rows.append(keys | found)
@@ -62,7 +65,7 @@ def bulk_partition(
 
 
 def _bulk(
-    group: pd.DataFrame,
+    group: dict[str, dict[str, Any]],
     phases: list[str],
     weights: FloatArray,
     covariance: FloatArray,
@@ -71,16 +74,18 @@ def _bulk(
 ) -> dict[str, Any]:
     if not phases:
         return _nothing("no crystals")
-    absent = [phase for phase in phases if phase not in group.index]
+    absent = [phase for phase in phases if phase not in group]
     if absent:
         return _nothing(f"no D for {', '.join(absent)}")
-    rows = group.loc[phases]
-    if not rows["kind"].isin(["value", "upper-limit"]).all():
-        bad = rows[~rows["kind"].isin(["value", "upper-limit"])]
-        return _nothing("; ".join(f"D of {phase} is {kind}" for phase, kind in bad["kind"].items()))
-    limits = (rows["kind"] == "upper-limit").to_numpy()
-    D = np.where(limits, 0.0, rows["D"].to_numpy(dtype=np.float64))
-    sd = np.where(limits, 0.0, rows["D_sd"].to_numpy(dtype=np.float64))
+    rows = [group[phase] for phase in phases]
+    bad = [row for row in rows if row["kind"] not in ("value", "upper-limit")]
+    if bad:
+        return _nothing("; ".join(f"D of {row['alpha']} is {row['kind']}" for row in bad))
+    limits = np.array([row["kind"] == "upper-limit" for row in rows])
+    measured, measured_sd, highest_D = (
+        np.array([row[name] for row in rows], dtype=np.float64) for name in ("D", "D_sd", "D_hi")
+    )
+    D, sd = np.where(limits, 0.0, measured), np.where(limits, 0.0, measured_sd)
     variances = np.outer(D, D) * shared**2
     np.fill_diagonal(variances, np.maximum(sd**2, np.diag(variances)))
     mean, error = weighted_sum(weights, covariance, D, variances)
@@ -89,7 +94,7 @@ def _bulk(
             "bulk_D": mean, "bulk_D_sd": error, "bulk_D_lo": max(mean - quantile * error, 0.0),
             "bulk_D_hi": mean + quantile * error, "kind": "value", "reason": "",
         }  # fmt: skip
-    most = np.where(limits, rows["D_hi"].to_numpy(dtype=np.float64), D)
+    most = np.where(limits, highest_D, D)
     highest, highest_error = weighted_sum(weights, covariance, most, variances)
     return {
         "bulk_D": np.nan, "bulk_D_sd": np.nan, "bulk_D_lo": max(mean - quantile * error, 0.0),

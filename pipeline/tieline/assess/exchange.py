@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from scipy import special
@@ -27,6 +27,10 @@ if TYPE_CHECKING:
     import pandas as pd
 
 MELTS = ("glass", "melt", "liquid")
+_NUMBERS = (
+    "K_D", "K_D_sd", "K_D_lo", "K_D_hi", "ferric_share", "ferric_share_sd", "window_lo", "window_hi",
+)  # fmt: skip
+EXCHANGE_COLUMNS = (*PAIR_KEYS, "first", "second", *_NUMBERS, "window_source", "verdict")
 
 
 @dataclass(frozen=True)
@@ -88,16 +92,17 @@ def ferrous_factor(alpha: FerricShare | None, beta: FerricShare | None) -> tuple
     return parts[0][0] / parts[1][0], float(relative)
 
 
-def exchange_checks(
+def exchange_tables(
     partition: pd.DataFrame,
     covariance: pd.DataFrame,
     *,
     pairs: Sequence[tuple[str, str]] = (("Fe", "Mg"),),
     ferric: Mapping[tuple[str, str], FerricShare] | None = None,
     windows: Mapping[tuple[str, str], tuple[float, float, str]] | None = None,
+    melts: Sequence[str] = MELTS,
     confidence: float = 0.95,
-) -> pd.DataFrame:
-    """One row per experiment, pair of phases and pair of elements, in the columns of the `assess` table.
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """One row per experiment, pair of phases and pair of elements: the coefficients, and rows of the `assess` table.
 
     partition, covariance: columns as in the stage files of those names. ferric: (experiment, phase) -> share; phases without
     one are taken as free of Fe3+, and the detail says so. windows: (phase, "Fe-Mg") -> low, high, source, in the place of
@@ -106,7 +111,8 @@ def exchange_checks(
     """
     import pandas as pd
 
-    rows = []
+    rows: list[dict[str, Any]] = []
+    coefficients: list[dict[str, Any]] = []
     variances = by_pair(covariance)
     for (experiment, alpha, beta), rows_of_pair in partition.groupby(
         list(PAIR_KEYS), sort=True, observed=True
@@ -132,15 +138,29 @@ def exchange_checks(
                 float(group.loc[first, "D"]), float(group.loc[second, "D"]), matrix, dof=float(dof),
                 ferrous_factor=factor, ferrous_factor_relative_sd=relative, confidence=confidence,
             )  # fmt: skip
-            low, high, source = _window(alpha, beta, f"{first}-{second}", windows or {})
+            low, high, source = _window(alpha, beta, f"{first}-{second}", windows or {}, melts)
+            keys = dict(zip(PAIR_KEYS, (experiment, alpha, beta), strict=True))
+            verdict = compare(found, low, high)
+            share = (ferric or {}).get((experiment, beta)) if "Fe" in (first, second) else None
+            numbers = (
+                found.value, found.sd, found.low, found.high, share.value if share else np.nan,
+                share.sd if share else np.nan, low, high,
+            )  # fmt: skip
+            coefficients.append(
+                {**keys, "first": first, "second": second, "window_source": source, "verdict": verdict}
+                | dict(zip(_NUMBERS, numbers, strict=True))
+            )
             rows.append(
                 check(
-                    "exchange", dict(zip(PAIR_KEYS, (experiment, alpha, beta), strict=True)), f"K_D({first}-{second})",
-                    compare(found, low, high), _words(found, source, confidence) + assumption,
+                    "exchange", keys, f"K_D({first}-{second})", verdict,
+                    _words(found, source, confidence) + assumption,
                     value=found.value, sd=found.sd, expected_lo=low, expected_hi=high,
                 )
             )  # fmt: skip
-    return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
+    return (
+        pd.DataFrame(coefficients, columns=list(EXCHANGE_COLUMNS)),
+        pd.DataFrame(rows, columns=list(CHECK_COLUMNS)),
+    )
 
 
 def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
@@ -153,12 +173,16 @@ def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
 
 
 def _window(
-    alpha: str, beta: str, exchange: str, given: Mapping[tuple[str, str], tuple[float, float, str]]
+    alpha: str,
+    beta: str,
+    exchange: str,
+    given: Mapping[tuple[str, str], tuple[float, float, str]],
+    melts: Sequence[str],
 ) -> tuple[float, float, str]:
     if (base_phase(alpha), exchange) in given:
         return given[base_phase(alpha), exchange]
     known = (
-        windows_for(base_phase(alpha), "Fe-Mg") if exchange == "Fe-Mg" and base_phase(beta) in MELTS else ()
+        windows_for(base_phase(alpha), "Fe-Mg") if exchange == "Fe-Mg" and base_phase(beta) in melts else ()
     )
     for window in known:
         if window.half_width is not None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import repeat
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -58,7 +59,8 @@ def fit_series(
     """Fit a series from its values alone where they suffice, else with what is known beforehand, and say so.
 
     First no prior; then the given prior of E, or the elastic estimate for an ion as large as the mean of those measured;
-    then the given prior of r0 besides. The comparison with an overlap fraction uses the same priors.
+    then the given prior of r0 besides. The comparison with an overlap fraction uses the same priors; corrected D are made
+    where it finds overlap.
     """
     given = dict(priors or {})
     steps: list[dict[str, Prior]] = [{}]
@@ -77,7 +79,9 @@ def fit_series(
         used = {}
         fit = fit_curve(series.data, temperature_K, confidence=confidence)
     held = "; ".join(f"{name} {prior.value:.4g} ± {prior.sd:.2g} beforehand" for name, prior in used.items())
-    comparison = compare_overlap(series.data, temperature_K, plain=fit, priors=used, confidence=confidence)
+    comparison = compare_overlap(
+        series.data, temperature_K, plain=fit, priors=used, confidence=confidence, correct=False
+    )
     return CurveResult(series, fit, held, comparison)
 
 
@@ -88,16 +92,19 @@ def lattice_strain_tables(
     *,
     coordination: Mapping[str, int] | None = None,
     charges: Mapping[str, int] | None = None,
-    leave_out: Sequence[str] = (),
+    fit_charges: Sequence[int] | None = None,
+    least_values: int = 2,
+    leave_out: Mapping[str, Sequence[str]] | None = None,
     priors: Mapping[tuple[str, int], Mapping[str, Prior]] | None = None,
+    without_each: bool = True,
     confidence: float = 0.95,
 ) -> LatticeTables:
-    """Fit every pair and charge that has D's of at least two elements.
+    """Fit every pair and charge that has at least `least_values` D's to shape a curve, or a prior for it.
 
     partition, covariance: columns as in the stage files of those names; temperatures_C: experiment -> °C. coordination: phase ->
     coordination of its site, in the place of the published one; phases without either have no curve, and say so.
-    priors: (phase, charge) -> parameter -> prior, used only where the values do not suffice. charges, leave_out: see
-    `collect_series`.
+    fit_charges: by default all. leave_out: phase -> elements. priors: (phase, charge) -> parameter -> prior, used only
+    where the values do not suffice. without_each: tell what every element does to the curve. charges: see `collect_series`.
     """
     import pandas as pd
 
@@ -109,33 +116,31 @@ def lattice_strain_tables(
         pair = {"experiment": experiment, "alpha": alpha, "beta": beta}
         site = _site(alpha, coordination or {})
         temperature_K = temperatures_C.get(experiment, np.nan) + 273.15
-        for charge, count in _charges(group, charges or {}).items():
-            if count < 2:
-                continue
-            if site is None or not temperature_K > 0:
-                lacks = (
-                    "the coordination of its site" if site is None else "the temperature of the experiment"
-                )
-                checks.append(
-                    check(
-                        "lattice-strain",
-                        pair,
-                        f"{charge}+ curve",
-                        CANNOT_TELL,
-                        f"No curve: {lacks} is not known.",
-                    )
-                )
-                continue
+        wanted = [
+            charge for charge, count in _charges(group, charges or {}, fit_charges).items() if count > 1
+        ]
+        if wanted and (site is None or not temperature_K > 0):
+            lacks = "the coordination of its site" if site is None else "the temperature of the experiment"
+            checks.append(_no_curves(pair, wanted, f"{lacks} is not known"))
+            continue
+        few: dict[int, tuple[str, ...]] = {}
+        for charge in wanted:
+            assert site is not None
+            known = (priors or {}).get((base_phase(alpha), charge))
             series = collect_series(
                 group, variances.get((experiment, alpha, beta), {}), charge, site,
-                charges=charges, leave_out=tuple(leave_out),
+                charges=charges, leave_out=tuple((leave_out or {}).get(base_phase(alpha), ())),
             )  # fmt: skip
-            result = fit_series(
-                series, temperature_K, (priors or {}).get((base_phase(alpha), charge)), confidence
-            )
+            if len(series.elements) < least_values and known is None:
+                few[charge] = series.elements
+                continue
+            result = fit_series(series, temperature_K, known, confidence)
             curves.append(pair | curve_row(result, temperature_K))
-            elements.extend(pair | row for row in element_rows(result))
+            elements.extend(pair | row for row in element_rows(result, without_each))
             checks.extend(_checks(pair, result, confidence))
+        if few:
+            words = "; ".join(f"{charge}+ {', '.join(names) or 'none'}" for charge, names in few.items())
+            checks.append(_no_curves(pair, list(few), f"too few values to shape and test one ({words})"))
     return LatticeTables(
         pd.DataFrame(curves, columns=[*PAIR_KEYS, *CURVE_COLUMNS]),
         pd.DataFrame(elements, columns=[*PAIR_KEYS, *ELEMENT_COLUMNS]),
@@ -155,7 +160,7 @@ CURVE_COLUMNS = (
 )  # fmt: skip
 ELEMENT_COLUMNS = (
     "charge", "element", "radius_angstrom", "role", "D", "D_sd", "curve_D", "curve_lo", "curve_hi", "sigmas",
-    "deleted_sigmas", "shift_D0", "shift_r0", "shift_E", "corrected_D", "corrected_lo", "corrected_hi", "remark",
+    "deleted_sigmas", "shift_D0", "shift_r0", "shift_E", "corrected_D", "corrected_lo", "corrected_hi",
 )  # fmt: skip
 
 
@@ -165,10 +170,18 @@ def _site(phase: str, given: Mapping[str, int]) -> int | None:
     return given.get(name, facts.large_site if facts else None)
 
 
-def _charges(group: pd.DataFrame, given: Mapping[str, int]) -> dict[int, int]:
-    """How many measured elements each charge has, charges in order."""
+def _charges(
+    group: pd.DataFrame, given: Mapping[str, int], wanted: Sequence[int] | None = None
+) -> dict[int, int]:
+    """How many measured elements each wanted charge has, charges in order."""
     found = [charge_of(element, given) for element in group["element"]]
-    return {charge: found.count(charge) for charge in sorted({one for one in found if one is not None})}
+    every = sorted({one for one in found if one is not None and (wanted is None or one in wanted)})
+    return {charge: found.count(charge) for charge in every}
+
+
+def _no_curves(pair: Mapping[str, Any], charges: Sequence[int], why: str) -> dict[str, Any]:
+    subject = f"{', '.join(f'{charge}+' for charge in charges)} curve"
+    return check("lattice-strain", pair, subject, CANNOT_TELL, f"No curve: {why}.")
 
 
 def curve_row(result: CurveResult, temperature_K: float) -> dict[str, Any]:
@@ -195,57 +208,39 @@ def curve_row(result: CurveResult, temperature_K: float) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def element_rows(result: CurveResult) -> list[dict[str, Any]]:
+def element_rows(result: CurveResult, without_each: bool = True) -> list[dict[str, Any]]:
     """The columns `ELEMENT_COLUMNS`: fitted, limits, compared, and elements of the charge that were not measured."""
     series, fit, corrected = result.series, result.fit, result.comparison.corrected
-    influence = leave_one_out(series.data, fit)
-    rows: list[dict[str, Any]] = []
-    on_curve = predict(fit, series.data.radius)
     sd = np.sqrt(np.diag(series.data.covariance_at(series.data.value)))
-    for index, element in enumerate(series.elements):
-        shift = dict(zip(("shift_D0", "shift_r0", "shift_E"), influence.shift[index], strict=True))
-        rows.append(
-            {
-                "element": element, "radius_angstrom": series.data.radius[index], "role": "fitted",
-                "D": series.data.value[index], "D_sd": sd[index], "sigmas": fit.sigmas[index],
-                "curve_D": on_curve.value[index], "curve_lo": on_curve.low[index], "curve_hi": on_curve.high[index],
-                "deleted_sigmas": influence.deleted_sigmas[index], **shift,
-                "corrected_D": corrected.value[index], "corrected_lo": corrected.low[index],
-                "corrected_hi": corrected.high[index], "remark": "",
-            }
-        )  # fmt: skip
-    others = [
+    every = [
+        *zip(series.elements, series.data.radius, repeat("fitted"), series.data.value, sd, strict=False),
         *((e, r, "limit", np.nan, np.nan) for e, r in zip(series.limit_elements, series.data.limit_radius, strict=True)),
         *((e, r, "compared", d, d_sd) for e, (r, d, d_sd) in series.compared.items()),
         *((e, r, "predicted", np.nan, np.nan) for e, r in series.unmeasured.items()),
     ]  # fmt: skip
-    guess = predict(fit, np.array([radius for _element, radius, *_rest in others]))
-    for index, (element, radius, role, measured, measured_sd) in enumerate(others):
-        sigmas = (measured - guess.value[index]) / np.hypot(measured_sd, np.sqrt(fit.scale) * guess.sd[index])
+    guess = predict(fit, np.array([radius for _element, radius, *_rest in every]))
+    rows: list[dict[str, Any]] = []
+    for index, (element, radius, role, measured, measured_sd) in enumerate(every):
         rows.append(
             {
-                "element": element, "radius_angstrom": radius, "role": role, "D": measured, "D_sd": measured_sd,
-                "curve_D": guess.value[index], "curve_lo": guess.low[index], "curve_hi": guess.high[index],
-                "sigmas": sigmas, "remark": "",
+                "charge": series.charge, "element": element, "radius_angstrom": radius, "role": role,
+                "D": measured, "D_sd": measured_sd, "curve_D": guess.value[index], "curve_lo": guess.low[index],
+                "curve_hi": guess.high[index],
+                "sigmas": fit.sigmas[index] if role == "fitted"
+                else (measured - guess.value[index]) / np.hypot(measured_sd, np.sqrt(fit.scale) * guess.sd[index]),
             }
         )  # fmt: skip
-    return [{"charge": series.charge, **row} for row in rows]
-
-
-def _check(
-    pair: Mapping[str, Any], subject: str, verdict: str, detail: str, **numbers: float
-) -> dict[str, Any]:
-    empty = dict.fromkeys(("value", "sd", "expected_lo", "expected_hi"), np.nan)
-    check = "overlap" if "overlap" in subject else "lattice-strain"
-    return {
-        "check": check,
-        **pair,
-        "subject": subject,
-        **empty,
-        **numbers,
-        "verdict": verdict,
-        "detail": detail,
-    }
+    for index in range(len(series.elements)):
+        rows[index] |= {
+            "corrected_D": corrected.value[index], "corrected_lo": corrected.low[index],
+            "corrected_hi": corrected.high[index],
+        }  # fmt: skip
+    if without_each:
+        influence = leave_one_out(series.data, fit)
+        for index in range(len(series.elements)):
+            shift = dict(zip(("shift_D0", "shift_r0", "shift_E"), influence.shift[index], strict=True))
+            rows[index] |= {"deleted_sigmas": influence.deleted_sigmas[index], **shift}
+    return rows
 
 
 def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> list[dict[str, Any]]:

@@ -2,21 +2,257 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from typing import TYPE_CHECKING
+
+import numpy as np
 import pyarrow as pa
 
-from tieline.columns import ASSESS
-from tieline.results import Ledger, StageResult
-from tieline.settings.results import AssessSettings
-from tieline.tables import empty
+from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
+from tieline.assess.starting_composition import Start, read_starting_composition
+from tieline.columns import EVIDENCE
+from tieline.reading.input_file import InputFile
+from tieline.results import Ledger, Remark, StageResult
+from tieline.settings.assess import AssessSettings
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+PARTITION_COLUMNS = (
+    "experiment", "alpha", "beta", "element", "D", "D_sd", "D_lo", "D_hi", "kind", "dof", "share_counting",
+    "share_spread", "mean_beta_ppm", "se_beta_ppm",
+)  # fmt: skip
+PAIR_COLUMNS = ("experiment", "phase", "element", "batch", "mean_ppm", "se_ppm", "dof")
+INVERSE_TEMPERATURE = "10^4/T"
+Frames = dict[str, "pd.DataFrame"]
 
 
 def assess(
-    classify: pa.Table,
+    partition: pa.Table,
     partition_covariance: pa.Table,
     pair: pa.Table,
     ingest_experiments: pa.Table,
     *,
     settings: AssessSettings,
+    files: Mapping[str, InputFile],
 ) -> StageResult:
-    """No checks yet: the table of evidence is empty."""
-    return StageResult({"assess": empty(ASSESS)}, Ledger("checks", 0, {}))
+    """Every check as a row of `assess`, and the side tables it rests on.
+
+    Raises InputError for a starting composition that cannot be used.
+    """
+    start = read_starting_composition(files)
+    D, means = frame(partition, PARTITION_COLUMNS), frame(pair, PAIR_COLUMNS)
+    covariance = frame(partition_covariance, partition_covariance.column_names)
+    conditions = conditions_frame(ingest_experiments, settings)
+    parts = [
+        _exchange(D, covariance, means, conditions, settings),
+        _lattice_strain(D, covariance, conditions, settings),
+        _mass_balance(D, means, start, settings),
+        _trends(D, conditions, settings),
+    ]
+    checks = [part.pop("assess") for part in parts]
+    if settings.consistency:
+        checks += _consistency(D, means, settings)
+    frames = {name: table for part in parts for name, table in part.items()}
+    every = [row for table in checks for row in table.to_dict("records")]
+    tables = {
+        spec.name: stage_table(spec, every if spec.name == "assess" else frames.get(spec.name))
+        for spec in EVIDENCE
+    }
+    verdicts = tables["assess"].column("verdict").to_pylist()
+    outcomes = {verdict: verdicts.count(verdict) for verdict in ("consistent", "differs", "cannot tell")}
+    return StageResult(
+        tables, Ledger("checks", len(verdicts), outcomes), _remarks(every, conditions, D, settings)
+    )
+
+
+def _exchange(
+    D: pd.DataFrame,
+    covariance: pd.DataFrame,
+    means: pd.DataFrame,
+    conditions: Conditions,
+    settings: AssessSettings,
+) -> Frames:
+    from tieline.assess.exchange import exchange_tables
+    from tieline.assess.melt_iron import ferric_shares
+
+    own = settings.exchange
+    windows = {(one.phase, one.pair): (one.low, one.high, one.source) for one in own.windows}
+    coefficients, checks = exchange_tables(
+        D, covariance, pairs=own.pairs, ferric=ferric_shares(means, conditions, settings), windows=windows,
+        melts=settings.melts, confidence=settings.confidence,
+    )  # fmt: skip
+    return {"assess": checks, "assess.exchange": coefficients}
+
+
+def _lattice_strain(
+    D: pd.DataFrame, covariance: pd.DataFrame, conditions: Conditions, settings: AssessSettings
+) -> Frames:
+    import pandas as pd
+
+    from tieline.assess.evidence import CHECK_COLUMNS
+    from tieline.assess.lattice_strain import lattice_strain_tables
+    from tieline.statistics.lattice_strain import Prior
+
+    own = settings.lattice_strain
+    if not own.enabled:
+        return {"assess": pd.DataFrame(columns=list(CHECK_COLUMNS))}
+    priors: dict[tuple[str, int], dict[str, Prior]] = {}
+    for known in own.known:
+        given = {
+            name: Prior(*value) for name, value in (("r0", known.r0), ("E", known.E)) if value is not None
+        }
+        priors.setdefault((known.phase, known.charge), {}).update(given)
+    found = lattice_strain_tables(
+        D, covariance, conditions.temperatures_C, coordination=own.coordination, charges=own.element_charges,
+        fit_charges=own.charges, least_values=own.least_values, leave_out=own.leave_out, priors=priors,
+        without_each=own.without_each, confidence=settings.confidence,
+    )  # fmt: skip
+    return {"assess": found.checks, "assess.curves": found.curves, "assess.elements": found.elements}
+
+
+def _mass_balance(
+    D: pd.DataFrame,
+    means: pd.DataFrame,
+    start: Mapping[tuple[str | None, str], Start],
+    settings: AssessSettings,
+) -> Frames:
+    import pandas as pd
+
+    from tieline.assess.bulk import bulk_partition
+    from tieline.assess.evidence import CHECK_COLUMNS
+    from tieline.assess.mass_balance import mass_balance_tables
+
+    own = settings.mass_balance
+    result: Frames = {"assess": pd.DataFrame(columns=list(CHECK_COLUMNS))}
+    modes = {
+        experiment: _stated_modes(given, settings.modes.relative_sd)
+        for experiment, given in settings.modes.proportions.items()
+    }
+    if start:
+        balance = mass_balance_tables(
+            means, _starting_frame(start, means, own.starting_relative_sd), losable=own.losable,
+            relative_sd=own.phases_relative_sd, sum_to_one=own.sum_to_one, largest_squares=own.largest_squares,
+            confidence=settings.confidence,
+        )  # fmt: skip
+        result = {
+            "assess": balance.checks, "assess.proportions": balance.proportions, "assess.balance": balance.residuals,
+        }  # fmt: skip
+        found = {
+            experiment: (phases, mixture.proportions, mixture.covariance)
+            for experiment, (phases, mixture) in balance.mixtures.items()
+            if np.isfinite(mixture.proportions).all()
+        }
+        modes = found | modes
+    if modes:
+        result["assess.bulk"] = pd.concat(
+            bulk_partition(D, modes, beta, _beta_relative_sd(own), _normal_quantile(settings.confidence))
+            for beta, own in D.groupby("beta", sort=True)
+        )
+    return result
+
+
+def _beta_relative_sd(D: pd.DataFrame) -> dict[tuple[str, str], float]:
+    """(experiment, element) -> relative standard error of the denominator's mean, which the D of all crystals share."""
+    known = D[(D["mean_beta_ppm"] > 0) & D["se_beta_ppm"].notna()]
+    relative = known["se_beta_ppm"] / known["mean_beta_ppm"]
+    return dict(zip(zip(known["experiment"], known["element"], strict=True), relative, strict=True))
+
+
+def _normal_quantile(confidence: float) -> float:
+    from scipy.special import ndtri
+
+    return float(ndtri(0.5 + 0.5 * confidence))
+
+
+def _stated_modes(
+    given: Mapping[str, float], relative_sd: float
+) -> tuple[tuple[str, ...], np.ndarray, np.ndarray]:
+    amounts = np.array(list(given.values()))
+    return tuple(given), amounts, np.diag((relative_sd * amounts) ** 2)
+
+
+def _starting_frame(
+    start: Mapping[tuple[str | None, str], Start], means: pd.DataFrame, relative_sd: float
+) -> pd.DataFrame:
+    """One row per experiment and element: its own starting composition, else the one that holds for all."""
+    import pandas as pd
+
+    named = {experiment for experiment, _element in start if experiment is not None}
+    rows = [
+        (experiment, element, one.value_ppm, one.sd_ppm or relative_sd * one.value_ppm)
+        for experiment in sorted(means["experiment"].unique())
+        for (whose, element), one in start.items()
+        if whose == (experiment if experiment in named else None)
+    ]
+    return pd.DataFrame(rows, columns=["experiment", "element", "value_ppm", "sd_ppm"])
+
+
+def _trends(D: pd.DataFrame, conditions: Conditions, settings: AssessSettings) -> Frames:
+    import pandas as pd
+
+    from tieline.assess.trends import approach_checks, inverse_temperature, trend_tables
+
+    trends: list[pd.DataFrame] = []
+    points: list[pd.DataFrame] = []
+    checks: list[pd.DataFrame] = []
+    table = conditions.table
+    for condition in settings.trends.conditions:
+        source = settings.temperature if condition == INVERSE_TEMPERATURE else condition
+        if source not in table.columns:
+            continue
+        x = table[source].dropna()
+        sd = table[f"{source}_sd"] if f"{source}_sd" in table.columns else pd.Series(0.0, table.index)
+        x_sd = sd.reindex(x.index).fillna(0.0)
+        if condition == INVERSE_TEMPERATURE:
+            values, errors = inverse_temperature(x.to_numpy(), x_sd.to_numpy())
+            x, x_sd = pd.Series(values, x.index), pd.Series(errors, x.index)
+        made = trend_tables(
+            D, condition, x, x_sd, settings.confidence, without_each=settings.trends.without_each
+        )
+        for collected, one in zip((trends, points, checks), made, strict=True):
+            collected.append(one)
+    checks.append(approach_checks(D, table, settings.duration, settings.confidence))
+    result: Frames = {
+        "assess": pd.DataFrame(
+            [row for one in checks for row in one.to_dict("records")], columns=checks[-1].columns
+        )
+    }
+    if trends:
+        result |= {"assess.trends": pd.concat(trends), "assess.trend_points": pd.concat(points)}
+    return result
+
+
+def _consistency(D: pd.DataFrame, means: pd.DataFrame, settings: AssessSettings) -> list[pd.DataFrame]:
+    from tieline.assess.consistency import rim_against_core, through_third_phase
+
+    return [
+        through_third_phase(D, settings.confidence),
+        rim_against_core(means, confidence=settings.confidence),
+    ]
+
+
+def _remarks(
+    checks: list[dict[str, object]], conditions: Conditions, D: pd.DataFrame, settings: AssessSettings
+) -> tuple[Remark, ...]:
+    """What needs attention: exchange outside its window, losses, and conditions that are not there."""
+    remarks = []
+    for row in checks:
+        pair = " ".join(str(row[key]) for key in ("experiment", "alpha") if row[key])
+        if row["verdict"] != "differs":
+            continue
+        if row["check"] == "exchange":
+            words = f"{row['subject']} {row['value']:.3g} lies outside {row['expected_lo']:.3g} to {row['expected_hi']:.3g}"
+            remarks.append(Remark(words, pair))
+        elif row["check"] == "mass-balance" and str(row["subject"]).endswith("loss"):
+            remarks.append(Remark(str(row["detail"]).split(", p ")[0], pair))
+    missing = [
+        name
+        for name in settings.trends.conditions
+        if (settings.temperature if name == INVERSE_TEMPERATURE else name) not in conditions.table.columns
+    ]
+    if missing and len(D):
+        remarks.append(
+            Remark(f"no trends against {', '.join(missing)}: the experiments' table does not hold it")
+        )
+    return tuple(remarks)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -37,43 +38,55 @@ def trend_tables(
     x: pd.Series[float],
     x_sd: pd.Series[float] | None = None,
     confidence: float = 0.95,
+    *,
+    without_each: bool = True,
 ) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
     """ln D against one condition for every pair and element with two experiments or more: trends, points, checks.
 
-    x, x_sd: indexed by experiment; no x_sd means exact. The line has errors in both variables (`york_line`). Points tell
-    what the line is without them and what it then predicts for them. Limits cannot enter a line: they are left out and
-    counted. The check says whether one line describes the points; the slope's interval is in the trend.
+    x, x_sd: indexed by experiment; no x_sd means exact. The line has errors in both variables (`york_line`). Points tell,
+    where `without_each`, what the line is without them and what it then predicts for them. Limits cannot enter a line: they
+    are left out and counted. The check says whether one line describes the points; the slope's interval is in the trend.
     """
     import pandas as pd
 
     trends: list[dict[str, Any]] = []
     points: list[dict[str, Any]] = []
     checks: list[dict[str, Any]] = []
-    for (alpha, beta, element), group in partition.groupby(
-        ["alpha", "beta", "element"], sort=True, observed=True
-    ):
-        known = group[group["experiment"].map(x).notna()].sort_values("experiment", kind="stable")
-        used = known[(known["kind"] == "value") & (known["D"] > 0) & (known["D_sd"] > 0)]
+    at = {str(experiment): float(value) for experiment, value in x.dropna().items()}
+    at_sd = (
+        {} if x_sd is None else {str(experiment): float(value) for experiment, value in x_sd.dropna().items()}
+    )
+    for (alpha, beta, element), known in _by_element(partition, at):
+        used = [row for row in known if row["kind"] == "value" and row["D"] > 0 and row["D_sd"] > 0]
         if len(known) < 2:
             continue
         keys = {"alpha": alpha, "beta": beta, "element": element, "condition": condition}
-        across = used["experiment"].map(x).to_numpy(dtype=np.float64)
-        across_sd = (
-            np.zeros(len(used)) if x_sd is None else used["experiment"].map(x_sd).fillna(0.0).to_numpy()
-        )
-        D = used["D"].to_numpy(dtype=np.float64)
-        arrays = (across, np.log(D), across_sd, used["D_sd"].to_numpy(dtype=np.float64) / D)
+        experiments = [row["experiment"] for row in used]
+        across = np.array([at[experiment] for experiment in experiments])
+        across_sd = np.array([at_sd.get(experiment, 0.0) for experiment in experiments])
+        D, D_sd = (np.array([row[name] for row in used], dtype=np.float64) for name in ("D", "D_sd"))
+        arrays = (across, np.log(D), across_sd, D_sd / D)
         line = york_line(*arrays)
         trends.append(keys | _trend_row(line, len(used), len(known) - len(used), confidence))
-        points.extend(
-            keys | row for row in _point_rows(used["experiment"].tolist(), arrays, line, confidence)
-        )
+        points.extend(keys | row for row in _point_rows(experiments, arrays, line, confidence, without_each))
         checks.append(_trend_check(keys, line, len(used), len(known) - len(used), confidence))
     return (
         pd.DataFrame(trends, columns=list(TREND_COLUMNS)),
         pd.DataFrame(points, columns=list(POINT_COLUMNS)),
         pd.DataFrame(checks, columns=list(CHECK_COLUMNS)),
     )
+
+
+def _by_element(
+    partition: pd.DataFrame, at: Mapping[str, float]
+) -> list[tuple[tuple[str, str, str], list[dict[str, Any]]]]:
+    """(alpha, beta, element) -> its rows of experiments whose condition is known, everything in order."""
+    names = ["experiment", "alpha", "beta", "element", "kind", "D", "D_sd"]
+    groups: dict[tuple[str, str, str], list[dict[str, Any]]] = {}
+    for row in partition[names].to_dict("records"):
+        if row["experiment"] in at:
+            groups.setdefault((row["alpha"], row["beta"], row["element"]), []).append(row)
+    return [(key, sorted(rows, key=lambda row: row["experiment"])) for key, rows in sorted(groups.items())]
 
 
 def _trend_row(line: Line, count: int, left_out: int, confidence: float) -> dict[str, Any]:
@@ -85,20 +98,22 @@ def _trend_row(line: Line, count: int, left_out: int, confidence: float) -> dict
 
 
 def _point_rows(
-    experiments: list[str], arrays: tuple[np.ndarray, ...], line: Line, confidence: float
+    experiments: list[str], arrays: tuple[np.ndarray, ...], line: Line, confidence: float, without_each: bool
 ) -> list[dict[str, Any]]:
     across, log_d, across_sd, log_sd = arrays
-    rows = []
-    for index, (experiment, other) in enumerate(zip(experiments, line_without_each(*arrays), strict=True)):
+    rows: list[dict[str, Any]] = [
+        {
+            "experiment": experiment, "x": across[index], "x_sd": across_sd[index], "ln_D": log_d[index],
+            "ln_D_sd": log_sd[index], "sigmas": line.weighted_sigmas[index],
+        }
+        for index, experiment in enumerate(experiments)
+    ]  # fmt: skip
+    for index, other in enumerate(line_without_each(*arrays) if without_each else ()):
         guess = predict_line(other, across[[index]], across_sd[[index]], confidence)
-        rows.append(
-            {
-                "experiment": experiment, "x": across[index], "x_sd": across_sd[index], "ln_D": log_d[index],
-                "ln_D_sd": log_sd[index], "sigmas": line.weighted_sigmas[index], "slope_without": other.slope,
-                "slope_se_without": other.slope_se, "predicted_without": guess.value[0],
-                "predicted_lo": guess.low[0], "predicted_hi": guess.high[0],
-            }
-        )  # fmt: skip
+        rows[index] |= {
+            "slope_without": other.slope, "slope_se_without": other.slope_se, "predicted_without": guess.value[0],
+            "predicted_lo": guess.low[0], "predicted_hi": guess.high[0],
+        }  # fmt: skip
     return rows
 
 

@@ -60,6 +60,7 @@ __all__ = [
     "CONVERT_FORMULA",
     "CONVERT_STANDARDS",
     "ELEMENT",
+    "EVIDENCE",
     "FINDINGS",
     "FORMULA_KEYS",
     "INGEST",

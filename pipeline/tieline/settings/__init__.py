@@ -5,11 +5,11 @@ from __future__ import annotations
 from pydantic import Field, field_validator
 
 from tieline.settings.about import AboutSettings
+from tieline.settings.assess import AssessSettings
 from tieline.settings.base import Settings
 from tieline.settings.chemistry import CalibrateSettings, ConvertSettings
 from tieline.settings.ingest import IngestSettings
 from tieline.settings.results import (
-    AssessSettings,
     ClassifySettings,
     PairSettings,
     PartitionSettings,

@@ -46,10 +46,12 @@ def compare_overlap(
     plain: CurveFit | None = None,
     priors: Mapping[str, Prior] | None = None,
     confidence: float = 0.95,
+    correct: bool = True,
 ) -> OverlapComparison:
     """Fit the curve with and without an overlap fraction f, D_app = D + f (1 - D), and compare the two.
 
-    plain: the fit without overlap by the same priors, where it has been made already.
+    plain: the fit without overlap by the same priors, where it has been made already. correct: give the corrected D even
+    where no overlap is found, which takes longer than the fits.
 
     p_value: likelihood ratio of f = 0, a boundary, so half a point mass and half chi-square with one degree of freedom
     (Self & Liang 1987, J. Am. Stat. Assoc. 82:605); where the values scatter about the joint fit by more than their errors
@@ -71,7 +73,10 @@ def compare_overlap(
     else:
         p_value = 0.5 * float(special.chdtrc(1, improvement))
     verdict = OVERLAP_FOUND if p_value < 1 - confidence else NO_OVERLAP
-    return OverlapComparison(plain, joint, improvement, p_value, verdict, "", _corrected(data, joint))
+    corrected = Corrected(blank, blank, blank)
+    if correct or verdict == OVERLAP_FOUND:
+        corrected = _corrected(data, joint)
+    return OverlapComparison(plain, joint, improvement, p_value, verdict, "", corrected)
 
 
 def _improvement(joint: CurveFit) -> float:

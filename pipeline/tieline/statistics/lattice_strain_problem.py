@@ -18,6 +18,11 @@ LEVEL, RADIUS, MODULUS, OVERLAP = range(4)
 _LOWER = np.array([-40.0, 0.1, np.log(1.0), 0.0])
 _UPPER = np.array([20.0, 3.0, np.log(2e4), 0.999])
 _BEYOND_RADII = 0.3
+# Errors proportional to D are taken at the curve, but where that is off by more than this factor, at this factor from the
+# value: a curve that falls to nothing would otherwise leave no error at all.
+_FARTHEST = 100.0
+# Starts that lead after this many steps are carried to the end.
+_FIRST_STEPS, _LEADING = 10, 3
 _NO_LIMITS = np.zeros(0)
 
 
@@ -193,17 +198,19 @@ def solve(
     starts = _starts(data, temperature_K, free, base)
     problem = Problem(data, temperature_K, data.covariance_at(np.maximum(data.value, 0.0)), priors)
     for _ in range(4):
-        found = minimise(
-            problem.residuals, starts, np.tile(free, (len(starts), 1)), *problem.bounds, iterations=40
-        )
-        leading = found.theta[np.argsort(found.sum_of_squares, kind="stable")[:3]]
-        found = minimise(problem.residuals, leading, np.tile(free, (len(leading), 1)), *problem.bounds)
+        if len(starts) > _LEADING:
+            found = minimise(
+                problem.residuals, starts, np.tile(free, (len(starts), 1)), *problem.bounds, _FIRST_STEPS
+            )
+            starts = found.theta[np.argsort(found.sum_of_squares, kind="stable")[:_LEADING]]
+        found = minimise(problem.residuals, starts, np.tile(free, (len(starts), 1)), *problem.bounds)
         best = int(np.argmin(found.sum_of_squares))
         found = Minimum(found.theta[[best]], found.sum_of_squares[[best]], found.converged[[best]])
         if data.relative_covariance is None:
             break
         model, _slopes = problem.apparent(found.theta, data.radius)
-        updated = data.covariance_at(model[0])
+        measured = np.maximum(data.value, 0.0)
+        updated = data.covariance_at(np.clip(model[0], measured / _FARTHEST, measured * _FARTHEST))
         if np.allclose(updated, problem.covariance, rtol=1e-6, atol=0.0):
             break
         problem = Problem(data, temperature_K, updated, priors)

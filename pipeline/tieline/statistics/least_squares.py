@@ -17,6 +17,8 @@ Residuals = Callable[[FloatArray], tuple[FloatArray, FloatArray]]
 _LARGEST_DAMPING = 1e14
 _DOUBLINGS = 40
 _ROUNDS = 40
+# A limit is sought to a thousandth of the rise; the minima on the way need not be exact to more digits than that asks.
+_PROFILE_TOLERANCE = 1e-5
 
 
 @dataclass(frozen=True)
@@ -35,11 +37,13 @@ def minimise(
     lower: FloatArray,
     upper: FloatArray,
     iterations: int = 300,
+    tolerance: float = 1e-10,
 ) -> Minimum:
     """Levenberg-Marquardt (Marquardt 1963) with Nielsen's damping (1999), run on all problems side by side.
 
     start, free: (problems, parameters), where free is False the parameter stays at its start; lower, upper: (parameters,)
-    bounds, kept by projection. A local minimum is found: give several starts as several problems where that matters.
+    bounds, kept by projection. tolerance: of the sum of squares, relative to one more than it. A local minimum is found:
+    give several starts as several problems where that matters.
     """
     theta = np.where(free, np.clip(start, lower, upper), start)
     r, jacobian = residuals(theta)
@@ -57,7 +61,7 @@ def minimise(
         expected = -2.0 * np.sum(step * gradient, axis=1) + 1e-300
         gain = np.clip((cost - trial_cost) / expected, -1.0, 1.0)
         small = (np.abs(trial - theta) <= 1e-10 * (np.abs(theta) + 1e-4)).all(axis=1)
-        settled = better & (cost - trial_cost <= 1e-10 * (1.0 + cost)) & (damping <= 1.0)
+        settled = better & (cost - trial_cost <= tolerance * (1.0 + cost)) & (damping <= 1.0)
         theta = np.where(better[:, None], trial, theta)
         cost = np.where(better, trial_cost, cost)
         r = np.where(better[:, None], trial_r, r)
@@ -178,7 +182,7 @@ class ProfileSearch:
         shift = place - self.inside[self.rows, self.which]
         start = self.inside + self.slope * shift[:, None]
         start[self.rows, self.which] = place
-        found = minimise(self.residuals, start, self.free, self.lower, self.upper, iterations=60)
+        found = minimise(self.residuals, start, self.free, self.lower, self.upper, 60, _PROFILE_TOLERANCE)
         value: FloatArray = np.sqrt(np.maximum(found.sum_of_squares - self.minimum, 0.0)) - np.sqrt(self.cut)
         self.inside = np.where((value < 0)[:, None], found.theta, self.inside)
         lowest = int(np.argmin(found.sum_of_squares - self.minimum))
