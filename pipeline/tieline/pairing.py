@@ -79,6 +79,8 @@ def phase_pairs(
 
 def _not_formed(rows: list[tuple[str, str, str, int, int, bool, str | None]]) -> list[Remark]:
     """One remark per pair and reason, naming the experiments."""
+    if not rows:
+        return [Remark("no pair of phases can be formed: no experiment has any phase beside glass")]
     experiments: dict[tuple[str, str], list[str]] = {}
     for name, alpha, beta, _, _, formed, reason in rows:
         if not formed:
