@@ -15,13 +15,14 @@ import pyarrow as pa
 from scipy import special
 
 from tieline.accepted import AcceptedValue, read_accepted_values
-from tieline.arrays import BoolArray, FloatArray, Groups, IntArray, TextArray, group_rows, labels, numbers
+from tieline.arrays import BoolArray, FloatArray, Groups, IntArray, TextArray, group_table, labels, numbers
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.correction import sequence_of
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.chemistry import CalibrateSettings
 from tieline.statistics.means import paule_mandel, phase_means
+from tieline.statistics.outliers import holm
 from tieline.tables import build
 
 __all__ = ["calibrate", "read_accepted_values"]
@@ -74,13 +75,11 @@ def calibrate(
     Raises InputError for accepted values that cannot be used.
     """
     accepted = read_accepted_values(files)
-    batches = group_rows([labels(convert, name) for name in ("technique", "batch", "element", "analyte")])
+    batches = group_table(convert, ("technique", "batch", "element", "analyte"))
     value, sigma = numbers(convert, "value_ppm"), numbers(convert, "sigma_ppm")
     is_reference = labels(convert, "material").codes >= 0
     measured = is_reference & np.isfinite(value)
-    groups = group_rows(
-        [labels(convert, name) for name in ("technique", "batch", "material", "element", "analyte")], measured
-    )
+    groups = group_table(convert, ("technique", "batch", "material", "element", "analyte"), measured)
     materials = _materials(groups, value, sigma, accepted)
     known = np.array([item is not None for item in materials.accepted], dtype=np.bool_)
     batch_of = _batch_of(groups, batches)
@@ -252,7 +251,7 @@ def _columns(batches: Groups, bias: Bias, drift: Drift, settings: CalibrateSetti
     corrects = settings.correct is not False
     # An uncorrected bias is itself the error the values carry; a corrected one leaves its own uncertainty.
     left = se / ratio if corrects else np.hypot(ratio - 1.0, se)
-    supported = np.nan_to_num(drift.p, nan=1.0) < settings.drift_p
+    supported = _supported(drift, batches) < settings.drift_p
     removed = supported & (settings.correct == "bias+drift")
     within = np.abs(ratio - 1.0) <= np.fmax(settings.tolerance.relative, settings.tolerance.sigmas * se)
     origin = np.where(
@@ -279,6 +278,16 @@ def _columns(batches: Groups, bias: Bias, drift: Drift, settings: CalibrateSetti
         "origin": origin.astype(object),
         "passed": _or_null(within, measured),
     }
+
+
+def _supported(drift: Drift, batches: Groups) -> FloatArray:
+    """p-values of the drift, corrected by Holm for the number of analytes tested in the batch; 1 where not tested."""
+    adjusted = np.ones(batches.count)
+    batch_of = [key[:2] for key in batches.keys]
+    for batch in dict.fromkeys(batch_of):
+        rows = [row for row, own in enumerate(batch_of) if own == batch]
+        adjusted[rows] = np.nan_to_num(holm(drift.p[rows]), nan=1.0)
+    return adjusted
 
 
 def _or_null(flag: BoolArray, known: BoolArray) -> TextArray:

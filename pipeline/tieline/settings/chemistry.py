@@ -90,6 +90,9 @@ class CalibrateSettings(Settings):
     )
     tolerance: Limits = Field(Limits(), description="when a reference material passes")
     drift_p: float = Field(
-        0.01, gt=0, lt=1, description="p-value below which a linear drift is taken as supported"
+        0.01,
+        gt=0,
+        lt=1,
+        description="p-value below which a linear drift is taken as supported, after Holm's correction over the analytes of a batch",
     )
     min_spots_for_drift: int = Field(6, ge=4, description="reference spots needed to test for drift")
