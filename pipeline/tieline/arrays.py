@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import compress
@@ -126,23 +126,40 @@ def one_array(column: pa.ChunkedArray) -> pa.Array:
 
 def group_rows(columns: Sequence[Labels], rows: BoolArray | None = None) -> Groups:
     """Groups rows by label columns; only `rows` where given. A null label is a label of its own, sorted first."""
+    code, first = _grouped(columns, len(columns[0].codes), rows)
+    return Groups(code, tuple(column.take(first) for column in columns), first)
+
+
+def group_table(table: pa.Table, names: Sequence[str], rows: BoolArray | None = None) -> Groups:
+    """The same for columns of a table, of which only one at a time is unpacked."""
+    code, first = _grouped((labels(table, name) for name in names), table.num_rows, rows)
+    keys = table.select(names).take(pa.array(first))
+    return Groups(code, tuple(labels(keys, name) for name in names), first)
+
+
+def _grouped(columns: Iterable[Labels], size: int, rows: BoolArray | None) -> tuple[IntArray, IntArray]:
+    """The group of every row, -1 for none, and the first row of each group."""
     chosen = None if rows is None or rows.all() else np.flatnonzero(rows)
-    combined, size = np.zeros(len(columns[0].codes) if chosen is None else len(chosen), dtype=np.int64), 1
+    keys, n_keys = np.zeros(size if chosen is None else len(chosen), dtype=np.int64), 1
     for column in columns:
         choices = len(column.texts) + 1
-        if size * choices > LARGEST_KEY:
-            combined, first = ranked(combined, size)
-            size = len(first)
         codes = column.codes if chosen is None else column.codes[chosen]
-        combined = combined * choices + codes + 1
-        size *= choices
-    rank, first = ranked(combined, size)
-    code = rank
-    if chosen is not None:
-        code = np.full(len(columns[0].codes), -1, dtype=np.int64)
-        code[chosen] = rank
-        first = chosen[first]
-    return Groups(code, tuple(column.take(first) for column in columns), first)
+        if n_keys * choices > DENSE_KEYS_PER_ROW * len(keys):
+            keys, first = ranked(keys, n_keys)
+            n_keys = len(first)
+            # Often a batch follows from the experiment, or an analyte from the element: such a column is passed over.
+            if np.array_equal(codes[first][keys], codes):
+                continue
+        keys *= choices
+        keys += codes
+        keys += 1
+        n_keys *= choices
+    rank, first = ranked(keys, n_keys)
+    if chosen is None:
+        return rank, first
+    code = np.full(size, -1, dtype=np.int64)
+    code[chosen] = rank
+    return code, chosen[first]
 
 
 def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
@@ -151,9 +168,8 @@ def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
         _, first, rank = np.unique(keys, return_index=True, return_inverse=True)
         return rank.reshape(-1), first
     row = np.full(size, -1, dtype=np.int64)
-    row[keys[::-1]] = np.arange(
-        len(keys) - 1, -1, -1
-    )  # of rows with one key the last written, the first, stays
+    # Of the rows with one key the last written, which is the first, stays.
+    row[keys[::-1]] = np.arange(len(keys) - 1, -1, -1)
     present = row >= 0
     place: IntArray = np.cumsum(present) - 1
     return place[keys], row[present]

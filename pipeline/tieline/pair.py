@@ -7,7 +7,7 @@ The statistics of the means stand in `tieline.statistics.means` and, where value
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
@@ -20,7 +20,7 @@ from tieline.arrays import (
     IntArray,
     Labels,
     flags,
-    group_rows,
+    group_table,
     labels,
     numbers,
     spot_codes,
@@ -32,9 +32,11 @@ from tieline.results import Ledger, StageResult
 from tieline.settings.results import PairSettings
 from tieline.statistics.means import PhaseMeans, phase_means, pooled_sigmas
 from tieline.statistics.mswd import mswd_interval
+from tieline.statistics.threads import side_by_side
 from tieline.tables import build
 
 GROUP_COLUMNS = ("experiment", "phase", "element", "technique", "batch", "analyte")
+GROUPS_AT_ONCE = 10_000
 
 
 @dataclass(frozen=True)
@@ -60,7 +62,7 @@ def pair(
     convert, wholes = with_parts(convert, settings)
     use = flags(screen, "use")
     unknown = labels(convert, "experiment").codes >= 0
-    groups = group_rows([labels(convert, name) for name in GROUP_COLUMNS], unknown)
+    groups = group_table(convert, GROUP_COLUMNS, unknown)
     measured = use & unknown & np.isfinite(concentrations.value)
     limit_only = use & unknown & ~measured & np.isfinite(concentrations.limit)
     used = Used(measured, limit_only)
@@ -93,13 +95,24 @@ def _means(
     convert: pa.Table, values: Concentrations, groups: Groups, used: Used, settings: PairSettings
 ) -> PhaseMeans:
     """Means of the measured values; groups that also hold limits get theirs from the likelihood afterwards."""
-    rows = used.measured
+    rows = np.flatnonzero(used.measured)
+    rows = rows[np.argsort(groups.code[rows], kind="stable")]
     code = groups.code[rows]
-    sigma = pooled_sigmas(values.value[rows], values.sigma[rows], code, groups.count)
-    grains = _grains(convert)[rows] if settings.average == "grains" else None
-    return phase_means(
-        values.value[rows], sigma, code, groups.count, estimator=settings.mean, subgroup=grains
-    )
+    grains = _grains(convert) if settings.average == "grains" else None
+
+    def of_groups(first: int) -> PhaseMeans:
+        count = min(GROUPS_AT_ONCE, groups.count - first)
+        own = slice(*np.searchsorted(code, [first, first + count]))
+        chosen, group = rows[own], code[own] - first
+        value = values.value[chosen]
+        sigma = pooled_sigmas(value, values.sigma[chosen], group, count)
+        grain = None if grains is None else grains[chosen]
+        return phase_means(value, sigma, group, count, estimator=settings.mean, subgroup=grain)
+
+    # Some groups at a time stay in the processor's cache, and all processors can take part.
+    parts = side_by_side(of_groups, range(0, max(groups.count, 1), GROUPS_AT_ONCE))
+    names = [field.name for field in fields(PhaseMeans)]
+    return PhaseMeans(**{name: np.concatenate([getattr(part, name) for part in parts]) for name in names})
 
 
 def _unmixed(values: Concentrations, screen: pa.Table) -> tuple[Concentrations, FloatArray | None]:
