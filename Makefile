@@ -57,7 +57,7 @@ lock: $(DEV)  ## renew the pinned requirement files
 	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
 	  pyproject.toml --extra build -o requirements/core.txt
 	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
-	  pyproject.toml --extra build --extra dev --extra docs --extra query -c requirements/core.txt -o requirements/dev.txt
+	  pyproject.toml --extra build --extra dev --extra docs --extra query --extra archive -c requirements/core.txt -o requirements/dev.txt
 	@$(BIN)/uv pip compile -q --universal --python-version 3.11 --generate-hashes --no-emit-index-url --no-header \
 	  requirements/standards.in -o requirements/standards.txt
 
