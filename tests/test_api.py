@@ -83,7 +83,7 @@ def test_overrides_take_every_kind_of_value(tmp_path: Path):
     assert not (run.folder / "report.html").exists()
     assert run.settings["report"]["title"] == 'a "quoted" title'
     assert "nearly one" in set(run.table("classify")["class"])
-    assert (run.table("classify").query("element == 'Ni'")["technique_alpha"] == "EPMA").all()
+    assert run.settings["partition"]["prefer"] == ["EPMA", "laser"]
 
 
 def test_a_report_on_request(tmp_path: Path):

@@ -121,12 +121,8 @@ def test_lineage_is_closed(described: Path):
         for one in made:
             assert entities[one["@id"]]["prov:wasGeneratedBy"]["@id"] == action["@id"]
     used = {one["@id"] for one in as_list(entities["#stage-screen"]["prov:used"])}
-    assert used == {
-        "convert.parquet",
-        "calibrate.parquet",
-        "ingest.spots.parquet",
-        "#input-ember/rulings.csv",
-    }
+    inputs = next(stage.inputs for stage in STAGES if stage.name == "screen")
+    assert used == {*(f"{name}.parquet" for name in inputs), "#input-ember/rulings.csv"}
     assert entities["#input-ember/rulings.csv"]["sha256"]
 
 
