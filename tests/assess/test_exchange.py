@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from assess.frames import covariance, partition
-from tieline.assess.exchange import compare, exchange_tables, exchange_coefficient, ferrous_factor
+from tieline.assess.exchange import compare, exchange_coefficient, exchange_tables, ferrous_factor
 from tieline.assess.ferric import FerricShare, kress_carmichael
 
 

@@ -55,14 +55,14 @@ def test_proportions_hold_the_truth():
         assert rows.loc[phase, "unweighted"] == pytest.approx(truth, abs=0.03)
     checks = found.checks.set_index("subject")
     assert checks.loc["chi-square over degrees of freedom", "verdict"] == "consistent"
-    assert checks.loc["sum of squared residuals, wt%²", "verdict"] == "consistent"
+    assert checks.loc["squared residuals, sum in wt%²", "verdict"] == "consistent"
     assert checks.loc["Fe loss", "verdict"] == "consistent"
 
 
 def test_sum_of_squares_is_that_of_oxides():
     found = mass_balance_tables(means(error=1e-6), start(Si=1.02), losable=())
     silica = 0.02 * start().set_index("element").loc["Si", "value_ppm"] / 0.46744 / 1e4  # 0.46744 Si in SiO2
-    assert 0 < found.checks.set_index("subject").loc["sum of squared residuals, wt%²", "value"] < silica**2
+    assert 0 < found.checks.set_index("subject").loc["squared residuals, sum in wt%²", "value"] < silica**2
 
 
 def test_lost_iron_is_found_and_does_not_move_the_proportions():

@@ -10,6 +10,7 @@ import shutil
 from itertools import pairwise
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from report.conftest import FORMULAS, SCRIPT
@@ -18,6 +19,7 @@ from tieline import runner
 from tieline.configuration import Session, load
 from tieline.plan import table_path
 from tieline.report.compact import script_json
+from tieline.report.curves import curves
 from tieline.report.page_data import Curve, page_data
 from tieline.report.source import Source
 from tieline.report.spots import spot_use
@@ -311,12 +313,35 @@ def test_curves_and_checks_are_drawn_where_there_are_any(
     )
     page.select_option("#pick-pair", "clinopyroxene/glass")
     watched.draw_all()
+    assert (
+        page.locator("[data-picture=radius] svg[role] .line.fit").count() == 1
+    )  # bands for one experiment only
+    page.select_option("#pick-experiment", "EM-05")
+    watched.draw_all()
     assert page.locator("[data-picture=radius] svg[role] .line.fit").count() == 3
     page.evaluate(
         "() => { const holder = document.querySelector('[data-picture=radius]'); plot(holder, PICTURES.checks()); }"
     )
     assert page.locator("[data-picture=radius] svg[role] .mark").count() == 1
     assert watched.complaints == []
+
+
+def test_fitted_curves_of_the_run_go_through_their_points(ember_source: Source):
+    made = curves(ember_source)
+    fitted = [row for row in ember_source.table("assess.curves").to_pylist() if row["verdict"] == "fitted"]
+    assert len(made) == len(fitted) > 10
+    for curve in made:
+        assert np.all(np.array(curve.D_lo) <= curve.D)
+        assert np.all(np.array(curve.D_hi) >= curve.D)
+    rows = ember_source.table("assess.elements").to_pylist()
+    first = next(
+        one for one in made if (one.experiment, one.alpha, one.label[:2]) == ("EM-05", "olivine", "3+")
+    )
+    own = [row for row in rows if (row["experiment"], row["alpha"], row["charge"]) == ("EM-05", "olivine", 3)]
+    for row in own:
+        if row["role"] == "fitted":
+            ln_D = np.interp(row["radius_angstrom"], first.radius, np.log(first.D))
+            assert ln_D == pytest.approx(np.log(row["curve_D"]), abs=0.02)
 
 
 def test_json_of_the_page_is_valid(ember_files: dict[str, bytes]):

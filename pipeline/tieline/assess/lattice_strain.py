@@ -273,8 +273,8 @@ def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> 
 
             numbers = {
                 "value": fit.chi_square / fit.dof,
-                "expected_lo": float(chdtri(fit.dof, 1 - EXCESS / 2)) / fit.dof,
-                "expected_hi": float(chdtri(fit.dof, EXCESS / 2)) / fit.dof,
+                "expected_lo": 0.0,
+                "expected_hi": float(chdtri(fit.dof, EXCESS)) / fit.dof,
             }
             verdict = DIFFERS if fit.p_value < EXCESS else CONSISTENT
             curve = check("lattice-strain", pair, f"{charge}+ curve", verdict, words, **numbers)

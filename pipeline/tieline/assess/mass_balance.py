@@ -197,7 +197,7 @@ def _checks(
     rows = [_fit_check(keys, mixture, words)]
     rows.append(
         check(
-            "mass-balance", keys, "sum of squared residuals, wt%²",
+            "mass-balance", keys, "squared residuals, sum in wt%²",
             CONSISTENT if mixture.squares <= largest else DIFFERS,
             f"Unweighted fit of {', '.join(names)} as oxides; {largest:g} is common practice, not a test.",
             value=mixture.squares, expected_lo=0.0, expected_hi=largest,

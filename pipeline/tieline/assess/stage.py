@@ -146,7 +146,7 @@ def _mass_balance(
         modes = found | modes
     if modes:
         result["assess.bulk"] = pd.concat(
-            bulk_partition(D, modes, beta, _beta_relative_sd(own), _normal_quantile(settings.confidence))
+            bulk_partition(D, modes, beta, _beta_relative_sd(own), settings.confidence)
             for beta, own in D.groupby("beta", sort=True)
         )
     return result
@@ -157,12 +157,6 @@ def _beta_relative_sd(D: pd.DataFrame) -> dict[tuple[str, str], float]:
     known = D[(D["mean_beta_ppm"] > 0) & D["se_beta_ppm"].notna()]
     relative = known["se_beta_ppm"] / known["mean_beta_ppm"]
     return dict(zip(zip(known["experiment"], known["element"], strict=True), relative, strict=True))
-
-
-def _normal_quantile(confidence: float) -> float:
-    from scipy.special import ndtri
-
-    return float(ndtri(0.5 + 0.5 * confidence))
 
 
 def _stated_modes(

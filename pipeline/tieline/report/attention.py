@@ -183,7 +183,8 @@ def _pairs(pairs: list[dict[str, Any]], d_rows: list[dict[str, Any]]) -> Attenti
 
 
 def _evidence(checks: list[dict[str, Any]]) -> Attention | None:
-    differ = [row for row in checks if row["verdict"] == "differs"]
+    # D that leave a line against one condition follow others too: no evidence against equilibrium.
+    differ = [row for row in checks if row["verdict"] == "differs" and row["check"] != "trend"]
     if not differ:
         return None
     names = listed(

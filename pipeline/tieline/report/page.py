@@ -8,6 +8,8 @@ from collections.abc import Sequence
 from importlib.resources import files
 from typing import Any
 
+import pyarrow as pa
+
 from tieline.columns import ASSESS
 from tieline.notation import written
 from tieline.report.attention import attention
@@ -45,7 +47,7 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         for stage, record in source.records.items()
         for remark in record.get("remarks", ())
     ]
-    checks = declared_sheet("checks", source.table("assess"), ASSESS)
+    checks = declared_sheet("checks", _most_telling_first(source.table("assess")), ASSESS)
     data = page_data(source, spots, curves)
     rulings = source.settings.screen.rulings
     return template.render(
@@ -110,6 +112,15 @@ def _shown(cell: Cell) -> tuple[str, bool]:
     if isinstance(cell, bool):
         return ("yes" if cell else "no"), False
     return (cell, False) if isinstance(cell, str) else (f"{cell:.6g}", True)
+
+
+def _most_telling_first(checks: pa.Table) -> pa.Table:
+    """What differs on top, then what is consistent, and what cannot be told."""
+    order = ("differs", "consistent", "cannot tell")
+    verdicts = checks.column("verdict").to_pylist()
+    return checks.take(
+        pa.array(sorted(range(len(verdicts)), key=lambda row: order.index(verdicts[row])), pa.int64())
+    )
 
 
 def _remark(remark: Any) -> str:

@@ -10,6 +10,7 @@ from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.lock import locked
 from tieline.report.csv_files import csv_bytes
 from tieline.report.currency import PAGE, report_verdict
+from tieline.report.curves import curves
 from tieline.report.latex import partition_document
 from tieline.report.left_out import left_out_sheet
 from tieline.report.methods import methods
@@ -45,7 +46,7 @@ def write_report(session: Session, figures: Path | None = None) -> list[Path]:
     if figures is not None:
         from tieline.report.figures import figure_files
 
-        made |= {figures / name: data for name, data in figure_files(source).items()}
+        made |= {figures / name: data for name, data in figure_files(source, curves(source)).items()}
     _write(session, made)
     return list(made)
 
@@ -83,7 +84,9 @@ def report_files(source: Source) -> Mapping[str, bytes]:
         "methods.txt": paragraph.text().encode(),
         "methods.tex": paragraph.latex().encode(),
         "references.bib": bibliography(paragraph.keys()).encode(),
-        PAGE: page(source, spots, left_out, paragraph.text()).encode(),  # the last, see `_write`
+        PAGE: page(
+            source, spots, left_out, paragraph.text(), curves(source)
+        ).encode(),  # the last, see `_write`
     }
 
 

@@ -37,7 +37,7 @@ PICTURES.radius = () => {
   const curves = DATA.curves.filter((one) => `${one.alpha}/${one.beta}` === chosen.pair && (!chosen.experiment || one.experiment === chosen.experiment));
   for (const one of curves) {
     lines.push({ points: one.radius.map((r, i) => [r, one.D[i]]), class: "fit", label: `${one.label} ${one.experiment}`, quiet: !chosen.experiment });
-    for (const edge of [one.D_lo, one.D_hi]) if (edge.length) lines.push({ points: one.radius.map((r, i) => [r, edge[i]]), class: "fit edge", label: "" });
+    if (chosen.experiment) for (const edge of [one.D_lo, one.D_hi]) if (edge.length) lines.push({ points: one.radius.map((r, i) => [r, edge[i]]), class: "fit edge", label: "" });
   }
   const xs = axis("ionic radius, Å", marks.map((mark) => mark.x));
   const good = bounds.filter(([, f]) => f !== "null" && Number(f) > 0);
@@ -264,12 +264,15 @@ PICTURES.runOrder = () => {
 
 PICTURES.checks = () => {
   const rows = DATA.checks.filter((one) => known(one.value) && known(one.expected_lo) && known(one.expected_hi) && one.expected_hi > one.expected_lo);
-  const names = rows.map((one) => [one.check, one.experiment, one.alpha].filter(Boolean).join(" ")), marks = [];
+  const short = { exchange: "K_D", "lattice-strain": "curve", "mass-balance": "balance" };
+  const kinds = rows.map((one) => `${short[one.check] || one.check} ${one.alpha || one.subject.split(" ")[0]}`), names = unique(kinds), marks = [];
   // Each check on its own scale: 0 and 1 are the ends of what is expected.
   const share = (one, value) => (value - one.expected_lo) / (one.expected_hi - one.expected_lo);
-  rows.forEach((one, at) => marks.push({ x: at, y: share(one, one.value), lo: known(one.sd) ? share(one, one.value - one.sd) : null, hi: known(one.sd) ? share(one, one.value + one.sd) : null, ...styleOf(one.verdict === "differs" ? 1 : 0), label: `${names[at]}, ${one.subject}: ${number(one.value)}${known(one.sd) ? " ± " + number(one.sd, 2) : ""}, expected ${number(one.expected_lo)} to ${number(one.expected_hi)}; ${one.verdict}. ${one.detail}` }));
+  const spread = (name) => (EXPERIMENTS.length > 1 ? (EXPERIMENTS.indexOf(name) / (EXPERIMENTS.length - 1) - 0.5) * 40 : 0);
+  rows.forEach((one, at) => marks.push({ x: names.indexOf(kinds[at]), shift: one.experiment ? spread(one.experiment) : 0, y: share(one, one.value), lo: known(one.sd) ? share(one, one.value - one.sd) : null, hi: known(one.sd) ? share(one, one.value + one.sd) : null, ...styleOf(one.verdict === "differs" ? 1 : 0), label: `${kinds[at]}${one.experiment ? " " + one.experiment : ""}, ${one.subject}: ${number(one.value)}${known(one.sd) ? " ± " + number(one.sd, 2) : ""}, expected ${number(one.expected_lo)} to ${number(one.expected_hi)}; ${one.verdict}. ${one.detail}` }));
   return {
     label: "evidence against what is expected", height: 320, marks, x: { title: "check", categories: names }, y: axis("place in the expected range", [...marks.flatMap((mark) => [mark.y, mark.lo, mark.hi]), 0, 1]),
     bands: [{ y0: 0, y1: 1, class: "window", label: "expected" }], legend: [{ ...styleOf(0), label: "consistent, or cannot tell" }, { ...styleOf(1), label: "differs" }, { band: "window", label: "expected range" }],
+    note: "Experiments from left to right within each check. Checks whose expectation is a single value, such as no loss, stand in the list only.",
   };
 };
