@@ -33,6 +33,7 @@ OFF_THE_CURVE = {
     "W": "more than one charge",
     "Pb": "lone pair of electrons",
 }
+_NEEDED = ["element", "kind", "D", "D_sd", "D_hi", "dof", "share_counting", "share_spread"]
 _LIMIT_OVER_SD = 3.0
 _NORMAL_975 = 1.959964
 
@@ -86,8 +87,8 @@ def collect_series(
     given = charges or {}
     fitted, compared, missing, remarks = [], {}, {}, []
     limits: list[tuple[str, float, float]] = []
-    of_charge = partition[[charge_of(element, given) == charge for element in partition["element"]]]
-    for row in of_charge.sort_values("element").to_dict("records"):
+    rows = [row for row in partition[_NEEDED].to_dict("records") if charge_of(row["element"], given) == charge]
+    for row in sorted(rows, key=lambda row: row["element"]):
         element = str(row["element"])
         radius = ionic_radius(element, charge, coordination)
         if not np.isfinite(radius):
@@ -104,7 +105,7 @@ def collect_series(
         else:
             fitted.append({**row, "radius": radius})
     data, trouble = _coefficients(fitted, limits, covariances)
-    measured = set(of_charge["element"])
+    measured = {row["element"] for row in rows}
     return Series(
         charge, coordination, data, tuple(str(row["element"]) for row in fitted),
         tuple(element for element, _radius, _limit in limits), compared,
