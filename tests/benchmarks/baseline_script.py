@@ -17,7 +17,7 @@ from uncertainties import UFloat, ufloat
 def read(path: str) -> tuple[pd.DataFrame, list[str]]:
     """The spot table with one column of uncertain numbers per analyte; a cell below its limit is None."""
     table = pd.read_csv(path, dtype=str, keep_default_na=False)
-    headers = [name for name in table.columns if f"{name.split()[0]} 1s" in table.columns]
+    headers = [name for name in table.columns if name.endswith(("(wt%)", "ppm"))]
     analytes = []
     for header in headers:
         name = header.split()[0]
