@@ -17,7 +17,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from tieline.columns import TABLES
-from tieline.errors import InputError, Problem
+from tieline.errors import DefectError, InputError, Problem
 from tieline.reading.input_file import InputFile
 from tieline.tables import declared
 
@@ -227,13 +227,14 @@ def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[s
 def read_table(path: Path, name: str) -> pa.Table:
     """Reads one stage table.
 
-    Raises InputError for a damaged file, DefectError when its columns are not the declared ones.
+    Raises InputError for a damaged file, and for one whose columns are not the declared ones: checksums cover the
+    pages of a file, but not the names of its columns.
     """
     try:
         table = pq.read_table(path, page_checksum_verification=True)
-    except (OSError, ValueError, pa.ArrowException) as error:
+        return declared(table.replace_schema_metadata(None), TABLES[name])
+    except (OSError, ValueError, pa.ArrowException, DefectError) as error:
         raise InputError(damaged(path, str(error).splitlines()[0] if str(error) else "unreadable")) from None
-    return declared(table.replace_schema_metadata(None), TABLES[name])
 
 
 def damaged(path: Path, what: str) -> Problem:

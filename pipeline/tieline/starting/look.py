@@ -163,7 +163,7 @@ def _unit(grid: Grid, look: Look) -> tuple[str | None, str]:
     if not silent:
         return None, ""
     oxides = [index for index in silent if look.analytes[index].kind == "oxide"]
-    if len(oxides) < 4:
+    if len(oxides) < 4 or not grid.row_count:
         return None, "?"
     style = CellStyle(decimal=grid.found.decimal, not_measured=("", "-", "n.d.", "bdl"))
     cells = [
