@@ -15,7 +15,7 @@ import pytest
 from scipy import optimize, special
 from typer.testing import CliRunner
 
-from sessions import demo_copy
+from sessions import demo_copy, small_session
 from test_audit import short_session
 from tieline import runner
 from tieline.cli import app
@@ -91,16 +91,18 @@ def check_random_effects(mean: Page, x: np.ndarray, sigma: np.ndarray) -> None:
 def check_phase(phase: Page) -> None:
     assert phase["mean"]["agrees"]
     units, standard = phase["units"], phase["internal_standard"]
-    factor = units["ppm_per_unit"] * units["element_fraction"] * (standard["factor"] if standard else 1.0)
+    plain = units["ppm_per_unit"] * units["element_fraction"]
     for spot in [*phase["spots_used"], *phase["spots_left_out"]]:
+        check_calibration_factor(spot, phase)
+        factor = plain * standard_factor(spot, standard) / spot.get("calibration_factor", 1.0)
         if spot["value_ppm"] is None:
-            limit = number(spot["cells"]["limit"]) * factor / spot.get("calibration_factor", 1.0)
-            np.testing.assert_allclose(spot["limit_ppm"], limit, rtol=RTOL)
+            np.testing.assert_allclose(spot["limit_ppm"], number(spot["cells"]["limit"]) * factor, rtol=RTOL)
             continue
-        own = factor * spot.get("other_factor", 1.0) / spot.get("calibration_factor", 1.0)
+        own = factor * spot.get("other_factor", 1.0)
         np.testing.assert_allclose(spot["value_ppm"], number(spot["cells"]["value"]) * own, rtol=RTOL)
         sigma = number(spot["cells"]["sigma"]) / units["sigma"]["divided_by"]
         np.testing.assert_allclose(spot["sigma_ppm"], sigma * own, rtol=RTOL)
+    check_drift(phase)
     mean = phase["mean"]
     if mean["estimator"] != "random-effects" or len(phase["spots_used"]) < 2:
         return
@@ -112,37 +114,182 @@ def check_phase(phase: Page) -> None:
     check_random_effects(mean | {"weights": weights}, x, used)
 
 
+def standard_factor(spot: Page, standard: Page | None) -> float:
+    """Actual over assumed; the assumed value is the settings' or the spot's own cell."""
+    if standard is None:
+        return 1.0
+    if standard["factor"] is not None:
+        np.testing.assert_allclose(
+            standard["factor"], standard["actual_ppm"] / standard["assumed_ppm"], rtol=RTOL
+        )
+        return float(standard["factor"])
+    assumed = float(spot["assumed"]["raw"]) * standard["ppm_per_unit"]
+    np.testing.assert_allclose(spot["assumed"]["ppm"], assumed, rtol=RTOL)
+    np.testing.assert_allclose(spot["standard_factor"], standard["actual_ppm"] / assumed, rtol=RTOL)
+    return float(standard["actual_ppm"] / assumed)
+
+
+def check_calibration_factor(spot: Page, phase: Page) -> None:
+    """The factor of its own calibration with the drift removed, times that of the standard's measurement."""
+    own, behind = phase["calibration"], (phase["internal_standard"] or {}).get("calibration")
+    expected = own["factor"]
+    if own["drift_applied"]:
+        expected *= 1 + own["drift_applied"] * (spot["sequence"] - own["drift_centre"])
+    expected *= behind["factor"] if behind else 1.0
+    np.testing.assert_allclose(spot.get("calibration_factor", expected), expected, rtol=RTOL)
+
+
+def check_drift(phase: Page) -> None:
+    drift, calibration = phase["drift"], phase["calibration"]
+    assert (drift is None) == (not calibration["drift_left"])
+    if drift is None or not phase["spots_used"]:
+        return
+    place = column(phase["spots_used"], "sequence").mean()
+    np.testing.assert_allclose(drift["mean_place"], place, rtol=RTOL)
+    shift = calibration["drift_left"] * (place - calibration["drift_centre"])
+    np.testing.assert_allclose(drift["shift"], shift, rtol=RTOL, atol=1e-15)
+
+
 def check_standard(standard: Page | None) -> None:
     if standard is None:
         return
+    if standard["source"] == "configured":
+        assert standard["source_key"] is None
+        assert standard["dof"] is None
+        return
     x = np.array([float(spot["raw"]) for spot in standard["spots"]]) * standard["ppm_per_unit"]
-    m, scale, n = standard["mean"]["mean_ppm"], standard["mean"]["scale_ppm"], len(x)
+    np.testing.assert_allclose(x, column(standard["spots"], "value_ppm"), rtol=RTOL)
+    mean, sigma, n = standard["mean"], column(standard["spots"], "sigma_ppm"), len(x)
+    m, scale = mean["mean_ppm"], mean["scale_ppm"]
+    np.testing.assert_allclose(standard["actual_ppm"], m, rtol=RTOL)
     drawn_in = np.clip(x, m - 1.5 * scale, m + 1.5 * scale)
     np.testing.assert_allclose(drawn_in.mean(), m, rtol=1e-9)
     np.testing.assert_allclose(np.sum((drawn_in - m) ** 2) / (n - 1) / 0.778465, scale**2, rtol=1e-5)
-    np.testing.assert_allclose(
-        math.sqrt(standard["mean"]["constant"] / n) * scale, standard["actual_sd_ppm"], rtol=1e-9
-    )
-    np.testing.assert_allclose(standard["factor"], m / standard["assumed_ppm"], rtol=RTOL)
-    np.testing.assert_allclose(standard["relative_sd"], standard["actual_sd_ppm"] / m, rtol=RTOL)
+    np.testing.assert_allclose(math.sqrt(mean["constant"] / n) * scale, mean["se_ppm"], rtol=1e-9)
+    counting = math.sqrt(mean["counting_constant"] * np.mean(sigma**2) / n)
+    np.testing.assert_allclose(counting, mean["counting_se_ppm"], rtol=1e-9)
+    assert 1.0 <= mean["counting_constant"] < 1.05
+    np.testing.assert_allclose(standard["relative_sd"], max(mean["se_ppm"], counting) / m, rtol=RTOL)
+    np.testing.assert_allclose(standard["dof"], mean["dof"], rtol=RTOL)
+    assert 0 < standard["dof"] <= n - 1
+    check_calibration(standard["calibration"])
 
 
 def check_calibration(calibration: Page) -> None:
     for one in calibration["materials"]:
         x, sigma = column(one["spots"], "value_ppm"), column(one["spots"], "sigma_ppm")
-        check_random_effects(one["mean"], x, sigma)
+        assert len(x) == one["n_spots"]
+        if len(x) > 1:
+            check_random_effects(one["mean"], x, sigma)
         np.testing.assert_allclose(one["mean"]["mean_ppm"], one["measured_ppm"], rtol=RTOL)
+        np.testing.assert_allclose(one["mean"]["se_ppm"], one["measured_se_ppm"], rtol=RTOL)
+        if one["ratio"] is None:
+            continue
         ratio = one["measured_ppm"] / one["accepted_ppm"]
         np.testing.assert_allclose(one["ratio"], ratio, rtol=RTOL)
         own = math.hypot(
             one["measured_se_ppm"] / one["accepted_ppm"], ratio * one["accepted_sd_ppm"] / one["accepted_ppm"]
         )
         np.testing.assert_allclose(one["ratio_se"], own, rtol=RTOL)
-    if calibration["bias"] is not None and len(calibration["materials"]) == 1:
-        np.testing.assert_allclose(calibration["bias"], calibration["materials"][0]["ratio"], rtol=RTOL)
-    if calibration["bias"] is not None and calibration["factor"] == 1.0:
-        relative = math.hypot(calibration["bias"] - 1, calibration["bias_se"])
-        np.testing.assert_allclose(calibration["relative_sd"], relative, rtol=RTOL)
+    if calibration["bias"] is not None and calibration["materials"]:
+        check_bias(calibration)
+    check_slope(calibration)
+
+
+def check_bias(calibration: Page) -> None:
+    """Weights, tau between materials, bias, its standard error and degrees of freedom from the materials' ratios."""
+    known = [one for one in calibration["materials"] if one["ratio"] is not None]
+    relative = [one["ratio_se"] / abs(one["ratio"]) for one in known]
+    enough = max(0.1, 3 * min(relative))
+    for one, own in zip(known, relative, strict=True):
+        assert (one["weight"] is None) == (own > enough)
+    kept = [one for one in known if one["weight"] is not None]
+    ratio, v = column(kept, "ratio"), column(kept, "ratio_se") ** 2
+
+    def excess(tau2: float) -> float:
+        w = 1 / (v + tau2)
+        return float(np.sum(w * (ratio - np.sum(w * ratio) / w.sum()) ** 2) - (len(kept) - 1))
+
+    alone = len(kept) == 1 or excess(0.0) <= 0
+    tau2 = 0.0 if alone else optimize.brentq(excess, 0.0, 1.0, xtol=1e-18, rtol=1e-14)
+    np.testing.assert_allclose(calibration["between_sd"], math.sqrt(tau2), rtol=1e-5, atol=1e-12)
+    p = 1 / (v + tau2) / np.sum(1 / (v + tau2))
+    np.testing.assert_allclose(column(kept, "weight"), p, rtol=1e-5)
+    bias, se2 = np.sum(p * ratio), np.sum(p**2 * (v + tau2))
+    np.testing.assert_allclose(calibration["bias"], bias, rtol=1e-8)
+    np.testing.assert_allclose(calibration["bias_se"], math.sqrt(se2), rtol=1e-5)
+    removed = calibration["factor"] != 1.0
+    left = math.sqrt(se2) / bias if removed else math.hypot(bias - 1, math.sqrt(se2))
+    np.testing.assert_allclose(calibration["relative_sd"], left, rtol=1e-5)
+    if not removed:
+        assert calibration["relative_dof"] is None
+        return
+    np.testing.assert_allclose(calibration["factor"], bias, rtol=1e-8)
+    measured, n = (
+        (column(kept, "measured_se_ppm") / column(kept, "accepted_ppm")) ** 2,
+        column(kept, "n_spots"),
+    )
+    dof = se2**2 / np.sum((p**2 * measured)[n > 1] ** 2 / (n[n > 1] - 1))
+    dof = min(dof, len(kept) - 1) if tau2 > 0 else dof
+    np.testing.assert_allclose(calibration["relative_dof"], dof, rtol=1e-4)
+
+
+def check_slope(calibration: Page) -> None:
+    slope = calibration["drift_applied"] or calibration["drift_left"]
+    if not slope:
+        return
+    deviation, place = [], []
+    for one in calibration["materials"]:
+        if one["ratio"] is not None:
+            x, at = column(one["spots"], "value_ppm"), column(one["spots"], "place")
+            deviation.append(x / x.mean() - 1)
+            place.append(at - at.mean())
+    y, t = np.concatenate(deviation), np.concatenate(place)
+    np.testing.assert_allclose(slope, np.sum(t * y) / np.sum(t**2), rtol=1e-8)
+    known = [one for one in calibration["materials"] if one["ratio"] is not None]
+    centre = np.concatenate([column(one["spots"], "place") for one in known]).mean()
+    np.testing.assert_allclose(calibration["drift_centre"], centre, rtol=RTOL)
+
+
+FACTORS = ("calibration", "matrix", "drift", "internal standard", "calibration of the standard")
+
+
+def check_budget(page: Page) -> dict[str, Page]:
+    """Every line from the phases' own numbers: what it is, what the interval makes of it, and what cancels."""
+    budget = {line["source"]: line for line in page["budget"]}
+    confidence = page["result"]["confidence"]
+    z = special.ndtri(0.5 + confidence / 2)
+    for side, phase in zip(("alpha", "beta"), phases(page), strict=True):
+        calibration, standard = phase["calibration"], phase["internal_standard"]
+        dofs = {
+            "calibration": calibration["relative_dof"], "internal standard": (standard or {}).get("dof"),
+        }  # fmt: skip
+        for name in FACTORS:
+            dof = dofs.get(name)
+            w = special.stdtrit(dof, 0.5 + confidence / 2) / z if dof else 1.0
+            np.testing.assert_allclose(budget[name][f"widening_{side}"], w, rtol=RTOL)
+        assert budget["calibration"][side] == calibration["relative_sd"]
+        assert budget["matrix"][side] == calibration["matrix_sd"]
+        assert budget["internal standard"][side] == (standard or {}).get("relative_sd")
+        behind = (standard or {}).get("calibration")
+        assert budget["calibration of the standard"][side] == (behind or {}).get("relative_sd")
+        assert budget["drift"][side] == (phase["drift"] or {}).get("shift")
+    a, b = phases(page)
+    assert budget["calibration"]["cancels"] == (a["calibration_key"] == b["calibration_key"])
+    keys = [(phase["internal_standard"] or {}).get("source_key") for phase in (a, b)]
+    assert budget["calibration of the standard"]["cancels"] == (keys[0] is not None and keys[0] == keys[1])
+    return budget
+
+
+def squares(line: Page, page: Page, power: int) -> tuple[float, float]:
+    """Squares of alpha's and beta's part, each times its widening to `power`; the drift's all with alpha."""
+    if line["cancels"]:
+        return 0.0, 0.0
+    first, second = ((line[side] or 0.0) * line[f"widening_{side}"] ** power for side in ("alpha", "beta"))
+    if line["source"] == "drift":
+        a, b = (phase["calibration_key"] for phase in phases(page))
+        return ((first - second) ** 2 if a == b else first**2 + second**2), 0.0
+    return first**2, second**2
 
 
 def check_result(page: Page) -> None:
@@ -150,29 +297,30 @@ def check_result(page: Page) -> None:
     a, b = (phase["mean"]["mean_ppm"] for phase in phases(page))
     if result["D"] is not None and a is not None and b is not None:
         np.testing.assert_allclose(result["D"], a / b, rtol=RTOL)
+    budget = check_budget(page)
+    u = [
+        math.sqrt(sum(one)) for one in zip(*(squares(budget[name], page, 1) for name in FACTORS), strict=True)
+    ]
+    np.testing.assert_allclose([interval["u_alpha"], interval["u_beta"]], u, rtol=RTOL)
     if interval["method"] != "fieller":
         return
-    budget = {line["source"]: line for line in page["budget"]}
-    for side, phase in zip(("alpha", "beta"), phases(page), strict=True):
+    for side, phase, own in zip(("alpha", "beta"), phases(page), u, strict=True):
         mean = phase["mean"]
         counting = min(mean["counting_se_ppm"], mean["se_ppm"])
         np.testing.assert_allclose(budget["counting"][side], counting / mean["mean_ppm"], rtol=RTOL)
         spread = math.sqrt(max(mean["se_ppm"] ** 2 - counting**2, 0.0)) / mean["mean_ppm"]
         np.testing.assert_allclose(budget["spread"][side], spread, rtol=1e-6, atol=1e-12)
-        u2 = sum(
-            (line[side] or 0.0) ** 2
-            for name, line in budget.items()
-            if name in ("calibration", "matrix", "internal standard") and not line["cancels"]
-        )
-        np.testing.assert_allclose(interval[f"u_{side}"], math.sqrt(u2), rtol=RTOL)
         np.testing.assert_allclose(
-            interval[f"V_{side}"], mean["se_ppm"] ** 2 + u2 * mean["mean_ppm"] ** 2, rtol=RTOL
+            interval[f"V_{side}"], mean["se_ppm"] ** 2 + own**2 * mean["mean_ppm"] ** 2, rtol=RTOL
         )
-    total = sum(line["squared"] for line in page["budget"])
+    plain = {line["source"]: sum(squares(line, page, 0)) for line in page["budget"]}
+    for line in page["budget"]:
+        np.testing.assert_allclose(line["squared"], plain[line["source"]], rtol=RTOL)
     if result["D_sd"] is not None:
-        np.testing.assert_allclose(result["D_sd"], result["D"] * math.sqrt(total), rtol=RTOL)
+        in_interval = sum(sum(squares(line, page, 1)) for line in page["budget"])
+        np.testing.assert_allclose(result["D_sd"], result["D"] * math.sqrt(in_interval), rtol=RTOL)
         for line in page["budget"]:
-            np.testing.assert_allclose(line["share"], line["squared"] / total, rtol=RTOL)
+            np.testing.assert_allclose(line["share"], line["squared"] / sum(plain.values()), rtol=RTOL)
         check_ends(page, a, b)
 
 
@@ -246,6 +394,7 @@ def test_limits_of_a_censored_mean_give_the_interval(source: Source):
     [
         ["calibrate.correct=bias"],
         ["calibrate.correct=bias+drift", "calibrate.drift_p=0.9"],
+        ["calibrate.drift_p=0.9"],
         ["pair.mean=arithmetic"],
         ["pair.mean=huber"],
         ["pair.mean=median"],
@@ -267,6 +416,8 @@ def test_page_agrees_under_other_settings(tmp_path: Path, overrides: list[str]):
                 np.testing.assert_allclose(np.sum(mean["weights"] * grains), mean["mean_ppm"], rtol=1e-8)
             if "average" not in overrides[0] and "unmix" not in overrides[0]:
                 check_phase(phase)
+            check_calibration(phase["calibration"])
+            check_standard(phase["internal_standard"])
         if "partition" not in overrides[0]:
             check_result(page)
 
@@ -280,7 +431,101 @@ def test_across_batches_the_calibration_is_followed_to_the_reference_spots(tmp_p
         for phase in phases(page):
             assert phase["calibration"]["materials"]
             check_calibration(phase["calibration"])
+            check_standard(phase["internal_standard"])
         check_result(page)
+
+
+MATERIALS = {"R1": (52.0, 60.0, 0.6), "R2": (48.0, 200.0, 2.0), "R3": (50.0, 80.0, 30.0)}
+SESSION = """
+[[ingest.tables]]
+path = "probe.csv"
+technique = "EPMA"
+unit = "wt%"
+columns = { spot = "Point", batch = "Session", experiment = "Run", phase = "Phase" }
+sigma = { pattern = "{analyte} 1s" }
+
+[[ingest.tables]]
+path = "laser.csv"
+technique = "laser"
+unit = "ppm"
+columns = { spot = "Point", batch = "Session", experiment = "Run", phase = "Phase" }
+sigma = { pattern = "{analyte} 1s" }
+
+[ingest.reference_materials]
+path = "accepted.csv"
+
+[[convert.internal_standard]]
+technique = "laser"
+element = "SiO2"
+unit = "wt%"
+assumed_from = "table"
+actual = "probe-mean"
+source_technique = "EPMA"
+"""
+
+
+def session_in_many_batches(folder: Path, correct: str) -> Source:
+    """Every phase in batches of its own, by both techniques, with three reference materials of which one is hardly known.
+
+    The laser table holds its assumed SiO2 spot by spot; the second laser batch drifts.
+    """
+    random = np.random.default_rng(7)
+    probe, laser = [], []
+    for number, (phase, silica, nickel) in enumerate((("olivine", 40.0, 2000.0), ("glass", 50.0, 150.0))):
+        names = [(f"{phase}-{place}", "X1", phase, silica, nickel) for place in range(6)]
+        names += [
+            (f"{name}-{number}-{place}", "", name, *MATERIALS[name][:2])
+            for place in range(8)
+            for name in MATERIALS
+        ]
+        for place, (spot, run, name, si, ni) in enumerate(names):
+            value = round(float(si * 1.01 * random.normal(1, 0.004)), 4)
+            probe.append((spot + "p", f"probe-{number}", run, name, value, 0.12))
+            gain = (1.05 - 0.03 * number) * (1 + 0.004 * number * place)
+            value = round(float(ni * gain * random.normal(1, 0.014)), 5)
+            laser.append((spot + "l", f"laser-{number}", run, name, si + place % 2, 0.2, value, 0.02 * ni))
+    accepted = [
+        line
+        for name, (si, ni, ni_sd) in MATERIALS.items()
+        for line in ((name, "SiO2", si, "wt%", 0.1, "invented"), (name, "Ni", ni, "ppm", ni_sd, "invented"))
+    ]
+    own = ("Point", "Session", "Run", "Phase")
+    session = small_session(
+        folder,
+        {
+            "probe.csv": ((*own, "SiO2", "SiO2 1s"), probe),
+            "laser.csv": ((*own, "SiO2 (wt%)", "SiO2 1s", "Ni", "Ni 1s"), laser),
+            "accepted.csv": (("material", "analyte", "value", "unit", "sd", "source"), accepted),
+        },
+        f"{SESSION}\n[calibrate]\ndrift_p = 0.2\ncorrect = {correct}\n",
+    )
+    runner.run(session)
+    session, tables, files = runner.finished(session, "classify")
+    return Source(tables, session.settings, files)
+
+
+@pytest.mark.parametrize("correct", ["false", '"bias"', '"bias+drift"'])
+def test_several_materials_drift_and_standards_from_two_batches(tmp_path: Path, correct: str):
+    source = session_in_many_batches(tmp_path, correct)
+    page = trace(source, "X1", "olivine", "glass", "Ni")
+    for phase in phases(page):
+        check_phase(phase)
+        check_standard(phase["internal_standard"])
+        check_calibration(phase["calibration"])
+        weights = {one["material"]: one["weight"] for one in phase["calibration"]["materials"]}
+        assert weights["R3"] is None
+        assert weights["R1"] + weights["R2"] == pytest.approx(1.0)
+        assert len({spot["assumed"]["raw"] for spot in phase["spots_used"]}) == 2
+    check_result(page)
+    budget = {line["source"]: line for line in page["budget"]}
+    assert not any(line["cancels"] for line in budget.values())
+    assert budget["calibration of the standard"]["squared"] > 0
+    assert (budget["drift"]["squared"] > 0) == (correct != '"bias+drift"')
+    assert (page["beta_phase"]["calibration"]["drift_applied"] != 0) == (correct == '"bias+drift"')
+    (row,) = [row for row in source.tables["classify"].to_pylist() if row["element"] == "Ni"]
+    calibration = ("calibration", "matrix", "drift", "calibration of the standard")
+    assert row["share_calibration"] == pytest.approx(sum(budget[name]["share"] for name in calibration))
+    assert row["share_internal_standard"] == pytest.approx(budget["internal standard"]["share"])
 
 
 def test_ruling_and_finding_are_told_with_person_date_and_reason(source: Source):

@@ -56,15 +56,28 @@ def _add_result(tree: Tree, page: Row) -> None:
         branch.add(Text(f"D = {_n(result['D'])}"))
     low, high = _n(result["D_lo"]), _n(result["D_hi"])
     branch.add(Text(f"D_sd = {_n(result['D_sd'])};  interval at {result['confidence']:.4g}: {low} to {high}"))
+    if not result["complete"]:
+        branch.add(Text("not complete: D needs an uncertainty that is unknown, and is given no class"))
 
 
 def _add_budget(tree: Tree, page: Row) -> None:
-    table = _table("relative sd", page["alpha"], page["beta"], "share of D_sd²")
-    for line in page["budget"]:
-        share = "cancels" if line["cancels"] else _n(line["share"], 5)
-        table.add_row(line["source"], _n(line["alpha"], 6), _n(line["beta"], 6), share)
-    branch = _branch(tree, "uncertainty budget: D_sd = |D| · √(Σ squares that do not cancel)")
+    lines = [line for line in page["budget"] if line["cancels"] or line["alpha"] or line["beta"]]
+    widened = any(line[f"widening_{side}"] != 1.0 for line in lines for side in ("alpha", "beta"))
+    names = ["relative sd", page["alpha"], page["beta"], *(["w", "w"] if widened else []), "share"]
+    table = _table(*names)
+    for line in lines:
+        widths = [_n(line[f"widening_{side}"]) if line[side] else "" for side in ("alpha", "beta")]
+        share = "cancels" if line["cancels"] else "unknown" if line["unknown"] else _n(line["share"], 5)
+        row = [line["source"], *(_n(line[side]) for side in ("alpha", "beta"))]
+        table.add_row(*row, *(widths if widened else []), share)
+    branch = _branch(tree, "uncertainty budget: shares of the sum of squares")
     branch.add(table)
+    for line in page["budget"]:
+        if line["unknown"]:
+            branch.add(Text(f"{line['source']}: needed, and nothing tells how uncertain it is"))
+        if line["source"] == "drift" and (line["alpha"] or line["beta"]):
+            branch.add(Text(f"drift: shift of each mean; its square in the budget: {_n(line['squared'])}"))
+    _add_how(branch, page["result"]["how"])
 
 
 def _add_interval(tree: Tree, interval: Row) -> None:
@@ -114,6 +127,10 @@ def _add_phase(tree: Tree, side: str, phase: Row, told: set[str]) -> None:
     _add_mean(branch, phase["mean"], told)
     _add_conversion(branch, phase, told)
     _add_calibration(branch, phase["calibration"], told)
+    if phase["drift"] is not None:
+        drift = {name: _n(number) for name, number in phase["drift"].items()}
+        text = f"drift: {drift['per_place']} × ({drift['mean_place']} − {drift['centre']}) = {drift['shift']}"
+        branch.add(Text(f"{text}, mean place of the spots used less the centre of the run"))
     spots = _branch(branch, f"spots used: {len(phase['spots_used'])}, from {_files(phase)}")
     spots.add(_used_table(phase))
     for spot in phase["spots_used"]:
@@ -148,7 +165,10 @@ def _add_mean(branch: Tree, mean: Row, told: set[str]) -> None:
 
 def _add_conversion(branch: Tree, phase: Row, told: set[str]) -> None:
     units, standard = phase["units"], phase["internal_standard"]
-    factor = f" × {_n(standard['factor'], 9)}" if standard is not None else ""
+    factor = ""
+    if standard is not None:
+        own = f"{_n(standard['actual_ppm'], 9)} / assumed"
+        factor = f" × {own if standard['factor'] is None else _n(standard['factor'], 9)}"
     formula = f"x = cell × {units['ppm_per_unit']:g} × {_n(units['element_fraction'], 9)}{factor}"
     node = _branch(
         branch, f"{formula} (ppm per {units['unit']}, mass fraction{', internal standard' if factor else ''})"
@@ -162,54 +182,76 @@ def _add_conversion(branch: Tree, phase: Row, told: set[str]) -> None:
 
 
 def _add_standard(node: Tree, standard: Row, told: set[str]) -> None:
+    actual = _n(standard["actual_ppm"], 9)
+    quotient = "assumed spot by spot"
+    if standard["factor"] is not None:
+        quotient = f"{_n(standard['assumed_ppm'], 9)} = {_n(standard['factor'], 9)}"
+    dof = "" if standard["dof"] is None else f", dof {_n(standard['dof'])}"
     text = (
-        f"internal standard {standard['element']}: {_n(standard['actual_ppm'], 9)} / {_n(standard['assumed_ppm'], 9)}"
-        f" = {_n(standard['factor'], 9)}, relative sd {_n(standard['actual_sd_ppm'])} / {_n(standard['actual_ppm'])}"
-        f" = {_n(standard['relative_sd'], 6)}; actual: {standard['source']}"
+        f"internal standard {standard['element']}: {actual} / {quotient}, relative sd {_n(standard['relative_sd'])}"
+        f"{dof}; actual: {standard['source']}"
     )
     own = _branch(node, text)
-    if standard["assumed_from"] == "settings" and standard["assumed_ppm"] is not None:
+    if standard["assumed_ppm"] is not None:
         assumed = standard["assumed_ppm"] / standard["ppm_per_unit"]
         own.add(
             Text(
                 f"assumed: {_n(assumed)} {standard['unit']} × {_n(standard['ppm_per_unit'], 9)} ppm per {standard['unit']}"
             )
         )
+    _add_how(own, standard["how"], told)
     for spot in standard.get("spots", ()):
-        cell = f"{spot['analyte']} {spot['raw']} {spot['unit']} = {_n(spot['value_ppm'])} ppm"
+        cell = f"{spot['analyte']} {spot['raw']} {spot['unit']} = {_n(spot['value_ppm'])} ppm, σ {_n(spot['sigma_ppm'])}"
         own.add(Text(printable(f"{spot['spot']}, {spot['table']} row {spot['row']}: {cell}")))
     mean = standard.get("mean")
     if mean is not None:
-        own.add(Text(_pairs(mean, {"scale_ppm": "scale", "constant": "c", "n": "n"})))
+        names = {
+            "mean_ppm": "m", "se_ppm": "se", "counting_se_ppm": "counting se", "scale_ppm": "scale", "constant": "c",
+            "counting_constant": "e", "n": "n",
+        }  # fmt: skip
+        own.add(Text(_pairs(mean, names)))
         _add_how(own, mean["how"], told)
+        _add_calibration(own, standard["calibration"], told, "calibration of the standard")
 
 
-def _add_calibration(branch: Tree, calibration: Row | None, told: set[str]) -> None:
+def _add_calibration(
+    branch: Tree, calibration: Row | None, told: set[str], title: str = "calibration"
+) -> None:
     if calibration is None:
-        branch.add(Text("calibration: batch and element have no row in calibrate"))
+        branch.add(Text(f"{title}: technique, batch and column have no row in calibrate"))
         return
     names = {
         "relative_sd": "relative sd",
+        "relative_dof": "dof",
         "matrix_sd": "matrix sd",
         "factor": "factor",
-        "drift_applied": "drift",
     }
-    cancels = "; both means are of one batch, its error cancels" if calibration["cancels"] else ""
-    node = _branch(branch, f"calibration from {calibration['origin']}: {_pairs(calibration, names)}{cancels}")
+    cancels = "; both phases share it, its error cancels" if calibration["cancels"] else ""
+    node = _branch(branch, f"{title} from {calibration['origin']}: {_pairs(calibration, names)}{cancels}")
     if calibration["drift_applied"]:
-        node.add(Text(f"x is divided by factor × (1 + drift × (place − {_n(calibration['drift_centre'])}))"))
+        drift, centre = _n(calibration["drift_applied"]), _n(calibration["drift_centre"])
+        node.add(Text(f"x is divided by factor × (1 + {drift} × (place − {centre}))"))
+    if calibration["drift_left"]:
+        node.add(Text(f"drift left in the values: {_n(calibration['drift_left'])} per place in the run"))
     if calibration["bias"] is not None:
-        node.add(Text(f"bias {_n(calibration['bias'])} ± {_n(calibration['bias_se'])}"))
+        between = calibration.get("between_sd")
+        apart = f", τ {_n(between)}" if len(calibration["materials"]) > 1 else ""
+        node.add(Text(f"bias {_n(calibration['bias'])} ± {_n(calibration['bias_se'])}{apart}"))
     for one in calibration["materials"]:
         measured = f"{_n(one['measured_ppm'])} ± {_n(one['measured_se_ppm'])}"
         accepted = f"{_n(one['accepted_ppm'])} ± {_n(one['accepted_sd_ppm'])}"
-        ratio = f"{_n(one['ratio'])} ± {_n(one['ratio_se'])}"
+        part = "left out" if one["weight"] is None else f"p {_n(one['weight'])}"
+        ratio = f"{_n(one['ratio'])} ± {_n(one['ratio_se'])}, {part}"
         text = f"{one['material']}: {measured} / {accepted} = {ratio}; accepted: {one['source'] or 'no source given'}"
         material = _branch(node, text)
+        if text in told:
+            material.add(Text("its spots as above"))
+            continue
+        told.add(text)
         # One line per number of all spots: reference materials have many.
         for name, words in (("row", "rows"), ("place", "places"), ("value_ppm", "x"), ("sigma_ppm", "σ")):
             numbers = ", ".join(_n(spot.get(name)) for spot in one["spots"])
-            if name != "place" or calibration["drift_applied"]:
+            if name != "place" or calibration["drift_applied"] or calibration["drift_left"]:
                 material.add(Text(f"{words}: {numbers}"))
     _add_how(node, calibration["how"], told)
 
@@ -218,12 +260,18 @@ def _used_table(phase: Row) -> Table:
     corrected = any(abs(spot.get("calibration_factor", 1.0) - 1.0) > 0 for spot in phase["spots_used"])
     other = any("other_factor" in spot for spot in phase["spots_used"])
     unmixed = any("measured_ppm" in spot for spot in phase["spots_used"])
+    assumed = any("assumed" in spot for spot in phase["spots_used"])
     reused = phase["mean"].get("sigma_slope_per_ppm") is not None
     columns = phase["spots_used"][0]["cells"] if phase["spots_used"] else None
     value, sigma = (_column(columns, name) for name in ("value", "sigma"))
     extra = [
         name
-        for name, shown in (("other", other), ("÷ cal", corrected), ("before unmixing", unmixed))
+        for name, shown in (
+            ("assumed ppm", assumed),
+            ("other", other),
+            ("÷ cal", corrected),
+            ("before unmixing", unmixed),
+        )
         if shown
     ]
     names = ["spot", "row", value, sigma, *extra, "x ppm", "σ ppm", *(["σ used"] if reused else []), "p"]
@@ -236,6 +284,7 @@ def _used_table(phase: Row) -> Table:
             _raw(cells.get("value"), spot["raw"]),
             _raw(cells.get("sigma"), ""),
         ]
+        row += [_n(spot["assumed"]["ppm"]) if "assumed" in spot else ""] if assumed else []
         row += [_n(spot.get("other_factor", 1.0))] if other else []
         row += [_n(spot.get("calibration_factor", 1.0))] if corrected else []
         row += [_n(spot.get("measured_ppm"))] if unmixed else []

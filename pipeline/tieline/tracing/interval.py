@@ -12,6 +12,7 @@ from scipy import special
 
 from tieline.arrays import numbers
 from tieline.settings import SessionSettings
+from tieline.settings.results import PartitionSettings
 from tieline.statistics.censored import censored_limits
 from tieline.statistics.limits import mean_limits
 from tieline.statistics.means import MeanEstimate
@@ -21,7 +22,10 @@ Row = Mapping[str, Any]
 SIDES = ("alpha", "beta")
 
 FIELLER = "ends: roots D of (b² − q²·V_b) D² − 2 a b D + (a² − q²·V_a) = 0; V = se² + (u·mean)²; the wider of the two"
-UNSHARED = "u: √(calibration² + matrix² + internal standard²) of a mean, as far as they do not cancel"
+UNSHARED = (
+    "u² = (w·calibration)² + matrix² + (w·internal standard)² + (calibration of the standard)² of a mean, as far as "
+    "they do not cancel, u_a² with the drift's square of the budget; w = t(dof of that factor)/z, 1 where it has none"
+)
 DOF = (
     "1/dof = Σ rᵢ^x / dofᵢ, r: share of each mean in (b²·se_a² + a²·se_b² + (a b)²(u_a² + u_b²)), "
     "x = 1 + (smaller dof / larger dof)(1 − r_u)⁴ − ½ r_u (1 − r_u)"
@@ -50,7 +54,7 @@ PROBABILITIES = {
 
 
 def interval_account(
-    row: Row, pair_rows: Mapping[str, Row], limits: Mapping[str, pa.Table]
+    row: Row, pair_rows: Mapping[str, Row], limits: Mapping[str, pa.Table], settings: PartitionSettings
 ) -> dict[str, Any]:
     """How the ends of D came about. row: of `classify`; pair_rows: of `pair` for alpha and beta.
 
@@ -69,7 +73,7 @@ def interval_account(
     account["z"] = z
     if row["interval"] == "likelihood":
         for side in SIDES:
-            account[f"limits_{side}"] = _limits(pair_rows[side], limits[side], row["confidence"])
+            account[f"limits_{side}"] = _limits(pair_rows[side], limits[side], settings)
         return account | {"how": [UNSHARED, LIMITS, MOVER]}
     if row["interval"] not in ("fieller", "gum-s1"):
         return account | {"how": ["no interval"]}
@@ -124,14 +128,23 @@ def _dof_parts(row: Row) -> dict[str, Any]:
     }
 
 
-def _limits(pair_row: Row, limits: pa.Table, confidence: float) -> dict[str, Any]:
+def widening(dof: float | None, confidence: float) -> float:
+    """What a factor known with `dof` degrees of freedom is multiplied by for the interval: t over normal quantile."""
+    tail = 0.5 + 0.5 * confidence
+    return float(special.stdtrit(dof, tail) / special.ndtri(tail)) if dof else 1.0
+
+
+def _limits(pair_row: Row, limits: pa.Table, settings: PartitionSettings) -> dict[str, Any]:
     """Mean and limits of one phase mean, from the likelihood of its values or from its standard error."""
     if pair_row["n_limit_only"]:
         value, sigma, limit = (numbers(limits, f"{name}_ppm") for name in ("value", "sigma", "limit"))
         one = np.zeros(len(value), dtype=np.int64)
-        found = censored_limits(value, sigma, limit, np.isnan(value), one, 1, confidence=confidence)
+        found = censored_limits(
+            value, sigma, limit, np.isnan(value), one, 1,
+            confidence=settings.confidence, limit_in_sigmas=settings.sigma_from_limit,
+        )  # fmt: skip
     else:
-        found = mean_limits(_estimate(pair_row), confidence=confidence)
+        found = mean_limits(_estimate(pair_row), confidence=settings.confidence)
     return {
         "mean_ppm": _finite(float(found.mean[0])),
         "low_ppm": _finite(float(found.low[0])),
@@ -150,7 +163,7 @@ def _estimate(pair_row: Row) -> MeanEstimate:
         np.array([number("se_ppm") ** 2]),
         np.array([number("counting_se_ppm") ** 2]),
         np.nan_to_num(np.array([number("dof")])),
-        np.array([pair_row["n_used"]]),
+        np.array([pair_row["n_independent"]]),
     )
 
 
@@ -170,6 +183,8 @@ def class_account(row: Row, interval: Mapping[str, Any], settings: SessionSettin
             "a class is declared when D lies above its lower and below its upper boundary, each this surely"
         ],
     }
+    if not row["complete"]:
+        account["how"].append("no class: the interval does not cover every uncertainty that D needs")
     if interval["method"] != "fieller":
         account["how"] += PROBABILITIES.get(interval["method"], [])
         return account

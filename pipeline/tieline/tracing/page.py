@@ -9,23 +9,28 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, flags, labels, numbers, spot_codes
+from tieline.arrays import flags, labels, numbers, spot_codes
 from tieline.auditing.summary import ruling_parts
-from tieline.correction import calibrated, sequence_of
+from tieline.correction import CALIBRATION_KEYS, STANDARD_KEYS, calibrated, sequence_of
 from tieline.errors import InputError, Problem, nearest
 from tieline.notation import written
+from tieline.pairing import with_parts
 from tieline.reading.input_file import InputFile
 from tieline.screen.findings import RULING
 from tieline.settings import SessionSettings
-from tieline.tracing.cells import sigma_rule, source_cells, table_settings
-from tieline.tracing.factors import calibration_account, internal_standard_account, unit_account
+from tieline.tracing.budget import budget_lines
+from tieline.tracing.calibration import calibration_account
+from tieline.tracing.cells import Spot, sigma_rule, source_cells, table_settings
+from tieline.tracing.factors import assumed_by_spot, internal_standard_account, unit_account
 from tieline.tracing.interval import class_account, interval_account
 from tieline.tracing.means import mean_account, with_constant
+from tieline.tracing.rows import chosen_rows, rows_of
 
 Row = Mapping[str, Any]
 KEYS = ("experiment", "alpha", "beta", "element")
 GROUP = ("experiment", "phase", "element", "technique", "batch", "analyte")
 SAME = 1e-9
+D_SD = "D_sd = |D| · √(sum of the squares in the budget, each factor times w as it enters the interval)"
 
 
 @dataclass(frozen=True)
@@ -46,15 +51,16 @@ def trace(source: Source, experiment: str, alpha: str, beta: str, element: str) 
         | {name: row[f"{name}_{side}"] for name in ("technique", "batch", "analyte")}
         for side, phase in sides.items()
     }
-    same_batch = groups["alpha"]["batch"] == groups["beta"]["batch"]
-    pair_rows = {side: _rows(source.tables["pair"], groups[side])[0] for side in sides}
+    same = all(groups["alpha"][name] == groups["beta"][name] for name in CALIBRATION_KEYS)
+    pair_rows = {side: rows_of(source.tables["pair"], groups[side])[0] for side in sides}
     limits = {side: _limit_rows(source.tables["pair.limits"], groups[side]) for side in sides}
-    interval = interval_account(row, pair_rows, limits)
-    phases = {side: _phase(source, groups[side], pair_rows[side], same_batch) for side in sides}
+    interval = interval_account(row, pair_rows, limits, source.settings.partition)
+    phases = {side: _phase(source, groups[side], pair_rows[side], same) for side in sides}
+    _add_standard_calibrations(source, phases)
     return {
         **{name: row[name] for name in KEYS},
         "result": _result(row),
-        "budget": _budget(row, phases, same_batch),
+        "budget": budget_lines(row, phases),
         "interval": interval,
         "classification": class_account(row, interval, source.settings),
         **{f"{side}_phase": phase for side, phase in phases.items()},
@@ -76,77 +82,37 @@ def _find(classify: pa.Table, experiment: str, alpha: str, beta: str, element: s
     return found
 
 
-def _rows(table: pa.Table, where: Row) -> list[dict[str, Any]]:
-    rows: list[dict[str, Any]] = table.filter(pa.array(_chosen(table, where))).to_pylist()
-    return rows
-
-
-def _chosen(table: pa.Table, where: Row) -> BoolArray:
-    chosen = np.ones(table.num_rows, dtype=np.bool_)
-    for name, text in where.items():
-        chosen &= labels(table, name).is_one_of((str(text),))
-    return chosen
-
-
 def _limit_rows(limits: pa.Table, key: Row) -> pa.Table:
     """The rows of `pair.limits` that belong to one mean."""
-    names = ("experiment", "phase", "element", "batch", "analyte")
-    return limits.filter(pa.array(_chosen(limits, {name: key[name] for name in names})))
+    return limits.filter(pa.array(chosen_rows(limits, {name: key[name] for name in GROUP})))
 
 
 def _result(row: Row) -> dict[str, Any]:
-    names = ("D", "D_sd", "D_lo", "D_hi", "confidence", "kind", "reason", "n_alpha", "n_beta")
-    how = ["D = mean of alpha / mean of beta", "D_sd = |D| · √(sum of the squares in the budget)"]
+    names = (
+        "D", "D_sd", "D_lo", "D_hi", "confidence", "kind", "reason", "complete",
+        "n_alpha", "n_beta", "n_independent_alpha", "n_independent_beta",
+    )  # fmt: skip
+    how = ["D = mean of alpha / mean of beta"]
+    how += [] if row["interval"] == "likelihood" else [D_SD]
     return {"written": written(row), **{name: row[name] for name in names}, "how": how}
-
-
-def _budget(row: Row, phases: Mapping[str, Row], same_batch: bool) -> list[dict[str, Any]]:
-    """Relative standard uncertainty of both means by source, whether it cancels, and its share of D_sd squared."""
-    parts = {side: _relative_parts(row, side, phases[side]) for side in ("alpha", "beta")}
-    lines: list[dict[str, Any]] = []
-    for name in parts["alpha"]:
-        first, second = parts["alpha"][name], parts["beta"][name]
-        cancels = name == "calibration" and same_batch
-        squared = 0.0 if cancels else (first or 0.0) ** 2 + (second or 0.0) ** 2
-        lines.append({"source": name, "alpha": first, "beta": second, "cancels": cancels, "squared": squared})
-    total = sum(line["squared"] for line in lines)
-    known = row["share_counting"] is not None and total > 0
-    return [line | {"share": line["squared"] / total if known else None} for line in lines]
-
-
-def _relative_parts(row: Row, side: str, phase: Row) -> dict[str, float | None]:
-    mean, se, counting = (row[f"{name}_{side}_ppm"] for name in ("mean", "se", "counting_se"))
-    if not mean or se is None:
-        own: dict[str, float | None] = {"counting": None, "spread": None}
-    else:
-        # What counting alone would give can exceed what the scatter shows; D_sd is that of the scatter.
-        part = min(counting, se) if counting is not None else 0.0
-        own = {"counting": part / abs(mean), "spread": max(se**2 - part**2, 0.0) ** 0.5 / abs(mean)}
-    calibration, standard = phase["calibration"], phase["internal_standard"]
-    return own | {
-        "calibration": None if calibration is None else calibration["relative_sd"],
-        "matrix": None if calibration is None else calibration["matrix_sd"],
-        "internal standard": None if standard is None else standard["relative_sd"],
-    }
 
 
 def _phase(source: Source, key: Row, pair_row: Row, calibration_cancels: bool) -> dict[str, Any]:
     """One phase mean with its spots and everything that made their values."""
     tables = source.tables
-    chosen = _chosen(tables["convert"], key)
+    # A part of a phase, such as its rims, is named by the settings; its standard is that of the whole phase.
+    split, wholes = with_parts(tables["convert"], source.settings.pair)
+    chosen = chosen_rows(split, key)
     at = np.flatnonzero(chosen)
     convert, ingest, screen = (
         tables[name].filter(pa.array(chosen)) for name in ("convert", "ingest", "screen")
     )
-    calibrate_key = {name: key[name] for name in ("batch", "element")}
     unit = str(ingest.column("unit")[0].as_py())
-    standard = internal_standard_account(
-        tables["convert"], tables["ingest"],
-        {name: key[name] for name in ("experiment", "phase", "technique")},
-        source.settings.convert.internal_standard,
-    )  # fmt: skip
+    standard_key = {name: key[name] for name in STANDARD_KEYS} | {"phase": wholes[str(key["phase"])]}
+    standard = internal_standard_account(tables, standard_key, source.settings.convert)
+    assumed = assumed_by_spot(tables, standard_key, standard)
     units = unit_account(str(key["analyte"]), unit)
-    spots = _spots(source, (convert, ingest, screen), key, units, standard)
+    spots = _spots(source, (convert, ingest, screen), key, units, standard, assumed)
     used = [spot for spot in spots if spot["use"]]
     measured = [spot for spot in used if spot["value_ppm"] is not None]
     account = _mean(source, measured, np.flatnonzero(flags(screen, "use")), at, pair_row)
@@ -154,18 +120,42 @@ def _phase(source: Source, key: Row, pair_row: Row, calibration_cancels: bool) -
     for name in per_spot:
         for spot, number in zip(measured, account.pop(name, ()), strict=False):
             spot[name.removesuffix("s")] = number
+    calibration_key = {name: key[name] for name in CALIBRATION_KEYS}
+    calibration = calibration_account(
+        tables, calibration_key, source.settings.calibrate, cancels=calibration_cancels
+    )
     table = table_settings(source.settings.ingest, str(used[0]["table"] if used else spots[0]["table"]))
     return {
         **{name: key[name] for name in ("phase", "technique", "batch", "analyte")},
+        "calibration_key": calibration_key,
         "mean": account,
         "units": units | {"sigma": sigma_rule(table, unit)},
         "internal_standard": standard,
-        "calibration": calibration_account(
-            tables, calibrate_key, source.settings.calibrate, cancels=calibration_cancels
-        ),
+        "calibration": calibration,
+        "drift": _drift(calibration, pair_row),
         "spots_used": [_without(spot, "use") for spot in used],
         "spots_left_out": [_without(spot, "use") for spot in spots if not spot["use"]],
     }  # fmt: skip
+
+
+def _drift(calibration: Row | None, pair_row: Row) -> dict[str, Any] | None:
+    """What a drift that stays in the values shifts a mean by; None where there is none."""
+    if calibration is None or not calibration["drift_left"]:
+        return None
+    place, centre = pair_row["mean_sequence"], calibration["drift_centre"]
+    shift = 0.0 if place is None or centre is None else calibration["drift_left"] * (place - centre)
+    return {"mean_place": place, "centre": centre, "per_place": calibration["drift_left"], "shift": shift}
+
+
+def _add_standard_calibrations(source: Source, phases: Mapping[str, dict[str, Any]]) -> None:
+    """Beside every measured internal standard the calibration of its measurement, which both phases may share."""
+    standards = [phase["internal_standard"] for phase in phases.values()]
+    keys = [None if one is None else one["source_key"] for one in standards]
+    for standard, key in zip(standards, keys, strict=True):
+        if key is not None:
+            standard["calibration"] = calibration_account(
+                source.tables, key, source.settings.calibrate, cancels=keys[0] == keys[1]
+            )
 
 
 def _without(spot: dict[str, Any], name: str) -> dict[str, Any]:
@@ -219,12 +209,20 @@ def _close(one: float | None, two: float | None) -> bool:
 
 
 def _spots(
-    source: Source, parts: tuple[pa.Table, pa.Table, pa.Table], key: Row, units: Row, standard: Row | None
+    source: Source,
+    parts: tuple[pa.Table, pa.Table, pa.Table],
+    key: Row,
+    units: Row,
+    standard: Row | None,
+    assumed: Mapping[Spot, Row],
 ) -> list[dict[str, Any]]:
     """Every spot of the group: value with its factors and cells, and what tests and people said of it."""
     convert, ingest, screen = (part.to_pylist() for part in parts)
     values = calibrated(
-        parts[0], source.tables["calibrate"], source.tables["ingest.spots"], source.tables["convert.standards"]
+        parts[0],
+        source.tables["calibrate"],
+        source.tables["ingest.spots"],
+        source.tables["convert.standards"],
     )
     sequence = sequence_of(parts[0], source.tables["ingest.spots"])
     remarks = _findings(source.tables["screen.findings"])
@@ -244,13 +242,20 @@ def _spots(
         spot = {name: raw[name] for name in ("spot", "table", "row", "grain", "zone", "distance_um")}
         spot |= {"use": use["use"], "cells": cells.get((raw["table"], raw["row"])), "raw": raw["raw"]}
         spot |= {name: raw[name] for name in ("value", "sigma", "limit", "below_limit")}
-        spot |= _factors(raw, row, units, standard)
+        standard_factor = 1.0 if standard is None else standard["factor"]
+        if (raw["table"], raw["row"]) in assumed and standard is not None:
+            spot["assumed"] = assumed[raw["table"], raw["row"]]
+            standard_factor = standard["actual_ppm"] / spot["assumed"]["ppm"]
+            spot["standard_factor"] = standard_factor
+        spot |= _factors(raw, row, units, standard_factor)
         spot["sequence"] = int(sequence[place])
         for name in ("value", "sigma", "limit"):
             number = float(getattr(values, name)[place])
             spot[f"{name}_ppm"] = number if np.isfinite(number) else None
-        if row["value_ppm"] and spot["value_ppm"] is not None:
-            spot["calibration_factor"] = row["value_ppm"] / spot["value_ppm"]
+        # What is known only as a limit has no value to tell it.
+        told = "value_ppm" if row["value_ppm"] and spot["value_ppm"] is not None else "limit_ppm"
+        if row[told] and spot[told] is not None:
+            spot["calibration_factor"] = row[told] / spot[told]
         if np.isfinite(unmixed[place]):
             spot |= {"measured_ppm": spot["value_ppm"], "value_ppm": float(unmixed[place])}
             spot |= {"sigma_ppm": use["unmixed_sigma_ppm"], "unmixed_shared_ppm": use["unmixed_shared_ppm"]}
@@ -264,12 +269,12 @@ def _spots(
     return spots
 
 
-def _factors(raw: Row, row: Row, units: Row, standard: Row | None) -> dict[str, Any]:
+def _factors(raw: Row, row: Row, units: Row, standard_factor: float | None) -> dict[str, Any]:
     """What is left of value_ppm / value after units and internal standard: normalisation, or iron added up."""
     if not raw["value"] or row["value_ppm"] is None:
         return {}
     plain = raw["value"] * units["ppm_per_unit"] * units["element_fraction"]
-    factor = row["value_ppm"] / plain / (standard["factor"] if standard is not None else 1.0)
+    factor = row["value_ppm"] / plain / (standard_factor or 1.0)
     return {} if abs(factor - 1.0) < SAME else {"other_factor": factor}
 
 
@@ -288,5 +293,5 @@ def _findings(findings: pa.Table) -> dict[tuple[str, int], list[dict[str, Any]]]
 def _alternatives(alternatives: pa.Table, row: Row) -> list[dict[str, Any]]:
     # Without their numbers: this page holds the values of the chosen means only.
     names = ("batch_alpha", "batch_beta", "analyte_alpha", "analyte_beta", "reason")
-    found = _rows(alternatives, {name: row[name] for name in KEYS})
+    found = rows_of(alternatives, {name: row[name] for name in KEYS})
     return [{name: one[name] for name in names} for one in found]
