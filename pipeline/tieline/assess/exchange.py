@@ -113,14 +113,13 @@ def exchange_tables(
 
     rows: list[dict[str, Any]] = []
     coefficients: list[dict[str, Any]] = []
-    variances = by_pair(covariance)
-    for (experiment, alpha, beta), rows_of_pair in partition.groupby(
-        list(PAIR_KEYS), sort=True, observed=True
-    ):
-        group = rows_of_pair.set_index("element")
+    wanted = sorted({element for pair in pairs for element in pair})
+    variances = by_pair(covariance[covariance["element"].isin(wanted) & covariance["other"].isin(wanted)])
+    for (experiment, alpha, beta), group in sorted(_values_by_pair(partition, wanted).items()):
         for first, second in pairs:
-            if first not in group.index or second not in group.index:
+            if first not in group or second not in group:
                 continue
+            (D_first, dof_first), (D_second, dof_second) = group[first], group[second]
             factor, relative, assumption = 1.0, 0.0, ""
             if "Fe" in (first, second):
                 shares = {phase: (ferric or {}).get((experiment, phase)) for phase in (alpha, beta)}
@@ -133,9 +132,9 @@ def exchange_tables(
                     for phase, share in shares.items()
                 )
             matrix = _matrix(variances.get((experiment, alpha, beta), {}), first, second)
-            dof = np.nanmin([np.inf, *group.loc[[first, second], "dof"].to_numpy(dtype=np.float64)])
+            dof = np.nanmin([np.inf, dof_first, dof_second])
             found = exchange_coefficient(
-                float(group.loc[first, "D"]), float(group.loc[second, "D"]), matrix, dof=float(dof),
+                D_first, D_second, matrix, dof=float(dof),
                 ferrous_factor=factor, ferrous_factor_relative_sd=relative, confidence=confidence,
             )  # fmt: skip
             low, high, source = _window(alpha, beta, f"{first}-{second}", windows or {}, melts)
@@ -161,6 +160,17 @@ def exchange_tables(
         pd.DataFrame(coefficients, columns=list(EXCHANGE_COLUMNS)),
         pd.DataFrame(rows, columns=list(CHECK_COLUMNS)),
     )
+
+
+def _values_by_pair(
+    partition: pd.DataFrame, elements: Sequence[str]
+) -> dict[tuple[str, str, str], dict[str, tuple[float, float]]]:
+    """(experiment, alpha, beta) -> element -> D and its degrees of freedom, NaN where unknown."""
+    found: dict[tuple[str, str, str], dict[str, tuple[float, float]]] = {}
+    chosen = partition.loc[partition["element"].isin(elements), [*PAIR_KEYS, "element", "D", "dof"]]
+    for experiment, alpha, beta, element, D, dof in chosen.itertuples(index=False):
+        found.setdefault((experiment, alpha, beta), {})[element] = float(D), float(dof)
+    return found
 
 
 def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
