@@ -464,10 +464,11 @@ source_technique = "EPMA"
 """
 
 
-def session_in_many_batches(folder: Path, correct: str) -> Source:
+def session_in_many_batches(folder: Path, correct: str, oxide: str = "SiO2", metal: str = "Ni") -> Source:
     """Every phase in batches of its own, by both techniques, with three reference materials of which one is hardly known.
 
-    The laser table holds its assumed SiO2 spot by spot; the second laser batch drifts.
+    The laser table holds its assumed SiO2 spot by spot; the second laser batch drifts. oxide, metal: of what the
+    accepted values are.
     """
     random = np.random.default_rng(7)
     probe, laser = [], []
@@ -487,7 +488,7 @@ def session_in_many_batches(folder: Path, correct: str) -> Source:
     accepted = [
         line
         for name, (si, ni, ni_sd) in MATERIALS.items()
-        for line in ((name, "SiO2", si, "wt%", 0.1, "invented"), (name, "Ni", ni, "ppm", ni_sd, "invented"))
+        for line in ((name, oxide, si, "wt%", 0.1, "invented"), (name, metal, ni, "ppm", ni_sd, "invented"))
     ]
     own = ("Point", "Session", "Run", "Phase")
     session = small_session(
@@ -526,6 +527,17 @@ def test_several_materials_drift_and_standards_from_two_batches(tmp_path: Path, 
     calibration = ("calibration", "matrix", "drift", "calibration of the standard")
     assert row["share_calibration"] == pytest.approx(sum(budget[name]["share"] for name in calibration))
     assert row["share_internal_standard"] == pytest.approx(budget["internal standard"]["share"])
+
+
+def test_an_uncertainty_that_nothing_tells_is_said_and_has_no_share(tmp_path: Path):
+    source = session_in_many_batches(tmp_path, "false", oxide="MgO", metal="Co")
+    page = trace(source, "X1", "olivine", "glass", "Ni")
+    unknown = {line["source"] for line in page["budget"] if line["unknown"]}
+    assert unknown == {"calibration", "calibration of the standard"}
+    assert {line["share"] for line in page["budget"] if line["unknown"]} == {None}
+    assert not page["result"]["complete"]
+    assert page["classification"]["class"] == "unresolved"
+    assert any("does not cover" in line for line in page["classification"]["how"])
 
 
 def test_ruling_and_finding_are_told_with_person_date_and_reason(source: Source):
