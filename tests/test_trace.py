@@ -317,8 +317,8 @@ def check_result(page: Page) -> None:
     for line in page["budget"]:
         np.testing.assert_allclose(line["squared"], plain[line["source"]], rtol=RTOL)
     if result["D_sd"] is not None:
-        in_interval = sum(sum(squares(line, page, 1)) for line in page["budget"])
-        np.testing.assert_allclose(result["D_sd"], result["D"] * math.sqrt(in_interval), rtol=RTOL)
+        in_budget = sum(sum(squares(line, page, 0)) for line in page["budget"])
+        np.testing.assert_allclose(result["D_sd"], result["D"] * math.sqrt(in_budget), rtol=RTOL)
         for line in page["budget"]:
             np.testing.assert_allclose(line["share"], line["squared"] / sum(plain.values()), rtol=RTOL)
         check_ends(page, a, b)

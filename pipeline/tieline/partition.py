@@ -112,7 +112,8 @@ def _partition_table(
             **names,
             "element": of("element", alpha),
             "D": D,
-            "D_sd": np.where(is_value, interval.sd, np.nan),
+            # The interval's own sd counts factors from few measurements by Student's quantile; D_sd does not.
+            "D_sd": np.where(from_means, budget.D_sd[rows], np.where(is_value, interval.sd, np.nan)),
             "D_lo": interval.low,
             "D_hi": np.where(np.isfinite(interval.high), interval.high, np.nan),
             "confidence": np.full(len(rows), settings.confidence),

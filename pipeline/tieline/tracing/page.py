@@ -30,7 +30,7 @@ Row = Mapping[str, Any]
 KEYS = ("experiment", "alpha", "beta", "element")
 GROUP = ("experiment", "phase", "element", "technique", "batch", "analyte")
 SAME = 1e-9
-D_SD = "D_sd = |D| · √(sum of the squares in the budget, each factor times w as it enters the interval)"
+D_SD = "D_sd = |D| · √(sum of the squares in the budget); the interval takes each factor times w"
 
 
 @dataclass(frozen=True)
