@@ -8,8 +8,8 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pytest
-from stage_tables import ingest_tables, spot
 
+from stage_tables import ingest_tables, spot
 from tieline.calibrate import calibrate
 from tieline.columns import SCREEN
 from tieline.convert import convert

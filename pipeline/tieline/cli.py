@@ -24,6 +24,8 @@ app = typer.Typer(
 )
 
 WRONG_INPUT, DIFFERENT, INTERRUPTED = 2, 3, 130
+# How Python, Arrow and the system's loader tell that there is no memory for a thread or a library.
+LACK_OF_MEMORY = ("can't start new thread", "Failed to launch worker thread", "failed to map segment")
 MACHINE = 1  # a full disk, too little memory, a folder that vanished: nothing is wrong with the input
 
 ConfigArgument = Annotated[
@@ -342,11 +344,15 @@ def archive(
     ] = None,
     scheduler: Annotated[
         str | None,
-        typer.Option("--scheduler", metavar="ADDRESS", help="A running Dask scheduler, instead of own workers."),
+        typer.Option(
+            "--scheduler", metavar="ADDRESS", help="A running Dask scheduler, instead of own workers."
+        ),
     ] = None,
     workers: Annotated[
         int | None,
-        typer.Option("--workers", metavar="N", min=1, help="Worker processes; one per processor if not given."),
+        typer.Option(
+            "--workers", metavar="N", min=1, help="Worker processes; one per processor if not given."
+        ),
     ] = None,
     json: JsonOption = False,
 ) -> None:
@@ -422,10 +428,13 @@ def _exit_status(error: Exception) -> int:
         error.message = printable(getattr(error, "message", ""))  # type: ignore[attr-defined]
         show()
         return WRONG_INPUT
-    if isinstance(error, OSError | MemoryError):
-        from tieline.terminal import show_machine_failure
+    if isinstance(error, OSError | MemoryError) or any(text in str(error) for text in LACK_OF_MEMORY):
+        try:
+            from tieline.terminal import show_machine_failure
 
-        show_machine_failure(error)
+            show_machine_failure(error)
+        except (ImportError, MemoryError, RuntimeError):  # not even memory to say so
+            sys.stderr.write("stopped: out of memory\n")
         return MACHINE
     from tieline.errors import InputError
 

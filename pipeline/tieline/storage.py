@@ -59,7 +59,7 @@ def write_bytes(path: Path, data: bytes) -> None:
 class Pending:
     """Files written under temporary names, to be renamed together once everything has succeeded.
 
-    They are written beside the computation that goes on; what goes wrong shows in `commit`.
+    They are written beside the computation that goes on; what goes wrong shows in `finish_writes`.
     """
 
     def __init__(self) -> None:
@@ -96,19 +96,23 @@ class Pending:
             stream.flush()
             os.fsync(stream.fileno())
 
+    def finish_writes(self) -> None:
+        """Waits until everything is on disk under its temporary name, and raises what went wrong with it."""
+        for written in self._writes:
+            written.result()
+        self._writes.clear()
+
     def commit(self) -> None:
         """Renames all, side tables before the main table of their stage.
 
         Stopped half-way it leaves whole files of two runs, and their fingerprints tell which stages are stale.
         """
-        for written in self._writes:
-            written.result()
+        self.finish_writes()
         for temporary, target in self._moves:
             _show(temporary, target)
         for folder in dict.fromkeys(target.parent for _, target in self._moves):
             sync_folder(folder)
         self._moves.clear()
-        self._writes.clear()
 
 
 def temporary_path(target: Path) -> Path:

@@ -68,7 +68,7 @@ def show_problems(problems: Sequence[Problem]) -> None:
         console.print(Text(f"More on this: tieline help {page}", style="dim"))
 
 
-def show_machine_failure(error: OSError | MemoryError) -> None:
+def show_machine_failure(error: Exception) -> None:
     """What stopped the program that is no fault of the input: a full disk, a folder that vanished, no memory."""
     what = error.strerror if isinstance(error, OSError) else "out of memory"
     place = f": {error.filename}" if isinstance(error, OSError) and error.filename is not None else ""

@@ -71,7 +71,9 @@ def _show_files(console: Console, session: Session, files: Sequence[str], n_more
     if verdict.state == "current":
         console.print(Text(f"  {', '.join(FILES)}"))
     else:
-        state = "no report yet" if verdict.state == "missing" else "the report there is of an earlier reduction"
+        state = (
+            "no report yet" if verdict.state == "missing" else "the report there is of an earlier reduction"
+        )
         console.print(Text(f"  {state}: {_report_command(session)}", style="yellow"))
 
 

@@ -74,7 +74,7 @@ def run_command(config: Path, striking: Striking | None, log: Path) -> Any:
     sink = os.open(log, os.O_WRONLY | os.O_CREAT | os.O_TRUNC)
     os.dup2(sink, 1)
     os.dup2(sink, 2)
-    sys.argv = ["tieline", "run", str(config), "--quiet"]
+    sys.argv = ["tieline", "run", str(config), "--quiet", "--report"]
     if striking is not None:
         striking.install()
     cli.main()

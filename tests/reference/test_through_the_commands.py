@@ -13,6 +13,7 @@ from pathlib import Path
 
 import pandas as pd
 import pytest
+
 from sessions import result, small_session
 
 FACTORS = """SiO2 .46744; TiO2 .59935; Al2O3 .52926; Cr2O3 .68421; V2O3 .67976; Fe2O3 .69943; FeO .77731; MnO .77446;
@@ -103,7 +104,13 @@ def test_totals_of_ideal_end_members(end_members: pd.DataFrame):
 
 
 def test_components_of_ideal_end_members(end_members: pd.DataFrame):
-    expected = {("Fo", "mg_number"): 1, ("Fa", "mg_number"): 0, ("An", "an"): 1, ("Ab", "ab"): 1, ("Kfs", "or"): 1}
+    expected = {
+        ("Fo", "mg_number"): 1,
+        ("Fa", "mg_number"): 0,
+        ("An", "an"): 1,
+        ("Ab", "ab"): 1,
+        ("Kfs", "or"): 1,
+    }
     expected |= {("Di", "wo"): 0.5, ("Di", "en"): 0.5, ("En", "en"): 1, ("Hd", "wo"): 0.5}
     for (name, column), value in expected.items():
         assert end_members.loc[name, column] == pytest.approx(value, abs=2e-4), (name, column)
@@ -112,7 +119,9 @@ def test_components_of_ideal_end_members(end_members: pd.DataFrame):
 def test_ferrous_and_ferric_share_of_magnetite(tmp_path: Path):
     # Magnetite 31.03 FeO + 68.97 Fe2O3; with all iron as FeO: 31.03 + 68.97 * 0.89981 = 93.09.
     body = TABLE + '[convert.formula]\nferric = ["magnetite"]\n'
-    session = small_session(tmp_path, {"probe.csv": (["Point", "Run", "Phase", "FeO"], [["m", "X", "mag", 93.09]])}, body)
+    session = small_session(
+        tmp_path, {"probe.csv": (["Point", "Run", "Phase", "FeO"], [["m", "X", "mag", 93.09]])}, body
+    )
     run_until_convert(session.path)
     formula = result(session, "convert.formula").iloc[0]
     assert formula["ferric_fraction"] == pytest.approx(2 / 3, abs=1e-4)

@@ -50,7 +50,9 @@ def coefficients(tables, **settings):
     names = tables.convert.select(["analyte", "element"]).to_pylist()
     calibrate = exact_calibration({row["analyte"]: row["element"] for row in names})
     used = tables.screen(**settings).tables["screen"]
-    means = pair(tables.convert, empty(CONVERT_STANDARDS), calibrate, used, tables.spots, settings=PairSettings()).tables
+    means = pair(
+        tables.convert, empty(CONVERT_STANDARDS), calibrate, used, tables.spots, settings=PairSettings()
+    ).tables
     table = partition(
         means["pair"], means["pair.pairs"], means["pair.limits"], calibrate, settings=PartitionSettings()
     ).tables["partition"]

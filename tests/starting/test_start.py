@@ -9,8 +9,8 @@ from pathlib import Path
 
 import pandas as pd
 import pytest
-from sessions import ROOT, demo_copy, result
 
+from sessions import ROOT, demo_copy, result
 from tieline import runner
 from tieline.configuration import load, read
 from tieline.errors import InputError
@@ -70,7 +70,9 @@ def test_answering_the_questions_reproduces_the_demo(tmp_path: Path):
     reference = load(demo)
     runner.run(reference)
     keys = ["experiment", "alpha", "beta", "element"]
-    ours, theirs = (result(one, "classify").sort_values(keys).reset_index(drop=True) for one in (session, reference))
+    ours, theirs = (
+        result(one, "classify").sort_values(keys).reset_index(drop=True) for one in (session, reference)
+    )
     assert len(ours) > 800
     pd.testing.assert_frame_equal(ours, theirs)
 
@@ -86,7 +88,12 @@ def test_every_question_is_refused_with_its_row(tmp_path: Path):
 
 def test_what_a_majors_table_shows_is_not_asked():
     text = first_configuration(
-        [table("Point,Run,Mineral,SiO2,Al2O3,MgO,CaO,FeO,Total\na,X,Ol,40,0,49,0.3,10,99.3\nb,X,liq,50,15,10,12,9,96\n")], "s"
+        [
+            table(
+                "Point,Run,Mineral,SiO2,Al2O3,MgO,CaO,FeO,Total\na,X,Ol,40,0,49,0.3,10,99.3\nb,X,liq,50,15,10,12,9,96\n"
+            )
+        ],
+        "s",
     )
     settings = tomllib.loads(text)
     first = settings["ingest"]["tables"][0]

@@ -87,7 +87,9 @@ def collect_series(
     given = charges or {}
     fitted, compared, missing, remarks = [], {}, {}, []
     limits: list[tuple[str, float, float]] = []
-    rows = [row for row in partition[_NEEDED].to_dict("records") if charge_of(row["element"], given) == charge]
+    rows = [
+        row for row in partition[_NEEDED].to_dict("records") if charge_of(row["element"], given) == charge
+    ]
     for row in sorted(rows, key=lambda row: row["element"]):
         element = str(row["element"])
         radius = ionic_radius(element, charge, coordination)

@@ -52,13 +52,20 @@ def figure_files(source: Source, curves: Sequence[Curve] = ()) -> Mapping[str, b
             for name, draw, width, height in _PICTURES:
                 figure = Figure(figsize=(width / MM_PER_INCH, height / MM_PER_INCH))
                 draw(figure, own, data, pair)
-                stem = f"{name}_{_file_word(pair[0])}_{_file_word(pair[1])}"
+                stem = _new_stem(f"{name}_{_file_word(pair[0])}_{_file_word(pair[1])}", files)
                 for ending, canvas in (("svg", FigureCanvasSVG), ("pdf", FigureCanvasPdf)):
                     stream = io.BytesIO()
                     when = {"Date": None} if ending == "svg" else {"CreationDate": None}
                     canvas(figure).print_figure(stream, format=ending, metadata=when)
                     files[f"{stem}.{ending}"] = stream.getvalue()
     return files
+
+
+def _new_stem(stem: str, files: Mapping[str, bytes]) -> str:
+    """The stem, with a number where a file has it already, be it in other letters: some systems hold them for one."""
+    taken = {name.rpartition(".")[0].casefold() for name in files}
+    stems = (stem, *(f"{stem}_{number}" for number in range(2, len(taken) + 3)))
+    return next(one for one in stems if one.casefold() not in taken)
 
 
 def _file_word(text: str) -> str:

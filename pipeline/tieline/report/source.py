@@ -56,7 +56,10 @@ class Source:
         """The values as the phase means used them: calibrated and unmixed where that is configured."""
         screen = self.table("screen")
         values = calibrated(
-            self.table("convert"), self.table("calibrate"), self.table("ingest.spots"), self.table("convert.standards")
+            self.table("convert"),
+            self.table("calibrate"),
+            self.table("ingest.spots"),
+            self.table("convert.standards"),
         )
         unmixed = numbers(screen, "unmixed_ppm")
         taken = np.isfinite(unmixed)

@@ -64,6 +64,7 @@ def _write(session: Session, made: Mapping[Path, bytes]) -> None:
         for path, data in made.items():
             path.parent.mkdir(parents=True, exist_ok=True)
             pending.add_bytes(path, data)
+        pending.finish_writes()
         (session.run_folder / PAGE).unlink(missing_ok=True)
         pending.commit()
 

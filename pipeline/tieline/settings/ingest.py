@@ -182,7 +182,9 @@ class TableLimits(Settings):
 
     columns: int = Field(5_000, ge=1, description="columns of one table")
     cells: int = Field(100_000_000, ge=1, description="cells of one table, blank ones included")
-    expanded_mb: int = Field(2_000, ge=1, description="megabytes of one file, and what a packed one may unpack to")
+    expanded_mb: int = Field(
+        2_000, ge=1, description="megabytes of one file, and what a packed one may unpack to"
+    )
 
 
 class IngestSettings(Settings):
