@@ -98,7 +98,8 @@ def test_modules_stay_readable():
 def test_only_the_runner_side_touches_files():
     """Stages get bytes and tables; opening files is for the modules named here."""
     allowed = {
-        "comparing", "api", "runner", "storage", "manifest", "plan", "lock", "configuration", "cli", "demo", "archive", "auditing",
+        "comparing", "api", "runner", "storage", "manifest", "plan", "lock", "configuration",
+        "cli", "demo", "archive", "auditing",
         "report", "starting", "crate", "tracing", "help_pages",
     }  # fmt: skip
     for path in MODULES:
@@ -111,4 +112,5 @@ def test_only_the_runner_side_touches_files():
             function = node.func if isinstance(node, ast.Call) else None
             opens = isinstance(function, ast.Name) and function.id == "open"
             writes = isinstance(function, ast.Attribute) and function.attr in METHODS
-            assert not opens and not writes, f"{path.relative_to(PACKAGE)}:{node.lineno} touches a file"
+            touches = opens or writes
+            assert not touches, f"{path.relative_to(PACKAGE)}:{node.lineno} touches a file"

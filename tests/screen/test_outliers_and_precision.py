@@ -139,7 +139,8 @@ def test_failed_reference_materials_are_remarked_by_batch():
         {
             "technique": ["EPMA", "EPMA"], "batch": ["EPMA-1", "EPMA-1"], "element": ["Ni", "Co"], "analyte": ["Ni", "Co"],
             "n_spots": [4, 4], "n_materials": [1, 1], "bias": [1.3, 1.0], **number, "factor": [1.0, 1.0],
-            "drift_applied": [0.0, 0.0], "drift_left": [0.0, 0.0], "relative_dof": [None, None], "relative_sd": [0.1, 0.1], "matrix_sd": [0.0, 0.0],
+            "drift_applied": [0.0, 0.0], "drift_left": [0.0, 0.0], "relative_dof": [None, None],
+            "relative_sd": [0.1, 0.1], "matrix_sd": [0.0, 0.0],
             "origin": ["reference materials"] * 2, "passed": [False, True],
         },
     )  # fmt: skip

@@ -93,6 +93,6 @@ class CalibrateSettings(Settings):
         0.01,
         gt=0,
         lt=1,
-        description="p-value below which a linear drift is taken as supported, after Holm's correction over the analytes of a batch",
+        description="p-value below which a linear drift is taken as supported, after Holm's correction over a batch's analytes",
     )
     min_spots_for_drift: int = Field(6, ge=4, description="reference spots needed to test for drift")

@@ -15,7 +15,8 @@ class TotalSettings(TestSettings):
     action: Literal["drop", "mark"] = Field("drop", description="what a finding does")
     limits: dict[str, tuple[float, float]] = Field(
         default_factory=dict,
-        description="phase -> [low, high] in wt%, also directly as phase = [low, high]; beside the phase table's (98.5-101.5 for anhydrous minerals, common practice)",
+        description="phase -> [low, high] in wt%, also directly as phase = [low, high]; beside the phase table's "
+        "(98.5-101.5 for anhydrous minerals, common practice)",
     )
     sigmas: float = Field(
         2.0,
