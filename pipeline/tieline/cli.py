@@ -41,7 +41,8 @@ SetOption = Annotated[
     typer.Option(
         "--set",
         metavar="KEY=VALUE",
-        help="Try a setting without editing the file, such as screen.total.sigmas=3. Repeatable.",
+        help="Try a setting without editing the file, such as screen.total.sigmas=3; with --out the session's own "
+        "results stay. Repeatable.",
     ),
 ]
 
