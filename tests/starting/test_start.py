@@ -120,6 +120,20 @@ def test_uncertainties_that_say_what_they_are_are_not_asked():
     assert not any("absolute" in line or "standard uncertainties" in line for line in questions(text))
 
 
+@pytest.mark.parametrize("header", ["45Sc (ppm)", "45Sc_ppm", "45Sc ppm", "45Sc [ppm]"])
+def test_the_pattern_of_uncertainties_leaves_the_unit_of_the_values_out(header: str):
+    other = header.replace("45Sc", "51V")
+    text = first_configuration(
+        [table(f"Point,Run,Phase,{header},45Sc 2SE,{other},51V 2SE\na,X,ol,2,1,3,1\n")], "s"
+    )
+    assert tomllib.loads(text)["ingest"]["tables"][0]["sigma"]["pattern"] == "{analyte} 2SE"
+
+
+def test_a_table_without_uncertainties_is_asked_about():
+    text = first_configuration([table("Point,Run,Phase,Ni ppm\na,X,ol,2\n")], "s")
+    assert any("no uncertainty columns" in line for line in questions(text))
+
+
 def test_unknown_phases_are_asked_with_the_nearest_name():
     text = first_configuration([table("Point,Run,Phase,Ni ppm\na,X,olivne,2\nb,X,gl,3\n")], "s")
     assert any("olivne" in line and "olivine" in line for line in questions(text))

@@ -76,6 +76,8 @@ def audit(run_folder: Path, *, against: Path | None = None, with_seal: bool = Fa
         inputs=recorded_inputs(folder),
         sealed=is_sealed(run_folder),
     )
+    if with_seal and result.differences:
+        result.notes.append("not sealed: only a folder without differences is; mend or rerun it first")
     if with_seal and not result.differences and not result.sealed:
         result.notes.append(f"sealed: {seal(run_folder)} files")
         result.sealed = True

@@ -15,9 +15,9 @@ AMBIGUOUS = ("n.d.", "nd", "n. d.")
 def cell_remarks(table: Table, counts: Counts, asides: Asides) -> list[Remark]:
     """Ambiguous words, limits nobody stated, totals that do not fit, and what was set aside."""
     messages = []
-    decided = {"not_measured", "below_limit"} & table.model_fields_set
+    # From the settings in effect alone: whether a file spells a default out must not change a result.
     ambiguous = sum(counts.words[word] for word in AMBIGUOUS)
-    if ambiguous and not decided:
+    if ambiguous:
         messages.append(
             f'{ambiguous} cells say "n.d.", taken as not measured; if it means not detected, list it in below_limit.'
         )

@@ -11,7 +11,7 @@ from tieline.arrays import BoolArray
 from tieline.columns import SCREEN, VALUE_KEYS
 from tieline.correction import calibrated
 from tieline.reading.input_file import InputFile
-from tieline.results import StageResult
+from tieline.results import Remark, StageResult
 from tieline.screen.cations import cation_findings
 from tieline.screen.findings import findings_table
 from tieline.screen.groups import TestResult, groups_table
@@ -72,8 +72,23 @@ def screen(
             (verdict for result in results for verdict in result.verdicts), session.spots
         ),
     }
-    remarks = tuple(remark for result in results for remark in result.remarks)
+    remarks = (
+        *_without_uncertainties(session),
+        *(remark for result in results for remark in result.remarks),
+    )
     return StageResult(tables, resolution.ledger(), remarks)
+
+
+def _without_uncertainties(session: Session) -> list[Remark]:
+    """Techniques of which no uncertainty was reported: what that keeps from being tested."""
+    return [
+        Remark(
+            f"{measured.technique}: no uncertainties are reported, so that glass in crystals, zoning and the precision of "
+            "totals and cation sums are not tested; state them in ingest.tables.sigma"
+        )
+        for measured in session.techniques
+        if not np.isfinite(measured.sigma).any()
+    ]
 
 
 def _tests(session: Session, n_rows: int, settings: ScreenSettings) -> tuple[list[TestResult], UnmixedValues]:

@@ -13,7 +13,9 @@ Action = Literal["drop", "mark"]
 class Settings(BaseModel):
     """A frozen section of the configuration; unknown keys are refused."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
+    model_config = ConfigDict(
+        frozen=True, extra="forbid", allow_inf_nan=False, protected_namespaces=()
+    )
 
 
 def phases_into(

@@ -157,7 +157,9 @@ class ScreenSettings(Settings):
     """Section [screen]."""
 
     rulings: str | None = Field(
-        None, description="table of rulings: spot, analyte, verdict, analyst, date, reason"
+        None,
+        description="table of rulings with the columns spot, analyte (* for all), verdict (keep or drop), analyst, date, "
+        "reason, and table where one spot label occurs in several tables",
     )
     total: TotalSettings = Field(TotalSettings(), description="oxide totals")
     cations: CationSettings = Field(CationSettings(), description="cation sums")

@@ -104,7 +104,11 @@ def _columns(look: Look) -> list[str]:
 
 def _sigma(look: Look) -> list[str]:
     if look.sigma_pattern is None:
-        return []
+        return [
+            f"{QUESTION} no uncertainty columns are recognised. Without them glass in crystals cannot be found and "
+            "intervals rest on scatter alone. If there are such columns, state sigma below.",
+            '# sigma = { pattern = "{analyte} 1s", level = 1, relative = false }',
+        ]
     words = look.sigma_words
     level = words.level if words is not None else None
     relative = words.relative if words is not None else None

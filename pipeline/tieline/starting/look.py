@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
@@ -131,20 +132,24 @@ def _partner_pattern(
         own = by_name.get(analyte.label)
         if analyte.role != role or own is None:
             continue
-        header, plain = look.headers[index], own.strip()
-        base = plain if plain in header else analyte.label
-        pattern = (
-            header.replace(base, "{analyte}", 1)
-            if base in header
-            else header.replace(analyte.name, "{analyte}", 1)
-        )
-        patterns[pattern.strip()] += 1
-        words.setdefault(pattern.strip(), analyte)
+        pattern = _as_pattern(look.headers[index], own, analyte)
+        if pattern is not None:
+            patterns[pattern] += 1
+            words.setdefault(pattern, analyte)
     if not patterns:
         bare = _bare_partner(look, role)
         return (bare, recognise_analyte(f"Ni {bare}")) if bare else (None, None)
     best = patterns.most_common(1)[0][0]
     return best, words[best]
+
+
+def _as_pattern(header: str, own: str, analyte: Analyte) -> str | None:
+    """The header with {analyte} for the analyte's own header, with or without its unit; None where it is not in it."""
+    without_unit = re.split(r"[\s_(\[]", own.strip(), maxsplit=1)[0]
+    for text in (own.strip(), without_unit, analyte.label, analyte.name):
+        if text and text in header:
+            return header.replace(text, "{analyte}", 1).strip()
+    return None
 
 
 def _bare_partner(look: Look, role: str) -> str | None:
