@@ -147,11 +147,11 @@ def _material_labels(looks: Sequence[Look]) -> list[str]:
     """Phase labels that no phase is called by, on spots without an experiment: reference materials, it seems."""
     found = set()
     for look in looks:
-        experiments = look.texts.get("experiment")
-        if experiments is None:
+        phases, experiments = look.texts.get("phase"), look.texts.get("experiment")
+        if phases is None or experiments is None:
             continue
-        _, unknown = phases_of(look.texts.get("phase", []))
-        pairs = zip(look.texts.get("phase", []), experiments, strict=True)
+        _, unknown = phases_of(phases)
+        pairs = zip(phases, experiments, strict=True)
         found |= {phase for phase, experiment in pairs if phase in unknown and not experiment}
     return sorted(found)
 
