@@ -88,6 +88,7 @@ def _partition_table(
     is_value = (interval.kind == "value") | (np.isfinite(interval.value) & (interval.kind == "undetermined"))
     D = np.where(is_value, interval.value, np.nan)
     from_means = is_value & np.isfinite(budget.D[rows])
+    own_sd = np.where(is_value, interval.sd, np.nan)
     names = {name: labels(pairs, name).take(found.pair[rows]) for name in ("experiment", "alpha", "beta")}
     no_calibration, no_standard = sources.unknown(alpha, beta)
     reason = _with_remarks(
@@ -113,7 +114,7 @@ def _partition_table(
             "element": of("element", alpha),
             "D": D,
             # The interval's own sd counts factors from few measurements by Student's quantile; D_sd does not.
-            "D_sd": np.where(from_means, budget.D_sd[rows], np.where(is_value, interval.sd, np.nan)),
+            "D_sd": np.where(from_means & np.isfinite(interval.sd), budget.D_sd[rows], own_sd),
             "D_lo": interval.low,
             "D_hi": np.where(np.isfinite(interval.high), interval.high, np.nan),
             "confidence": np.full(len(rows), settings.confidence),
