@@ -13,9 +13,7 @@ Action = Literal["drop", "mark"]
 class Settings(BaseModel):
     """A frozen section of the configuration; unknown keys are refused."""
 
-    model_config = ConfigDict(
-        frozen=True, extra="forbid", allow_inf_nan=False, protected_namespaces=()
-    )
+    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False, protected_namespaces=())
 
 
 def phases_into(
