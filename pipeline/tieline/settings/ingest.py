@@ -112,7 +112,7 @@ class Table(Settings):
     )
     skip_rows: int = Field(0, ge=0, description="rows before the table")
     delimiter: str | None = Field(
-        None, min_length=1, max_length=1, description="field separator; found when not given"
+        None, pattern=r"^[\t !#-~]$", description="field separator, one ASCII character; found when not given"
     )
     decimal: Literal[".", ","] | None = Field(None, description="decimal mark; found when not given")
     thousands: Literal[",", ".", " ", "'"] | None = Field(
