@@ -9,7 +9,7 @@ DEV := $(VENV)/.dev-installed
 STANDARDS := .venv-standards
 PIP := $(BIN)/python -m pip --disable-pip-version-check --quiet
 
-.PHONY: demo test check format bench lock wheel-demo docs pages standards clean
+.PHONY: demo test check format bench faults fuzz lowest audit lock wheel-demo docs pages standards clean
 
 demo: $(CORE)  ## set up and reduce the demo session
 	@$(BIN)/tieline run configs/ember.toml --report
@@ -32,6 +32,22 @@ bench: $(DEV)  ## what is measured and never timed in a test
 	@$(BIN)/python tests/benchmarks/partition.py
 	@$(BIN)/python tests/benchmarks/commands.py
 	@$(BIN)/python tests/benchmarks/archive.py
+
+MINUTES ?= 10
+
+faults: $(DEV)  ## strike a run at every file operation, and tables of a gigabyte; about half an hour
+	@$(BIN)/python tests/faults/strikes.py kill fail full
+	@$(BIN)/python tests/faults/strikes.py timed --points 60
+	@TIELINE_HUGE=1 $(BIN)/python -m pytest -q tests/faults/test_hostile_tables.py tests/faults/test_platforms.py
+
+fuzz: $(DEV)  ## search for input that breaks a promise: make fuzz MINUTES=10
+	@$(BIN)/python tests/faults/fuzz.py --minutes $(MINUTES)
+
+lowest: $(DEV)  ## run the tests with the lowest versions of the dependencies that are allowed
+	@$(BIN)/python tests/lowest.py
+
+audit: $(DEV)  ## ask for known weaknesses of the pinned dependencies; needs a network
+	@$(BIN)/uv tool run pip-audit --require-hashes --disable-pip -r requirements/core.txt
 
 docs: $(DEV)  ## build the documentation in site/; a warning is an error
 	@$(BIN)/python -m sphinx -q -W --keep-going -b html -d build/doctrees docs site
