@@ -27,3 +27,10 @@ def test_below_one_degree_of_freedom_and_without_any():
 def test_extreme_probabilities_are_left_to_the_library():
     dof = np.linspace(0.5, 9.0, 300)
     np.testing.assert_array_equal(student_quantile(dof, 0.99999), special.stdtrit(dof, 0.99999))
+
+
+def test_the_place_in_the_array_does_not_show():
+    dof = np.random.default_rng(2).uniform(1.0, 30.0, 1001)
+    together = student_quantile(dof, 0.975)
+    alone = [student_quantile(dof[place : place + 1], 0.975)[0] for place in range(0, 1001, 50)]
+    assert together[::50].tobytes() == np.array(alone).tobytes()

@@ -25,8 +25,8 @@ def root(
 ) -> FloatArray:
     """Where each function passes zero between a and b, shape (K,); the end nearer zero where it does not.
 
-    Ridders (1979, IEEE Trans. Circuits Syst. 26:979). f_a, f_b: the functions at the ends. tolerance: length of
-    the last step, relative to the place.
+    Ridders (1979, IEEE Trans. Circuits Syst. 26:979), for simple zeros. f_a, f_b: the functions at the ends.
+    tolerance: length of the last step, relative to the place.
     """
     found = np.where(np.abs(f_a) < np.abs(f_b), a, b)
     which = np.flatnonzero(f_a * f_b < 0)
@@ -73,7 +73,6 @@ def summit(function: Function, left: FloatArray, right: FloatArray) -> tuple[Flo
         x = _next_place(*points)
         f = function(x, which)
         higher = f > f_top
-        going = np.abs(x - top) > tolerance
         # The lower of the two places becomes the end of the bracket on its side.
         lower, f_lower = np.where(higher, top, x), np.where(higher, f_top, f)
         is_left = lower < np.where(higher, x, top)
@@ -81,6 +80,7 @@ def summit(function: Function, left: FloatArray, right: FloatArray) -> tuple[Flo
         right, f_right = np.where(is_left, right, lower), np.where(is_left, f_right, f_lower)
         top, f_top = np.where(higher, x, top), np.where(higher, f, f_top)
         found[which], height[which] = top, f_top
+        going = right - left > 2.0 * tolerance
         points = [values[going] for values in (left, top, right, f_left, f_top, f_right, tolerance)]
         which = which[going]
     return found, height
@@ -101,7 +101,7 @@ def _next_place(
     shift = divide(0.5 * (rise * above - fall * below), rise + fall)
     middle = np.where(above > below, 0.5 * (top + right), 0.5 * (left + top))
     inside = (top + shift > left) & (top + shift < right)
-    # A place that nearly repeats the top would teach nothing: a step of half the tolerance settles it.
+    # A place that nearly repeats the top would teach nothing: steps of half the tolerance settle both sides.
     least = np.where(above > below, 0.5, -0.5) * tolerance
     shift = np.where(np.abs(shift) < 0.1 * tolerance, least, shift)
     return np.where(inside, top + shift, middle)
