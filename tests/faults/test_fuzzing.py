@@ -53,7 +53,7 @@ ODD = (
 
 @pytest.mark.parametrize("target", TARGETS)
 def test_damaged_seeds(target: str):
-    @settings(max_examples=25, deadline=None, suppress_health_check=list(HealthCheck))
+    @settings(max_examples=15, deadline=None, suppress_health_check=list(HealthCheck))
     @given(st.sampled_from(SEEDS[target]).flatmap(damaged))
     def check(data: bytes) -> None:
         TARGETS[target](data)

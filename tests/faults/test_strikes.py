@@ -18,10 +18,10 @@ pytestmark = pytest.mark.skipif(not hasattr(os, "fork"), reason="the strikes nee
 
 def test_struck_at_points_spread_over_a_run():
     kinds = ("kill", "timed", "fail", "full")
-    command = [sys.executable, Path(__file__).with_name("strikes.py"), *kinds, "--points", "4"]
+    command = [sys.executable, Path(__file__).with_name("strikes.py"), *kinds, "--points", "3"]
     done = subprocess.run(command, capture_output=True, text=True, check=False, timeout=600)
     assert done.returncode == 0, done.stdout + done.stderr
     accounts = [json.loads(line) for line in done.stdout.splitlines()]
     assert [account["kind"] for account in accounts] == [*kinds]
-    assert all(account["strikes"] == 4 and account["failed"] == 0 for account in accounts)
-    assert accounts[0]["ends"] == {"-9": 4}
+    assert all(account["strikes"] == 3 and account["failed"] == 0 for account in accounts)
+    assert accounts[0]["ends"] == {"-9": 3}
