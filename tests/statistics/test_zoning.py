@@ -43,7 +43,7 @@ def test_regression_agrees_with_least_squares_on_written_out_dummies():
         design = np.column_stack([distance[g, here], *(grain[g, here] == name for name in names)]).astype(
             float
         )
-        slope = np.linalg.lstsq(design, y)[0]
+        slope = np.linalg.lstsq(design, y, rcond=None)[0]
         degrees = len(y) - design.shape[1]
         variance = np.sum((y - design @ slope) ** 2) / degrees
         error = np.sqrt(variance * np.linalg.inv(design.T @ design)[0, 0])
