@@ -4,9 +4,12 @@ import numpy as np
 import pytest
 
 from screen.synthetic import Block, found, inputs, used
+from tieline.correction import calibrated
 from tieline.errors import InputError
 from tieline.reading.input_file import InputFile
 from tieline.screen import counts_by_test, read_rulings
+from tieline.screen.rulings import ruling_findings, rulings_as_written
+from tieline.screen.session import session_of
 
 ANALYTES = ("SiO2", "FeO", "MgO", "CaO", "MnO")
 OLIVINE = np.array([190700.0, 76200.0, 296100.0, 1430.0, 1160.0])
@@ -159,6 +162,41 @@ def test_all_problems_are_told_at_once():
     assert {(problem.row, problem.column) for problem in found_problems} == {
         (2, "date"), (2, "reason"), (3, "verdict"), (3, "analyst"),
     }  # fmt: skip
+
+
+def test_what_is_wrong_with_the_table_and_what_the_spots_do_not_know_is_told_together():
+    files = ruled(
+        "000-000,*,drop,X,2024-03-09,crack",
+        "000-000,*,keep,X,2024-03-09,no crack",
+        "000-00x,*,drop,X,2024-03-09,no such spot",
+        "000-001,NiO,drop,X,2024-03-09,no such analyte",
+        "000-001,*,maybe,X,9 March,neither a verdict nor a date",
+        "000-00y,*,drop,,2024-03-09,no such spot and nobody",
+        "000-001,CaO,drop,X,2024-03-09,a comma, not quoted",
+        "000-001,,drop,X,2024-03-09,which analyte?",
+        ",*,drop,X,2024-03-09,which spot?",
+    )
+    tables = inputs([olivine([1.0, 1.0])])
+    session = session_of(tables.convert, calibrated(tables.convert, tables.calibrate, tables.spots))
+    rulings, malformed = rulings_as_written(files)
+    with pytest.raises(InputError) as error:
+        ruling_findings(rulings, session, malformed)
+    assert sorted((problem.row, problem.column) for problem in error.value.problems if problem.column) == [
+        (3, "verdict"), (4, "spot"), (5, "analyte"), (6, "date"), (6, "verdict"), (7, "analyst"), (7, "spot"),
+        (9, "analyte"), (10, "spot"),
+    ]  # fmt: skip
+    assert [problem.row for problem in error.value.problems if not problem.column] == [8]
+    assert {problem.file for problem in error.value.problems} == {"rulings.csv"}
+
+
+def test_a_missing_column_does_not_hide_what_else_is_wrong():
+    files = ruled("000-000,*,maybe,X,crack", header="spot,analyte,verdict,analyst,reason\n")
+    with pytest.raises(InputError) as error:
+        read_rulings(files)
+    assert [(problem.row, problem.column) for problem in error.value.problems] == [
+        (1, "date"),
+        (2, "verdict"),
+    ]
 
 
 def test_a_missing_column_is_named():

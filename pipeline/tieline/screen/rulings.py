@@ -10,15 +10,20 @@ import numpy as np
 
 from tieline.arrays import labels
 from tieline.errors import InputError, Problem, nearest
+from tieline.reading.cell_text import fold
+from tieline.reading.formats import read_grid
 from tieline.reading.input_file import InputFile
-from tieline.reading.records import read_records
+from tieline.reading.layout import Layout
+from tieline.reading.records import read_texts
 from tieline.screen.findings import RULING, WHOLE_SPOT, Findings, no_findings
 from tieline.screen.session import Session
 
 COLUMNS = ("spot", "analyte", "verdict", "analyst", "date", "reason")
 OPTIONAL = ("table",)
+NAMES = (*COLUMNS, *OPTIONAL)
 VERDICTS = ("keep", "drop")
 ALL_ANALYTES = "*"
+IF_BLANK = {"analyte": "Write * for the whole spot."}
 
 
 @dataclass(frozen=True)
@@ -38,43 +43,68 @@ class Ruling:
 
 def read_rulings(files: Mapping[str, InputFile]) -> tuple[Ruling, ...]:
     """The rulings of every file given. Raises InputError with every incomplete or contradictory one."""
+    rulings, problems = rulings_as_written(files)
+    if problems:
+        raise InputError(problems)
+    return rulings
+
+
+def rulings_as_written(files: Mapping[str, InputFile]) -> tuple[tuple[Ruling, ...], tuple[Problem, ...]]:
+    """The rulings of every file given, and what is wrong with them as they stand.
+
+    A ruling with a problem is among the rulings all the same, blank cells as empty texts, so that
+    `ruling_findings` can tell in one go what else is wrong with it.
+    """
     rulings: list[Ruling] = []
     problems: list[Problem] = []
     for path in sorted(files):
         found, wrong = _rulings_of(files[path])
         rulings += found
         problems += wrong
-    problems += _contradictions(rulings)
-    if problems:
-        raise InputError(problems)
-    return tuple(rulings)
+    return tuple(rulings), (*problems, *_contradictions(rulings))
 
 
 def _rulings_of(file: InputFile) -> tuple[list[Ruling], list[Problem]]:
-    names = {name: name for name in (*COLUMNS, *OPTIONAL)}
-    problems: list[Problem] = []
     try:
-        records = read_records(file, names, required=frozenset(COLUMNS))
+        texts = read_texts(file, {name: name for name in NAMES}, frozenset(COLUMNS))
+        columns = {name: texts.columns[name].to_pylist() for name in NAMES}
+        rows, problems = texts.rows.tolist(), []
     except InputError as error:
+        # Missing columns and rows of another length are told; what is wrong elsewhere is told with them.
         problems = list(error.problems)
-        try:
-            # Missing columns and blank cells are told; what else is wrong in the file is told with them.
-            records = read_records(file, names, required=frozenset())
-        except InputError:
-            return [], problems
+        columns, rows = _readable(file)
     rulings = []
-    for position, row in enumerate(records["row"]):
-        record = {name: records[name][position] for name in names}
-        problems += _problems_of(file.path, int(row), record)
-        if all(record[name] for name in COLUMNS):
-            record["verdict"] = record["verdict"].casefold()
-            rulings.append(Ruling(**record, file=file.path, row=int(row)))
+    for position, row in enumerate(rows):
+        record = {name: column[position].strip() for name, column in columns.items()}
+        if not any(record.values()):
+            continue
+        problems += _problems_of(file.path, row, record)
+        record = dict.fromkeys(COLUMNS, "") | record
+        record["verdict"] = record["verdict"].casefold()
+        table = record.pop("table", "") or None
+        rulings.append(Ruling(**record, table=table, file=file.path, row=row))
     return rulings, sorted(problems, key=lambda problem: problem.row or 0)
 
 
-def _problems_of(path: str, row: int, record: Mapping[str, str | None]) -> list[Problem]:
-    problems = []
-    verdict, day = record["verdict"], record["date"]
+def _readable(file: InputFile) -> tuple[dict[str, list[str]], list[int]]:
+    """The columns that are there and the rows as long as the header, with their numbers."""
+    try:
+        grid = read_grid(file, Layout(expected_headers=NAMES, units_row=False))
+    except InputError:
+        return {}, []
+    places = {fold(header): index for index, header in enumerate(grid.headers)}
+    columns = {name: grid.column(places[name]).to_pylist() for name in NAMES if name in places}
+    return columns, grid.rows().tolist()
+
+
+def _problems_of(path: str, row: int, record: Mapping[str, str]) -> list[Problem]:
+    """What is wrong with one line by itself; a column that the table lacks has been told for all lines."""
+    problems = [
+        Problem("the cell is blank.", path, row, name, IF_BLANK.get(name, ""))
+        for name in COLUMNS
+        if record.get(name) == ""
+    ]
+    verdict, day = record.get("verdict"), record.get("date")
     if verdict and verdict.casefold() not in VERDICTS:
         problems.append(
             Problem(f'"{verdict}" is neither keep nor drop.', path, row, "verdict", "Write keep or drop.")
@@ -98,6 +128,8 @@ def _contradictions(rulings: Sequence[Ruling]) -> list[Problem]:
     first: dict[tuple[str, str | None, str], Ruling] = {}
     problems = []
     for ruling in rulings:
+        if ruling.verdict not in VERDICTS or not (ruling.spot and ruling.analyte):
+            continue
         earlier = first.setdefault((ruling.spot, ruling.table, ruling.analyte), ruling)
         if earlier.verdict != ruling.verdict:
             problems.append(
@@ -113,29 +145,31 @@ def _contradictions(rulings: Sequence[Ruling]) -> list[Problem]:
     return problems
 
 
-def ruling_findings(rulings: Sequence[Ruling], session: Session) -> Findings:
-    """Every ruling as a finding on its spot. Raises InputError for spots and analytes that do not exist."""
-    if not rulings:
+def ruling_findings(
+    rulings: Sequence[Ruling], session: Session, malformed: Sequence[Problem] = ()
+) -> Findings:
+    """Every ruling as a finding on its spot.
+
+    malformed: the problems of `rulings_as_written`. Raises InputError with these and with every spot and
+    analyte that does not exist.
+    """
+    if not rulings and not malformed:
         return no_findings(RULING)
-    spots, analytes, problems = [], [], []
+    spots, analytes, problems = [], [], list(malformed)
     index = _SpotIndex(session)
     decided: dict[tuple[int, int], Ruling] = {}
     for ruling in rulings:
-        found = index.spot(ruling)
+        found = index.place(ruling)
         if isinstance(found, Problem):
             problems.append(found)
-            continue
-        analyte = index.analyte(ruling, found)
-        if isinstance(analyte, Problem):
-            problems.append(analyte)
-            continue
-        earlier = decided.setdefault((found, analyte), ruling)
-        if earlier.verdict != ruling.verdict:
-            problems += _contradictions([earlier, _with_table(ruling, earlier)])
-        spots.append(found)
-        analytes.append(analyte)
+        elif found is not None:
+            earlier = decided.setdefault(found, ruling)
+            if earlier.verdict != ruling.verdict:
+                problems += _contradictions([earlier, _with_table(ruling, earlier)])
+            spots.append(found[0])
+            analytes.append(found[1])
     if problems:
-        raise InputError(problems)
+        raise InputError(dict.fromkeys(problems))
     unknown = np.full(len(spots), np.nan)
     return Findings(
         RULING,
@@ -167,6 +201,18 @@ class _SpotIndex:
         self._sorted = self._label.codes[self._order]
         self._code = {text: code for code, text in enumerate(self._label.texts)}
         self._analytes = {text: code for code, text in enumerate(session.analyte.texts)}
+
+    def place(self, ruling: Ruling) -> tuple[int, int] | Problem | None:
+        """Numbers of the ruling's spot and analyte; None where their cells are blank, which has been told."""
+        if not ruling.spot:
+            return None
+        spot = self.spot(ruling)
+        if isinstance(spot, Problem):
+            return spot
+        if not ruling.analyte:
+            return None
+        analyte = self.analyte(ruling, spot)
+        return analyte if isinstance(analyte, Problem) else (spot, analyte)
 
     def spot(self, ruling: Ruling) -> int | Problem:
         code = self._code.get(ruling.spot)
