@@ -25,7 +25,7 @@ from tieline.configuration import load
 from tieline.errors import InputError
 from tieline.manifest import manifest_text
 from tieline.provenance import bytes_digest, content_digest
-from tieline.report.write import refresh_report
+from tieline.report.write import refresh_report, write_report
 from tieline.storage import METADATA_KEY
 
 EXPERIMENTS = ("EM-02", "EM-05")
@@ -302,16 +302,19 @@ def test_settings_against_those_of_the_laboratory(own: Path, tmp_path: Path):
 
 @pytest.mark.skipif(shutil.which("sha256sum") is None, reason="needs sha256sum")
 def test_seal_is_a_checksum_file_and_keeps_later_runs_out(own: Path):
+    session = load(configs(own) / "ember.toml")
+    refresh_report(session)
     arguments = ["audit", str(own), "--seal"]
     assert CliRunner().invoke(app, arguments).exit_code == 0
     checked = subprocess.run(
         ["sha256sum", "-c", "--strict", "SHA256SUMS"], cwd=own, capture_output=True, check=False
     )
     assert checked.returncode == 0
-    session = load(configs(own) / "ember.toml", overrides=["classify.compatible_above=2"])
     before = {path.name: path.read_bytes() for path in own.iterdir()}
-    with pytest.raises(InputError, match="is sealed"):
-        runner.run(session)
+    stale = load(session.path, overrides=["classify.compatible_above=2"])
+    for write in (runner.run, write_report):
+        with pytest.raises(InputError, match="is sealed"):
+            write(stale)
     assert {path.name: path.read_bytes() for path in own.iterdir()} == before
     assert audit(own).differences == []
     (own / "note.txt").write_text("later", encoding="utf-8")
@@ -324,6 +327,66 @@ def test_folder_with_a_difference_is_not_sealed(own: Path):
     found = audit(own, with_seal=True)
     assert found.differences
     assert not (own / "SHA256SUMS").exists()
+
+
+def not_sealed(run_folder: Path) -> list[str]:
+    """What keeps a folder without differences from being sealed; the command says it with status 2."""
+    result = CliRunner().invoke(app, ["audit", str(run_folder), "--seal", "--json"])
+    found = json.loads(result.stdout)
+    assert (result.exit_code, found["differences"], found["sealed"]) == (2, [], False)
+    assert not (run_folder / "SHA256SUMS").exists()
+    return [note.removeprefix("not sealed: ") for note in found["notes"] if note.startswith("not sealed: ")]
+
+
+def test_a_folder_without_its_report_is_not_sealed(own: Path):
+    config = configs(own) / "ember.toml"
+    assert not_sealed(own) == [f"the report is missing; run `tieline report {config}`"]
+    refresh_report(load(config))
+    (own / "methods.txt").unlink()
+    found = audit(own, with_seal=True)
+    assert [(one.kind, one.detail.rpartition(": ")[2]) for one in found.differences] == [
+        ("stale", "methods.txt is missing")
+    ]
+    assert not found.sealed
+
+
+def test_a_folder_of_some_stages_is_not_sealed(own: Path, tmp_path: Path):
+    config = configs(own) / "ember.toml"
+    session = load(config, out=tmp_path / "short")
+    runner.run(session, until="classify")
+    assert not_sealed(session.run_folder) == [f"not run: assess; run `tieline run {config} --report`"]
+
+
+def test_a_folder_is_not_sealed_while_rulings_wait_to_be_run(own: Path):
+    config = configs(own) / "ember.toml"
+    refresh_report(load(config))
+    text = config.read_text(encoding="utf-8")
+    (config.parent / "later.csv").write_text(
+        "spot,analyte,verdict,analyst,date,reason\nEM02-ol-1,*,drop,A.N.,2026-03-20,crack\n", encoding="utf-8"
+    )
+    config.write_text(
+        text.replace('rulings = "ember/rulings.csv"', 'rulings = "later.csv"'), encoding="utf-8"
+    )
+    (reason,) = not_sealed(own)
+    assert "screen.rulings ember/rulings.csv → later.csv" in reason
+    assert f"run `tieline run {config} --report`" in reason
+    config.write_text("out = 1\n", encoding="utf-8")
+    (reason,) = not_sealed(own)
+    assert "can no longer be read" in reason
+
+
+def test_a_report_of_stale_results_says_what_to_run(own: Path):
+    config = configs(own) / "ember.toml"
+    rulings = configs(own) / "later.csv"
+    rulings.write_text("spot,analyte,verdict,analyst,date,reason\n", encoding="utf-8")
+    with pytest.raises(InputError) as error:
+        write_report(load(config, overrides=['screen.rulings="later.csv"']))
+    (problem,) = error.value.problems
+    assert (
+        "(rulings ember/rulings.csv → later.csv; ember/rulings.csv is no longer an input; later"
+        in problem.message
+    )
+    assert problem.remedy == f"Run `tieline run {config}` first."
 
 
 def test_folder_that_is_no_run_folder_is_refused(tmp_path: Path):

@@ -294,13 +294,19 @@ def audit(
     ] = None,
     seal: Annotated[
         bool,
-        typer.Option("--seal", help="Seal the folder if nothing differs; later runs refuse to write there."),
+        typer.Option(
+            "--seal",
+            help="Seal the folder if nothing differs, its report is current and nothing was decided since the run; later "
+            "runs refuse to write there.",
+        ),
     ] = False,
     json: JsonOption = False,
 ) -> None:
     """Verify every file against its recorded digests and run the chain again; list what was left out and why.
 
-    Exit status 3 where anything differs. Example: tieline audit example_runs/ember
+    Exit status 3 where anything differs, 2 where nothing does but the folder was to be sealed and is not ready.
+
+    Example: tieline audit example_runs/ember
     """
     from tieline.auditing.audit import audit as audit_folder
 
@@ -313,6 +319,8 @@ def audit(
         show_audit(result)
     if result.differences:
         raise typer.Exit(DIFFERENT)
+    if seal and not result.sealed:
+        raise typer.Exit(WRONG_INPUT)
 
 
 @app.command()

@@ -13,6 +13,7 @@ from tieline.auditing.files import file_differences, recorded_inputs
 from tieline.auditing.folder import Difference, RunFolder, read_run_folder
 from tieline.auditing.recompute import Recomputation, ledger_differences, recompute
 from tieline.auditing.seal import is_sealed, seal, seal_differences
+from tieline.auditing.sealable import configuration_now, missing_stages, obstacles
 from tieline.stages import STAGES
 
 
@@ -46,8 +47,9 @@ def audit(run_folder: Path, *, against: Path | None = None, with_seal: bool = Fa
     """Verifies a run folder and says what a person should know of it.
 
     Files against recorded digests, the accounts against the files, and everything against the chain run
-    again. With `with_seal` a folder without differences is sealed. Raises InputError where there is no run
-    folder, or the file given as `against` cannot be read.
+    again. With `with_seal` a folder without differences that lacks nothing (see `sealable`) is sealed; where it
+    is not, the notes say why. Raises InputError where there is no run folder, or the file given as `against`
+    cannot be read.
     """
     folder = read_run_folder(run_folder)
     differs = deviations(folder.settings, against) if folder.settings is not None else []
@@ -76,12 +78,20 @@ def audit(run_folder: Path, *, against: Path | None = None, with_seal: bool = Fa
         inputs=recorded_inputs(folder),
         sealed=is_sealed(run_folder),
     )
-    if with_seal and result.differences:
-        result.notes.append("not sealed: only a folder without differences is; mend or rerun it first")
-    if with_seal and not result.differences and not result.sealed:
-        result.notes.append(f"sealed: {seal(run_folder)} files")
-        result.sealed = True
+    if with_seal:
+        _seal(result, folder)
     return result
+
+
+def _seal(result: Audit, folder: RunFolder) -> None:
+    if result.differences:
+        result.notes.append("not sealed: only a folder without differences is; mend or rerun it first")
+    elif not result.sealed:
+        lacking = obstacles(folder)
+        result.notes += [f"not sealed: {text}" for text in lacking]
+        if not lacking:
+            result.notes.append(f"sealed: {seal(folder.path)} files")
+            result.sealed = True
 
 
 def verify(folder: RunFolder) -> list[Difference]:
@@ -120,7 +130,7 @@ def _notes(folder: RunFolder, again: Recomputation) -> list[str]:
     version = folder.manifest.get("tieline")
     if version is not None and version != __version__:
         notes.append(f"the run was made by version {version}, this is {__version__}")
-    missing = [stage.name for stage in STAGES if stage.name not in folder.files]
+    missing = missing_stages(folder)
     if missing:
         notes.append(f"stages that were not run: {', '.join(missing)}")
     if again.why_not:
@@ -136,29 +146,5 @@ def _notes(folder: RunFolder, again: Recomputation) -> list[str]:
     ]
     if revised:
         notes.append(f"stages revised since the run: {', '.join(revised)}")
-    notes += _configuration_now(folder)
+    notes += configuration_now(folder)
     return notes
-
-
-def _configuration_now(folder: RunFolder) -> list[str]:
-    """Whether the configuration still says what was run; a later edit does not make the run wrong."""
-    from tieline.configuration import load
-    from tieline.errors import InputError
-    from tieline.plan import settings_differences
-
-    path = folder.configuration()
-    if folder.settings is None or path is None:
-        return []
-    if not path.is_file():
-        return [f"the configuration is no longer at {path}"]
-    try:
-        now = load(path, overrides=[str(text) for text in folder.manifest.get("overrides", [])]).settings
-    except InputError:
-        return [
-            f"the configuration {path} can no longer be read; the settings in effect are in effective.toml"
-        ]
-    before, after = (settings.model_dump(mode="json") for settings in (folder.settings, now))
-    for dump in (before, after):
-        dump["ingest"]["reference_materials"]["names"] = None  # filled in from the accepted values by a run
-    lines = settings_differences(before, after)
-    return [f"the configuration was changed after the run: {'; '.join(lines)}"] if lines else []

@@ -14,7 +14,7 @@ from tieline.columns import TABLES
 from tieline.configuration import Session
 from tieline.correction import Concentrations, calibrated
 from tieline.errors import InputError, Problem
-from tieline.plan import table_path
+from tieline.plan import Verdict, table_path
 from tieline.reading.input_file import InputFile
 from tieline.report.currency import finished_records
 from tieline.screen.rulings import Ruling, read_rulings
@@ -74,7 +74,7 @@ def read_source(session: Session) -> Source:
     """Reads a complete and current run folder; raises InputError where a stage is missing or stale."""
     from tieline import runner
 
-    _refuse_unless_current(runner.status(session))
+    _refuse_unless_current(runner.status(session), session)
     return read_finished(session)
 
 
@@ -95,18 +95,12 @@ def optional_table(source: Source, name: str) -> pa.Table | None:
     return table if name in TABLES and table is not None and table.num_rows else None
 
 
-def _refuse_unless_current(verdicts: list[Any]) -> None:
-    problems = [
-        Problem(
-            f"{verdict.stage} is {verdict.state}"
-            f"{f' ({chr(59).join(verdict.reasons)})' if verdict.reasons else ''}: a report would describe other settings.",
-            remedy="Run `tieline run CONFIG` first.",
-        )
-        for verdict in verdicts
-        if verdict.state != "current"
-    ]
-    if problems:
-        raise InputError(problems[:1])
+def _refuse_unless_current(verdicts: list[Verdict], session: Session) -> None:
+    for verdict in verdicts:
+        if verdict.state != "current":
+            reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
+            message = f"{verdict.stage} is {verdict.state}{reasons}: a report would describe other settings."
+            raise InputError(Problem(message, remedy=f"Run `tieline run {session.path}` first."))
 
 
 def _filed_rulings(session: Session) -> tuple[Ruling, ...]:

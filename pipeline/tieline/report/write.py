@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
-from tieline.lock import locked
+from tieline.lock import locked, refuse_if_sealed
 from tieline.report.csv_files import csv_bytes
 from tieline.report.currency import PAGE, report_verdict
 from tieline.report.curves import curves
@@ -41,6 +41,7 @@ def write_report(session: Session, figures: Path | None = None) -> list[Path]:
     Everything is made before anything is written. Raises InputError when a stage is missing or stale, or the
     folder is sealed or being written.
     """
+    refuse_if_sealed(session.run_folder)  # before anything that a run would have to mend
     source = read_source(session)
     made = {session.run_folder / name: data for name, data in report_files(source).items()}
     if figures is not None:
