@@ -14,7 +14,7 @@ from typer.testing import CliRunner
 from test_audit import short_session
 from tieline import runner
 from tieline.cli import app
-from tieline.comparing import changed_classes, changed_coefficients, compare, read_reduction
+from tieline.comparing import changed_classes, changed_coefficients, compare, read_reduction, read_reductions
 from tieline.configuration import load
 from tieline.errors import InputError
 
@@ -151,5 +151,29 @@ def test_command_prints_and_refuses(root: Path, tmp_path: Path):
     assert result.exit_code == 0
     assert "classify.highly_incompatible_below 0.01 → 0.1" in result.stdout
     assert json.loads(CliRunner().invoke(app, [*arguments, "--json"]).stdout)["settings"]
+    shutil.copytree(root / "a" / "ember", tmp_path / "lacking")
+    (tmp_path / "lacking" / "classify.parquet").unlink()
     with pytest.raises(InputError, match=r"classify\.parquet: no such file"):
-        read_reduction(tmp_path)
+        read_reduction(tmp_path / "lacking")
+
+
+def test_what_is_no_run_folder_is_told_once_and_for_both(root: Path, tmp_path: Path):
+    table = tmp_path / "probe.csv"
+    table.write_text("Point,MgO\n", encoding="utf-8")
+    for path, message in (
+        (table, "is a file, not a run folder."),
+        (table / "x", "no such run folder."),
+        (tmp_path / "nothing", "no such run folder."),
+        (tmp_path, "is no run folder: it holds neither run.json nor a stage file."),
+    ):
+        with pytest.raises(InputError) as error:
+            read_reductions(path, root / "a" / "ember")
+        (problem,) = error.value.problems
+        assert (problem.message, problem.file) == (message, str(path))
+        assert "<out>/<session>" in problem.remedy
+    with pytest.raises(InputError) as error:
+        read_reductions(table, root / "a")
+    assert [problem.file for problem in error.value.problems] == [str(table), str(root / "a")]
+    assert error.value.problems[1].remedy == f"Run folders in it: {root / 'a' / 'ember'}."
+    result = CliRunner().invoke(app, ["compare", str(table), str(tmp_path)])
+    assert isinstance(result.exception, InputError)

@@ -123,6 +123,11 @@ def open_run(folder: str | Path) -> Run:
     """What a run wrote, to be read. Raises InputError where the folder is no run folder."""
     path = Path(folder)
     if not (path / "run.json").exists():
+        from tieline.run_folders import run_folder_problem
+
+        problem = run_folder_problem(path)
+        if problem is not None:
+            raise InputError(problem)
         remedy = "Name a folder that a run wrote, such as <out>/<session>."
         raise InputError(Problem("holds no run.json.", str(path), remedy=remedy))
     return Run(path)

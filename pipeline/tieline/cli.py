@@ -335,7 +335,7 @@ def compare(
     """
     from tieline import comparing
 
-    found = comparing.compare(comparing.read_reduction(run_a), comparing.read_reduction(run_b))
+    found = comparing.compare(*comparing.read_reductions(run_a, run_b))
     if json:
         _print_json(found)
     else:

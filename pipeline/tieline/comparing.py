@@ -18,6 +18,7 @@ import pyarrow.parquet as pq
 from tieline.errors import InputError, Problem
 from tieline.manifest import EFFECTIVE, read_manifest
 from tieline.plan import settings_differences, table_path
+from tieline.run_folders import run_folder_problem
 
 KEYS = ("experiment", "alpha", "beta", "element")
 READ = {
@@ -40,8 +41,25 @@ class Reduction:
     rows: Mapping[str, list[dict[str, Any]]]
 
 
+def read_reductions(*run_folders: Path) -> list[Reduction]:
+    """All of them, or one InputError with what is wrong with any."""
+    read: list[Reduction] = []
+    problems: list[Problem] = []
+    for run_folder in run_folders:
+        try:
+            read.append(read_reduction(run_folder))
+        except InputError as error:
+            problems += error.problems
+    if problems:
+        raise InputError(dict.fromkeys(problems))
+    return read
+
+
 def read_reduction(run_folder: Path) -> Reduction:
-    """Raises InputError where the folder lacks a stage file or its settings, or they cannot be read."""
+    """Raises InputError where it is no run folder, lacks a stage file or its settings, or they cannot be read."""
+    problem = run_folder_problem(run_folder)
+    if problem is not None:
+        raise InputError(problem)
     problems, rows = [], {}
     for name, columns in READ.items():
         try:
@@ -59,7 +77,9 @@ def read_reduction(run_folder: Path) -> Reduction:
 
 def _unreadable(path: Path, error: Exception) -> Problem:
     missing = isinstance(error, FileNotFoundError)
-    reason = "no such file" if missing else f"cannot be read ({str(error).splitlines()[0]})"
+    own = error.strerror if isinstance(error, OSError) else None
+    what = (own or str(error).strip() or type(error).__name__).splitlines()[0]
+    reason = "no such file" if missing else f"cannot be read ({what})"
     return Problem(f"{reason}.", str(path), remedy="Name folders of complete runs, such as <out>/<session>.")
 
 

@@ -49,6 +49,8 @@ def page_for(problems: Sequence[Problem]) -> str | None:
     files = [problem.file or "" for problem in problems]
     if any(problem.message.startswith("not decided:") for problem in problems):
         return "own-tables"
+    if any("run folder" in problem.message for problem in problems):
+        return None
     if any(file.endswith(".toml") for file in files):
         return "settings"
     if any(

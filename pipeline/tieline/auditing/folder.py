@@ -14,9 +14,10 @@ import pyarrow.parquet as pq
 
 from tieline.columns import TABLES
 from tieline.configuration import validate
-from tieline.errors import DefectError, InputError, Problem
+from tieline.errors import DefectError, InputError
 from tieline.manifest import EFFECTIVE, MANIFEST, manifest_digest, manifest_text
 from tieline.provenance import bytes_digest, content_digest
+from tieline.run_folders import run_folder_problem
 from tieline.settings import SessionSettings
 from tieline.stages import STAGES
 from tieline.storage import METADATA_KEY
@@ -93,22 +94,15 @@ class RunFolder:
 
 def read_run_folder(path: Path) -> RunFolder:
     """Reads everything there is. Raises InputError where the folder is no run folder."""
-    if not path.is_dir():
-        raise InputError(Problem("no such run folder.", str(path), remedy="Name a folder that a run wrote."))
+    problem = run_folder_problem(path)
+    if problem is not None:
+        raise InputError(problem)
     folder = RunFolder(path)
     for stage in STAGES:
         for name in stage.outputs:
             file = path / f"{name}.parquet"
             if file.exists():
                 folder.files[name] = read_stage_file(file, name, stage.name)
-    if not folder.files and not (path / MANIFEST).exists():
-        raise InputError(
-            Problem(
-                f"holds neither {MANIFEST} nor a stage file.",
-                str(path),
-                remedy="Name a folder that a run wrote, such as <out>/<session>.",
-            )
-        )
     _read_manifest(folder)
     _read_settings(folder)
     return folder
