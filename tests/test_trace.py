@@ -22,6 +22,7 @@ from tieline.cli import app
 from tieline.configuration import load
 from tieline.errors import InputError
 from tieline.terminal_trace import trace_tree
+from tieline.tracing.finding import find_coefficient
 from tieline.tracing.page import Source, trace
 
 Page = dict[str, Any]
@@ -599,3 +600,23 @@ def test_command_and_its_refusals(tmp_path: Path):
         assert told in str(error)
     with pytest.raises(InputError, match="stale"):
         runner.finished(load(config, overrides=["partition.confidence=0.9"]), "classify")
+
+
+@pytest.mark.parametrize(
+    ("alpha", "beta", "remedy"),
+    [
+        ("ol", "gl", 'Did you mean "olivine/glass"?'),
+        ("olivine", "Melt", 'Did you mean "olivine/glass"?'),
+        ("glass", "cpx", 'Did you mean "clinopyroxene/glass"?'),
+        ("green", "glass", 'Did you mean "olivine/glass"?'),
+        ("olivin", "glass", 'Did you mean "olivine/glass"?'),
+        ("titanite", "fluid", "There are: olivine/glass, clinopyroxene/glass."),
+    ],
+)
+def test_a_pair_that_is_not_there_names_the_one_that_is_meant(source, alpha, beta, remedy):
+    spellings = {**source.settings.ingest.phases, "olivine": ("green",)}
+    with pytest.raises(InputError) as error:
+        find_coefficient(source.tables["classify"], "EM-02", alpha, beta, "Ni", spellings)
+    (problem,) = error.value.problems
+    assert problem.message == f'no D of the pair "{alpha}/{beta}" in EM-02.'
+    assert problem.remedy == remedy

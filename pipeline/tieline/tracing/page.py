@@ -12,7 +12,6 @@ import pyarrow as pa
 from tieline.arrays import flags, labels, numbers, spot_codes
 from tieline.auditing.summary import ruling_parts
 from tieline.correction import CALIBRATION_KEYS, STANDARD_KEYS, calibrated, sequence_of
-from tieline.errors import InputError, Problem, nearest
 from tieline.notation import written
 from tieline.pairing import with_parts
 from tieline.reading.input_file import InputFile
@@ -22,6 +21,7 @@ from tieline.tracing.budget import budget_lines
 from tieline.tracing.calibration import calibration_account
 from tieline.tracing.cells import Spot, sigma_rule, source_cells, table_settings
 from tieline.tracing.factors import assumed_by_spot, internal_standard_account, unit_account
+from tieline.tracing.finding import find_coefficient
 from tieline.tracing.interval import class_account, interval_account
 from tieline.tracing.means import mean_account, with_constant
 from tieline.tracing.rows import chosen_rows, rows_of
@@ -44,7 +44,8 @@ class Source:
 
 def trace(source: Source, experiment: str, alpha: str, beta: str, element: str) -> dict[str, Any]:
     """The page of one D as a tree of plain data. Raises InputError where there is no such D, naming what there is."""
-    row = _find(source.tables["classify"], experiment, alpha, beta, element)
+    spellings = source.settings.ingest.phases
+    row = find_coefficient(source.tables["classify"], experiment, alpha, beta, element, spellings)
     sides = {"alpha": alpha, "beta": beta}
     groups = {
         side: {"experiment": experiment, "phase": phase, "element": element}
@@ -66,20 +67,6 @@ def trace(source: Source, experiment: str, alpha: str, beta: str, element: str) 
         **{f"{side}_phase": phase for side, phase in phases.items()},
         "alternatives": _alternatives(source.tables["partition.alternatives"], row),
     }
-
-
-def _find(classify: pa.Table, experiment: str, alpha: str, beta: str, element: str) -> Row:
-    wanted = dict(zip(KEYS, (experiment, alpha, beta, element), strict=True))
-    rows = classify.to_pylist()
-    for name in KEYS:
-        known = list(dict.fromkeys(row[name] for row in rows))
-        rows = [row for row in rows if row[name] == wanted[name]]
-        if not rows:
-            what = {"alpha": "numerator phase", "beta": "denominator phase"}.get(name, name)
-            remedy = nearest(str(wanted[name]), known) or f"There are: {', '.join(known)}."
-            raise InputError(Problem(f'no D with the {what} "{wanted[name]}" here.', remedy=remedy))
-    found: Row = rows[0]
-    return found
 
 
 def _limit_rows(limits: pa.Table, key: Row) -> pa.Table:
