@@ -135,7 +135,7 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="assess",
         revision=1,
-        inputs=("partition", "partition.covariance", "pair", "ingest.experiments"),
+        inputs=("partition", "partition.covariance", "pair", "calibrate", "ingest.experiments"),
         outputs=(
             "assess",
             "assess.exchange",

@@ -5,7 +5,7 @@ import pandas as pd
 import pytest
 
 from assess.frames import partition
-from tieline.assess.bulk import bulk_partition
+from tieline.assess.bulk import Modes, bulk_partition
 from tieline.assess.mass_balance import mass_balance_tables
 
 # invented element contents, ppm
@@ -33,7 +33,7 @@ def means(loss: float = 0.0, error: float = 0.005, seed: int = 1, phases=tuple(C
                     "se_ppm": error * true,
                 }
             )
-    return pd.DataFrame(rows)
+    return pd.DataFrame(rows).assign(calibration_sd=np.nan, calibration_key=1, own_sd=0.0)
 
 
 def start(**change) -> pd.DataFrame:
@@ -113,23 +113,25 @@ def test_no_phases_measured():
     assert found.checks["verdict"].tolist() == ["cannot tell"]
 
 
-def modes():
-    return {
-        "A": (("clinopyroxene", "glass", "olivine"), np.array([0.25, 0.6, 0.15]), np.diag([1e-4, 1e-4, 1e-4]))
-    }
+def modes(**changes):
+    given = {
+        "phases": ("clinopyroxene", "glass", "olivine"), "proportions": np.array([0.25, 0.6, 0.15]),
+        "covariance": np.diag([1e-4, 1e-4, 1e-4]), "quantile": 1.96,
+    }  # fmt: skip
+    return {"A": Modes(**(given | changes))}
 
 
-def bulk_table(**olivine):
-    return partition(
-        [
-            {"alpha": "olivine", "element": "La", "D": 0.001} | olivine,
-            {"alpha": "clinopyroxene", "element": "La", "D": 0.08},
-        ]
-    )
+def bulk_table(shared=0.0, **olivine):
+    """Invented D of two crystals over glass, with intervals of two standard uncertainties."""
+    rows = [
+        {"alpha": "olivine", "element": "La", "D": 0.001} | olivine,
+        {"alpha": "clinopyroxene", "element": "La", "D": 0.08},
+    ]
+    return partition(rows, common_sd=shared)
 
 
 def test_bulk_coefficient_weights_by_mode():
-    found = bulk_partition(bulk_table(), modes(), "glass").iloc[0]
+    found = bulk_partition(bulk_table(), modes()).iloc[0]
     assert found["kind"] == "value"
     assert found["bulk_D"] == pytest.approx((0.15 * 0.001 + 0.25 * 0.08) / 0.4)
     share = 0.25 / 0.4
@@ -141,21 +143,58 @@ def test_bulk_coefficient_weights_by_mode():
 
 
 def test_a_shared_melt_adds_up():
-    alone = bulk_partition(bulk_table(D=0.08, D_sd=0.004), modes(), "glass").iloc[0]
-    shared = bulk_partition(bulk_table(D=0.08, D_sd=0.004), modes(), "glass", {("A", "La"): 0.05}).iloc[0]
+    alone = bulk_partition(bulk_table(D=0.08, D_sd=0.004), modes()).iloc[0]
+    shared = bulk_partition(bulk_table(0.05, D=0.08, D_sd=0.004), modes()).iloc[0]
     assert alone["bulk_D_sd"] < shared["bulk_D_sd"]
     assert shared["bulk_D_sd"] == pytest.approx(0.004)
+    assert shared["bulk_D_hi"] == pytest.approx(0.08 * 1.1)
+    assert alone["bulk_D_hi"] < shared["bulk_D_hi"]
+
+
+def test_one_crystal_has_its_own_interval():
+    table = bulk_table(D_lo=0.0005, D_hi=0.0030)
+    only = modes(
+        phases=("olivine", "glass"), proportions=np.array([0.2, 0.8]), covariance=np.diag([0.01, 0.01])
+    )
+    found = bulk_partition(table, only).iloc[0]
+    assert (found["bulk_D"], found["bulk_D_lo"], found["bulk_D_hi"]) == pytest.approx((0.001, 0.0005, 0.0030))
 
 
 def test_limits_and_gaps_do_not_become_numbers():
-    limit = bulk_partition(
-        bulk_table(kind="upper-limit", D=np.nan, D_sd=np.nan, D_hi=0.01), modes(), "glass"
-    ).iloc[0]
+    limit = bulk_partition(bulk_table(kind="upper-limit", D=np.nan, D_sd=np.nan, D_hi=0.01), modes()).iloc[0]
     assert limit["kind"] == "bounds"
     assert np.isnan(limit["bulk_D"])
+    assert np.isnan(limit["bulk_D_sd"])
     assert limit["bulk_D_lo"] < 0.25 / 0.4 * 0.08 < limit["bulk_D_hi"]
-    gap = bulk_partition(bulk_table().iloc[1:], modes(), "glass").iloc[0]
+    gap = bulk_partition(bulk_table().iloc[1:], modes()).iloc[0]
     assert gap["kind"] == "undetermined"
-    assert "olivine" in gap["reason"]
-    unsure = bulk_partition(bulk_table(kind="undetermined"), modes(), "glass").iloc[0]
-    assert unsure["kind"] == "undetermined"
+    assert "no D for olivine" in gap["reason"]
+    unsure = bulk_partition(bulk_table(kind="undetermined"), modes()).iloc[0]
+    assert unsure["reason"] == "D of olivine is undetermined"
+    melt_only = modes(phases=("glass",), proportions=np.ones(1), covariance=np.zeros((1, 1)))
+    assert bulk_partition(bulk_table(), melt_only).iloc[0]["reason"] == "no crystals"
+
+
+def test_a_phase_that_may_be_there_counts_in_the_uncertainty():
+    spinel = modes(
+        phases=("clinopyroxene", "olivine"),
+        proportions=np.array([0.25, 0.0]),
+        covariance=np.diag([1e-4, 1e-4]),
+    )
+    sure = modes(
+        phases=("clinopyroxene", "olivine"),
+        proportions=np.array([0.25, 0.0]),
+        covariance=np.diag([1e-4, 0.0]),
+    )
+    table = bulk_table(D=40.0)
+    wide, narrow = (bulk_partition(table, given).iloc[0] for given in (spinel, sure))
+    assert wide["bulk_D"] == narrow["bulk_D"] == pytest.approx(0.08)
+    assert wide["bulk_D_hi"] - 0.08 > 3 * 0.01 / 0.25 * 40 / 2
+
+
+def test_every_experiment_and_denominator_has_its_own():
+    table = pd.concat(
+        [bulk_table(), bulk_table().assign(beta="fluid", D=2.0), bulk_table().assign(experiment="B")]
+    )
+    found = bulk_partition(table, modes())
+    assert list(zip(found["experiment"], found["beta"], strict=True)) == [("A", "fluid"), ("A", "glass")]

@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from tieline.statistics.mass_balance import mix, shortfall, weighted_sum
+from tieline.statistics.mass_balance import mix, shortfall
 
 # invented compositions, oxide wt%: SiO2 TiO2 Al2O3 FeO MgO CaO Na2O K2O
 CRYSTAL_A = [40.0, 0.05, 0.05, 10.0, 49.0, 0.2, 0.01, 0.0]
@@ -127,15 +127,40 @@ def test_impossible_input_is_refused(change):
         mix(start, sd, PHASES, phases_sd)
 
 
-def test_weighted_sum_against_simulation():
-    rng = np.random.default_rng(6)
-    weights, values = np.array([0.3, 0.1]), np.array([0.02, 0.5])
-    weights_covariance = np.array([[4e-4, -1e-4], [-1e-4, 2e-4]])
-    values_covariance = np.array([[4e-6, 1e-5], [1e-5, 4e-4]])
-    mean, sd = weighted_sum(weights, weights_covariance, values, values_covariance)
-    w = rng.multivariate_normal(weights, weights_covariance, 200_000)
-    v = rng.multivariate_normal(values, values_covariance, 200_000)
-    drawn = np.sum(w * v, axis=1) / w.sum(axis=1)
-    assert mean == pytest.approx((0.3 * 0.02 + 0.1 * 0.5) / 0.4)
-    assert sd == pytest.approx(drawn.std(), rel=0.03)
-    assert np.isnan(weighted_sum(np.zeros(2), weights_covariance, values, values_covariance)[0])
+def test_an_error_that_all_phases_share_is_one_of_the_sum():
+    """A calibration common to all phases is known no better for being counted once per phase."""
+    start, sd = PHASES @ np.array([0.2, 0.15, 0.65]), errors(PHASES @ np.array([0.2, 0.15, 0.65]))
+    none = np.zeros_like(PHASES)
+    start[4] *= 1.03
+    common = mix(start, sd, PHASES, none, shared_sd=0.02 * PHASES[None])
+    # The same variance of the sum, said of the starting composition.
+    found = common.proportions
+    as_start = mix(start, np.hypot(sd, 0.02 * PHASES @ found), PHASES, none)
+    np.testing.assert_allclose(common.proportions, as_start.proportions, atol=0.002)
+    assert common.chi_square == pytest.approx(as_start.chi_square, rel=0.01)
+    apart = mix(start, sd, PHASES, 0.02 * PHASES)
+    assert apart.chi_square > 1.1 * common.chi_square
+    sessions = np.zeros((2, *PHASES.shape))
+    sessions[0, :, :2], sessions[1, :, 2] = 0.02 * PHASES[:, :2], 0.02 * PHASES[:, 2]
+    two = mix(start, sd, PHASES, none, shared_sd=sessions)
+    assert common.chi_square < two.chi_square < apart.chi_square
+
+
+def test_shared_errors_cover():
+    rng = np.random.default_rng(14)
+    truth = np.array([0.2, 0.15, 0.65])
+    start, hits, cases = PHASES @ truth, np.zeros(3), 80
+    for _ in range(cases):
+        phases = PHASES * (1 + 0.02 * rng.standard_normal(8))[:, None]
+        spots = 0.005 * phases + 0.01
+        phases = phases + spots * rng.standard_normal(phases.shape)
+        own = 0.002 * start + 0.01
+        found = mix(start + own * rng.standard_normal(8), own, phases, spots, shared_sd=0.02 * phases[None])
+        hits += (found.low <= truth) & (truth <= found.high)
+    assert np.all(hits / cases > 0.95 - 3.5 * np.sqrt(0.95 * 0.05 / cases))
+
+
+def test_shared_errors_of_another_shape_are_refused():
+    start, sd = PHASES @ np.array([0.2, 0.15, 0.65]), np.ones(8)
+    with pytest.raises(ValueError, match="shape"):
+        mix(start, sd, PHASES, np.ones_like(PHASES), shared_sd=np.ones((8, 3)))

@@ -35,7 +35,10 @@ class BalanceTables:
 
 @dataclass(frozen=True)
 class _Balance:
-    """Oxide wt% of one experiment: start (m,), phases (m, k), with errors; why elements could not be used."""
+    """Oxide wt% of one experiment: start (m,), phases (m, k), with errors; why elements could not be used.
+
+    shared_sd (g, m, k): the calibrations' part, one variable per g and element for all phases of a session.
+    """
 
     elements: tuple[str, ...]
     phases: tuple[str, ...]
@@ -43,6 +46,7 @@ class _Balance:
     start_sd: FloatArray
     composition: FloatArray
     composition_sd: FloatArray
+    shared_sd: FloatArray
     unusable: dict[str, str]
 
 
@@ -58,10 +62,10 @@ def mass_balance_tables(
 ) -> BalanceTables:
     """Balance every experiment that has a starting composition.
 
-    pair: columns experiment, phase, element, mean_ppm, se_ppm as in the stage file; zones of a phase (`olivine (rim)`) are
-    left aside, and of several means of one element the most precise is taken. starting: experiment, element, value_ppm,
-    sd_ppm. relative_sd: calibration uncertainty added to the phases' errors. losable: elements kept out of the fit and judged
-    by what the others leave for them.
+    pair: columns experiment, phase, element, mean_ppm, se_ppm as in the stage file, with the factors of `mean_factors`; zones
+    of a phase (`olivine (rim)`) are left aside, and of several means of one element the most certain is taken. starting:
+    experiment, element, value_ppm, sd_ppm. relative_sd: calibration uncertainty where none is known; phases measured in one
+    session share it. losable: elements kept out of the fit and judged by what the others leave for them.
     """
     import pandas as pd
 
@@ -75,12 +79,12 @@ def mass_balance_tables(
         kept = np.array([element not in losable for element in balance.elements], dtype=bool)
         mixture = mix(
             balance.start[kept], balance.start_sd[kept], balance.composition[kept], balance.composition_sd[kept],
-            sum_to_one=sum_to_one, confidence=confidence,
+            shared_sd=balance.shared_sd[:, kept], sum_to_one=sum_to_one, confidence=confidence,
         )  # fmt: skip
         mixtures[experiment] = (balance.phases, mixture)
         lost = shortfall(
             mixture, balance.start[~kept], balance.start_sd[~kept],
-            balance.composition[~kept], balance.composition_sd[~kept],
+            balance.composition[~kept], balance.composition_sd[~kept], balance.shared_sd[:, ~kept],
         )  # fmt: skip
         proportions += _proportion_rows(experiment, balance.phases, mixture)
         residuals += _residual_rows(experiment, balance, kept, mixture, lost)
@@ -104,41 +108,65 @@ RESIDUAL_COLUMNS = (
 
 def _collect(own: pd.DataFrame, given: pd.DataFrame, relative_sd: float) -> _Balance:
     """Elements measured, with errors, in the start and in every phase."""
-    best = own.assign(relative=own["se_ppm"] / own["mean_ppm"].abs()).sort_values("relative", kind="stable")
-    best = best.drop_duplicates(["phase", "element"])
-    means = best.pivot(index="element", columns="phase", values="mean_ppm").sort_index(axis=1)
-    errors = best.pivot(index="element", columns="phase", values="se_ppm").sort_index(axis=1)
+    best = _most_certain(own, relative_sd)
+    means, errors, calibration, keys = (
+        best.pivot(index="element", columns="phase", values=name).sort_index(axis=1)
+        for name in ("mean_ppm", "error", "calibration", "calibration_key")
+    )
     start = given.set_index("element")
-    unusable: dict[str, str] = {}
-    elements: list[str] = []
-    for element in sorted(start.index):
-        if element not in means.index or means.loc[element].isna().any():
-            missing = [
-                phase
-                for phase in means.columns
-                if element not in means.index or np.isnan(means.loc[element, phase])
-            ]
-            unusable[element] = f"not measured in {', '.join(missing) or 'any phase'}"
-        elif errors.loc[element].isna().any() and relative_sd == 0:
-            unusable[element] = "a mean has no standard error"
-        elif not start.loc[element, "sd_ppm"] >= 0:
-            unusable[element] = "the starting composition has no error"
-        else:
-            elements.append(element)
+    unusable = _unusable(means, errors, start)
+    elements = [element for element in sorted(start.index) if element not in unusable]
     factor = wt_percent_per_ppm(elements)[:, None]
     composition = means.loc[elements].to_numpy(dtype=np.float64) * factor
-    errors_wt = np.nan_to_num(errors.loc[elements].to_numpy(dtype=np.float64)) * factor
+    composition_sd = errors.loc[elements].to_numpy(dtype=np.float64) * factor
+    shared = _by_session(
+        composition * calibration.loc[elements].to_numpy(dtype=np.float64), keys.loc[elements].to_numpy()
+    )
     begin = start.loc[elements, ["value_ppm", "sd_ppm"]].to_numpy(dtype=np.float64) * factor
-    composition_sd = np.hypot(errors_wt, relative_sd * composition)
-    certain = (begin[:, 1] == 0) & np.all(composition_sd == 0, axis=1)
+    certain = (begin[:, 1] == 0) & np.all(composition_sd == 0, axis=1) & np.all(shared == 0, axis=(0, 2))
     unusable |= {
         element: "no error anywhere" for element, sure in zip(elements, certain, strict=True) if sure
     }
     kept = ~certain
     return _Balance(
         tuple(element for element, keep in zip(elements, kept, strict=True) if keep), tuple(means.columns),
-        begin[kept, 0], begin[kept, 1], composition[kept], composition_sd[kept], unusable,
+        begin[kept, 0], begin[kept, 1], composition[kept], composition_sd[kept], shared[:, kept], unusable,
     )  # fmt: skip
+
+
+def _most_certain(own: pd.DataFrame, relative_sd: float) -> pd.DataFrame:
+    """One mean per phase and element; calibration: its relative sd, error: in ppm, of what no other phase shares."""
+    calibration = own["calibration_sd"].fillna(relative_sd)
+    size = own["mean_ppm"].abs()
+    spots = own["se_ppm"].where(own["se_ppm"].notna() | (calibration == 0), 0.0)
+    error = np.hypot(spots, own["own_sd"] * size)
+    ranked = own.assign(calibration=calibration, error=error, total=np.hypot(error / size, calibration))
+    return ranked.sort_values("total", kind="stable").drop_duplicates(["phase", "element"])
+
+
+def _unusable(means: pd.DataFrame, errors: pd.DataFrame, start: pd.DataFrame) -> dict[str, str]:
+    """Element of the start -> why it cannot enter."""
+    found: dict[str, str] = {}
+    for element in sorted(start.index):
+        measured = element in means.index
+        missing = [phase for phase in means.columns if not measured or np.isnan(means.loc[element, phase])]
+        if missing or not measured:
+            found[element] = f"not measured in {', '.join(missing) or 'any phase'}"
+        elif errors.loc[element].isna().any():
+            found[element] = "a mean has no standard error"
+        elif not start.loc[element, "sd_ppm"] >= 0:
+            found[element] = "the starting composition has no error"
+    return found
+
+
+def _by_session(sd: FloatArray, keys: FloatArray) -> FloatArray:
+    """The errors sd (m, k) laid out by session (g, m, k): entries of a row with one key stand in one layer."""
+    layers = np.zeros((max(sd.shape[1], 1), *sd.shape))
+    for row, own in enumerate(keys):
+        layer = np.unique(own, return_inverse=True)[1].reshape(-1)
+        layers[layer, row, np.arange(len(own))] = sd[row]
+    used = layers.any(axis=(1, 2))
+    return layers[used]
 
 
 def _proportion_rows(experiment: str, phases: tuple[str, ...], mixture: Mixture) -> list[dict[str, Any]]:

@@ -9,6 +9,7 @@ import numpy as np
 import pyarrow as pa
 
 from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
+from tieline.assess.mean_factors import mean_factors
 from tieline.assess.starting_composition import Start, read_starting_composition
 from tieline.columns import EVIDENCE
 from tieline.reading.input_file import InputFile
@@ -20,7 +21,7 @@ if TYPE_CHECKING:
 
 PARTITION_COLUMNS = (
     "experiment", "alpha", "beta", "element", "D", "D_sd", "D_lo", "D_hi", "kind", "dof", "share_counting",
-    "share_spread", "mean_beta_ppm", "se_beta_ppm",
+    "share_spread", "mean_beta_ppm", "se_beta_ppm", "shared_sd_alpha", "shared_sd_beta", "batch_alpha", "batch_beta",
 )  # fmt: skip
 PAIR_COLUMNS = ("experiment", "phase", "element", "batch", "mean_ppm", "se_ppm", "dof")
 INVERSE_TEMPERATURE = "10^4/T"
@@ -31,6 +32,7 @@ def assess(
     partition: pa.Table,
     partition_covariance: pa.Table,
     pair: pa.Table,
+    calibrate: pa.Table,
     ingest_experiments: pa.Table,
     *,
     settings: AssessSettings,
@@ -42,6 +44,7 @@ def assess(
     """
     start = read_starting_composition(files)
     D, means = frame(partition, PARTITION_COLUMNS), frame(pair, PAIR_COLUMNS)
+    means = means.join(mean_factors(pair, calibrate))
     covariance = frame(partition_covariance, partition_covariance.column_names)
     conditions = conditions_frame(ingest_experiments, settings)
     parts = [
@@ -119,14 +122,14 @@ def _mass_balance(
 ) -> Frames:
     import pandas as pd
 
-    from tieline.assess.bulk import bulk_partition
+    from tieline.assess.bulk import bulk_partition, common_sd, modes_of_mixture, stated_modes
     from tieline.assess.evidence import CHECK_COLUMNS
     from tieline.assess.mass_balance import mass_balance_tables
 
     own = settings.mass_balance
     result: Frames = {"assess": pd.DataFrame(columns=list(CHECK_COLUMNS))}
     modes = {
-        experiment: _stated_modes(given, settings.modes.relative_sd)
+        experiment: stated_modes(given, settings.modes.relative_sd, settings.confidence)
         for experiment, given in settings.modes.proportions.items()
     }
     if start:
@@ -139,31 +142,14 @@ def _mass_balance(
             "assess": balance.checks, "assess.proportions": balance.proportions, "assess.balance": balance.residuals,
         }  # fmt: skip
         found = {
-            experiment: (phases, mixture.proportions, mixture.covariance)
+            experiment: modes_of_mixture(phases, mixture)
             for experiment, (phases, mixture) in balance.mixtures.items()
             if np.isfinite(mixture.proportions).all()
         }
         modes = found | modes
     if modes:
-        result["assess.bulk"] = pd.concat(
-            bulk_partition(D, modes, beta, _beta_relative_sd(own), settings.confidence)
-            for beta, own in D.groupby("beta", sort=True)
-        )
+        result["assess.bulk"] = bulk_partition(D.assign(common_sd=common_sd(D)), modes)
     return result
-
-
-def _beta_relative_sd(D: pd.DataFrame) -> dict[tuple[str, str], float]:
-    """(experiment, element) -> relative standard error of the denominator's mean, which the D of all crystals share."""
-    known = D[(D["mean_beta_ppm"] > 0) & D["se_beta_ppm"].notna()]
-    relative = known["se_beta_ppm"] / known["mean_beta_ppm"]
-    return dict(zip(zip(known["experiment"], known["element"], strict=True), relative, strict=True))
-
-
-def _stated_modes(
-    given: Mapping[str, float], relative_sd: float
-) -> tuple[tuple[str, ...], np.ndarray, np.ndarray]:
-    amounts = np.array(list(given.values()))
-    return tuple(given), amounts, np.diag((relative_sd * amounts) ** 2)
 
 
 def _starting_frame(

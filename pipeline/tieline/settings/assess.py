@@ -119,7 +119,8 @@ class MassBalanceSettings(Settings):
     phases_relative_sd: float = Field(
         0.01,
         ge=0,
-        description="relative uncertainty from calibration, added to the standard errors of the phase means; common practice",
+        description="relative uncertainty of a calibration of which `calibrate` knows none; common practice. Phases measured "
+        "in one session share it",
     )
     losable: tuple[str, ...] = Field(
         ("Fe", "Na", "K"),

@@ -1,6 +1,6 @@
 """Proportions of components that add up to a known mixture, with errors in all of them.
 
-Public: `mix`, `shortfall`, `weighted_sum`.
+Public: `mix`, `shortfall`.
 """
 
 from __future__ import annotations
@@ -59,19 +59,29 @@ class _Problem:
     mixture_variance: FloatArray
     components: FloatArray
     component_variance: FloatArray
+    shared_sd: FloatArray
     sum_to_one: bool
 
     def residuals(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
         raw = self.mixture - x @ self.components.T
-        variance = self.mixture_variance + x**2 @ self.component_variance.T
-        root = np.sqrt(variance)
-        slope = -self.components[None] / root[:, :, None]
-        slope = slope - (raw / root**3)[:, :, None] * self.component_variance[None] * x[:, None, :]
+        root = np.sqrt(self.variance(x))
+        shared = np.einsum("gmk,nk->ngm", self.shared_sd, x)
+        half_slope = self.component_variance * x[:, None, :] + np.einsum(
+            "ngm,gmk->nmk", shared, self.shared_sd
+        )
+        slope = -self.components[None] / root[:, :, None] - (raw / root**3)[:, :, None] * half_slope
         if not self.sum_to_one:
             return raw / root, slope
         excess = (x.sum(axis=1, keepdims=True) - 1.0) / _SUM_SD
         row = np.full((len(x), 1, x.shape[1]), 1.0 / _SUM_SD)
         return np.concatenate([raw / root, excess], axis=1), np.concatenate([slope, row], axis=1)
+
+    def variance(self, x: FloatArray) -> FloatArray:
+        """Of the residuals, (n, m), at the proportions x (n, k): shared errors add up before they are squared."""
+        shared = np.einsum("gmk,nk->ngm", self.shared_sd, x)
+        return np.asarray(
+            self.mixture_variance + x**2 @ self.component_variance.T + np.sum(shared**2, axis=1)
+        )
 
 
 def mix(
@@ -80,27 +90,31 @@ def mix(
     components: FloatArray,
     components_sd: FloatArray,
     *,
+    shared_sd: FloatArray | None = None,
     sum_to_one: bool = False,
     confidence: float = 0.95,
 ) -> Mixture:
     """Non-negative proportions x of the components with mixture = components · x.
 
     mixture, mixture_sd: (m,); components, components_sd: (m, k), all in one unit, errors independent and not all zero in any
-    row. Minimises sum (mixture - A x)² / (sd² + sum x² sd_A²) over x >= 0, which is maximum likelihood for normal errors
-    on both sides (a structural relation; Fuller 1987, Measurement Error Models, section 2.3; for mineral modes Albarède
-    1995, Introduction to Geochemical Modeling, section 5.2; both from memory). Intervals follow the profile likelihood.
-    The unweighted fit is that of Bryan et al. (1969), Science 163:926.
+    row. shared_sd (g, m, k): errors that the components of a row have in common, such as that of one calibration:
+    entries of one g and row are one variable, and a negative one goes against the others. Minimises
+    sum (mixture - A x)² / (sd² + sum x² sd_A² + sum_g (sum x sd_g)²) over x >= 0, which is maximum likelihood for
+    normal errors on both sides (a structural relation; Fuller 1987, Measurement Error Models, section 2.3; for mineral
+    modes Albarède 1995, Introduction to Geochemical Modeling, section 5.2; both from memory). Intervals follow the
+    profile likelihood. The unweighted fit is that of Bryan et al. (1969), Science 163:926.
 
     "cannot tell" where there are fewer rows than components, or components that others can replace. Raises ValueError for
     missing numbers, negative errors, shapes that do not fit, or a row without any error.
     """
-    problem = _problem(mixture, mixture_sd, components, components_sd, sum_to_one)
+    problem = _problem(mixture, mixture_sd, components, components_sd, shared_sd, sum_to_one)
     rows, count = problem.components.shape
     if count == 0 or rows + sum_to_one < count:
         return _no_mixture(rows, count, f"{rows} elements cannot determine {count} proportions")
     plain = _Problem(
-        problem.mixture, np.ones(rows), problem.components, np.zeros_like(problem.components), sum_to_one
-    )
+        problem.mixture, np.ones(rows), problem.components, np.zeros_like(problem.components),
+        np.zeros((0, rows, count)), sum_to_one,
+    )  # fmt: skip
     unweighted, _cost = _solve(plain)
     x, cost = _solve(problem)
     free = np.ones(count, dtype=bool)
@@ -120,7 +134,7 @@ def mix(
     quantile = float(special.stdtrit(dof, tail) if scale > 1 else special.ndtri(tail))
     limits = _limits(problem, x, cost, whole, scale * quantile**2, free)
     residuals = problem.mixture - problem.components @ x
-    variance = problem.mixture_variance + problem.component_variance @ x**2
+    variance = problem.variance(x[None, :])[0]
     plain_residuals = problem.mixture - problem.components @ unweighted
     return Mixture(
         FITTED, "", x, np.where(present, np.sqrt(scale * np.diag(spread)), np.nan), limits[:, 0], limits[:, 1], scale * spread,
@@ -130,7 +144,12 @@ def mix(
 
 
 def _problem(
-    mixture: FloatArray, mixture_sd: FloatArray, components: FloatArray, components_sd: FloatArray, one: bool
+    mixture: FloatArray,
+    mixture_sd: FloatArray,
+    components: FloatArray,
+    components_sd: FloatArray,
+    shared_sd: FloatArray | None,
+    one: bool,
 ) -> _Problem:
     arrays = [
         np.asarray(array, dtype=np.float64) for array in (mixture, mixture_sd, components, components_sd)
@@ -138,11 +157,16 @@ def _problem(
     b, b_sd, a, a_sd = arrays
     if b.ndim != 1 or a.ndim != 2 or b_sd.shape != b.shape or a_sd.shape != a.shape or len(a) != len(b):
         raise ValueError("a mixture (m,) needs components (m, k), each with errors of the same shape")
-    if not all(np.all(np.isfinite(array)) for array in arrays) or np.any(b_sd < 0) or np.any(a_sd < 0):
-        raise ValueError("concentrations must be finite and errors must not be negative")
-    if np.any((b_sd == 0) & np.all((a_sd == 0) | (a == 0), axis=1)):
+    shared = np.zeros((0, *a.shape)) if shared_sd is None else np.asarray(shared_sd, dtype=np.float64)
+    if shared.ndim != 3 or shared.shape[1:] != a.shape:
+        raise ValueError("shared errors need the shape (g, m, k) of g sources and components (m, k)")
+    if not all(np.all(np.isfinite(array)) for array in (*arrays, shared)):
+        raise ValueError("concentrations and their errors must be finite")
+    if np.any(b_sd < 0) or np.any(a_sd < 0):
+        raise ValueError("errors must not be negative")
+    if np.any((b_sd == 0) & np.all(((a_sd == 0) & (shared == 0).all(axis=0)) | (a == 0), axis=1)):
         raise ValueError("every element needs an error in the mixture or in a phase that contains it")
-    return _Problem(b, b_sd**2, a, a_sd**2, one)
+    return _Problem(b, b_sd**2, a, a_sd**2, shared, one)
 
 
 def _solve(problem: _Problem) -> tuple[FloatArray, float]:
@@ -193,16 +217,20 @@ def shortfall(
     start_sd: FloatArray,
     components: FloatArray,
     components_sd: FloatArray,
+    shared_sd: FloatArray | None = None,
 ) -> Shortfall:
     """1 - (components · x) / start for elements kept out of the fit, to first order.
 
-    start, start_sd: (j,); components, components_sd: (j, k). The elements must not have entered `mix`, or their loss would
-    have drawn the proportions along. nan where start is not above zero or there are no proportions.
+    start, start_sd: (j,); components, components_sd: (j, k); shared_sd (g, j, k) as for `mix`. The elements must not have
+    entered `mix`, or their loss would have drawn the proportions along. nan where start is not above zero or there are no
+    proportions.
     """
     x = mixture.proportions
     start = np.where(np.asarray(start) > 0, start, np.nan)
     held = components @ x
     variance = np.einsum("jk,kl,jl->j", components, mixture.covariance, components) + components_sd**2 @ x**2
+    if shared_sd is not None:
+        variance = variance + np.sum((shared_sd @ x) ** 2, axis=0)
     ratio = held / start
     sd = np.sqrt(variance + (ratio * start_sd) ** 2) / start
     loss, half = 1.0 - ratio, mixture.quantile * sd
@@ -213,23 +241,3 @@ def shortfall(
         else 1.0 - special.stdtr(max(mixture.dof, 1), np.abs(z))
     )
     return Shortfall(loss, sd, loss - half, loss + half, z, 2.0 * tail)
-
-
-def weighted_sum(
-    weights: FloatArray,
-    weights_covariance: FloatArray,
-    values: FloatArray,
-    values_covariance: FloatArray,
-) -> tuple[float, float]:
-    """sum w v / sum w and its standard deviation, to first order, weights and values being independent.
-
-    weights, values: (k,) with covariances (k, k). nan where the weights do not add up to more than zero.
-    """
-    total = float(np.sum(weights))
-    if not total > 0:
-        return np.nan, np.nan
-    shares = weights / total
-    mean = float(shares @ values)
-    slope = (values - mean) / total
-    variance = shares @ values_covariance @ shares + slope @ weights_covariance @ slope
-    return mean, float(np.sqrt(max(float(variance), 0.0)))
