@@ -5,6 +5,7 @@ import pytest
 
 from tieline.statistics.means import paule_mandel
 from tieline.statistics.overlap_covariance import (
+    VarianceFunction,
     element_inflation,
     fit_directions,
     fit_variance_function,
@@ -47,6 +48,48 @@ def test_no_term_is_negative_whatever_the_sigmas(order):
     assert function.quadratic >= 0
     if order == "flat":
         np.testing.assert_allclose(function.at(np.full((1, 1), 1.5)), 0.49, rtol=1e-6)
+
+
+def test_one_known_sigma_is_the_same_at_every_concentration():
+    """All terms do equally well then; which is taken must not be left to rounding."""
+    rng = np.random.default_rng(5)
+    x = rng.uniform(1.0, 90.0, (200, 5, 1))
+    sigma = np.full(x.shape, np.nan)
+    sigma[:, 2] = rng.uniform(0.1, 2.0, (200, 1))
+    function = fit_variance_function(x, sigma)
+    np.testing.assert_allclose(function.constant, sigma[:, 2] ** 2, rtol=1e-8)
+    assert not function.linear.any()
+    assert not function.quadratic.any()
+
+
+def test_terms_are_the_best_non_negative_ones_whatever_the_scatter():
+    from scipy.optimize import nnls
+
+    rng = np.random.default_rng(6)
+    x, sigma = rng.uniform(1.0, 50.0, (1, 12, 30)), rng.uniform(0.5, 2.0, (1, 12, 30))
+    function = fit_variance_function(x, sigma)
+    for element in range(30):
+        at, variance = x[0, :, element], sigma[0, :, element] ** 2
+        weight, terms = 1 / variance, np.stack([at**0, at, at**2], axis=1)
+        for _ in range(2):
+            found = nnls(terms * weight[:, None], variance * weight)[0]
+            weight = 1 / np.maximum(terms @ found, 0.05 * variance.mean())
+        np.testing.assert_allclose(function.at(x)[0, :, element], terms @ found, rtol=1e-6)
+
+
+def test_variance_along_a_line_is_that_at_its_points():
+    """Also where the line comes from or leads to negative concentrations, or runs along the floor."""
+    rng = np.random.default_rng(7)
+    shape = (40, 6)
+    function = VarianceFunction(
+        *(rng.uniform(0.0, 1.0, shape) * rng.integers(0, 2, shape) for _ in range(3)),
+        rng.uniform(0, 0.5, shape),
+    )
+    start, direction = rng.uniform(-2.0, 5.0, shape), rng.uniform(-9.0, 9.0, shape)
+    fraction = rng.uniform(0.0, 1.0, (40, 7))
+    fraction[:, :2] = [0.0, 1.0]
+    points = start[:, None, :] + fraction[..., None] * direction[:, None, :]
+    np.testing.assert_allclose(function.along(start, direction, fraction), function.at(points), rtol=1e-12)
 
 
 def test_unknown_sigmas_give_no_function_and_partly_known_ones_do():
@@ -111,10 +154,32 @@ def test_spread_equals_paule_and_mandel_for_one_element():
     expected = paule_mandel(x.ravel(), np.full(x.size, sigma**2), group, 50)
     squared = (x - x.mean(axis=1, keepdims=True))[..., None] ** 2
     constant = np.full(squared.shape, sigma**2)
+    one = np.ones((50, 1))
     spread = raise_spread(
-        squared, constant, np.full(squared.shape, level**2), np.full(50, spots - 1.0), np.zeros(50), 8
+        squared, constant, one * level**2, np.ones((50, 1, 1)), one * (spots - 1.0), np.zeros((50, 1)), 8
     )
-    np.testing.assert_allclose(spread * level**2, expected, rtol=1e-6, atol=1e-9)
+    np.testing.assert_allclose(spread[:, 0] * level**2, expected, rtol=1e-6, atol=1e-9)
+
+
+def test_each_class_has_the_spread_it_has_alone_and_elements_of_none_have_no_say():
+    rng = np.random.default_rng(13)
+    squared, counting = rng.chisquare(1, (2, 30, 6, 5)) * 9.0, rng.uniform(0.5, 2.0, (30, 6, 5))
+    level_squared = rng.uniform(1.0, 9.0, (30, 5))
+    in_class = np.array([[1.0, 0.0], [1.0, 0.0], [0.0, 1.0], [0.0, 1.0], [0.0, 0.0]]) * np.ones((30, 1, 1))
+    expected, start = np.full((30, 2), 10.0), np.zeros((30, 2))
+    both = raise_spread(squared[0], counting, level_squared, in_class, expected, start)
+    assert np.all(both > 0)
+    for column, elements in ((0, slice(0, 2)), (1, slice(2, 4))):
+        one = np.ones((30, 2, 1))
+        alone = raise_spread(
+            squared[0][..., elements],
+            counting[..., elements],
+            level_squared[:, elements],
+            one,
+            expected[:, :1],
+            start[:, :1],
+        )
+        np.testing.assert_allclose(both[:, column], alone[:, 0], rtol=1e-12)
 
 
 def test_inflation_is_one_for_expected_scatter_and_follows_clear_excess():

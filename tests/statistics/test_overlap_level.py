@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from scipy.stats import norm
 
-from tieline.statistics.overlap_level import clean_level, clean_level_without
+from tieline.statistics.overlap_level import clean_level, clean_levels
 
 
 def brute_force(t, sd, grid):
@@ -46,7 +46,8 @@ def test_leaving_a_spot_out_equals_the_level_of_the_others():
     t[:, 0] += 30.0
     t, sd = 1e-3 * t, 1e-3 * sd
     usable = np.ones(t.shape, dtype=bool)
-    without = clean_level_without(t, sd**2, usable)
+    level, without = clean_levels(t, sd**2, usable)
+    assert level.mean.tolist() == clean_level(t, sd**2, usable).mean.tolist()
     for s in range(6):
         others = usable.copy()
         others[:, s] = False
@@ -84,7 +85,8 @@ def test_one_spot_far_below_does_not_pull_the_level_down():
 def test_groups_without_spots_have_no_level():
     t, variance = np.array([[0.1, np.nan], [np.nan, np.nan]]), np.full((2, 2), 1e-4)
     usable = np.isfinite(t)
-    level, without = clean_level(t, variance, usable), clean_level_without(t, variance, usable)
+    level, (same, without) = clean_level(t, variance, usable), clean_levels(t, variance, usable)
+    np.testing.assert_array_equal(same.mean, level.mean)
     assert level.mean[0] == pytest.approx(0.1, abs=0.02)
     assert np.isnan(level.mean[1])
     assert np.isnan(without.mean[0, 0])

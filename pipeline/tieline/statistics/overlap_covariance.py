@@ -7,15 +7,16 @@ may be in any one unit; the results named fraction are dimensionless.
 from typing import NamedTuple
 
 import numpy as np
-import numpy.typing as npt
 
 from tieline.statistics.groups import BoolArray, FloatArray
+from tieline.statistics.small_systems import inverse_root, times
 
 # Every way of keeping some of the three terms b, a·x, (r·x)²: the best of those with no negative term is the
 # non-negative least-squares solution.
 _TERM_SUBSETS = ((0,), (1,), (2,), (0, 1), (0, 2), (1, 2), (0, 1, 2))
 _LOWEST_SHARE_OF_SMALLEST_VARIANCE = 0.1
 _KAPPA_PRIOR_WEIGHT = 8.0
+_TIE = 1e-13
 
 
 class MixingFit(NamedTuple):
@@ -43,9 +44,29 @@ class VarianceFunction(NamedTuple):
         linear, quadratic = self.linear[:, None, :], self.quadratic[:, None, :]
         return np.maximum(self.constant[:, None, :] + x * (linear + x * quadratic), self.floor[:, None, :])
 
-    def rows(self, index: npt.NDArray[np.intp]) -> "VarianceFunction":
-        """The same function for the groups at `index`."""
-        return VarianceFunction(*(part[index] for part in self))
+    def along(self, start: FloatArray, direction: FloatArray, fraction: FloatArray) -> FloatArray:
+        """Counting variance (G, n, p) at start + fraction·direction, 0 <= fraction (G, n) <= 1.
+
+        Along a line the function is a parabola, but for elements that one end has negative or at the floor.
+        """
+        end = start + direction
+        parabola = np.stack(
+            [
+                self.constant + start * (self.linear + start * self.quadratic),
+                direction * (self.linear + 2.0 * start * self.quadratic),
+                direction**2 * self.quadratic,
+            ],
+            axis=1,
+        )
+        powers = np.stack([np.ones_like(fraction), fraction, fraction**2], axis=2)
+        variance: FloatArray = powers @ parabola
+        lowest = np.minimum(start, end)
+        bent = (lowest < 0) | (self.constant + lowest * (self.linear + lowest * self.quadratic) < self.floor)
+        group, element = np.nonzero(bent)
+        x = start[group, element, None] + fraction[group] * direction[group, element, None]
+        own = VarianceFunction(*(part[group, element, None] for part in self))
+        variance[group, :, element] = own.at(x)
+        return variance
 
 
 def fit_variance_function(values: FloatArray, sigmas: FloatArray) -> VarianceFunction:
@@ -61,58 +82,64 @@ def fit_variance_function(values: FloatArray, sigmas: FloatArray) -> VarianceFun
     known = np.isfinite(values) & (sigmas > 0)
     x = np.where(known, np.maximum(values, 0.0), 0.0)
     variance = np.where(known, sigmas, 1.0) ** 2
+    is_known = known * 1.0
     count = known.sum(axis=1)
     largest = np.max(x, axis=1, initial=0.0)
     scale = np.where(largest > 0, largest, 1.0)
-    x = x / scale[:, None, :]
-    reference = np.sum(np.where(known, variance, 0.0), axis=1) / np.maximum(count, 1)
-    coefficients = np.zeros((*reference.shape, 3))
-    weight_variance = np.where(known, variance, 1.0)
+    x /= scale[:, None, :]
+    unit = np.where(count > 0, over_spots(is_known * variance) / np.maximum(count, 1), 1.0)
+    unit += np.finfo(float).tiny
+    relative = np.where(known, variance / unit[:, None, :], 1.0)
+    weight_variance = relative
+    coefficients = np.zeros((3, *unit.shape))
     for _ in range(2):
-        weight = np.where(known, 1.0 / weight_variance**2, 0.0)
-        coefficients = _nonnegative_quadratic(x, variance, weight, reference)
-        fitted = coefficients[:, None, :, 0] + x * (
-            coefficients[:, None, :, 1] + x * coefficients[:, None, :, 2]
+        coefficients = _nonnegative_quadratic(x, relative, is_known / weight_variance**2)
+        fitted = coefficients[0][:, None, :] + x * (
+            coefficients[1][:, None, :] + x * coefficients[2][:, None, :]
         )
-        weight_variance = np.where(known, np.maximum(fitted, 0.05 * reference[:, None, :]), 1.0)
+        weight_variance = np.maximum(fitted, 0.05)
     smallest = np.min(np.where(known, variance, np.inf), axis=1, initial=np.inf)
-    unknown = count == 0
-    parts = [coefficients[..., 0], coefficients[..., 1] / scale, coefficients[..., 2] / scale**2]
-    parts.append(_LOWEST_SHARE_OF_SMALLEST_VARIANCE * smallest)
-    return VarianceFunction(*(np.where(unknown, np.nan, part) for part in parts))
+    constant, linear, quadratic = coefficients * unit
+    parts = [constant, linear / scale, quadratic / scale**2, _LOWEST_SHARE_OF_SMALLEST_VARIANCE * smallest]
+    return VarianceFunction(*(np.where(count == 0, np.nan, part) for part in parts))
 
 
-def _nonnegative_quadratic(
-    x: FloatArray, variance: FloatArray, weight: FloatArray, reference: FloatArray
-) -> FloatArray:
-    """Weighted non-negative least squares on 1, x, x² by trying every subset of terms; returns (G, p, 3)."""
-    unit = reference[:, None, :] + np.finfo(float).tiny
-    y = variance / unit
-    w = weight * unit**2
-    moments = [np.sum(w, axis=1)]
-    power = w
-    for _ in range(4):
+def over_spots(cells: FloatArray, weight: FloatArray | None = None) -> FloatArray:
+    """Sum (G, p) of cells (G, n, p) over the spots, each with its weight (G, n) where given."""
+    weight = np.ones(cells.shape[:2]) if weight is None else weight
+    total: FloatArray = (weight[:, None, :] @ cells)[:, 0, :]
+    return total
+
+
+def _nonnegative_quadratic(x: FloatArray, y: FloatArray, weight: FloatArray) -> FloatArray:
+    """Weighted non-negative least squares of y on 1, x, x² (G, n, p) by trying every subset of terms; (3, G, p)."""
+    moments, right = [], []
+    power = weight
+    for order in range(5):
+        moments.append(over_spots(power))
+        if order < 3:
+            right.append(over_spots(power * y))
         power = power * x
-        moments.append(np.sum(power, axis=1))
-    right = np.stack(
-        [np.sum(w * y, axis=1), np.sum(w * x * y, axis=1), np.sum(w * x * x * y, axis=1)], axis=-1
-    )
-    gram = np.stack([np.stack([moments[i + j] for j in range(3)], axis=-1) for i in range(3)], axis=-2)
-    best = np.zeros_like(right)
-    best_gain = np.full(reference.shape, -np.inf)
+    gram = np.array([moments[row : row + 3] for row in range(3)])
+    right_side = np.array(right)
+    best = np.zeros_like(right_side)
+    best_gain = np.full(best.shape[1:], -np.inf)
     for subset in _TERM_SUBSETS:
         index = np.array(subset)
-        part = gram[..., index[:, None], index]
+        part = gram[index[:, None], index]
         # The ridge keeps a group whose values hardly differ solvable: the terms then share the variance.
-        ridge = 1e-9 * np.trace(part, axis1=-2, axis2=-1)[..., None, None] + np.finfo(float).tiny
-        solved = np.linalg.solve(part + ridge * np.eye(len(subset)), right[..., index, None])[..., 0]
-        gain = np.where(np.all(solved >= 0, axis=-1), np.sum(solved * right[..., index], axis=-1), -np.inf)
-        better = gain > best_gain
+        diagonal = np.arange(len(subset))
+        part[diagonal, diagonal] += 1e-9 * part[diagonal, diagonal].sum(axis=0) + np.finfo(float).tiny
+        root = inverse_root(part)
+        solved = times(np.swapaxes(root, 0, 1), times(root, right_side[index]))
+        gain = np.where(np.all(solved >= 0, axis=0), np.sum(solved * right_side[index], axis=0), -np.inf)
+        # Of terms that do equally well, as all do where one sigma is known, the first: not what rounding prefers.
+        better = gain > best_gain * (1.0 + _TIE)
         best_gain = np.where(better, gain, best_gain)
-        full = np.zeros_like(right)
-        full[..., index] = solved
-        best = np.where(better[..., None], full, best)
-    return best * (reference[..., None] + np.finfo(float).tiny)
+        full = np.zeros_like(best)
+        full[index] = solved
+        best = np.where(better, full, best)
+    return best
 
 
 def nuisance_directions(
@@ -154,44 +181,55 @@ def fit_directions(
     Parameters: deviations (G, n, p), 0 where not measured; inverse_variance (G, n, p), 0 where not measured;
     directions (G, p, m); prior_variance (m,), inf for a free amplitude.
     """
-    m = directions.shape[-1]
-    first, second = np.triu_indices(m)
-    products = inverse_variance @ (directions[..., first] * directions[..., second])
-    gram = np.empty((*products.shape[:2], m, m))
-    gram[..., first, second] = products
-    gram[..., second, first] = products
-    weighted = inverse_variance * deviations
-    right = weighted @ directions
-    information = gram[..., np.arange(m), np.arange(m)]
-    prior = np.broadcast_to(1.0 / prior_variance, information.shape)
-    # A free direction no element of the spot can see has no amplitude: give it no value instead of failing.
-    blind = (information + prior) <= 0
-    gram[..., np.arange(m), np.arange(m)] += prior + blind
-    # Scaling to a unit diagonal keeps the inverse accurate when directions differ by orders of magnitude.
-    root = np.sqrt(gram[..., np.arange(m), np.arange(m)])
-    inverse = np.linalg.inv(gram / (root[..., :, None] * root[..., None, :]) + 1e-12 * np.eye(m))
-    amplitudes = (inverse @ (right / root)[..., None])[..., 0] / root
-    variances = inverse[..., np.arange(m), np.arange(m)] / root**2
-    chi2 = np.einsum("gnp,gnp->gn", weighted, deviations) - np.sum(amplitudes * right, axis=-1)
+    amplitudes, variances, right = amplitudes_along(deviations, inverse_variance, directions, prior_variance)
+    blind = np.isnan(amplitudes)
+    explained = np.sum(np.where(blind, 0.0, amplitudes) * right, axis=-1)
+    chi2 = np.einsum("gnp,gnp,gnp->gn", inverse_variance, deviations, deviations) - explained
     free = np.isinf(prior_variance) & ~blind
     degrees = np.sum(inverse_variance > 0, axis=-1) - np.sum(free, axis=-1)
-    return MixingFit(
-        np.where(blind, np.nan, amplitudes),
-        np.where(blind, np.nan, variances),
-        np.maximum(chi2, 0.0),
-        degrees * 1.0,
-    )
+    return MixingFit(amplitudes, variances, np.maximum(chi2, 0.0), degrees * 1.0)
+
+
+def amplitudes_along(
+    deviations: FloatArray, inverse_variance: FloatArray, directions: FloatArray, prior_variance: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Amplitudes of the same fit, their variances, and the right side of its normal equations, all (G, n, m)."""
+    m = directions.shape[-1]
+    first, second = np.tril_indices(m)
+    products = inverse_variance @ (directions[..., first] * directions[..., second])
+    gram = np.zeros((m, m, *products.shape[:2]))
+    gram[first, second] = np.moveaxis(products, -1, 0)
+    right = (inverse_variance * deviations) @ directions
+    root, blind = _solution(gram, prior_variance)
+    amplitudes = times(np.swapaxes(root, 0, 1), times(root, np.moveaxis(right, -1, 0)))
+    found = np.where(blind, np.nan, [amplitudes, np.sum(root**2, axis=0)])
+    return np.moveaxis(found[0], 0, -1), np.moveaxis(found[1], 0, -1), right
+
+
+def _solution(gram: FloatArray, prior_variance: FloatArray) -> tuple[FloatArray, BoolArray]:
+    """R (m, m, ...) with RᵀR the covariance of the amplitudes, from the lower triangle of the normal equations.
+
+    Also which directions (m, ...) nothing tells of: their amplitude is held at zero instead of failing. The triangle is
+    changed in place.
+    """
+    m = len(gram)
+    diagonal = np.arange(m)
+    prior = (1.0 / prior_variance).reshape(m, *[1] * (gram.ndim - 2))
+    blind = gram[diagonal, diagonal] + prior <= 0
+    gram[diagonal, diagonal] += prior + blind
+    # Scaling to a unit diagonal keeps the inverse accurate when directions differ by orders of magnitude.
+    scale = 1.0 / np.sqrt(gram[diagonal, diagonal])
+    gram *= scale[:, None] * scale
+    gram[diagonal, diagonal] += 1e-12
+    return inverse_root(gram) * scale, blind
 
 
 def leverages(inverse_variance: FloatArray, directions: FloatArray, prior_variance: FloatArray) -> FloatArray:
     """Share (G, p) of an element's variance that the directions take up in a spot with all elements."""
-    gram = np.einsum("gp,gpi,gpj->gij", inverse_variance, directions, directions)
-    diagonal = np.einsum("gii->gi", gram)
-    gram = gram + (1.0 / prior_variance + (diagonal <= 0))[..., None] * np.eye(gram.shape[-1])
-    root = np.sqrt(np.einsum("gii->gi", gram))
-    inverse = np.linalg.inv(gram / (root[:, :, None] * root[:, None, :]) + 1e-12 * np.eye(gram.shape[-1]))
-    scaled = directions / root[:, None, :]
-    taken: FloatArray = inverse_variance * np.einsum("gpi,gij,gpj->gp", scaled, inverse, scaled)
+    gram = np.swapaxes(directions, 1, 2) @ (inverse_variance[..., None] * directions)
+    root, _ = _solution(np.ascontiguousarray(np.moveaxis(gram, 0, -1)), prior_variance)
+    turned = directions @ np.swapaxes(np.moveaxis(root, -1, 0), 1, 2)
+    taken: FloatArray = inverse_variance * np.sum(turned**2, axis=-1)
     return np.clip(taken, 0.0, 0.95)
 
 
@@ -199,22 +237,26 @@ def raise_spread(
     squared_residuals: FloatArray,
     counting: FloatArray,
     level_squared: FloatArray,
+    in_class: FloatArray,
     expected: FloatArray,
     spread: FloatArray,
     steps: int = 2,
 ) -> FloatArray:
     """Steps of the relative spread h² toward Σ r²/(sigma² + h²c²) = degrees of freedom (Paule & Mandel 1982).
 
-    Parameters: squared residuals, counting variance and c² (G, n, p) of one class of elements, residuals 0
-    where not used; expected (G,) degrees of freedom; spread (G,) the h² to start from. The steps are
-    Newton's on the reciprocal of the sum, which is concave in h²: they never pass the solution from below.
-    h² >= 0 is kept.
+    Parameters: squared residuals, 0 where not used, and counting variance (G, n, p); c² (G, p); in_class (G, p, k),
+    1 where an element counts for a class; expected (G, k) degrees of freedom; spread (G, k) the h² to start from.
+    An element of no class has h² = 0. The steps are Newton's on the reciprocal of the sum, which is concave in h²:
+    they never pass the solution from below. h² >= 0 is kept.
     """
     for _ in range(steps):
-        inverse = 1.0 / (counting + spread[:, None, None] * level_squared)
+        real = np.sum(in_class * spread[:, None, :], axis=2) * level_squared
+        inverse = counting + real[:, None, :]
+        np.reciprocal(inverse, out=inverse)
         standardised = squared_residuals * inverse
-        total = np.sum(standardised, axis=(1, 2))
-        slope = np.einsum("gnp,gnp,gnp->g", standardised, inverse, level_squared)
+        inverse *= standardised
+        total = np.sum(over_spots(standardised)[..., None] * in_class, axis=1)
+        slope = np.sum((over_spots(inverse) * level_squared)[..., None] * in_class, axis=1)
         solvable = (slope > 0) & (expected > 0)
         change = (total - expected) * total / np.where(solvable, slope * expected, 1.0)
         spread = np.clip(spread + np.where(solvable, change, 0.0), 0.0, 4.0)

@@ -5,9 +5,15 @@ import numpy.typing as npt
 from scipy.special import chdtrc
 
 from tieline.statistics.groups import BoolArray, FloatArray
-from tieline.statistics.overlap_covariance import MixingFit, fit_directions, leverages
-from tieline.statistics.overlap_fit import OverlapFit, own_variances
-from tieline.statistics.overlap_level import CleanLevel, clean_level, clean_level_without
+from tieline.statistics.overlap_covariance import (
+    MixingFit,
+    amplitudes_along,
+    fit_directions,
+    leverages,
+    over_spots,
+)
+from tieline.statistics.overlap_fit import OverlapFit, counting_variance
+from tieline.statistics.overlap_level import CleanLevel, clean_levels
 
 ORACLE_FACTOR = 4.735
 """Standard deviations between 95 % recall and one false alarm in 1,000: 1.645 + 3.090."""
@@ -36,35 +42,35 @@ def findings(
 ) -> Results:
     """All fields of `OverlapScores` for one block of groups."""
     spot_variance = state.spot_variance()
-    inverse = np.where(state.measured, 1.0 / spot_variance[:, None, :], 0.0)
-    deviations = np.where(state.measured, state.x - state.level[:, None, :], 0.0)
-    fit = fit_directions(deviations, inverse, directions, prior)
-    coordinate = np.where(state.scored, fit.amplitudes[..., 0], np.nan)
-    variance = np.where(state.scored, fit.variances[..., 0], np.nan)
+    deviations = state.deviations()
+    inverse = state.weight * (1.0 / spot_variance)[:, None, :]
+    amplitudes, variances, _ = amplitudes_along(deviations, inverse, directions, prior)
+    coordinate = np.where(state.scored, amplitudes[..., 0], np.nan)
+    variance = np.where(state.scored, variances[..., 0], np.nan)
     takes_part = state.scored & ~state.odd & np.isfinite(coordinate)
-    without = clean_level_without(coordinate, variance, takes_part)
+    located, without = clean_levels(coordinate, variance, takes_part)
     fraction = coordinate - without.mean
 
     likely = np.clip(np.nan_to_num(fraction), 0.0, 1.0)
-    counting, spread_variance = own_variances(state, likely, directions[..., 0])
-    own = (counting + spread_variance[:, None, :]) * state.kappa[:, None, :]
-    residual = fit_directions(deviations, np.where(state.measured, 1.0 / own, 0.0), directions, prior)
+    counting = counting_variance(state, likely, directions[..., 0])
+    inverse = state.weight / ((counting + state.spread_variance()[:, None, :]) * state.kappa[:, None, :])
+    residual = fit_directions(deviations, inverse, directions, prior)
     spots = _spot_findings(state, fraction, np.sqrt(variance + without.variance), residual, z_limit, p_limit)
 
-    part = state.measured & takes_part[..., None]
-    explained = np.nan_to_num(fit.amplitudes) @ np.swapaxes(directions, 1, 2)
+    part = takes_part * 1.0
+    deviations -= np.nan_to_num(amplitudes) @ np.swapaxes(directions, 1, 2)
+    squared = state.weight * deviations**2
     # Scatter against the stated sigma: without the factor found for it.
-    ratio = np.where(part, (deviations - explained) ** 2 / counting, 0.0).sum(axis=1) * state.counting_scale()
+    ratio = over_spots(squared / counting, part) * state.counting_scale()
     taken = leverages(np.where(state.used, 1.0 / spot_variance, 0.0), directions, prior)
-    expected = np.maximum(part.sum(axis=1) - 1.0, 0.0) * (1.0 - taken) * state.used
-    located = clean_level(coordinate, variance, takes_part)
+    expected = np.maximum(over_spots(state.weight, part) - 1.0, 0.0) * (1.0 - taken) * state.used
     return (
         spots
-        | _element_results(state, directions, np.where(part, 1.0 / own, 0.0).sum(axis=1), located)
+        | _element_results(state, directions, over_spots(inverse, part), located)
         | _overdispersion(coordinate, variance, takes_part)
         | _scatter(ratio @ state.in_class, expected @ state.in_class)
         | {
-            "nuisance_amplitude": np.where(state.scored[..., None], fit.amplitudes[..., 1:], np.nan),
+            "nuisance_amplitude": np.where(state.scored[..., None], amplitudes[..., 1:], np.nan),
             "detectable_fraction": _detectable(spots),
         }
     )

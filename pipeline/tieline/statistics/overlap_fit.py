@@ -2,14 +2,15 @@
 
 import numpy as np
 
-from tieline.statistics.groups import BoolArray, FloatArray, IntArray
+from tieline.statistics.groups import BoolArray, FloatArray
 from tieline.statistics.overlap_covariance import (
     VarianceFunction,
+    amplitudes_along,
     element_inflation,
-    fit_directions,
     fit_variance_function,
     leverages,
     nuisance_directions,
+    over_spots,
     raise_spread,
 )
 from tieline.statistics.overlap_level import clean_level
@@ -39,11 +40,13 @@ class OverlapFit:
         self.scored = self.measured.sum(axis=2) >= 2
         self.scored &= (self.scored.sum(axis=1) >= _FEWEST_SPOTS)[:, None]
         self.measured &= self.scored[:, :, None]
+        # The same as a factor: multiplying takes a fraction of the time of choosing.
+        self.weight = self.measured * 1.0
         self.x = np.where(self.measured, values, 0.0)
         self.g = np.where(self.used, contaminant, 0.0)
         self.g_variance = np.where(self.used, contaminant_variance, 0.0)
         self.function = VarianceFunction(*(np.where(self.used, part, 1.0) for part in self.function))
-        self.in_class = np.stack([~is_trace, is_trace], axis=-1) & np.ones((values.shape[2], 2), dtype=bool)
+        self.in_class = np.stack([~is_trace, is_trace], axis=-1) * 1.0
         self.level = _low_end(self.x, self.measured, self.g)
         self.spread_squared = np.zeros((values.shape[0], 2))
         self.counting_factor = np.ones((values.shape[0], 2))
@@ -60,6 +63,11 @@ class OverlapFit:
         counting = self.function.at(self.level) * self.counting_scale()
         variance: FloatArray = (counting + self.spread_variance()) * self.kappa
         return variance
+
+    def deviations(self) -> FloatArray:
+        """x − c (G, n, p), 0 where not measured."""
+        deviations: FloatArray = self.x - self.level[:, None, :] * self.weight
+        return deviations
 
     def counting_scale(self) -> FloatArray:
         """Factor (G, p) by which the stated counting variance of an element's class falls short."""
@@ -101,50 +109,50 @@ def mixing_directions(state: OverlapFit, is_trace: BoolArray, nuisance: str) -> 
     return np.concatenate([contrast[..., None], harmless], axis=-1), prior
 
 
-def own_variances(
-    state: OverlapFit, fraction: FloatArray, contrast: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """Counting variance of every spot's mixture with that of the contaminant (G, n, p); and h²c² (G, p)."""
-    mixture = state.level[:, None, :] + fraction[..., None] * contrast[:, None, :]
-    counting = state.function.at(mixture) * state.counting_scale()[:, None, :]
+def counting_variance(state: OverlapFit, fraction: FloatArray, contrast: FloatArray) -> FloatArray:
+    """Variance (G, n, p) of every spot's mixture from counting and from the contaminant, but for the host's spread."""
+    counting = state.function.along(state.level, contrast, fraction)
+    counting *= state.counting_scale()[:, None, :]
     counting += (fraction**2)[..., None] * state.g_variance[:, None, :]
-    return counting, state.spread_variance()
+    return counting
 
 
 def _update(state: OverlapFit, directions: FloatArray, prior: FloatArray) -> None:
     spot_variance = state.spot_variance()
-    inverse = np.where(state.measured, 1.0 / spot_variance[:, None, :], 0.0)
-    deviations = np.where(state.measured, state.x - state.level[:, None, :], 0.0)
-    fit = fit_directions(deviations, inverse, directions, prior)
-    coordinate = np.where(state.scored, fit.amplitudes[..., 0], np.nan)
+    inverse = state.weight * (1.0 / spot_variance)[:, None, :]
+    deviations = state.deviations()
+    amplitudes, variances, _ = amplitudes_along(deviations, inverse, directions, prior)
+    coordinate = np.where(state.scored, amplitudes[..., 0], np.nan)
     usable = state.scored & ~state.odd & np.isfinite(coordinate)
-    located = clean_level(coordinate, fit.variances[..., 0], usable)
+    located = clean_level(coordinate, variances[..., 0], usable)
     fraction = np.nan_to_num(coordinate - located.mean[:, None])
     contrast = directions[..., 0]
 
-    counting, spread_variance = own_variances(state, np.clip(fraction, 0.0, 1.0), contrast)
-    own = (counting + spread_variance[:, None, :]) * state.kappa[:, None, :]
-    amplitudes = np.nan_to_num(fit.amplitudes)
-    residuals = np.where(state.measured, deviations - amplitudes @ np.swapaxes(directions, 1, 2), 0.0)
-    state.odd = _odd_spots(residuals, own, state)
-    takes_part = state.measured & ~state.odd[:, :, None]
+    counting = counting_variance(state, np.clip(fraction, 0.0, 1.0), contrast)
+    inverse = state.weight / (counting + state.spread_variance()[:, None, :])
+    deviations -= np.nan_to_num(amplitudes) @ np.swapaxes(directions, 1, 2)
+    squared = deviations * deviations
+    squared *= state.weight
+    state.odd = _odd_spots(((squared * inverse) @ (1.0 / state.kappa)[..., None])[..., 0], state)
+    takes_part = (~state.odd).astype(np.float64)
 
-    weight = np.where(takes_part, 1.0 / own, 0.0)
-    unmixed = np.where(takes_part, state.x - fraction[..., None] * contrast[:, None, :], 0.0)
-    total = weight.sum(axis=1)
-    level = np.sum(weight * unmixed, axis=1) / np.where(total > 0, total, 1.0)
-    state.level = np.where(total > 0, level, state.level)
+    # The element's own factor kappa is common to all of its weights.
+    total = over_spots(inverse, takes_part)
+    unmixed = (
+        over_spots(inverse * state.x, takes_part) - over_spots(inverse, takes_part * fraction) * contrast
+    )
+    state.level = np.where(total > 0, unmixed / np.where(total > 0, total, 1.0), state.level)
 
     taken = leverages(np.where(state.used, 1.0 / spot_variance, 0.0), directions, prior)
-    _update_spread(state, residuals, counting, takes_part, taken)
+    squared *= takes_part[..., None]
+    _update_spread(state, squared, counting, state.weight * takes_part[..., None], taken)
 
 
-def _odd_spots(residuals: FloatArray, own: FloatArray, state: OverlapFit) -> BoolArray:
+def _odd_spots(chi2: FloatArray, state: OverlapFit) -> BoolArray:
     """Spots with an improbable residual, over three times the group's median: kept out of the level."""
     from scipy.special import chdtrc
 
-    chi2 = np.sum(residuals**2 / own, axis=2)
-    degrees = np.maximum(state.measured.sum(axis=2) - 1.0, 1.0)
+    degrees = np.maximum(state.weight.sum(axis=2) - 1.0, 1.0)
     reduced = np.where(state.scored, chi2 / degrees, np.inf)
     place = np.maximum(state.scored.sum(axis=1) - 1, 0) // 2
     median = np.take_along_axis(np.sort(reduced, axis=1), place[:, None], axis=1)
@@ -152,42 +160,39 @@ def _odd_spots(residuals: FloatArray, own: FloatArray, state: OverlapFit) -> Boo
 
 
 def _update_spread(
-    state: OverlapFit, residuals: FloatArray, counting: FloatArray, takes_part: BoolArray, taken: FloatArray
+    state: OverlapFit, squared: FloatArray, counting: FloatArray, takes_part: FloatArray, taken: FloatArray
 ) -> None:
-    number = takes_part.sum(axis=1)
+    """Spread, counting factor and kappa from the squared residuals (G, n, p), which are overwritten."""
+    number = over_spots(takes_part)
     degrees = np.where(number > 1, (number - 1.0) * (1.0 - taken), 0.0)
-    squared = np.where(takes_part, residuals**2, 0.0)
-    level_squared = np.broadcast_to(np.maximum(state.level, 0.0)[:, None, :] ** 2, squared.shape)
+    level_squared = np.maximum(state.level, 0.0) ** 2
     # An element that scatters by itself is left to its own factor; it must not widen the whole class.
-    ordinary = np.where(state.kappa <= 2.0, 1.0, 0.0)
-    expected = degrees * ordinary
-    for column in (0, 1):
-        of_class = state.in_class[:, column]
-        if of_class.any():
-            state.spread_squared[:, column] = raise_spread(
-                (squared * ordinary[:, None, :])[..., of_class],
-                counting[..., of_class],
-                level_squared[..., of_class],
-                expected[:, of_class].sum(axis=1),
-                state.spread_squared[:, column],
-            )
-    variance = counting + state.spread_variance()[:, None, :]
-    standardised = squared / variance
-    share = np.where(takes_part, counting / variance, 0.0)
-    _update_counting_factor(state, standardised, share, expected, number)
-    state.kappa = element_inflation(np.sum(standardised, axis=1), degrees)
+    expected = degrees * (state.kappa <= 2.0)
+    in_class = (state.kappa <= 2.0)[..., None] * state.in_class
+    state.spread_squared = raise_spread(
+        squared, counting, level_squared, in_class, expected @ state.in_class, state.spread_squared
+    )
+    inverse = counting + state.spread_variance()[:, None, :]
+    np.reciprocal(inverse, out=inverse)
+    squared *= inverse
+    state.kappa = element_inflation(over_spots(squared), degrees)
+    # The share of counting in each variance.
+    inverse *= counting
+    squared *= inverse
+    inverse *= takes_part
+    shared = over_spots(inverse) * expected / np.maximum(number, 1.0)
+    scatter = over_spots(squared) * (expected > 0)
+    _update_counting_factor(state, scatter @ state.in_class, shared @ state.in_class)
 
 
-def _update_counting_factor(
-    state: OverlapFit, standardised: FloatArray, share: FloatArray, expected: FloatArray, number: IntArray
-) -> None:
+def _update_counting_factor(state: OverlapFit, scatter: FloatArray, degrees: FloatArray) -> None:
     """Raise the counting variance of a class whose elements ruled by counting scatter beyond it.
 
     A relative spread cannot explain excess scatter of elements the host hardly contains, and it is those that
     see a contaminant. Only a factor beyond two standard deviations of its chance value counts.
+
+    Parameters: scatter (G, 2) and its degrees of freedom, each element's with the share of counting in its variance.
     """
-    scatter = np.sum(standardised * share, axis=1) * (expected > 0) @ state.in_class
-    degrees = np.sum(share, axis=1) * expected / np.maximum(number, 1) @ state.in_class
     ratio = np.where(degrees > 1, scatter / np.maximum(degrees, 1.0), 1.0)
     factor = state.counting_factor * ratio
     state.counting_factor = np.where(factor > 1 + 2 * np.sqrt(2 / np.maximum(degrees, 1.0)), factor, 1.0)

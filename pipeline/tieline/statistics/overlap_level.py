@@ -47,19 +47,32 @@ def _clean_density(u: FloatArray) -> FloatArray:
     return density
 
 
+@cache
+def _log_density_steps() -> tuple[FloatArray, FloatArray]:
+    """The table, and what it rises by to the next place, row after row."""
+    table = _log_density_table()
+    rise = np.diff(table, axis=1, append=table[:, -1:])
+    return table.ravel(), rise.ravel()
+
+
 def _log_density(u: FloatArray, row: npt.NDArray[np.intp]) -> FloatArray:
-    """Linear interpolation in the table.
+    """Linear interpolation in the table; u is overwritten.
 
     Beyond its ends the end value holds: no single spot far below the others can outvote them.
     """
-    table = _log_density_table()
-    place = np.clip((np.arcsinh(u) - _TABLE_LOW) / _TABLE_STEP, 0.0, table.shape[1] - 1.001)
-    left = place.astype(np.intp)
-    part = place - left
-    flat = table.ravel()
-    index = row * table.shape[1] + left
-    density: FloatArray = flat[index] * (1.0 - part) + flat[index + 1] * part
-    return density
+    table, rise = _log_density_steps()
+    width = len(table) // _MOST_SCALES
+    place = np.arcsinh(u, out=u)
+    place -= _TABLE_LOW
+    place /= _TABLE_STEP
+    np.maximum(place, 0.0, out=place)
+    np.minimum(place, width - 1.001, out=place)
+    index = place.astype(np.intp)
+    place -= index
+    index += row * width
+    place *= rise[index]
+    place += table[index]
+    return place
 
 
 def clean_level(coordinate: FloatArray, variance: FloatArray, usable: BoolArray) -> CleanLevel:
@@ -73,24 +86,31 @@ def clean_level(coordinate: FloatArray, variance: FloatArray, usable: BoolArray)
     groups without a usable spot. Evaluated on a grid of ± 6 sd about the best of the spots' own coordinates.
     """
     grid, by_spot = _log_likelihood(coordinate, variance, usable)
-    mean, spread = _moments(grid, by_spot.sum(axis=2))
+    return _of_all(grid, by_spot.sum(axis=1), usable)
+
+
+def clean_levels(
+    coordinate: FloatArray, variance: FloatArray, usable: BoolArray
+) -> tuple[CleanLevel, CleanLevel]:
+    """The same, and from all usable spots but each in turn (G, n), NaN where no other usable spot is left."""
+    grid, by_spot = _log_likelihood(coordinate, variance, usable)
+    log_weight = by_spot.sum(axis=1)
+    mean, spread = _moments(grid[:, None, :], log_weight[:, None, :] - by_spot)
+    lonely = usable.sum(axis=1, keepdims=True) - usable == 0
+    without = CleanLevel(np.where(lonely, np.nan, mean), np.where(lonely, np.nan, spread))
+    return _of_all(grid, log_weight, usable), without
+
+
+def _of_all(grid: FloatArray, log_weight: FloatArray, usable: BoolArray) -> CleanLevel:
+    mean, spread = _moments(grid, log_weight)
     empty = ~usable.any(axis=1)
     return CleanLevel(np.where(empty, np.nan, mean), np.where(empty, np.nan, spread))
-
-
-def clean_level_without(coordinate: FloatArray, variance: FloatArray, usable: BoolArray) -> CleanLevel:
-    """The same (G, n) from all usable spots but one; NaN where no other usable spot is left."""
-    grid, by_spot = _log_likelihood(coordinate, variance, usable)
-    without = np.swapaxes(by_spot.sum(axis=2, keepdims=True) - by_spot, 1, 2)
-    mean, spread = _moments(grid[:, None, :], without)
-    lonely = usable.sum(axis=1, keepdims=True) - usable == 0
-    return CleanLevel(np.where(lonely, np.nan, mean), np.where(lonely, np.nan, spread))
 
 
 def _log_likelihood(
     coordinate: FloatArray, variance: FloatArray, usable: BoolArray
 ) -> tuple[FloatArray, FloatArray]:
-    """Grid of levels (G, k), and every spot's log density there (G, k, n), 0 for a spot that is not usable."""
+    """Grid of levels (G, k), and every spot's log density there (G, n, k), 0 for a spot that is not usable."""
     t = np.where(usable, coordinate, 0.0)
     sd = np.where(usable, np.sqrt(np.where(usable, variance, 1.0)), 1.0)
     count = usable.sum(axis=1)
@@ -99,10 +119,13 @@ def _log_likelihood(
     row = np.clip(scales, 0, _MOST_SCALES - 1)[:, None, None]
 
     def of_levels(levels: FloatArray) -> FloatArray:
-        density = _log_density((t[:, None, :] - levels[:, :, None]) / sd[:, None, :], row)
-        return np.where(usable[:, None, :], density, 0.0)
+        density = t[:, :, None] - levels[:, None, :]
+        density /= sd[:, :, None]
+        density = _log_density(density, row)
+        density *= usable[:, :, None]
+        return density
 
-    merit = np.where(usable, of_levels(t).sum(axis=2), -np.inf)
+    merit = np.where(usable, of_levels(t).sum(axis=1), -np.inf)
     best = np.take_along_axis(t, np.argmax(merit, axis=1)[:, None], axis=1)
     grid = best + _GRID * typical[:, None]
     return grid, of_levels(grid)
