@@ -27,7 +27,7 @@ HEADINGS = (
     Heading("grain"),
     Heading("analyte", "", "* : all the spot has; otherwise the analytes, or the column's header"),
     Heading("n_values", "1", "values left out"),
-    Heading("why", "", "the tests, `ruling`, or `set-aside` for what could not be read"),
+    Heading("why", "", "the tests, `ruling`, or `set-aside` for rows and cells set aside on reading"),
     Heading("decided_by", "", "`test`, or who ruled"),
     Heading("date", "", "date of the ruling"),
     Heading("statistic", "1", "the first test's statistic"),
@@ -47,7 +47,7 @@ class Reason:
 
 
 def left_out_sheet(source: Source, spots: SpotUse) -> Sheet:
-    """One row per spot and reason, then one per cell or row that could not be read."""
+    """One row per spot and reason, then one per cell or row that was set aside on reading."""
     findings = _findings_by_spot(source)
     convention = short_convention(source.confidence)
     rows = [_row(source, spots, one, findings, convention) for one in spots.left_out]

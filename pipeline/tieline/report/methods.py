@@ -8,13 +8,14 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
-import pyarrow.compute as pc
 
-from tieline.arrays import flags, labels
+from tieline.arrays import flags, labels, numbers
+from tieline.chemistry.names import recognise_analyte
 from tieline.report.conventions import percent
 from tieline.report.latex import PREAMBLE, escaped
-from tieline.report.left_out import by_person, by_test
+from tieline.report.methods_screening import screened
 from tieline.report.references import REFERENCES
+from tieline.report.sentences import and_, count
 from tieline.report.source import Source
 from tieline.report.spots import SpotUse
 
@@ -91,7 +92,7 @@ def _sentence_as_latex(sentence: str) -> str:
 
 def methods(source: Source, spots: SpotUse) -> Methods:
     """The paragraph of one reduction; every number in it is counted from the tables."""
-    parts = (_measured, _converted, _calibrated, _screened, _averaged, _limits, _partition, _classified)
+    parts = (_measured, _converted, _calibrated, screened, _averaged, _limits, _partition, _classified)
     sentences = [sentence for part in parts for sentence in part(source, spots)]
     return Methods((*sentences, f"The reduction was made with tieline {source.version}."))
 
@@ -99,26 +100,45 @@ def methods(source: Source, spots: SpotUse) -> Methods:
 def _measured(source: Source, spots: SpotUse) -> Iterable[str]:
     unknown = [place for place in range(spots.count) if spots.keys["material"][place] is None]
     experiments = {spots.keys["experiment"][place] for place in unknown}
+    n_reference = spots.count - len(unknown)
+    of_materials = (
+        f" and {count(n_reference, 'analysis', 'analyses')} of reference materials" if n_reference else ""
+    )
     yield (
-        f"The data set holds {_count(len(unknown), 'analysis', 'analyses')} of {_count(len(experiments), 'experiment')} "
-        f"and {_count(spots.count - len(unknown), 'analysis', 'analyses')} of reference materials."
+        f"The data set holds {count(len(unknown), 'analysis', 'analyses')} of {count(len(experiments), 'experiment')}"
+        f"{of_materials}."
     )
     for technique, number in sorted(Counter(spots.keys["technique"][place] for place in unknown).items()):
         of_phase = Counter(
             spots.keys["phase"][place] for place in unknown if spots.keys["technique"][place] == technique
         )
         phases = ", ".join(f"{phase} {n}" for phase, n in sorted(of_phase.items()))
-        yield f"By {technique}: {_count(number, 'spot')} ({phases})."
-    yield (
-        "Uncertainties of single values are one standard uncertainty from counting, as reported with the data; other "
-        "levels and relative figures were converted."
-    )
+        yield f"By {technique}: {count(number, 'spot')} ({phases})."
+    yield from _uncertainties(source)
+
+
+def _uncertainties(source: Source) -> Iterable[str]:
+    """What the uncertainties of single values are, and of which techniques none were reported."""
+    convert = source.table("convert")
+    technique = labels(convert, "technique").text()
+    known = np.isfinite(numbers(convert, "sigma_ppm"))
+    reported = sorted(set(technique[known].tolist()))
+    silent = sorted(set(technique.tolist()) - set(reported))
+    if reported:
+        yield (
+            "Uncertainties of single values are one standard uncertainty from counting, as reported with the data; other "
+            "levels and relative figures were converted."
+        )
+    if silent:
+        yield f"No uncertainties of single values were reported by {', '.join(silent)}."
 
 
 def _converted(source: Source, spots: SpotUse) -> Iterable[str]:
-    yield (
-        "Oxides were converted to mass fractions of the elements with standard atomic weights [[prohaska2022]]."
-    )
+    names = (recognise_analyte(text) for text in labels(source.table("convert"), "analyte").texts)
+    if any(name is not None and name.kind == "oxide" for name in names):
+        yield (
+            "Oxides were converted to mass fractions of the elements with standard atomic weights [[prohaska2022]]."
+        )
     for standard in source.settings.convert.internal_standard:
         actual = (
             f"the mean {standard.element} content of the same phase and experiment by {standard.source_technique}"
@@ -137,11 +157,12 @@ def _calibrated(source: Source, spots: SpotUse) -> Iterable[str]:
     calibrate = source.table("calibrate")
     materials = sorted(set(source.table("calibrate.materials").column("material").to_pylist()))
     if materials:
-        failed = int(np.sum([passed is False for passed in calibrate.column("passed").to_pylist()]))
+        verdicts = [passed for passed in calibrate.column("passed").to_pylist() if passed is not None]
         tolerance = source.settings.calibrate.tolerance
         yield (
-            f"Accuracy was checked on {', '.join(materials)}: of {_count(calibrate.num_rows, 'pair')} of batch and element, "
-            f"{failed} were off by more than {percent(tolerance.relative)} and {tolerance.sigmas:g} standard uncertainties."
+            f"Accuracy was checked on {', '.join(materials)}: of {count(len(verdicts), 'pair')} of batch and element, "
+            f"{verdicts.count(False)} were off by more than {percent(tolerance.relative)} and {tolerance.sigmas:g} "
+            "standard uncertainties."
         )
     correct = source.settings.calibrate.correct
     done = {
@@ -150,106 +171,12 @@ def _calibrated(source: Source, spots: SpotUse) -> Iterable[str]:
         "bias+drift": "Values were divided by the measured bias and corrected for linear drift where it was supported "
         f"(p < {source.settings.calibrate.drift_p:g})",
     }[correct]
+    known = set(labels(calibrate, "origin").text().tolist()) != {"unknown"}
+    elsewhere = "" if known else "; it is not known, and not carried elsewhere"
     yield (
         f"{done}; the calibration uncertainty is shared by all spots of a batch and cancels in D where both phases were "
-        "measured in one batch."
+        f"measured in one batch{elsewhere}."
     )
-
-
-def _screened(source: Source, spots: SpotUse) -> Iterable[str]:
-    settings = source.settings.screen
-    described = [sentence for test, sentence in _tests(source) if getattr(settings, test).enabled]
-    if described:
-        yield f"Spots were tested for {_and(described)}."
-    counts = by_test(spots)
-    if counts:
-        parts = [
-            f"{reason.name} {_count(reason.n_spots, 'spot')} ({reason.n_values} values)" for reason in counts
-        ]
-        yield f"Left out by tests: {', '.join(parts)}; a spot may fail several."
-    else:
-        yield "No value was left out by a test."
-    people = by_person(source, spots)
-    if people:
-        parts = [
-            f"{reason.name} {_count(reason.n_spots, 'spot')} ({reason.n_values} values)" for reason in people
-        ]
-        yield f"Left out by hand, with a recorded reason: {', '.join(parts)}."
-    kept = sum(ruling.verdict == "keep" for ruling in source.rulings)
-    if kept:
-        yield f"{_count(kept, 'ruling')} kept values that a test would have left out, or that were in doubt."
-    set_aside = int(pc.sum(source.table("ingest.set_aside").column("cells")).as_py() or 0)
-    if set_aside:
-        yield f"{_count(set_aside, 'cell')} could not be read and were set aside."
-
-
-def _tests(source: Source) -> Iterable[tuple[str, str]]:
-    settings = source.settings.screen
-    ferric = (
-        ", with ferric iron from charge balance where the phase takes it [[droop1987]]"
-        if settings.cations.ferric
-        else ""
-    )
-    yield (
-        "total",
-        (
-            f"oxide totals outside the range of their phase by more than {settings.total.sigmas:g} standard uncertainties "
-            f"({_does(settings.total.action)})"
-        ),
-    )
-    yield (
-        "cations",
-        (
-            f"cation sums that do not fit the formula{ferric} ({settings.cations.sigmas:g} standard uncertainties; "
-            f"{_does(settings.cations.action)})"
-        ),
-    )
-    yield (
-        "identity",
-        (
-            f"compositions at least {settings.identity.ratio:g} times nearer to another phase ({_does(settings.identity.action)})"
-        ),
-    )
-    overlap = {
-        "drop": _does(settings.overlap.action),
-        "mark": "marked only",
-        "unmix": "removed by calculation",
-    }
-    yield (
-        "overlap",
-        (
-            f"admixed {settings.overlap.melt_phase} in crystals and crystal in {settings.overlap.melt_phase}, as the weighted "
-            f"projection of every analysis on the mixing line, at z > {settings.overlap.z:g} ({overlap[settings.overlap.use]})"
-        ),
-    )
-    represent = {"all": "all spots represent the crystal", "rim": "only rims represent equilibrium",
-                 "core": "only cores represent equilibrium"}[settings.zoning.represent]  # fmt: skip
-    yield (
-        "zoning",
-        f"zoning with distance from the rim (p < {settings.zoning.p:g}; in zoned crystals {represent})",
-    )
-    single = {
-        "off": "",
-        "grubbs": f", and single analytes by Grubbs's test at {settings.outlier.alpha:g} [[grubbs1969]]",
-        "esd": f", and single analytes by the generalized ESD test at {settings.outlier.alpha:g} [[rosner1983]]",
-        "modified-z": f", and single analytes by modified z > {settings.outlier.threshold:g} [[iglewicz1993]]",
-    }[settings.outlier.per_analyte]
-    yield (
-        "outlier",
-        (
-            f"outliers in many analytes together (p < {settings.outlier.p:g}; {_does(settings.outlier.action)}){single}"
-        ),
-    )
-    yield (
-        "imprecise",
-        (
-            f"relative uncertainties above {percent(settings.imprecise.relative_sigma)} ({_does(settings.imprecise.action)})"
-        ),
-    )
-
-
-def _does(action: str) -> str:
-    return {"drop": "left out", "mark": "marked only"}[action]
 
 
 def _averaged(source: Source, spots: SpotUse) -> Iterable[str]:
@@ -257,13 +184,19 @@ def _averaged(source: Source, spots: SpotUse) -> Iterable[str]:
     over = "over grain means" if source.settings.pair.average == "grains" else "over spots"
     n_used = [number for number in pair.column("n_used").to_pylist() if number]
     size = f" (n from {min(n_used)} to {max(n_used)}, median {float(np.median(n_used)):g})" if n_used else ""
-    yield (
-        f"Phase means of every experiment and element were taken {over}{size}, {_ESTIMATORS[source.settings.pair.mean]}."
-    )
-    yield (
-        "Whether counting explains the scatter was judged by the mean square of weighted deviates [[wendt1991]]; the "
-        "standard error of a mean comes from the scatter of the spots."
-    )
+    judged = bool(np.isfinite(numbers(pair, "mswd")).any())
+    estimator = source.settings.pair.mean
+    # Without uncertainties nothing tells the spots apart, and their weights are equal.
+    way = "as arithmetic means" if estimator == "random-effects" and not judged else _ESTIMATORS[estimator]
+    yield f"Phase means of every experiment and element were taken {over}{size}, {way}."
+    scatter = "the standard error of a mean comes from the scatter of the spots."
+    if judged:
+        yield (
+            "Whether counting explains the scatter was judged by the mean square of weighted deviates [[wendt1991]]; "
+            + scatter
+        )
+    else:
+        yield scatter.capitalize()
 
 
 def _limits(source: Source, spots: SpotUse) -> Iterable[str]:
@@ -273,13 +206,16 @@ def _limits(source: Source, spots: SpotUse) -> Iterable[str]:
     )
     if not below.any():
         return
+    measured = (
+        "Measured values below the limit were used as they are [[amc2001]]; no value was substituted for one."
+    )
     yield (
-        f"Of the values used, {int(below.sum())} lie below their detection limit. Measured values below the limit were used "
-        "as they are [[amc2001]]; no value was substituted for one."
+        f"Of the values used, {int(below.sum())} lie below their detection limit. "
+        + (measured if int(below.sum()) > only_limit else "No value was substituted for one.")
     )
     if only_limit:
         yield (
-            f"Where only a limit was reported ({_count(only_limit, 'value')}), limits of the mean come from the likelihood "
+            f"Where only a limit was reported ({count(only_limit, 'value')}), limits of the mean come from the likelihood "
             f"of measured and censored values together; a missing sigma was taken as the limit divided by "
             f"{source.settings.partition.sigma_from_limit:g}."
         )
@@ -292,13 +228,16 @@ def _partition(source: Source, spots: SpotUse) -> Iterable[str]:
     kinds = Counter(labels(classify, "kind").text().tolist())
     yield (
         "D is the Nernst partition coefficient by mass, concentration in alpha over concentration in beta "
-        f"[[beattie1993]]; {_count(classify.num_rows, 'D', 'D')} were formed, of which {kinds['upper-limit']} are upper "
+        f"[[beattie1993]]; {count(classify.num_rows, 'D', 'D')} were formed, of which {kinds['upper-limit']} are upper "
         f"limits, {kinds['lower-limit']} lower limits and {kinds['undetermined']} undetermined."
     )
+    factors = (
+        "calibration and internal-standard" if source.settings.convert.internal_standard else "calibration"
+    )
     yield (
-        "Its standard uncertainty (k = 1) combines counting, spread between spots, and calibration and internal-standard "
-        f"factors that do not cancel [[jcgm100]]; {percent(source.confidence)} confidence intervals were computed "
-        f"{_and(ways)}."
+        f"Its standard uncertainty (k = 1) combines counting, spread between spots, and {factors} factors that do not "
+        f"cancel [[jcgm100]]; {percent(source.confidence)} confidence intervals were computed "
+        f"{and_(ways) or 'by no method'}."
     )
 
 
@@ -311,17 +250,3 @@ def _classified(source: Source, spots: SpotUse) -> Iterable[str]:
     )
     for name, (low, high) in settings.extra.items():
         yield f"The class {name} was declared where that interval lies between {low:g} and {high:g}."
-
-
-def _and(parts: list[str]) -> str:
-    return (
-        parts[0]
-        if len(parts) == 1
-        else f"{'; '.join(parts[:-1])}; and {parts[-1]}"
-        if parts
-        else "by no method"
-    )
-
-
-def _count(number: int, one: str, many: str = "") -> str:
-    return f"{number} {one if number == 1 else many or one + 's'}"
