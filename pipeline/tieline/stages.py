@@ -135,7 +135,16 @@ STAGES: tuple[Stage, ...] = (
     Stage(
         name="assess",
         revision=1,
-        inputs=("partition", "partition.covariance", "pair", "calibrate", "ingest.experiments"),
+        inputs=(
+            "partition",
+            "partition.covariance",
+            "pair",
+            "calibrate",
+            "convert",
+            "screen",
+            "ingest.spots",
+            "ingest.experiments",
+        ),
         outputs=(
             "assess",
             "assess.exchange",

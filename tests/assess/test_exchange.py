@@ -1,11 +1,14 @@
 """Exchange coefficients: correlation, ferric iron, windows, and pairs that cannot be judged."""
 
 import numpy as np
+import pandas as pd
 import pytest
 
 from assess.frames import covariance, partition
-from tieline.assess.exchange import compare, exchange_coefficient, exchange_tables, ferrous_factor
+from tieline.assess.exchange import compare, exchange_tables, ferrous_factor
+from tieline.assess.exchange_coefficients import exchange_coefficient
 from tieline.assess.ferric import FerricShare, kress_carmichael
+from tieline.statistics.means import phase_means
 
 
 @pytest.mark.parametrize("correlation", [-0.5, 0.0, 0.9])
@@ -61,12 +64,13 @@ def test_no_coefficient_says_why(first, second, variances):
         (0.32, 0.36, "consistent"),
         (0.34, 0.36, "differs"),
         (0.1, 0.6, "cannot tell"),
+        (0.4, np.inf, "differs"),
+        (0.1, np.inf, "cannot tell"),
+        (np.nan, np.nan, "cannot tell"),
     ],
 )
 def test_verdicts(low, high, verdict):
-    matrix = np.diag([1e-6, 1e-6])
-    found = exchange_coefficient(1.0, 3.0, matrix)
-    assert compare(type(found)(0.3, 0.01, low, high), 0.27, 0.33) == verdict
+    assert compare(low, high, 0.27, 0.33) == verdict
 
 
 def test_table_uses_windows_for_melts_only_and_states_the_ferric_share():
@@ -122,3 +126,139 @@ def test_ferric_model_refuses_nonsense():
         kress_carmichael({"SiO2": 50.0, "FeO": 10.0}, np.nan, 0.0, -8.0, 0.0, 0.0)
     with pytest.raises(ValueError, match="ferric share"):
         FerricShare(1.2, 0.0, "stated")
+
+
+def simulated(rng, truth, spread, counting, correlation, n=(6, 6), cases=1000, experiments="X"):
+    """Partition rows of Fe and Mg, and their spot correlations, of many sessions of one phase over glass.
+
+    truth: (phase, element) means; spread: relative sd between spots of alpha's elements, correlated; counting: relative.
+    """
+    columns = {"experiment": [f"{experiments}{case}" for case in range(cases)]}
+    for place, (side, k) in enumerate(zip(("alpha", "beta"), n, strict=True)):
+        sd = np.array(spread[place])
+        matrix = np.outer(sd, sd) * np.array([[1, correlation[place]], [correlation[place], 1]])
+        real = rng.multivariate_normal(np.zeros(2), matrix, (cases, k))
+        spots = truth[place] * (1 + real) * (1 + counting * rng.standard_normal((cases, k, 2)))
+        for element, which in enumerate(("Fe", "Mg")):
+            group = np.repeat(np.arange(cases), k)
+            means = phase_means(
+                spots[:, :, element].ravel(),
+                np.full(cases * k, counting * truth[place][element]),
+                group,
+                cases,
+            )
+            columns |= {
+                (f"mean_{side}_ppm", which): means.mean, (f"se_{side}_ppm", which): np.sqrt(means.variance),
+                (f"counting_se_{side}_ppm", which): np.sqrt(means.counting_variance), (f"dof_{side}", which): means.dof,
+                (f"n_independent_{side}", which): means.n,
+            }  # fmt: skip
+        off = spots - spots.mean(axis=1, keepdims=True)
+        columns[f"r_{side}"] = np.sum(off[..., 0] * off[..., 1], axis=1) / np.sqrt(
+            np.prod(np.sum(off**2, axis=1), axis=1)
+        )
+    rows = [_rows_of(columns, element) for element in ("Fe", "Mg")]
+    sides = [
+        pd.DataFrame(
+            {
+                "experiment": columns["experiment"], "phase": phase, "technique": "probe", "batch": "1",
+                "analyte_first": "Fe", "analyte_second": "Mg", "correlation": columns[f"r_{side}"], "n_common": n[place],
+            }
+        )
+        for place, (side, phase) in enumerate((("alpha", "olivine"), ("beta", "glass")))
+    ]  # fmt: skip
+    return pd.concat(rows, ignore_index=True), {("Fe", "Mg"): pd.concat(sides, ignore_index=True)}
+
+
+def _rows_of(columns, element):
+    own = {
+        name[0]: values for name, values in columns.items() if isinstance(name, tuple) and name[1] == element
+    }
+    D = own["mean_alpha_ppm"] / own["mean_beta_ppm"]
+    relative = np.hypot(*(own[f"se_{side}_ppm"] / own[f"mean_{side}_ppm"] for side in ("alpha", "beta")))
+    table = pd.DataFrame(own).assign(
+        experiment=columns["experiment"], alpha="olivine", beta="glass", element=element, kind="value", D=D, D_sd=D * relative,
+        shared_sd_alpha=0.0, shared_sd_beta=0.0, dof=10.0,
+    )  # fmt: skip
+    for side in ("alpha", "beta"):
+        table = table.assign(
+            **{f"technique_{side}": "probe", f"batch_{side}": "1", f"analyte_{side}": element}
+        )
+    return table
+
+
+@pytest.mark.parametrize("correlation", [(0.0, 0.0), (-0.95, 0.0), (0.95, 0.0), (-0.9, 0.9)])
+@pytest.mark.parametrize("n", [(5, 5), (10, 6)])
+def test_coverage_with_and_without_correlation(correlation, n):
+    """1500 sessions each: zoned crystals trade Fe for Mg, totals move both together."""
+    rng = np.random.default_rng(17)
+    truth = np.array([[8.0, 29.0], [7.0, 6.0]])
+    table, correlations = simulated(
+        rng, truth, ((0.05, 0.02), (0.01, 0.01)), 0.005, correlation, n, cases=1500
+    )
+    found = exchange_tables(table, covariance(table.iloc[:0]), correlations)[0]
+    true = (8.0 / 29.0) / (7.0 / 6.0)
+    inside = (found["K_D_lo"] <= true) & (true <= found["K_D_hi"])
+    assert 0.935 < inside.mean() < 0.985
+    # Taken as independent the crystals that trade Fe for Mg fall short.
+    if correlation == (-0.95, 0.0):
+        apart = exchange_tables(table, covariance(table.iloc[:0]))[0]
+        assert ((apart["K_D_lo"] <= true) & (true <= apart["K_D_hi"])).mean() < 0.93
+
+
+def test_reversed_elements_give_the_reciprocal():
+    table = partition([{"element": "Fe", "D": 1.2, "D_sd": 0.1}, {"element": "Mg", "D": 4.2, "D_sd": 0.1}])
+    one = exchange_tables(table, covariance(table))[0].iloc[0]
+    other = exchange_tables(table, covariance(table), pairs=(("Mg", "Fe"),))[0].iloc[0]
+    assert other["K_D"] == pytest.approx(1 / one["K_D"])
+    assert (other["K_D_lo"], other["K_D_hi"]) == pytest.approx((1 / one["K_D_hi"], 1 / one["K_D_lo"]))
+    assert other["K_D_sd"] / other["K_D"] == pytest.approx(one["K_D_sd"] / one["K_D"])
+
+
+def test_shared_factors_cancel_and_own_ones_do_not():
+    rows = [{"element": "Fe", "D": 1.2}, {"element": "Mg", "D": 4.2}]
+    factors = {"shared_sd_alpha": 0.1, "shared_sd_beta": 0.0}
+    plain = partition(rows)
+    wide = plain.assign(**factors, D_sd=plain["D"] * np.hypot(0.05, 0.1))
+    table = exchange_tables(wide, covariance(wide))[0].iloc[0]
+    assert table["K_D_sd"] / table["K_D"] == pytest.approx(np.sqrt(2) * np.hypot(0.05, 0.1), rel=1e-6)
+    common = exchange_tables(wide, covariance(wide, shared_relative_sd=0.1))[0].iloc[0]
+    assert common["K_D_sd"] / common["K_D"] == pytest.approx(np.sqrt(2) * 0.05, rel=1e-6)
+
+
+def test_scatter_that_is_small_by_luck_is_widened_to_the_counting():
+    table = partition([{"element": "Fe", "D": 1.2, "D_sd": 1e-4}, {"element": "Mg", "D": 4.2, "D_sd": 1e-4}])
+    for side in ("alpha", "beta"):
+        table[f"counting_se_{side}_ppm"] = 0.01 * table[f"mean_{side}_ppm"]
+    found = exchange_tables(table, covariance(table))[0].iloc[0]
+    assert found["K_D_hi"] / found["K_D"] - 1 == pytest.approx(1.96 * 0.02, rel=0.05)
+
+
+def test_one_spot_has_a_value_without_an_interval():
+    table = partition(
+        [{"element": "Fe", "D": 1.2}, {"element": "Mg", "D": 4.2}], n_independent_beta=1, dof_beta=0.0
+    )
+    coefficients, checks = exchange_tables(table, covariance(table))
+    assert coefficients["K_D"][0] == pytest.approx(1.2 / 4.2)
+    assert np.isnan(coefficients["K_D_lo"][0])
+    assert checks["verdict"].tolist() == ["cannot tell"]
+    assert "one value" in checks["detail"][0]
+
+
+def test_an_element_that_may_be_absent_bounds_the_coefficient_or_leaves_none():
+    iron = {"element": "Fe", "D": 0.01, "D_sd": 0.008, "se_alpha_ppm": 0.8, "se_beta_ppm": 1.0}
+    table = partition([iron, {"element": "Mg", "D": 4.2}])
+    found, checks = exchange_tables(table, covariance(table))
+    assert np.isnan(found["K_D"][0])
+    assert found["K_D_lo"][0] == 0
+    assert 0.01 / 4.2 < found["K_D_hi"][0] < 0.02
+    assert checks["verdict"].tolist() == ["differs"]  # far below the window of olivine
+    below = exchange_tables(table, covariance(table), pairs=(("Mg", "Fe"),))[1]
+    assert "lies between" in below["detail"][0]
+
+
+def test_a_mean_with_limits_goes_by_the_two_coefficients():
+    table = partition([{"element": "Fe", "D": 1.2}, {"element": "Mg", "D": 4.2}])
+    table.loc[0, ["mean_alpha_ppm", "se_alpha_ppm", "counting_se_alpha_ppm"]] = np.nan
+    found, checks = exchange_tables(table, covariance(table))
+    assert found["K_D"][0] == pytest.approx(1.2 / 4.2)
+    assert "from the two D" in checks["detail"][0]

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tieline.assess.exchange import exchange_coefficient
+from tieline.assess.exchange_coefficients import exchange_coefficient
 from tieline.assess.ferric import kress_carmichael
 from tieline.chemistry.elements import atomic_weight
 from tieline.chemistry.exchange import windows_for

@@ -1,13 +1,11 @@
-"""Exchange coefficients of element pairs between two phases, from their correlated partition coefficients."""
+"""Exchange coefficients of element pairs between two phases, beside the windows expected of them."""
 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from scipy import special
 
 from tieline.assess.evidence import (
     CANNOT_TELL,
@@ -15,74 +13,25 @@ from tieline.assess.evidence import (
     CONSISTENT,
     DIFFERS,
     PAIR_KEYS,
-    Variances,
     base_phase,
     by_pair,
     check,
-)  # fmt: skip
+)
+from tieline.assess.exchange_coefficients import Coefficients, coefficients
 from tieline.assess.ferric import FerricShare
 from tieline.chemistry.exchange import windows_for
+from tieline.statistics.groups import FloatArray
 
 if TYPE_CHECKING:
     import pandas as pd
 
 MELTS = ("glass", "melt", "liquid")
 _NUMBERS = (
-    "K_D", "K_D_sd", "K_D_lo", "K_D_hi", "ferric_share", "ferric_share_sd", "window_lo", "window_hi",
+    "K_D", "K_D_sd", "K_D_lo", "K_D_hi", "dof", "correlation_alpha", "correlation_beta", "ferric_share", "ferric_share_sd",
+    "window_lo", "window_hi",
 )  # fmt: skip
 EXCHANGE_COLUMNS = (*PAIR_KEYS, "first", "second", *_NUMBERS, "window_source", "verdict")
-
-
-@dataclass(frozen=True)
-class ExchangeCoefficient:
-    """K_D with its standard deviation and interval; nan and a reason where it cannot be told."""
-
-    value: float
-    sd: float
-    low: float
-    high: float
-    reason: str = ""
-
-
-def exchange_coefficient(
-    D_first: float,
-    D_second: float,
-    covariance: np.ndarray,
-    *,
-    dof: float = np.inf,
-    ferrous_factor: float = 1.0,
-    ferrous_factor_relative_sd: float = 0.0,
-    confidence: float = 0.95,
-) -> ExchangeCoefficient:
-    """K_D = (first/second in alpha) / (first/second in beta) = factor · D_first / D_second.
-
-    covariance (2, 2) of the two D. Atomic weights cancel: K_D by mass and by amount of substance are the same number.
-    ferrous_factor, (1 - ferric share in alpha) / (1 - ferric share in beta), turns total iron into Fe2+ where `first` is
-    iron. The interval is Fieller's (1954, J. R. Stat. Soc. B 16:175) for correlated D; it is open, and the result
-    "cannot tell", where D_second is not significantly above zero.
-    """
-    if not (np.isfinite(D_first) and np.isfinite(D_second) and np.all(np.isfinite(covariance))):
-        return ExchangeCoefficient(
-            np.nan, np.nan, np.nan, np.nan, "a partition coefficient or its error is missing"
-        )
-    if D_first <= 0 or D_second <= 0 or np.any(np.diag(covariance) < 0):
-        return ExchangeCoefficient(
-            np.nan, np.nan, np.nan, np.nan, "a partition coefficient is not above zero"
-        )
-    a, b = ferrous_factor * D_first, D_second
-    variance_a = ferrous_factor**2 * covariance[0, 0] + (a * ferrous_factor_relative_sd) ** 2
-    joint, variance_b = ferrous_factor * covariance[0, 1], float(covariance[1, 1])
-    tail = 0.5 + 0.5 * confidence
-    t = float(special.stdtrit(dof, tail) if np.isfinite(dof) and dof > 0 else special.ndtri(tail))
-    value = a / b
-    sd = float(np.sqrt(max(variance_a - 2 * value * joint + value**2 * variance_b, 0.0))) / b
-    square, middle, rest = b**2 - t**2 * variance_b, a * b - t**2 * joint, a**2 - t**2 * variance_a
-    if square <= 0:
-        return ExchangeCoefficient(
-            np.nan, np.nan, np.nan, np.nan, "the second partition coefficient is not significantly above zero"
-        )
-    half = float(np.sqrt(max(middle**2 - square * rest, 0.0)))
-    return ExchangeCoefficient(value, sd, max((middle - half) / square, 0.0), (middle + half) / square)
+Correlations = Mapping[tuple[str, str], "pd.DataFrame"]
 
 
 def ferrous_factor(alpha: FerricShare | None, beta: FerricShare | None) -> tuple[float, float]:
@@ -95,6 +44,7 @@ def ferrous_factor(alpha: FerricShare | None, beta: FerricShare | None) -> tuple
 def exchange_tables(
     partition: pd.DataFrame,
     covariance: pd.DataFrame,
+    correlations: Correlations | None = None,
     *,
     pairs: Sequence[tuple[str, str]] = (("Fe", "Mg"),),
     ferric: Mapping[tuple[str, str], FerricShare] | None = None,
@@ -104,82 +54,133 @@ def exchange_tables(
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """One row per experiment, pair of phases and pair of elements: the coefficients, and rows of the `assess` table.
 
-    partition, covariance: columns as in the stage files of those names. ferric: (experiment, phase) -> share; phases without
-    one are taken as free of Fe3+, and the detail says so. windows: (phase, "Fe-Mg") -> low, high, source, in the place of
-    the published ones, which hold for silicate melts and so are used where beta is one. Where a window's source gives
-    no range, or none is known, the verdict is "cannot tell".
+    partition, covariance: columns as in the stage files of those names; correlations: pair of elements -> how they vary
+    together between the spots, as `spot_correlations` makes it; without it they count as independent. ferric:
+    (experiment, phase) -> share; phases without one are taken as free of Fe3+, and the detail says so. windows: (phase,
+    "Fe-Mg") -> low, high, source, in the place of the published ones, which hold for silicate melts and so are used where
+    beta is one. Where a window's source gives no range, or none is known, the verdict is "cannot tell".
     """
     import pandas as pd
 
-    rows: list[dict[str, Any]] = []
-    coefficients: list[dict[str, Any]] = []
     wanted = sorted({element for pair in pairs for element in pair})
+    own = partition[partition["element"].isin(wanted)]
     variances = by_pair(covariance[covariance["element"].isin(wanted) & covariance["other"].isin(wanted)])
-    for (experiment, alpha, beta), group in sorted(_values_by_pair(partition, wanted).items()):
-        for first, second in pairs:
-            if first not in group or second not in group:
-                continue
-            (D_first, dof_first), (D_second, dof_second) = group[first], group[second]
-            factor, relative, assumption = 1.0, 0.0, ""
-            if "Fe" in (first, second):
-                shares = {phase: (ferric or {}).get((experiment, phase)) for phase in (alpha, beta)}
-                factor, relative = ferrous_factor(shares[alpha], shares[beta])
-                factor = factor if first == "Fe" else 1 / factor
-                assumption = " Ferric share: " + "; ".join(
-                    f"{phase} {share.value:.3f} ± {share.sd:.3f} ({share.source})"
-                    if share
-                    else f"{phase} none assumed"
-                    for phase, share in shares.items()
-                )
-            matrix = _matrix(variances.get((experiment, alpha, beta), {}), first, second)
-            dof = np.nanmin([np.inf, dof_first, dof_second])
-            found = exchange_coefficient(
-                D_first, D_second, matrix, dof=float(dof),
-                ferrous_factor=factor, ferrous_factor_relative_sd=relative, confidence=confidence,
-            )  # fmt: skip
-            low, high, source = _window(alpha, beta, f"{first}-{second}", windows or {}, melts)
-            keys = dict(zip(PAIR_KEYS, (experiment, alpha, beta), strict=True))
-            verdict = compare(found, low, high)
-            share = (ferric or {}).get((experiment, beta)) if "Fe" in (first, second) else None
-            numbers = (
-                found.value, found.sd, found.low, found.high, share.value if share else np.nan,
-                share.sd if share else np.nan, low, high,
-            )  # fmt: skip
-            coefficients.append(
-                {**keys, "first": first, "second": second, "window_source": source, "verdict": verdict}
-                | dict(zip(_NUMBERS, numbers, strict=True))
-            )
-            rows.append(
-                check(
-                    "exchange", keys, f"K_D({first}-{second})", verdict,
-                    _words(found, source, confidence) + assumption,
-                    value=found.value, sd=found.sd, expected_lo=low, expected_hi=high,
-                )
-            )  # fmt: skip
+    rows: list[dict[str, Any]] = []
+    checks: list[dict[str, Any]] = []
+    for pair in pairs:
+        both = _both(own, pair, (correlations or {}).get(pair))
+        shares = _shares(both, ferric or {}) if "Fe" in pair else []
+        factor, relative = _ferrous_factors(shares, len(both), inverse=pair[0] != "Fe")
+        found = coefficients(both, variances, pair, factor, relative, confidence)
+        made = _rows(both, pair, found, shares, windows or {}, melts, confidence)
+        rows.extend(row for row, _ in made)
+        checks.extend(one for _, one in made)
+    order = [(*(row[key] for key in PAIR_KEYS), pairs.index((row["first"], row["second"]))) for row in rows]
+    places = sorted(range(len(rows)), key=order.__getitem__)
     return (
-        pd.DataFrame(coefficients, columns=list(EXCHANGE_COLUMNS)),
-        pd.DataFrame(rows, columns=list(CHECK_COLUMNS)),
+        pd.DataFrame([rows[place] for place in places], columns=list(EXCHANGE_COLUMNS)),
+        pd.DataFrame([checks[place] for place in places], columns=list(CHECK_COLUMNS)),
     )
 
 
-def _values_by_pair(
-    partition: pd.DataFrame, elements: Sequence[str]
-) -> dict[tuple[str, str, str], dict[str, tuple[float, float]]]:
-    """(experiment, alpha, beta) -> element -> D and its degrees of freedom, NaN where unknown."""
-    found: dict[tuple[str, str, str], dict[str, tuple[float, float]]] = {}
-    chosen = partition.loc[partition["element"].isin(elements), [*PAIR_KEYS, "element", "D", "dof"]]
-    for experiment, alpha, beta, element, D, dof in chosen.itertuples(index=False):
-        found.setdefault((experiment, alpha, beta), {})[element] = float(D), float(dof)
-    return found
+def _both(partition: pd.DataFrame, pair: tuple[str, str], correlation: pd.DataFrame | None) -> pd.DataFrame:
+    """One row per pair of phases that has D of both elements, with the correlations in its two phases."""
+    parts = [partition[partition["element"] == element] for element in pair]
+    both = parts[0].merge(parts[1], on=list(PAIR_KEYS), suffixes=("_first", "_second"))
+    for side in ("alpha", "beta"):
+        names = {"phase": side, "technique": f"technique_{side}_first", "batch": f"batch_{side}_first"}
+        names |= {f"analyte_{which}": f"analyte_{side}_{which}" for which in ("first", "second")}
+        if correlation is None:
+            both = both.assign(**{f"correlation_{side}": 0.0, f"n_common_{side}": 0})
+            continue
+        known = correlation.rename(
+            columns=names | {"correlation": f"correlation_{side}", "n_common": f"n_common_{side}"}
+        )
+        keys = ["experiment", *names.values()]
+        both = both.merge(known[[*keys, f"correlation_{side}", f"n_common_{side}"]], on=keys, how="left")
+        together = both[f"n_common_{side}"].notna()
+        for name in ("technique", "batch"):
+            together &= both[f"{name}_{side}_first"] == both[f"{name}_{side}_second"]
+        both[f"correlation_{side}"] = both[f"correlation_{side}"].where(together, 0.0)
+        both[f"n_common_{side}"] = both[f"n_common_{side}"].where(together, 0).astype(np.int64)
+    return both
 
 
-def compare(found: ExchangeCoefficient, low: float, high: float) -> str:
-    """Consistent where the interval meets the window; cannot tell where it reaches beyond it on both sides."""
-    if not all(np.isfinite(number) for number in (found.low, found.high, low, high)):
+def _shares(
+    both: pd.DataFrame, ferric: Mapping[tuple[str, str], FerricShare]
+) -> list[tuple[FerricShare | None, FerricShare | None]]:
+    """The ferric shares of alpha and beta, row by row."""
+    keys = zip(both["experiment"], both["alpha"], both["beta"], strict=True)
+    return [
+        (ferric.get((experiment, alpha)), ferric.get((experiment, beta))) for experiment, alpha, beta in keys
+    ]
+
+
+def _ferrous_factors(
+    shares: Sequence[tuple[FerricShare | None, FerricShare | None]], count: int, inverse: bool
+) -> tuple[FloatArray, FloatArray]:
+    """Factor on K_D and its relative sd, (count,) each; inverse: iron is the second element."""
+    found = [ferrous_factor(*one) for one in shares] or [(1.0, 0.0)] * count
+    factor, relative = np.array(found, dtype=np.float64).reshape(-1, 2).T
+    return (1.0 / factor if inverse else factor), relative
+
+
+def _rows(
+    both: pd.DataFrame,
+    pair: tuple[str, str],
+    found: Coefficients,
+    shares: Sequence[tuple[FerricShare | None, FerricShare | None]],
+    windows: Mapping[tuple[str, str], tuple[float, float, str]],
+    melts: Sequence[str],
+    confidence: float,
+) -> list[tuple[dict[str, Any], dict[str, Any]]]:
+    """A row of coefficients and one of checks for every row of `both`."""
+    made = []
+    labels = both[list(PAIR_KEYS)].to_dict("records")
+    known: dict[tuple[str, str], tuple[float, float, str]] = {}
+    for place, keys in enumerate(labels):
+        phases = keys["alpha"], keys["beta"]
+        if phases not in known:
+            known[phases] = _window(*phases, "-".join(pair), windows, melts)
+        low, high, source = known[phases]
+        share = shares[place][1] if shares else None
+        K_D, ends = found.value[place], (found.low[place], found.high[place])
+        verdict = compare(*ends, low, high)
+        numbers = (
+            K_D, found.sd[place], *ends, found.dof[place], both["correlation_alpha"].iat[place],
+            both["correlation_beta"].iat[place], share.value if share else np.nan, share.sd if share else np.nan, low, high,
+        )  # fmt: skip
+        words = _words(K_D, *ends, str(found.reason[place]), source, confidence)
+        words += _assumption(keys, shares[place]) if shares else ""
+        row = {**keys, "first": pair[0], "second": pair[1], "window_source": source, "verdict": verdict}
+        made.append(
+            (
+                row | dict(zip(_NUMBERS, numbers, strict=True)),
+                check("exchange", keys, f"K_D({pair[0]}-{pair[1]})", verdict, words, value=K_D,
+                      sd=found.sd[place], expected_lo=low, expected_hi=high),
+            )
+        )  # fmt: skip
+    return made
+
+
+def _assumption(keys: Mapping[str, str], shares: tuple[FerricShare | None, FerricShare | None]) -> str:
+    parts = [
+        f"{phase} {share.value:.3f} ± {share.sd:.3f} ({share.source})" if share else f"{phase} none assumed"
+        for phase, share in zip((keys["alpha"], keys["beta"]), shares, strict=True)
+    ]
+    return f" Ferric share: {'; '.join(parts)}."
+
+
+def compare(found_low: float, found_high: float, low: float, high: float) -> str:
+    """Consistent where the interval meets the window; cannot tell where it reaches beyond it on both sides.
+
+    An interval without an upper end, infinite, can still lie above the window.
+    """
+    if np.isnan(found_low) or np.isnan(found_high) or not (np.isfinite(low) and np.isfinite(high)):
         return CANNOT_TELL
-    if found.high < low or found.low > high:
+    if found_high < low or found_low > high:
         return DIFFERS
-    return CANNOT_TELL if found.low < low and found.high > high else CONSISTENT
+    return CANNOT_TELL if found_low < low and found_high > high else CONSISTENT
 
 
 def _window(
@@ -202,18 +203,11 @@ def _window(
     return np.nan, np.nan, ""
 
 
-def _words(found: ExchangeCoefficient, source: str, confidence: float) -> str:
-    if found.reason:
-        return f"No exchange coefficient: {found.reason}."
+def _words(K_D: float, low: float, high: float, reason: str, source: str, confidence: float) -> str:
     window = f" Window: {source}." if source else " No window is known for this pair."
-    return (
-        f"K_D {found.value:.4g}, {found.low:.4g} to {found.high:.4g} at {confidence:.0%}; by mass and by amount alike."
-        + window
-    )
-
-
-def _matrix(variances: Variances, first: str, second: str) -> np.ndarray:
-    def entry(one: str, two: str) -> float:
-        return variances.get((one, two), variances.get((two, one), 0.0 if one != two else np.nan))
-
-    return np.array([[entry(one, two) for two in (first, second)] for one in (first, second)])
+    if np.isnan(low):
+        return f"No exchange coefficient with an interval: {reason}."
+    if np.isnan(K_D):
+        return f"K_D lies between {low:.4g} and {high:.4g} at {confidence:.0%}: {reason}.{window}"
+    remark = f" {reason[0].upper()}{reason[1:]}." if reason else ""
+    return f"K_D {K_D:.4g}, {low:.4g} to {high:.4g} at {confidence:.0%}; by mass and by amount alike.{remark}{window}"

@@ -10,6 +10,7 @@ import pyarrow as pa
 
 from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
 from tieline.assess.mean_factors import mean_factors
+from tieline.assess.spot_correlation import SpotTables, spot_correlations
 from tieline.assess.starting_composition import Start, read_starting_composition
 from tieline.columns import EVIDENCE
 from tieline.reading.input_file import InputFile
@@ -21,7 +22,14 @@ if TYPE_CHECKING:
 
 PARTITION_COLUMNS = (
     "experiment", "alpha", "beta", "element", "D", "D_sd", "D_lo", "D_hi", "kind", "dof", "share_counting",
-    "share_spread", "mean_beta_ppm", "se_beta_ppm", "shared_sd_alpha", "shared_sd_beta", "batch_alpha", "batch_beta",
+    "share_spread", "shared_sd_alpha", "shared_sd_beta",
+    *(
+        name.replace("*", side)
+        for side in ("alpha", "beta")
+        for name in (
+            "technique_*", "batch_*", "analyte_*", "n_independent_*", "mean_*_ppm", "se_*_ppm", "counting_se_*_ppm", "dof_*",
+        )
+    ),
 )  # fmt: skip
 PAIR_COLUMNS = ("experiment", "phase", "element", "batch", "mean_ppm", "se_ppm", "dof")
 INVERSE_TEMPERATURE = "10^4/T"
@@ -33,6 +41,9 @@ def assess(
     partition_covariance: pa.Table,
     pair: pa.Table,
     calibrate: pa.Table,
+    convert: pa.Table,
+    screen: pa.Table,
+    ingest_spots: pa.Table,
     ingest_experiments: pa.Table,
     *,
     settings: AssessSettings,
@@ -48,7 +59,15 @@ def assess(
     covariance = frame(partition_covariance, partition_covariance.column_names)
     conditions = conditions_frame(ingest_experiments, settings)
     parts = [
-        _exchange(D, covariance, means, conditions, settings),
+        _exchange(
+            D,
+            covariance,
+            means,
+            SpotTables(convert, screen, calibrate, ingest_spots),
+            pair,
+            conditions,
+            settings,
+        ),
         _lattice_strain(D, covariance, conditions, settings),
         _mass_balance(D, means, start, settings),
         _trends(D, conditions, settings),
@@ -73,6 +92,8 @@ def _exchange(
     D: pd.DataFrame,
     covariance: pd.DataFrame,
     means: pd.DataFrame,
+    spots: SpotTables,
+    pair: pa.Table,
     conditions: Conditions,
     settings: AssessSettings,
 ) -> Frames:
@@ -82,7 +103,8 @@ def _exchange(
     own = settings.exchange
     windows = {(one.phase, one.pair): (one.low, one.high, one.source) for one in own.windows}
     coefficients, checks = exchange_tables(
-        D, covariance, pairs=own.pairs, ferric=ferric_shares(means, conditions, settings), windows=windows,
+        D, covariance, spot_correlations(spots, pair, own.pairs), pairs=own.pairs,
+        ferric=ferric_shares(means, conditions, settings), windows=windows,
         melts=settings.melts, confidence=settings.confidence,
     )  # fmt: skip
     return {"assess": checks, "assess.exchange": coefficients}
