@@ -49,6 +49,19 @@ def test_reference_materials_by_phase_experiment_and_spot_label():
     ]
 
 
+@pytest.mark.parametrize(
+    "label",
+    ["RG-1", "rg\N{NO-BREAK SPACE}\N{NO-BREAK SPACE}2", "RG-1  b", "STRA\N{LATIN SMALL LETTER SHARP S}E 4"],
+)
+def test_a_material_is_known_in_any_spelling_that_folding_makes_the_same(label):
+    """A combined label is not cleaned before, so that what stands between the marks comes as it is."""
+    text = f"Label,MgO\nA_glass_1,1\nA_glass_{label},1\n"
+    pattern = {"column": "Label", "pattern": "(?P<experiment>[^_]+)_(?P<phase>[^_]+)_(?P<spot>.+)"}
+    names = {"RG-1": ["rg 2", "rg-1 *"], "S": ["strasse*"]}
+    result = run(text, {"columns": {}, "labels": pattern}, reference_materials={"names": names})
+    assert [material is not None for (material,) in spots(result, "material")] == [False, True]
+
+
 def test_labels_are_split_by_a_pattern():
     text = "Label,MgO\nTX07-ol3-rim-2,1\nTX08-gl-9,2\nTX09-cpx1-12um-4,3\n"
     pattern = (

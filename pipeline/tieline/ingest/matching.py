@@ -7,12 +7,14 @@ from dataclasses import replace
 
 import numpy as np
 import numpy.typing as npt
+import pyarrow as pa
+import pyarrow.compute as pc
 
 from tieline.chemistry.phases import PHASES, phase_name
 from tieline.errors import InputError, Problem
 from tieline.ingest.asides import shown
 from tieline.ingest.spots import Spots
-from tieline.ingest.texts import Texts
+from tieline.ingest.texts import UNCLEAN, Texts
 from tieline.reading.cell_text import fold
 from tieline.results import Remark
 
@@ -28,10 +30,10 @@ def with_materials(spots: Spots, names: Spellings) -> Spots:
     """
     if not names or not len(spots):
         return spots
-    material_of = _material_lookup(names)
-    material = spots.spot.renamed(material_of)
+    material_of, may_be = _material_lookup(names)
+    material = spots.spot.renamed(material_of, may_be(spots.spot))
     for labels in (spots.experiment, spots.phase):
-        material = labels.renamed(material_of).filled(material)
+        material = labels.renamed(material_of, may_be(labels)).filled(material)
     is_material = ~material.is_missing()
     nothing = Texts.constant(None, len(spots))
     return replace(
@@ -42,8 +44,13 @@ def with_materials(spots: Spots, names: Spellings) -> Spots:
     )
 
 
-def _material_lookup(names: Spellings) -> Callable[[str], str | None]:
-    """Tells the reference material a label means, or None."""
+def _material_lookup(
+    names: Spellings,
+) -> tuple[Callable[[str], str | None], Callable[[Texts], npt.NDArray[np.bool_]]]:
+    """Tells the reference material a label means, or None; and of which known texts it has to be asked.
+
+    Nearly every spot has a label of its own, so that those which cannot mean a material are passed over together.
+    """
     whole = {fold(spelling): name for name, given in names.items() for spelling in (name, *given)}
     starts = [(spelling[:-1], name) for spelling, name in whole.items() if spelling.endswith("*")]
 
@@ -51,7 +58,17 @@ def _material_lookup(names: Spellings) -> Callable[[str], str | None]:
         folded = fold(text)
         return whole.get(folded) or next((name for start, name in starts if folded.startswith(start)), None)
 
-    return material_of
+    def may_be(labels: Texts) -> npt.NDArray[np.bool_]:
+        texts = labels.dictionary()
+        lower = pc.ascii_lower(texts)
+        # What `fold` does beyond lower case is left to it.
+        possible = pc.match_substring_regex(texts, UNCLEAN)
+        possible = pc.or_(possible, pc.is_in(lower, value_set=pa.array(whole, pa.string())))
+        for start, _ in starts:
+            possible = pc.or_(possible, pc.starts_with(lower, start))
+        return np.asarray(possible.to_numpy(zero_copy_only=False), dtype=np.bool_)
+
+    return material_of, may_be
 
 
 def with_phases(spots: Spots, spellings: Spellings) -> Spots:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -74,15 +75,15 @@ class Matrices:
     unreadable: Mask
 
 
+# One style serves all columns written alike: folding its words takes as long as reading a thousand cells.
+_style = lru_cache(maxsize=256)(CellStyle)
+
+
 def cell_style(table: Table, decimal: str, unit: str | None) -> CellStyle:
     """How the cells of a column in `unit` are written."""
-    return CellStyle(
-        decimal=decimal,
-        thousands=table.thousands,
-        below_limit=table.below_limit,
-        not_measured=table.not_measured,
-        units=unit_spellings(unit) if unit else frozenset(),
-        zero_state=ZERO_STATE[table.zero],
+    units = unit_spellings(unit) if unit else frozenset()
+    return _style(
+        decimal, table.thousands, table.below_limit, table.not_measured, units, ZERO_STATE[table.zero]
     )
 
 
@@ -173,7 +174,7 @@ def _sigma(
 def _for_sigma(style: CellStyle, relative: bool) -> CellStyle:
     """Sigma cells: a zero is a zero, and a relative one may carry a per cent sign."""
     units = frozenset({"%"}) if relative else style.units
-    return CellStyle(style.decimal, style.thousands, style.below_limit, style.not_measured, units)
+    return _style(style.decimal, style.thousands, style.below_limit, style.not_measured, units)
 
 
 def block_header(column: AnalyteColumn, what: str) -> str:
@@ -188,7 +189,7 @@ def _limit(
     own = cells.limit
     limit = own
     if column.limit_index is not None:
-        words = CellStyle(style.decimal, style.thousands, style.below_limit, style.not_measured, style.units)
+        words = _style(style.decimal, style.thousands, style.below_limit, style.not_measured, style.units)
         read = parse_cells(block.cells[column.limit_index], words)
         header = block_header(column, "limit")
         bad = _unreadable(read, block, column.limit_index, header, asides)

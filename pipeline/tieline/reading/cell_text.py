@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import dataclass, field
+from functools import cache
 from typing import NamedTuple
 
 VALUE, BELOW_LIMIT, NOT_MEASURED, UNREADABLE = 0, 1, 2, 3
@@ -196,6 +197,7 @@ def unit_of(text: str) -> str | None:
     return _UNIT_OF.get(folded)
 
 
+@cache
 def unit_spellings(unit: str) -> frozenset[str]:
     """Folded spellings of one unit."""
     return frozenset(fold(spelling) for spelling in UNITS[unit])

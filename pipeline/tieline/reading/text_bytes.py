@@ -97,24 +97,28 @@ def _find_encoding(file: InputFile, data: pa.Buffer) -> str:
     even, odd = head[0::2].count(0), head[1::2].count(0)
     if len(head) > 3 and max(even, odd) > len(head) // 8 and min(even, odd) * 8 < max(even, odd):
         return "utf-16-le" if odd > even else "utf-16-be"
-    return "utf-8" if _first_bad_byte(data, "utf-8") is None else "cp1252"
+    return "utf-8" if _first_bad_byte(data) is None else "cp1252"
 
 
-def _first_bad_byte(data: pa.Buffer, encoding: str) -> int | None:
-    decoder = codecs.getincrementaldecoder(encoding)()
+def _first_bad_byte(data: pa.Buffer) -> int | None:
+    """Place of the first byte that is no UTF-8."""
+    decoder = codecs.getincrementaldecoder("utf-8")()
     view = memoryview(data)
     for start in range(0, len(view), CHUNK):
         last = start + CHUNK >= len(view)
         pending = len(decoder.getstate()[0])
+        piece = bytes(view[start : start + CHUNK])
+        if not pending and piece.isascii():  # seen in a tenth of the time
+            continue
         try:
-            decoder.decode(view[start : start + CHUNK], last)
+            decoder.decode(piece, last)
         except UnicodeDecodeError as error:
             return start + error.start - pending
     return None
 
 
 def _check_utf8(file: InputFile, data: pa.Buffer) -> None:
-    bad = _first_bad_byte(data, "utf-8")
+    bad = _first_bad_byte(data)
     if bad is not None:
         raise InputError(_bad_encoding(file, data, bad, "utf-8"))
 
