@@ -53,7 +53,8 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
     rescaled = internal_standards(
         ingest, element_labels, (values.value, values.sigma), settings.internal_standard
     )
-    values = values.scaled(rescaled.factor)
+    if rescaled.applied.any():
+        values = values.scaled(rescaled.factor)
     columns = {column.name: ingest.column(column.name) for column in VALUE_KEYS}
     table = build(
         CONVERT,
@@ -154,6 +155,8 @@ def _normalised(
     The variance of x/S follows from S = sum(k x) with independent x:
     u²(x/S) = [u²(x) (1 - 2 k x/S) + (x/S)² u²(S)] / S².
     """
+    if not settings.normalise:
+        return values, []
     technique, remarks = labels(ingest, "technique"), []
     spot, first = spot_codes(ingest)
     share = wt_percent_per_ppm(element.texts)[element.codes] if len(element.codes) else np.zeros(0)

@@ -58,7 +58,7 @@ def formula_tables(
     value, sigma: element ppm of every row of `ingest`, before any internal standard.
     """
     whole = _whole_analyses(ingest, element, value, sigma)
-    phase = labels(ingest, "phase").text()[whole.rows]
+    phase = labels(ingest.select(["phase"]).take(pa.array(whole.rows)), "phase").text()
     oxygens, ideal = _bases(phase, settings)
     columns = {name: np.full(len(whole.rows), np.nan) for name in _number_columns()}
     columns["total_wt"], columns["total_sd_wt"], columns["oxygens"] = whole.total, whole.total_sd, oxygens
@@ -80,26 +80,31 @@ def formula_tables(
 
 def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray) -> Whole:
     spot, first = spot_codes(ingest)
-    measured = np.flatnonzero(np.isfinite(value))
+    known = np.isfinite(value)
     share = wt_percent_per_ppm(element.texts) if element.texts else np.zeros(0)
-    rough = np.bincount(
-        spot[measured], weights=share[element.codes[measured]] * value[measured], minlength=len(first)
-    )
+    parts = np.where(known, share[element.codes] * value, 0.0) if element.texts else value
+    rough = np.bincount(spot, weights=parts, minlength=len(first))
     chosen = np.flatnonzero(rough > WHOLE_ABOVE_WT)
     place = np.full(len(first), -1)
     place[chosen] = np.arange(len(chosen))
-    cells = measured[place[spot[measured]] >= 0]
-    in_use = np.unique(element.codes[cells])
-    elements = tuple(element.texts[code] for code in in_use if element.texts[code] != "O")
+    if len(chosen) < len(first):
+        known &= (rough > WHOLE_ABOVE_WT)[spot]
+    cells = np.flatnonzero(known)
+    codes = element.codes[cells]
+    in_use = np.flatnonzero(np.bincount(codes, minlength=len(element.texts)))
+    in_use = in_use[[element.texts[code] != "O" for code in in_use]]
+    elements = tuple(element.texts[code] for code in in_use)
+    column = np.full(len(element.texts), -1)
+    column[in_use] = np.arange(len(in_use))
+    columns = column[codes]
+    if columns.min(initial=0) < 0:
+        cells, columns = cells[columns >= 0], columns[columns >= 0]
     shape = (len(chosen), len(elements))
     ppm, sigmas = np.full(shape, np.nan), np.full(shape, np.nan)
-    column = np.array(
-        [elements.index(text) if text in elements else -1 for text in element.texts], dtype=np.int64
-    )
     # In reverse, so that of an element measured twice in one spot the first column stands.
-    cells = cells[column[element.codes[cells]] >= 0][::-1]
-    target = place[spot[cells]], column[element.codes[cells]]
-    ppm[target], sigmas[target] = value[cells], sigma[cells]
+    cells = cells[::-1]
+    target = place[spot[cells]] * len(elements) + columns[::-1]
+    ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[cells], sigma[cells]
     total = oxide_total(ppm, elements) if len(chosen) else np.zeros(0)
     weights = wt_percent_per_ppm(elements) if elements else np.zeros(0)
     total_sd = np.sqrt(np.sum((np.where(np.isnan(ppm), 0.0, sigmas) * weights) ** 2, axis=1))
@@ -178,7 +183,7 @@ def _cation_table(
         CONVERT_CATIONS,
         {
             **{name: column.take(pa.array(spot)) for name, column in head.items()},
-            "element": np.array(elements, dtype=object)[element],
+            "element": Labels(element, elements).array(),
             "cations": atoms[spot, element],
             "cations_sd": sds[spot, element],
         },
