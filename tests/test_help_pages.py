@@ -38,6 +38,7 @@ def test_an_unknown_page_names_the_nearest(monkeypatch, capsys):
         (Problem("unknown key.", "session.toml", column="screen.totl"), "settings"),
         (Problem("not decided: which unit?", "session.toml", 4), "own-tables"),
         (Problem("is no number.", "probe.csv", 12, "MgO"), "own-tables"),
+        (Problem('no spot is called "x".', "ember/rulings.csv", 3, "spot"), "rulings"),
         (Problem("is sealed by SHA256SUMS.", "runs/x"), "audit"),
         (Problem("is a file, not a run folder.", "session.toml"), None),
         (Problem("no stage is called so."), None),

@@ -53,6 +53,8 @@ def page_for(problems: Sequence[Problem]) -> str | None:
         return None
     if any(file.endswith(".toml") for file in files):
         return "settings"
+    if any("rulings" in Path(file).stem for file in files):
+        return "rulings"
     if any(
         file.endswith(".parquet") or "sealed" in problem.message
         for file, problem in zip(files, problems, strict=True)

@@ -6,6 +6,7 @@ import re
 import shutil
 import tomllib
 from pathlib import Path
+from typing import Any
 
 import pandas as pd
 import pytest
@@ -137,6 +138,71 @@ def test_a_table_without_uncertainties_is_asked_about():
 def test_unknown_phases_are_asked_with_the_nearest_name():
     text = first_configuration([table("Point,Run,Phase,Ni ppm\na,X,olivne,2\nb,X,gl,3\n")], "s")
     assert any("olivne" in line and "olivine" in line for line in questions(text))
+
+
+MAJORS = "SiO2,MgO,FeO,CaO,Al2O3"
+
+
+def first_table(text: str) -> dict[str, Any]:
+    return tomllib.loads(first_configuration([table(text)], "s"))["ingest"]["tables"][0]
+
+
+def test_of_several_tables_every_question_names_its_own():
+    spots = f"Label,{MAJORS},Ni\nA1_ol_1,40,49,10,0.2,0,0.3\nA1_gl_2,50,8,9,12,15,0.02\n"
+    one = questions(first_configuration([table(spots, "probe.csv")], "s"))
+    assert one
+    assert not any("probe.csv" in line for line in one)
+    two = questions(first_configuration([table(spots, "probe.csv"), table(spots, "laser.csv")], "s"))
+    assert [line for line in two if "split rightly" in line] == [
+        f"# decide: {name}: is the label (such as A1_ol_1) split rightly: experiment, phase, grain?"
+        for name in ("probe.csv", "laser.csv")
+    ]
+    assert [line.count(".csv: ") for line in two] == [1] * 2 * len(one)
+
+
+def test_a_zone_is_known_by_what_stands_in_its_column():
+    rows = ["a,X,ol,Rim,40,49,10,0.2,0", "b,X,ol,core,40,49,10,0.2,0", "c,X,gl,,50,8,9,12,15"]
+    text = "\n".join([f"Point,Run,Phase,Where about,{MAJORS}", *rows])
+    assert first_table(text)["columns"]["zone"] == "Where about"
+    assert "Where about" not in str(questions(first_configuration([table(text)], "s")))
+
+
+def test_columns_that_are_not_known_are_asked_about_with_what_they_hold():
+    rows = ["a,X,ol,Rand,40,49,10,0.2,0,3", "b,X,ol,Kern,40,49,10,0.2,0,7", "c,X,gl,,50,8,9,12,15,"]
+    text = first_configuration([table("\n".join([f"Point,Run,Phase,Ort,{MAJORS},Gap", *rows]))], "s")
+    (asked,) = [line for line in questions(text) if "not read" in line]
+    assert "Ort (Rand, Kern); Gap (3, 7)" in asked
+    assert "zone" in asked
+    assert tomllib.loads(text)["ingest"]["tables"][0]["columns"]["ignore"] == ["Ort", "Gap"]
+
+
+def test_the_first_column_names_the_spots_where_no_two_are_alike():
+    rows = ["1,X,ol,40,49,10,0.2,0", "2,X,ol,40,49,10,0.2,0", "3,X,gl,50,8,9,12,15"]
+    assert first_table("\n".join([f"Punkt,Run,Phase,{MAJORS}", *rows]))["columns"]["spot"] == "Punkt"
+    again = "\n".join([f"Punkt,Run,Phase,{MAJORS}", *rows, rows[0]])
+    assert "spot" not in first_table(again)["columns"]
+
+
+def test_only_spots_are_counted():
+    header = f"Point,Run,Mineral,{MAJORS}"
+    rows = [
+        "a,X,Ol,40,49,10,0.2,0", "b,X,Ol,40,49,10,0.2,0", "Average,,olv,40,49,10,0.2,0", ",X,SD,1,1,1,1,1",
+        ",,,,,,,", header, "mean,X,gl,50,8,9,12,15", "c,X,gl,50,8,9,12,15",
+    ]  # fmt: skip
+    text = first_configuration([table("\n".join([header, *rows]))], "s")
+    assert "# 3 spots, 5 analytes" in text
+    assert "; rows not counted: 3 of averages and the like and 1 of repeated headers" in text
+    assert tomllib.loads(text)["ingest"]["phases"] == {"glass": ["gl"], "olivine": ["Ol"]}
+
+
+def test_a_zone_in_a_label_is_found_and_asked_about():
+    labels = ["X7-ol3-a-rim-2", "X7-cpx1-b-Core-1", "X8-gl-4"]
+    pattern = label_pattern(labels)
+    assert pattern is not None
+    zones = [re.fullmatch(pattern, label)["zone"] for label in labels]
+    assert zones == ["rim", "Core", None]
+    text = "\n".join([f"Label,{MAJORS}", *(f"{label},40,49,10,0.2,0" for label in labels)])
+    assert any("grain, zone?" in line for line in questions(first_configuration([table(text)], "s")))
 
 
 @pytest.mark.parametrize(

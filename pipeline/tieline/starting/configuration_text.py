@@ -10,13 +10,21 @@ import json
 import re
 from collections.abc import Sequence
 
-from tieline.ingest.rows import summary_pattern
 from tieline.reading.input_file import InputFile
-from tieline.settings.ingest import Table
 from tieline.starting.combined_labels import label_pattern
 from tieline.starting.look import Look, look_at, phases_of
 
 QUESTION = "# decide:"
+OTHER_LABELS = (
+    "spot",
+    "experiment",
+    "phase",
+    "grain",
+    "zone (rim, core)",
+    "distance_um",
+    "batch",
+    "sequence",
+)
 
 
 def first_configuration(files: Sequence[InputFile], session: str) -> str:
@@ -30,19 +38,24 @@ def first_configuration(files: Sequence[InputFile], session: str) -> str:
         "",
     ]
     for look in looks:
-        lines += [*_table(look), ""]
+        lines += [*_of_table(look, _table(look), several=len(looks) > 1), ""]
     lines += _phases(looks)
     lines += _reference_materials(looks)
     lines += _internal_standards(looks)
     return "\n".join(map(_one_line, lines)).rstrip("\n") + "\n"
 
 
+def _of_table(look: Look, lines: Sequence[str], several: bool) -> list[str]:
+    """With several tables every question names its own: questions are also read where the lines around are not."""
+    start = f"{QUESTION} "
+    named = f"{start}{look.file}: " if several else start
+    return [line.replace(start, named, 1) if line.startswith(start) else line for line in lines]
+
+
 def _table(look: Look) -> list[str]:
     kinds = "isotopes" if look.isotopes else "oxides and elements"
-    lines = [
-        "[[ingest.tables]]",
-        f"path = {_text(look.file)}    # {look.n_rows} rows, {len(look.analytes)} analytes ({kinds})",
-    ]
+    seen = f"{_counted(look.n_spots, 'spot')}, {len(look.analytes)} analytes ({kinds}){_not_spots(look)}"
+    lines = ["[[ingest.tables]]", f"path = {_text(look.file)}    # {seen}"]
     if look.isotopes:
         lines.append('technique = "laser"    # isotopes are reported')
     else:
@@ -65,6 +78,15 @@ def _table(look: Look) -> list[str]:
     return lines
 
 
+def _not_spots(look: Look) -> str:
+    words = " and ".join(f"{number} of {what}" for what, number in look.not_spots.items())
+    return f"; rows not counted: {words}" if words else ""
+
+
+def _counted(number: int, one: str) -> str:
+    return f"{number} {one}{'' if number == 1 else 's'}"
+
+
 def _unit(look: Look) -> list[str]:
     if look.unit is not None:
         return [f"unit = {_text(look.unit)}    # {look.unit_evidence}"]
@@ -82,24 +104,48 @@ def _columns(look: Look) -> list[str]:
         ignored.append(look.headers[look.total])
     if ignored:
         entries.append(f"ignore = [{', '.join(_text(header) for header in ignored)}]")
-    lines = [f"columns = {{ {', '.join(entries)} }}"]
     needed = [name for name in ("experiment", "phase") if name not in look.labels]
-    if not needed:
-        return lines
-    pattern = label_pattern(look.texts.get("spot", []))
-    if pattern is None:
-        return [
-            *lines,
-            f"{QUESTION} where do {' and '.join(needed)} stand? Name the columns above, or give labels.",
-        ]
+    pattern = label_pattern(look.texts.get("spot", [])) if needed else None
+    if pattern is not None:
+        return [*_split_labels(look, entries, pattern), *_unused(look)]
+    lines = _columns_line(entries)
+    if needed:
+        what = " and ".join(f"the {name}" for name in needed)
+        stand = "stands" if len(needed) == 1 else "stand"
+        lines.append(f"{QUESTION} in which column {stand} {what}? Name it in columns, or give labels.")
+    return [*lines, *_unused(look)]
+
+
+def _columns_line(entries: Sequence[str]) -> list[str]:
+    return [f"columns = {{ {', '.join(entries)} }}"] if entries else []
+
+
+def _split_labels(look: Look, entries: Sequence[str], pattern: str) -> list[str]:
+    """One column of labels that hold experiment and phase."""
     example = next(label for label in look.texts["spot"] if label)
     column = look.headers[look.labels["spot"]]
-    kept = [entry for entry in entries if not entry.startswith("spot =")]
+    found = re.compile(pattern).groupindex
+    parts = ", ".join(name for name in ("experiment", "phase", "grain", "zone") if name in found)
     return [
-        f"columns = {{ {', '.join(kept)} }}",
-        f"{QUESTION} is the label (such as {example}) split rightly: experiment, phase, grain?",
+        *_columns_line([entry for entry in entries if not entry.startswith("spot =")]),
+        f"{QUESTION} is the label (such as {example}) split rightly: {parts}?",
         f"labels = {{ column = {_text(column)}, pattern = '{pattern}' }}",
     ]
+
+
+def _unused(look: Look) -> list[str]:
+    """A column may hold what matters, such as rim and core, under a header that is not known."""
+    if not look.unused:
+        return []
+    columns = "; ".join(_column_shown(look.headers[index], texts) for index, texts in look.unused.items())
+    return [
+        f"{QUESTION} these columns are not read: {columns}. If one holds the {', '.join(OTHER_LABELS)} or comment, move it "
+        "from ignore to that name in columns."
+    ]
+
+
+def _column_shown(header: str, texts: Sequence[str]) -> str:
+    return f"{header} ({', '.join(texts)})" if texts else f"{header} (empty)"
 
 
 def _sigma(look: Look) -> list[str]:
@@ -132,13 +178,13 @@ def _phases(looks: Sequence[Look]) -> list[str]:
     for name, spellings in sorted(known.items()):
         lines.append(f"{_key(name)} = [{', '.join(_text(text) for text in spellings)}]")
     materials = _material_labels(looks)
-    summary = re.compile(summary_pattern(Table.model_fields["skip_row_labels"].default), re.IGNORECASE)
     for text, (count, near) in sorted(unknown.items()):
-        if text in materials or summary.search(text):
+        if text in materials:
             continue
         hint = f" Perhaps {' or '.join(near)}?" if near else ""
         lines.append(
-            f'{QUESTION} {count} spots are on "{text}".{hint} Add it to a phase above, or name it here.'
+            f'{QUESTION} {_counted(count, "spot")} {"is" if count == 1 else "are"} on "{text}".{hint} Add it to a phase '
+            "above, name it here, or give it under [ingest.reference_materials]."
         )
     return [*lines, ""]
 
@@ -173,13 +219,16 @@ def _reference_materials(looks: Sequence[Look]) -> list[str]:
 def _internal_standards(looks: Sequence[Look]) -> list[str]:
     if not any(look.isotopes for look in looks):
         return []
+    known, _ = phases_of([text for look in looks for text in look.texts.get("phase", [])])
+    assumed = ", ".join(f"{_key(name)} = ..." for name in sorted(known) or ("olivine", "glass"))
     return [
         f"{QUESTION} with which internal-standard values was the laser table made? Concentrations scale with them.",
         "# [[convert.internal_standard]]",
         '# technique = "laser"',
         '# element = "SiO2"',
-        "# assumed = { olivine = 40.0, glass = 50.0 }    # as assumed when the table was made",
-        '# actual = "probe-mean"                           # rescaled to what the probe measured on the phase',
+        '# unit = "wt%"',
+        f"# assumed = {{ {assumed} }}    # as assumed when the table was made",
+        '# actual = "probe-mean"    # rescaled to what the probe measured on the phase',
         "",
     ]
 

@@ -11,32 +11,24 @@ import numpy as np
 
 from tieline.chemistry.names import Analyte, nearest_names, recognise_analyte
 from tieline.chemistry.phases import phase_name
-from tieline.reading.cell_text import CellStyle, clean, fold
+from tieline.reading.cell_text import CellStyle
 from tieline.reading.cells import parse_cells
 from tieline.reading.formats import read_grid
 from tieline.reading.grid import Grid
 from tieline.reading.input_file import InputFile
+from tieline.starting.label_columns import kept, label_columns, rows_of_spots, spot_column
 
-# Words of a header, in small letters, that name what a label column holds; common practice.
-LABEL_WORDS: dict[str, tuple[str, ...]] = {
-    "spot": ("spot", "point", "analysis", "label", "sample", "name", "no", "no.", "#", "id", "spot id", "datapoint"),
-    "experiment": ("experiment", "run", "exp", "exp.", "charge", "capsule", "run no", "run no.", "experiment no"),
-    "phase": ("phase", "mineral", "material"),
-    "grain": ("grain", "crystal", "grain no", "crystal no"),
-    "zone": ("zone", "position", "area", "domain", "core/rim", "where"),
-    "distance_um": ("distance", "dist", "rim um", "distance um", "distance (um)", "dist um", "distance_um", "rim (um)"),
-    "batch": ("session", "batch", "date", "day", "block"),
-    "technique": ("technique", "method"),
-    "sequence": ("sequence", "order", "run order", "seq", "time"),
-    "comment": ("comment", "comments", "note", "notes", "remark", "remarks"),
-}  # fmt: skip
 WHOLE_TOTAL_WT = (90.0, 105.0)
-MOSTLY = 0.6
+MOST_EXAMPLES = 3
 
 
 @dataclass
 class Look:
-    """What one table shows. Columns are indices into `headers`; `questions` are what it does not show."""
+    """What one table shows. Columns are indices into `headers`.
+
+    texts: the labels of the spots, by kind of label. unused: columns of no known meaning, with some of their
+    texts. not_spots: how many rows are averages or repeated headers.
+    """
 
     file: str
     headers: tuple[str, ...]
@@ -45,14 +37,15 @@ class Look:
     labels: dict[str, int]
     texts: dict[str, list[str]]
     total: int | None
-    unused: list[int]
+    unused: dict[int, tuple[str, ...]]
     sigma_pattern: str | None = None
     sigma_words: Analyte | None = None
     limit_pattern: str | None = None
     unit: str | None = None
     unit_evidence: str = ""
     isotopes: bool = False
-    n_rows: int = 0
+    n_spots: int = 0
+    not_spots: dict[str, int] = field(default_factory=dict)
     doubtful: list[str] = field(default_factory=list)
 
 
@@ -69,19 +62,23 @@ def look_at(file: InputFile) -> Look:
     doubtful = [grid.headers[i] for i, a in values.items() if not a.certain]
     analytes = {i: a for i, a in values.items() if a.certain}
     total = next((i for i, a in recognised.items() if a.role == "total"), None)
-    labels, texts = _label_columns(grid, set(recognised))
-    used = {*recognised, *labels.values()}
+    labels, contents = label_columns(grid, set(recognised))
+    keep, not_spots = rows_of_spots(grid, labels, contents)
+    if "spot" not in labels and (column := spot_column(labels, contents, keep)) is not None:
+        labels = {"spot": column, **labels}
+    texts = {index: kept(column, keep) for index, column in contents.items()}
     look = Look(
         file=file.path,
         headers=grid.headers,
         full=full,
         analytes=analytes,
         labels=labels,
-        texts=texts,
+        texts={name: texts[index] for name, index in labels.items()},
         total=total,
-        unused=[i for i, header in enumerate(grid.headers) if header.strip() and i not in used],
+        unused={i: _examples(column) for i, column in texts.items() if i not in labels.values()},
         isotopes=any(a.kind == "isotope" for a in analytes.values()),
-        n_rows=grid.row_count,
+        n_spots=sum(keep),
+        not_spots=not_spots,
         doubtful=doubtful,
     )
     look.sigma_pattern, sigma = _partner_pattern(look, recognised, "sigma")
@@ -96,29 +93,9 @@ def _with_units(grid: Grid) -> tuple[str, ...]:
     return tuple(f"{h} {u}".strip() if h.strip() else "" for h, u in zip(grid.headers, units, strict=True))
 
 
-def _label_columns(grid: Grid, recognised: set[int]) -> tuple[dict[str, int], dict[str, list[str]]]:
-    """Label columns by the words of their headers, the phase column by its content too."""
-    labels: dict[str, int] = {}
-    contents = {
-        i: _texts(grid, i) for i in range(grid.width) if i not in recognised and grid.headers[i].strip()
-    }
-    for name, words in LABEL_WORDS.items():
-        for index in contents:
-            if fold(grid.headers[index]) in words and index not in labels.values():
-                labels[name] = index
-                break
-    if "phase" not in labels:
-        for index, texts in contents.items():
-            filled = [text for text in texts if text]
-            known = sum(phase_name(text) is not None for text in filled)
-            if filled and known >= MOSTLY * len(filled) and index not in labels.values():
-                labels["phase"] = index
-                break
-    return labels, {name: contents[index] for name, index in labels.items()}
-
-
-def _texts(grid: Grid, index: int) -> list[str]:
-    return [clean(text) for text in grid.column(index).to_pylist()]
+def _examples(texts: Sequence[str]) -> tuple[str, ...]:
+    """The first different texts of a column."""
+    return tuple(dict.fromkeys(text for text in texts if text))[:MOST_EXAMPLES]
 
 
 def _partner_pattern(
