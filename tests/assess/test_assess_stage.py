@@ -169,7 +169,7 @@ def test_what_is_switched_off_leaves_no_rows(own: Path):
     session = changed(own, "assess.lattice_strain.enabled=false", "assess.trends.conditions=['nothing']")
     for table in ("assess.curves", "assess.elements", "assess.trends", "assess.trend_points"):
         assert result(session, table).empty
-    assert set(result(session, "assess")["check"]) == {"exchange", "mass-balance"}
+    assert set(result(session, "assess")["check"]) == {"exchange", "mass-balance", "overlap-bound"}
 
 
 def test_a_window_of_ones_own_and_influence(own: Path):

@@ -101,6 +101,24 @@ def test_unusable_elements_are_named():
     assert "Al" in set(with_floor.residuals["element"])
 
 
+def test_missing_mass_shows_in_the_sum():
+    whole = mass_balance_tables(means(), start()).checks.set_index("subject")
+    assert whole.loc["sum of proportions", "verdict"] == "consistent"
+    diluted = start().assign(value_ppm=lambda table: 0.9 * table["value_ppm"])
+    found = mass_balance_tables(means(), diluted).checks.set_index("subject")
+    assert found.loc["sum of proportions", "verdict"] == "differs"
+    assert "Mass is missing" in found.loc["sum of proportions", "detail"]
+    held = mass_balance_tables(means(), start(), sum_to_one=True).checks
+    assert "sum of proportions" not in set(held["subject"])
+
+
+def test_a_contradiction_is_said():
+    found = mass_balance_tables(means(), start(Si=0.5, Ca=2.0)).checks.set_index("subject")
+    row = found.loc["chi-square over degrees of freedom"]
+    assert row["verdict"] == "differs"
+    assert "do not add up" in row["detail"]
+
+
 def test_too_few_elements_say_so():
     found = mass_balance_tables(means(), start()[lambda table: table["element"].isin(["Si", "Mg"])])
     assert found.checks["verdict"].tolist() == ["cannot tell"]

@@ -137,6 +137,7 @@ def _rows(
     """A row of coefficients and one of checks for every row of `both`."""
     made = []
     labels = both[list(PAIR_KEYS)].to_dict("records")
+    correlations = both[["correlation_alpha", "correlation_beta"]].to_numpy(dtype=np.float64)
     known: dict[tuple[str, str], tuple[float, float, str]] = {}
     for place, keys in enumerate(labels):
         phases = keys["alpha"], keys["beta"]
@@ -147,8 +148,8 @@ def _rows(
         K_D, ends = found.value[place], (found.low[place], found.high[place])
         verdict = compare(*ends, low, high)
         numbers = (
-            K_D, found.sd[place], *ends, found.dof[place], both["correlation_alpha"].iat[place],
-            both["correlation_beta"].iat[place], share.value if share else np.nan, share.sd if share else np.nan, low, high,
+            K_D, found.sd[place], *ends, found.dof[place], *correlations[place],
+            share.value if share else np.nan, share.sd if share else np.nan, low, high,
         )  # fmt: skip
         words = _words(K_D, *ends, str(found.reason[place]), source, confidence)
         words += _assumption(keys, shares[place]) if shares else ""

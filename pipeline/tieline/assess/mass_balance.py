@@ -88,7 +88,7 @@ def mass_balance_tables(
         )  # fmt: skip
         proportions += _proportion_rows(experiment, balance.phases, mixture)
         residuals += _residual_rows(experiment, balance, kept, mixture, lost)
-        checks += _checks(experiment, balance, kept, mixture, lost, largest_squares)
+        checks += _checks(experiment, balance, kept, mixture, lost, largest_squares, sum_to_one)
     return BalanceTables(
         pd.DataFrame(proportions, columns=list(PROPORTION_COLUMNS)),
         pd.DataFrame(residuals, columns=list(RESIDUAL_COLUMNS)),
@@ -202,7 +202,13 @@ def _residual_rows(
 
 
 def _checks(
-    experiment: str, balance: _Balance, kept: np.ndarray, mixture: Mixture, lost: Shortfall, largest: float
+    experiment: str,
+    balance: _Balance,
+    kept: np.ndarray,
+    mixture: Mixture,
+    lost: Shortfall,
+    largest: float,
+    sum_to_one: bool,
 ) -> list[dict[str, Any]]:
     """The fit as a whole, the older yardstick, and every loss."""
     keys = {"experiment": experiment}
@@ -221,8 +227,12 @@ def _checks(
     less = [f"{e} {s:+.1f}" for e, s in zip(names, mixture.sigmas, strict=True) if s < -_STANDS_OUT]
     pattern = f" Phases rich in {', '.join(more)} (sigmas) may be missing." if more else ""
     pattern += f" The phases hold too much {', '.join(less)} (sigmas)." if less else ""
+    if mixture.scale > 1:
+        pattern = f" The phases do not add up to the start within the errors: these are the least bad proportions.{pattern}"
     words = f"Proportions of the starting mass: {parts}; sum {mixture.total:.3f} ± {mixture.total_sd:.3f}.{pattern}{unusable}"
     rows = [_fit_check(keys, mixture, words)]
+    if not sum_to_one:
+        rows.append(_sum_check(keys, mixture))
     rows.append(
         check(
             "mass-balance", keys, "squared residuals, sum in wt%²",
@@ -245,6 +255,19 @@ def _checks(
             )
         )  # fmt: skip
     return rows
+
+
+def _sum_check(keys: dict[str, Any], mixture: Mixture) -> dict[str, Any]:
+    """Do the phases make up all of the starting mass?"""
+    half = mixture.quantile * mixture.total_sd
+    low, high = mixture.total - half, mixture.total + half
+    inside = low <= 1.0 <= high
+    what = "" if inside else " Mass is missing." if high < 1.0 else " There is more mass than was weighed in."
+    return check(
+        "mass-balance", keys, "sum of proportions", CONSISTENT if inside else DIFFERS,
+        f"{mixture.total:.3f} ({low:.3f} to {high:.3f}) of the starting mass.{what}", value=mixture.total,
+        sd=mixture.total_sd, expected_lo=1.0, expected_hi=1.0,
+    )  # fmt: skip
 
 
 def _fit_check(keys: dict[str, Any], mixture: Mixture, words: str) -> dict[str, Any]:

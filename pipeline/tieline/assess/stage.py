@@ -10,6 +10,7 @@ import pyarrow as pa
 
 from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
 from tieline.assess.mean_factors import mean_factors
+from tieline.assess.overlap import overlap_checks
 from tieline.assess.spot_correlation import SpotTables, spot_correlations
 from tieline.assess.starting_composition import Start, read_starting_composition
 from tieline.columns import EVIDENCE
@@ -22,7 +23,7 @@ if TYPE_CHECKING:
 
 PARTITION_COLUMNS = (
     "experiment", "alpha", "beta", "element", "D", "D_sd", "D_lo", "D_hi", "kind", "dof", "share_counting",
-    "share_spread", "shared_sd_alpha", "shared_sd_beta",
+    "share_spread", "D_overlap_lo", "overlap_bound", "shared_sd_alpha", "shared_sd_beta",
     *(
         name.replace("*", side)
         for side in ("alpha", "beta")
@@ -73,6 +74,7 @@ def assess(
         _trends(D, conditions, settings),
     ]
     checks = [part.pop("assess") for part in parts]
+    checks.append(overlap_checks(D))
     if settings.consistency:
         checks += _consistency(D, means, settings)
     frames = {name: table for part in parts for name, table in part.items()}

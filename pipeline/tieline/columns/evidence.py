@@ -37,7 +37,8 @@ ASSESS = TableSpec(
         Column(
             "check",
             "label",
-            "which line of evidence: exchange, lattice-strain, overlap, mass-balance, trend, approach, consistency, rim-core",
+            "which line of evidence: exchange, lattice-strain, overlap, overlap-bound, mass-balance, trend, approach, "
+            "consistency, rim-core",
         ),
         Column("experiment", "label", "experiment; null when the check spans experiments", nullable=True),
         Column("alpha", "label", "numerator phase", nullable=True),
