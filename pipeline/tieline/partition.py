@@ -14,7 +14,8 @@ import pyarrow.compute as pc
 
 from tieline.arrays import BoolArray, FloatArray, IntArray, Labels, TextArray, labels, numbers
 from tieline.candidates import RULE, Candidates, candidates
-from tieline.columns import PARTITION, PARTITION_ALTERNATIVES, PARTITION_COVARIANCE
+from tieline.columns import PARTITION, PARTITION_ALTERNATIVES
+from tieline.covariances import covariance_table
 from tieline.limits import lowest_limits, resolve_limits
 from tieline.mean_sources import MeanSources
 from tieline.overlap_allowance import overlap_allowance
@@ -54,7 +55,7 @@ def partition(
     tables = {
         "partition": table,
         "partition.alternatives": _alternatives(pair, pair_pairs, found, budget),
-        "partition.covariance": _covariance(table, (alpha, beta), found, sources),
+        "partition.covariance": covariance_table(table, (alpha, beta), found, sources),
     }
     return StageResult(tables, _ledger(pair, found), _remarks(table))
 
@@ -180,87 +181,6 @@ def _alternatives(pair: pa.Table, pairs: pa.Table, found: Candidates, budget: Bu
             "reason": [f"the other was preferred: {RULE}"] * len(rows),
         },
     )
-
-
-def _covariance(
-    table: pa.Table, sides: tuple[Side, Side], found: Candidates, sources: MeanSources
-) -> pa.Table:
-    """Variances, and the covariances that internal standards make between the elements of a pair.
-
-    Elements measured by one rescaled technique share the factor of each phase, with the calibration behind it:
-    cov(D_i, D_j) = D_i D_j (u_a² + u_b²). The measurement that gave the actual values has it in common with all of
-    them. Everything else is taken as independent between elements.
-    """
-    rows = np.flatnonzero(found.chosen)
-    D, sd = numbers(table, "D"), numbers(table, "D_sd")
-    usable = np.isfinite(D) & np.isfinite(sd)
-    keys = [
-        np.where(side.internal_standard[rows] > 0, side.internal_standard_key[rows], -1) for side in sides
-    ]
-    # A standard that both phases share cancels in D.
-    keys = [np.where(keys[0] == keys[1], -1, key) for key in keys]
-    means = [found.alpha[rows], found.beta[rows]]
-    measured = [sources.calibration_key[mean] for mean in means]
-    behind = [
-        np.where(key >= 0, sources.source_of_standard[mean], -1)
-        for key, mean in zip(keys, means, strict=True)
-    ]
-    is_source = np.isin(measured[0], behind[0][behind[0] >= 0]) | np.isin(
-        measured[1], behind[1][behind[1] >= 0]
-    )
-    first, second = _pairs_within(
-        _pair_codes(table), usable, usable & ((keys[0] >= 0) | (keys[1] >= 0) | is_source)
-    )
-    apart = sides[0].standard_calibration_key[rows] != sides[1].standard_calibration_key[rows]
-    shared = np.zeros(len(first))
-    for side, key, own, source in zip(sides, keys, measured, behind, strict=True):
-        relative = side.internal_standard[rows]
-        calibration = np.where(apart, side.standard_calibration[rows], 0.0)
-        same = (key[first] == key[second]) & (key[first] >= 0)
-        common = relative[first] * relative[second] + calibration[first] * calibration[second]
-        shared += np.where(same, common, 0.0)
-        shared += np.where((source[second] >= 0) & (own[first] == source[second]), relative[second] ** 2, 0.0)
-        shared += np.where((source[first] >= 0) & (own[second] == source[first]), relative[first] ** 2, 0.0)
-    covariance = np.where(first == second, sd[first] ** 2, D[first] * D[second] * shared)
-    kept = (first == second) | (shared != 0)
-    if not kept.all():
-        first, second, covariance = first[kept], second[kept], covariance[kept]
-    element = labels(table, "element")
-    return build(
-        PARTITION_COVARIANCE,
-        {
-            **{name: labels(table, name).take(first) for name in ("experiment", "alpha", "beta")},
-            "element": element.take(first),
-            "other": element.take(second),
-            "covariance": covariance,
-        },
-    )
-
-
-def _pair_codes(table: pa.Table) -> IntArray:
-    """A number per pair in the order of the rows, where the rows of a pair stand together."""
-    columns = [labels(table, name).codes for name in ("experiment", "alpha", "beta")]
-    new = np.zeros(table.num_rows, dtype=np.int64)
-    for codes in columns:
-        new[1:] |= codes[1:] != codes[:-1]
-    return np.cumsum(new)
-
-
-def _pairs_within(code: IntArray, usable: BoolArray, sharing: BoolArray) -> tuple[IntArray, IntArray]:
-    """Row pairs (i, j), sorted: every usable row with itself, and i < j of all sharing rows with one code.
-
-    Rows of one code stand together; a sharing row is usable.
-    """
-    alone, among = np.flatnonzero(usable), np.flatnonzero(sharing)
-    place = np.cumsum(sharing)[alone]  # of the next sharing row after each
-    end = np.searchsorted(code[among], code[alone], side="right")
-    size = np.where(sharing[alone], end - place, 0) + 1
-    first = np.repeat(np.arange(len(alone)), size)
-    offset = np.arange(len(first)) - np.repeat(np.cumsum(size) - size, size)
-    second = alone[first]
-    later = offset > 0
-    second[later] = among[place[first[later]] + offset[later] - 1]
-    return alone[first], second
 
 
 def _ledger(pair: pa.Table, found: Candidates) -> Ledger:
