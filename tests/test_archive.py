@@ -17,12 +17,13 @@ from benchmarks.big_session import write_session
 from sessions import result
 from tieline import runner
 from tieline.archive.command import Summary, reduce_archive
-from tieline.archive.dataset import SESSIONS_FILE
+from tieline.archive.dataset import SESSIONS_FILE, kept_parts, left_over_parts
 from tieline.archive.find import find_units
 from tieline.archive.unit import CURRENT, FAILED, REDUCED, Outcome, reduce_unit
 from tieline.cli import app
 from tieline.configuration import load
 from tieline.errors import InputError
+from tieline.lock import SEAL_NAME
 from tieline.plan import table_path
 from tieline.stages import STAGES
 
@@ -201,14 +202,36 @@ def test_what_counts_as_a_session(tmp_path: Path):
     assert "cannot be read" in units["north/bad.toml"].problem
 
 
+def test_a_sealed_session_that_is_stale_keeps_what_was_published(tmp_path: Path):
+    dataset = tmp_path / "archive"
+    write_session(tmp_path / "north" / "a", SPOTS, name="a")
+    (unit,) = find_units(tmp_path, dataset)
+    first = reduce_unit(unit, dataset)
+    (part,) = parts(dataset)
+    assert kept_parts(dataset, [first]) == []
+    (load(unit.path).run_folder / SEAL_NAME).write_text("", encoding="utf-8")
+    assert reduce_unit(unit, dataset).state == CURRENT
+    with unit.path.open("a", encoding="utf-8") as stream:
+        stream.write("\n[partition]\nconfidence = 0.9\n")
+    outcome = reduce_unit(unit, dataset)
+    assert outcome.state == FAILED
+    assert "sealed, and partition is stale: confidence 0.95 → 0.9." in outcome.message
+    assert kept_parts(dataset, [outcome]) == [str(Path(part).parent.as_posix())]
+    assert left_over_parts(dataset, [outcome]) == []
+
+
 def test_what_is_wrong_with_the_request_is_told_before_anything_is_done(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ):
     monkeypatch.setattr("tieline.archive.workers.CONNECT_TIMEOUT_S", 0.5)
     with pytest.raises(InputError, match="no such folder"):
         reduce_archive(tmp_path / "nowhere")
-    with pytest.raises(InputError, match="no session configuration"):
-        reduce_archive(tmp_path)
+    (tmp_path / "session.txt").write_text("", encoding="utf-8")
+    with pytest.raises(InputError, match="is a file, not a folder"):
+        reduce_archive(tmp_path / "session.txt")
+    monkeypatch.chdir(tmp_path)
+    with pytest.raises(InputError, match=r"^\.: there is no session configuration"):
+        reduce_archive(Path())
     write_session(tmp_path / "a", SPOTS, name="a")
     with pytest.raises(InputError, match="no scheduler answers"):
         reduce_archive(tmp_path, scheduler="tcp://127.0.0.1:9")

@@ -50,5 +50,7 @@ def show(summary: Summary) -> None:
     values = sum(outcome.row.get("n_D") or 0 for outcome in summary.outcomes)
     out.print(Text(f"{values} partition coefficients: {summary.dataset}"))
     out.print(Text(f"Sessions, one per row: {summary.sessions}"))
+    for part in summary.kept:
+        out.print(Text(f"besides, earlier results of a session that was not reduced: {printable(part)}"))
     for part in summary.left_over:
         out.print(Text(f"of no session found any more: {printable(part)}; delete it if it is not wanted"))

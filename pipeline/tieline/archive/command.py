@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from tieline.archive.dataset import left_over_parts, write_sessions
+from tieline.archive.dataset import kept_parts, left_over_parts, write_sessions
 from tieline.archive.find import find_units
 from tieline.archive.unit import CURRENT, FAILED, REDUCED, Outcome
 from tieline.archive.workers import reduce_all
@@ -20,11 +20,15 @@ DATASET = "archive"
 
 @dataclass(frozen=True)
 class Summary:
-    """What became of an archive: the outcome of every session, and parts that belong to none of them."""
+    """What became of an archive: the outcome of every session, and parts of the dataset that none of them made now.
+
+    kept: earlier results of sessions that failed; left_over: parts that belong to no session found.
+    """
 
     dataset: Path
     sessions: Path
     outcomes: tuple[Outcome, ...]
+    kept: tuple[str, ...]
     left_over: tuple[str, ...]
 
     def count(self, state: str) -> int:
@@ -40,6 +44,7 @@ class Summary:
             "sessions_table": str(self.sessions),
             "counts": {state: self.count(state) for state in (REDUCED, CURRENT, FAILED)},
             "sessions": [{"state": outcome.state, **outcome.row} for outcome in self.outcomes],
+            "kept": list(self.kept),
             "left_over": list(self.left_over),
         }
 
@@ -60,7 +65,9 @@ def reduce_archive(
     Raises InputError where there is no such folder or no session below it, or no worker to be had.
     """
     if not root.is_dir():
-        raise InputError(Problem("no such folder.", str(root), remedy="Name the folder above the sessions."))
+        message = "is a file, not a folder." if root.exists() else "no such folder."
+        raise InputError(Problem(message, str(root), remedy="Name the folder above the sessions."))
+    given = str(root)
     # Workers may run in another folder.
     root, dataset = root.resolve(), (root / DATASET if out is None else out).resolve()
     units = find_units(root, dataset)
@@ -68,7 +75,7 @@ def reduce_archive(
         raise InputError(
             Problem(
                 "there is no session configuration below this folder.",
-                str(root),
+                given,
                 remedy="A configuration is a TOML file with `session` and [[ingest.tables]].",
             )
         )
@@ -76,4 +83,5 @@ def reduce_archive(
     workers = min(workers or os.cpu_count() or 1, len(units))
     outcomes = reduce_all(units, dataset, scheduler=scheduler, workers=workers, finished=finished)
     sessions = write_sessions(dataset, outcomes)
-    return Summary(dataset, sessions, tuple(outcomes), tuple(left_over_parts(dataset, outcomes)))
+    kept, left_over = kept_parts(dataset, outcomes), left_over_parts(dataset, outcomes)
+    return Summary(dataset, sessions, tuple(outcomes), tuple(kept), tuple(left_over))

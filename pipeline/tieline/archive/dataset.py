@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from pathlib import Path
 
-from tieline.archive.unit import RESULTS, Outcome, partition_folder
+from tieline.archive.unit import FAILED, RESULTS, Outcome, partition_folder
 from tieline.tables import Column, TableSpec
 
 # The underscore keeps readers of the dataset from taking it for a part.
@@ -47,6 +47,20 @@ def write_sessions(dataset: Path, outcomes: Iterable[Outcome]) -> Path:
     path.parent.mkdir(parents=True, exist_ok=True)
     write_atomically(path, lambda stream: pq.write_table(table, stream, compression="zstd"))
     return path
+
+
+def kept_parts(dataset: Path, outcomes: Sequence[Outcome]) -> list[str]:
+    """Parts of the dataset that hold earlier results of a session that could not be reduced now."""
+    made, failed = (
+        {
+            partition_folder(dataset, outcome.unit)
+            for outcome in outcomes
+            if (outcome.state == FAILED) is wanted
+        }
+        for wanted in (False, True)
+    )
+    found = (folder for folder in failed - made if (folder / f"{RESULTS}.parquet").is_file())
+    return sorted(folder.relative_to(dataset).as_posix() for folder in found)
 
 
 def left_over_parts(dataset: Path, outcomes: Iterable[Outcome]) -> list[str]:

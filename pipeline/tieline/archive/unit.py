@@ -7,10 +7,13 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 from urllib.parse import quote
 
 from tieline.archive.find import Unit
+
+if TYPE_CHECKING:
+    from tieline.plan import Verdict
 
 CURRENT, REDUCED, FAILED = "current", "reduced", "failed"
 RESULTS = "classify"
@@ -54,13 +57,17 @@ def failed(unit: Unit, message: str) -> Outcome:
 
 def _reduce(unit: Unit, dataset: Path) -> Outcome:
     from tieline import runner
+    from tieline.auditing.seal import is_sealed
     from tieline.configuration import load
     from tieline.plan import table_path
     from tieline.storage import write_bytes
 
     session = load(unit.path)
     state = CURRENT
-    if any(verdict.state != "current" for verdict in runner.status(session)):
+    stale = [verdict for verdict in runner.status(session) if verdict.state != "current"]
+    if stale and is_sealed(session.run_folder):
+        return failed(unit, _sealed(stale[0]))
+    if stale:
         runner.run(session)
         state = REDUCED
     data = table_path(session.run_folder, RESULTS).read_bytes()
@@ -70,6 +77,14 @@ def _reduce(unit: Unit, dataset: Path) -> Outcome:
         write_bytes(target, data)
         state = REDUCED
     return Outcome(unit, state, _row(unit, session.run_folder))
+
+
+def _sealed(verdict: Verdict) -> str:
+    why = f": {'; '.join(verdict.reasons)}" if verdict.reasons else ""
+    return (
+        f"its run folder is sealed, and {verdict.stage} is {verdict.state}{why}. The sealed results stay as they are; "
+        "give the configuration another session name to reduce it anew."
+    )
 
 
 def _row(unit: Unit, run_folder: Path) -> dict[str, Any]:

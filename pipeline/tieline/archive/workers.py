@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from distributed import Client
 
 CONNECT_TIMEOUT_S = 10
-INSTALL = 'Install it with: pip install "tieline[archive]"'
+INSTALL = 'Install it in the folder of tieline with: pip install ".[archive]"'
 
 
 def reduce_all(
