@@ -155,6 +155,7 @@ STAGES: tuple[Stage, ...] = (
             "assess.bulk",
             "assess.trends",
             "assess.trend_points",
+            "assess.trend_predictions",
         ),
         settings=lambda settings: settings.assess,
         files=lambda settings: _optional(settings.assess.mass_balance.starting_composition),

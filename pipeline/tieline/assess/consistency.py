@@ -79,7 +79,7 @@ def rim_against_core(
         ["experiment", "phase", "batch"], sort=True, observed=True
     ):
         difference, sd, p_values = _welch(group)
-        rejected = _holm(p_values, 1 - confidence)
+        rejected = holm(p_values, 1 - confidence)
         for element, value, error, p_value, out in zip(
             group["element"], difference, sd, p_values, rejected, strict=True
         ):
@@ -115,7 +115,7 @@ def _welch(group: pd.DataFrame) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     return difference, sd, 2.0 * special.stdtr(welch, -np.abs(difference) / sd)
 
 
-def _holm(p_values: np.ndarray, level: float) -> np.ndarray:
+def holm(p_values: np.ndarray, level: float) -> np.ndarray:
     """Which hypotheses fall at a family-wise level; missing p-values do not count."""
     told = np.flatnonzero(np.isfinite(p_values))
     order = told[np.argsort(p_values[told], kind="stable")]

@@ -18,10 +18,15 @@ if TYPE_CHECKING:
 
 @dataclass(frozen=True)
 class Conditions:
-    """table: experiment x condition, numbers only; temperatures_C: experiment -> °C where given."""
+    """table: experiment x condition, numbers only; texts: the conditions that are none; temperatures_C: where given."""
 
     table: pd.DataFrame
+    texts: pd.DataFrame
     temperatures_C: Mapping[str, float]  # noqa: N815 - a unit
+
+    def whole(self) -> pd.DataFrame:
+        """Numbers and texts side by side."""
+        return self.table.join(self.texts)
 
 
 def frame(table: pa.Table, columns: Sequence[str]) -> pd.DataFrame:
@@ -34,11 +39,14 @@ def frame(table: pa.Table, columns: Sequence[str]) -> pd.DataFrame:
 
 
 def conditions_frame(experiments: pa.Table, settings: AssessSettings) -> Conditions:
-    """The numeric conditions of the experiments, one row per experiment."""
-    long = frame(experiments, ("experiment", "condition", "value")).dropna(subset=["value"])
+    """The conditions of the experiments, one row per experiment: numbers, and columns in which no cell is one."""
+    whole = frame(experiments, ("experiment", "condition", "value", "text"))
+    long = whole.dropna(subset=["value"])
     table = long.pivot(index="experiment", columns="condition", values="value")
+    words = whole[~whole["condition"].isin(long["condition"].unique())].dropna(subset=["text"])
+    texts = words.pivot(index="experiment", columns="condition", values="text")
     given = table[settings.temperature].dropna() if settings.temperature in table.columns else {}
-    return Conditions(table, dict(given))
+    return Conditions(table, texts, dict(given))
 
 
 def stage_table(spec: TableSpec, rows: pd.DataFrame | list[dict[str, Any]] | None) -> pa.Table:

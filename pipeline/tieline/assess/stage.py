@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pyarrow as pa
 
+from tieline.assess.approach import runs_at_the_same_conditions
+from tieline.assess.condition_values import condition_values
 from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
 from tieline.assess.mean_factors import mean_factors
 from tieline.assess.overlap import overlap_checks
@@ -33,7 +35,6 @@ PARTITION_COLUMNS = (
     ),
 )  # fmt: skip
 PAIR_COLUMNS = ("experiment", "phase", "element", "batch", "mean_ppm", "se_ppm", "dof")
-INVERSE_TEMPERATURE = "10^4/T"
 Frames = dict[str, "pd.DataFrame"]
 
 
@@ -71,7 +72,7 @@ def assess(
         ),
         _lattice_strain(D, covariance, conditions, settings),
         _mass_balance(D, means, start, settings),
-        _trends(D, conditions, settings),
+        _trends(D, conditions, means, settings),
     ]
     checks = [part.pop("assess") for part in parts]
     checks.append(overlap_checks(D))
@@ -86,7 +87,7 @@ def assess(
     verdicts = tables["assess"].column("verdict").to_pylist()
     outcomes = {verdict: verdicts.count(verdict) for verdict in ("consistent", "differs", "cannot tell")}
     return StageResult(
-        tables, Ledger("checks", len(verdicts), outcomes), _remarks(every, conditions, D, settings)
+        tables, Ledger("checks", len(verdicts), outcomes), _remarks(every, conditions, means, D, settings)
     )
 
 
@@ -192,38 +193,33 @@ def _starting_frame(
     return pd.DataFrame(rows, columns=["experiment", "element", "value_ppm", "sd_ppm"])
 
 
-def _trends(D: pd.DataFrame, conditions: Conditions, settings: AssessSettings) -> Frames:
+def _trends(D: pd.DataFrame, conditions: Conditions, means: pd.DataFrame, settings: AssessSettings) -> Frames:
     import pandas as pd
 
-    from tieline.assess.trends import approach_checks, inverse_temperature, trend_tables
+    from tieline.assess.approach import approach_checks
+    from tieline.assess.trends import trend_tables
 
-    trends: list[pd.DataFrame] = []
-    points: list[pd.DataFrame] = []
-    checks: list[pd.DataFrame] = []
-    table = conditions.table
-    for condition in settings.trends.conditions:
-        source = settings.temperature if condition == INVERSE_TEMPERATURE else condition
-        if source not in table.columns:
-            continue
-        x = table[source].dropna()
-        sd = table[f"{source}_sd"] if f"{source}_sd" in table.columns else pd.Series(0.0, table.index)
-        x_sd = sd.reindex(x.index).fillna(0.0)
-        if condition == INVERSE_TEMPERATURE:
-            values, errors = inverse_temperature(x.to_numpy(), x_sd.to_numpy())
-            x, x_sd = pd.Series(values, x.index), pd.Series(errors, x.index)
-        made = trend_tables(
-            D, condition, x, x_sd, settings.confidence, without_each=settings.trends.without_each
-        )
-        for collected, one in zip((trends, points, checks), made, strict=True):
-            collected.append(one)
-    checks.append(approach_checks(D, table, settings.duration, settings.confidence))
+    own = settings.trends
+    made = []
+    for condition in own.conditions:
+        values = condition_values(condition, conditions, means, settings)
+        if values is not None:
+            made.append(
+                trend_tables(
+                    D, condition, values.x, values.x_sd, settings.confidence, without_each=own.without_each,
+                    predict=own.predict.get(condition, ()), common=values.common,
+                )
+            )  # fmt: skip
+    approach = approach_checks(
+        D, conditions.whole(), settings.duration, settings.same_conditions, settings.confidence
+    )
+    checks = [one.to_dict("records") for one in (*(each.checks for each in made), approach)]
     result: Frames = {
-        "assess": pd.DataFrame(
-            [row for one in checks for row in one.to_dict("records")], columns=checks[-1].columns
-        )
+        "assess": pd.DataFrame([row for rows in checks for row in rows], columns=approach.columns)
     }
-    if trends:
-        result |= {"assess.trends": pd.concat(trends), "assess.trend_points": pd.concat(points)}
+    for name in ("trends", "points", "predictions") if made else ():
+        table = pd.concat([getattr(one, name) for one in made])
+        result["assess.trends" if name == "trends" else f"assess.trend_{name}"] = table
     return result
 
 
@@ -237,9 +233,13 @@ def _consistency(D: pd.DataFrame, means: pd.DataFrame, settings: AssessSettings)
 
 
 def _remarks(
-    checks: list[dict[str, object]], conditions: Conditions, D: pd.DataFrame, settings: AssessSettings
+    checks: list[dict[str, object]],
+    conditions: Conditions,
+    means: pd.DataFrame,
+    D: pd.DataFrame,
+    settings: AssessSettings,
 ) -> tuple[Remark, ...]:
-    """What needs attention: exchange outside its window, losses, and conditions that are not there."""
+    """What needs attention: exchange outside its window, losses, conditions that are not there, runs not compared."""
     remarks = []
     for row in checks:
         pair = " ".join(str(row[key]) for key in ("experiment", "alpha") if row[key])
@@ -250,13 +250,39 @@ def _remarks(
             remarks.append(Remark(words, pair))
         elif row["check"] == "mass-balance" and str(row["subject"]).endswith("loss"):
             remarks.append(Remark(str(row["detail"]).split(", p ")[0], pair))
+    if not len(D):
+        return tuple(remarks)
+    own = settings.trends
     missing = [
         name
-        for name in settings.trends.conditions
-        if (settings.temperature if name == INVERSE_TEMPERATURE else name) not in conditions.table.columns
+        for name in dict.fromkeys((*own.conditions, *own.predict))
+        if name not in own.conditions or condition_values(name, conditions, means, settings) is None
     ]
-    if missing and len(D):
+    if missing:
         remarks.append(
-            Remark(f"no trends against {', '.join(missing)}: the experiments' table does not hold it")
+            Remark(
+                f"no trends against {', '.join(missing)}: no condition of the experiments' table or [assess.trends], "
+                "and no mean of a phase"
+            )
         )
-    return tuple(remarks)
+    return (*remarks, *_not_compared(conditions, settings))
+
+
+def _not_compared(conditions: Conditions, settings: AssessSettings) -> tuple[Remark, ...]:
+    """Runs of different length that no other run can be compared with, and conditions named that are not there."""
+    whole = conditions.whole()
+    absent = [name for name in settings.same_conditions if name not in whole.columns]
+    if absent:
+        return (
+            Remark(f"same_conditions names {', '.join(absent)}, which the experiments' table does not hold"),
+        )
+    if settings.duration not in whole.columns or whole[settings.duration].nunique() < 2:
+        return ()
+    if runs_at_the_same_conditions(whole, settings.duration, settings.same_conditions):
+        return ()
+    return (
+        Remark(
+            "no two runs differ in duration alone, so the approach to equilibrium was not looked at; name in "
+            "[assess] same_conditions what they must have in common"
+        ),
+    )

@@ -1,14 +1,15 @@
-"""How D changes across experiments: with temperature, pressure, composition, and with time at the same conditions."""
+"""How D changes across experiments: with temperature, pressure, composition or any other condition."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, check
-from tieline.statistics.york import FITTED, Line, line_without_each, predict_line, york_line
+from tieline.statistics.york import FITTED, Line, line_without_each, predict_line, predict_new, york_line
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -20,16 +21,22 @@ TREND_COLUMNS = (
 )  # fmt: skip
 POINT_COLUMNS = (
     "alpha", "beta", "element", "condition", "experiment", "x", "x_sd", "ln_D", "ln_D_sd", "sigmas", "slope_without",
-    "slope_se_without", "predicted_without", "predicted_lo", "predicted_hi",
+    "slope_se_without", "predicted_without", "predicted_lo", "predicted_hi", "deleted_sigmas",
 )  # fmt: skip
+PREDICTION_COLUMNS = (
+    "alpha", "beta", "element", "condition", "x", "outside", "D", "D_lo", "D_hi", "new_lo", "new_hi",
+)  # fmt: skip
+_LARGEST_CORRELATION = 0.99
 
 
-def inverse_temperature(
-    temperature_C: np.ndarray, temperature_sd: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    """10⁴/T in 1/K and its standard deviation, from °C."""
-    kelvin = np.asarray(temperature_C, dtype=np.float64) + 273.15
-    return 1e4 / kelvin, 1e4 * np.asarray(temperature_sd, dtype=np.float64) / kelvin**2
+@dataclass(frozen=True)
+class TrendTables:
+    """Side tables of the trends against one condition, and rows of `assess`."""
+
+    trends: pd.DataFrame
+    points: pd.DataFrame
+    predictions: pd.DataFrame
+    checks: pd.DataFrame
 
 
 def trend_tables(
@@ -40,17 +47,22 @@ def trend_tables(
     confidence: float = 0.95,
     *,
     without_each: bool = True,
-) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
+    predict: Sequence[float] = (),
+    common: tuple[str, str] | None = None,
+) -> TrendTables:
     """ln D against one condition for every pair and element with two experiments or more: trends, points, checks.
 
     x, x_sd: indexed by experiment; no x_sd means exact. The line has errors in both variables (`york_line`). Points tell,
     where `without_each`, what the line is without them and what it then predicts for them. Limits cannot enter a line: they
     are left out and counted. The check says whether one line describes the points; the slope's interval is in the trend.
+    predict: conditions at which to give D. common: (phase, element) of the mean that the condition is: D made with it has
+    an error correlated with that of the condition.
     """
     import pandas as pd
 
     trends: list[dict[str, Any]] = []
     points: list[dict[str, Any]] = []
+    predictions: list[dict[str, Any]] = []
     checks: list[dict[str, Any]] = []
     at = {str(experiment): float(value) for experiment, value in x.dropna().items()}
     at_sd = (
@@ -65,16 +77,56 @@ def trend_tables(
         across = np.array([at[experiment] for experiment in experiments])
         across_sd = np.array([at_sd.get(experiment, 0.0) for experiment in experiments])
         D, D_sd = (np.array([row[name] for row in used], dtype=np.float64) for name in ("D", "D_sd"))
-        arrays = (across, np.log(D), across_sd, D_sd / D)
+        log_d, log_sd = np.log(D), D_sd / D
+        correlation = _correlation(common, keys, across, log_d, across_sd, log_sd)
+        arrays = (across, log_d, across_sd, log_sd, correlation)
         line = york_line(*arrays)
+        predictions.extend(keys | row for row in _prediction_rows(line, across, predict, confidence))
         trends.append(keys | _trend_row(line, len(used), len(known) - len(used), confidence))
         points.extend(keys | row for row in _point_rows(experiments, arrays, line, confidence, without_each))
         checks.append(_trend_check(keys, line, len(used), len(known) - len(used), confidence))
-    return (
+    return TrendTables(
         pd.DataFrame(trends, columns=list(TREND_COLUMNS)),
         pd.DataFrame(points, columns=list(POINT_COLUMNS)),
+        pd.DataFrame(predictions, columns=list(PREDICTION_COLUMNS)),
         pd.DataFrame(checks, columns=list(CHECK_COLUMNS)),
     )
+
+
+def _correlation(
+    common: tuple[str, str] | None,
+    keys: Mapping[str, str],
+    x: np.ndarray,
+    log_d: np.ndarray,
+    x_sd: np.ndarray,
+    log_sd: np.ndarray,
+) -> np.ndarray:
+    """Correlation of the errors of condition and ln D, where both rest on one mean: ln D = ln alpha - ln beta."""
+    sign = 0.0
+    if common is not None and common[1] == keys["element"]:
+        sign = float(common[0] == keys["alpha"]) - float(common[0] == keys["beta"])
+    shared = np.divide(x_sd, np.abs(x) * log_sd, out=np.zeros_like(log_d), where=(x != 0) & (log_sd > 0))
+    return np.asarray(sign * np.minimum(shared, _LARGEST_CORRELATION))
+
+
+def _prediction_rows(
+    line: Line, across: np.ndarray, predict: Sequence[float], confidence: float
+) -> list[dict[str, Any]]:
+    """D at each condition asked for: the line's, and a further experiment's."""
+    if line.verdict != FITTED or not len(predict):
+        return []
+    x = np.asarray(predict, dtype=np.float64)
+    on_line, new = (made(line, x, 0.0, confidence) for made in (predict_line, predict_new))
+    outside = (x < across.min()) | (x > across.max())
+    columns = (
+        x,
+        outside,
+        *(np.exp(one) for one in (on_line.value, on_line.low, on_line.high, new.low, new.high)),
+    )
+    names = PREDICTION_COLUMNS[4:]
+    return [
+        dict(zip(names, row, strict=True)) for row in zip(*(one.tolist() for one in columns), strict=True)
+    ]
 
 
 def _by_element(
@@ -100,7 +152,7 @@ def _trend_row(line: Line, count: int, left_out: int, confidence: float) -> dict
 def _point_rows(
     experiments: list[str], arrays: tuple[np.ndarray, ...], line: Line, confidence: float, without_each: bool
 ) -> list[dict[str, Any]]:
-    across, log_d, across_sd, log_sd = arrays
+    across, log_d, across_sd, log_sd, _correlations = arrays
     rows: list[dict[str, Any]] = [
         {
             "experiment": experiment, "x": across[index], "x_sd": across_sd[index], "ln_D": log_d[index],
@@ -113,6 +165,7 @@ def _point_rows(
         rows[index] |= {
             "slope_without": other.slope, "slope_se_without": other.slope_se, "predicted_without": guess.value[0],
             "predicted_lo": guess.low[0], "predicted_hi": guess.high[0],
+            "deleted_sigmas": (log_d[index] - guess.value[0]) / np.sqrt(guess.sd[0] ** 2 + other.scale * log_sd[index] ** 2),
         }  # fmt: skip
     return rows
 
@@ -137,61 +190,3 @@ def _trend_check(
     verdict = DIFFERS if line.scale > 1 else CONSISTENT
     words = f"MSWD {line.mswd:.3g}, p {line.p_value:.2g} that one line describes them. {words}"
     return check("trend", pair, subject, verdict, words, value=line.slope, sd=line.slope_se)
-
-
-def approach_checks(
-    partition: pd.DataFrame, conditions: pd.DataFrame, duration: str = "duration_h", confidence: float = 0.95
-) -> pd.DataFrame:
-    """Does D still change with the length of the run, among runs at the same conditions? Rows of the `assess` table.
-
-    conditions: indexed by experiment; every column but `duration` and the columns ending in `_sd` must be equal for two runs
-    to belong together. value: change of ln D per factor e in duration, from the weighted line through ln D against ln
-    duration. "consistent": no change at this confidence, the detail says how large a change would have been seen; "cannot
-    tell" for fewer than two durations. D that no longer changes shows a steady state, no more.
-    """
-    import pandas as pd
-
-    rows: list[dict[str, Any]] = []
-    if duration not in conditions.columns:
-        return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
-    same = [name for name in conditions.columns if name != duration and not str(name).endswith("_sd")]
-    timed = conditions[conditions[duration] > 0]
-    groups = timed.groupby(same, sort=True, dropna=False) if same else [((), timed)]
-    for at, runs in groups:
-        if len(runs) < 2:
-            continue
-        label = ", ".join(f"{name} {value:g}" if isinstance(value, float) else f"{name} {value}"
-                          for name, value in zip(same, at if isinstance(at, tuple) else (at,), strict=True))  # fmt: skip
-        own = partition[partition["experiment"].isin(runs.index)]
-        log_time = np.log(runs[duration].astype(float))
-        for (alpha, beta, element), group in own.groupby(
-            ["alpha", "beta", "element"], sort=True, observed=True
-        ):
-            rows.append(_approach_check(group, log_time, f"{element} at {label or 'all runs'}",
-                                        {"alpha": alpha, "beta": beta}, confidence))  # fmt: skip
-    return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
-
-
-def _approach_check(
-    group: pd.DataFrame, log_time: pd.Series[float], subject: str, pair: dict[str, Any], confidence: float
-) -> dict[str, Any]:
-    used = group[(group["kind"] == "value") & (group["D"] > 0) & (group["D_sd"] > 0)].sort_values(
-        "experiment"
-    )
-    D = used["D"].to_numpy(dtype=np.float64)
-    time = used["experiment"].map(log_time).to_numpy(dtype=np.float64)
-    line = york_line(time, np.log(D), np.zeros(len(D)), used["D_sd"].to_numpy(dtype=np.float64) / D)
-    if line.verdict != FITTED:
-        return check("approach", pair, subject, CANNOT_TELL, "Fewer than two durations with a D.")
-    sd = float(np.sqrt(line.scale) * line.slope_se)
-    half = line.quantile(confidence) * sd
-    span = float(np.ptp(time))
-    words = (
-        f"{len(D)} runs over a factor {np.exp(span):.3g} in duration: D changes by {np.expm1(line.slope * span):+.1%} "
-        f"({np.expm1((line.slope - half) * span):+.1%} to {np.expm1((line.slope + half) * span):+.1%}) from the shortest "
-        "to the longest. D that no longer changes is a steady state, no proof of equilibrium."
-    )
-    verdict = DIFFERS if abs(line.slope) > half else CONSISTENT
-    return check(
-        "approach", pair, subject, verdict, words, value=line.slope, sd=sd, expected_lo=0.0, expected_hi=0.0
-    )

@@ -277,8 +277,30 @@ ASSESS_TREND_POINTS = TableSpec(
             ("slope_without", "slope of the line without this experiment; null unless asked for"),
             ("slope_se_without", "its standard error"),
             ("predicted_without", "ln D that the line without this experiment predicts for it"),
-            ("predicted_lo", "lower end of its interval"),
+            ("predicted_lo", "lower end of its interval, that of the line"),
             ("predicted_hi", "upper end of its interval"),
+            ("deleted_sigmas", "distance from that line in standard deviations of both"),
+        ),
+    ),
+)
+
+ASSESS_TREND_PREDICTIONS = TableSpec(
+    "assess.trend_predictions",
+    "alpha x beta x element x condition x value asked for",
+    (
+        *_TREND_KEYS,
+        Column("x", "number", "the condition", "as the condition"),
+        Column("outside", "flag", "beyond the experiments on the line: extrapolated"),
+        *_numbers(
+            "1",
+            ("D", "D on the line"),
+            ("D_lo", "lower end of the line's interval"),
+            ("D_hi", "upper end of the line's interval"),
+            (
+                "new_lo",
+                "lower end for a further experiment: with the scatter of the experiments beyond their errors",
+            ),
+            ("new_hi", "upper end for a further experiment"),
         ),
     ),
 )
@@ -293,4 +315,5 @@ EVIDENCE = (
     ASSESS_BULK,
     ASSESS_TRENDS,
     ASSESS_TREND_POINTS,
+    ASSESS_TREND_PREDICTIONS,
 )

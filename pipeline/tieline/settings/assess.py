@@ -149,8 +149,11 @@ class TrendSettings(Settings):
 
     conditions: tuple[str, ...] = Field(
         ("10^4/T",),
-        description="conditions of the experiments' table; 10^4/T is made from the temperature. The column "
-        "<condition>_sd, where there is one, holds its standard uncertainty",
+        description="conditions of the experiments' table; 10^4/T is made from the temperature, and `MgO in glass` (wt%) or "
+        "`Ni in glass` (ppm) from the phase means. The column <condition>_sd, where there is one, holds its standard uncertainty",
+    )
+    predict: dict[str, tuple[float, ...]] = Field(
+        default_factory=dict, description="condition -> values of it at which D is to be predicted"
     )
     without_each: bool = Field(
         False, description="draw every line again without each experiment and predict it; four times the time"
@@ -165,6 +168,11 @@ class AssessSettings(Settings):
     temperature: str = Field("temperature_C", description="condition that holds the temperature in °C")
     pressure: str = Field("pressure_GPa", description="condition that holds the pressure in GPa")
     duration: str = Field("duration_h", description="condition that holds the length of the run")
+    same_conditions: tuple[str, ...] = Field(
+        (),
+        description="conditions that two runs must have in common for their durations to be compared; none named: all that the "
+        "experiments' table holds, texts included, but the duration",
+    )
     exchange: ExchangeSettings = ExchangeSettings()
     lattice_strain: LatticeStrainSettings = LatticeStrainSettings()
     mass_balance: MassBalanceSettings = MassBalanceSettings()

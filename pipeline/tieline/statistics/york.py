@@ -1,6 +1,6 @@
 """Straight line through points with errors in both variables.
 
-Public: `york_line`, `predict_line`, `line_without_each`.
+Public: `york_line`, `predict_line`, `predict_new`, `line_without_each`.
 """
 
 from __future__ import annotations
@@ -170,6 +170,21 @@ def predict_line(
     sd = np.sqrt(line.scale * (line.mean_se**2 + ((x - line.centre_x) * line.slope_se) ** 2) + own)
     half = line.quantile(confidence) * sd
     return OnLine(value, sd, value - half, value + half)
+
+
+def predict_new(
+    line: Line, x: FloatArray, sd_x: FloatArray | float = 0.0, confidence: float = 0.95
+) -> OnLine:
+    """As `predict_line`, for a further case and not the line: with the scatter of the points beyond their errors.
+
+    That scatter is taken as (scale - 1) times the points' typical variance, n / sum of weights; none where scale is 1.
+    """
+    on_line = predict_line(line, x, sd_x, confidence)
+    points = line.dof + 2
+    scatter = (line.scale - 1.0) * points * line.mean_se**2
+    sd = np.sqrt(on_line.sd**2 + scatter)
+    half = line.quantile(confidence) * sd
+    return OnLine(on_line.value, sd, on_line.value - half, on_line.value + half)
 
 
 def line_without_each(
