@@ -204,7 +204,10 @@ def show_start(path: Path, questions: Sequence[str]) -> None:
     console = new_console(soft_wrap=True)
     console.print(Text(f"Wrote {printable(path)}", style="bold"))
     if questions:
-        console.print(f"{len(questions)} questions are left; each is a line `# decide:` there:")
+        left = (
+            "1 question is left; it" if len(questions) == 1 else f"{len(questions)} questions are left; each"
+        )
+        console.print(f"{left} is a line `# decide:` there:")
     for question in questions:
         console.print(Text(f"  {printable(question)}"))
     console.print(Text(f"Then: tieline check {printable(path)}"))

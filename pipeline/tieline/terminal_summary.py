@@ -13,6 +13,7 @@ from tieline.configuration import Session, configured_run_folder
 from tieline.report.attention import attention
 from tieline.report.currency import FILES, report_verdict
 from tieline.report.left_out import by_reason
+from tieline.report.sentences import count
 from tieline.report.spots import spot_use
 from tieline.terminal_console import printable
 from tieline.terminal_results import brief_lines
@@ -47,7 +48,7 @@ def _spots(tables: Mapping[str, pa.Table]) -> Text:
     spots = spot_use(tables)
     unknown = [place for place in range(spots.count) if spots.keys["material"][place] is None]
     used = sum(bool(spots.n_used[place]) for place in unknown)
-    text = Text(f"{len(unknown)} spots", style="bold")
+    text = Text(count(len(unknown), "spot"), style="bold")
     text.append(
         f": {used} used, {len(unknown) - used} left out; {spots.count - len(unknown)} on reference materials. ",
         style="none",
@@ -60,7 +61,7 @@ def _spots(tables: Mapping[str, pa.Table]) -> Text:
 
 
 def _show_files(console: Console, session: Session, files: Sequence[str], n_more: int) -> None:
-    hints = [f"{n_more} more things in the report"] if n_more > 0 else []
+    hints = [f"{count(n_more, 'more thing')} in the report"] if n_more > 0 else []
     hints.append("every D, stage and remark: --all")
     console.print(Text("; ".join(hints), style="dim"))
     console.print(Text(f"Results: {session.run_folder}", style="bold"))

@@ -20,6 +20,7 @@ from tieline.settings import SessionSettings
 from tieline.starting import first_configuration
 from tieline.starting.combined_labels import label_pattern
 from tieline.starting.write import write_first_configuration
+from tieline.terminal import show_start
 
 # The demo's own answers to what no table tells.
 ANSWERS = """
@@ -181,6 +182,14 @@ def test_the_first_column_names_the_spots_where_no_two_are_alike():
     assert first_table("\n".join([f"Punkt,Run,Phase,{MAJORS}", *rows]))["columns"]["spot"] == "Punkt"
     again = "\n".join([f"Punkt,Run,Phase,{MAJORS}", *rows, rows[0]])
     assert "spot" not in first_table(again)["columns"]
+
+
+def test_one_question_is_told_as_one(capsys):
+    show_start(Path("session.toml"), ["which unit?"])
+    show_start(Path("session.toml"), ["which unit?", "which session?"])
+    shown = capsys.readouterr().out
+    assert "1 question is left; it is a line `# decide:` there:" in shown
+    assert "2 questions are left; each is a line" in shown
 
 
 def test_only_spots_are_counted():

@@ -197,9 +197,8 @@ def _zoning(source: Source, spots: SpotUse) -> str:
     table = source.table("ingest.spots")
     by_distance = bool(np.isfinite(numbers(table, "distance_um")).any())
     by_zone = any(text is not None for text in spots.keys["zone"])
-    place = " and ".join(
-        word for word, known in (("the distance from the rim", by_distance), ("the zone", by_zone)) if known
-    )
+    ways = (("with the distance from the rim", by_distance), ("between zones of the crystal", by_zone))
+    place = " and ".join(way for way, known in ways if known)
     crystals = {group for _, group in _unknowns(spots) if group[1] != settings.overlap.melt_phase}
     tested = {
         (row["experiment"], row["phase"], row["technique"])
@@ -213,7 +212,7 @@ def _zoning(source: Source, spots: SpotUse) -> str:
     )
     represent = {"all": "all spots represent the crystal", "rim": "only rims represent equilibrium",
                  "core": "only cores represent equilibrium"}[settings.zoning.represent]  # fmt: skip
-    return f"zoning with {place}{extent} (p < {settings.zoning.p:g}; in zoned crystals {represent})"
+    return f"zoning {place}{extent} (p < {settings.zoning.p:g}; in zoned crystals {represent})"
 
 
 def _does(action: str) -> str:
