@@ -1,15 +1,22 @@
 """Published and independently computed values of the evidence: curves, lines, exchange coefficients, ferric iron."""
 
 import numpy as np
+import pandas as pd
 import pytest
+from scipy.optimize import lsq_linear, nnls
 
+from assess.frames import partition
+from tieline.assess.bulk import bulk_partition, stated_modes
+from tieline.assess.condition_values import inverse_temperature
 from tieline.assess.exchange_coefficients import exchange_coefficient
 from tieline.assess.ferric import kress_carmichael
+from tieline.assess.trends import trend_tables
 from tieline.chemistry.elements import atomic_weight
 from tieline.chemistry.exchange import windows_for
 from tieline.chemistry.radii import ionic_radius
 from tieline.statistics.lattice_strain import Coefficients, fit_curve, lattice_strain
 from tieline.statistics.lattice_strain_problem import STRAIN_FACTOR
+from tieline.statistics.mass_balance import mix, shortfall
 from tieline.statistics.york import york_line
 
 # D0 0.50, r0 1.02 Å, E 290 GPa, 1300 °C, eightfold radii of Shannon (1976): Blundy & Wood (1994), Nature 372:452, eq. 2,
@@ -118,3 +125,82 @@ def test_ferric_share_follows_oxygen_fugacity_and_pressure():
     assert at[0] < at[1] < at[2]
     assert at[2] > 0.6  # in air most of the iron is ferric (Kennedy 1948, Am. J. Sci. 246:529; from memory)
     assert at[3] < at[0]
+
+
+GAS_CONSTANT = 8.314462618
+# Blundy & Wood (1991), Geochim. Cosmochim. Acta 55:193, plagioclase over melt: RT ln D = a + b X_An in J/mol (from memory)
+PLAGIOCLASE = {"Sr": (26_800, -26_700), "Ba": (10_200, -38_200)}
+
+
+@pytest.mark.parametrize(("element", "at_1200"), [("Sr", 2.998), ("Ba", 0.4835)])
+def test_a_published_temperature_dependence_comes_back(element, at_1200):
+    """An50 at six temperatures: slope, intercept and the prediction at 1200 °C, computed outside from the equation."""
+    a, b = PLAGIOCLASE[element]
+    energy = a + b * 0.5
+    celsius = np.array([1050.0, 1100.0, 1150.0, 1250.0, 1300.0, 1350.0])
+    D = np.exp(energy / (GAS_CONSTANT * (celsius + 273.15)))
+    names = [f"P{place}" for place in range(6)]
+    rows = [
+        {"experiment": name, "alpha": "plagioclase", "element": element, "D": d}
+        for name, d in zip(names, D, strict=True)
+    ]
+    x, x_sd = (pd.Series(values, names) for values in inverse_temperature(celsius, np.full(6, 5.0)))
+    made = trend_tables(partition(rows), "10^4/T", x, x_sd, predict=(1e4 / 1473.15,))
+    assert made.trends["slope"][0] == pytest.approx(energy / (1e4 * GAS_CONSTANT), rel=1e-9)
+    assert made.trends["intercept"][0] == pytest.approx(0.0, abs=1e-9)
+    assert made.predictions["D"][0] == pytest.approx(at_1200, rel=2e-4)
+
+
+# wt% of forsterite, diopside and anorthite from the atomic weights of 2022 (Pure Appl. Chem. 94:573), and the sums of
+# 20, 30 and 50 % of them, made by hand
+END_MEMBERS = {
+    "SiO2": (42.71, 55.49, 43.19), "MgO": (57.29, 18.61, 0.0), "CaO": (0.0, 25.90, 20.16), "Al2O3": (0.0, 0.0, 36.65),
+}  # fmt: skip
+MIXTURE = {"SiO2": 46.784, "MgO": 17.041, "CaO": 17.850, "Al2O3": 18.325}
+
+
+def end_members() -> tuple[np.ndarray, np.ndarray]:
+    return np.array(list(MIXTURE.values())), np.array(list(END_MEMBERS.values()))
+
+
+def test_sums_of_end_members_come_apart():
+    start, phases = end_members()
+    found = mix(start, 0.01 * start, phases, 0.01 * phases)
+    np.testing.assert_allclose(found.proportions, [0.2, 0.3, 0.5], atol=1e-6)
+    assert found.chi_square == pytest.approx(0.0, abs=1e-9)
+    assert found.squares == pytest.approx(0.0, abs=1e-9)
+    # A tenth of the magnesium gone: 1 - 0.9.
+    kept = np.array([True, False, True, True])
+    without = mix(start[kept], 0.01 * start[kept], phases[kept], 0.01 * phases[kept])
+    lost = shortfall(without, start[~kept], 0.01 * start[~kept], 0.9 * phases[~kept], 0.009 * phases[~kept])
+    assert lost.loss[0] == pytest.approx(0.1, abs=1e-6)
+
+
+def test_proportions_agree_with_general_solvers():
+    """Not an exact sum: unweighted against `nnls`, weighted with sure phases against `lsq_linear` of SciPy."""
+    start, phases = end_members()
+    start = start + np.array([0.6, -0.4, 0.3, -0.5])
+    sd = np.array([0.5, 0.2, 0.2, 0.2])
+    found = mix(start, sd, phases, np.zeros_like(phases))
+    plain, norm = nnls(phases, start)
+    np.testing.assert_allclose(found.unweighted, plain, atol=1e-6)
+    assert found.squares == pytest.approx(norm**2, rel=1e-6)
+    weighted = lsq_linear(phases / sd[:, None], start / sd, (0, np.inf))
+    np.testing.assert_allclose(found.proportions, weighted.x, atol=1e-6)
+    assert found.chi_square == pytest.approx(2 * weighted.cost, rel=1e-6)
+    # A phase that is not there is held at none by both.
+    absent = np.array([0.5, -0.1, 0.5]) @ phases.T
+    np.testing.assert_allclose(
+        mix(absent, sd, phases, np.zeros_like(phases)).unweighted, nnls(phases, absent)[0], atol=1e-6
+    )
+
+
+def test_bulk_coefficient_of_a_lherzolite():
+    # D of La from McKenzie & O'Nions (1991), J. Petrol. 32:1021 (from memory): 0.0004, 0.002 and 0.054; 60, 25 and 15 % by
+    # mass, invented: 0.6 x 0.0004 + 0.25 x 0.002 + 0.15 x 0.054 = 0.00884
+    D = {"olivine": 0.0004, "orthopyroxene": 0.002, "clinopyroxene": 0.054}
+    table = partition(
+        [{"alpha": phase, "element": "La", "D": value} for phase, value in D.items()], common_sd=0.0
+    )
+    modes = stated_modes({"olivine": 0.60, "orthopyroxene": 0.25, "clinopyroxene": 0.15}, 0.1, 0.95)
+    assert bulk_partition(table, {"A": modes})["bulk_D"][0] == pytest.approx(0.00884, rel=1e-9)
