@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import compress
@@ -17,8 +17,10 @@ BoolArray = npt.NDArray[np.bool_]
 TextArray = npt.NDArray[np.object_]
 
 # Keys are ranked by a table of all possible ones while it stays of the size of the rows, else by sorting.
-DENSE_KEYS_PER_ROW = 4
+DENSE_KEYS_PER_ROW = 1
 LARGEST_KEY = 2**62
+# Rows worked on at a time where an array of the size of the table would only pass through memory.
+ROWS_AT_ONCE = 2**17
 
 
 @dataclass(frozen=True)
@@ -76,9 +78,24 @@ class Groups:
 
 def numbers(table: pa.Table, name: str) -> FloatArray:
     """A number or count column as floats, null as NaN."""
-    column = table.column(name).combine_chunks()
-    values = column.to_numpy(zero_copy_only=False)
-    return np.asarray(values, dtype=np.float64)
+    column = table.column(name)
+    if column.null_count == len(column):
+        return np.full(len(column), np.nan)
+    array = one_array(column)
+    known = _with_nan_under_nulls(array)
+    return np.asarray(array.to_numpy(zero_copy_only=False), dtype=np.float64) if known is None else known
+
+
+def _with_nan_under_nulls(array: pa.Array) -> FloatArray | None:
+    """The array's own memory where that already says NaN for null, as it does once a stage has built it."""
+    if array.type != pa.float64() or not array.null_count:
+        return None
+    values = np.frombuffer(array.buffers()[1], np.float64)[array.offset : array.offset + len(array)]
+    if not np.array_equal(np.isnan(values), array.is_null().to_numpy(zero_copy_only=False)):
+        return None
+    values = values.view()
+    values.flags.writeable = False
+    return values
 
 
 def counts(table: pa.Table, name: str) -> IntArray:
@@ -98,26 +115,46 @@ def labels(table: pa.Table, name: str) -> Labels:
 
 def label_codes(array: pa.DictionaryArray) -> Labels:
     """A label array as codes into its sorted texts in use, whatever the order of its dictionary."""
+    narrow = narrow_codes(array)
+    return Labels(narrow.codes.astype(np.int64), narrow.texts)
+
+
+def narrow_codes(array: pa.DictionaryArray) -> Labels:
+    """The same with codes as narrow as the array's own: arithmetic on them may overflow, indexing with them does not."""
     texts = array.dictionary.to_pylist()
-    # One above the code, 0 for null, while counting which are in use.
-    codes = _codes_from_one(array.indices)
-    used = np.bincount(codes, minlength=len(texts) + 1)[1:]
-    codes -= 1
+    indices = array.indices.fill_null(-1) if array.indices.null_count else array.indices
+    codes = indices.to_numpy()
+    used = _number_of_each(codes, len(texts))
     in_use = sorted(set(compress(texts, used)))
     if in_use == texts:
         return Labels(codes, tuple(texts))
     place = {text: position for position, text in enumerate(in_use)}
-    places = np.array([*(place.get(text, -1) for text in texts), -1], dtype=np.int64)
+    places = np.array([*(place.get(text, -1) for text in texts), -1], dtype=codes.dtype)
     return Labels(places[codes], tuple(in_use))
 
 
-def _codes_from_one(indices: pa.Array) -> IntArray:
-    known = indices.fill_null(-1) if indices.null_count else indices
-    return np.asarray(known.to_numpy() + np.int64(1))
+def _number_of_each(codes: IntArray, n_codes: int) -> IntArray:
+    """How often each of the codes 0 .. n_codes - 1 occurs among codes >= -1."""
+    number = np.zeros(n_codes + 1, dtype=np.int64)
+    for rows in portions(len(codes), max(ROWS_AT_ONCE, n_codes)):
+        number += np.bincount(codes[rows] + np.int64(1), minlength=n_codes + 1)
+    return number[1:]
+
+
+def portions(size: int, at_once: int = ROWS_AT_ONCE) -> Iterator[slice]:
+    """Slices that together are 0 .. size - 1, so that what is made of each stays in the processor's cache."""
+    return (slice(start, min(start + at_once, size)) for start in range(0, size, at_once))
+
+
+def is_labelled(table: pa.Table, name: str) -> BoolArray:
+    """Rows that have a label."""
+    return np.asarray(one_array(table.column(name)).is_valid().to_numpy(zero_copy_only=False))
 
 
 def one_array(column: pa.ChunkedArray) -> pa.Array:
     """A column as one array, without a copy where it already is one."""
+    if column.num_chunks == 1:
+        return column.chunk(0)  # combine_chunks would copy it
     array = column.combine_chunks()
     if isinstance(array, pa.ChunkedArray):  # Arrow keeps chunks where one array could not hold them
         array = pa.concat_arrays(array.chunks) if array.num_chunks else pa.array([], array.type)
@@ -131,16 +168,28 @@ def group_rows(columns: Sequence[Labels], rows: BoolArray | None = None) -> Grou
 
 
 def group_table(table: pa.Table, names: Sequence[str], rows: BoolArray | None = None) -> Groups:
-    """The same for columns of a table, of which only one at a time is unpacked."""
-    code, first = _grouped((labels(table, name) for name in names), table.num_rows, rows)
+    """The same for columns of a table."""
+    columns = (narrow_codes(one_array(table.column(name))) for name in names)
+    code, first = _grouped(columns, table.num_rows, rows)
     keys = table.select(names).take(pa.array(first))
     return Groups(code, tuple(labels(keys, name) for name in names), first)
 
 
 def _grouped(columns: Iterable[Labels], size: int, rows: BoolArray | None) -> tuple[IntArray, IntArray]:
     """The group of every row, -1 for none, and the first row of each group."""
-    chosen = None if rows is None or rows.all() else np.flatnonzero(rows)
-    keys, n_keys = np.zeros(size if chosen is None else len(chosen), dtype=np.int64), 1
+    chosen = None if rows is None or rows.all() else rows
+    n_rows = size if chosen is None else int(np.count_nonzero(chosen))
+    rank, first = ranked(*_combined(columns, n_rows, chosen))
+    if chosen is None:
+        return rank, first
+    code = np.full(size, -1, dtype=np.int64)
+    code[chosen] = rank
+    return code, np.flatnonzero(chosen)[first]
+
+
+def _combined(columns: Iterable[Labels], size: int, chosen: BoolArray | None) -> tuple[IntArray, int]:
+    """One key per chosen row in the order of the labels, and a number that all keys are below."""
+    keys, n_keys = np.zeros(size, dtype=np.int64), 1
     for column in columns:
         choices = len(column.texts) + 1
         codes = column.codes if chosen is None else column.codes[chosen]
@@ -148,18 +197,19 @@ def _grouped(columns: Iterable[Labels], size: int, rows: BoolArray | None) -> tu
             keys, first = ranked(keys, n_keys)
             n_keys = len(first)
             # Often a batch follows from the experiment, or an analyte from the element: such a column is passed over.
-            if np.array_equal(codes[first][keys], codes):
+            if _follows(codes, keys, first):
                 continue
         keys *= choices
         keys += codes
         keys += 1
         n_keys *= choices
-    rank, first = ranked(keys, n_keys)
-    if chosen is None:
-        return rank, first
-    code = np.full(size, -1, dtype=np.int64)
-    code[chosen] = rank
-    return code, chosen[first]
+    return keys, n_keys
+
+
+def _follows(codes: IntArray, keys: IntArray, first: IntArray) -> bool:
+    """Whether every code is that of the first row with the same key."""
+    of_key = codes[first]
+    return all(np.array_equal(of_key[keys[rows]], codes[rows]) for rows in portions(len(codes)))
 
 
 def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
@@ -167,12 +217,17 @@ def ranked(keys: IntArray, size: int) -> tuple[IntArray, IntArray]:
     if size > DENSE_KEYS_PER_ROW * len(keys):
         _, first, rank = np.unique(keys, return_index=True, return_inverse=True)
         return rank.reshape(-1), first
-    row = np.full(size, -1, dtype=np.int64)
+    row: IntArray = np.full(size, -1, dtype=np.int32 if len(keys) < 2**31 else np.int64)
     # Of the rows with one key the last written, which is the first, stays.
-    row[keys[::-1]] = np.arange(len(keys) - 1, -1, -1)
-    present = row >= 0
-    place: IntArray = np.cumsum(present) - 1
-    return place[keys], row[present]
+    for rows in reversed(list(portions(len(keys)))):
+        row[keys[rows][::-1]] = np.arange(rows.stop - 1, rows.start - 1, -1)
+    present = np.flatnonzero(row >= 0)
+    first = row[present].astype(np.int64)
+    row[present] = np.arange(len(present))
+    rank = np.empty(len(keys), dtype=np.int64)
+    for rows in portions(len(keys)):
+        rank[rows] = row[keys[rows]]
+    return rank, first
 
 
 def common_keys(tables: Sequence[pa.Table], names: Sequence[Sequence[str]]) -> list[IntArray]:
@@ -215,7 +270,10 @@ def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
 
     A spot is identified by its table and its row there, for labels may repeat between tables.
     """
-    tables = labels(table, "table")
-    rows = counts(table, "row")
+    tables = narrow_codes(one_array(table.column("table")))
+    rows = one_array(table.column("row")).to_numpy()
     widest = int(rows.max(initial=0)) + 1
-    return ranked(tables.codes * widest + rows, len(tables.texts) * widest)
+    keys = tables.codes.astype(np.int64)
+    keys *= widest
+    keys += rows
+    return ranked(keys, len(tables.texts) * widest)

@@ -7,7 +7,20 @@ from collections.abc import Mapping
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, TextArray, group_rows, labels, numbers, spot_codes
+from tieline.arrays import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    TextArray,
+    group_rows,
+    group_table,
+    is_labelled,
+    labels,
+    narrow_codes,
+    numbers,
+    one_array,
+    spot_codes,
+)
 from tieline.columns import PAIR_TECHNIQUES, PAIRS
 from tieline.errors import InputError, Problem, nearest
 from tieline.results import Remark
@@ -24,9 +37,9 @@ def with_parts(convert: pa.Table, settings: PairSettings) -> tuple[pa.Table, dic
     with `local` every phase is split, for its parts to be paired.
     """
     name = settings.local if settings.local != "none" else settings.separate
-    phase = labels(convert, "phase")
     if name == "none":
-        return convert, {text: text for text in phase.texts}
+        return convert, {text: text for text in narrow_codes(one_array(convert.column("phase"))).texts}
+    phase = labels(convert, "phase")
     part = labels(convert, name)
     whole = (
         phase.is_one_of((MELT,)) if settings.local == "none" else np.zeros(convert.num_rows, dtype=np.bool_)
@@ -37,7 +50,7 @@ def with_parts(convert: pa.Table, settings: PairSettings) -> tuple[pa.Table, dic
     wholes = {_part_name(text, suffix): text for text in phase.texts for suffix in (None, *part.texts)}
     split = pa.DictionaryArray.from_arrays(pa.array(code.astype(np.int32)), pa.array(texts, pa.string()))
     column = convert.schema.get_field_index("phase")
-    return convert.set_column(column, convert.schema.field(column), split), wholes
+    return convert.set_column(column, convert.schema.field(column).with_type(split.type), split), wholes
 
 
 def _part_name(phase: str, part: str | None) -> str:
@@ -52,14 +65,13 @@ def phase_pairs(
     wholes: part -> whole phase, from `with_parts`.
     Raises InputError when a configured pair names a phase that no table has.
     """
-    experiment, phase = labels(convert, "experiment"), labels(convert, "phase")
-    unknown = experiment.codes >= 0
-    groups = group_rows([experiment, phase], unknown)
     spot, first = spot_codes(convert)
     # A spot counts once, however many of its values are used.
     has_used = np.zeros(len(first), dtype=np.bool_)
     has_used[spot[used]] = True
-    spots_used = np.bincount(groups.code[first[has_used]], minlength=groups.count)
+    spots = convert.select(["experiment", "phase"]).take(pa.array(first))
+    groups = group_table(spots, ("experiment", "phase"), is_labelled(spots, "experiment"))
+    spots_used = np.bincount(groups.code[has_used], minlength=groups.count)
     n_used = dict(zip(groups.keys, spots_used.tolist(), strict=True))
     phases = sorted({str(key[1]) for key in groups.keys})
     wanted = _wanted(phases, settings, wholes)

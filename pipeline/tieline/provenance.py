@@ -12,7 +12,9 @@ import pyarrow as pa
 import pyarrow.compute as pc
 
 from tieline.arrays import label_codes, one_array
+from tieline.narrowing import code_type, place_in_memory
 from tieline.statistics.threads import side_by_side
+from tieline.tables import declared_type
 
 # Below this a thread costs more than it saves.
 ROWS_FOR_THREADS = 100_000
@@ -59,15 +61,7 @@ class ColumnDigests:
 
 def _place(column: pa.ChunkedArray) -> Hashable:
     """Where a column lies in memory."""
-    return tuple(
-        (str(part.type), part.offset, len(part), *(_buffer_place(buffer) for buffer in part.buffers()))
-        for chunk in column.chunks
-        for part in _parts(chunk)
-    )
-
-
-def _buffer_place(buffer: pa.Buffer | None) -> tuple[int, int] | None:
-    return None if buffer is None else (buffer.address, buffer.size)
+    return tuple(place_in_memory(part) for chunk in column.chunks for part in _parts(chunk))
 
 
 def _parts(array: pa.Array) -> list[pa.Array]:
@@ -87,7 +81,8 @@ def content_digest(table: pa.Table, known: ColumnDigests | None = None) -> str:
         else [known.of(column) for column in table.columns]
     )
     columns = [
-        [field.name, str(field.type), digest] for field, digest in zip(table.schema, digests, strict=True)
+        [field.name, str(declared_type(field.type)), digest]
+        for field, digest in zip(table.schema, digests, strict=True)
     ]
     return bytes_digest(json_text([table.num_rows, columns]).encode())
 
@@ -99,7 +94,7 @@ def column_digest(column: pa.ChunkedArray) -> str:
     if pa.types.is_dictionary(array.type):
         labels = label_codes(array)
         digest.update(json_text(labels.texts).encode())
-        digest.update(labels.codes.astype(_narrow_type(len(labels.texts))).data)
+        digest.update(labels.codes.astype(code_type(len(labels.texts)).to_pandas_dtype()).data)
         return digest.hexdigest()
     if array.null_count:
         digest.update(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)).data)
@@ -112,11 +107,6 @@ def column_digest(column: pa.ChunkedArray) -> str:
         array = array.fill_null(pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type))
     digest.update(np.ascontiguousarray(array.to_numpy(zero_copy_only=False)).data)
     return digest.hexdigest()
-
-
-def _narrow_type(count: int) -> type[np.signedinteger[Any]]:
-    """The smallest integer type for the codes -1 .. count - 1: most label columns have few texts."""
-    return np.int8 if count < 2**7 else np.int16 if count < 2**15 else np.int32
 
 
 def _text_bytes(array: pa.StringArray) -> bytes | memoryview:

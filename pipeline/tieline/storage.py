@@ -23,6 +23,7 @@ from tieline.tables import declared
 
 # Raised when the meaning of a stage file changes; a file of another version is stale.
 SCHEMA_VERSION = 1
+ROWS_PER_ROW_GROUP = 1024 * 1024
 METADATA_KEY = b"tieline"
 
 
@@ -210,22 +211,26 @@ def read_input(path: Path, name: str, largest: int) -> InputFile:
 
 def _write_table(stream: BinaryIO, name: str, table: pa.Table, record: Mapping[str, Any]) -> None:
     """One stage table with its field metadata, and `record` in the schema metadata."""
-    table = declared(table, TABLES[name])
+    spec = TABLES[name]
     text = json.dumps(record, ensure_ascii=False)
-    table = table.replace_schema_metadata({METADATA_KEY: text.encode()})
+    schema = spec.schema().with_metadata({METADATA_KEY: text.encode()})
     # Measured numbers have few digits and repeat: a dictionary makes files smaller by a third at no cost. The
     # smallest and largest text of a column is of no use and takes longer than writing it.
     texts = (pa.types.is_dictionary, pa.types.is_string)
-    numbers = [field.name for field in table.schema if not any(is_text(field.type) for is_text in texts)]
-    pq.write_table(
-        table,
+    numbers = [field.name for field in schema if not any(is_text(field.type) for is_text in texts)]
+    with pq.ParquetWriter(
         stream,
+        schema,
         compression="zstd",
         compression_level=1,
         use_dictionary=True,
         write_statistics=numbers,
         write_page_checksum=True,
-    )
+    ) as writer:
+        # The declared label codes are wider than those in memory: one row group at a time is cast to them.
+        for start in range(0, max(table.num_rows, 1), ROWS_PER_ROW_GROUP):
+            rows = declared(table.slice(start, ROWS_PER_ROW_GROUP), spec)
+            writer.write_table(rows.replace_schema_metadata(schema.metadata), ROWS_PER_ROW_GROUP)
 
 
 def read_table(path: Path, name: str) -> pa.Table:

@@ -14,10 +14,12 @@ import pyarrow as pa
 
 from tieline.arrays import Labels
 from tieline.errors import DefectError
+from tieline.narrowing import compact, is_label
 
 Kind = Literal["label", "text", "number", "count", "flag"]
 
-# Labels repeat many times per table; a dictionary column stores each text once.
+# Labels repeat many times per table; a dictionary column stores each text once. In memory its codes are as narrow as
+# the number of texts allows (`narrowing`); in files, in digests and to readers the type is the declared one.
 ARROW_TYPES: dict[str, pa.DataType] = {
     "label": pa.dictionary(pa.int32(), pa.string()),
     "text": pa.string(),
@@ -68,7 +70,10 @@ def build(spec: TableSpec, columns: Mapping[str, Any]) -> pa.Table:
     if missing or undeclared:
         raise DefectError(f"{spec.name}: missing {sorted(missing)}, undeclared {sorted(undeclared)}")
     arrays = [_column(spec, column, columns[column.name]) for column in spec.columns]
-    table = pa.Table.from_arrays(arrays, schema=spec.schema())
+    fields = [
+        column.field().with_type(array.type) for column, array in zip(spec.columns, arrays, strict=True)
+    ]
+    table = compact(pa.Table.from_arrays(arrays, schema=pa.schema(fields)))
     check(table, spec)
     return table
 
@@ -80,7 +85,7 @@ def empty(spec: TableSpec) -> pa.Table:
 
 def check(table: pa.Table, spec: TableSpec) -> None:
     """Raises DefectError unless the table has exactly the declared columns, types and nulls."""
-    found = [(field.name, field.type) for field in table.schema]
+    found = [(field.name, declared_type(field.type)) for field in table.schema]
     declared = [(column.name, ARROW_TYPES[column.kind]) for column in spec.columns]
     if found != declared:
         wrong = [pair for pair in found if pair not in declared] or [
@@ -94,8 +99,13 @@ def check(table: pa.Table, spec: TableSpec) -> None:
             raise DefectError(f"{spec.name}.{column.name}: null where a value is declared")
 
 
+def declared_type(found: pa.DataType) -> pa.DataType:
+    """The declared type that a column of this type is written with: label codes may be narrower in memory."""
+    return ARROW_TYPES["label"] if is_label(found) else found
+
+
 def declared(table: pa.Table, spec: TableSpec) -> pa.Table:
-    """The table with its declared field metadata, after `check`."""
+    """The table with its declared types and field metadata, after `check`."""
     check(table, spec)
     return table.cast(spec.schema()) if table.schema != spec.schema() else table
 
@@ -115,7 +125,7 @@ def _column(spec: TableSpec, column: Column, data: Any) -> pa.Array | pa.Chunked
 
 
 def _arrow_column(data: pa.Array | pa.ChunkedArray, target: pa.DataType) -> pa.Array | pa.ChunkedArray:
-    if data.type == target:
+    if declared_type(data.type) == target:
         return data
     if pa.types.is_dictionary(target) and not pa.types.is_dictionary(data.type):
         return data.cast(pa.string()).dictionary_encode()
