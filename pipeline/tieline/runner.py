@@ -18,6 +18,7 @@ from tieline.configuration import Session
 from tieline.errors import DefectError, InputError, Problem
 from tieline.lock import locked, refuse_if_sealed
 from tieline.manifest import write_manifest
+from tieline.memory import return_unused_memory
 from tieline.plan import Verdict, judge, read_records, stage_fingerprint, table_path
 from tieline.provenance import ColumnDigests, bytes_digest, content_digest
 from tieline.reading.input_file import InputFile
@@ -251,6 +252,7 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
     except InputError as error:
         later = STAGES[NAMES.index(stage.name) + 1 :]
         raise InputError([*error.problems, *_problems_of_files(later, work.session, work.files)]) from None
+    return_unused_memory()
     _check_result(stage, result, work)
     work.tables.update(result.tables)
     used = {name: work.digests[name] for name in (*stage.inputs, *files)}
@@ -275,6 +277,8 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
             path = table_path(work.session.run_folder, name)
             pending.add(path, name, result.tables[name], {**record, "content": work.digests[name]})
     _forget(stage, work)
+    del inputs, extra
+    return_unused_memory()
     return StageReport(verdict, True, result.ledger, result.remarks)
 
 
