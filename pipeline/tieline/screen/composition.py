@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
-from tieline.screen.padding import blocks, column_medians
+from tieline.screen.padding import FEW_CELLS, Block, Rows, blocks, column_medians
 from tieline.screen.session import Measured
 from tieline.statistics.robust import MADN_FACTOR
 
@@ -22,27 +23,64 @@ _MEDIAN_VARIANCE = np.pi / 2  # of a median over that of a mean, for many normal
 
 @dataclass(frozen=True)
 class TestValues:
-    """Values and sigmas (n, p) in ppm; a value of which only the limit L is known is L/2 with sigma L/2."""
+    """Values and sigmas in ppm, made for the rows asked for: a second table of all of them would take much memory.
+
+    A value of which only the limit L is known is L/2 with sigma L/2; spots that are `hidden` (n,) have none.
+    """
 
     __test__ = False  # not a pytest class
 
-    value: FloatArray
-    sigma: FloatArray
+    measured: Measured
+    hidden: BoolArray
 
     def without(self, spots: BoolArray) -> TestValues:
         """The same with all values of some spots (n,) taken away."""
-        hidden = spots[:, None]
-        return TestValues(np.where(hidden, np.nan, self.value), np.where(hidden, np.nan, self.sigma))
+        return TestValues(self.measured, self.hidden | spots)
+
+    @property
+    def value(self) -> Rows:
+        return _Made(self, _values)
+
+    @property
+    def sigma(self) -> Rows:
+        return _Made(self, _sigmas)
+
+
+@dataclass(frozen=True)
+class _Made:
+    """One of the two, row by row."""
+
+    source: TestValues
+    make: Callable[[Measured], FloatArray]
+
+    def __getitem__(self, rows: IntArray, /) -> FloatArray:
+        made = self.make(self.source.measured.part(rows))
+        made[self.source.hidden[rows]] = np.nan
+        return made
+
+
+def _values(part: Measured) -> FloatArray:
+    return np.where(part.only_limit, 0.5 * part.limit, part.value)
+
+
+def _sigmas(part: Measured) -> FloatArray:
+    known = np.where(part.sigma > 0, part.sigma, part.limit / SIGMAS_PER_LIMIT)
+    return np.where(part.only_limit, 0.5 * part.limit, known)
 
 
 def values_for_tests(measured: Measured) -> TestValues:
     """Measured values also where they are below their limit; half the limit where there is nothing else."""
-    only_limit = measured.only_limit
-    half = 0.5 * measured.limit
-    value = np.where(only_limit, half, measured.value)
-    known = measured.sigma > 0
-    sigma = np.where(only_limit, half, np.where(known, measured.sigma, measured.limit / SIGMAS_PER_LIMIT))
-    return TestValues(value, sigma)
+    return TestValues(measured, np.zeros(len(measured.spots), dtype=np.bool_))
+
+
+def group_medians(
+    measured: Measured, groups: IntArray, of_block: Callable[[Block], FloatArray]
+) -> FloatArray:
+    """Medians (G, p) over the spots of some groups, in ascending order, of what `of_block` gives of each block."""
+    medians = np.full((len(groups), len(measured.analytes)), np.nan)
+    for block in blocks(measured, groups, cells=FEW_CELLS):
+        medians[np.searchsorted(groups, block.groups)] = column_medians(of_block(block))
+    return medians
 
 
 def trace_elements(measured: Measured, phase_of_spot: IntArray, whole: bool) -> BoolArray:

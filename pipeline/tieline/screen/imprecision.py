@@ -7,13 +7,15 @@ from collections.abc import Iterable
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, IntArray
+from tieline.arrays import BoolArray, portions
 from tieline.results import Remark
-from tieline.screen.composition import SIGMAS_PER_LIMIT, compositions, values_for_tests
-from tieline.screen.findings import Findings
+from tieline.screen.composition import SIGMAS_PER_LIMIT, group_medians, values_for_tests
+from tieline.screen.findings import Findings, joined
 from tieline.screen.groups import CANNOT_TELL, TestResult, Verdict
+from tieline.screen.padding import FEW_CELLS
 from tieline.screen.session import Measured, Session
 from tieline.settings.screen import ImpreciseSettings
+from tieline.statistics.threads import side_by_side
 
 # A detail names this many analytes and counts the others.
 NAMED_ANALYTES = 10
@@ -29,7 +31,9 @@ def imprecision_result(
     treated as such later; it is not remarked here. Dropping imprecise values prefers high ones and biases
     the mean, which is why the default only marks.
     """
-    findings = _imprecise_values(measured, settings)
+    spots_at_once = max(1, FEW_CELLS // max(1, len(measured.analytes)))
+    parts = [measured.part(rows) for rows in portions(len(measured.spots), spots_at_once)]
+    findings = joined("imprecise", side_by_side(lambda part: _imprecise_values(part, settings), parts))
     verdicts = tuple(_hidden_by_limits(session, measured, melt_phase))
     return TestResult((findings,), verdicts)
 
@@ -67,9 +71,11 @@ def _hidden_by_limits(session: Session, measured: Measured, melt_phase: str) -> 
     if not len(hosts) or not np.isfinite(measured.limit).any():
         return
     melts = np.array([melt_of[keys[at][0]] for at in hosts], dtype=np.int64)
-    limit = _median_limits(measured, groups)
-    melt = compositions(measured, values_for_tests(measured), groups).mean
-    hidden: BoolArray = limit[hosts] > melt[melts]
+    limit = group_medians(measured, groups[hosts], lambda block: block.of(measured.limit))
+    melt_groups, melt = np.unique(groups[melts], return_inverse=True)
+    values = values_for_tests(measured).value
+    value = group_medians(measured, melt_groups, lambda block: block.of(values))
+    hidden: BoolArray = limit > value[melt]
     for position in np.flatnonzero(hidden.any(axis=1)):
         at = int(hosts[position])
         rows = measured.of_group(int(groups[at]))
@@ -78,15 +84,6 @@ def _hidden_by_limits(session: Session, measured: Measured, melt_phase: str) -> 
         yield Verdict(
             int(groups[at]), "imprecise", rows.stop - rows.start, CANNOT_TELL, detail, float(len(names))
         )
-
-
-def _median_limits(measured: Measured, groups: IntArray) -> FloatArray:
-    from tieline.screen.padding import blocks, column_medians
-
-    limits = np.full((len(groups), len(measured.analytes)), np.nan)
-    for block in blocks(measured, groups):
-        limits[np.searchsorted(groups, block.groups)] = column_medians(block.of(measured.limit))
-    return limits
 
 
 def _named(names: list[str]) -> str:

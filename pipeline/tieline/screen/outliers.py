@@ -6,8 +6,9 @@ statistics and their sources are in `tieline.statistics.outliers`.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 
@@ -15,7 +16,7 @@ from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.results import Remark
 from tieline.screen.findings import Findings, no_findings, spot_findings
 from tieline.screen.groups import TestResult
-from tieline.screen.padding import Block, blocks
+from tieline.screen.padding import FEW_CELLS, Block, blocks
 from tieline.screen.session import Measured, Session
 from tieline.settings.screen import OutlierSettings
 from tieline.statistics.outliers import (
@@ -26,6 +27,9 @@ from tieline.statistics.outliers import (
     joint_outliers,
     modified_z,
 )
+from tieline.statistics.threads import side_by_side
+
+Result = TypeVar("Result")
 
 
 @dataclass(frozen=True)
@@ -46,11 +50,11 @@ def outlier_result(
 
     Only values that were measured take part, also those below their limit; values given as a limit do not.
     """
-    values = np.where(dropped[measured.spots][:, None], np.nan, measured.value)
-    findings = [_joint(measured, values, settings)]
+    tested = _Tested(measured, dropped[measured.spots], settings.min_spots)
+    findings = [_joint(tested, settings)]
     remarks: tuple[Remark, ...] = ()
     if settings.per_analyte != "off":
-        findings.append(_per_analyte(measured, values, settings))
+        findings.append(_per_analyte(tested, settings))
         if settings.action == "drop" and len(findings[1]):
             remarks = (
                 Remark(
@@ -61,36 +65,47 @@ def outlier_result(
     return TestResult(tuple(findings), (), remarks)
 
 
-def _tested(
-    measured: Measured, values: FloatArray, settings: OutlierSettings
-) -> Iterator[tuple[Block, FloatArray]]:
-    """Blocks of groups of one size each, without groups of too few spots."""
-    for block in blocks(measured, np.unique(measured.group), exact=True):
-        value = block.of(values)
-        enough = np.isfinite(value).any(axis=2).sum(axis=1) >= settings.min_spots
-        if enough.any():
-            yield Block(block.groups[enough], block.rows[enough]), value[enough]
+@dataclass(frozen=True)
+class _Tested:
+    """What is tested: values of spots that are not left out (`dropped`, (n,)), in groups of enough spots."""
+
+    measured: Measured
+    dropped: BoolArray
+    min_spots: int
+
+    def results(self, test: Callable[[Block, FloatArray], Result]) -> list[Result]:
+        """What a test gives of every block of groups of one size and its values (G, n, p), in the order of blocks."""
+
+        def result(block: Block) -> Result | None:
+            value = block.of(self.measured.value)
+            value[self.dropped[block.rows]] = np.nan
+            enough = np.isfinite(value).any(axis=2).sum(axis=1) >= self.min_spots
+            if not enough.any():
+                return None
+            return test(Block(block.groups[enough], block.rows[enough]), value[enough])
+
+        # Nothing is padded, so that no result depends on which groups share a block.
+        parts = list(blocks(self.measured, np.unique(self.measured.group), exact=True, cells=FEW_CELLS))
+        return [part for part in side_by_side(result, parts) if part is not None]
 
 
-def _joint(measured: Measured, values: FloatArray, settings: OutlierSettings) -> Findings:
-    rows, counts, needed, p_values = [], [], [], []
-    for block, value in _tested(measured, values, settings):
+def _joint(tested: _Tested, settings: OutlierSettings) -> Findings:
+    def found(block: Block, value: FloatArray) -> tuple[IntArray, IntArray, IntArray, FloatArray]:
         joint = joint_outliers(value, settings.alpha, settings.p)
         at = np.nonzero(joint.outlier)
-        rows.append(block.rows[at])
-        counts.append(joint.analytes[at])
-        needed.append(joint.needed[at[0]])
-        p_values.append(joint.p_value[at])
-    if not rows:
+        return block.rows[at], joint.analytes[at], joint.needed[at[0]], joint.p_value[at]
+
+    parts = tested.results(found)
+    if not parts:
         return no_findings("outlier")
-    row, count, least = np.concatenate(rows), np.concatenate(counts), np.concatenate(needed)
+    row, count, least, p_value = (np.concatenate(column) for column in zip(*parts, strict=True))
     return spot_findings(
         "outlier",
         settings.action,
-        measured.spots[row],
+        tested.measured.spots[row],
         count.astype(np.float64),
         least.astype(np.float64),
-        np.concatenate(p_values),
+        p_value,
         [
             f"{number} analytes are the extreme of their group at once; {enough} or more are improbable"
             for number, enough in zip(count, least, strict=True)
@@ -98,9 +113,10 @@ def _joint(measured: Measured, values: FloatArray, settings: OutlierSettings) ->
     )
 
 
-def _per_analyte(measured: Measured, values: FloatArray, settings: OutlierSettings) -> Findings:
+def _per_analyte(tested: _Tested, settings: OutlierSettings) -> Findings:
+    measured = tested.measured
     test = {"grubbs": _grubbs, "esd": _generalized_esd, "modified-z": _modified_z}[settings.per_analyte]
-    parts = [test(block, value, settings) for block, value in _tested(measured, values, settings)]
+    parts = tested.results(lambda block, value: test(block, value, settings))
     if not parts:
         return no_findings("outlier")
     row, column, statistic, threshold, p_value = (
@@ -116,7 +132,7 @@ def _per_analyte(measured: Measured, values: FloatArray, settings: OutlierSettin
         p_value,
         [settings.action] * len(row),
         [
-            f"{measured.analytes[at]} {values[spot, at]:.4g} ppm stands out ({settings.per_analyte})"
+            f"{measured.analytes[at]} {measured.value[spot, at]:.4g} ppm stands out ({settings.per_analyte})"
             for spot, at in zip(row, column, strict=True)
         ],
     )

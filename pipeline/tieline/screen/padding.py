@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
@@ -12,6 +13,14 @@ from tieline.screen.session import Measured
 
 # Cells of one block: keeps the working memory of a test to some tens of megabytes.
 CELLS_AT_ONCE = 2_000_000
+# The same for tests that need a dozen arrays of every block: these stay in the processor's cache.
+FEW_CELLS = 200_000
+
+
+class Rows(Protocol):
+    """Values of every spot of `Measured` that are made when rows of them are asked for."""
+
+    def __getitem__(self, rows: IntArray, /) -> FloatArray: ...
 
 
 @dataclass(frozen=True)
@@ -25,36 +34,36 @@ class Block:
     def occupied(self) -> BoolArray:
         return np.asarray(self.rows >= 0)
 
-    def of(self, values: FloatArray) -> FloatArray:
+    def of(self, values: FloatArray | Rows) -> FloatArray:
         """Values of `Measured`, one or several per spot, as (G, n, ...) with NaN where there is no spot."""
         taken = values[self.rows]
         taken[~self.occupied] = np.nan
         return np.asarray(taken)
 
 
-def blocks(measured: Measured, groups: IntArray, *, exact: bool = False) -> Iterator[Block]:
+def blocks(
+    measured: Measured, groups: IntArray, *, exact: bool = False, cells: int = CELLS_AT_ONCE
+) -> Iterator[Block]:
     """The given groups in blocks of similar size; with `exact` of the same size, so that nothing is padded."""
     first = np.searchsorted(measured.group, groups)
     size = np.searchsorted(measured.group, groups, side="right") - first
     order = np.argsort(size, kind="stable")
     order = order[size[order] > 0]
+    ordered = size[order]
     width = max(1, len(measured.analytes))
     start = 0
     while start < len(order):
-        end = start + 1
-        while end < len(order) and _fits(size[order[start]], size[order[end]], end + 1 - start, width, exact):
-            end += 1
+        smallest = int(ordered[start])
+        largest = smallest if exact else max(2 * smallest, 16)
+        end = int(np.searchsorted(ordered, largest, side="right"))
+        # Padded to the last and largest of them, so many groups do not exceed the number of cells.
+        allowed = np.arange(1, end - start + 1) * ordered[start:end] * width <= cells
+        end = start + max(1, int(np.count_nonzero(allowed)))
         chosen = np.sort(order[start:end])
         place = np.arange(int(size[chosen].max()))
         rows = np.where(place < size[chosen][:, None], first[chosen][:, None] + place, -1)
         yield Block(groups[chosen], rows)
         start = end
-
-
-def _fits(smallest: int, largest: int, number: int, width: int, exact: bool) -> bool:
-    if exact:
-        return smallest == largest and number * largest * width <= CELLS_AT_ONCE
-    return largest <= max(2 * smallest, 16) and number * largest * width <= CELLS_AT_ONCE
 
 
 def column_medians(values: FloatArray, fewest: int = 1) -> FloatArray:

@@ -12,9 +12,10 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, IntArray, flags, labels
+from tieline.arrays import BoolArray, IntArray, flags, is_labelled, portions
 from tieline.correction import Concentrations
 from tieline.results import Ledger
 from tieline.screen.findings import RULING, TESTS, WHOLE_SPOT, Findings
@@ -32,7 +33,7 @@ class Resolution:
     `kept` (rows,): a ruling keeps the value, as it was measured.
     """
 
-    reasons: IntArray
+    reasons: npt.NDArray[np.int16]
     kept: BoolArray
 
     @property
@@ -41,8 +42,8 @@ class Resolution:
 
     def why(self) -> pa.DictionaryArray:
         """The codes that keep each value out, in order of precedence, joined by commas; empty when used."""
-        present = np.flatnonzero(np.bincount(self.reasons))
-        position = np.zeros(present.max(initial=0) + 1, dtype=np.int32)
+        present = np.flatnonzero(self._number())
+        position = np.zeros(present.max(initial=0) + 1, dtype=np.int16)
         position[present] = np.arange(len(present))
         texts = [
             ", ".join(code for bit, code in enumerate(_CODES) if reasons >> bit & 1)
@@ -52,7 +53,7 @@ class Resolution:
 
     def ledger(self) -> Ledger:
         """Every value once, under the first of its reasons."""
-        number = np.bincount(self.reasons)
+        number = self._number()
         present = np.flatnonzero(number)
         number = number[present]
         outcomes = {"used": 0, REFERENCE_MATERIAL: 0, NOT_MEASURED: 0}
@@ -63,18 +64,24 @@ class Resolution:
         outcomes["used"] = int(np.sum(self.use))
         return Ledger("values", len(self.reasons), outcomes)
 
+    def _number(self) -> IntArray:
+        """How many values have each sum of reasons."""
+        number = np.zeros(1 << len(_CODES), dtype=np.int64)
+        for rows in portions(len(self.reasons)):
+            number += np.bincount(self.reasons[rows], minlength=len(number))
+        return number
+
 
 def resolve(
     convert: pa.Table, concentrations: Concentrations, session: Session, findings: Sequence[Findings]
 ) -> Resolution:
     """What keeps every row of `convert` out, from all findings, rulings among them."""
     cells = _Cells(session)
-    reasons = np.zeros(convert.num_rows, dtype=np.int64)
+    reasons = np.zeros(convert.num_rows, dtype=np.int16)
     kept = np.zeros(convert.num_rows, dtype=np.bool_)
     for part in findings:
         if part.code != RULING and len(part):
-            bit = 1 << _CODES.index(part.code)
-            reasons |= np.where(cells.marked(part, part.drops()), bit, 0)
+            reasons[cells.marked(part, part.drops())] |= 1 << _CODES.index(part.code)
     for whole in (True, False):
         # Rulings on single analytes come last, and so go before those on whole spots.
         for part in (part for part in findings if part.code == RULING):
@@ -87,7 +94,7 @@ def resolve(
     has_value = np.isfinite(concentrations.value)
     has_limit = np.isfinite(concentrations.limit) & flags(convert, "below_limit")
     reasons[~has_value & ~has_limit] = _MISSING_BIT
-    reasons[labels(convert, "material").codes >= 0] = _REFERENCE_BIT
+    reasons[is_labelled(convert, "material")] = _REFERENCE_BIT
     return Resolution(reasons, kept)
 
 
@@ -105,10 +112,14 @@ class _Cells:
         whole = chosen & (part.analyte == WHOLE_SPOT)
         spots = np.zeros(self._n_spots, dtype=np.bool_)
         spots[part.spot[whole]] = True
-        rows = spots[self._of_row] if whole.any() else np.zeros(len(self._of_row), dtype=np.bool_)
         single = chosen & ~whole
-        if single.any():
-            table = np.zeros((self._n_spots, self._n_analytes), dtype=np.bool_)
-            table[part.spot[single], part.analyte[single]] = True
-            rows |= table[self._of_row, self._analyte_of_row]
-        return rows
+        table = np.zeros((self._n_spots, self._n_analytes if single.any() else 0), dtype=np.bool_)
+        table[part.spot[single], part.analyte[single]] = True
+        marked = np.zeros(len(self._of_row), dtype=np.bool_)
+        for rows in portions(len(marked)):
+            spot = self._of_row[rows]
+            if whole.any():
+                marked[rows] = spots[spot]
+            if single.any():
+                marked[rows] |= table[spot, self._analyte_of_row[rows]]
+        return marked

@@ -7,9 +7,10 @@ phase of one experiment by one technique) stand together. Reference materials be
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+import numpy.typing as npt
 import pyarrow as pa
 
 from tieline.arrays import (
@@ -21,7 +22,10 @@ from tieline.arrays import (
     flags,
     group_rows,
     labels,
+    narrow_codes,
     numbers,
+    one_array,
+    portions,
     spot_codes,
 )
 from tieline.columns import SPOT_KEYS
@@ -34,7 +38,7 @@ class Spots:
     """Every spot once. `keys`: the declared key columns; `of_row`: spot number of every row of `convert`."""
 
     keys: pa.Table
-    of_row: IntArray
+    of_row: npt.NDArray[np.int32]
     experiment: Labels
     phase: Labels
     technique: Labels
@@ -76,6 +80,11 @@ class Measured:
         """Cells of which nothing but an upper limit is known (n, p)."""
         return ~np.isfinite(self.value) & self.below_limit & np.isfinite(self.limit)
 
+    def part(self, rows: slice | IntArray) -> Measured:
+        """Some of the spots; of a slice as views of the same memory."""
+        names = ("spots", "group", "present", "value", "sigma", "limit", "below_limit")
+        return replace(self, **{name: getattr(self, name)[rows] for name in names})
+
     def of_group(self, group: int) -> slice:
         """The rows of one group."""
         first, last = np.searchsorted(self.group, [group, group + 1])
@@ -84,7 +93,10 @@ class Measured:
 
 @dataclass(frozen=True)
 class Session:
-    """All spots, and the matrices of every technique in the order of their names."""
+    """All spots, and the matrices of every technique in the order of their names.
+
+    analyte: of every row of `convert`, with narrow codes.
+    """
 
     spots: Spots
     analyte: Labels
@@ -94,15 +106,13 @@ class Session:
 def session_of(convert: pa.Table, concentrations: Concentrations) -> Session:
     """The matrices of a `convert` table with its calibrated concentrations."""
     spots = _spots(convert)
-    analyte, element = labels(convert, "analyte"), labels(convert, "element")
+    analyte, element = (narrow_codes(one_array(convert.column(name))) for name in ("analyte", "element"))
     below = flags(convert, "below_limit")
-    technique_of_row = spots.technique.codes[spots.of_row]
-    unknown = spots.is_unknown[spots.of_row]
     techniques = []
     for code, name in enumerate(spots.technique.texts):
-        rows = np.flatnonzero(unknown & (technique_of_row == code))
-        if len(rows):
-            techniques.append(_measured(name, rows, spots, (analyte, element), below, concentrations))
+        chosen = np.flatnonzero(spots.is_unknown & (spots.technique.codes == code))
+        if len(chosen):
+            techniques.append(_measured(name, chosen, spots, (analyte, element), below, concentrations))
     return Session(spots, analyte, tuple(techniques))
 
 
@@ -113,59 +123,67 @@ def _spots(convert: pa.Table) -> Spots:
     by_name = {name: labels(keys, name) for name in names}
     # The last key sorts first.
     order = np.lexsort((numbers(keys, "row"), *(by_name[name].codes for name in reversed(names))))
-    rank = np.empty(len(order), dtype=np.int64)
+    rank = np.empty(len(order), dtype=np.int32)
     rank[order] = np.arange(len(order))
+    of_row = rank[code]
+    del code
     keys = keys.take(pa.array(order))
     grouping = [Labels(by_name[name].codes[order], by_name[name].texts) for name in names[:3]]
     is_unknown = labels(keys, "material").codes < 0
     groups = group_rows(grouping, is_unknown)
     experiment, phase, technique = grouping
-    return Spots(keys, rank[code], experiment, phase, technique, is_unknown, groups)
+    return Spots(keys, of_row, experiment, phase, technique, is_unknown, groups)
 
 
 def _measured(
     technique: str,
-    rows: IntArray,
+    chosen: IntArray,
     spots: Spots,
     names: tuple[Labels, Labels],
     below_limit: BoolArray,
     concentrations: Concentrations,
 ) -> Measured:
+    """The matrices of some spots, filled some rows at a time: a long table has no room for numbers of all its cells."""
     analyte, element = names
-    of_technique, row_of_cell = _numbered(spots.of_row[rows], spots.count)
-    codes, column_of_cell = _numbered(analyte.codes[rows], len(analyte.texts))
-    element_of_column = np.empty(len(codes), dtype=np.int64)
-    element_of_column[column_of_cell] = element.codes[rows]
-    cell = row_of_cell, column_of_cell
-    shape = (len(of_technique), len(codes))
-    filled = np.zeros(shape, dtype=np.bool_)
-    filled[cell] = True
-    if filled.sum() != len(rows):
+    # -1: not among the chosen spots.
+    place = np.full(spots.count, -1, dtype=np.int64)
+    place[chosen] = np.arange(len(chosen))
+    element_of = np.full(len(analyte.texts), -1, dtype=np.int64)
+    n_cells = 0
+    for rows in portions(len(spots.of_row)):
+        own = place[spots.of_row[rows]] >= 0
+        element_of[analyte.codes[rows][own]] = element.codes[rows][own]
+        n_cells += int(own.sum())
+    codes = np.flatnonzero(element_of >= 0)
+    column = np.cumsum(element_of >= 0) - 1
+    shape = (len(chosen), len(codes))
+    value, sigma, limit = (np.full(shape, np.nan) for _ in range(3))
+    present, below = (np.zeros(shape, dtype=np.bool_) for _ in range(2))
+    sources = (
+        (value, concentrations.value),
+        (sigma, concentrations.sigma),
+        (limit, concentrations.limit),
+        (below, below_limit),
+    )
+    for rows in portions(len(spots.of_row)):
+        spot = place[spots.of_row[rows]]
+        own = spot >= 0
+        cell = spot[own] * len(codes) + column[analyte.codes[rows][own]]
+        present.reshape(-1)[cell] = True
+        for matrix, values in sources:
+            matrix.reshape(-1)[cell] = values[rows][own]
+    if np.count_nonzero(present) != n_cells:
         raise DefectError(f"{technique}: an analyte occurs twice in one spot")
-
-    def matrix(values: FloatArray) -> FloatArray:
-        full = np.full(shape, np.nan)
-        full[cell] = values[rows]
-        return full
-
-    below = np.zeros(shape, dtype=np.bool_)
-    below[cell] = below_limit[rows]
     return Measured(
         technique,
-        of_technique,
-        spots.groups.code[of_technique],
+        chosen,
+        spots.groups.code[chosen],
         tuple(analyte.texts[code] for code in codes),
-        tuple(element.texts[code] for code in element_of_column),
+        tuple(element.texts[element_of[code]] for code in codes),
         codes,
-        filled,
-        matrix(concentrations.value),
-        matrix(concentrations.sigma),
-        matrix(concentrations.limit),
+        present,
+        value,
+        sigma,
+        limit,
         below,
     )
-
-
-def _numbered(codes: IntArray, n_codes: int) -> tuple[IntArray, IntArray]:
-    """The codes in use, ascending, and for every entry the place of its code among them."""
-    in_use = np.bincount(codes, minlength=n_codes) > 0
-    return np.flatnonzero(in_use), (np.cumsum(in_use) - 1)[codes]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -10,6 +11,7 @@ import pyarrow as pa
 from tieline.arrays import BoolArray
 from tieline.columns import SCREEN, VALUE_KEYS
 from tieline.correction import calibrated
+from tieline.narrowing import no_numbers
 from tieline.reading.input_file import InputFile
 from tieline.results import Remark, StageResult
 from tieline.screen.cations import cation_findings
@@ -22,13 +24,15 @@ from tieline.screen.overlap import Overlap, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
 from tieline.screen.rulings import read_rulings, ruling_findings
-from tieline.screen.session import Session, session_of
+from tieline.screen.session import Measured, Session, session_of
 from tieline.screen.totals import total_findings
-from tieline.screen.unmixing import UnmixedValues, no_unmixing, unmixed_values
-from tieline.screen.whole_analyses import WholeAnalyses, whole_analyses
+from tieline.screen.unmixing import UnmixedValues, unmixed_values
+from tieline.screen.whole_analyses import whole_analyses
 from tieline.screen.zoning import NO_ZONING, zoning_result
 from tieline.settings.screen import ScreenSettings
 from tieline.tables import build
+
+UNMIXED = ("unmixed_ppm", "unmixed_sigma_ppm", "unmixed_shared_ppm")
 
 
 def screen(
@@ -48,7 +52,7 @@ def screen(
     concentrations = calibrated(convert, calibrate, ingest_spots, convert_standards)
     session = session_of(convert, concentrations)
     ruled = ruling_findings(rulings, session)
-    results, unmixed = _tests(session, convert.num_rows, settings)
+    results, unmixed = _tests(session, settings)
     findings = (ruled, *(part for result in results for part in result.findings))
     if settings.imprecise.enabled:
         results.append(TestResult(remarks=tuple(reference_remarks(calibrate))))
@@ -60,9 +64,7 @@ def screen(
             "element": convert.column("element"),
             "use": resolution.use,
             "why": resolution.why(),
-            "unmixed_ppm": np.where(resolution.kept, np.nan, unmixed.value),
-            "unmixed_sigma_ppm": np.where(resolution.kept, np.nan, unmixed.sigma),
-            "unmixed_shared_ppm": np.where(resolution.kept, np.nan, unmixed.shared),
+            **_unmixed_columns(unmixed, resolution.kept),
         },
     )
     tables = {
@@ -79,6 +81,14 @@ def screen(
     return StageResult(tables, resolution.ledger(), remarks)
 
 
+def _unmixed_columns(unmixed: UnmixedValues | None, kept: BoolArray) -> dict[str, Any]:
+    """What stands for the measured values where overlap was taken out and no ruling keeps them."""
+    if unmixed is None:
+        return dict.fromkeys(UNMIXED, no_numbers(len(kept)))
+    values = (unmixed.value, unmixed.sigma, unmixed.shared)
+    return {name: np.where(kept, np.nan, value) for name, value in zip(UNMIXED, values, strict=True)}
+
+
 def _without_uncertainties(session: Session) -> list[Remark]:
     """Techniques of which no uncertainty was reported: what that keeps from being tested."""
     return [
@@ -91,22 +101,20 @@ def _without_uncertainties(session: Session) -> list[Remark]:
     ]
 
 
-def _tests(session: Session, n_rows: int, settings: ScreenSettings) -> tuple[list[TestResult], UnmixedValues]:
-    """Every enabled test on every technique, in document order; and what overlap was taken out."""
+def _tests(session: Session, settings: ScreenSettings) -> tuple[list[TestResult], UnmixedValues | None]:
+    """Every enabled test on every technique, in document order; and what overlap was taken out, if that was asked."""
     results: list[TestResult] = []
     overlaps: list[Overlap] = []
     for measured in session.techniques:
-        analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
-        before = _tests_of_compositions(session, analyses, settings)
+        before, whole = _tests_of_compositions(session, measured, settings)
         results += before
         if settings.overlap.enabled or settings.zoning.enabled:
-            whole = bool(analyses.complete.any())
             dropped = _dropped(session, before)
             overlaps.append(score_overlap(session, measured, whole, dropped, settings.overlap))
     scored = [part for overlap in overlaps for part in overlap.scored]
     # The overlap findings need to know what is zoned, though they come first.
     zoning = zoning_result(session, scored, settings.zoning) if settings.zoning.enabled else NO_ZONING
-    unmixed = no_unmixing(n_rows)
+    unmixed = None
     if settings.overlap.enabled:
         results += [overlap_result(session, each, settings.overlap, zoning.phases) for each in overlaps]
         if settings.overlap.use == "unmix":
@@ -124,9 +132,10 @@ def _tests(session: Session, n_rows: int, settings: ScreenSettings) -> tuple[lis
 
 
 def _tests_of_compositions(
-    session: Session, analyses: WholeAnalyses, settings: ScreenSettings
-) -> list[TestResult]:
-    """Tests of every spot by itself: total, cation sum, identity."""
+    session: Session, measured: Measured, settings: ScreenSettings
+) -> tuple[list[TestResult], bool]:
+    """Tests of every spot by itself: total, cation sum, identity; and whether there are whole analyses."""
+    analyses = whole_analyses(measured, settings.total.min_oxides, settings.total.incomplete_below)
     results = []
     if settings.total.enabled:
         results.append(total_findings(session, analyses, settings.total))
@@ -134,7 +143,7 @@ def _tests_of_compositions(
         results.append(cation_findings(session, analyses, settings.cations))
     if settings.identity.enabled:
         results.append(identity_findings(session, analyses, settings.identity))
-    return results
+    return results, bool(analyses.complete.any())
 
 
 def _dropped(session: Session, results: Iterable[TestResult]) -> BoolArray:

@@ -6,8 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from tieline.arrays import BoolArray, FloatArray, IntArray
+from tieline.arrays import BoolArray, FloatArray, IntArray, portions
 from tieline.chemistry.oxides import oxide_total, wt_percent_per_ppm
+from tieline.screen.padding import FEW_CELLS
 from tieline.screen.session import Measured
 
 # Preferred columns where an element is reported several times: total iron, then oxides, elements, isotopes.
@@ -55,16 +56,18 @@ def whole_analyses(measured: Measured, min_oxides: int, incomplete_below: float)
 def one_column_per_element(measured: Measured) -> tuple[tuple[str, ...], FloatArray, FloatArray]:
     """Elements in sorted order; values and sigmas (n, E) of the preferred column with a value in each spot."""
     elements = tuple(sorted(set(measured.elements)))
-    only_limit = measured.only_limit
-    values = np.where(only_limit, 0.5 * measured.limit, measured.value)
-    sigmas = np.where(only_limit, 0.5 * measured.limit, measured.sigma)
-    value = np.full((len(values), len(elements)), np.nan)
+    value = np.full((len(measured.value), len(elements)), np.nan)
     sigma = np.full_like(value, np.nan)
-    for column in _by_preference(measured):
-        position = elements.index(measured.elements[column])
-        wanted = ~np.isfinite(value[:, position])
-        value[wanted, position] = values[wanted, column]
-        sigma[wanted, position] = sigmas[wanted, column]
+    columns = [(column, elements.index(measured.elements[column])) for column in _by_preference(measured)]
+    for rows in portions(len(value), max(1, FEW_CELLS // max(1, len(elements)))):
+        part = measured.part(rows)
+        only_limit = part.only_limit
+        values = np.where(only_limit, 0.5 * part.limit, part.value)
+        sigmas = np.where(only_limit, 0.5 * part.limit, part.sigma)
+        for column, position in columns:
+            wanted = ~np.isfinite(value[rows, position])
+            value[rows, position] = np.where(wanted, values[:, column], value[rows, position])
+            sigma[rows, position] = np.where(wanted, sigmas[:, column], sigma[rows, position])
     return elements, value, sigma
 
 
