@@ -21,12 +21,20 @@ from tieline.arrays import (
     Labels,
     flags,
     group_table,
+    is_labelled,
     labels,
     numbers,
     spot_codes,
 )
 from tieline.columns import PAIR, PAIR_LIMITS
-from tieline.correction import SOURCE_KEYS, Concentrations, calibrated, sequence_of, standard_row
+from tieline.correction import (
+    SOURCE_KEYS,
+    STANDARD_KEYS,
+    Concentrations,
+    calibrated,
+    sequence_of,
+    standard_row,
+)
 from tieline.pairing import phase_pairs, technique_differences, with_parts
 from tieline.results import Ledger, StageResult
 from tieline.settings.results import PairSettings
@@ -58,10 +66,10 @@ def pair(
 ) -> StageResult:
     """Phase means with their variance and its parts, and the alpha/beta pairs that can be formed."""
     concentrations, shared = _unmixed(calibrated(convert, calibrate, ingest_spots, convert_standards), screen)
-    standard = standard_row(convert, convert_standards)
+    measured_phases = convert
     convert, wholes = with_parts(convert, settings)
     use = flags(screen, "use")
-    unknown = labels(convert, "experiment").codes >= 0
+    unknown = is_labelled(convert, "experiment")
     groups = group_table(convert, GROUP_COLUMNS, unknown)
     measured = use & unknown & np.isfinite(concentrations.value)
     limit_only = use & unknown & ~measured & np.isfinite(concentrations.limit)
@@ -71,7 +79,7 @@ def pair(
     )
     context = {
         "mean_sequence": _mean_sequence(convert, calibrate, ingest_spots, groups, used),
-        **_standard_columns(convert_standards, standard[groups.first]),
+        **_standard_columns(convert_standards, measured_phases, groups.first),
     }
     table = _pair_table(convert, concentrations, groups, used, means, context)
     pairs, remarks = phase_pairs(convert, measured | limit_only, settings, wholes)
@@ -158,8 +166,9 @@ def _mean_sequence(
     return total / np.where(count > 0, count, np.nan)
 
 
-def _standard_columns(standards: pa.Table, rows: IntArray) -> dict[str, Any]:
-    """What `convert.standards` says of the internal standard of every group; rows: -1 where none applies."""
+def _standard_columns(standards: pa.Table, convert: pa.Table, first: IntArray) -> dict[str, Any]:
+    """What `convert.standards` says of the internal standard of every group; first: a row of each in `convert`."""
+    rows = standard_row(convert.select(STANDARD_KEYS).take(pa.array(first)), standards)
 
     def number(name: str) -> FloatArray:
         values: FloatArray = np.append(numbers(standards, name), np.nan)[rows]
