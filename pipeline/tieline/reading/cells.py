@@ -74,12 +74,11 @@ def parse_cells(texts: pa.StringArray, style: CellStyle) -> Cells:
     thousands separator that was not announced, `inf`, a number above 1e12, more than 64 characters) is unreadable.
     """
     n = len(texts)
-    cells = Cells(np.full(n, np.nan), np.full(n, np.nan), np.zeros(n, np.int8), np.zeros(n, np.int8))
     numbers, is_number = _plain_numbers(texts, style.decimal)
-    cells.value[:] = numbers
-    rest = np.flatnonzero(~is_number)
-    if rest.size:
-        _read_rest(texts, rest, style, cells)
+    cells = Cells(np.array(numbers), np.full(n, np.nan), np.zeros(n, np.int8), np.zeros(n, np.int8))
+    if not is_number.all():
+        _read_rest(texts, np.flatnonzero(~is_number), style, cells)
+        _check_limits(cells)
     _check_numbers(texts, style, cells)
     return cells
 
@@ -95,7 +94,8 @@ def _plain_numbers(texts: pa.StringArray, decimal: str) -> tuple[Floats, Mask]:
         return np.full(n, np.nan), candidate
     if decimal == ",":
         data = COMMA_TO_POINT[data]
-    masked = _masked(offsets, data, candidate)
+    # A cell that cannot be cast takes a hundred times as long as one that can: none is tried that does not look it.
+    masked = texts if candidate.all() and decimal == "." else _masked(offsets, data, candidate)
     try:
         numbers = pc.cast(masked, pa.float64())
     except pa.ArrowInvalid:
@@ -181,18 +181,22 @@ def _fill_text(text: str, where: npt.NDArray[np.int64], style: CellStyle, cells:
         cells.state[where], cells.reason[where] = one.state, one.reason
 
 
+def _check_limits(cells: Cells) -> None:
+    """Refuses limits that are not positive, or that no concentration can reach."""
+    bad = ~(cells.limit >= SMALLEST) & ~np.isnan(cells.limit) | (cells.limit > LARGEST)
+    _refuse(cells, np.flatnonzero(bad), "limit not positive")
+
+
 def _check_numbers(texts: pa.StringArray, style: CellStyle, cells: Cells) -> None:
     """Refuses numbers no concentration can have, and applies what zero and numeric code words mean."""
-    with np.errstate(invalid="ignore"):
-        too_large = np.abs(cells.value) > LARGEST
-        too_small = (np.abs(cells.value) < SMALLEST) & (cells.value != 0)
-        bad_limit = ~(cells.limit >= SMALLEST) & ~np.isnan(cells.limit) | (cells.limit > LARGEST)
-    _refuse(cells, np.flatnonzero(too_large), "too large")
-    _refuse(cells, np.flatnonzero(too_small), "too small")
-    _refuse(cells, np.flatnonzero(bad_limit), "limit not positive")
-    zero = np.flatnonzero((cells.value == 0) & (cells.state == VALUE))
-    if zero.size:
-        _check_zeros(texts, zero, style, cells)
+    size = np.abs(cells.value)
+    if np.fmax.reduce(size, initial=0.0) > LARGEST:
+        _refuse(cells, np.flatnonzero(size > LARGEST), "too large")
+    if np.fmin.reduce(size, initial=LARGEST) < SMALLEST:
+        _refuse(cells, np.flatnonzero((size < SMALLEST) & (size != 0)), "too small")
+        zero = np.flatnonzero((cells.value == 0) & (cells.state == VALUE))
+        if zero.size:
+            _check_zeros(texts, zero, style, cells)
     for number, state in style.numeric_words.items():
         hit = (cells.value == number) & (cells.state == VALUE)
         cells.state[hit] = state
