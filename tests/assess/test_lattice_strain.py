@@ -4,8 +4,9 @@ import numpy as np
 import pytest
 
 from assess.frames import covariance, partition
-from tieline.assess.lattice_series import collect_series
-from tieline.assess.lattice_strain import fit_series, lattice_strain_tables
+from tieline.assess.lattice_fits import fit_series
+from tieline.assess.lattice_series import collect_series, pair_rows
+from tieline.assess.lattice_strain import lattice_strain_tables
 from tieline.chemistry.radii import ionic_radius
 from tieline.statistics.lattice_strain import Prior, lattice_strain
 
@@ -88,7 +89,7 @@ def test_a_prior_steps_in_and_is_named():
 
 def test_one_value_with_everything_held_gives_a_level_only_with_r0():
     table = partition([{"element": "Y", "D": 0.5}], alpha="clinopyroxene")
-    series = collect_series(table, {}, 3, 8)
+    series = collect_series(pair_rows(table)["A", "clinopyroxene", "glass"], {}, 3, 8)
     assert fit_series(series, 1573.15).fit.verdict == "cannot tell"
     held = fit_series(series, 1573.15, {"r0": Prior(1.02, 0.01)})
     assert held.fit.verdict == "fitted"

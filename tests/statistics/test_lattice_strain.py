@@ -8,10 +8,10 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from benchmarks.lattice_strain import CRYSTALS, EIGHTFOLD, curve_coverage, main, overlap_coverage
-from tieline.statistics.lattice_strain import Coefficients, Prior, fit_curve, lattice_strain
-from tieline.statistics.lattice_strain_overlap import compare_overlap
-from tieline.statistics.lattice_strain_prediction import leave_one_out, predict
-from tieline.statistics.lattice_strain_problem import Problem
+from tieline.statistics.lattice_strain import Coefficients, Prior, fit_curve, fit_curves, lattice_strain
+from tieline.statistics.lattice_strain_overlap import compare_overlap, compare_overlaps
+from tieline.statistics.lattice_strain_prediction import leave_one_out, predict, predictions
+from tieline.statistics.lattice_strain_stack import stack
 from tieline.statistics.least_squares import minimise
 
 T = 1573.15
@@ -53,7 +53,7 @@ def test_intervals_cover(kind, error):
 
 def test_overlap_intervals_cover():
     cases = 15
-    figures = overlap_coverage(CRYSTALS[1], 0.05, 0.005, cases, 6)
+    figures = overlap_coverage(CRYSTALS[1], 0.05, "independent", 0.005, cases, 6)
     lowest = 0.95 - 3.5 * np.sqrt(0.95 * 0.05 / cases)
     assert figures["f"] > lowest
     assert figures["corrected"] > lowest
@@ -63,6 +63,64 @@ def test_overlap_intervals_cover():
 def test_the_benchmark_runs(capsys):
     assert main(["--quick", "--cases", "2"]) == 0
     assert capsys.readouterr().out.count("clinopyroxene-like") == 5
+
+
+@given(st.integers(0, 10_000))
+@settings(max_examples=4, deadline=None)
+def test_series_side_by_side_give_what_they_give_alone(seed):
+    rng = np.random.default_rng(seed)
+    data, priors = [], []
+    for case in range(6):
+        kept = np.sort(rng.choice(11, rng.integers(5, 12), replace=False))
+        relative = 0.02 * 10.0 ** rng.uniform(size=len(kept))
+        D = lattice_strain(EIGHTFOLD[kept], T, 0.5, 1.02, 290.0) * (0.99 if case % 2 else 1.0) + 0.005
+        D = D * (1 + relative * rng.standard_normal(len(kept)))
+        limit = {"limit_radius": np.array([1.25]), "limit": np.array([0.05]), "limit_sd": np.array([0.01])}
+        data.append(
+            Coefficients(
+                EIGHTFOLD[kept], D, (relative * D) ** 2, np.full((len(kept),) * 2, 0.02**2),
+                dof=np.full(len(kept), 5.0 + case), **(limit if case == 2 else {}),
+            )
+        )  # fmt: skip
+        priors.append(
+            {"E": Prior(300.0, 30.0)} if case == 3 else {"r0": Prior(1.02, 0.0)} if case == 4 else {}
+        )
+    together = compare_overlaps(data, [T] * 6, priors=priors)
+    radius = np.array([1.126, 0.9])
+    curves = predictions([both.plain for both in together], [radius] * 6)
+    for both, one, known, curve in zip(together, data, priors, curves, strict=True):
+        alone = compare_overlap(one, T, priors=known)
+        assert (both.verdict, both.joint.verdict) == (alone.verdict, alone.joint.verdict)
+        assert both.p_value == pytest.approx(alone.p_value, rel=1e-4, abs=1e-6)
+        for pair in ((both.plain, alone.plain), (both.joint, alone.joint)):
+            for name in ("D0", "r0", "E", "overlap"):
+                first, second = (getattr(fit, name) for fit in pair)
+                assert first.status == second.status
+                ends = [(e.value, e.low, e.high) for e in (first, second)]
+                assert ends[0] == pytest.approx(ends[1], rel=5e-3, abs=1e-6, nan_ok=True)
+        np.testing.assert_allclose(both.corrected.high, alone.corrected.high, rtol=5e-3, atol=1e-6)
+        np.testing.assert_allclose(curve.low, predict(alone.plain, radius).low, rtol=5e-3)
+
+
+def test_nothing_to_fit():
+    assert fit_curves([], []) == []
+    assert compare_overlaps([], []) == []
+    assert predictions([], []) == []
+
+
+def test_values_that_are_nearly_all_floor_tell_the_floor_though_not_the_curve():
+    radius = CRYSTALS[2].radius
+    D = lattice_strain(radius, T, 0.15, 0.74, 360.0)
+    rng = np.random.default_rng(12)
+    open_curves = 0
+    for _ in range(8):
+        apparent = (D + 0.01 * (1 - D)) * (1 + 0.2 * rng.standard_normal(11))
+        both = compare_overlap(Coefficients(radius, apparent, (0.2 * (D + 0.01)) ** 2), T)
+        open_curves += both.joint.verdict == "cannot tell"
+        assert both.verdict == "overlap"
+        assert both.joint.overlap.low < both.joint.overlap.value < both.joint.overlap.high < 0.02
+        assert np.all(both.corrected.low <= both.corrected.high)
+    assert open_curves > 2
 
 
 def test_order_of_elements_is_irrelevant():
@@ -105,8 +163,7 @@ def test_jacobian_against_differences():
     data = replace(
         exact(fraction=0.01), limit_radius=np.array([1.2]), limit=np.array([0.05]), limit_sd=np.array([0.02])
     )
-    priors = (None, Prior(1.0, 0.05), Prior(250.0, 80.0), None)
-    problem = Problem(data, T, data.covariance_at(data.value), priors)
+    problem, _errors = stack([data], [T], [{"r0": Prior(1.0, 0.05), "E": Prior(250.0, 80.0)}])
     theta, step = np.array([[-0.8, 1.01, 5.6, 0.02]]), 1e-6
     _residuals, jacobian = problem.residuals(theta)
     for index in range(4):
@@ -220,7 +277,9 @@ def test_prediction_at_a_radius_is_the_profile_there():
     for end in (guess.low[0], guess.high[0]):
         problem = replace(fit.problem, reference=np.array([1.126]))
         start = np.array([[np.log(end), *fit.theta[1:]]])
-        best = minimise(problem.residuals, start, np.array([[False, True, True, False]]), *problem.bounds)
+        best = minimise(
+            problem.residuals, start, np.array([[False, True, True, False]]), problem.lower, problem.upper
+        )
         assert best.sum_of_squares[0] - fit.chi_square == pytest.approx(1.96**2, rel=0.01)
 
 

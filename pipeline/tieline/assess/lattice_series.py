@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from tieline.assess.evidence import PAIR_KEYS
 from tieline.chemistry.radii import ionic_radius, known_radii, usual_charges
 from tieline.statistics.lattice_strain import Coefficients
-from tieline.statistics.moderated_variance import moderated_variance
+from tieline.statistics.moderated_variance import moderate
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -65,8 +66,20 @@ def charge_of(element: str, charges: Mapping[str, int]) -> int | None:
     return usual[0] if usual else None
 
 
+Row = Mapping[str, Any]
+
+
+def pair_rows(partition: pd.DataFrame) -> dict[tuple[str, str, str], list[Row]]:
+    """(experiment, alpha, beta), in order -> rows of the partition table, with the columns that a series needs."""
+    columns = {name: partition[name].tolist() for name in (*PAIR_KEYS, *_NEEDED)}
+    pairs: dict[tuple[str, str, str], list[Row]] = {}
+    for experiment, alpha, beta, *values in zip(*columns.values(), strict=True):
+        pairs.setdefault((experiment, alpha, beta), []).append(dict(zip(_NEEDED, values, strict=True)))
+    return dict(sorted(pairs.items()))
+
+
 def collect_series(
-    partition: pd.DataFrame,
+    rows: Sequence[Row],
     covariances: Mapping[tuple[str, str], float],
     charge: int,
     coordination: int,
@@ -74,22 +87,20 @@ def collect_series(
     charges: Mapping[str, int] | None = None,
     leave_out: tuple[str, ...] = (),
 ) -> Series:
-    """Sort one pair's rows of the partition table into a series.
+    """Sort one pair's rows of the partition table into a series of one charge.
 
-    partition: rows of one experiment, alpha and beta, columns as in the stage file. covariances: (element, other) -> covariance
+    rows: those of one experiment, alpha and beta (`pair_rows`). covariances: (element, other) -> covariance
     of the two D. charges: element -> charge, for elements whose usual charge is not the one here; naming an element also
     lets it shape the curve where `OFF_THE_CURVE` would keep it off. leave_out: compared, not fitted.
 
-    The scatter of few spots is moderated over the elements of the series (`moderated_variance`). An upper limit D_hi enters
+    The scatter of few spots is moderated over the elements of the series (`moderate`). An upper limit D_hi enters
     as a value known to lie below L with a blur of L/3, L such that a true D = D_hi would be found below L in 2.5 % of
     cases (ours: the stage file keeps D_hi, not the limits of the spots).
     """
     given = charges or {}
     fitted, compared, missing, remarks = [], {}, {}, []
     limits: list[tuple[str, float, float]] = []
-    rows = [
-        row for row in partition[_NEEDED].to_dict("records") if charge_of(row["element"], given) == charge
-    ]
+    rows = [row for row in rows if charge_of(row["element"], given) == charge]
     for row in sorted(rows, key=lambda row: row["element"]):
         element = str(row["element"])
         radius = ionic_radius(element, charge, coordination)
@@ -138,19 +149,22 @@ def _coefficients(
             pair = covariances.get((first, second), covariances.get((second, first), 0.0))
             shared[one, two] = shared[two, one] = pair / (value[one] * value[two])
     trouble = []
-    few = np.isfinite(dof) & (dof > 0)
-    moderated = np.where(few, moderated_variance(spots, np.where(few, dof, np.inf)), 0.0)
-    relative = shared + np.diag(moderated)
+    # dof is that of the whole error, the other parts taken as known (Satterthwaite)
+    spot_dof = dof * (spots / total) ** 2
+    few = np.isfinite(spot_dof) & (spot_dof > 0)
+    moderated, moderated_dof = moderate(spots, np.where(few, spot_dof, np.inf))
+    relative = np.where(few, moderated, 0.0)
     variance = np.where(few, 0.0, spots * value**2)
-    whole = relative + np.diag(variance / value**2) if rows else relative
+    whole = shared + np.diag(relative + variance / value**2) if rows else shared
     if rows and np.linalg.eigvalsh(whole).min() <= 1e-9 * np.trace(whole) / len(rows):
         trouble.append("the covariances of the D contradict their errors and were left out")
-        relative = np.diag(np.diag(shared)) + np.diag(moderated)
+        shared = np.diag(np.diag(shared))
     limit = np.array([high for _element, _radius, high in limits]) / (1.0 + _NORMAL_975 / _LIMIT_OVER_SD)
     return (
         Coefficients(
-            np.array([float(row["radius"]) for row in rows]), value, variance, relative,
+            np.array([float(row["radius"]) for row in rows]), value, variance, shared,
             np.array([radius for _element, radius, _high in limits]), limit, limit / _LIMIT_OVER_SD,
+            relative_variance=relative, dof=np.where(few, moderated_dof, np.inf),
         ),
         trouble,
     )  # fmt: skip

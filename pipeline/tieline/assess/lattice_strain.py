@@ -20,28 +20,15 @@ from tieline.assess.evidence import (
     by_pair,
     check,
 )  # fmt: skip
-from tieline.assess.lattice_series import Series, charge_of, collect_series
+from tieline.assess.lattice_fits import CurveResult, fit_all_series
+from tieline.assess.lattice_series import Row, Series, charge_of, collect_series, pair_rows
 from tieline.chemistry.phases import all_phases
-from tieline.statistics.lattice_strain import FITTED, CurveFit, Prior, fit_curve
-from tieline.statistics.lattice_strain_overlap import OVERLAP_FOUND, OverlapComparison, compare_overlap
-from tieline.statistics.lattice_strain_prediction import leave_one_out, predict
+from tieline.statistics.lattice_strain import FITTED, Prior
+from tieline.statistics.lattice_strain_overlap import OVERLAP_FOUND
+from tieline.statistics.lattice_strain_prediction import Predicted, leave_one_out, predictions
 
 if TYPE_CHECKING:
     import pandas as pd
-
-# E = 1125 Z / (r0 + 1.38 Å)³ GPa, 1.38 Å the radius of oxygen (Wood & Blundy 2003, Treatise on Geochemistry 2.09; from
-# memory). Published fits lie within about 40 % of it (from memory).
-_ELASTIC_GPA, _OXYGEN_ANGSTROM, _ELASTIC_RELATIVE_SD = 1125.0, 1.38, 0.4
-
-
-@dataclass(frozen=True)
-class CurveResult:
-    """One series with its fit; `held` says which priors were needed, empty where the values sufficed."""
-
-    series: Series
-    fit: CurveFit
-    held: str
-    comparison: OverlapComparison
 
 
 @dataclass(frozen=True)
@@ -51,38 +38,6 @@ class LatticeTables:
     curves: pd.DataFrame
     elements: pd.DataFrame
     checks: pd.DataFrame
-
-
-def fit_series(
-    series: Series, temperature_K: float, priors: Mapping[str, Prior] | None = None, confidence: float = 0.95
-) -> CurveResult:
-    """Fit a series from its values alone where they suffice, else with what is known beforehand, and say so.
-
-    First no prior; then the given prior of E, or the elastic estimate for an ion as large as the mean of those measured;
-    then the given prior of r0 besides. The comparison with an overlap fraction uses the same priors; corrected D are made
-    where it finds overlap.
-    """
-    given = dict(priors or {})
-    steps: list[dict[str, Prior]] = [{}]
-    if len(series.data.radius):
-        size = given["r0"].value if "r0" in given else float(np.mean(series.data.radius))
-        elastic = _ELASTIC_GPA * series.charge / (size + _OXYGEN_ANGSTROM) ** 3
-        modulus = given.get("E", Prior(elastic, _ELASTIC_RELATIVE_SD * elastic))
-        steps.append({"E": modulus})
-        if "r0" in given:
-            steps.append({"E": modulus, "r0": given["r0"]})
-    for used in steps:
-        fit = fit_curve(series.data, temperature_K, priors=used, confidence=confidence)
-        if fit.verdict == FITTED:
-            break
-    else:
-        used = {}
-        fit = fit_curve(series.data, temperature_K, confidence=confidence)
-    held = "; ".join(f"{name} {prior.value:.4g} ± {prior.sd:.2g} beforehand" for name, prior in used.items())
-    comparison = compare_overlap(
-        series.data, temperature_K, plain=fit, priors=used, confidence=confidence, correct=False
-    )
-    return CurveResult(series, fit, held, comparison)
 
 
 def lattice_strain_tables(
@@ -106,41 +61,68 @@ def lattice_strain_tables(
     fit_charges: by default all. leave_out: phase -> elements. priors: (phase, charge) -> parameter -> prior, used only
     where the values do not suffice. without_each: tell what every element does to the curve. charges: see `collect_series`.
     """
-    import pandas as pd
-
-    curves: list[dict[str, Any]] = []
-    elements: list[dict[str, Any]] = []
-    checks: list[dict[str, Any]] = []
     variances = by_pair(covariance)
-    for (experiment, alpha, beta), group in partition.groupby(list(PAIR_KEYS), sort=True, observed=True):
-        pair = {"experiment": experiment, "alpha": alpha, "beta": beta}
-        site = _site(alpha, coordination or {})
-        temperature_K = temperatures_C.get(experiment, np.nan) + 273.15
-        wanted = [
-            charge for charge, count in _charges(group, charges or {}, fit_charges).items() if count > 1
-        ]
-        if wanted and (site is None or not temperature_K > 0):
+    found: list[dict[str, Any] | _Fitted] = []
+    for keys, rows in pair_rows(partition).items():
+        pair = dict(zip(PAIR_KEYS, keys, strict=True))
+        phase = base_phase(pair["alpha"])
+        site = _site(phase, coordination or {})
+        temperature_K = temperatures_C.get(pair["experiment"], np.nan) + 273.15
+        wanted = [charge for charge, count in _charges(rows, charges or {}, fit_charges).items() if count > 1]
+        if site is None or not temperature_K > 0:
             lacks = "the coordination of its site" if site is None else "the temperature of the experiment"
-            checks.append(_no_curves(pair, wanted, f"{lacks} is not known"))
+            found += [_no_curves(pair, wanted, f"{lacks} is not known")] if wanted else []
             continue
         few: dict[int, tuple[str, ...]] = {}
         for charge in wanted:
-            assert site is not None
-            known = (priors or {}).get((base_phase(alpha), charge))
+            known = (priors or {}).get((phase, charge))
             series = collect_series(
-                group, variances.get((experiment, alpha, beta), {}), charge, site,
-                charges=charges, leave_out=tuple((leave_out or {}).get(base_phase(alpha), ())),
+                rows, variances.get(keys, {}), charge, site,
+                charges=charges, leave_out=tuple((leave_out or {}).get(phase, ())),
             )  # fmt: skip
             if len(series.elements) < least_values and known is None:
                 few[charge] = series.elements
-                continue
-            result = fit_series(series, temperature_K, known, confidence)
-            curves.append(pair | curve_row(result, temperature_K))
-            elements.extend(pair | row for row in element_rows(result, without_each))
-            checks.extend(_checks(pair, result, confidence))
+            else:
+                found.append(_Fitted(pair, series, temperature_K, known or {}))
         if few:
             words = "; ".join(f"{charge}+ {', '.join(names) or 'none'}" for charge, names in few.items())
-            checks.append(_no_curves(pair, list(few), f"too few values to shape and test one ({words})"))
+            found.append(_no_curves(pair, list(few), f"too few values to shape and test one ({words})"))
+    return _tables(found, without_each, confidence)
+
+
+@dataclass(frozen=True)
+class _Fitted:
+    """A series that has a curve fitted to it."""
+
+    pair: Mapping[str, str]
+    series: Series
+    temperature_K: float  # noqa: N815 - a unit
+    priors: Mapping[str, Prior]
+
+
+def _tables(
+    found: Sequence[dict[str, Any] | _Fitted], without_each: bool, confidence: float
+) -> LatticeTables:
+    """The tables of all series, fitted side by side, and of the checks that say why there is no curve, in order."""
+    import pandas as pd
+
+    fitted = [one for one in found if isinstance(one, _Fitted)]
+    results = fit_all_series(
+        [one.series for one in fitted], [one.temperature_K for one in fitted], [one.priors for one in fitted], confidence
+    )  # fmt: skip
+    per_element = iter(element_rows(results, without_each))
+    curves: list[dict[str, Any]] = []
+    elements: list[dict[str, Any]] = []
+    checks: list[dict[str, Any]] = []
+    remaining = iter(results)
+    for one in found:
+        if isinstance(one, _Fitted):
+            result = next(remaining)
+            curves.append({**one.pair, **curve_row(result, one.temperature_K)})
+            elements.extend({**one.pair, **row} for row in next(per_element))
+            checks.extend(_checks(one.pair, result, confidence))
+        else:
+            checks.append(one)
     return LatticeTables(
         pd.DataFrame(curves, columns=[*PAIR_KEYS, *CURVE_COLUMNS]),
         pd.DataFrame(elements, columns=[*PAIR_KEYS, *ELEMENT_COLUMNS]),
@@ -165,16 +147,15 @@ ELEMENT_COLUMNS = (
 
 
 def _site(phase: str, given: Mapping[str, int]) -> int | None:
-    name = base_phase(phase)
-    facts = all_phases().get(name)
-    return given.get(name, facts.large_site if facts else None)
+    facts = all_phases().get(phase)
+    return given.get(phase, facts.large_site if facts else None)
 
 
 def _charges(
-    group: pd.DataFrame, given: Mapping[str, int], wanted: Sequence[int] | None = None
+    rows: Sequence[Row], given: Mapping[str, int], wanted: Sequence[int] | None = None
 ) -> dict[int, int]:
     """How many measured elements each wanted charge has, charges in order."""
-    found = [charge_of(element, given) for element in group["element"]]
+    found = [charge_of(element, given) for element in (row["element"] for row in rows)]
     every = sorted({one for one in found if one is not None and (wanted is None or one in wanted)})
     return {charge: found.count(charge) for charge in every}
 
@@ -208,17 +189,36 @@ def curve_row(result: CurveResult, temperature_K: float) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def element_rows(result: CurveResult, without_each: bool = True) -> list[dict[str, Any]]:
-    """The columns `ELEMENT_COLUMNS`: fitted, limits, compared, and elements of the charge that were not measured."""
-    series, fit, corrected = result.series, result.fit, result.comparison.corrected
+def element_rows(results: Sequence[CurveResult], without_each: bool = True) -> list[list[dict[str, Any]]]:
+    """The columns `ELEMENT_COLUMNS` of every fit: fitted, limits, compared, and elements of the charge not measured."""
+    roles = [_roles(result.series) for result in results]
+    guesses = predictions(
+        [result.fit for result in results], [np.array([radius for _e, radius, *_rest in every]) for every in roles]
+    )  # fmt: skip
+    return [
+        _element_rows(result, every, guess, without_each)
+        for result, every, guess in zip(results, roles, guesses, strict=True)
+    ]
+
+
+_Role = tuple[str, float, str, float, float]
+
+
+def _roles(series: Series) -> list[_Role]:
+    """Element, radius, role, D and its standard deviation."""
     sd = np.sqrt(np.diag(series.data.covariance_at(series.data.value)))
-    every = [
+    return [
         *zip(series.elements, series.data.radius, repeat("fitted"), series.data.value, sd, strict=False),
         *((e, r, "limit", np.nan, np.nan) for e, r in zip(series.limit_elements, series.data.limit_radius, strict=True)),
         *((e, r, "compared", d, d_sd) for e, (r, d, d_sd) in series.compared.items()),
         *((e, r, "predicted", np.nan, np.nan) for e, r in series.unmeasured.items()),
     ]  # fmt: skip
-    guess = predict(fit, np.array([radius for _element, radius, *_rest in every]))
+
+
+def _element_rows(
+    result: CurveResult, every: Sequence[_Role], guess: Predicted, without_each: bool
+) -> list[dict[str, Any]]:
+    series, fit, corrected = result.series, result.fit, result.comparison.corrected
     rows: list[dict[str, Any]] = []
     for index, (element, radius, role, measured, measured_sd) in enumerate(every):
         rows.append(
@@ -269,12 +269,10 @@ def _checks(pair: Mapping[str, Any], result: CurveResult, confidence: float) -> 
                 f"As many parameters as values. {words}",
             )
         else:
-            from scipy.special import chdtri
-
             numbers = {
                 "value": fit.chi_square / fit.dof,
                 "expected_lo": 0.0,
-                "expected_hi": float(chdtri(fit.dof, EXCESS)) / fit.dof,
+                "expected_hi": fit.excess,
             }
             verdict = DIFFERS if fit.p_value < EXCESS else CONSISTENT
             curve = check("lattice-strain", pair, f"{charge}+ curve", verdict, words, **numbers)

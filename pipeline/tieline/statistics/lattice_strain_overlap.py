@@ -2,19 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
-from scipy import special
 
-from tieline.statistics.lattice_strain import FITTED, CurveFit, fit_curve, free_parameters
-from tieline.statistics.lattice_strain_prediction import predict, rest_spreads
-from tieline.statistics.lattice_strain_problem import OVERLAP, Coefficients, Prior
+from tieline.statistics.lattice_strain import fit_curves
+from tieline.statistics.lattice_strain_few import Linear, f_tail, quantile
+from tieline.statistics.lattice_strain_outcome import CurveFit
+from tieline.statistics.lattice_strain_prediction import Fits, levels, without_each
+from tieline.statistics.lattice_strain_problem import MODULUS, OVERLAP, Coefficients, Prior
 from tieline.statistics.least_squares import FloatArray, ProfileSearch, minimise
 
 OVERLAP_FOUND, NO_OVERLAP, CANNOT_TELL = "overlap", "curve alone", "cannot tell"
-_EXCESS = 0.05
 
 
 @dataclass(frozen=True)
@@ -48,52 +48,95 @@ def compare_overlap(
     confidence: float = 0.95,
     correct: bool = True,
 ) -> OverlapComparison:
-    """Fit the curve with and without an overlap fraction f, D_app = D + f (1 - D), and compare the two.
+    """`compare_overlaps` of a single series."""
+    return compare_overlaps(
+        [data], [temperature_K], plain=None if plain is None else [plain], priors=[priors or {}],
+        confidence=confidence, correct=correct,
+    )[0]  # fmt: skip
 
-    plain: the fit without overlap by the same priors, where it has been made already. correct: give the corrected D even
+
+def compare_overlaps(
+    data: Sequence[Coefficients],
+    temperature_K: Sequence[float],
+    *,
+    plain: Sequence[CurveFit] | None = None,
+    priors: Sequence[Mapping[str, Prior]] | None = None,
+    confidence: float = 0.95,
+    correct: bool = True,
+) -> list[OverlapComparison]:
+    """Fit the curves with and without an overlap fraction f, D_app = D + f (1 - D), and compare the two, series by series.
+
+    plain: the fits without overlap by the same priors, where they have been made already. correct: give the corrected D even
     where no overlap is found, which takes longer than the fits.
 
     p_value: likelihood ratio of f = 0, a boundary, so half a point mass and half chi-square with one degree of freedom
     (Self & Liang 1987, J. Am. Stat. Assoc. 82:605); where the values scatter about the joint fit by more than their errors
-    (p < 0.05), the F distribution takes the place of chi-square. "cannot tell" where the joint fit is not determined: then
-    a curve and a floor look the same, and only the bound f <= smallest D_app remains.
+    (p < 0.05), or the errors are known from few values, the F distribution takes the place of chi-square. "cannot tell"
+    where `tells_overlap` is false.
     """
     if plain is None:
-        plain = fit_curve(data, temperature_K, priors=priors, confidence=confidence)
-    joint = fit_curve(data, temperature_K, overlap=True, priors=priors, confidence=confidence)
-    blank = np.full(len(data.value), np.nan)
-    if joint.verdict != FITTED or joint.problem is None:
-        reason = f"curve and overlap together: {joint.reason}"
-        return OverlapComparison(
-            plain, joint, np.nan, np.nan, CANNOT_TELL, reason, Corrected(blank, blank, blank)
-        )
-    improvement = _improvement(joint)
-    if joint.scale > 1:
-        p_value = 0.5 * float(special.fdtrc(1, joint.dof, improvement / joint.scale))
-    else:
-        p_value = 0.5 * float(special.chdtrc(1, improvement))
-    verdict = OVERLAP_FOUND if p_value < 1 - confidence else NO_OVERLAP
-    corrected = Corrected(blank, blank, blank)
-    if correct or verdict == OVERLAP_FOUND:
-        corrected = _corrected(data, joint)
-    return OverlapComparison(plain, joint, improvement, p_value, verdict, "", corrected)
+        plain = fit_curves(data, temperature_K, priors=priors, confidence=confidence)
+    joint = fit_curves(data, temperature_K, overlap=True, priors=priors, confidence=confidence)
+    told = [row for row, fit in enumerate(joint) if tells_overlap(fit)]
+    improvement, p_value = np.full(len(data), np.nan), np.full(len(data), np.nan)
+    if told:
+        improvement[told], p_value[told] = _tests([joint[row] for row in told])
+    found = p_value < 1 - confidence
+    wanted = [row for row in told if correct or found[row]]
+    corrected = dict(zip(wanted, _corrected([(data[row], joint[row]) for row in wanted]), strict=True))
+    comparisons = []
+    for row, fit in enumerate(joint):
+        blank = np.full(len(data[row].value), np.nan)
+        verdict, reason = (OVERLAP_FOUND if found[row] else NO_OVERLAP), ""
+        if np.isnan(p_value[row]):
+            verdict, reason = CANNOT_TELL, f"curve and overlap together: {fit.reason}"
+        comparisons.append(
+            OverlapComparison(
+                plain[row], fit, float(improvement[row]), float(p_value[row]), verdict, reason,
+                corrected.get(row, Corrected(blank, blank, blank)),
+            )
+        )  # fmt: skip
+    return comparisons
 
 
-def _improvement(joint: CurveFit) -> float:
-    """How much worse the values fit without overlap, at the joint fit's covariance."""
-    assert joint.problem is not None
-    start = np.tile(joint.theta, (3, 1))
-    start[:, OVERLAP] = 0.0
-    start[1, 0], start[2, 2] = start[1, 0] + 0.3, start[2, 2] - 0.7
-    free = free_parameters(joint)
-    free[OVERLAP] = False
-    start[:, ~free] = np.where(np.arange(4) == OVERLAP, 0.0, joint.theta)[~free]
-    without = minimise(joint.problem.residuals, start, np.tile(free, (3, 1)), *joint.problem.bounds)
-    residuals, _jacobian = joint.problem.residuals(joint.theta[None, :])
-    return max(float(without.sum_of_squares.min() - np.sum(residuals**2)), 0.0)
+def tells_overlap(joint: CurveFit) -> bool:
+    """Whether a joint fit determines f; if not, curve and floor look the same, and only the bound f <= smallest D_app remains.
+
+    The limits of f need none of r0: values that are nearly all floor tell f although they leave r0 open. A curve that is
+    flat, or so narrow that it passes through one value only, is none to tell a floor from.
+    """
+    if joint.problem is None or joint.overlap.status == "undetermined":
+        return False
+    lower, upper = joint.problem.lower[0, MODULUS], joint.problem.upper[0, MODULUS]
+    return not joint.free[MODULUS] or bool(lower + 1e-9 < joint.theta[MODULUS] < upper - 1e-9)
 
 
-def _corrected(data: Coefficients, joint: CurveFit) -> Corrected:
+def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray]:
+    """How much worse the values fit without overlap, at the joint fit's covariance, and how often that is chance, (fits,)."""
+    fits = Fits.of(joint)
+    problem, theta, free = fits.problem, fits.theta, fits.free
+    start = np.tile(theta[:, None, :], (1, 3, 1))
+    start[:, :, OVERLAP] = 0.0
+    start[:, 1, 0], start[:, 2, 2] = start[:, 1, 0] + 0.3, start[:, 2, 2] - 0.7
+    start = np.where(free[:, None, :] | (np.arange(4) == OVERLAP), start, theta[:, None, :])
+    held = free & (np.arange(4) != OVERLAP)
+    many = problem.take(np.repeat(np.arange(len(theta)), 3))
+    without = minimise(
+        many.residuals,
+        start.reshape(-1, 4),
+        np.repeat(held, 3, axis=0),
+        many.lower,
+        many.upper,
+        subset=many.subset,
+    )
+    lowest = without.sum_of_squares.reshape(-1, 3).min(axis=1)
+    improvement = np.maximum(lowest - np.sum(problem.residuals(theta)[0] ** 2, axis=1), 0.0)
+    factor, dof = Linear.of(problem, theta, fits.spread).few(np.tile(np.eye(4)[OVERLAP], (len(theta), 1)))
+    dof = np.where(fits.scale > 1, np.minimum(dof, fits.dof), dof)
+    return improvement, 0.5 * f_tail(np.ones(len(theta)), dof, improvement / (fits.scale * factor))
+
+
+def _corrected(cases: Sequence[tuple[Coefficients, CurveFit]]) -> list[Corrected]:
     """(D_app - f) / (1 - f) with f of the joint fit; its limits from those of D_app and of the f that the others give.
 
     The element's own value must not enter f and D_app at once: f is fitted again without it, and the limits of the two
@@ -101,41 +144,51 @@ def _corrected(data: Coefficients, joint: CurveFit) -> Corrected:
     is widened to hold that of the curve at the element's radius too (ours): where f is hardly told from a stiff site, the
     parts alone cover 90 %; the hull covers 98 to 99 % wherever it was measured. D >= 0.
     """
-    assert joint.problem is not None
-    value = (data.value - joint.overlap.value) / (1 - joint.overlap.value)
-    half = joint.quantile * np.sqrt(joint.scale * np.diag(joint.problem.covariance))
-    best, least, most = _overlap_of_the_others(joint)
-    centre = (data.value - best) / (1 - best)
-    ends = np.array([(data.value - fraction) / (1 - fraction) for fraction in (least, most)])
-    half = half / (1 - best)
-    low = centre - np.hypot(half, centre - ends.min(axis=0))
-    high = centre + np.hypot(half, ends.max(axis=0) - centre)
-    on_curve = predict(joint, data.radius)
-    low, high = np.minimum(low, on_curve.low), np.maximum(high, on_curve.high)
-    return Corrected(np.maximum(value, 0.0), np.maximum(low, 0.0), np.maximum(high, 0.0))
+    if not cases:
+        return []
+    fits = [joint for _data, joint in cases]
+    on_curve = levels(fits, [data.radius for data, _joint in cases])
+    limits = np.split(_overlap_of_the_others(fits), np.cumsum([len(fit.curve) for fit in fits])[:-1], axis=1)
+    found = []
+    for (data, joint), curve, (best, least, most) in zip(cases, on_curve, limits, strict=True):
+        value = (data.value - joint.overlap.value) / (1 - joint.overlap.value)
+        centre = (data.value - best) / (1 - best)
+        ends = np.array([(data.value - fraction) / (1 - fraction) for fraction in (least, most)])
+        half = _half_width(joint) / (1 - best)
+        low = centre - np.hypot(half, centre - ends.min(axis=0))
+        high = centre + np.hypot(half, ends.max(axis=0) - centre)
+        low, high = np.minimum(low, curve.low), np.maximum(high, curve.high)
+        found.append(Corrected(np.maximum(value, 0.0), np.maximum(low, 0.0), np.maximum(high, 0.0)))
+    return found
 
 
-def _overlap_of_the_others(joint: CurveFit) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """f and its limits from all values but one, (n,) each; 0 to 1 where they do not tell."""
+def _half_width(joint: CurveFit) -> FloatArray:
+    """Half the interval of each measured value, (n,)."""
     assert joint.problem is not None
-    count = len(joint.problem.data.value)
-    rest = replace(joint.problem, left_out=np.arange(count))
-    free = free_parameters(joint)
-    start = np.tile(joint.theta, (count, 1))
-    found = minimise(rest.residuals, start, np.tile(free, (count, 1)), *rest.bounds)
-    uncertain = rest_spreads(rest, found.theta, free)
-    told = np.array([one is not None for one in uncertain])
-    theta, cost = np.tile(found.theta, (2, 1)), np.tile(found.sum_of_squares, 2)
-    around = np.array([np.eye(4) if one is None else one for one in uncertain])
-    rest = replace(rest, left_out=np.tile(np.arange(count), 2))
+    count = len(joint.curve)
+    variance, own = joint.problem.sd[0, :count] ** 2, joint.problem.own_variance[0, :count]
+    dof = joint.problem.dof[0, :count] * (variance / np.maximum(own, 1e-300)) ** 2
+    if joint.scale > 1:
+        dof = np.minimum(dof, joint.dof)
+    return np.asarray(quantile(dof, joint.confidence) * np.sqrt(joint.scale * variance))
+
+
+def _overlap_of_the_others(joint: Sequence[CurveFit]) -> FloatArray:
+    """f and its limits from all values but one, (3, all values of all fits); 0 to 1 where they do not tell."""
+    fits = without_each(joint).fits
+    found = np.zeros((3, len(fits.theta)))
+    found[2] = fits.problem.upper[:, OVERLAP]
+    told = np.flatnonzero(~np.isnan(fits.spread[:, 0, 0]))
+    fits = fits.take(told)
+    rise = fits.cut(np.tile(np.eye(4)[OVERLAP], (len(told), 1)), joint[0].confidence)
+    cost = np.sum(fits.problem.residuals(fits.theta)[0] ** 2, axis=1)
+    both = np.tile(np.arange(len(told)), 2)
+    twice = fits.take(both)
     search = ProfileSearch(
-        rest.residuals, theta, cost, np.tile(around, (2, 1, 1)), joint.scale * joint.quantile**2,
-        np.full(2 * count, OVERLAP), np.repeat([-1.0, 1.0], count), free, *rest.bounds,
+        twice.problem.residuals, twice.theta, cost[both], twice.spread, rise[both], np.full(len(both), OVERLAP),
+        np.repeat([-1.0, 1.0], len(told)), twice.free, twice.problem.lower, twice.problem.upper,
+        subset=twice.problem.subset,
     )  # fmt: skip
     low, high = search.run().reshape(2, -1)
-    most = rest.bounds[1][OVERLAP]
-    return (
-        np.where(told, found.theta[:, OVERLAP], 0.0),
-        np.where(told, np.maximum(low, 0.0), 0.0),
-        np.where(told, np.minimum(high, most), most),
-    )
+    found[:, told] = fits.theta[:, OVERLAP], np.maximum(low, 0.0), np.minimum(high, found[2, told])
+    return found

@@ -1,17 +1,56 @@
 """What a fitted lattice-strain curve says of other radii, and what each value says of the curve.
 
-Public: `predict`, `leave_one_out`.
+Public: `predict`, `predictions` for many fits side by side, `leave_one_out`.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
-from tieline.statistics.lattice_strain import FITTED, CurveFit, different_radii, free_parameters
-from tieline.statistics.lattice_strain_problem import Coefficients, Problem, spreads
-from tieline.statistics.least_squares import BoolArray, FloatArray, ProfileSearch, minimise
+from tieline.statistics.lattice_strain_few import Linear, cut
+from tieline.statistics.lattice_strain_outcome import FITTED, CurveFit, different_radii
+from tieline.statistics.lattice_strain_problem import LEVEL, Coefficients, Problem
+from tieline.statistics.lattice_strain_stack import side_by_side
+from tieline.statistics.least_squares import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    ProfileSearch,
+    covariances,
+    minimise,
+)
+
+
+@dataclass(frozen=True)
+class Fits:
+    """Many fits as one problem: theta and free (fits, 4), spread (fits, 4, 4), scale and dof of the scatter (fits,)."""
+
+    problem: Problem
+    theta: FloatArray
+    spread: FloatArray
+    free: BoolArray
+    scale: FloatArray
+    dof: FloatArray
+
+    @classmethod
+    def of(cls, fits: Sequence[CurveFit]) -> Fits:
+        return cls(
+            side_by_side([fit.problem for fit in fits if fit.problem is not None]),
+            *(np.array([getattr(fit, name) for fit in fits]) for name in ("theta", "log_covariance", "free", "scale", "dof")),
+        )  # fmt: skip
+
+    def take(self, rows: IntArray) -> Fits:
+        return Fits(
+            self.problem.take(rows), self.theta[rows], self.spread[rows], self.free[rows], self.scale[rows], self.dof[rows]
+        )  # fmt: skip
+
+    def cut(self, direction: FloatArray, confidence: float) -> FloatArray:
+        """Rise of the sum of squares at the ends of the interval along `direction` (fits, 4)."""
+        linear = Linear.of(self.problem, self.theta, self.spread)
+        return cut(linear, direction, self.scale, self.dof, confidence)
 
 
 @dataclass(frozen=True)
@@ -25,39 +64,95 @@ class Predicted:
 
 
 def predict(fit: CurveFit, radius: FloatArray) -> Predicted:
-    """D at radii (Å) of the same charge and site, with the profile-likelihood interval at the fit's confidence.
+    """`predictions` of a single fit."""
+    return predictions([fit], [radius])[0]
+
+
+def predictions(fits: Sequence[CurveFit], radii: Sequence[FloatArray]) -> list[Predicted]:
+    """D at radii (Å) of the same charge and site, with the profile-likelihood interval at each fit's confidence.
 
     The interval is that of the curve: how far real elements lie off it is not included. sd to first order.
     """
-    radius = np.asarray(radius, dtype=np.float64)
-    if fit.verdict != FITTED or fit.problem is None or len(radius) == 0:
-        nothing = np.full(len(radius), np.nan)
-        return Predicted(nothing, nothing, nothing, nothing)
-    value, gradient = fit.problem.curve(fit.theta[None, :], radius)
-    free = free_parameters(fit)
-    relative = np.sqrt(
-        np.maximum(np.einsum("np,pq,nq->n", gradient[0], fit.log_covariance, gradient[0]), 0.0)
+    told = [fit.verdict == FITTED for fit in fits]
+    found = iter(
+        levels(
+            [fit for fit, known in zip(fits, told, strict=True) if known],
+            [radius for radius, known in zip(radii, told, strict=True) if known],
+        )
     )
-    if (
-        not free[0] or fit.problem.priors[0] is not None
-    ):  # D0 is held: its level cannot move to another radius
-        factor = np.exp(fit.quantile * np.sqrt(fit.scale) * relative)
-        return Predicted(value[0], value[0] * relative, value[0] / factor, value[0] * factor)
-    # the curve's level at each radius takes the place of D0: its profile is that of the predicted D
-    turn = np.tile(np.eye(4), (len(radius), 1, 1))
-    turn[:, 0, :] = gradient[0]
-    turned = turn @ fit.log_covariance @ turn.transpose(0, 2, 1)
-    origin = np.tile(fit.theta, (len(radius), 1))
-    origin[:, 0] = np.log(value[0])
-    side = np.repeat([-1.0, 1.0], len(radius))
-    problem = replace(fit.problem, reference=np.tile(radius, 2))
-    cost = float(np.sum(fit.problem.residuals(fit.theta[None, :])[0] ** 2))
+    return [
+        next(found) if known else Predicted(*np.full((4, len(radius)), np.nan))
+        for radius, known in zip(radii, told, strict=True)
+    ]
+
+
+def levels(fits: Sequence[CurveFit], radii: Sequence[FloatArray]) -> list[Predicted]:
+    """`predictions` of fits that came to rest, whether or not their parameters have limits."""
+    if not len(fits):
+        return []
+    sizes = [len(radius) for radius in radii]
+    whole = Fits.of(fits).take(np.repeat(np.arange(len(fits)), sizes))
+    numbers = _levels(whole, np.concatenate(radii), fits[0].confidence)
+    return [Predicted(*one) for one in np.split(numbers, np.cumsum(sizes)[:-1], axis=1)]
+
+
+def _levels(fits: Fits, radius: FloatArray, confidence: float) -> FloatArray:
+    """(4, k) value, sd, low and high of each curve at its radius."""
+    many, theta, spread, free = fits.problem, fits.theta, fits.spread, fits.free
+    value, gradient = many.curve(theta, radius[:, None])
+    value, gradient = value[:, 0], gradient[:, 0]
+    relative = np.sqrt(np.maximum(np.einsum("bp,bpq,bq->b", gradient, spread, gradient), 0.0))
+    rise = fits.cut(gradient, confidence)
+    factor = np.exp(np.sqrt(rise) * relative)
+    low, high = value / factor, value * factor
+    # D0 that is held cannot move its level to another radius; elsewhere the level there takes the place of D0, and its
+    # profile is that of the predicted D
+    moves = np.flatnonzero(free[:, LEVEL] & (many.prior_weight[:, LEVEL] == 0))
+    turn = np.tile(np.eye(4), (len(moves), 1, 1))
+    turn[:, LEVEL, :] = gradient[moves]
+    turned = turn @ spread[moves] @ turn.transpose(0, 2, 1)
+    origin = theta[moves].copy()
+    origin[:, LEVEL] = np.log(value[moves])
+    cost = np.sum(many.residuals(theta)[0] ** 2, axis=1)[moves]
+    both = np.tile(np.arange(len(moves)), 2)
+    levels = replace(many.take(moves[both]), reference=radius[moves[both]])
     search = ProfileSearch(
-        problem.residuals, np.tile(origin, (2, 1)), np.full(len(side), cost), np.tile(turned, (2, 1, 1)),
-        fit.scale * fit.quantile**2, np.zeros(len(side), dtype=np.int64), side, free, *problem.bounds,
+        levels.residuals, origin[both], cost[both], turned[both], rise[moves[both]], np.full(len(both), LEVEL),
+        np.repeat([-1.0, 1.0], len(moves)), free[moves[both]], levels.lower, levels.upper, subset=levels.subset,
     )  # fmt: skip
-    low, high = np.exp(search.run()).reshape(2, -1)
-    return Predicted(value[0], value[0] * relative, low, high)
+    low[moves], high[moves] = np.exp(search.run()).reshape(2, -1)
+    return np.array([value, value * relative, low, high])
+
+
+@dataclass(frozen=True)
+class Rest:
+    """Fits that each leave out one value of a series, fit after fit and value after value.
+
+    fits: the fits, one per value left out, with scale and dof of the whole series; spread is nan where too few values are
+    left. owner, index: (problems,) which fit, and which of its values is left out.
+    """
+
+    fits: Fits
+    owner: IntArray
+    index: IntArray
+
+
+def without_each(fits: Sequence[CurveFit]) -> Rest:
+    """Refit every series without each of its values in turn, from where the whole fit came to rest."""
+    sizes = [len(fit.curve) for fit in fits]
+    owner, index = np.repeat(np.arange(len(fits)), sizes), np.concatenate([np.arange(size) for size in sizes])
+    whole = Fits.of(fits).take(owner)
+    problem = whole.problem.without(index)
+    found = minimise(
+        problem.residuals, whole.theta, whole.free, problem.lower, problem.upper, subset=problem.subset
+    )
+    spread = covariances(problem.residuals(found.theta)[1], whole.free)
+    known = np.sum(problem.prior_weight > 0, axis=1)
+    for row, (fit, left_out) in enumerate(zip(owner, index, strict=True)):
+        left = np.delete(problem.radius[row, : sizes[fit]], left_out)
+        if different_radii(left) + known[row] < whole.free[row].sum():
+            spread[row] = np.nan
+    return Rest(replace(whole, problem=problem, theta=found.theta, spread=spread), owner, index)
 
 
 @dataclass(frozen=True)
@@ -73,34 +168,17 @@ class Influence:
 
 
 def leave_one_out(data: Coefficients, fit: CurveFit) -> Influence:
-    """Refit without each value in turn, from where the whole fit came to rest."""
+    """What each value does to the curve, from fits without it."""
     count = len(data.value)
-    shift, deleted = np.full((count, 3), np.nan), np.full(count, np.nan)
     if fit.verdict != FITTED or fit.problem is None:
-        return Influence(shift, deleted)
-    free = free_parameters(fit)
-    problem = replace(fit.problem, left_out=np.arange(count))
-    found = minimise(
-        problem.residuals, np.tile(fit.theta, (count, 1)), np.tile(free, (count, 1)), *problem.bounds
-    )
-    uncertain = rest_spreads(problem, found.theta, free)
-    value, gradient = problem.apparent(found.theta, data.radius)
+        return Influence(np.full((count, 3), np.nan), np.full(count, np.nan))
+    rest = without_each([fit]).fits
+    every = np.arange(count)
+    value, gradient = rest.problem.apparent(rest.theta, rest.problem.radius)
     sd = np.sqrt(np.diag(fit.log_covariance))[:3]
-    for index, own in enumerate(uncertain):
-        if own is not None:
-            moved = (found.theta[index] - fit.theta)[:3]
-            shift[index] = np.where(sd > 0, moved / np.where(sd > 0, sd, 1.0), 0.0)
-            slope = gradient[index, index]
-            variance = fit.problem.covariance[index, index] + slope @ own @ slope
-            deleted[index] = (data.value[index] - value[index, index]) / np.sqrt(variance)
-    return Influence(shift, deleted)
-
-
-def rest_spreads(problem: Problem, theta: FloatArray, free: BoolArray) -> list[FloatArray | None]:
-    """Covariances of fits that each leave out one value; None where the rest has too few different radii."""
-    known = sum(prior is not None for prior in problem.priors)
-    enough = [
-        different_radii(np.delete(problem.data.radius, index)) + known >= free.sum()
-        for index in range(len(problem.data.radius))
-    ]
-    return [one if kept else None for one, kept in zip(spreads(problem, theta, free), enough, strict=True)]
+    moved = (rest.theta - fit.theta)[:, :3]
+    told = ~np.isnan(rest.spread[:, 0, 0])
+    shift = np.where(told[:, None], np.where(sd > 0, moved / np.where(sd > 0, sd, 1.0), 0.0), np.nan)
+    slope = gradient[every, every]
+    variance = fit.problem.sd[0, :count] ** 2 + np.einsum("bp,bpq,bq->b", slope, rest.spread, slope)
+    return Influence(shift, (data.value - value[every, every]) / np.sqrt(variance))
