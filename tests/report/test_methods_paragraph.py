@@ -76,14 +76,14 @@ def test_tests_that_need_more_spots_are_not_claimed(tmp_path: Path):
 
 
 def test_zoning_is_told_with_what_it_was_judged_by_and_where(ember_source: Source):
-    assert "zoning with the distance from the rim (p < 0.01; in zoned crystals only rims" in paragraph(
+    assert "zoning with distance from the rim (p < 0.01; in zoned crystals only rims" in paragraph(
         ember_source
     )
     groups = ember_source.table("screen.groups").to_pylist()
     kept = [row for row in groups if row["test"] != "zoned" or row["experiment"] == "EM-02"]
     of_zoning = len([row for row in kept if row["test"] == "zoned"])
     text = paragraph(with_groups(ember_source, kept))
-    assert f"zoning with the distance from the rim, in {of_zoning} of 44 groups of crystal spots (p" in text
+    assert f"zoning with distance from the rim, in {of_zoning} of 44 groups of crystal spots (p" in text
 
 
 def test_what_could_not_be_tested_is_not_told(ember_source: Source):

@@ -185,7 +185,8 @@ def test_what_is_wrong_with_the_table_and_what_the_spots_do_not_know_is_told_tog
         (3, "verdict"), (4, "spot"), (5, "analyte"), (6, "date"), (6, "verdict"), (7, "analyst"), (7, "spot"),
         (9, "analyte"), (10, "spot"),
     ]  # fmt: skip
-    assert [problem.row for problem in error.value.problems if not problem.column] == [8]
+    (line,) = [problem for problem in error.value.problems if not problem.column]
+    assert (line.row, line.remedy) == (8, "Put a text that holds the separator in double quotes.")
     assert {problem.file for problem in error.value.problems} == {"rulings.csv"}
 
 

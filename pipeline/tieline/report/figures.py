@@ -1,4 +1,4 @@
-"""The pictures on their own, as vector files of journal width: D against radius, element by element, the budget.
+"""The pictures on their own, as vector files of journal width: D against radius, element by element, budget, evidence.
 
 Matplotlib, without a display. The same tables give the same bytes: no date, no random identifiers.
 """
@@ -7,30 +7,26 @@ from __future__ import annotations
 
 import io
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
+from functools import partial
 from typing import Any
 
 import numpy as np
 
+from tieline.report.evidence_figures import evidence_pictures
 from tieline.report.page_data import Curve, page_data
+from tieline.report.picture_style import (
+    COLOURS,
+    MM_PER_INCH,
+    ONE_COLUMN_MM,
+    SHAPES,
+    STYLE,
+    TWO_COLUMNS_MM,
+    plain,
+)
 from tieline.report.source import Source
 from tieline.report.spots import spot_use
 
-# One and two columns of most journals, in millimetres (common practice).
-ONE_COLUMN_MM, TWO_COLUMNS_MM = 90.0, 190.0
-MM_PER_INCH = 25.4
-# Colours that stay apart for colour-blind readers (after Okabe and Ito 2008, from memory), each with a shape of its own.
-COLOURS = ("#0072b2", "#d55e00", "#009e73", "#cc79a7", "#b07d00", "#56b4e9", "#666a00")
-SHAPES = ("o", "s", "^", "D", "v", "P", "X", "*")
-STYLE: dict[Any, Any] = {
-    "font.size": 8,
-    "font.family": "DejaVu Sans",
-    "axes.linewidth": 0.6,
-    "svg.hashsalt": "tieline",
-    "svg.fonttype": "none",
-    "pdf.fonttype": 42,
-    "figure.constrained_layout.use": True,
-}
 SHARES = ("share_counting", "share_spread", "share_calibration", "share_internal_standard")
 SHARE_NAMES = ("counting", "spread between spots", "calibration", "internal standard")
 HATCHES = ("", "////", "", "....")
@@ -39,9 +35,6 @@ HATCHES = ("", "////", "", "....")
 def figure_files(source: Source, curves: Sequence[Curve] = ()) -> Mapping[str, bytes]:
     """File name to content: every picture of every pair as SVG and PDF."""
     import matplotlib as mpl
-    from matplotlib.backends.backend_pdf import FigureCanvasPdf
-    from matplotlib.backends.backend_svg import FigureCanvasSVG
-    from matplotlib.figure import Figure
 
     data = page_data(source, spot_use(source.tables), curves)
     rows = source.table("classify").to_pylist()
@@ -50,15 +43,29 @@ def figure_files(source: Source, curves: Sequence[Curve] = ()) -> Mapping[str, b
         for pair in dict.fromkeys((row["alpha"], row["beta"]) for row in rows):
             own = [row for row in rows if (row["alpha"], row["beta"]) == pair]
             for name, draw, width, height in _PICTURES:
-                figure = Figure(figsize=(width / MM_PER_INCH, height / MM_PER_INCH))
-                draw(figure, own, data, pair)
-                stem = _new_stem(f"{name}_{_file_word(pair[0])}_{_file_word(pair[1])}", files)
-                for ending, canvas in (("svg", FigureCanvasSVG), ("pdf", FigureCanvasPdf)):
-                    stream = io.BytesIO()
-                    when = {"Date": None} if ending == "svg" else {"CreationDate": None}
-                    canvas(figure).print_figure(stream, format=ending, metadata=when)
-                    files[f"{stem}.{ending}"] = stream.getvalue()
+                drawing = partial(draw, rows=own, data=data, pair=pair)
+                _add(files, f"{name}_{_file_word(pair[0])}_{_file_word(pair[1])}", drawing, width, height)
+        for name, draw_evidence, width, height in evidence_pictures(source):
+            _add(files, "_".join(_file_word(part) for part in name.split("_")), draw_evidence, width, height)
     return files
+
+
+def _add(
+    files: dict[str, bytes], stem: str, draw: Callable[[Any], None], width_mm: float, height_mm: float
+) -> None:
+    """One picture as SVG and PDF, without date."""
+    from matplotlib.backends.backend_pdf import FigureCanvasPdf
+    from matplotlib.backends.backend_svg import FigureCanvasSVG
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=(width_mm / MM_PER_INCH, height_mm / MM_PER_INCH))
+    draw(figure)
+    stem = _new_stem(stem, files)
+    for ending, canvas in (("svg", FigureCanvasSVG), ("pdf", FigureCanvasPdf)):
+        stream = io.BytesIO()
+        when = {"Date": None} if ending == "svg" else {"CreationDate": None}
+        canvas(figure).print_figure(stream, format=ending, metadata=when)
+        files[f"{stem}.{ending}"] = stream.getvalue()
 
 
 def _new_stem(stem: str, files: Mapping[str, bytes]) -> str:
@@ -71,11 +78,6 @@ def _new_stem(stem: str, files: Mapping[str, bytes]) -> str:
 def _file_word(text: str) -> str:
     """A label as part of a file name that every system takes."""
     return re.sub(r"[^A-Za-z0-9]+", "-", text).strip("-") or "phase"
-
-
-def _plain(text: str) -> str:
-    """A label that the drawing library does not read as a formula."""
-    return text.replace("$", r"\$")
 
 
 def _radius(figure: Any, rows: Sequence[dict[str, Any]], data: dict[str, Any], pair: tuple[str, str]) -> None:
@@ -106,7 +108,7 @@ def _elements(
     for place, experiment in enumerate(experiments):
         own = [row for row in rows if row["experiment"] == experiment]
         shift = 0.0 if len(experiments) == 1 else (place / (len(experiments) - 1) - 0.5) * 0.6
-        _points(axes, [names.index(row["element"]) + shift for row in own], own, place, _plain(experiment))
+        _points(axes, [names.index(row["element"]) + shift for row in own], own, place, plain(experiment))
     axes.set_xticks(range(len(names)), names, fontsize=7)
     axes.axhline(data["compatibleAbove"], color="grey", linewidth=0.5)
     axes.axhline(data["highlyBelow"], color="grey", linewidth=0.5, linestyle="--")
@@ -144,7 +146,7 @@ def _points(axes: Any, x: Sequence[float], rows: Sequence[dict[str, Any]], place
 
 def _finish(axes: Any, pair: tuple[str, str], title: str | None) -> None:
     axes.set_yscale("log")
-    axes.set_ylabel(_plain(f"D {pair[0]}/{pair[1]}"))
+    axes.set_ylabel(plain(f"D {pair[0]}/{pair[1]}"))
     if axes.get_legend_handles_labels()[0]:
         axes.legend(title=title, fontsize=6.5, title_fontsize=7, frameon=False, ncols=2, handletextpad=0.3)
 
@@ -173,7 +175,7 @@ def _budget(figure: Any, rows: Sequence[dict[str, Any]], data: dict[str, Any], p
         )
         left = left + width
     axes.set_xticks(range(len(names)), names, fontsize=7)
-    axes.set_ylabel(_plain(f"share of the variance of D, {pair[0]}/{pair[1]}"), fontsize=7)
+    axes.set_ylabel(plain(f"share of the variance of D, {pair[0]}/{pair[1]}"), fontsize=7)
     axes.set_ylim(0, 1)
     if names:
         axes.legend(fontsize=6.5, frameon=False, ncols=4, loc="lower left", bbox_to_anchor=(0, 1.0))

@@ -28,7 +28,7 @@ HEADINGS = (
     Heading("analyte", "", "* : all the spot has; otherwise the analytes, or the column's header"),
     Heading("n_values", "1", "values left out"),
     Heading("why", "", "the tests, `ruling`, or `set-aside` for rows and cells set aside on reading"),
-    Heading("decided_by", "", "`test`, or who ruled"),
+    Heading("decided_by", "", "`test`, `reading` for what was set aside, or who ruled"),
     Heading("date", "", "date of the ruling"),
     Heading("statistic", "1", "the first test's statistic"),
     Heading("threshold", "1", "what it was held against"),

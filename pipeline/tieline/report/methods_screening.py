@@ -197,7 +197,7 @@ def _zoning(source: Source, spots: SpotUse) -> str:
     table = source.table("ingest.spots")
     by_distance = bool(np.isfinite(numbers(table, "distance_um")).any())
     by_zone = any(text is not None for text in spots.keys["zone"])
-    ways = (("with the distance from the rim", by_distance), ("between zones of the crystal", by_zone))
+    ways = (("with distance from the rim", by_distance), ("between zones of the crystal", by_zone))
     place = " and ".join(way for way, known in ways if known)
     crystals = {group for _, group in _unknowns(spots) if group[1] != settings.overlap.melt_phase}
     tested = {

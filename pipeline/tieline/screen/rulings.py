@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date
 
 import numpy as np
@@ -23,6 +23,7 @@ OPTIONAL = ("table",)
 NAMES = (*COLUMNS, *OPTIONAL)
 VERDICTS = ("keep", "drop")
 ALL_ANALYTES = "*"
+QUOTES = "Put a text that holds the separator in double quotes."
 IF_BLANK = {"analyte": "Write * for the whole spot."}
 
 
@@ -71,7 +72,7 @@ def _rulings_of(file: InputFile) -> tuple[list[Ruling], list[Problem]]:
         rows, problems = texts.rows.tolist(), []
     except InputError as error:
         # Missing columns and rows of another length are told; what is wrong elsewhere is told with them.
-        problems = list(error.problems)
+        problems = [_with_remedy(problem) for problem in error.problems]
         columns, rows = _readable(file)
     rulings = []
     for position, row in enumerate(rows):
@@ -84,6 +85,12 @@ def _rulings_of(file: InputFile) -> tuple[list[Ruling], list[Problem]]:
         table = record.pop("table", "") or None
         rulings.append(Ruling(**record, table=table, file=file.path, row=row))
     return rulings, sorted(problems, key=lambda problem: problem.row or 0)
+
+
+def _with_remedy(problem: Problem) -> Problem:
+    """A line of another length is mostly a reason with a comma in it."""
+    is_line = problem.row is not None and problem.column is None
+    return replace(problem, remedy=problem.remedy or QUOTES) if is_line else problem
 
 
 def _readable(file: InputFile) -> tuple[dict[str, list[str]], list[int]]:
@@ -185,8 +192,6 @@ def ruling_findings(
 
 def _with_table(ruling: Ruling, earlier: Ruling) -> Ruling:
     """The ruling as if it named its spot the way the earlier one does."""
-    from dataclasses import replace
-
     return replace(ruling, table=earlier.table)
 
 
