@@ -192,7 +192,8 @@ def test_pictures_are_vector_files_of_journal_width(ember_source: Source):
     one_pair = classify.filter(pc.equal(classify.column("alpha").cast("string"), "plagioclase"))
     source = replace(ember_source, tables={**ember_source.tables, "classify": one_pair})
     files = figure_files(source)
-    assert sorted(files) == [
+    own = [name for name in sorted(files) if not name.startswith(("D_against", "exchange", "mass_balance"))]
+    assert own == [
         f"{stem}_plagioclase_glass.{ending}"
         for stem in ("D_elements", "D_radius", "budget")
         for ending in ("pdf", "svg")

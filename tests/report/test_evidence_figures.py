@@ -1,0 +1,70 @@
+"""Pictures of the evidence: what they show, with axes and units, and nothing where there is nothing to show."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from matplotlib.figure import Figure
+
+from tieline.report.evidence_figures import evidence_pictures
+from tieline.report.source import Source
+
+
+def drawn(source: Source) -> dict[str, Figure]:
+    figures = {}
+    for name, draw, _width, _height in evidence_pictures(source):
+        figures[name] = Figure()
+        draw(figures[name])
+    return figures
+
+
+@pytest.fixture(scope="module")
+def pictures(ember_source: Source) -> dict[str, Figure]:
+    return drawn(ember_source)
+
+
+def test_every_line_of_evidence_has_its_picture(pictures):
+    assert {"exchange_Fe-Mg_glass", "mass_balance", "D_against_10^4/T_olivine_glass_1"} <= set(pictures)
+    for figure in pictures.values():
+        assert all(axes.get_xlabel() for axes in figure.axes)
+
+
+def test_exchange_is_drawn_with_its_windows(pictures, ember_source: Source):
+    (axes,) = pictures["exchange_Fe-Mg_glass"].axes
+    rows = [row for row in ember_source.table("assess.exchange").to_pylist() if row["alpha"] == "olivine"]
+    series = next(one for one in axes.containers if one.get_label() == "olivine")
+    np.testing.assert_allclose(sorted(series[0].get_ydata()), sorted(row["K_D"] for row in rows))
+    heights = {(round(one.get_y(), 6), round(one.get_y() + one.get_height(), 6)) for one in axes.patches}
+    assert (0.27, 0.33) in heights
+    assert "K_D(Fe–Mg)" in axes.get_ylabel()
+
+
+def test_mass_balance_shows_residuals_and_losses(pictures, ember_source: Source):
+    left, right = pictures["mass_balance"].axes
+    rows = ember_source.table("assess.balance").to_pylist()
+    shown = np.concatenate([line.get_xdata() for line in left.get_lines()])
+    np.testing.assert_allclose(sorted(shown), sorted(row["sigmas"] for row in rows if row["use"]))
+    assert [label.get_text() for label in right.get_yticklabels()] == ["Fe", "K", "Na"]
+    assert "%" in right.get_xlabel()
+
+
+def test_trends_have_points_and_their_line(pictures, ember_source: Source):
+    trends = {(row["alpha"], row["element"]): row for row in ember_source.table("assess.trends").to_pylist()}
+    (axes,) = pictures["D_against_10^4/T_olivine_glass_1"].axes
+    assert axes.get_xlabel() == "10⁴/T, 1/K"
+    assert axes.get_ylabel() == "D olivine/glass"
+    element = axes.containers[0].get_label()
+    line = next(one for one in axes.get_lines() if len(one.get_xdata()) == 2 and one.get_linestyle() == "-")
+    own = trends["olivine", element]
+    np.testing.assert_allclose(
+        np.log(line.get_ydata()), own["intercept"] + own["slope"] * np.asarray(line.get_xdata())
+    )
+
+
+def test_nothing_to_show_makes_no_picture(ember_source: Source):
+    emptied = {
+        name: table.slice(0, 0) for name, table in ember_source.tables.items() if name.startswith("assess.")
+    }
+    assert drawn(replace(ember_source, tables={**ember_source.tables, **emptied})) == {}
