@@ -17,6 +17,7 @@ from tieline.report.compact import coded, columns_of, finite, rounded
 from tieline.report.source import Source, optional_table
 from tieline.report.spots import SpotUse
 from tieline.report.sums import formula_sums
+from tieline.report.trend_data import trend_data
 
 # Digits in pictures and in the list of one spot's values; the D's keep all of theirs.
 VALUE_DIGITS, SIGMA_DIGITS = 5, 3
@@ -63,6 +64,7 @@ def page_data(source: Source, spots: SpotUse, curves: Sequence[Curve] = ()) -> d
         "tolerance": source.settings.calibrate.tolerance.relative,
         "checks": _checks(source),
         "curves": [_curve(curve) for curve in curves],
+        "trends": trend_data(source),
         "rulings": [
             [one.spot, one.analyte, one.verdict, one.analyst, one.date, one.reason, one.table]
             for one in source.rulings

@@ -9,7 +9,7 @@ const text = (column, at) => (column.c[at] < 0 ? null : column.t[column.c[at]]);
 const texts = (column) => column.c.map((code) => (code < 0 ? null : column.t[code]));
 
 /** What the reader has chosen; pictures are drawn again when it changes. */
-const chosen = { pair: "", experiment: "", element: "", tracer: "", spot: null };
+const chosen = { pair: "", experiment: "", element: "", tracer: "", condition: "", spot: null };
 const whenChosen = [];
 function choose(change) {
   Object.assign(chosen, change);

@@ -29,6 +29,9 @@ function fillPickers() {
   picker("pick-pair", PAIRS, "pair");
   picker("pick-experiment", EXPERIMENTS, "experiment", "all experiments");
   picker("pick-element", elements, "element");
+  const conditions = unique(DATA.trends.map((one) => one.condition));
+  if (!conditions.includes(chosen.condition)) chosen.condition = conditions[0] || "";
+  if (conditions.length) picker("pick-condition", conditions, "condition");
   picker("pick-tracer", tracers.length ? tracers : elements, "tracer");
 }
 

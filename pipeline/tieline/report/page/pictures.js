@@ -276,3 +276,19 @@ PICTURES.checks = () => {
     note: "Experiments from left to right within each check. Checks whose expectation is a single value, such as no loss, stand in the list only.",
   };
 };
+
+PICTURES.trend = () => {
+  const found = DATA.trends.find((one) => one.pair === chosen.pair && one.element === chosen.element && one.condition === chosen.condition);
+  const name = chosen.condition === "10^4/T" ? "10⁴/T, 1/K" : chosen.condition, marks = [], lines = [];
+  const label = `D of ${chosen.element} ${chosen.pair} against ${name}`;
+  if (found) {
+    found.x.forEach((x, at) => marks.push({ x, y: found.D[at], lo: found.lo[at], hi: found.hi[at], ...styleOf(EXPERIMENTS.indexOf(found.experiment[at])), faint: chosen.experiment && found.experiment[at] !== chosen.experiment, go: { experiment: found.experiment[at] }, label: `${found.experiment[at]}: D ${number(found.D[at])}, ${number(found.lo[at])} to ${number(found.hi[at])}, at ${number(x)}${found.sd[at] ? " ± " + number(found.sd[at], 2) : ""}` }));
+    if (found.line.length) lines.push({ points: [[Math.min(...found.x), found.line[0]], [Math.max(...found.x), found.line[1]]], class: "fit", label: "fitted line" });
+  }
+  const left = found && found.left ? ` ${many(found.left, "experiment")} left out: their D is a limit or undetermined.` : "";
+  return {
+    label, height: 340, marks, lines, x: axis(name, marks.map((mark) => mark.x)), y: axis(`D ${chosen.element} ${chosen.pair}`, marks.flatMap((mark) => [mark.y, mark.lo, mark.hi]), true),
+    legend: [...(found ? unique(found.experiment).map((one) => ({ ...styleOf(EXPERIMENTS.indexOf(one)), label: one })) : []), ...(lines.length ? [{ line: "fit", label: "fitted line" }] : [])],
+    note: found ? `Bars are one standard uncertainty.${found.p !== null ? ` Scatter about the line at least as large by chance: p ${number(found.p, 2)}.` : ""}${left}` : "Not enough experiments have a D of this element.",
+  };
+};
