@@ -54,7 +54,10 @@ def resolve_limits(
     affected = censored[sides[0]] | censored[sides[1]]
     if not affected.any():
         return interval, how
-    known = _means_with_limits(pair, limits, censored, settings)
+    wanted = np.zeros(pair.num_rows, dtype=np.bool_)
+    for side in sides:
+        wanted[side[affected]] = True
+    known = _means_with_limits(pair, limits, censored, wanted, settings)
     alpha, beta = (known.take(side[affected]) for side in sides)
     u = np.hypot(unshared[0][affected], unshared[1][affected])
     result = limits_ratio(alpha, beta, u_relative=u, confidence=settings.confidence)
@@ -73,15 +76,15 @@ def _made_by(
 
 
 def _means_with_limits(
-    pair: pa.Table, limits: pa.Table, censored: BoolArray, settings: PartitionSettings
+    pair: pa.Table, limits: pa.Table, censored: BoolArray, wanted: BoolArray, settings: PartitionSettings
 ) -> MeanLimits:
-    """Every row of `pair` as a mean with limits, from its likelihood or from its standard error."""
+    """The wanted rows of `pair` as means with limits, from their likelihood or from their standard error."""
     plain = mean_limits(
         MeanEstimate(
             numbers(pair, "mean_ppm"),
             numbers(pair, "se_ppm") ** 2,
             numbers(pair, "counting_se_ppm") ** 2,
-            np.nan_to_num(numbers(pair, "dof")),
+            np.where(wanted, np.nan_to_num(numbers(pair, "dof")), 0.0),
             np.asarray(numbers(pair, "n_independent"), dtype=np.int64),
         ),
         confidence=settings.confidence,

@@ -4,9 +4,9 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from scipy import optimize, stats
+from scipy import optimize, special, stats
 
-from tieline.statistics.censored import censored_limits
+from tieline.statistics.censored import _log_probability, censored_limits
 from tieline.statistics.limits import (
     BELOW_BOTH,
     BELOW_DENOMINATOR,
@@ -166,3 +166,8 @@ def test_limits_agree_with_the_published_expression(a, a_low, a_high, b, b_low, 
     high = a * b + np.sqrt((a * b) ** 2 - u_a * l_b * (2 * a - u_a) * (2 * b - l_b))
     assert result.low[0] == pytest.approx(low / (u_b * (2 * b - u_b)), rel=1e-5)
     assert result.high[0] == pytest.approx(high / (l_b * (2 * b - l_b)), rel=1e-5)
+
+
+def test_log_probability_is_that_of_the_normal_distribution_down_to_the_far_tail():
+    x = np.concatenate([np.linspace(-60.0, 10.0, 20_001), [-1e4, -20.0, np.nextafter(-20.0, -21.0), 40.0]])
+    np.testing.assert_allclose(_log_probability(x), special.log_ndtr(x), rtol=1e-13, atol=1e-15)

@@ -43,6 +43,7 @@ RELATIVE_SPREADS_ALL_BELOW = np.array([0.0, 0.3])
 _NEAR = np.linspace(0.0, 2.0, 33)
 _FAR = np.geomspace(2.0, 64.0, 16)[1:]
 _STEPS = 2.0**16
+_FAR_TAIL = -20.0
 # So many groups at a time stay in the processor's cache.
 _CHUNK_GROUPS = 2000
 
@@ -214,8 +215,17 @@ def _log_likelihood(groups: _Padded, level: FloatArray, spread: FloatArray | flo
     mu, measured, below = level[:, None], groups.measured, groups.below
     variance = measured.blank * growth + extra
     deviance = (measured.level - mu) ** 2 / variance + np.log(variance)
-    tail = special.log_ndtr((below.level - mu) / np.sqrt(below.blank * growth + extra))
+    tail = _log_probability((below.level - mu) / np.sqrt(below.blank * growth + extra))
     return _row_sums(tail, below.present) - 0.5 * _row_sums(deviance, measured.present)
+
+
+def _log_probability(x: FloatArray) -> FloatArray:
+    """log Φ(x) to 1e-13, in half the time of `special.log_ndtr`, which is left the far tail where Φ vanishes."""
+    far = x < _FAR_TAIL
+    log = np.log(special.ndtr(np.maximum(x, _FAR_TAIL)))
+    if far.any():
+        log[far] = special.log_ndtr(x[far])
+    return np.asarray(log, dtype=np.float64)
 
 
 def _row_sums(terms: FloatArray, present: FloatArray) -> FloatArray:

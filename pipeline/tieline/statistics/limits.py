@@ -56,7 +56,8 @@ def mean_limits(mean: MeanEstimate, *, confidence: float = 0.95) -> MeanLimits:
     """Limits of means without censored values: t limits, no narrower than counting allows, kept >= 0."""
     tail = 0.5 + 0.5 * confidence
     some = mean.dof > 0
-    t = special.stdtrit(np.where(some, mean.dof, 1.0), tail)
+    t = np.full(some.shape, np.nan)
+    t[some] = special.stdtrit(mean.dof[some], tail)
     reach = np.fmax(t * np.sqrt(mean.variance), special.ndtri(tail) * np.sqrt(mean.counting_variance))
     reach = np.where(some, reach, np.nan)
     return MeanLimits(
