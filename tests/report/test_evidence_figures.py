@@ -10,6 +10,7 @@ from matplotlib.figure import Figure
 
 from tieline.report.evidence_figures import evidence_pictures
 from tieline.report.source import Source
+from tieline.report.trend_data import trend_data
 
 
 def drawn(source: Source) -> dict[str, Figure]:
@@ -68,3 +69,15 @@ def test_nothing_to_show_makes_no_picture(ember_source: Source):
         name: table.slice(0, 0) for name, table in ember_source.tables.items() if name.startswith("assess.")
     }
     assert drawn(replace(ember_source, tables={**ember_source.tables, **emptied})) == {}
+
+
+def test_the_page_has_every_point_of_a_trend(ember_source: Source):
+    entries = trend_data(ember_source)
+    points = ember_source.table("assess.trend_points")
+    assert sum(len(one["x"]) for one in entries) == points.num_rows
+    nickel = next(one for one in entries if (one["pair"], one["element"]) == ("olivine/glass", "Ni"))
+    row = next(row for row in points.to_pylist() if (row["alpha"], row["element"]) == ("olivine", "Ni"))
+    assert nickel["experiment"][0] == row["experiment"]
+    assert nickel["D"][0] == pytest.approx(np.exp(row["ln_D"]), rel=1e-4)
+    assert nickel["hi"][0] == pytest.approx(np.exp(row["ln_D"] + row["ln_D_sd"]), rel=1e-2)
+    assert len(nickel["line"]) == 2

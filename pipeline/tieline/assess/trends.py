@@ -188,5 +188,6 @@ def _trend_check(
             "trend", pair, subject, CANNOT_TELL, f"Two points make any line. {words}", value=line.slope, sd=line.slope_se
         )  # fmt: skip
     verdict = DIFFERS if line.scale > 1 else CONSISTENT
-    words = f"MSWD {line.mswd:.3g}, p {line.p_value:.2g} that one line describes them. {words}"
+    more = "" if verdict == CONSISTENT else " Other conditions count too: no evidence against equilibrium."
+    words = f"MSWD {line.mswd:.3g}, p {line.p_value:.2g} that one line describes them.{more} {words}"
     return check("trend", pair, subject, verdict, words, value=line.slope, sd=line.slope_se)
