@@ -192,6 +192,21 @@ def test_one_question_is_told_as_one(capsys):
     assert "2 questions are left; each is a line" in shown
 
 
+@pytest.mark.parametrize(
+    ("headers", "technique", "asked"),
+    [
+        ("SiO2 [wt%],MgO [wt%],FeO [wt%],CaO [wt%]", "EPMA", False),
+        ("Ni (ppm),Li (ppb),Zr (ppm),Co (ppm)", "laser", True),
+        ("Ni,Li,Zr,Co", "EPMA", True),
+        ("Ni60 ppm,Li7 ppm,Zr90 ppm,Co59 ppm", "laser", False),
+    ],
+)
+def test_the_technique_is_asked_unless_the_columns_tell(headers: str, technique: str, asked: bool):
+    text = first_configuration([table(f"Point,Run,Phase,{headers}\na,X,ol,40,49,10,0.2\n")], "s")
+    assert tomllib.loads(text)["ingest"]["tables"][0]["technique"] == technique
+    assert any("which technique" in line for line in questions(text)) is asked
+
+
 def test_only_spots_are_counted():
     header = f"Point,Run,Mineral,{MAJORS}"
     rows = [

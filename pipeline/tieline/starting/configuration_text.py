@@ -12,7 +12,7 @@ from collections.abc import Sequence
 
 from tieline.reading.input_file import InputFile
 from tieline.starting.combined_labels import label_pattern
-from tieline.starting.look import Look, look_at, phases_of
+from tieline.starting.look import MANY_OXIDES, Look, look_at, phases_of
 
 QUESTION = "# decide:"
 OTHER_LABELS = (
@@ -56,12 +56,7 @@ def _table(look: Look) -> list[str]:
     kinds = "isotopes" if look.isotopes else "oxides and elements"
     seen = f"{_counted(look.n_spots, 'spot')}, {len(look.analytes)} analytes ({kinds}){_not_spots(look)}"
     lines = ["[[ingest.tables]]", f"path = {_text(look.file)}    # {seen}"]
-    if look.isotopes:
-        lines.append('technique = "laser"    # isotopes are reported')
-    else:
-        if look.unit != "wt%":
-            lines.append(f"{QUESTION} which technique measured this table?")
-        lines.append('technique = "EPMA"')
+    lines += _technique(look)
     if "batch" not in look.labels:
         lines += [f"{QUESTION} which measuring session? Spots of one batch share their calibration errors."]
         lines += [f"batch = {_text(look.file.rsplit('/', 1)[-1].split('.')[0])}"]
@@ -76,6 +71,18 @@ def _table(look: Look) -> list[str]:
             f"{QUESTION} are these elements: {names}? If so give the column a unit; else add to columns.ignore."
         )
     return lines
+
+
+def _technique(look: Look) -> list[str]:
+    """A laser reports isotopes, a probe oxides in wt%; anything else is asked, with the likelier answer."""
+    if look.isotopes:
+        return ['technique = "laser"    # isotopes are reported']
+    units = {analyte.unit or look.unit for analyte in look.analytes.values()}
+    n_oxides = sum(analyte.kind == "oxide" for analyte in look.analytes.values())
+    if units == {"wt%"} and n_oxides >= MANY_OXIDES:
+        return ['technique = "EPMA"']
+    guess = "laser" if units and units <= {"ppm", "ppb"} else "EPMA"
+    return [f"{QUESTION} which technique measured this table?", f"technique = {_text(guess)}"]
 
 
 def _not_spots(look: Look) -> str:

@@ -19,6 +19,7 @@ from tieline.reading.input_file import InputFile
 from tieline.starting.label_columns import kept, label_columns, rows_of_spots, spot_column
 
 WHOLE_TOTAL_WT = (90.0, 105.0)
+MANY_OXIDES = 4  # so many make a total
 MOST_EXAMPLES = 3
 
 
@@ -145,7 +146,7 @@ def _unit(grid: Grid, look: Look) -> tuple[str | None, str]:
     if not silent:
         return None, ""
     oxides = [index for index in silent if look.analytes[index].kind == "oxide"]
-    if len(oxides) < 4 or not grid.row_count:
+    if len(oxides) < MANY_OXIDES or not grid.row_count:
         return None, "?"
     style = CellStyle(decimal=grid.found.decimal, not_measured=("", "-", "n.d.", "bdl"))
     cells = [
