@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import shutil
 from pathlib import Path
@@ -58,6 +59,14 @@ def test_settings_and_classes_that_differ(root: Path):
     assert result["inputs"] == []
     classes = {(row["a"], row["b"]) for row in result["classes"]}
     assert ("incompatible", "highly incompatible") in classes
+
+
+def test_who_made_a_run_is_no_difference_of_the_reduction(root: Path):
+    one, other = (read_reduction(root / name / "ember") for name in ("a", "a"))
+    named = dataclasses.replace(
+        other, settings={**other.settings, "about": {"publisher": "A"}, "session": "x"}
+    )
+    assert compare(one, named)["settings"] == []
 
 
 def test_spots_name_the_rule_that_left_them_out(root: Path):

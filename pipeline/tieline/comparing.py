@@ -27,7 +27,7 @@ READ = {
     "screen.findings": ("table", "spot", "analyte", "code", "detail", "action"),
 }
 # What names a run and its places, and says nothing of how it was reduced.
-NAMES_AND_PLACES = ("session", "out", "report")
+NAMES_AND_PLACES = ("session", "out", "report", "about")
 LAST_DIGITS = 1e-9
 
 
