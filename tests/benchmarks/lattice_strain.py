@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tieline.statistics.lattice_strain import FITTED, Coefficients, fit_curves, lattice_strain
-from tieline.statistics.lattice_strain_overlap import compare_overlaps
+from tieline.statistics.lattice_strain_overlap import compare_overlaps, fit_both
 from tieline.statistics.lattice_strain_prediction import predictions
 from tieline.statistics.lattice_strain_stack import stack
 from tieline.statistics.least_squares import covariances
@@ -51,6 +51,7 @@ CRYSTALS = (
     Crystal("olivine-like", 1573.15, 0.15, 0.740, 360.0, SIXFOLD, "sixfold"),
 )
 ERRORS = (0.02, 0.20)
+FRACTIONS = (0.0, 0.0005, 0.002, 0.01)
 KINDS = ("independent", "proportional", "shared", "few spots")
 
 
@@ -138,7 +139,8 @@ def overlap_coverage(
     hits: Counter[str] = Counter()
     errors = [errors_of(rng, label, len(crystal.radius)) for _ in range(cases)]
     data = [simulate(rng, crystal, sd, kind, fraction) for sd in errors]
-    results = compare_overlaps(data, [crystal.temperature_K] * cases)
+    fits = fit_both(data, [crystal.temperature_K] * cases)
+    results = compare_overlaps(data, *fits, correct=bool(affected.any()))
     for result in results:
         if result.verdict == "cannot tell":
             continue
@@ -173,7 +175,21 @@ def power(crystal: Crystal, errors: list[FloatArray], fraction: float) -> float:
 
 
 def line(name: str, figures: dict[str, float]) -> str:
-    return f"{name:58s}" + "  ".join(f"{key} {value:.3f}" for key, value in figures.items())
+    return f"{name:66s}" + "  ".join(f"{key} {value:.3f}" for key, value in figures.items())
+
+
+def pooled(name: str, cells: list[dict[str, float]], figures: tuple[str, ...], cases: int) -> str:
+    """Mean over cells, with its standard error, and the ends; a cell of 0.95 has a standard error of its own."""
+    parts = []
+    for figure in figures:
+        values = np.array([cell[figure] for cell in cells if np.isfinite(cell[figure])])
+        if len(values):
+            error = np.sqrt(values.mean() * (1 - values.mean()) / (cases * len(values)))
+            parts.append(
+                f"{figure} {values.mean():.4f} ± {error:.4f} ({values.min():.3f} to {values.max():.3f})"
+            )
+    own = np.sqrt(0.95 * 0.05 / cases)
+    return f"{name}, {len(cells)} cells (s.e. of a cell {own:.3f}): " + "  ".join(parts)
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -186,22 +202,33 @@ def main(arguments: list[str] | None = None) -> int:
     seed = chosen.seed
     crystals = CRYSTALS[:1] if chosen.quick else CRYSTALS
     labels: tuple[float | str, ...] = ("2-20 %",) if chosen.quick else (*ERRORS, "2-20 %")
+    curves: dict[str, list[dict[str, float]]] = {}
     for crystal in crystals:
         for kind in KINDS:
             for label in labels:
                 seed += 1
                 figures = curve_coverage(crystal, label, kind, cases, seed)
+                group = "few spots" if kind == "few spots" else "known errors"
+                curves.setdefault(group, []).append(figures)
                 print(line(f"{crystal.name}, {kind}, error {label}", figures), flush=True)
+    overlaps: dict[str, list[dict[str, float]]] = {}
+    half = max(cases // 2, 1)
     for crystal in crystals:
         for kind in KINDS[:1] if chosen.quick else (KINDS[0], KINDS[-1]):
-            for fraction in (0.002,) if chosen.quick else (0.0005, 0.002, 0.01):
+            for fraction in (0.002,) if chosen.quick else FRACTIONS:
                 for label in labels:
                     seed += 1
-                    figures = overlap_coverage(crystal, label, kind, fraction, max(cases // 2, 1), seed)
+                    figures = overlap_coverage(crystal, label, kind, fraction, half, seed)
+                    group = f"{'no overlap' if fraction == 0 else 'overlap'}, {kind}"
+                    overlaps.setdefault(group, []).append(figures)
                     print(
                         line(f"{crystal.name}, overlap {fraction:.2%}, {kind}, error {label}", figures),
                         flush=True,
                     )
+    for group, cells in curves.items():
+        print(pooled(group, cells, ("told", "D0", "r0", "E", "predicted"), cases))
+    for group, cells in overlaps.items():
+        print(pooled(group, cells, ("told", "f", "found", "corrected"), half))
     return 0
 
 

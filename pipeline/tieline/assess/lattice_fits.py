@@ -8,8 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from tieline.assess.lattice_series import Series
-from tieline.statistics.lattice_strain import FITTED, CurveFit, Prior, fit_curves
-from tieline.statistics.lattice_strain_overlap import OverlapComparison, compare_overlaps
+from tieline.statistics.lattice_strain import FITTED, CurveFit, Prior
+from tieline.statistics.lattice_strain_overlap import OverlapComparison, compare_overlaps, fit_both
 
 # E = 1125 Z / (r0 + 1.38 Å)³ GPa, 1.38 Å the radius of oxygen (Wood & Blundy 2003, Treatise on Geochemistry 2.09; from
 # memory). Published fits lie within about 40 % of it (from memory).
@@ -48,25 +48,23 @@ def fit_all_series(
     data = [one.data for one in series]
     steps = [_steps(one, given) for one, given in zip(series, priors, strict=True)]
     used: list[Mapping[str, Prior]] = [{} for _ in series]
-    fits = fit_curves(data, temperature_K, confidence=confidence)
+    plain, joint = fit_both(data, temperature_K, confidence=confidence)
     for step in range(2):
-        rows = [row for row, fit in enumerate(fits) if fit.verdict != FITTED and len(steps[row]) > step]
-        again = fit_curves(
+        rows = [row for row, fit in enumerate(plain) if fit.verdict != FITTED and len(steps[row]) > step]
+        again = fit_both(
             [data[row] for row in rows], [temperature_K[row] for row in rows],
             priors=[steps[row][step] for row in rows], confidence=confidence,
         )  # fmt: skip
-        for row, fit in zip(rows, again, strict=True):
-            if fit.verdict == FITTED:
-                fits[row], used[row] = fit, steps[row][step]
-    comparisons = compare_overlaps(
-        data, temperature_K, plain=fits, priors=used, confidence=confidence, correct=False
-    )
+        for row, *fits in zip(rows, *again, strict=True):
+            if fits[0].verdict == FITTED:
+                (plain[row], joint[row]), used[row] = fits, steps[row][step]
+    comparisons = compare_overlaps(data, plain, joint, correct=False)
     return [
         CurveResult(
             one, fit, "; ".join(f"{name} {prior.value:.4g} ± {prior.sd:.2g} beforehand" for name, prior in known.items()),
             comparison,
         )
-        for one, fit, known, comparison in zip(series, fits, used, comparisons, strict=True)
+        for one, fit, known, comparison in zip(series, plain, used, comparisons, strict=True)
     ]  # fmt: skip
 
 

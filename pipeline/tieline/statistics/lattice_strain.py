@@ -76,20 +76,20 @@ def fit_curve(
     confidence: float = 0.95,
 ) -> CurveFit:
     """`fit_curves` of a single series."""
-    return fit_curves([data], [temperature_K], overlap=overlap, priors=[priors or {}], confidence=confidence)[
-        0
-    ]
+    return fit_curves(
+        [data], [temperature_K], overlap=[overlap], priors=[priors or {}], confidence=confidence
+    )[0]
 
 
 def fit_curves(
     data: Sequence[Coefficients],
     temperature_K: Sequence[float],
     *,
-    overlap: bool = False,
+    overlap: Sequence[bool] | None = None,
     priors: Sequence[Mapping[str, Prior]] | None = None,
     confidence: float = 0.95,
 ) -> list[CurveFit]:
-    """Weighted nonlinear least squares for D0, r0 and E, and for the overlap fraction f where asked for, of every series.
+    """Weighted nonlinear least squares for D0, r0 and E of every series, and for the overlap fraction f where `overlap`.
 
     The curve is `lattice_strain`; with overlap every measured D is D + f (1 - D), f >= 0. The values' full covariance is
     used; limits enter with the probability that a value lies below them. priors: one mapping per series, by name of
@@ -106,10 +106,10 @@ def fit_curves(
         raise ValueError(f"temperature {temperature_K} K or confidence {confidence} makes no sense")
     given = [dict(one) for one in priors] if priors is not None else [{} for _ in data]
     free, base = np.ones((len(data), 4), dtype=bool), np.tile([0.0, 1.0, np.log(200.0), 0.0], (len(data), 1))
-    free[:, OVERLAP] = overlap
+    free[:, OVERLAP] = overlap if overlap is not None else False
     for row, known in enumerate(given):
         _check_priors(known)
-        if not overlap and "overlap" in known and known["overlap"].sd > 0:
+        if not free[row, OVERLAP] and "overlap" in known and known["overlap"].sd > 0:
             del known["overlap"]
         for name, prior in known.items():
             index = PARAMETERS.index(name)

@@ -11,7 +11,7 @@ from tieline.statistics.lattice_strain import fit_curves
 from tieline.statistics.lattice_strain_few import Linear, f_tail, quantile
 from tieline.statistics.lattice_strain_outcome import CurveFit
 from tieline.statistics.lattice_strain_prediction import Fits, levels, without_each
-from tieline.statistics.lattice_strain_problem import MODULUS, OVERLAP, Coefficients, Prior
+from tieline.statistics.lattice_strain_problem import OVERLAP, Coefficients, Prior
 from tieline.statistics.least_squares import FloatArray, ProfileSearch, minimise
 
 OVERLAP_FOUND, NO_OVERLAP, CANNOT_TELL = "overlap", "curve alone", "cannot tell"
@@ -43,45 +43,52 @@ def compare_overlap(
     data: Coefficients,
     temperature_K: float,
     *,
-    plain: CurveFit | None = None,
     priors: Mapping[str, Prior] | None = None,
     confidence: float = 0.95,
     correct: bool = True,
 ) -> OverlapComparison:
-    """`compare_overlaps` of a single series."""
-    return compare_overlaps(
-        [data], [temperature_K], plain=None if plain is None else [plain], priors=[priors or {}],
-        confidence=confidence, correct=correct,
-    )[0]  # fmt: skip
+    """`compare_overlaps` of a single series, with both its fits."""
+    plain, joint = fit_both([data], [temperature_K], priors=[priors or {}], confidence=confidence)
+    return compare_overlaps([data], plain, joint, correct=correct)[0]
+
+
+def fit_both(
+    data: Sequence[Coefficients],
+    temperature_K: Sequence[float],
+    *,
+    priors: Sequence[Mapping[str, Prior]] | None = None,
+    confidence: float = 0.95,
+) -> tuple[list[CurveFit], list[CurveFit]]:
+    """The curves of every series without and with an overlap fraction f, D_app = D + f (1 - D)."""
+    count = len(data)
+    fits = fit_curves(
+        [*data, *data], [*temperature_K, *temperature_K], overlap=[False] * count + [True] * count,
+        priors=None if priors is None else [*priors, *priors], confidence=confidence,
+    )  # fmt: skip
+    return fits[:count], fits[count:]
 
 
 def compare_overlaps(
     data: Sequence[Coefficients],
-    temperature_K: Sequence[float],
+    plain: Sequence[CurveFit],
+    joint: Sequence[CurveFit],
     *,
-    plain: Sequence[CurveFit] | None = None,
-    priors: Sequence[Mapping[str, Prior]] | None = None,
-    confidence: float = 0.95,
     correct: bool = True,
 ) -> list[OverlapComparison]:
-    """Fit the curves with and without an overlap fraction f, D_app = D + f (1 - D), and compare the two, series by series.
+    """Compare the fits of `fit_both`, series by series; all by the same confidence.
 
-    plain: the fits without overlap by the same priors, where they have been made already. correct: give the corrected D even
-    where no overlap is found, which takes longer than the fits.
+    correct: give the corrected D even where no overlap is found, which takes longer than the fits.
 
     p_value: likelihood ratio of f = 0, a boundary, so half a point mass and half chi-square with one degree of freedom
     (Self & Liang 1987, J. Am. Stat. Assoc. 82:605); where the values scatter about the joint fit by more than their errors
     (p < 0.05), or the errors are known from few values, the F distribution takes the place of chi-square. "cannot tell"
     where `tells_overlap` is false.
     """
-    if plain is None:
-        plain = fit_curves(data, temperature_K, priors=priors, confidence=confidence)
-    joint = fit_curves(data, temperature_K, overlap=True, priors=priors, confidence=confidence)
     told = [row for row, fit in enumerate(joint) if tells_overlap(fit)]
     improvement, p_value = np.full(len(data), np.nan), np.full(len(data), np.nan)
     if told:
         improvement[told], p_value[told] = _tests([joint[row] for row in told])
-    found = p_value < 1 - confidence
+    found = p_value < 1 - np.array([fit.confidence for fit in joint])
     wanted = [row for row in told if correct or found[row]]
     corrected = dict(zip(wanted, _corrected([(data[row], joint[row]) for row in wanted]), strict=True))
     comparisons = []
@@ -102,13 +109,12 @@ def compare_overlaps(
 def tells_overlap(joint: CurveFit) -> bool:
     """Whether a joint fit determines f; if not, curve and floor look the same, and only the bound f <= smallest D_app remains.
 
-    The limits of f need none of r0: values that are nearly all floor tell f although they leave r0 open. A curve that is
-    flat, or so narrow that it passes through one value only, is none to tell a floor from.
+    The limits of f need none of r0: values that are nearly all floor tell f although they leave r0 open. They need those of E:
+    from a curve that may be flat, or so narrow that it passes through one value only, no floor can be told.
     """
     if joint.problem is None or joint.overlap.status == "undetermined":
         return False
-    lower, upper = joint.problem.lower[0, MODULUS], joint.problem.upper[0, MODULUS]
-    return not joint.free[MODULUS] or bool(lower + 1e-9 < joint.theta[MODULUS] < upper - 1e-9)
+    return joint.E.status == "fixed" or (joint.E.low > 0 and bool(np.isfinite(joint.E.high)))
 
 
 def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray]:

@@ -103,11 +103,12 @@ def _levels(fits: Fits, radius: FloatArray, confidence: float) -> FloatArray:
     value, gradient = value[:, 0], gradient[:, 0]
     relative = np.sqrt(np.maximum(np.einsum("bp,bpq,bq->b", gradient, spread, gradient), 0.0))
     rise = fits.cut(gradient, confidence)
-    factor = np.exp(np.sqrt(rise) * relative)
-    low, high = value / factor, value * factor
     # D0 that is held cannot move its level to another radius; elsewhere the level there takes the place of D0, and its
     # profile is that of the predicted D
-    moves = np.flatnonzero(free[:, LEVEL] & (many.prior_weight[:, LEVEL] == 0))
+    movable = free[:, LEVEL] & (many.prior_weight[:, LEVEL] == 0)
+    factor = np.exp(np.where(movable, 0.0, np.sqrt(rise) * relative))
+    low, high = value / factor, value * factor
+    moves = np.flatnonzero(movable)
     turn = np.tile(np.eye(4), (len(moves), 1, 1))
     turn[:, LEVEL, :] = gradient[moves]
     turned = turn @ spread[moves] @ turn.transpose(0, 2, 1)

@@ -14,7 +14,7 @@ from tieline.statistics.lattice_strain_problem import (
     strain_energy,
 )
 from tieline.statistics.lattice_strain_stack import Errors
-from tieline.statistics.least_squares import BoolArray, FloatArray, Minimum, minimise
+from tieline.statistics.least_squares import BoolArray, FloatArray, IntArray, Minimum, minimise
 
 # Errors proportional to D are taken at the curve, but where that is off by more than this factor, at this factor from the
 # value: a curve that falls to nothing would otherwise leave no error at all.
@@ -22,6 +22,8 @@ _FARTHEST = 100.0
 _COVARIANCE_ROUNDS = 4
 # Starts that lead after this many steps are carried to the end.
 _FIRST_STEPS, _LEADING = 10, 3
+# More steps only creep along valleys where the values tell nothing: the limits are found from anywhere in them.
+_ITERATIONS = 100
 _RADII, _FRACTIONS = 9, np.array([0.03, 0.4, 0.95])
 
 
@@ -30,16 +32,12 @@ def solve(problem: Problem, errors: Errors, free: BoolArray, base: FloatArray) -
 
     free, base: (problems, 4), which parameters are fitted, and the values of those that are not.
     """
-    count = len(free)
-    starts = _starts(problem, free, base)
-    number = starts.shape[1]
-    first = _run(problem, starts, free, _FIRST_STEPS)
-    order = np.argsort(first.sum_of_squares.reshape(count, number), axis=1, kind="stable")[:, :_LEADING]
-    leading = np.take_along_axis(first.theta.reshape(count, number, 4), order[:, :, None], axis=1)
-    second = _run(problem, leading, free)
-    best = np.argmin(second.sum_of_squares.reshape(count, -1), axis=1)
-    every = np.arange(count)
-    theta = second.theta.reshape(count, -1, 4)[every, best]
+    starts, owner = _starts(problem, free, base)
+    first = _run(problem, starts, owner, free, _FIRST_STEPS)
+    leading = _rank(first.sum_of_squares, owner) < _LEADING
+    owner = owner[leading]
+    second = _run(problem, first.theta[leading], owner, free)
+    theta = second.theta[_rank(second.sum_of_squares, owner) == 0]
     measured = np.maximum(problem.value, 0.0)
     curve, rows = measured.copy(), np.flatnonzero(errors.relative)
     for _ in range(_COVARIANCE_ROUNDS - 1):
@@ -52,27 +50,33 @@ def solve(problem: Problem, errors: Errors, free: BoolArray, base: FloatArray) -
             break
         curve[rows] = model[moved]
         problem = problem.with_errors(rows, *errors.take(rows).at(curve[rows]))
-        theta[rows] = _run(problem.take(rows), theta[rows][:, None, :], free[rows]).theta
+        theta[rows] = _run(problem, theta[rows], rows, free).theta
     return problem, theta
 
 
-def _run(problem: Problem, starts: FloatArray, free: BoolArray, iterations: int = 300) -> Minimum:
-    """Minima from starts (problems, number, 4), problem by problem."""
-    rows = np.repeat(np.arange(len(starts)), starts.shape[1])
-    many = problem.take(rows)
+def _run(
+    problem: Problem, starts: FloatArray, owner: IntArray, free: BoolArray, iterations: int = _ITERATIONS
+) -> Minimum:
+    """Minima from starts (number, 4) of the problems `owner` (number,)."""
+    many = problem.take(owner)
     return minimise(
-        many.residuals,
-        starts.reshape(-1, 4),
-        free[rows],
-        many.lower,
-        many.upper,
-        iterations,
-        subset=many.subset,
+        many.residuals, starts, free[owner], many.lower, many.upper, iterations, subset=many.subset
     )
 
 
-def _starts(problem: Problem, free: BoolArray, base: FloatArray) -> FloatArray:
-    """(problems, number, 4): for several r0 and f, ln D0 and E by straight-line least squares, for ln D is linear in them."""
+def _rank(cost: FloatArray, owner: IntArray) -> IntArray:
+    """(number,) the place of each start among those of its problem, 0 the best; owner must be sorted."""
+    order = np.lexsort((cost, owner))
+    place = np.empty_like(order)
+    place[order] = np.arange(len(order)) - np.searchsorted(owner, owner)
+    return place
+
+
+def _starts(problem: Problem, free: BoolArray, base: FloatArray) -> tuple[FloatArray, IntArray]:
+    """Starts (number, 4) and whose they are: for several r0 and f, ln D0 and E by straight-line least squares.
+
+    ln D of the curve is linear in ln D0 and E.
+    """
     known = problem.whitening.any(axis=2)
     limited = np.isfinite(problem.limit)
     used = np.concatenate([known, limited], axis=1)
@@ -85,9 +89,7 @@ def _starts(problem: Problem, free: BoolArray, base: FloatArray) -> FloatArray:
     r0s = np.linspace(least - margin, most + margin, _RADII, axis=1)
     r0s = np.where(free[:, [RADIUS]], r0s, base[:, [RADIUS]])
     lowest = np.maximum(np.where(used, values, np.inf).min(axis=1), 1e-6)
-    fitted = free[:, OVERLAP]
-    fractions = np.where(fitted[:, None], lowest[:, None] * _FRACTIONS, base[:, [OVERLAP]])
-    fractions = fractions if fitted.any() else fractions[:, :1]
+    fractions = np.where(free[:, [OVERLAP]], lowest[:, None] * _FRACTIONS, base[:, [OVERLAP]])
     r0, fraction = r0s[:, :, None, None], fractions[:, None, :, None]  # (problems, r0, f, values)
     strain = (
         STRAIN_FACTOR
@@ -112,4 +114,7 @@ def _starts(problem: Problem, free: BoolArray, base: FloatArray) -> FloatArray:
     start[..., LEVEL] = np.where(
         held[..., LEVEL], base[:, None, None, LEVEL], level + np.exp(start[..., MODULUS]) * centre
     )
-    return start.reshape(len(free), -1, 4)
+    # one r0, or one f, is enough where it is held
+    wanted = (free[:, [RADIUS]] | (np.arange(_RADII) == 0))[:, :, None]
+    wanted = wanted & (free[:, [OVERLAP]] | (np.arange(len(_FRACTIONS)) == 0))[:, None, :]
+    return start[wanted], np.nonzero(wanted)[0]

@@ -101,13 +101,12 @@ def _advance(residuals: Residuals, walk: _Walk, tolerance: float) -> BoolArray:
     theta, cost, damping = walk.theta, walk.cost, walk.damping
     gradient = (walk.residual[:, None, :] @ walk.jacobian)[:, 0, :]
     moving = walk.free & ~((theta <= walk.lower) & (gradient > 0)) & ~((theta >= walk.upper) & (gradient < 0))
-    step = _damped_step(walk.jacobian, gradient, moving, damping)
+    step, expected = _damped_step(walk.jacobian, gradient, moving, damping)
     trial = np.where(walk.free, np.minimum(np.maximum(theta + step, walk.lower), walk.upper), theta)
     trial_r, trial_jacobian = residuals(trial)
     trial_cost = np.sum(trial_r**2, axis=1)
     better = trial_cost <= cost
-    expected = -2.0 * np.sum(step * gradient, axis=1) + 1e-300
-    gain = np.clip((cost - trial_cost) / expected, -1.0, 1.0)
+    gain = np.clip((cost - trial_cost) / (expected + 1e-300), -1.0, 1.0)
     small = (np.abs(trial - theta) <= 1e-10 * (np.abs(theta) + 1e-4)).all(axis=1)
     settled = better & (cost - trial_cost <= tolerance * (1.0 + cost)) & (damping <= 1.0)
     walk.theta = np.where(better[:, None], trial, theta)
@@ -122,7 +121,8 @@ def _advance(residuals: Residuals, walk: _Walk, tolerance: float) -> BoolArray:
 
 def _damped_step(
     jacobian: FloatArray, gradient: FloatArray, moving: BoolArray, damping: FloatArray
-) -> FloatArray:
+) -> tuple[FloatArray, FloatArray]:
+    """The step (problems, parameters), and by how much the sum of squares would fall if the residuals were straight."""
     held = jacobian * moving[:, None, :]
     normal = held.transpose(0, 2, 1) @ held
     diagonal = np.einsum("bpp->bp", normal)
@@ -133,7 +133,8 @@ def _damped_step(
     place = np.arange(gradient.shape[1])
     scaled[:, place, place] += np.where(moving, damping[:, None] + 1e-14, 1.0)
     step: FloatArray = np.linalg.solve(scaled, (-gradient * moving / root)[:, :, None])[:, :, 0]
-    return step / root * moving
+    expected = np.sum(step * (damping[:, None] * step - gradient / root) * moving, axis=1)
+    return step / root * moving, expected
 
 
 def covariances(jacobian: FloatArray, free: BoolArray) -> FloatArray:
