@@ -95,7 +95,7 @@ def test_other_pairs_and_given_windows():
         table,
         covariance(table),
         pairs=(("Ni", "Mg"), ("Mg", "Fe")),
-        windows={("olivine", "Ni-Mg"): (2.2, 2.8, "ours")},
+        windows={("olivine", "Ni-Mg", None): (2.2, 2.8, "ours")},
     )
     assert coefficients["K_D"].tolist() == checks["value"].tolist()
     assert coefficients["window_source"].tolist() == ["ours", ""]
@@ -262,3 +262,18 @@ def test_a_mean_with_limits_goes_by_the_two_coefficients():
     found, checks = exchange_tables(table, covariance(table))
     assert found["K_D"][0] == pytest.approx(1.2 / 4.2)
     assert "from the two D" in checks["detail"][0]
+
+
+def test_a_window_holds_for_melts_unless_it_names_another_phase():
+    rows = [{"element": "Fe", "D": 1.25}, {"element": "Mg", "D": 4.2}]
+    both = partition([*rows, *[row | {"beta": "orthopyroxene"} for row in rows]])
+    windows = {
+        ("olivine", "Fe-Mg", None): (0.2, 0.4, "over melts"),
+        ("olivine", "Fe-Mg", "orthopyroxene"): (1.0, 1.2, "over orthopyroxene"),
+    }
+    named = exchange_tables(both, covariance(both), windows=windows)[0].set_index("beta")
+    assert named["window_source"].to_dict() == {"glass": "over melts", "orthopyroxene": "over orthopyroxene"}
+    assert named["verdict"].to_dict() == {"glass": "consistent", "orthopyroxene": "differs"}
+    melts_only = {key: value for key, value in windows.items() if key[2] is None}
+    unnamed = exchange_tables(both, covariance(both), windows=melts_only)[0].set_index("beta")
+    assert unnamed.loc["orthopyroxene", "window_source"] == ""

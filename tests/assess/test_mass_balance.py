@@ -82,6 +82,24 @@ def test_iron_kept_in_the_fit_spoils_it():
     assert found.checks.set_index("subject").loc["chi-square over degrees of freedom", "verdict"] == "differs"
 
 
+def test_parts_of_a_phase_stand_for_it_as_their_mean():
+    whole = means(error=0.002)
+    cores, rims = (
+        whole[whole["phase"] == "olivine"].assign(
+            phase=f"olivine ({part})", mean_ppm=lambda table, factor=factor: factor * table["mean_ppm"]
+        )
+        for part, factor in (("core", 1.02), ("rim", 0.98))
+    )
+    split = pd.concat([whole[whole["phase"] != "olivine"], cores, rims])
+    found = mass_balance_tables(split, start()).proportions.set_index("phase")
+    assert found.index.tolist() == ["clinopyroxene", "glass", "olivine"]
+    sure = mass_balance_tables(whole, start()).proportions.set_index("phase")
+    assert found.loc["olivine", "proportion"] == pytest.approx(sure.loc["olivine", "proportion"], abs=0.005)
+    assert found.loc["olivine", "proportion_sd"] > sure.loc["olivine", "proportion_sd"]
+    beside = mass_balance_tables(pd.concat([whole, rims]), start()).proportions
+    pd.testing.assert_frame_equal(beside, sure.reset_index()[beside.columns])
+
+
 def test_a_missing_phase_is_hinted_at():
     found = mass_balance_tables(means(phases=("olivine", "glass")), start())
     words = found.checks.set_index("subject").loc["chi-square over degrees of freedom", "detail"]

@@ -31,6 +31,7 @@ _NUMBERS = (
     "window_lo", "window_hi",
 )  # fmt: skip
 EXCHANGE_COLUMNS = (*PAIR_KEYS, "first", "second", *_NUMBERS, "window_source", "verdict")
+Windows = Mapping[tuple[str, str, str | None], tuple[float, float, str]]
 Correlations = Mapping[tuple[str, str], "pd.DataFrame"]
 
 
@@ -48,7 +49,7 @@ def exchange_tables(
     *,
     pairs: Sequence[tuple[str, str]] = (("Fe", "Mg"),),
     ferric: Mapping[tuple[str, str], FerricShare] | None = None,
-    windows: Mapping[tuple[str, str], tuple[float, float, str]] | None = None,
+    windows: Windows | None = None,
     melts: Sequence[str] = MELTS,
     confidence: float = 0.95,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -57,8 +58,9 @@ def exchange_tables(
     partition, covariance: columns as in the stage files of those names; correlations: pair of elements -> how they vary
     together between the spots, as `spot_correlations` makes it; without it they count as independent. ferric:
     (experiment, phase) -> share; phases without one are taken as free of Fe3+, and the detail says so. windows: (phase,
-    "Fe-Mg") -> low, high, source, in the place of the published ones, which hold for silicate melts and so are used where
-    beta is one. Where a window's source gives no range, or none is known, the verdict is "cannot tell".
+    "Fe-Mg", beta or None) -> low, high, source, in the place of the published ones; these, and those for no beta, hold
+    for silicate melts and are used where beta is one. Where a window's source gives no range, or none is known, the
+    verdict is "cannot tell".
     """
     import pandas as pd
 
@@ -130,7 +132,7 @@ def _rows(
     pair: tuple[str, str],
     found: Coefficients,
     shares: Sequence[tuple[FerricShare | None, FerricShare | None]],
-    windows: Mapping[tuple[str, str], tuple[float, float, str]],
+    windows: Windows,
     melts: Sequence[str],
     confidence: float,
 ) -> list[tuple[dict[str, Any], dict[str, Any]]]:
@@ -188,14 +190,15 @@ def _window(
     alpha: str,
     beta: str,
     exchange: str,
-    given: Mapping[tuple[str, str], tuple[float, float, str]],
+    given: Windows,
     melts: Sequence[str],
 ) -> tuple[float, float, str]:
-    if (base_phase(alpha), exchange) in given:
-        return given[base_phase(alpha), exchange]
-    known = (
-        windows_for(base_phase(alpha), "Fe-Mg") if exchange == "Fe-Mg" and base_phase(beta) in melts else ()
-    )
+    over_melt = base_phase(beta) in melts
+    for denominator in (beta, base_phase(beta), *((None,) if over_melt else ())):
+        own = given.get((base_phase(alpha), exchange, denominator))
+        if own is not None:
+            return own
+    known = windows_for(base_phase(alpha), "Fe-Mg") if exchange == "Fe-Mg" and over_melt else ()
     for window in known:
         if window.half_width is not None:
             memory = "" if window.verified else "; from memory in part"

@@ -8,9 +8,8 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, EXCESS, base_phase, check
-from tieline.chemistry.oxides import wt_percent_per_ppm
-from tieline.statistics.least_squares import FloatArray
+from tieline.assess.balance_input import Balance, collect, whole_phases
+from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, EXCESS, check
 from tieline.statistics.mass_balance import FITTED, Mixture, Shortfall, mix, shortfall
 
 if TYPE_CHECKING:
@@ -33,23 +32,6 @@ class BalanceTables:
     mixtures: dict[str, tuple[tuple[str, ...], Mixture]]
 
 
-@dataclass(frozen=True)
-class _Balance:
-    """Oxide wt% of one experiment: start (m,), phases (m, k), with errors; why elements could not be used.
-
-    shared_sd (g, m, k): the calibrations' part, one variable per g and element for all phases of a session.
-    """
-
-    elements: tuple[str, ...]
-    phases: tuple[str, ...]
-    start: FloatArray
-    start_sd: FloatArray
-    composition: FloatArray
-    composition_sd: FloatArray
-    shared_sd: FloatArray
-    unusable: dict[str, str]
-
-
 def mass_balance_tables(
     pair: pd.DataFrame,
     starting: pd.DataFrame,
@@ -62,8 +44,9 @@ def mass_balance_tables(
 ) -> BalanceTables:
     """Balance every experiment that has a starting composition.
 
-    pair: columns experiment, phase, element, mean_ppm, se_ppm as in the stage file, with the factors of `mean_factors`; zones
-    of a phase (`olivine (rim)`) are left aside, and of several means of one element the most certain is taken. starting:
+    pair: columns experiment, phase, element, mean_ppm, se_ppm as in the stage file, with the factors of `mean_factors`. A phase
+    of which there are only parts (`olivine (rim)`) enters as their mean, as uncertain as they differ; where the whole phase is
+    there its parts are left aside. Of several means of one element the most certain is taken. starting:
     experiment, element, value_ppm, sd_ppm. relative_sd: calibration uncertainty where none is known; phases measured in one
     session share it. losable: elements kept out of the fit and judged by what the others leave for them.
     """
@@ -74,8 +57,8 @@ def mass_balance_tables(
     checks: list[dict[str, Any]] = []
     mixtures: dict[str, tuple[tuple[str, ...], Mixture]] = {}
     for experiment, given in starting.groupby("experiment", sort=True, observed=True):
-        own = pair[(pair["experiment"] == experiment) & (pair["phase"].map(base_phase) == pair["phase"])]
-        balance = _collect(own, given, relative_sd)
+        own = whole_phases(pair[pair["experiment"] == experiment])
+        balance = collect(own, given, relative_sd)
         kept = np.array([element not in losable for element in balance.elements], dtype=bool)
         mixture = mix(
             balance.start[kept], balance.start_sd[kept], balance.composition[kept], balance.composition_sd[kept],
@@ -106,69 +89,6 @@ RESIDUAL_COLUMNS = (
 )  # fmt: skip
 
 
-def _collect(own: pd.DataFrame, given: pd.DataFrame, relative_sd: float) -> _Balance:
-    """Elements measured, with errors, in the start and in every phase."""
-    best = _most_certain(own, relative_sd)
-    means, errors, calibration, keys = (
-        best.pivot(index="element", columns="phase", values=name).sort_index(axis=1)
-        for name in ("mean_ppm", "error", "calibration", "calibration_key")
-    )
-    start = given.set_index("element")
-    unusable = _unusable(means, errors, start)
-    elements = [element for element in sorted(start.index) if element not in unusable]
-    factor = wt_percent_per_ppm(elements)[:, None]
-    composition = means.loc[elements].to_numpy(dtype=np.float64) * factor
-    composition_sd = errors.loc[elements].to_numpy(dtype=np.float64) * factor
-    shared = _by_session(
-        composition * calibration.loc[elements].to_numpy(dtype=np.float64), keys.loc[elements].to_numpy()
-    )
-    begin = start.loc[elements, ["value_ppm", "sd_ppm"]].to_numpy(dtype=np.float64) * factor
-    certain = (begin[:, 1] == 0) & np.all(composition_sd == 0, axis=1) & np.all(shared == 0, axis=(0, 2))
-    unusable |= {
-        element: "no error anywhere" for element, sure in zip(elements, certain, strict=True) if sure
-    }
-    kept = ~certain
-    return _Balance(
-        tuple(element for element, keep in zip(elements, kept, strict=True) if keep), tuple(means.columns),
-        begin[kept, 0], begin[kept, 1], composition[kept], composition_sd[kept], shared[:, kept], unusable,
-    )  # fmt: skip
-
-
-def _most_certain(own: pd.DataFrame, relative_sd: float) -> pd.DataFrame:
-    """One mean per phase and element; calibration: its relative sd, error: in ppm, of what no other phase shares."""
-    calibration = own["calibration_sd"].fillna(relative_sd)
-    size = own["mean_ppm"].abs()
-    spots = own["se_ppm"].where(own["se_ppm"].notna() | (calibration == 0), 0.0)
-    error = np.hypot(spots, own["own_sd"] * size)
-    ranked = own.assign(calibration=calibration, error=error, total=np.hypot(error / size, calibration))
-    return ranked.sort_values("total", kind="stable").drop_duplicates(["phase", "element"])
-
-
-def _unusable(means: pd.DataFrame, errors: pd.DataFrame, start: pd.DataFrame) -> dict[str, str]:
-    """Element of the start -> why it cannot enter."""
-    found: dict[str, str] = {}
-    for element in sorted(start.index):
-        measured = element in means.index
-        missing = [phase for phase in means.columns if not measured or np.isnan(means.loc[element, phase])]
-        if missing or not measured:
-            found[element] = f"not measured in {', '.join(missing) or 'any phase'}"
-        elif errors.loc[element].isna().any():
-            found[element] = "a mean has no standard error"
-        elif not start.loc[element, "sd_ppm"] >= 0:
-            found[element] = "the starting composition has no error"
-    return found
-
-
-def _by_session(sd: FloatArray, keys: FloatArray) -> FloatArray:
-    """The errors sd (m, k) laid out by session (g, m, k): entries of a row with one key stand in one layer."""
-    layers = np.zeros((max(sd.shape[1], 1), *sd.shape))
-    for row, own in enumerate(keys):
-        layer = np.unique(own, return_inverse=True)[1].reshape(-1)
-        layers[layer, row, np.arange(len(own))] = sd[row]
-    used = layers.any(axis=(1, 2))
-    return layers[used]
-
-
 def _proportion_rows(experiment: str, phases: tuple[str, ...], mixture: Mixture) -> list[dict[str, Any]]:
     columns = (mixture.proportions, mixture.sd, mixture.low, mixture.high, mixture.unweighted)
     return [
@@ -178,7 +98,7 @@ def _proportion_rows(experiment: str, phases: tuple[str, ...], mixture: Mixture)
 
 
 def _residual_rows(
-    experiment: str, balance: _Balance, kept: np.ndarray, mixture: Mixture, lost: Shortfall
+    experiment: str, balance: Balance, kept: np.ndarray, mixture: Mixture, lost: Shortfall
 ) -> list[dict[str, Any]]:
     rows = []
     fitted, left = iter(range(int(kept.sum()))), iter(range(int((~kept).sum())))
@@ -203,7 +123,7 @@ def _residual_rows(
 
 def _checks(
     experiment: str,
-    balance: _Balance,
+    balance: Balance,
     kept: np.ndarray,
     mixture: Mixture,
     lost: Shortfall,

@@ -104,7 +104,7 @@ def _exchange(
     from tieline.assess.melt_iron import ferric_shares
 
     own = settings.exchange
-    windows = {(one.phase, one.pair): (one.low, one.high, one.source) for one in own.windows}
+    windows = {(one.phase, one.pair, one.beta): (one.low, one.high, one.source) for one in own.windows}
     coefficients, checks = exchange_tables(
         D, covariance, spot_correlations(spots, pair, own.pairs), pairs=own.pairs,
         ferric=ferric_shares(means, conditions, settings), windows=windows,

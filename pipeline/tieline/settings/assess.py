@@ -10,9 +10,10 @@ from tieline.settings.base import Settings
 
 
 class ExchangeWindow(Settings):
-    """The exchange coefficient expected of one phase over a melt."""
+    """The exchange coefficient expected of one phase over a melt, or over another phase."""
 
     phase: str = Field(description="numerator phase")
+    beta: str | None = Field(None, description="denominator phase; none: silicate melts")
     pair: str = Field(description="the two elements, such as Fe-Mg")
     low: float = Field(ge=0, description="lower end of the window")
     high: float = Field(gt=0, description="upper end of the window")
