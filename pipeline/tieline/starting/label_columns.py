@@ -7,6 +7,8 @@ from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from itertools import compress
 
+import pyarrow as pa
+
 from tieline.chemistry.phases import phase_name
 from tieline.ingest.rows import summary_pattern
 from tieline.reading.cell_text import clean, fold
@@ -75,6 +77,9 @@ def rows_of_spots(
     others = [contents[labels[name]] for name in ("experiment", "phase", "grain") if name in labels]
     headed = [(contents[index], clean(grid.headers[index])) for index in (*labels.values(), min(contents))]
     keep, counts = [True] * grid.row_count, Counter[str]()
+    blank = _blank_rows(
+        grid, [row for row, texts in enumerate(zip(*contents.values(), strict=True)) if not any(texts)]
+    )
     for row in range(grid.row_count):
         unnamed = spot is not None and not spot[row]
         sums_up = (texts[row] for texts in (*names, *(others if unnamed else ())))
@@ -82,14 +87,20 @@ def rows_of_spots(
             counts[HEADER] += 1
         elif any(pattern.search(text) for text in sums_up):
             counts[SUMMARY] += 1
-        elif any(texts[row] for texts in contents.values()) or not _is_blank(grid, row):
+        elif row not in blank:
             continue
         keep[row] = False
     return keep, dict(counts)
 
 
-def _is_blank(grid: Grid, row: int) -> bool:
-    return not any(str(grid.column(index)[row].as_py()).strip() for index in range(grid.width))
+def _blank_rows(grid: Grid, rows: list[int]) -> set[int]:
+    """The rows among these of which every cell is blank."""
+    for index in range(grid.width):
+        if not rows:
+            break
+        texts = grid.column(index).take(pa.array(rows, pa.int64())).to_pylist()
+        rows = [row for row, text in zip(rows, texts, strict=True) if not text.strip()]
+    return set(rows)
 
 
 def spot_column(
