@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 from benchmarks.lattice_strain import CRYSTALS, EIGHTFOLD, curve_coverage, main, overlap_coverage
 from tieline.statistics.lattice_strain import Coefficients, Prior, fit_curve, fit_curves, lattice_strain
 from tieline.statistics.lattice_strain_overlap import compare_overlap, compare_overlaps, fit_both
-from tieline.statistics.lattice_strain_prediction import leave_one_out, predict, predictions
+from tieline.statistics.lattice_strain_prediction import influences, leave_one_out, predict, predictions
 from tieline.statistics.lattice_strain_stack import stack
 from tieline.statistics.least_squares import minimise
 
@@ -88,7 +88,8 @@ def test_series_side_by_side_give_what_they_give_alone(seed):
     together = compare_overlaps(data, *fit_both(data, [T] * 6, priors=priors))
     radius = np.array([1.126, 0.9])
     curves = predictions([both.plain for both in together], [radius] * 6)
-    for both, one, known, curve in zip(together, data, priors, curves, strict=True):
+    left_out = influences([both.plain for both in together])
+    for both, one, known, curve, leaving in zip(together, data, priors, curves, left_out, strict=True):
         alone = compare_overlap(one, T, priors=known)
         assert (both.verdict, both.joint.verdict) == (alone.verdict, alone.joint.verdict)
         assert both.p_value == pytest.approx(alone.p_value, rel=1e-4, abs=1e-6, nan_ok=True)
@@ -99,6 +100,9 @@ def test_series_side_by_side_give_what_they_give_alone(seed):
                 ends = [(e.value, e.low, e.high) for e in (first, second)]
                 assert ends[0] == pytest.approx(ends[1], rel=5e-3, abs=1e-6, nan_ok=True)
         np.testing.assert_allclose(both.corrected.high, alone.corrected.high, rtol=5e-3, atol=1e-6)
+        np.testing.assert_allclose(
+            leaving.deleted_sigmas, leave_one_out(alone.plain).deleted_sigmas, rtol=5e-3, atol=1e-3
+        )
         np.testing.assert_allclose(curve.low, predict(alone.plain, radius).low, rtol=5e-3)
 
 
@@ -221,7 +225,7 @@ def test_too_few_radii(radius, reason):
     assert reason in fit.reason
     assert np.isnan(fit.D0.value)
     assert np.isnan(predict(fit, np.array([1.1])).value[0])
-    assert np.isnan(leave_one_out(data, fit).deleted_sigmas).all()
+    assert np.isnan(leave_one_out(fit).deleted_sigmas).all()
 
 
 def test_values_that_bend_the_wrong_way_have_no_curve():
@@ -258,7 +262,7 @@ def test_leave_one_out_finds_the_odd_one():
     value = data.value.copy()
     value[4] *= 1.5
     odd = replace(data, value=value)
-    influence = leave_one_out(odd, fit_curve(odd, T))
+    influence = leave_one_out(fit_curve(odd, T))
     assert int(np.nanargmax(np.abs(influence.deleted_sigmas))) == 4
     direct = fit_curve(
         Coefficients(np.delete(data.radius, 4), np.delete(value, 4), np.delete(data.variance, 4)), T

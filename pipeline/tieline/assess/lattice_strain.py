@@ -25,7 +25,7 @@ from tieline.assess.lattice_series import Row, Series, charge_of, collect_series
 from tieline.chemistry.phases import all_phases
 from tieline.statistics.lattice_strain import FITTED, Prior
 from tieline.statistics.lattice_strain_overlap import OVERLAP_FOUND
-from tieline.statistics.lattice_strain_prediction import Predicted, leave_one_out, predictions
+from tieline.statistics.lattice_strain_prediction import Predicted, influences, predictions
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -195,10 +195,20 @@ def element_rows(results: Sequence[CurveResult], without_each: bool = True) -> l
     guesses = predictions(
         [result.fit for result in results], [np.array([radius for _e, radius, *_rest in every]) for every in roles]
     )  # fmt: skip
-    return [
-        _element_rows(result, every, guess, without_each)
+    rows = [
+        _element_rows(result, every, guess)
         for result, every, guess in zip(results, roles, guesses, strict=True)
     ]
+    if without_each:
+        for own, influence in zip(rows, influences([result.fit for result in results]), strict=True):
+            for row, shift, deleted in zip(own, influence.shift, influence.deleted_sigmas, strict=False):
+                row |= {
+                    "deleted_sigmas": deleted,
+                    "shift_D0": shift[0],
+                    "shift_r0": shift[1],
+                    "shift_E": shift[2],
+                }
+    return rows
 
 
 _Role = tuple[str, float, str, float, float]
@@ -215,9 +225,7 @@ def _roles(series: Series) -> list[_Role]:
     ]  # fmt: skip
 
 
-def _element_rows(
-    result: CurveResult, every: Sequence[_Role], guess: Predicted, without_each: bool
-) -> list[dict[str, Any]]:
+def _element_rows(result: CurveResult, every: Sequence[_Role], guess: Predicted) -> list[dict[str, Any]]:
     series, fit, corrected = result.series, result.fit, result.comparison.corrected
     rows: list[dict[str, Any]] = []
     for index, (element, radius, role, measured, measured_sd) in enumerate(every):
@@ -235,11 +243,6 @@ def _element_rows(
             "corrected_D": corrected.value[index], "corrected_lo": corrected.low[index],
             "corrected_hi": corrected.high[index],
         }  # fmt: skip
-    if without_each:
-        influence = leave_one_out(series.data, fit)
-        for index in range(len(series.elements)):
-            shift = dict(zip(("shift_D0", "shift_r0", "shift_E"), influence.shift[index], strict=True))
-            rows[index] |= {"deleted_sigmas": influence.deleted_sigmas[index], **shift}
     return rows
 
 

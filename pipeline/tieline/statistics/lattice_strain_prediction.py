@@ -1,6 +1,6 @@
 """What a fitted lattice-strain curve says of other radii, and what each value says of the curve.
 
-Public: `predict`, `predictions` for many fits side by side, `leave_one_out`.
+Public: `predict` and `leave_one_out`; `predictions` and `influences` for many fits side by side.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ import numpy as np
 
 from tieline.statistics.lattice_strain_few import Linear, cut
 from tieline.statistics.lattice_strain_outcome import FITTED, CurveFit, different_radii
-from tieline.statistics.lattice_strain_problem import LEVEL, Coefficients, Problem
+from tieline.statistics.lattice_strain_problem import LEVEL, Problem
 from tieline.statistics.lattice_strain_stack import side_by_side
 from tieline.statistics.least_squares import (
     BoolArray,
@@ -168,18 +168,31 @@ class Influence:
     deleted_sigmas: FloatArray
 
 
-def leave_one_out(data: Coefficients, fit: CurveFit) -> Influence:
-    """What each value does to the curve, from fits without it."""
-    count = len(data.value)
-    if fit.verdict != FITTED or fit.problem is None:
-        return Influence(np.full((count, 3), np.nan), np.full(count, np.nan))
-    rest = without_each([fit]).fits
-    every = np.arange(count)
-    value, gradient = rest.problem.apparent(rest.theta, rest.problem.radius)
-    sd = np.sqrt(np.diag(fit.log_covariance))[:3]
-    moved = (rest.theta - fit.theta)[:, :3]
-    told = ~np.isnan(rest.spread[:, 0, 0])
-    shift = np.where(told[:, None], np.where(sd > 0, moved / np.where(sd > 0, sd, 1.0), 0.0), np.nan)
-    slope = gradient[every, every]
-    variance = fit.problem.sd[0, :count] ** 2 + np.einsum("bp,bpq,bq->b", slope, rest.spread, slope)
-    return Influence(shift, (data.value - value[every, every]) / np.sqrt(variance))
+def leave_one_out(fit: CurveFit) -> Influence:
+    """`influences` of a single fit."""
+    return influences([fit])[0]
+
+
+def influences(fits: Sequence[CurveFit]) -> list[Influence]:
+    """What each value does to its curve, from fits without it."""
+    told = [row for row, fit in enumerate(fits) if fit.verdict == FITTED]
+    found = [Influence(np.full((len(fit.curve), 3), np.nan), np.full(len(fit.curve), np.nan)) for fit in fits]
+    if not told:
+        return found
+    rest = without_each([fits[row] for row in told])
+    whole, left, every = (
+        Fits.of([fits[row] for row in told]).take(rest.owner),
+        rest.fits,
+        np.arange(len(rest.owner)),
+    )
+    value, gradient = left.problem.apparent(left.theta, left.problem.radius)
+    sd = np.sqrt(np.einsum("bpp->bp", whole.spread))[:, :3]
+    shift = np.where(sd > 0, (left.theta - whole.theta)[:, :3] / np.where(sd > 0, sd, 1.0), 0.0)
+    shift[np.isnan(left.spread[:, 0, 0])] = np.nan
+    slope = gradient[every, rest.index]
+    variance = whole.problem.sd[every, rest.index] ** 2 + np.einsum("bp,bpq,bq->b", slope, left.spread, slope)
+    deleted = (whole.problem.value - value)[every, rest.index] / np.sqrt(variance)
+    for place, row in enumerate(told):
+        own = rest.owner == place
+        found[row] = Influence(shift[own], deleted[own])
+    return found

@@ -84,11 +84,9 @@ def minimise(
             break
         at_rest = _advance(residuals, walk, tolerance)
         if at_rest.any():
-            found.theta[rows[at_rest]], found.sum_of_squares[rows[at_rest]] = (
-                walk.theta[at_rest],
-                walk.cost[at_rest],
-            )
-            found.converged[rows[at_rest]] = True
+            done = rows[at_rest]
+            found.theta[done], found.sum_of_squares[done] = walk.theta[at_rest], walk.cost[at_rest]
+            found.converged[done] = True
             rows = rows[~at_rest]
             walk.keep(~at_rest)
             residuals = residuals if subset is None else subset(rows)
@@ -203,7 +201,7 @@ def profile_limits(
         np.full(rows, cut), which, side, np.tile(free, (rows, 1)), lower, upper,
     )  # fmt: skip
     limits[which, (side > 0).astype(int)] = search.run()
-    deepest = search.deepest()
+    deepest = int(np.argmin(search.lowest - search.minimum))
     return ProfileLimits(limits, search.better[deepest] if search.found_deeper[deepest] else None)
 
 
@@ -230,9 +228,8 @@ class ProfileSearch:
         # trials start from the farthest point still below the cut: from a point beyond, they can stray to another branch
         self.inside = origin.copy()
         self.centre = origin[every, which]
-        self.room = np.where(
-            side > 0, self.upper[every, which] - self.centre, self.centre - self.lower[every, which]
-        )
+        bound = np.where(side > 0, self.upper[every, which], self.lower[every, which])
+        self.room = np.abs(bound - self.centre)
         variance = np.maximum(spread[every, which, which], 1e-20)
         self.first = 0.5 * np.sqrt(cut * variance)
         self.slope = spread[every, which] / variance[:, None]
@@ -241,10 +238,6 @@ class ProfileSearch:
     @property
     def found_deeper(self) -> BoolArray:
         return np.asarray(self.lowest < self.minimum - _DEEPER * (1.0 + self.minimum))
-
-    def deepest(self) -> int:
-        """The problem that came farthest below its minimum."""
-        return int(np.argmin(self.lowest - self.minimum))
 
     def rise(self, rows: IntArray, distance: FloatArray) -> FloatArray:
         """Root of the rise less that of the cut, of these problems at these distances from their minima."""
@@ -289,9 +282,8 @@ class ProfileSearch:
             if not len(rows):
                 break
             low, high, low_value, high_value = near[rows], far[rows], near_value[rows], far_value[rows]
-            chord = low - low_value * (high - low) / np.where(
-                high_value > low_value, high_value - low_value, 1.0
-            )
+            climb = np.where(high_value > low_value, high_value - low_value, 1.0)
+            chord = low - low_value * (high - low) / climb
             # a bisection now and then, for a rise that is far from straight
             trial = 0.5 * (low + high) if round_ % 4 == 3 else chord
             value = self.rise(rows, trial)
