@@ -34,28 +34,34 @@ class Balance:
 
 def collect(own: pd.DataFrame, given: pd.DataFrame, relative_sd: float) -> Balance:
     """Elements measured, with errors, in the start and in every phase."""
-    best = _most_certain(own, relative_sd)
-    means, errors, calibration, keys = (
-        best.pivot(index="element", columns="phase", values=name).sort_index(axis=1)
-        for name in ("mean_ppm", "error", "calibration", "calibration_key")
+    start = given.set_index("element").sort_index()
+    phases, elements = sorted(own["phase"].unique()), start.index.tolist()
+    best = _most_certain(own[own["element"].isin(elements)], relative_sd)
+    place = (
+        start.index.get_indexer(best["element"]),
+        np.searchsorted(phases, best["phase"].to_numpy(dtype=object)),
     )
-    start = given.set_index("element")
-    unusable = _unusable(means, errors, start)
-    elements = [element for element in sorted(start.index) if element not in unusable]
-    factor = wt_percent_per_ppm(elements)[:, None]
-    composition = means.loc[elements].to_numpy(dtype=np.float64) * factor
-    composition_sd = errors.loc[elements].to_numpy(dtype=np.float64) * factor
-    shared = _by_session(
-        composition * calibration.loc[elements].to_numpy(dtype=np.float64), keys.loc[elements].to_numpy()
-    )
-    begin = start.loc[elements, ["value_ppm", "sd_ppm"]].to_numpy(dtype=np.float64) * factor
+
+    def laid_out(name: str) -> FloatArray:
+        """One column as (elements, phases); NaN where there is no mean."""
+        matrix = np.full((len(elements), len(phases)), np.nan)
+        matrix[place] = best[name].to_numpy(dtype=np.float64)
+        return matrix
+
+    means, errors = laid_out("mean_ppm"), laid_out("error")
+    start_sd = start["sd_ppm"].to_numpy(dtype=np.float64)
+    unusable = _unusable(elements, phases, means, errors, start_sd)
+    used = np.array([element not in unusable for element in elements], dtype=bool)
+    names = [element for element, keep in zip(elements, used, strict=True) if keep]
+    factor = wt_percent_per_ppm(names)[:, None]
+    composition, composition_sd = means[used] * factor, errors[used] * factor
+    shared = _by_session(composition * laid_out("calibration")[used], laid_out("calibration_key")[used])
+    begin = np.stack([start["value_ppm"].to_numpy(dtype=np.float64), start_sd], axis=1)[used] * factor
     certain = (begin[:, 1] == 0) & np.all(composition_sd == 0, axis=1) & np.all(shared == 0, axis=(0, 2))
-    unusable |= {
-        element: "no error anywhere" for element, sure in zip(elements, certain, strict=True) if sure
-    }
+    unusable |= {element: "no error anywhere" for element, sure in zip(names, certain, strict=True) if sure}
     kept = ~certain
     return Balance(
-        tuple(element for element, keep in zip(elements, kept, strict=True) if keep), tuple(means.columns),
+        tuple(element for element, keep in zip(names, kept, strict=True) if keep), tuple(phases),
         begin[kept, 0], begin[kept, 1], composition[kept], composition_sd[kept], shared[:, kept], unusable,
     )  # fmt: skip
 
@@ -90,17 +96,18 @@ def _most_certain(own: pd.DataFrame, relative_sd: float) -> pd.DataFrame:
     return ranked.sort_values("total", kind="stable").drop_duplicates(["phase", "element"])
 
 
-def _unusable(means: pd.DataFrame, errors: pd.DataFrame, start: pd.DataFrame) -> dict[str, str]:
-    """Element of the start -> why it cannot enter."""
+def _unusable(
+    elements: list[str], phases: list[str], means: FloatArray, errors: FloatArray, start_sd: FloatArray
+) -> dict[str, str]:
+    """Element of the start -> why it cannot enter. means, errors: (elements, phases)."""
     found: dict[str, str] = {}
-    for element in sorted(start.index):
-        measured = element in means.index
-        missing = [phase for phase in means.columns if not measured or np.isnan(means.loc[element, phase])]
-        if missing or not measured:
+    for row, element in enumerate(elements):
+        missing = [phase for phase, mean in zip(phases, means[row], strict=True) if np.isnan(mean)]
+        if missing or not phases:
             found[element] = f"not measured in {', '.join(missing) or 'any phase'}"
-        elif errors.loc[element].isna().any():
+        elif np.isnan(errors[row]).any():
             found[element] = "a mean has no standard error"
-        elif not start.loc[element, "sd_ppm"] >= 0:
+        elif not start_sd[row] >= 0:
             found[element] = "the starting composition has no error"
     return found
 

@@ -94,12 +94,16 @@ def _experiment(own: pd.DataFrame, given: Modes, experiment: str, beta: str) -> 
         return table.assign(
             **dict.fromkeys(BULK_COLUMNS[3:7], np.nan), kind="undetermined", reason="no crystals"
         )
-    wide = own.pivot(index="element", columns="alpha", values=["kind", *D_COLUMNS])
-    kind = wide["kind"].reindex(index=elements, columns=phases).to_numpy(dtype=object)
-    parts = {
-        name: wide[name].reindex(index=elements, columns=phases).to_numpy(dtype=np.float64)
-        for name in D_COLUMNS
-    }
+    rows = own[own["alpha"].isin(phases)]
+    place = (
+        np.searchsorted(elements, rows["element"].to_numpy(dtype=object)),
+        np.array([phases.index(phase) for phase in rows["alpha"]], dtype=np.int64),
+    )
+    kind = np.full((len(elements), len(phases)), None, dtype=object)
+    kind[place] = rows["kind"].to_numpy(dtype=object)
+    parts = {name: np.full(kind.shape, np.nan) for name in D_COLUMNS}
+    for name, matrix in parts.items():
+        matrix[place] = rows[name].to_numpy(dtype=np.float64)
     limit = kind == "upper-limit"
     known = ((kind == "value") & np.isfinite(parts["D_hi"])) | limit
     made = known.all(axis=1)

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, PAIR_KEYS, check
 
 if TYPE_CHECKING:
@@ -24,30 +22,32 @@ def overlap_checks(partition: pd.DataFrame) -> pd.DataFrame:
     """
     import pandas as pd
 
-    rows: list[dict[str, Any]] = []
-    own = partition[(partition["kind"] == "value") & partition["overlap_bound"].notna()]
-    for key, group in own.groupby(list(PAIR_KEYS), sort=True, observed=True):
-        bound = float(group["overlap_bound"].iloc[0])
-        doubtful = (group["D"] < 1) & (bound >= SHARE * group["D"])
-        keys = dict(zip(PAIR_KEYS, key, strict=True))
-        upper, safe = _names(group[doubtful]), _names(group[~doubtful])
-        words = f"The smallest D leave room for up to {bound:.2g} of {keys['beta']} in {keys['alpha']}. "
-        words += f"Upper limits as far as overlap is concerned: {upper}. " if upper else ""
-        words += f"Not overlap: {safe}." if safe else ""
-        rows.append(
-            check(
-                "overlap-bound", keys, f"{keys['beta']} in {keys['alpha']}", CANNOT_TELL if upper else CONSISTENT,
-                words.strip(), value=bound,
-            )
-        )  # fmt: skip
+    names = [*PAIR_KEYS, "element", "D", "D_overlap_lo", "overlap_bound"]
+    own = partition.loc[(partition["kind"] == "value") & partition["overlap_bound"].notna(), names]
+    pairs: dict[tuple[str, str, str], list[dict[str, Any]]] = {}
+    for row in own.sort_values([*PAIR_KEYS, "D"], kind="stable").to_dict("records"):
+        pairs.setdefault((row["experiment"], row["alpha"], row["beta"]), []).append(row)
+    rows = [_check(dict(zip(PAIR_KEYS, key, strict=True)), group) for key, group in pairs.items()]
     return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
 
 
-def _names(group: pd.DataFrame) -> str:
-    """Elements by increasing D, each with the lowest D that overlap leaves."""
-    ordered = group.sort_values("D", kind="stable")
-    lowest = np.where(ordered["D_overlap_lo"].notna(), ordered["D_overlap_lo"], 0.0)
+def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
+    """One pair; group: its D's in increasing order."""
+    bound = float(group[0]["overlap_bound"])
+    doubtful = [row for row in group if row["D"] < 1 and bound >= SHARE * row["D"]]
+    upper, safe = _names(doubtful), _names([row for row in group if row not in doubtful])
+    words = f"The smallest D leave room for up to {bound:.2g} of {keys['beta']} in {keys['alpha']}. "
+    words += f"Upper limits as far as overlap is concerned: {upper}. " if upper else ""
+    words += f"Not overlap: {safe}." if safe else ""
+    subject, verdict = f"{keys['beta']} in {keys['alpha']}", CANNOT_TELL if upper else CONSISTENT
+    return check("overlap-bound", keys, subject, verdict, words.strip(), value=bound)
+
+
+def _names(group: list[dict[str, Any]]) -> str:
+    """Elements, each with the lowest D that overlap leaves."""
     return ", ".join(
-        f"{element} (D {D:.2g}, at least {low:.2g})" if low > 0 else f"{element} (D {D:.2g})"
-        for element, D, low in zip(ordered["element"], ordered["D"], lowest, strict=True)
+        f"{row['element']} (D {row['D']:.2g}, at least {row['D_overlap_lo']:.2g})"
+        if row["D_overlap_lo"] > 0
+        else f"{row['element']} (D {row['D']:.2g})"
+        for row in group
     )
