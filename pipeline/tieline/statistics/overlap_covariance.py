@@ -195,10 +195,13 @@ def amplitudes_along(
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Amplitudes of the same fit, their variances, and the right side of its normal equations, all (G, n, m)."""
     m = directions.shape[-1]
-    first, second = np.tril_indices(m)
-    products = inverse_variance @ (directions[..., first] * directions[..., second])
+    places = [(row, column) for row in range(m) for column in range(row + 1)]
+    products = inverse_variance @ np.stack(
+        [directions[..., row] * directions[..., column] for row, column in places], axis=-1
+    )
     gram = np.zeros((m, m, *products.shape[:2]))
-    gram[first, second] = np.moveaxis(products, -1, 0)
+    for number, place in enumerate(places):
+        gram[place] = products[..., number]
     right = (inverse_variance * deviations) @ directions
     root, blind = _solution(gram, prior_variance)
     amplitudes = times(np.swapaxes(root, 0, 1), times(root, np.moveaxis(right, -1, 0)))
@@ -250,17 +253,23 @@ def raise_spread(
     they never pass the solution from below. h² >= 0 is kept.
     """
     for _ in range(steps):
-        real = np.sum(in_class * spread[:, None, :], axis=2) * level_squared
+        real = (in_class @ spread[..., None])[..., 0] * level_squared
         inverse = counting + real[:, None, :]
         np.reciprocal(inverse, out=inverse)
         standardised = squared_residuals * inverse
         inverse *= standardised
-        total = np.sum(over_spots(standardised)[..., None] * in_class, axis=1)
-        slope = np.sum((over_spots(inverse) * level_squared)[..., None] * in_class, axis=1)
+        total = _over_classes(over_spots(standardised), in_class)
+        slope = _over_classes(over_spots(inverse) * level_squared, in_class)
         solvable = (slope > 0) & (expected > 0)
         change = (total - expected) * total / np.where(solvable, slope * expected, 1.0)
         spread = np.clip(spread + np.where(solvable, change, 0.0), 0.0, 4.0)
     return spread
+
+
+def _over_classes(of_element: FloatArray, in_class: FloatArray) -> FloatArray:
+    """Sums (G, k) over the elements (G, p) of every class (G, p, k)."""
+    sums: FloatArray = (of_element[:, None, :] @ in_class)[:, 0, :]
+    return sums
 
 
 def element_inflation(standardised_sum: FloatArray, degrees_of_freedom: FloatArray) -> FloatArray:

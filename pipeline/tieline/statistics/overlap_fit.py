@@ -156,7 +156,9 @@ def _odd_spots(chi2: FloatArray, state: OverlapFit) -> BoolArray:
     reduced = np.where(state.scored, chi2 / degrees, np.inf)
     place = np.maximum(state.scored.sum(axis=1) - 1, 0) // 2
     median = np.take_along_axis(np.sort(reduced, axis=1), place[:, None], axis=1)
-    return np.asarray(state.scored & (reduced > 3.0 * median) & (chdtrc(degrees, chi2) < 0.001))
+    odd = np.asarray(state.scored & (reduced > 3.0 * median))
+    odd[odd] = chdtrc(degrees[odd], chi2[odd]) < 0.001
+    return odd
 
 
 def _update_spread(

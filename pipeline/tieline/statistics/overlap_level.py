@@ -65,8 +65,7 @@ def _log_density(u: FloatArray, row: npt.NDArray[np.intp]) -> FloatArray:
     place = np.arcsinh(u, out=u)
     place -= _TABLE_LOW
     place /= _TABLE_STEP
-    np.maximum(place, 0.0, out=place)
-    np.minimum(place, width - 1.001, out=place)
+    np.clip(place, 0.0, width - 1.001, out=place)
     index = place.astype(np.intp)
     place -= index
     index += row * width
@@ -86,7 +85,7 @@ def clean_level(coordinate: FloatArray, variance: FloatArray, usable: BoolArray)
     groups without a usable spot. Evaluated on a grid of ± 6 sd about the best of the spots' own coordinates.
     """
     grid, by_spot = _log_likelihood(coordinate, variance, usable)
-    return _of_all(grid, by_spot.sum(axis=1), usable)
+    return _of_all(grid, _together(by_spot), usable)
 
 
 def clean_levels(
@@ -94,7 +93,7 @@ def clean_levels(
 ) -> tuple[CleanLevel, CleanLevel]:
     """The same, and from all usable spots but each in turn (G, n), NaN where no other usable spot is left."""
     grid, by_spot = _log_likelihood(coordinate, variance, usable)
-    log_weight = by_spot.sum(axis=1)
+    log_weight = _together(by_spot)
     mean, spread = _moments(grid[:, None, :], log_weight[:, None, :] - by_spot)
     lonely = usable.sum(axis=1, keepdims=True) - usable == 0
     without = CleanLevel(np.where(lonely, np.nan, mean), np.where(lonely, np.nan, spread))
@@ -125,10 +124,16 @@ def _log_likelihood(
         density *= usable[:, :, None]
         return density
 
-    merit = np.where(usable, of_levels(t).sum(axis=1), -np.inf)
+    merit = np.where(usable, _together(of_levels(t)), -np.inf)
     best = np.take_along_axis(t, np.argmax(merit, axis=1)[:, None], axis=1)
     grid = best + _GRID * typical[:, None]
     return grid, of_levels(grid)
+
+
+def _together(by_spot: FloatArray) -> FloatArray:
+    """Log likelihood (G, k) of all spots (G, n, k)."""
+    together: FloatArray = np.einsum("gnk->gk", by_spot)
+    return together
 
 
 def _moments(grid: FloatArray, log_weight: FloatArray) -> tuple[FloatArray, FloatArray]:
