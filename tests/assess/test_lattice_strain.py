@@ -54,6 +54,15 @@ def test_unmeasured_elements_are_predicted_and_europium_is_compared():
     assert named.loc["Eu", "role"] == "fitted"
 
 
+def test_errors_from_few_spots_widen_intervals_by_their_degrees_of_freedom():
+    few, many = (tables([{**row, "dof": dof} for row in curve()]).curves.iloc[0] for dof in (3.0, 3000.0))
+    assert few["E_GPa_hi"] - few["E_GPa_lo"] > 1.05 * (many["E_GPa_hi"] - many["E_GPa_lo"])
+    rows = pair_rows(partition([{**row, "share_spread": 0.1} for row in curve()], alpha="clinopyroxene"))
+    series = collect_series(rows["A", "clinopyroxene", "glass"], {}, 3, 8)
+    # the spots make half of the variance and 8 degrees of freedom are those of the whole: 2 are left for the spots
+    np.testing.assert_allclose(series.data.dof, 11 * 2.0)  # alike to all: those of all together
+
+
 def test_a_charge_that_was_given_moves_the_element():
     rows = [{"element": e, "D": d} for e, d in (("Ca", 1.5), ("Sr", 0.1), ("Mg", 3.0), ("Eu", 0.2))]
     found = tables(rows, charges={"Eu": 2}).elements.set_index("element")

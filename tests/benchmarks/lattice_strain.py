@@ -178,18 +178,17 @@ def line(name: str, figures: dict[str, float]) -> str:
     return f"{name:66s}" + "  ".join(f"{key} {value:.3f}" for key, value in figures.items())
 
 
-def pooled(name: str, cells: list[dict[str, float]], figures: tuple[str, ...], cases: int) -> str:
-    """Mean over cells, with its standard error, and the ends; a cell of 0.95 has a standard error of its own."""
-    parts = []
-    for figure in figures:
-        values = np.array([cell[figure] for cell in cells if np.isfinite(cell[figure])])
-        if len(values):
-            error = np.sqrt(values.mean() * (1 - values.mean()) / (cases * len(values)))
-            parts.append(
-                f"{figure} {values.mean():.4f} ± {error:.4f} ({values.min():.3f} to {values.max():.3f})"
-            )
-    own = np.sqrt(0.95 * 0.05 / cases)
-    return f"{name}, {len(cells)} cells (s.e. of a cell {own:.3f}): " + "  ".join(parts)
+def pooled(group: str, cells: list[dict[str, float]]) -> list[str]:
+    """Mean, lowest and highest of a group of cells, figure by figure."""
+    shares = {
+        name: np.array([cell[name] for cell in cells if np.isfinite(cell[name])])
+        for name in cells[0]
+        if name not in ("affected", "possible")
+    }
+    return [
+        line(f"{group}: {name} of {len(cells)}", {key: float(pool(values)) for key, values in shares.items() if len(values)})
+        for name, pool in (("mean", np.mean), ("lowest", np.min), ("highest", np.max))
+    ]  # fmt: skip
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -212,23 +211,20 @@ def main(arguments: list[str] | None = None) -> int:
                 curves.setdefault(group, []).append(figures)
                 print(line(f"{crystal.name}, {kind}, error {label}", figures), flush=True)
     overlaps: dict[str, list[dict[str, float]]] = {}
-    half = max(cases // 2, 1)
     for crystal in crystals:
         for kind in KINDS[:1] if chosen.quick else (KINDS[0], KINDS[-1]):
             for fraction in (0.002,) if chosen.quick else FRACTIONS:
                 for label in labels:
                     seed += 1
-                    figures = overlap_coverage(crystal, label, kind, fraction, half, seed)
+                    figures = overlap_coverage(crystal, label, kind, fraction, max(cases // 2, 1), seed)
                     group = f"{'no overlap' if fraction == 0 else 'overlap'}, {kind}"
                     overlaps.setdefault(group, []).append(figures)
                     print(
                         line(f"{crystal.name}, overlap {fraction:.2%}, {kind}, error {label}", figures),
                         flush=True,
                     )
-    for group, cells in curves.items():
-        print(pooled(group, cells, ("told", "D0", "r0", "E", "predicted"), cases))
-    for group, cells in overlaps.items():
-        print(pooled(group, cells, ("told", "f", "found", "corrected"), half))
+    for group, cells in (curves | overlaps).items():
+        print("\n".join(pooled(group, cells)))
     return 0
 
 
