@@ -329,6 +329,10 @@ def test_folder_with_a_difference_is_not_sealed(own: Path):
     assert not (own / "SHA256SUMS").exists()
 
 
+def printed(run_folder: Path) -> str:
+    return CliRunner().invoke(app, ["audit", str(run_folder)]).stdout
+
+
 def not_sealed(run_folder: Path) -> list[str]:
     """What keeps a folder without differences from being sealed; the command says it with status 2."""
     result = CliRunner().invoke(app, ["audit", str(run_folder), "--seal", "--json"])
@@ -341,7 +345,9 @@ def not_sealed(run_folder: Path) -> list[str]:
 def test_a_folder_without_its_report_is_not_sealed(own: Path):
     config = configs(own) / "ember.toml"
     assert not_sealed(own) == [f"the report is missing; run `tieline report {config}`"]
+    assert "no report was compared." in " ".join(printed(own).split())
     refresh_report(load(config))
+    assert "so did the 8 files of the report." in " ".join(printed(own).split())
     (own / "methods.txt").unlink()
     found = audit(own, with_seal=True)
     assert [(one.kind, one.detail.rpartition(": ")[2]) for one in found.differences] == [

@@ -42,7 +42,7 @@ def _show_differences(console: Console, audit: Audit) -> None:
         text = (
             f"No difference: {checked['stage_files']} stage files, {checked['inputs']} inputs, the settings in effect "
             f"and the manifest fit their digests, the accounts add up, and {checked['recomputed_alike']} stage files "
-            "came out the same when recomputed; so did the report, where there is one."
+            f"came out the same when recomputed; {_report(checked['report_files'])}."
         )
         console.print(Text(text, style="green"))
         return
@@ -52,6 +52,10 @@ def _show_differences(console: Console, audit: Audit) -> None:
     for difference in audit.differences:
         table.add_row(difference.kind, printable(difference.file), printable(difference.detail))
     console.print(table)
+
+
+def _report(n_files: int) -> str:
+    return f"so did the {n_files} files of the report" if n_files else "no report was compared"
 
 
 def _show_left_out(console: Console, audit: Audit) -> None:

@@ -122,6 +122,7 @@ def _checked(folder: RunFolder, again: Recomputation) -> dict[str, int]:
         "stage_files": len(folder.files),
         "inputs": len(recorded_inputs(folder)),
         "recomputed_alike": again.same + len(again.last_digits),
+        "report_files": again.report,
     }
 
 

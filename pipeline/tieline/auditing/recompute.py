@@ -21,11 +21,12 @@ from tieline.stages import NAMES, STAGES
 
 @dataclass
 class Recomputation:
-    """`done` tells whether the chain could be run; `why_not` why it could not."""
+    """`done` tells whether the chain could be run; `why_not` why it could not; `report` how many files of it were compared."""
 
     done: bool = False
     why_not: str = ""
     same: int = 0
+    report: int = 0
     last_digits: list[str] = field(default_factory=list)
     differences: list[Difference] = field(default_factory=list)
 
@@ -53,7 +54,7 @@ def recompute(folder: RunFolder) -> Recomputation:
             result.why_not = f"{error.problems[0]}{more}"
             return result
         _compare_files(folder, session.run_folder, result)
-        result.differences += _report_differences(folder, session)
+        _compare_report(folder, session, result)
     ledgers = {report.verdict.stage: vars(report.ledger) for report in reports}
     result.differences += _ledger_differences(folder, ledgers)
     result.done = True
@@ -78,22 +79,23 @@ def _compare_files(folder: RunFolder, made: Path, result: Recomputation) -> None
                 result.differences.append(Difference("recomputed", f"{name}.parquet", comparison.detail))
 
 
-def _report_differences(folder: RunFolder, again: Session) -> list[Difference]:
+def _compare_report(folder: RunFolder, again: Session, result: Recomputation) -> None:
     """Report files that are not what the recomputed results give; `again` is the recomputed run."""
     from tieline.report.currency import FILES, report_verdict
 
     present = {name: (folder.path / name).read_bytes() for name in FILES if (folder.path / name).exists()}
     complete = all(stage.name in folder.files for stage in STAGES)
     if not present or not complete or folder.manifest.get("tieline") != __version__:
-        return []
+        return
+    result.report = len(present)
     verdict = report_verdict(replace(again, run_folder=folder.path))
     if verdict.state != "current":
         words = f"the report does not belong to these results: {'; '.join(verdict.reasons)}"
-        return [Difference("stale", next(iter(present)), words)]
-    wrong = _unlike(present, again)
-    return [
+        result.differences.append(Difference("stale", next(iter(present)), words))
+        return
+    result.differences += [
         Difference("edited", name, "is not what the results give: changed after the report was written")
-        for name in wrong
+        for name in _unlike(present, again)
     ]
 
 
