@@ -80,7 +80,7 @@ def test_proportions_are_the_true_ones(demo: Session):
     true = true.reindex(found.index)
     assert np.abs(found["proportion"] - true).max() < 0.02
     inside = (found["proportion_lo"] <= true) & (true <= found["proportion_hi"])
-    assert inside.sum() >= 27  # of 32; those of one experiment share their errors
+    assert inside.sum() >= 30  # of 32: the starting composition is exact, though only said to be known to 1 %
 
 
 def test_bulk_coefficients_are_the_true_ones(demo: Session):
@@ -92,7 +92,7 @@ def test_bulk_coefficients_are_the_true_ones(demo: Session):
     true = (sums["weighted"] / sums["mass_fraction"]).reindex(found.index)
     inside = (found["bulk_D_lo"] <= true) & (true <= found["bulk_D_hi"])
     # The proportions are common to all elements of an experiment, which fail together where they are off.
-    assert inside.mean() > 0.82
+    assert inside.mean() > 0.90
     assert (inside.groupby("experiment").mean() > 0.8).sum() >= 7
     values = found[found["kind"] == "value"]
     assert np.nanmedian(np.abs(np.log(values["bulk_D"] / true[values.index]))) < 0.03
