@@ -301,6 +301,15 @@ def test_overlap_is_told_from_a_curve():
     assert both.corrected.low[0] <= D[0] <= both.corrected.high[0]
 
 
+def test_four_values_leave_nothing_to_correct_one_by_the_others():
+    D = lattice_strain(EIGHTFOLD[[0, 4, 6, 10]], T, 0.5, 1.0, 500.0) + 0.01
+    both = compare_overlap(Coefficients(EIGHTFOLD[[0, 4, 6, 10]], D, (0.001 * D) ** 2), T)
+    assert both.joint.dof == 0
+    assert np.isnan(both.joint.p_value)
+    assert both.joint.overlap.low < 0.01 < both.joint.overlap.high
+    assert (both.corrected.low[0], both.corrected.high[0]) == pytest.approx((0.0, D[0]), abs=0.002)
+
+
 def test_overlap_and_curve_from_four_values_or_fewer():
     data = exact(radius=EIGHTFOLD[[0, 4, 10]])
     both = compare_overlap(data, T)

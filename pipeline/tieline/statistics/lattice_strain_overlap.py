@@ -125,16 +125,12 @@ def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray]:
     start[:, :, OVERLAP] = 0.0
     start[:, 1, 0], start[:, 2, 2] = start[:, 1, 0] + 0.3, start[:, 2, 2] - 0.7
     start = np.where(free[:, None, :] | (np.arange(4) == OVERLAP), start, theta[:, None, :])
-    held = free & (np.arange(4) != OVERLAP)
+    others = free & (np.arange(4) != OVERLAP)
     many = problem.take(np.repeat(np.arange(len(theta)), 3))
     without = minimise(
-        many.residuals,
-        start.reshape(-1, 4),
-        np.repeat(held, 3, axis=0),
-        many.lower,
-        many.upper,
+        many.residuals, start.reshape(-1, 4), np.repeat(others, 3, axis=0), many.lower, many.upper,
         subset=many.subset,
-    )
+    )  # fmt: skip
     lowest = without.sum_of_squares.reshape(-1, 3).min(axis=1)
     improvement = np.maximum(lowest - np.sum(problem.residuals(theta)[0] ** 2, axis=1), 0.0)
     factor, dof = Linear.of(problem, theta, fits.spread).few(np.tile(np.eye(4)[OVERLAP], (len(theta), 1)))

@@ -69,7 +69,7 @@ def predict(fit: CurveFit, radius: FloatArray) -> Predicted:
 
 
 def predictions(fits: Sequence[CurveFit], radii: Sequence[FloatArray]) -> list[Predicted]:
-    """D at radii (Å) of the same charge and site, with the profile-likelihood interval at each fit's confidence.
+    """D at radii (Å) of the same charge and site, with the profile-likelihood interval; all fits by the same confidence.
 
     The interval is that of the curve: how far real elements lie off it is not included. sd to first order.
     """
@@ -116,10 +116,10 @@ def _levels(fits: Fits, radius: FloatArray, confidence: float) -> FloatArray:
     origin[:, LEVEL] = np.log(value[moves])
     cost = np.sum(many.residuals(theta)[0] ** 2, axis=1)[moves]
     both = np.tile(np.arange(len(moves)), 2)
-    levels = replace(many.take(moves[both]), reference=radius[moves[both]])
+    there = replace(many.take(moves[both]), reference=radius[moves[both]])
     search = ProfileSearch(
-        levels.residuals, origin[both], cost[both], turned[both], rise[moves[both]], np.full(len(both), LEVEL),
-        np.repeat([-1.0, 1.0], len(moves)), free[moves[both]], levels.lower, levels.upper, subset=levels.subset,
+        there.residuals, origin[both], cost[both], turned[both], rise[moves[both]], np.full(len(both), LEVEL),
+        np.repeat([-1.0, 1.0], len(moves)), free[moves[both]], there.lower, there.upper, subset=there.subset,
     )  # fmt: skip
     low[moves], high[moves] = np.exp(search.run()).reshape(2, -1)
     return np.array([value, value * relative, low, high])
