@@ -112,6 +112,14 @@ def test_rows_of_another_length_are_told_with_their_row_number():
     assert [(row.row, row.cells, row.text) for row in grid.ragged] == [(4, 1, "b"), (5, 3, "c,3,4")]
 
 
+@pytest.mark.parametrize("blank", [";", ";;;", ";;;;;;", ' ;""', "\t;"])
+def test_a_line_of_nothing_but_separators_is_blank_whatever_their_number(blank: str):
+    grid = read(f"Spot;MgO;NiO\na;1,5;2\n{blank}\nb;2,5;3\n;;x;\n")
+    assert grid.column(0).to_pylist() == ["a", "b"]
+    assert grid.rows().tolist() == [2, 4]
+    assert [(row.row, row.text) for row in grid.ragged] == [(5, ";;x;")]
+
+
 def test_rows_of_another_length_in_a_file_of_several_blocks(monkeypatch: pytest.MonkeyPatch):
     monkeypatch.setattr(delimited, "BLOCK_BYTES", 1 << 10)
     lines = ["Spot,MgO", *(f"s{i},{i}" for i in range(2, 2000))]

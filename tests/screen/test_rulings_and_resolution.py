@@ -190,6 +190,11 @@ def test_what_is_wrong_with_the_table_and_what_the_spots_do_not_know_is_told_tog
     assert {problem.file for problem in error.value.problems} == {"rulings.csv"}
 
 
+def test_the_stage_tells_both_kinds_together():
+    found_problems = problems(["000-00x,*,drop,X,2024-03-09,no such spot", "000-001,*,maybe,X,2024-03-09,no"])
+    assert [(problem.row, problem.column) for problem in found_problems] == [(3, "verdict"), (2, "spot")]
+
+
 def test_a_missing_column_does_not_hide_what_else_is_wrong():
     files = ruled("000-000,*,maybe,X,crack", header="spot,analyte,verdict,analyst,reason\n")
     with pytest.raises(InputError) as error:

@@ -202,8 +202,9 @@ def _parse(
         numbers = rows[start : start + batch.num_rows]
         start += batch.num_rows
         blocks.append(Block(numbers, tuple(batch.columns)))
-    placed = tuple(RaggedRow(row.row + rows_before, row.cells, row.text) for row in ragged)
-    return blocks, placed
+    # A row of nothing but delimiters is a blank line, however many of them a spreadsheet wrote.
+    said = [row for row in ragged if row.text.strip(delimiter + ' \t"')]
+    return blocks, tuple(RaggedRow(row.row + rows_before, row.cells, row.text) for row in said)
 
 
 def _row_numbers(

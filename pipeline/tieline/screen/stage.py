@@ -23,7 +23,7 @@ from tieline.screen.outliers import outlier_result
 from tieline.screen.overlap import Overlap, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
-from tieline.screen.rulings import read_rulings, ruling_findings
+from tieline.screen.rulings import ruling_findings, rulings_as_written
 from tieline.screen.session import Measured, Session, session_of
 from tieline.screen.totals import total_findings
 from tieline.screen.unmixing import UnmixedValues, unmixed_values
@@ -48,10 +48,10 @@ def screen(
 
     Raises InputError for rulings that are incomplete, contradict each other or name spots that do not exist.
     """
-    rulings = read_rulings(files)
+    rulings, malformed = rulings_as_written(files)
     concentrations = calibrated(convert, calibrate, ingest_spots, convert_standards)
     session = session_of(convert, concentrations)
-    ruled = ruling_findings(rulings, session)
+    ruled = ruling_findings(rulings, session, malformed)
     results, unmixed = _tests(session, settings)
     findings = (ruled, *(part for result in results for part in result.findings))
     if settings.imprecise.enabled:
