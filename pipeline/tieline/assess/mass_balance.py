@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from tieline.assess.balance_input import Balance, collect, whole_phases
+from tieline.assess.consistency import holm
 from tieline.assess.evidence import CANNOT_TELL, CHECK_COLUMNS, CONSISTENT, DIFFERS, EXCESS, check
 from tieline.statistics.mass_balance import FITTED, Mixture, Shortfall, mix, shortfall
 
@@ -161,16 +162,19 @@ def _checks(
             value=mixture.squares, expected_lo=0.0, expected_hi=largest,
         )
     )  # fmt: skip
-    for element, loss, sd, low, high, p_value in zip(
-        np.array(balance.elements)[~kept], lost.loss, lost.sd, lost.low, lost.high, lost.p_value, strict=True
+    told = int(np.isfinite(lost.p_value).sum())
+    together = f"; judged over {told} elements together" if told > 1 else ""
+    numbers = (lost.loss, lost.sd, lost.low, lost.high, lost.p_value, holm(lost.p_value, EXCESS))
+    for element, loss, sd, low, high, p_value, differs in zip(
+        np.array(balance.elements)[~kept], *numbers, strict=True
     ):
         if not np.isfinite(p_value):
             continue
-        gone = "lost" if loss > 0 else "gained"
+        gone = f"{element} {'lost' if loss > 0 else 'gained'} {abs(loss):.1%} of the start"
         rows.append(
             check(
-                "mass-balance", keys, f"{element} loss", DIFFERS if p_value < EXCESS else CONSISTENT,
-                f"{element} {gone} {abs(loss):.1%} of the start ({low:.1%} to {high:.1%}), p {p_value:.2g}; not fitted.",
+                "mass-balance", keys, f"{element} loss", DIFFERS if differs else CONSISTENT,
+                f"{gone} ({low:.1%} to {high:.1%}), p {p_value:.2g}{together}; not fitted.",
                 value=float(loss), sd=float(sd), expected_lo=0.0, expected_hi=0.0,
             )
         )  # fmt: skip
