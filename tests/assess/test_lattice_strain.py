@@ -9,6 +9,8 @@ from tieline.assess.lattice_series import collect_series, pair_rows
 from tieline.assess.lattice_strain import lattice_strain_tables
 from tieline.chemistry.radii import ionic_radius
 from tieline.statistics.lattice_strain import Prior, lattice_strain
+from tieline.statistics.means import MeanEstimate
+from tieline.statistics.ratios import ratio_dof
 
 RARE_EARTHS = ("La", "Ce", "Nd", "Sm", "Gd", "Dy", "Y", "Er", "Yb", "Lu", "Sc")
 
@@ -57,10 +59,23 @@ def test_unmeasured_elements_are_predicted_and_europium_is_compared():
 def test_errors_from_few_spots_widen_intervals_by_their_degrees_of_freedom():
     few, many = (tables([{**row, "dof": dof} for row in curve()]).curves.iloc[0] for dof in (3.0, 3000.0))
     assert few["E_GPa_hi"] - few["E_GPa_lo"] > 1.05 * (many["E_GPa_hi"] - many["E_GPa_lo"])
-    rows = pair_rows(partition([{**row, "share_spread": 0.1} for row in curve()], alpha="clinopyroxene"))
-    series = collect_series(rows["A", "clinopyroxene", "glass"], {}, 3, 8)
-    # the spots make half of the variance and 8 degrees of freedom are those of the whole: 2 are left for the spots
-    np.testing.assert_allclose(series.data.dof, 11 * 2.0)  # alike to all: those of all together
+
+
+@pytest.mark.parametrize("share", [0.1, 0.5, 1.0])
+def test_degrees_of_freedom_of_the_spots_are_told_from_those_of_the_whole(share):
+    alpha, beta = (
+        MeanEstimate(np.ones(1), np.array([variance]), np.zeros(1), np.array([6.0]), np.array([7]))
+        for variance in (0.02, 1e-9)
+    )
+    shared = np.sqrt(0.01 * (1 / share - 1)) * np.ones(1)
+    whole = ratio_dof(alpha, beta, shared, shared)
+    rows = [
+        {**row, "dof": whole[0], "share_counting": share / 2, "share_spread": share / 2} for row in curve()
+    ]
+    found = collect_series(pair_rows(partition(rows))["A", "olivine", "glass"], {}, 3, 8).data.dof
+    np.testing.assert_allclose(
+        found, 11 * 6.0, rtol=1e-3
+    )  # spots that scatter alike have those of all together
 
 
 def test_a_charge_that_was_given_moves_the_element():

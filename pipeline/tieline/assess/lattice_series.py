@@ -11,6 +11,7 @@ import numpy as np
 from tieline.assess.evidence import PAIR_KEYS
 from tieline.chemistry.radii import ionic_radius, known_radii, usual_charges
 from tieline.statistics.lattice_strain import Coefficients
+from tieline.statistics.least_squares import FloatArray
 from tieline.statistics.moderated_variance import moderate
 
 if TYPE_CHECKING:
@@ -149,8 +150,7 @@ def _coefficients(
             pair = covariances.get((first, second), covariances.get((second, first), 0.0))
             shared[one, two] = shared[two, one] = pair / (value[one] * value[two])
     trouble = []
-    # dof is that of the whole error, the other parts taken as known (Satterthwaite)
-    spot_dof = dof * (spots / total) ** 2
+    spot_dof = _dof_of_spots(dof, spots / total)
     few = np.isfinite(spot_dof) & (spot_dof > 0)
     moderated, moderated_dof = moderate(spots, np.where(few, spot_dof, np.inf))
     relative = np.where(few, moderated, 0.0)
@@ -168,3 +168,12 @@ def _coefficients(
         ),
         trouble,
     )  # fmt: skip
+
+
+def _dof_of_spots(dof: FloatArray, share: FloatArray) -> FloatArray:
+    """Degrees of freedom of the part of an error that comes from the spots, from those of the whole.
+
+    share: of the spots in the variance. The rest is taken as known, which made dof larger; this undoes the formula of
+    `statistics.ratios.ratio_dof` where one of the two means makes the error, and is on the safe side where both do.
+    """
+    return np.asarray(dof * share ** (1.0 + share**4 - 0.5 * share * (1.0 - share)))
