@@ -114,7 +114,7 @@ def test_duplicate_spots_stop_or_are_numbered():
     found = problems(text)
     assert [str(problem) for problem in found] == [
         't.csv, row 4, column "Point": the spot label "a" stands in rows 2, 4 and 6. '
-        'Rename them, or set on_duplicate_spot = "number".'
+        'Rename them, or set on_duplicate_spot = "number" in [ingest].'
     ]
     result = run(text, on_duplicate_spot="number")
     assert spots(result, "spot", "row") == [("a", 2), ("b", 3), ("a (3)", 4), ("a (2)", 5), ("a (4)", 6)]

@@ -18,7 +18,7 @@ from tieline.ingest.matching import phase_remarks, similar_experiments, with_mat
 from tieline.ingest.matrices import Counts
 from tieline.ingest.remarks import cell_remarks
 from tieline.ingest.roles import LABELS, Roles, assign_roles
-from tieline.ingest.rows import joined, spot_rows
+from tieline.ingest.rows import SUMMARY, is_summary, joined, spot_rows
 from tieline.ingest.spots import Spots, duplicate_problems, duplicates, numbered, read_spots
 from tieline.ingest.texts import Mask, Texts
 from tieline.ingest.values import check_blocks, long_blocks
@@ -31,7 +31,7 @@ from tieline.reading.layout import Layout
 from tieline.results import Remark
 from tieline.settings.ingest import IngestSettings, Table
 
-SET_ASIDE_REMEDY = 'Correct them, or set on_unreadable = "set-aside" to go on without them.'
+SET_ASIDE_REMEDY = 'Correct them, or set on_unreadable = "set-aside" in [ingest] to go on without them.'
 DISTANCE_UNITS = frozenset({"um", "μm", "micron", "microns"})
 
 
@@ -63,8 +63,9 @@ def read_table(
     grid, work, roles = open_table(files[table.path], table, name, settings)
     read.remarks += [Remark(f"{note}.", name) for note in grid.notes]
     for ragged in grid.ragged:
-        reason = f"the row has {ragged.cells} cells, the header {grid.width}"
-        read.asides.add(ragged.row, None, ragged.text, ragged.cells, reason)
+        summary = is_summary(ragged.text, grid, table.skip_row_labels)
+        reason = SUMMARY if summary else f"the row has {ragged.cells} cells, the header {grid.width}"
+        read.asides.add(ragged.row, None, ragged.text, ragged.cells, reason, expected=summary)
     read.problems += work.problems
     read.remarks += work.remarks
     if not grid.row_count and not grid.ragged:

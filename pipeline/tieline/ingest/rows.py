@@ -79,6 +79,12 @@ def summary_pattern(words: tuple[str, ...]) -> str:
     return "|".join([*alone, *started]) or r"^$"
 
 
+def is_summary(text: str, grid: Grid, words: tuple[str, ...]) -> bool:
+    """Whether a row that has too few or too many cells to be a spot sums up others, by its first cell."""
+    first = clean(text.split(grid.found.delimiter or "\t", 1)[0].strip(' "'))
+    return bool(first) and re.search(summary_pattern(words), first, re.IGNORECASE) is not None
+
+
 def joined(cells: list[str], grid: Grid) -> str:
     """A row as one text."""
     return (grid.found.delimiter or "\t").join(cells)

@@ -121,7 +121,7 @@ def duplicates(spots: Spots) -> dict[str, list[int]]:
 
 def duplicate_problems(path: str, column: str | None, repeated: Mapping[str, list[int]]) -> list[Problem]:
     """One problem per label, with all its rows."""
-    remedy = 'Rename them, or set on_duplicate_spot = "number".'
+    remedy = 'Rename them, or set on_duplicate_spot = "number" in [ingest].'
     return [
         Problem(f'the spot label "{label}" stands in rows {_and(rows)}.', path, rows[1], column, remedy)
         for label, rows in repeated.items()
