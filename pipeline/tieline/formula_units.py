@@ -82,7 +82,9 @@ def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma:
     spot, first = spot_codes(ingest)
     known = np.isfinite(value)
     share = wt_percent_per_ppm(element.texts) if element.texts else np.zeros(0)
-    parts = np.where(known, share[element.codes] * value, 0.0) if element.texts else value
+    parts = share[element.codes] if element.texts else np.zeros(0)
+    parts *= value
+    parts[~known] = 0.0
     rough = np.bincount(spot, weights=parts, minlength=len(first))
     chosen = np.flatnonzero(rough > WHOLE_ABOVE_WT)
     place = np.full(len(first), -1)
