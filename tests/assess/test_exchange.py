@@ -112,6 +112,20 @@ def test_iron_as_the_second_element_takes_the_inverse_factor():
     assert found["value"][0] == pytest.approx(4.2 / (1.2 / 0.8))
 
 
+def test_the_ferric_share_counts_in_the_uncertainty_of_the_table():
+    table = partition([{"element": "Fe", "D": 1.2}, {"element": "Mg", "D": 4.2}])
+    sure, unsure = (
+        exchange_tables(table, covariance(table), ferric={("A", "glass"): FerricShare(0.20, sd, "stated")})[
+            0
+        ].iloc[0]
+        for sd in (0.0, 0.08)
+    )
+    assert sure["K_D"] == unsure["K_D"] == pytest.approx(1.2 / 4.2 / 0.8)
+    relative = np.array([one["K_D_sd"] / one["K_D"] for one in (sure, unsure)])
+    assert relative[1] == pytest.approx(np.hypot(relative[0], 0.08 / 0.80), rel=1e-6)
+    assert unsure["K_D_hi"] - unsure["K_D_lo"] > 1.5 * (sure["K_D_hi"] - sure["K_D_lo"])
+
+
 def test_a_limit_gives_no_coefficient():
     table = partition([{"element": "Fe", "kind": "upper-limit", "D_hi": 0.2}, {"element": "Mg", "D": 4.2}])
     found = exchange_tables(table, covariance(table))[1]
