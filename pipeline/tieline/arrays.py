@@ -25,7 +25,10 @@ ROWS_AT_ONCE = 2**17
 
 @dataclass(frozen=True)
 class Labels:
-    """A label column as codes into its sorted texts; -1 is null. `codes` has one entry per row."""
+    """A label column as codes into its sorted texts; -1 is null. `codes` has one entry per row.
+
+    Codes may be narrow, as those of `narrow_labels`: arithmetic on them may overflow then, indexing does not.
+    """
 
     codes: IntArray
     texts: tuple[str, ...]
@@ -113,6 +116,11 @@ def labels(table: pa.Table, name: str) -> Labels:
     return label_codes(one_array(table.column(name)))
 
 
+def narrow_labels(table: pa.Table, name: str) -> Labels:
+    """The same with codes as narrow as those of the column."""
+    return narrow_codes(one_array(table.column(name)))
+
+
 def label_codes(array: pa.DictionaryArray) -> Labels:
     """A label array as codes into its sorted texts in use, whatever the order of its dictionary."""
     narrow = narrow_codes(array)
@@ -120,7 +128,7 @@ def label_codes(array: pa.DictionaryArray) -> Labels:
 
 
 def narrow_codes(array: pa.DictionaryArray) -> Labels:
-    """The same with codes as narrow as the array's own: arithmetic on them may overflow, indexing with them does not."""
+    """The same with codes as narrow as the array's own."""
     texts = array.dictionary.to_pylist()
     indices = array.indices.fill_null(-1) if array.indices.null_count else array.indices
     codes = indices.to_numpy()
@@ -169,7 +177,7 @@ def group_rows(columns: Sequence[Labels], rows: BoolArray | None = None) -> Grou
 
 def group_table(table: pa.Table, names: Sequence[str], rows: BoolArray | None = None) -> Groups:
     """The same for columns of a table."""
-    columns = (narrow_codes(one_array(table.column(name))) for name in names)
+    columns = (narrow_labels(table, name) for name in names)
     code, first = _grouped(columns, table.num_rows, rows)
     keys = table.select(names).take(pa.array(first))
     return Groups(code, tuple(labels(keys, name) for name in names), first)
@@ -270,7 +278,7 @@ def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
 
     A spot is identified by its table and its row there, for labels may repeat between tables.
     """
-    tables = narrow_codes(one_array(table.column("table")))
+    tables = narrow_labels(table, "table")
     rows = one_array(table.column("row")).to_numpy()
     widest = int(rows.max(initial=0)) + 1
     keys = tables.codes.astype(np.int64)

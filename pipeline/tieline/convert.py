@@ -11,13 +11,14 @@ from dataclasses import dataclass
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, Labels, flags, labels, numbers, spot_codes
+from tieline.arrays import BoolArray, FloatArray, Labels, flags, labels, narrow_labels, numbers, spot_codes
 from tieline.chemistry.header_words import PPM_PER_UNIT
 from tieline.chemistry.oxides import parse_oxide, wt_percent_per_ppm
 from tieline.columns import CONVERT, CONVERT_STANDARDS, VALUE_KEYS
 from tieline.errors import DefectError
 from tieline.formula_units import formula_tables
 from tieline.internal_standard import Rescaling, internal_standards
+from tieline.narrowing import code_type
 from tieline.results import Ledger, Remark, StageResult
 from tieline.settings.chemistry import ConvertSettings
 from tieline.tables import build
@@ -44,8 +45,9 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
     Raises InputError where an internal standard has no actual or assumed value and the settings say stop.
     """
     analyte, element, factor = _analytes(ingest)
-    rows = factor[analyte.codes, labels(ingest, "unit").codes] if ingest.num_rows else np.zeros(0)
-    values = Values(*(numbers(ingest, name) for name in ("value", "sigma", "limit"))).scaled(rows)
+    to_ppm = factor[analyte.codes, narrow_labels(ingest, "unit").codes] if ingest.num_rows else np.zeros(0)
+    values = Values(*(numbers(ingest, name) * to_ppm for name in ("value", "sigma", "limit")))
+    del to_ppm
     element_labels = _element_labels(analyte, element)
     values, summed, remarks = _iron_in_two_columns(ingest, analyte, values)
     values, normalised = _normalised(ingest, element_labels, values, settings)
@@ -61,7 +63,7 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
         {
             **columns,
             "element": pa.DictionaryArray.from_arrays(
-                pa.array(element_labels.codes, pa.int32()), pa.array(element_labels.texts, pa.string())
+                pa.array(element_labels.codes), pa.array(element_labels.texts, pa.string())
             ),
             "value_ppm": values.value,
             "sigma_ppm": values.sigma,
@@ -79,7 +81,7 @@ def convert(ingest: pa.Table, *, settings: ConvertSettings) -> StageResult:
 
 def _analytes(ingest: pa.Table) -> tuple[Labels, list[str], FloatArray]:
     """The analytes in use, their elements, and the factor to ppm per analyte and unit."""
-    analyte, unit = labels(ingest, "analyte"), labels(ingest, "unit")
+    analyte, unit = narrow_labels(ingest, "analyte"), narrow_labels(ingest, "unit")
     elements, fractions = [], []
     for name in analyte.texts:
         try:
@@ -100,7 +102,9 @@ def _formula(analyte: str) -> str:
 
 def _element_labels(analyte: Labels, elements: list[str]) -> Labels:
     texts = sorted(set(elements))
-    position = np.array([texts.index(element) for element in elements], dtype=np.int64)
+    position = np.array(
+        [texts.index(element) for element in elements], dtype=code_type(len(texts)).to_pandas_dtype()
+    )
     return Labels(position[analyte.codes] if len(analyte.codes) else analyte.codes, tuple(texts))
 
 

@@ -8,11 +8,12 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import compress
 
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import FloatArray, IntArray, Labels, labels, spot_codes
+from tieline.arrays import FloatArray, IntArray, Labels, labels, portions, spot_codes
 from tieline.chemistry.formula import FormulaUnits, atoms_from_ppm, ferric_iron
 from tieline.chemistry.oxides import oxide_total, wt_percent_per_ppm
 from tieline.chemistry.phases import all_phases
@@ -21,6 +22,7 @@ from tieline.settings.chemistry import FormulaSettings
 from tieline.tables import build
 
 WHOLE_ABOVE_WT = 50.0
+SPOTS_AT_ONCE = 4096
 KEYS = ("spot", "table", "row", "technique", "experiment", "phase")
 
 # component -> (numerator element, elements of the sum); molar, total iron.
@@ -65,48 +67,49 @@ def formula_tables(
     atoms = np.full(whole.ppm.shape, np.nan)
     atom_sds = np.full(whole.ppm.shape, np.nan)
     for basis in np.unique(oxygens[np.isfinite(oxygens)]):
-        rows = np.flatnonzero(oxygens == basis)
-        units = atoms_from_ppm(whole.ppm[rows], whole.elements, float(basis), whole.sigma[rows])
-        atoms[rows], atom_sds[rows] = units.atoms, units.sigma
-        columns["cation_sum"][rows], columns["cation_sum_sd"][rows] = units.cation_sum, units.cation_sum_sigma
-        _ferric(columns, rows, units, ideal[rows])
+        of_basis = np.flatnonzero(oxygens == basis)
+        # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
+        for part in portions(len(of_basis), SPOTS_AT_ONCE):
+            rows = of_basis[part]
+            units = atoms_from_ppm(whole.ppm[rows], whole.elements, float(basis), whole.sigma[rows])
+            atoms[rows], atom_sds[rows] = units.atoms, units.sigma
+            columns["cation_sum"][rows] = units.cation_sum
+            columns["cation_sum_sd"][rows] = units.cation_sum_sigma
+            _ferric(columns, rows, units, ideal[rows])
     _components(columns, whole, phase)
     head = {name: ingest.column(name).take(pa.array(whole.rows)) for name in KEYS}
+    elements = whole.elements
+    del whole
     return {
         "convert.formula": build(CONVERT_FORMULA, {**head, **columns}),
-        "convert.cations": _cation_table(head, whole.elements, atoms, atom_sds),
+        "convert.cations": _cation_table(head, elements, atoms, atom_sds),
     }
 
 
 def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray) -> Whole:
     spot, first = spot_codes(ingest)
-    known = np.isfinite(value)
     share = wt_percent_per_ppm(element.texts) if element.texts else np.zeros(0)
-    parts = share[element.codes] if element.texts else np.zeros(0)
-    parts *= value
-    parts[~known] = 0.0
-    rough = np.bincount(spot, weights=parts, minlength=len(first))
-    chosen = np.flatnonzero(rough > WHOLE_ABOVE_WT)
-    place = np.full(len(first), -1)
-    place[chosen] = np.arange(len(chosen))
-    if len(chosen) < len(first):
-        known &= (rough > WHOLE_ABOVE_WT)[spot]
-    cells = np.flatnonzero(known)
-    codes = element.codes[cells]
-    in_use = np.flatnonzero(np.bincount(codes, minlength=len(element.texts)))
-    in_use = in_use[[element.texts[code] != "O" for code in in_use]]
-    elements = tuple(element.texts[code] for code in in_use)
-    column = np.full(len(element.texts), -1)
-    column[in_use] = np.arange(len(in_use))
-    columns = column[codes]
-    if columns.min(initial=0) < 0:
-        cells, columns = cells[columns >= 0], columns[columns >= 0]
+    rough = np.zeros(len(first))
+    for rows in portions(len(value)):
+        parts = np.nan_to_num(share[element.codes[rows]] * value[rows], posinf=0.0, neginf=0.0)
+        np.add.at(rough, spot[rows], parts)
+    is_whole = rough > WHOLE_ABOVE_WT
+    chosen = np.flatnonzero(is_whole)
+    place = np.cumsum(is_whole) - 1
+    used = np.zeros(len(element.texts), dtype=np.bool_)
+    for rows in portions(len(value)):
+        used[element.codes[rows][is_whole[spot[rows]] & np.isfinite(value[rows])]] = True
+    used &= np.array([text != "O" for text in element.texts], dtype=np.bool_)
+    column = np.cumsum(used) - 1
+    elements = tuple(compress(element.texts, used))
     shape = (len(chosen), len(elements))
     ppm, sigmas = np.full(shape, np.nan), np.full(shape, np.nan)
     # In reverse, so that of an element measured twice in one spot the first column stands.
-    cells = cells[::-1]
-    target = place[spot[cells]] * len(elements) + columns[::-1]
-    ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[cells], sigma[cells]
+    for rows in reversed(list(portions(len(value)))):
+        codes, spots = element.codes[rows], spot[rows]
+        cells = np.flatnonzero(is_whole[spots] & used[codes] & np.isfinite(value[rows]))[::-1]
+        target = place[spots[cells]] * len(elements) + column[codes[cells]]
+        ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[rows][cells], sigma[rows][cells]
     total = oxide_total(ppm, elements) if len(chosen) else np.zeros(0)
     weights = wt_percent_per_ppm(elements) if elements else np.zeros(0)
     total_sd = np.sqrt(np.sum((np.where(np.isnan(ppm), 0.0, sigmas) * weights) ** 2, axis=1))
@@ -149,18 +152,18 @@ def _components(columns: dict[str, FloatArray], whole: Whole, phase: np.ndarray)
     from tieline.chemistry.elements import atomic_weight
 
     weight = np.array([atomic_weight(name) for name in whole.elements])
-    moles = np.nan_to_num(whole.ppm) / weight if len(weight) else whole.ppm
-    sds = np.nan_to_num(whole.sigma) / weight if len(weight) else whole.sigma
     for name, (numerator, parts) in COMPONENTS.items():
         present = [whole.elements.index(part) for part in parts if part in whole.elements]
         if numerator not in whole.elements or len(present) < 2:
             continue
-        total = moles[:, present].sum(axis=1)
+        moles = np.nan_to_num(whole.ppm[:, present]) / weight[present]
+        sds = np.nan_to_num(whole.sigma[:, present]) / weight[present]
+        total = moles.sum(axis=1)
         safe = np.where(total > 0, total, np.nan)
         own = whole.elements.index(numerator)
-        share = moles[:, own] / safe
+        share = moles[:, present.index(own)] / safe
         slope = (np.array(present) == own)[None, :] - share[:, None]
-        sd = np.sqrt(np.sum((slope * sds[:, present]) ** 2, axis=1)) / safe
+        sd = np.sqrt(np.sum((slope * sds) ** 2, axis=1)) / safe
         fits = _fits(name, phase)
         columns[name], columns[f"{name}_sd"] = np.where(fits, share, np.nan), np.where(fits, sd, np.nan)
 
@@ -180,13 +183,14 @@ def _number_columns() -> tuple[str, ...]:
 def _cation_table(
     head: dict[str, pa.ChunkedArray], elements: tuple[str, ...], atoms: FloatArray, sds: FloatArray
 ) -> pa.Table:
-    spot, element = np.nonzero(np.isfinite(atoms))
+    measured = np.isfinite(atoms)
+    spot, element = (places.astype(np.int32) for places in np.nonzero(measured))
     return build(
         CONVERT_CATIONS,
         {
             **{name: column.take(pa.array(spot)) for name, column in head.items()},
-            "element": Labels(element, elements).array(),
-            "cations": atoms[spot, element],
-            "cations_sd": sds[spot, element],
+            "element": pa.DictionaryArray.from_arrays(pa.array(element), pa.array(elements, pa.string())),
+            "cations": atoms[measured],
+            "cations_sd": sds[measured],
         },
     )

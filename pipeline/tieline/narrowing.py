@@ -1,4 +1,4 @@
-"""Tables as small in memory as they can be: narrow label codes, columns in one piece.
+"""Tables as small in memory as they can be: narrow label codes, in one piece.
 
 A long table has eight million rows and a dozen label columns, most with fewer than 128 texts: codes of one byte instead
 of four. Arrow's functions and `arrays` take codes of any width.
@@ -22,9 +22,10 @@ def is_label(kind: pa.DataType) -> bool:
 
 
 def compact(table: pa.Table) -> pa.Table:
-    """The same values with narrow label codes, and numbers and labels in one piece.
+    """The same values with narrow label codes, and labels and counts in one piece.
 
-    Parts that several columns share, such as codes of columns that say the same in every row, stay shared.
+    Numbers that come in pieces, as from the blocks of a file, stay so: joining them holds them twice. Parts that several
+    columns share, such as codes of columns that say the same in every row, stay shared.
     """
     known: dict[Hashable, pa.Array] = {}
     for position, field in enumerate(table.schema):
@@ -36,12 +37,12 @@ def compact(table: pa.Table) -> pa.Table:
 
 def _compact_column(column: pa.ChunkedArray, known: dict[Hashable, pa.Array]) -> pa.Array | None:
     """The column in one narrow piece; None where it is already, or better left in pieces."""
-    if column.num_chunks == 0 or pa.types.is_string(column.type):
+    if column.num_chunks == 0:
         return None
+    if pa.types.is_integer(column.type):
+        return column.combine_chunks() if column.num_chunks > 1 else None
     if not is_label(column.type):
-        # Pieces without any value are slices of one.
-        in_pieces = column.num_chunks > 1 and column.null_count < len(column)
-        return column.combine_chunks() if in_pieces else None
+        return None
     chunks = column.unify_dictionaries().chunks if column.num_chunks > 1 else column.chunks
     texts = chunks[0].dictionary
     narrow = code_type(len(texts))

@@ -16,9 +16,8 @@ from tieline.arrays import (
     group_table,
     is_labelled,
     labels,
-    narrow_codes,
+    narrow_labels,
     numbers,
-    one_array,
     spot_codes,
 )
 from tieline.columns import PAIR_TECHNIQUES, PAIRS
@@ -38,7 +37,7 @@ def with_parts(convert: pa.Table, settings: PairSettings) -> tuple[pa.Table, dic
     """
     name = settings.local if settings.local != "none" else settings.separate
     if name == "none":
-        return convert, {text: text for text in narrow_codes(one_array(convert.column("phase"))).texts}
+        return convert, {text: text for text in narrow_labels(convert, "phase").texts}
     phase = labels(convert, "phase")
     part = labels(convert, name)
     whole = (

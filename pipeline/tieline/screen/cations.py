@@ -11,9 +11,11 @@ from tieline.chemistry.formula import atoms_from_ppm, ferric_iron
 from tieline.chemistry.phases import PHASES
 from tieline.screen.findings import spot_findings
 from tieline.screen.groups import FOUND, NOT_FOUND, TestResult, Verdict
+from tieline.screen.padding import few_rows
 from tieline.screen.session import Session
 from tieline.screen.whole_analyses import WholeAnalyses
 from tieline.settings.screen import CationRule, CationSettings
+from tieline.statistics.threads import side_by_side
 
 
 @dataclass(frozen=True)
@@ -80,6 +82,18 @@ def _against_rule(
     analyses: WholeAnalyses, rows: IntArray, rule: CationRule, ferric: bool, sigmas: float
 ) -> tuple[FloatArray, BoolArray, BoolArray]:
     """Sums and their uncertainties (2, rows), and which are too low and too high."""
+
+    def of_part(part: slice) -> tuple[FloatArray, BoolArray, BoolArray]:
+        return _few_against_rule(analyses, rows[part], rule, ferric, sigmas)
+
+    parts = side_by_side(of_part, list(few_rows(len(rows), len(analyses.elements))))
+    sums, low, high = zip(*parts, strict=True)
+    return np.concatenate(sums, axis=1), np.concatenate(low), np.concatenate(high)
+
+
+def _few_against_rule(
+    analyses: WholeAnalyses, rows: IntArray, rule: CationRule, ferric: bool, sigmas: float
+) -> tuple[FloatArray, BoolArray, BoolArray]:
     columns = np.array([at for at, element in enumerate(analyses.elements) if element != "O"])
     units = atoms_from_ppm(
         analyses.value[np.ix_(rows, columns)],

@@ -6,15 +6,14 @@ elements, less their mean, so that a wrong total or yield moves nothing.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, portions
+from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.screen.findings import spot_findings
 from tieline.screen.groups import TestResult
-from tieline.screen.padding import FEW_CELLS
+from tieline.screen.padding import few_rows
 from tieline.screen.session import Session
 from tieline.screen.whole_analyses import WholeAnalyses
 from tieline.settings.screen import IdentitySettings
@@ -86,15 +85,11 @@ def _log_ratios(analyses: WholeAnalyses) -> FloatArray:
     value = analyses.value
     kept = np.isfinite(value).mean(axis=0) >= 0.5
     logs = np.empty((len(value), np.count_nonzero(kept)), order="F")
-    for rows in _portions(value):
+    for rows in few_rows(*value.shape):
         part = value[rows][:, kept]
         known = np.isfinite(part)
         logs[rows] = np.where(known, np.log(np.maximum(np.where(known, part, floor), floor)), np.nan)
     return logs
-
-
-def _portions(values: FloatArray) -> Iterator[slice]:
-    return portions(len(values), max(1, FEW_CELLS // max(1, values.shape[1])))
 
 
 def _distances(logs: FloatArray, own: IntArray, n_phases: int) -> _Distances:
@@ -105,7 +100,7 @@ def _distances(logs: FloatArray, own: IntArray, n_phases: int) -> _Distances:
         if rows.sum() < FEWEST_SPOTS:
             continue
         centre = _medians(logs[rows])
-        for part in _portions(logs):
+        for part in few_rows(*logs.shape):
             distance[part, code] = _distance(logs[part], centre)
         known = distance[rows, code]
         known = known[np.isfinite(known)]

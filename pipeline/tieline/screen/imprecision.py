@@ -7,12 +7,12 @@ from collections.abc import Iterable
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, portions
+from tieline.arrays import BoolArray
 from tieline.results import Remark
 from tieline.screen.composition import SIGMAS_PER_LIMIT, group_medians, values_for_tests
 from tieline.screen.findings import Findings, joined
 from tieline.screen.groups import CANNOT_TELL, TestResult, Verdict
-from tieline.screen.padding import FEW_CELLS
+from tieline.screen.padding import few_rows
 from tieline.screen.session import Measured, Session
 from tieline.settings.screen import ImpreciseSettings
 from tieline.statistics.threads import side_by_side
@@ -31,8 +31,7 @@ def imprecision_result(
     treated as such later; it is not remarked here. Dropping imprecise values prefers high ones and biases
     the mean, which is why the default only marks.
     """
-    spots_at_once = max(1, FEW_CELLS // max(1, len(measured.analytes)))
-    parts = [measured.part(rows) for rows in portions(len(measured.spots), spots_at_once)]
+    parts = [measured.part(rows) for rows in few_rows(*measured.value.shape)]
     findings = joined("imprecise", side_by_side(lambda part: _imprecise_values(part, settings), parts))
     verdicts = tuple(_hidden_by_limits(session, measured, melt_phase))
     return TestResult((findings,), verdicts)

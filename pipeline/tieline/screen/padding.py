@@ -8,13 +8,21 @@ from typing import Protocol
 
 import numpy as np
 
-from tieline.arrays import BoolArray, FloatArray, IntArray
+from tieline.arrays import BoolArray, FloatArray, IntArray, portions
 from tieline.screen.session import Measured
 
 # Cells of one block: keeps the working memory of a test to some tens of megabytes.
 CELLS_AT_ONCE = 2_000_000
 # The same for tests that need a dozen arrays of every block: these stay in the processor's cache.
 FEW_CELLS = 200_000
+
+
+def few_rows(n_rows: int, width: int) -> Iterator[slice]:
+    """Portions of a matrix of so many rows that a dozen arrays of one stay in the processor's cache.
+
+    Their starts are multiples of eight, where a matrix product does the same as over all rows.
+    """
+    return portions(n_rows, max(8, FEW_CELLS // max(1, width) // 8 * 8))
 
 
 class Rows(Protocol):

@@ -22,9 +22,8 @@ from tieline.arrays import (
     flags,
     group_rows,
     labels,
-    narrow_codes,
+    narrow_labels,
     numbers,
-    one_array,
     portions,
     spot_codes,
 )
@@ -106,7 +105,7 @@ class Session:
 def session_of(convert: pa.Table, concentrations: Concentrations) -> Session:
     """The matrices of a `convert` table with its calibrated concentrations."""
     spots = _spots(convert)
-    analyte, element = (narrow_codes(one_array(convert.column(name))) for name in ("analyte", "element"))
+    analyte, element = (narrow_labels(convert, name) for name in ("analyte", "element"))
     below = flags(convert, "below_limit")
     techniques = []
     for code, name in enumerate(spots.technique.texts):

@@ -11,6 +11,7 @@ import pyarrow as pa
 from tieline.arrays import BoolArray
 from tieline.columns import SCREEN, VALUE_KEYS
 from tieline.correction import calibrated
+from tieline.memory import return_unused_memory
 from tieline.narrowing import no_numbers
 from tieline.reading.input_file import InputFile
 from tieline.results import Remark, StageResult
@@ -122,6 +123,8 @@ def _tests(session: Session, settings: ScreenSettings) -> tuple[list[TestResult]
             results.append(TestResult(tuple(not_unmixed)))
     results.append(zoning.result)
     dropped = _dropped(session, results)
+    del overlaps, scored
+    return_unused_memory()
     for measured in session.techniques:
         if settings.outlier.enabled:
             results.append(outlier_result(session, measured, dropped, settings.outlier))

@@ -6,10 +6,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from tieline.arrays import BoolArray, FloatArray, IntArray, portions
+from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.chemistry.oxides import oxide_total, wt_percent_per_ppm
-from tieline.screen.padding import FEW_CELLS
+from tieline.screen.padding import few_rows
 from tieline.screen.session import Measured
+from tieline.statistics.threads import side_by_side
 
 # Preferred columns where an element is reported several times: total iron, then oxides, elements, isotopes.
 _TOTAL_IRON = ("FeOT", "Fe2O3T", "FeO", "Fe2O3")
@@ -44,9 +45,16 @@ def whole_analyses(measured: Measured, min_oxides: int, incomplete_below: float)
     counted = [position for position, element in enumerate(elements) if element != "O"]
     names = [elements[position] for position in counted]
     factor = wt_percent_per_ppm(names)
-    total = oxide_total(value[:, counted], names)
-    total_sd = np.sqrt(np.nan_to_num(sigma[:, counted]) ** 2 @ factor**2)
-    complete = np.isfinite(value[:, counted]).sum(axis=1) >= min_oxides
+    total, total_sd = np.empty((2, len(value)))
+    complete = np.empty(len(value), dtype=np.bool_)
+
+    def add_up(rows: slice) -> None:
+        oxides = value[rows][:, counted]
+        total[rows] = oxide_total(oxides, names)
+        total_sd[rows] = np.sqrt(np.nan_to_num(sigma[rows][:, counted]) ** 2 @ factor**2)
+        complete[rows] = np.isfinite(oxides).sum(axis=1) >= min_oxides
+
+    side_by_side(add_up, list(few_rows(*value.shape)))
     median_total = float(np.median(total[complete])) if complete.any() else float("nan")
     if not median_total >= incomplete_below:
         complete = np.zeros_like(complete)
@@ -59,7 +67,8 @@ def one_column_per_element(measured: Measured) -> tuple[tuple[str, ...], FloatAr
     value = np.full((len(measured.value), len(elements)), np.nan)
     sigma = np.full_like(value, np.nan)
     columns = [(column, elements.index(measured.elements[column])) for column in _by_preference(measured)]
-    for rows in portions(len(value), max(1, FEW_CELLS // max(1, len(elements)))):
+
+    def fill(rows: slice) -> None:
         part = measured.part(rows)
         only_limit = part.only_limit
         values = np.where(only_limit, 0.5 * part.limit, part.value)
@@ -68,6 +77,8 @@ def one_column_per_element(measured: Measured) -> tuple[tuple[str, ...], FloatAr
             wanted = ~np.isfinite(value[rows, position])
             value[rows, position] = np.where(wanted, values[:, column], value[rows, position])
             sigma[rows, position] = np.where(wanted, sigmas[:, column], sigma[rows, position])
+
+    side_by_side(fill, list(few_rows(*measured.value.shape)))
     return elements, value, sigma
 
 
