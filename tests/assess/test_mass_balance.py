@@ -5,8 +5,11 @@ import pandas as pd
 import pytest
 
 from assess.frames import partition
-from tieline.assess.bulk import Modes, bulk_partition
+from tieline.assess.bulk import Modes, bulk_partition, modes_of_mixture
 from tieline.assess.mass_balance import mass_balance_tables
+from tieline.statistics.mass_balance import mix
+from tieline.statistics.means import phase_means
+from tieline.statistics.ratios import ratio_interval
 
 # invented element contents, ppm
 CONTENTS = {
@@ -250,3 +253,36 @@ def test_every_experiment_and_denominator_has_its_own():
     )
     found = bulk_partition(table, modes())
     assert list(zip(found["experiment"], found["beta"], strict=True)) == [("A", "fluid"), ("A", "glass")]
+
+
+def test_bulk_coefficients_cover():
+    """Six spots per phase, 3 % apart; proportions from a mass balance with errors as stated; glass common to both crystals."""
+    rng = np.random.default_rng(3)
+    phases, names = ("clinopyroxene", "glass", "olivine"), ["Si", "Mg", "Ca", "Al", "Ti"]
+    contents = np.array([[CONTENTS[phase][element] for phase in phases] for element in names])
+    truth = np.array([TRUTH[phase] for phase in phases])
+    D = {"La": (0.06, 0.001), "Cr": (5.0, 0.7)}
+    sizes = np.array([[d1 * 30, 30, d2 * 30] for d1, d2 in D.values()])
+    hits, cases = np.zeros(2), 150
+    for _ in range(cases):
+        errors = 0.006 * contents
+        mixture = mix(
+            contents @ truth * (1 + 0.01 * rng.standard_normal(5)), 0.01 * contents @ truth,
+            contents + errors * rng.standard_normal(contents.shape), errors,
+        )  # fmt: skip
+        spots = sizes[:, :, None] * (1 + 0.03 * rng.standard_normal((2, 3, 6)))
+        found = phase_means(spots.ravel(), np.full(36, np.nan), np.repeat(np.arange(6), 6), 6)
+        alpha, beta = found.estimate(np.array([0, 2, 3, 5])), found.estimate(np.array([1, 1, 4, 4]))
+        made = ratio_interval(alpha, beta)
+        table = pd.DataFrame(
+            {
+                "experiment": "A", "alpha": ["clinopyroxene", "olivine"] * 2, "beta": "glass", "kind": made.kind,
+                "element": ["La", "La", "Cr", "Cr"], "D": made.value, "D_sd": made.sd, "D_lo": made.low, "D_hi": made.high,
+                "common_sd": np.sqrt(beta.variance) / beta.mean,
+            }
+        )  # fmt: skip
+        bulk = bulk_partition(table, {"A": modes_of_mixture(phases, mixture)}).set_index("element")
+        for place, (element, (d1, d2)) in enumerate(D.items()):
+            true = (truth[0] * d1 + truth[2] * d2) / (truth[0] + truth[2])
+            hits[place] += bulk.loc[element, "bulk_D_lo"] <= true <= bulk.loc[element, "bulk_D_hi"]
+    assert np.all(hits / cases > 0.95 - 3.5 * np.sqrt(0.95 * 0.05 / cases))
