@@ -8,9 +8,9 @@ import numpy as np
 import pytest
 from matplotlib.figure import Figure
 
+from tieline.report.evidence_data import balance_data, exchange_data, trend_data
 from tieline.report.evidence_figures import evidence_pictures
 from tieline.report.source import Source
-from tieline.report.trend_data import trend_data
 
 
 def drawn(source: Source) -> dict[str, Figure]:
@@ -81,3 +81,15 @@ def test_the_page_has_every_point_of_a_trend(ember_source: Source):
     assert nickel["D"][0] == pytest.approx(np.exp(row["ln_D"]), rel=1e-4)
     assert nickel["hi"][0] == pytest.approx(np.exp(row["ln_D"] + row["ln_D_sd"]), rel=1e-2)
     assert len(nickel["line"]) == 2
+
+
+def test_the_page_has_the_exchange_and_the_balance(ember_source: Source):
+    exchange = ember_source.table("assess.exchange").to_pylist()
+    assert [one["K_D"] for one in exchange_data(ember_source)] == [row["K_D"] for row in exchange]
+    olivine = next(one for one in exchange_data(ember_source) if one["pair"] == "olivine/glass")
+    assert olivine["window"] == pytest.approx([0.27, 0.33])
+    balance = {(one["experiment"], one["element"]): one for one in balance_data(ember_source)}
+    for row in ember_source.table("assess.balance").to_pylist():
+        one = balance[row["experiment"], row["element"]]
+        assert one["sigmas"] == row["sigmas"]
+        assert one["loss"][0] == (None if row["loss"] is None else pytest.approx(100 * row["loss"]))

@@ -74,7 +74,7 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         ranges=any(
             one["expected_lo"] is not None and one["expected_hi"] is not None for one in data["checks"]
         ),
-        trends=bool(data["trends"]),
+        drawn={name: bool(data[name]) for name in ("trends", "exchange", "balance")},
         effects=_effects(source),
         leaning=leaning_remarks(source.tables) if source.rulings else [],
         by_test=_reasons("test", by_test(spots)),

@@ -14,10 +14,10 @@ from tieline.chemistry.phases import PHASES
 from tieline.chemistry.radii import ionic_radius, usual_charges
 from tieline.notation import written
 from tieline.report.compact import coded, columns_of, finite, rounded
+from tieline.report.evidence_data import balance_data, exchange_data, trend_data
 from tieline.report.source import Source, optional_table
 from tieline.report.spots import SpotUse
 from tieline.report.sums import formula_sums
-from tieline.report.trend_data import trend_data
 
 # Digits in pictures and in the list of one spot's values; the D's keep all of theirs.
 VALUE_DIGITS, SIGMA_DIGITS = 5, 3
@@ -45,6 +45,7 @@ def page_data(source: Source, spots: SpotUse, curves: Sequence[Curve] = ()) -> d
     return {
         "session": source.title,
         "confidence": source.confidence,
+        "assessConfidence": source.settings.assess.confidence,
         "compatibleAbove": classify.compatible_above,
         "highlyBelow": classify.highly_incompatible_below,
         "spots": _spots(spots),
@@ -65,6 +66,8 @@ def page_data(source: Source, spots: SpotUse, curves: Sequence[Curve] = ()) -> d
         "checks": _checks(source),
         "curves": [_curve(curve) for curve in curves],
         "trends": trend_data(source),
+        "exchange": exchange_data(source),
+        "balance": balance_data(source),
         "rulings": [
             [one.spot, one.analyte, one.verdict, one.analyst, one.date, one.reason, one.table]
             for one in source.rulings

@@ -292,3 +292,48 @@ PICTURES.trend = () => {
     note: found ? `Bars are one standard uncertainty.${found.p !== null ? ` Scatter about the line at least as large by chance: p ${number(found.p, 2)}.` : ""}${left}` : "Not enough experiments have a D of this element.",
   };
 };
+
+PICTURES.exchange = () => {
+  const rows = DATA.exchange.filter((one) => one.pair === chosen.pair), elements = unique(rows.map((one) => one.elements)), marks = [];
+  const experiments = EXPERIMENTS.filter((name) => rows.some((one) => one.experiment === name));
+  for (const one of rows) {
+    marks.push({ x: experiments.indexOf(one.experiment), y: one.K_D, lo: one.ends[0], hi: one.ends[1], ...styleOf(elements.indexOf(one.elements)), faint: chosen.experiment && one.experiment !== chosen.experiment, go: { experiment: one.experiment }, label: `${one.experiment}: K_D(${one.elements}) ${number(one.K_D)}, ${number(one.ends[0])} to ${number(one.ends[1])}; ${one.verdict}` });
+  }
+  const windows = rows.filter((one) => known(one.window[0]));
+  const bands = unique(windows.map((one) => one.window.join(" "))).map((text) => text.split(" ").map(Number)).map(([y0, y1]) => ({ y0, y1, class: "window", label: "expected" }));
+  const heights = [...marks.flatMap((mark) => [mark.y, mark.lo, mark.hi]), ...bands.flatMap((band) => [band.y0, band.y1])];
+  return {
+    label: `exchange coefficients, ${chosen.pair}`, height: 300, marks, bands, x: { title: "experiment", categories: experiments },
+    y: axis(`K_D ${chosen.pair}`, heights, Math.max(...heights) > 10 * Math.min(...heights.filter((y) => y > 0))),
+    legend: [...elements.map((name, at) => ({ ...styleOf(at), label: name })), ...(bands.length ? [{ band: "window", label: "expected range" }] : [])],
+    note: rows.length ? `Bars are ${percent(DATA.assessConfidence)} intervals.${windows.length ? "" : " No range is known for this pair."}` : "No exchange coefficient of this pair.",
+  };
+};
+
+/** The mass balance of the chosen experiment or of all: one mark per element and experiment. */
+function balanceMarks(rows, elements, of) {
+  const experiments = EXPERIMENTS.filter((name) => rows.some((one) => one.experiment === name));
+  const spread = (name) => (experiments.length > 1 ? (experiments.indexOf(name) / (experiments.length - 1) - 0.5) * 20 : 0);
+  const marks = rows.map((one) => ({ x: elements.indexOf(one.element), shift: spread(one.experiment), ...of(one), ...styleOf(EXPERIMENTS.indexOf(one.experiment)), go: { experiment: one.experiment } }));
+  return { marks, legend: experiments.map((name) => ({ ...styleOf(EXPERIMENTS.indexOf(name)), label: name })) };
+}
+const balanceRows = () => DATA.balance.filter((one) => !chosen.experiment || one.experiment === chosen.experiment);
+
+PICTURES.balance = () => {
+  const rows = balanceRows().filter((one) => known(one.sigmas)), elements = unique(rows.map((one) => one.element)).sort();
+  const { marks, legend } = balanceMarks(rows, elements, (one) => ({ y: one.sigmas, label: `${one.experiment} ${one.element}: start less phases ${number(one.sigmas, 3)} standard deviations` }));
+  return {
+    label: "residuals of the mass balance", height: 300, marks, bands: [{ y0: -2, y1: 2, class: "window", label: "within 2" }], x: { title: "element", categories: elements },
+    y: axis("start less phases, sd", [...marks.map((mark) => mark.y), -2.5, 2.5]), legend: [...legend, { band: "window", label: "within 2" }],
+    note: "Above: the phases hold too little, one rich in the element may be missing.",
+  };
+};
+
+PICTURES.losses = () => {
+  const rows = balanceRows().filter((one) => known(one.loss[0])), elements = unique(rows.map((one) => one.element)).sort();
+  const { marks, legend } = balanceMarks(rows, elements, (one) => ({ y: one.loss[0], lo: one.loss[1], hi: one.loss[2], label: `${one.experiment} ${one.element}: ${number(one.loss[0], 3)} % lost, ${number(one.loss[1], 3)} to ${number(one.loss[2], 3)} %` }));
+  return {
+    label: "losses", height: 300, marks, lines: marks.length ? [{ points: [[-0.5, 0], [elements.length - 0.5, 0]], class: "bound", label: "" }] : [], x: { title: "element kept out of the fit", categories: elements },
+    y: axis("lost, % of the start", marks.flatMap((mark) => [mark.y, mark.lo, mark.hi, 0])), legend, note: `Bars are ${percent(DATA.assessConfidence)} intervals.`,
+  };
+};

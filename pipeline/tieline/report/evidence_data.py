@@ -1,4 +1,4 @@
-"""D against conditions, with the fitted lines, for the page."""
+"""What the page draws of the evidence: D against conditions, exchange coefficients, and the mass balance."""
 
 from __future__ import annotations
 
@@ -48,3 +48,32 @@ def _entry(trend: dict[str, Any], points: list[dict[str, Any]]) -> dict[str, Any
         entry["line"] = rounded(np.exp(trend["intercept"] + trend["slope"] * ends), DIGITS)
         entry["p"] = trend["p_value"]
     return entry
+
+
+def exchange_data(source: Source) -> list[dict[str, Any]]:
+    """Every exchange coefficient with an interval: pair of phases, elements, value, ends, window and verdict."""
+    table = optional_table(source, "assess.exchange")
+    rows = [] if table is None else table.to_pylist()
+    return [
+        {
+            "pair": f"{row['alpha']}/{row['beta']}",
+            "elements": f"{row['first']}–{row['second']}",
+            **{name: row[name] for name in ("experiment", "verdict")},
+            "K_D": row["K_D"],
+            "ends": [row["K_D_lo"], row["K_D_hi"]],
+            "window": [row["window_lo"], row["window_hi"]],
+        }
+        for row in rows
+        if row["K_D"] is not None and row["K_D_hi"] is not None
+    ]
+
+
+def balance_data(source: Source) -> list[dict[str, Any]]:
+    """Every element of every mass balance: the residual in standard deviations, or the loss in % with its interval."""
+    table = optional_table(source, "assess.balance")
+    rows = [] if table is None else table.to_pylist()
+    return [
+        {"experiment": row["experiment"], "element": row["element"], "sigmas": row["sigmas"],
+         "loss": [None if row[name] is None else 100 * row[name] for name in ("loss", "loss_lo", "loss_hi")]}
+        for row in rows
+    ]  # fmt: skip
