@@ -99,7 +99,7 @@ def _distances(logs: FloatArray, own: IntArray, n_phases: int) -> _Distances:
         rows = own == code
         if rows.sum() < FEWEST_SPOTS:
             continue
-        centre = _medians(logs[rows])
+        centre = _medians(logs, rows)
         for part in few_rows(*logs.shape):
             distance[part, code] = _distance(logs[part], centre)
         known = distance[rows, code]
@@ -119,13 +119,11 @@ def _distance(logs: FloatArray, centre: FloatArray) -> FloatArray:
     return np.where(count >= FEWEST_ELEMENTS, np.sqrt(squares / np.maximum(count, 1)), np.nan)
 
 
-def _medians(values: FloatArray) -> FloatArray:
-    """Median of every column (p,), NaN where fewer than three values are known."""
-    present: BoolArray = np.isfinite(values)
-    count = present.sum(axis=0)
-    ordered = np.sort(np.where(present, values, np.inf), axis=0)
-    columns = np.arange(values.shape[1])
-    low = ordered[np.maximum(count - 1, 0) // 2, columns]
-    high = ordered[np.minimum(count // 2, len(values) - 1), columns]
-    enough = count >= FEWEST_SPOTS
-    return np.where(enough, 0.5 * (np.where(enough, low, 0.0) + np.where(enough, high, 0.0)), np.nan)
+def _medians(values: FloatArray, rows: BoolArray) -> FloatArray:
+    """Median of every column (p,) over some rows, NaN where fewer than three values are known."""
+    medians = np.full(values.shape[1], np.nan)
+    for column in range(values.shape[1]):
+        known = values[rows & np.isfinite(values[:, column]), column]
+        if len(known) >= FEWEST_SPOTS:
+            medians[column] = np.median(known)
+    return medians

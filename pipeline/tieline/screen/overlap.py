@@ -31,14 +31,14 @@ GLASS_OVERLAP, CRYSTAL_OVERLAP = "glass-overlap", "crystal-overlap"
 class Scored:
     """One block of groups with the scores of its spots against one contaminant each.
 
+    tested: what was scored, made again where it is needed, for all of it together is as large as the session.
     contaminant (G,): numbers of the contaminant's groups; contaminant_mean (G, p).
     """
 
     code: str
     measured: Measured
     block: Block
-    values: FloatArray
-    sigmas: FloatArray
+    tested: TestValues
     is_trace: BoolArray
     contaminant: IntArray
     contaminant_mean: FloatArray
@@ -135,7 +135,7 @@ def _score(
                 p_limit=settings.something_else_p,
             )
             scored.append(
-                Scored(code, measured, block, value, sigma, is_trace, contaminant, mean, variance, scores)
+                Scored(code, measured, block, values, is_trace, contaminant, mean, variance, scores)
             )
     return scored
 

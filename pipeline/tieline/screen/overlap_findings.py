@@ -219,7 +219,9 @@ def _something_else(session: Session, part: Scored, at: Places) -> list[str]:
     groups, scores = at[0], part.scores
     mixture = scores.level[groups] + np.nan_to_num(scores.fraction[at])[:, None] * scores.contrast[groups]
     harmless = np.einsum("kpi,ki->kp", scores.nuisance[groups], np.nan_to_num(scores.nuisance_amplitude[at]))
-    off = (part.values[at] - mixture - harmless) / np.sqrt(scores.spot_variance[groups])
+    off = (part.tested.value[part.block.rows[at]] - mixture - harmless) / np.sqrt(
+        scores.spot_variance[groups]
+    )
     off = np.where(np.isfinite(off), off, 0.0)
     most = np.argsort(-np.abs(off), axis=1, kind="stable")[:, :NAMED_ELEMENTS]
     texts = []

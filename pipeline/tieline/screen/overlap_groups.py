@@ -137,7 +137,8 @@ def _verdict(
     visible = {entry: float(facts[entry[0]].visible[entry[1]]) for entry in entries}
     visible = {entry: fraction for entry, fraction in visible.items() if math.isfinite(fraction)}
     if not judged or not visible:
-        size = int(np.isfinite(part.values[place]).any(axis=1).sum())
+        rows = part.block.rows[place]
+        size = int(np.isfinite(part.tested.value[rows[rows >= 0]]).any(axis=1).sum())
         reason = (
             "fewer than 3 spots"
             if size < FEWEST_CLEAN

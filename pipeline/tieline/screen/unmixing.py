@@ -75,7 +75,7 @@ def _unmix(part: Scored, chosen: Chosen, cells: FloatArray, settings: OverlapSet
     has_value = np.isfinite(measured.value[row])
     tracer = used & (np.nan_to_num(scores.weight_share[group]) >= settings.tracer_share)
     unmixed = has_value & used & ~tracer
-    own = np.fmax(scores.spot_variance[group], part.sigmas[group, spot] ** 2)
+    own = np.fmax(scores.spot_variance[group], part.tested.sigma[part.block.rows[group, spot]] ** 2)
     own = own + fraction**2 * part.contaminant_variance[group] + fraction_sd**2 * contrast**2
     level_sd = np.sqrt(scores.level_fraction_variance[group])[:, None]
     at = measured.spots[row][:, None], measured.analyte_codes[None, :]

@@ -126,7 +126,7 @@ def _judge(
     by_distance = np.isfinite(distance).sum(axis=1) >= np.isfinite(zone).sum(axis=1)
     place = np.where(by_distance[:, None], distance, zone)
     scores = zoning_scores(
-        part.values,
+        part.block.of(part.tested.value),
         part.scores.level,
         part.contaminant_mean,
         part.scores.spot_variance,
