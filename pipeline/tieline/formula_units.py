@@ -6,11 +6,12 @@ than `WHOLE_ABOVE_WT`; trace tables have no formula.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from itertools import compress
 
 import numpy as np
+import numpy.typing as npt
 import pyarrow as pa
 
 from tieline.arrays import FloatArray, IntArray, Labels, labels, portions, spot_codes
@@ -19,7 +20,8 @@ from tieline.chemistry.oxides import oxide_total, wt_percent_per_ppm
 from tieline.chemistry.phases import all_phases
 from tieline.columns import CONVERT_CATIONS, CONVERT_FORMULA
 from tieline.settings.chemistry import FormulaSettings
-from tieline.tables import build
+from tieline.statistics.threads import side_by_side
+from tieline.tables import build, empty
 
 WHOLE_ABOVE_WT = 50.0
 SPOTS_AT_ONCE = 4096
@@ -52,6 +54,16 @@ class Whole:
     total_sd: FloatArray
 
 
+@dataclass(frozen=True)
+class Cations:
+    """Atoms per formula with their uncertainty; `spot` counts the whole analyses, `element` their elements; (k,) each."""
+
+    spot: npt.NDArray[np.int32]
+    element: npt.NDArray[np.int32]
+    atoms: FloatArray
+    sds: FloatArray
+
+
 def formula_tables(
     ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray, settings: FormulaSettings
 ) -> dict[str, pa.Table]:
@@ -64,26 +76,36 @@ def formula_tables(
     oxygens, ideal = _bases(phase, settings)
     columns = {name: np.full(len(whole.rows), np.nan) for name in _number_columns()}
     columns["total_wt"], columns["total_sd_wt"], columns["oxygens"] = whole.total, whole.total_sd, oxygens
-    atoms = np.full(whole.ppm.shape, np.nan)
-    atom_sds = np.full(whole.ppm.shape, np.nan)
-    for basis in np.unique(oxygens[np.isfinite(oxygens)]):
-        of_basis = np.flatnonzero(oxygens == basis)
-        # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
-        for part in portions(len(of_basis), SPOTS_AT_ONCE):
-            rows = of_basis[part]
-            units = atoms_from_ppm(whole.ppm[rows], whole.elements, float(basis), whole.sigma[rows])
-            atoms[rows], atom_sds[rows] = units.atoms, units.sigma
-            columns["cation_sum"][rows] = units.cation_sum
-            columns["cation_sum_sd"][rows] = units.cation_sum_sigma
-            _ferric(columns, rows, units, ideal[rows])
+    # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
+    parts = list(portions(len(whole.rows), SPOTS_AT_ONCE))
+    cations = side_by_side(lambda part: _cations(columns, whole, part, oxygens, ideal), parts)
     _components(columns, whole, phase)
     head = {name: ingest.column(name).take(pa.array(whole.rows)) for name in KEYS}
     elements = whole.elements
     del whole
     return {
         "convert.formula": build(CONVERT_FORMULA, {**head, **columns}),
-        "convert.cations": _cation_table(head, elements, atoms, atom_sds),
+        "convert.cations": _cation_table(head, elements, cations),
     }
+
+
+def _cations(
+    columns: dict[str, FloatArray], whole: Whole, part: slice, oxygens: FloatArray, ideal: FloatArray
+) -> Cations:
+    """The atoms per formula of some spots, whose sums and ferric iron go into `columns`."""
+    atoms, sds = np.full((2, part.stop - part.start, len(whole.elements)), np.nan)
+    for basis in np.unique(oxygens[part][np.isfinite(oxygens[part])]):
+        own = np.flatnonzero(oxygens[part] == basis)
+        rows = part.start + own
+        units = atoms_from_ppm(whole.ppm[rows], whole.elements, float(basis), whole.sigma[rows])
+        atoms[own], sds[own] = units.atoms, units.sigma
+        columns["cation_sum"][rows] = units.cation_sum
+        columns["cation_sum_sd"][rows] = units.cation_sum_sigma
+        _ferric(columns, rows, units, ideal[rows])
+    measured = np.isfinite(atoms)
+    spot, element = (places.astype(np.int32) for places in np.nonzero(measured))
+    spot += np.int32(part.start)
+    return Cations(spot, element, atoms[measured], sds[measured])
 
 
 def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray) -> Whole:
@@ -181,16 +203,22 @@ def _number_columns() -> tuple[str, ...]:
 
 
 def _cation_table(
-    head: dict[str, pa.ChunkedArray], elements: tuple[str, ...], atoms: FloatArray, sds: FloatArray
+    head: dict[str, pa.ChunkedArray], elements: tuple[str, ...], parts: Sequence[Cations]
 ) -> pa.Table:
-    measured = np.isfinite(atoms)
-    spot, element = (places.astype(np.int32) for places in np.nonzero(measured))
+    def column(name: str) -> pa.ChunkedArray:
+        return pa.chunked_array(
+            [pa.array(getattr(part, name), from_pandas=True) for part in parts], pa.float64()
+        )
+
+    if not parts:
+        return empty(CONVERT_CATIONS)
+    spot, element = (np.concatenate([getattr(part, name) for part in parts]) for name in ("spot", "element"))
     return build(
         CONVERT_CATIONS,
         {
             **{name: column.take(pa.array(spot)) for name, column in head.items()},
             "element": pa.DictionaryArray.from_arrays(pa.array(element), pa.array(elements, pa.string())),
-            "cations": atoms[measured],
-            "cations_sd": sds[measured],
+            "cations": column("atoms"),
+            "cations_sd": column("sds"),
         },
     )
