@@ -6,15 +6,16 @@ than `WHOLE_ABOVE_WT`; trace tables have no formula.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 from itertools import compress
 
 import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
 
-from tieline.arrays import FloatArray, IntArray, Labels, labels, portions, spot_codes
+from tieline.arrays import BoolArray, FloatArray, IntArray, Labels, labels, portions, spot_codes
 from tieline.chemistry.formula import FormulaUnits, atoms_from_ppm, ferric_iron
 from tieline.chemistry.oxides import oxide_total, wt_percent_per_ppm
 from tieline.chemistry.phases import all_phases
@@ -72,13 +73,13 @@ def formula_tables(
     value, sigma: element ppm of every row of `ingest`, before any internal standard.
     """
     whole = _whole_analyses(ingest, element, value, sigma)
-    phase = labels(ingest.select(["phase"]).take(pa.array(whole.rows)), "phase").text()
+    phase = labels(ingest.select(["phase"]).take(pa.array(whole.rows)), "phase")
     oxygens, ideal = _bases(phase, settings)
     columns = {name: np.full(len(whole.rows), np.nan) for name in _number_columns()}
     columns["total_wt"], columns["total_sd_wt"], columns["oxygens"] = whole.total, whole.total_sd, oxygens
     # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
     parts = list(portions(len(whole.rows), SPOTS_AT_ONCE))
-    cations = side_by_side(lambda part: _cations(columns, whole, part, oxygens, ideal), parts)
+    cations = side_by_side(partial(_cations, columns, whole, oxygens, ideal), parts)
     _components(columns, whole, phase)
     head = {name: ingest.column(name).take(pa.array(whole.rows)) for name in KEYS}
     elements = whole.elements
@@ -90,7 +91,7 @@ def formula_tables(
 
 
 def _cations(
-    columns: dict[str, FloatArray], whole: Whole, part: slice, oxygens: FloatArray, ideal: FloatArray
+    columns: dict[str, FloatArray], whole: Whole, oxygens: FloatArray, ideal: FloatArray, part: slice
 ) -> Cations:
     """The atoms per formula of some spots, whose sums and ferric iron go into `columns`."""
     atoms, sds = np.full((2, part.stop - part.start, len(whole.elements)), np.nan)
@@ -138,7 +139,7 @@ def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma:
     return Whole(first[chosen], elements, ppm, sigmas, total, total_sd)
 
 
-def _bases(phase: np.ndarray, settings: FormulaSettings) -> tuple[FloatArray, FloatArray]:
+def _bases(phase: Labels, settings: FormulaSettings) -> tuple[FloatArray, FloatArray]:
     """Oxygens per formula, and the ideal cation sum where ferric iron is asked for, spot by spot."""
     facts = all_phases()
 
@@ -151,10 +152,10 @@ def _bases(phase: np.ndarray, settings: FormulaSettings) -> tuple[FloatArray, Fl
         wanted = name in settings.ferric and name not in settings.oxygens
         return np.nan if known is None or not wanted else known
 
-    names = sorted(set(phase))
-    by_name: Mapping[str, tuple[float, float]] = {name: (oxygens(name), ideal(name)) for name in names}
-    both = np.array([by_name[name] for name in phase], dtype=np.float64).reshape(-1, 2)
-    return both[:, 0], both[:, 1]
+    # The last entry is that of a spot without a phase.
+    of_name = np.array([[fact(name) for name in phase.texts] + [np.nan] for fact in (oxygens, ideal)])
+    both = of_name[:, phase.codes]
+    return both[0], both[1]
 
 
 def _ferric(columns: dict[str, FloatArray], rows: IntArray, units: FormulaUnits, ideal: FloatArray) -> None:
@@ -169,7 +170,7 @@ def _ferric(columns: dict[str, FloatArray], rows: IntArray, units: FormulaUnits,
             columns["ferric_fraction_sd"][rows[chosen]] = iron.balance_sigma[chosen] / total_iron
 
 
-def _components(columns: dict[str, FloatArray], whole: Whole, phase: np.ndarray) -> None:
+def _components(columns: dict[str, FloatArray], whole: Whole, phase: Labels) -> None:
     """Molar ratios with their standard uncertainty: for s = a_i / sum(a), var = sum((d_ij - s)² u_j²) / sum(a)²."""
     from tieline.chemistry.elements import atomic_weight
 
@@ -190,12 +191,13 @@ def _components(columns: dict[str, FloatArray], whole: Whole, phase: np.ndarray)
         columns[name], columns[f"{name}_sd"] = np.where(fits, share, np.nan), np.where(fits, sd, np.nan)
 
 
-def _fits(component: str, phase: np.ndarray) -> np.ndarray:
+def _fits(component: str, phase: Labels) -> BoolArray:
+    """Spots of the phases that a component is of."""
     if component in OF_PHASE:
-        return np.isin(phase, OF_PHASE[component])
+        return phase.is_one_of(OF_PHASE[component])
     if component in PYROXENE_COMPONENTS:
-        return np.array(["pyroxene" in name or name == "pigeonite" for name in phase], dtype=np.bool_)
-    return np.ones(len(phase), dtype=np.bool_)
+        return phase.is_one_of([name for name in phase.texts if "pyroxene" in name or name == "pigeonite"])
+    return np.ones(len(phase.codes), dtype=np.bool_)
 
 
 def _number_columns() -> tuple[str, ...]:
