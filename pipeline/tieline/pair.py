@@ -44,7 +44,7 @@ from tieline.statistics.threads import side_by_side
 from tieline.tables import build
 
 GROUP_COLUMNS = ("experiment", "phase", "element", "technique", "batch", "analyte")
-GROUPS_AT_ONCE = 10_000
+GROUPS_AT_ONCE = 20_000
 
 
 @dataclass(frozen=True)
@@ -201,7 +201,8 @@ def _pair_table(
     n_limit_only = count(used.limit_only)
     below = flags(convert, "below_limit") & taken
     censored = n_limit_only > 0
-    mswd_lo, mswd_hi = mswd_interval(np.maximum(means.n - 1, 0))
+    # The interval depends on the number of values alone.
+    mswd_lo, mswd_hi = (bound[means.n] for bound in mswd_interval(np.arange(-1.0, means.n.max(initial=0))))
     counting_sd = _root_mean_square(values.sigma, used.measured, groups)
 
     def unless_censored(array: FloatArray) -> FloatArray:
