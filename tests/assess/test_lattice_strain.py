@@ -126,6 +126,7 @@ def test_overlap_is_reported_beside_the_curve():
     found = tables(rows)
     check = found.checks.set_index("subject").loc["3+ overlap"]
     assert check["verdict"] == "differs"
+    assert "if one curve holds for all of them" in check["detail"]
     row = found.curves.iloc[0]
     assert row["overlap_lo"] < 0.004 < row["overlap_hi"]
     elements = found.elements.set_index("element")
@@ -166,3 +167,24 @@ def test_empty_table():
     assert found.curves.empty
     assert found.elements.empty
     assert found.checks.empty
+
+
+def test_between_two_crystals_there_is_no_curve():
+    table = partition(curve(), alpha="orthopyroxene", beta="clinopyroxene (rim)")
+    found = lattice_strain_tables(table, covariance(table), {"A": 1300.0})
+    assert found.curves.empty
+    assert found.checks["verdict"].tolist() == ["cannot tell"]
+    assert "two curves, one over the other" in found.checks["detail"][0]
+
+
+def test_elements_without_a_radius_are_named_where_there_is_no_curve():
+    found = tables(curve(), coordination={"clinopyroxene": 5}, least_values=4)
+    assert found.curves.empty
+    assert "3+ none, no radius in coordination 5 for Ce, Dy" in found.checks["detail"][0]
+
+
+def test_values_all_above_one_leave_the_overlap_open_and_say_so():
+    rows = [{**row, "D": 1 + 40 * row["D"], "D_sd": 1.2 * row["D"]} for row in curve()]
+    floor = tables(rows).checks.set_index("subject").loc["3+ overlap"]
+    assert floor["verdict"] == "cannot tell"
+    assert floor["detail"].endswith("the values set no limit to the overlap, or none to E besides it.")

@@ -35,6 +35,7 @@ OFF_THE_CURVE = {
     "W": "more than one charge",
     "Pb": "lone pair of electrons",
 }
+NO_RADIUS = "no radius"
 _NEEDED = ["element", "kind", "D", "D_sd", "D_hi", "dof", "share_counting", "share_spread"]
 _LIMIT_OVER_SD = 3.0
 _NORMAL_975 = 1.959964
@@ -106,7 +107,7 @@ def collect_series(
         element = str(row["element"])
         radius = ionic_radius(element, charge, coordination)
         if not np.isfinite(radius):
-            missing[element] = f"no radius for charge {charge} and coordination {coordination}"
+            missing[element] = f"{NO_RADIUS} for charge {charge} and coordination {coordination}"
         elif row["kind"] == "upper-limit" and np.isfinite(row["D_hi"]) and row["D_hi"] > 0:
             if element not in leave_out and (element not in OFF_THE_CURVE or element in given):
                 limits.append((element, radius, float(row["D_hi"])))

@@ -96,7 +96,8 @@ def compare_overlaps(
         blank = np.full(len(data[row].value), np.nan)
         verdict, reason = (OVERLAP_FOUND if found[row] else NO_OVERLAP), ""
         if np.isnan(p_value[row]):
-            verdict, reason = CANNOT_TELL, f"curve and overlap together: {fit.reason}"
+            why = fit.reason or "the values set no limit to the overlap, or none to E besides it"
+            verdict, reason = CANNOT_TELL, f"curve and overlap together: {why}"
         comparisons.append(
             OverlapComparison(
                 plain[row], fit, float(improvement[row]), float(p_value[row]), verdict, reason,
