@@ -25,13 +25,26 @@ def unknowns() -> list[dict]:
     return [spot(f"u{n}", {"Ni60": (50.0, 1.0), "La139": (5.0, 0.1)}, **KEYS) for n in range(3)]
 
 
-def calibrated(spots: list[dict], accepted: str | None = ACCEPTED, **settings):
+HEADER = "spot,analyte,verdict,analyst,date,reason\n"
+
+
+def ruled(*lines: str) -> dict[str, InputFile]:
+    text = HEADER + "".join(f"{line},A. Nalyst,2024-03-09,inclusion\n" for line in lines)
+    return {"rulings.csv": InputFile.from_bytes("rulings.csv", text.encode())}
+
+
+def calibrated(
+    spots: list[dict],
+    accepted: str | None = ACCEPTED,
+    rulings: dict[str, InputFile] | None = None,
+    **settings,
+):
     ingest, heads = ingest_tables(spots)
     table = convert(ingest, settings=ConvertSettings()).tables["convert"]
     files = (
         {} if accepted is None else {"accepted.csv": InputFile.from_bytes("accepted.csv", accepted.encode())}
     )
-    result = calibrate(table, heads, files=files, settings=CalibrateSettings(**settings))
+    result = calibrate(table, heads, files=files, rulings=rulings, settings=CalibrateSettings(**settings))
     result.ledger.check("calibrate")
     rows = result.tables["calibrate"].to_pylist()
     return {row["element"]: row for row in rows}, result
@@ -111,3 +124,65 @@ def test_every_problem_of_the_accepted_values_at_once():
         (3, "value"),
         (4, "unit"),
     ]
+
+
+def test_a_reference_spot_that_is_ruled_out_is_as_if_it_were_not_in_the_table():
+    others = [
+        *reference([199.0, 203.0, 201.0], "REF-B"),
+        *unknowns(),
+        *reference([104.0, 106.0, 105.5, 104.5]),
+    ]
+    inclusion = spot("inclusion", {"Ni60": (180.0, 1.0)}, **{**KEYS, "phase": "REF-A", "material": "REF-A"})
+    without, plain = calibrated(others, correct="bias")
+    with_it, _ = calibrated([*others, inclusion], correct="bias")
+    rows, result = calibrated([*others, inclusion], correct="bias", rulings=ruled("inclusion,*,drop"))
+    assert rows == without
+    assert rows["Ni"]["factor"] != with_it["Ni"]["factor"]
+    materials = result.tables["calibrate.materials"].to_pylist()
+    assert materials == plain.tables["calibrate.materials"].to_pylist()
+    assert {row["material"]: row["n_spots"] for row in materials} == {"REF-A": 4, "REF-B": 3}
+    assert result.ledger.outcomes["reference values ruled out"] == 1
+    assert result.ledger.outcomes["reference values not measured"] == 0
+    assert "reference values ruled out" not in plain.ledger.outcomes
+
+
+def test_a_ruling_on_an_analyte_of_a_reference_spot_leaves_the_others():
+    def both(nickel: list[float], lead: list[float]) -> list[dict]:
+        keys = {**KEYS, "phase": "REF-A", "experiment": None, "material": "REF-A"}
+        return [
+            spot(f"r{n}", {"Ni60": (value, 1.0), "Pb208": (other, 0.5)}, **keys)
+            for n, (value, other) in enumerate(zip(nickel, lead, strict=True))
+        ]
+
+    accepted = ACCEPTED + "REF-A,Pb,10,ppm,0,invented v1\n"
+    spots = both([101.0, 99.0, 160.0], [10.2, 10.1, 10.4])
+    for lines in (["r2,Ni60,drop"], ["r2,*,drop", "r2,Pb208,keep"]):
+        rows, _ = calibrated([*spots, *unknowns()], accepted, ruled(*lines))
+        assert (rows["Ni"]["bias"], rows["Ni"]["n_spots"]) == (pytest.approx(1.0), 2)
+        assert (rows["Pb"]["bias"], rows["Pb"]["n_spots"]) == (pytest.approx(1.0233, abs=1e-3), 3)
+
+
+@pytest.mark.parametrize("lines", [["u0,*,drop"], ["u0,Ni60,drop", "u1,*,keep"], ["REF-A1,*,keep"]])
+def test_rulings_on_unknowns_and_keep_on_references_change_nothing(lines):
+    spots = [*reference([104.0, 106.0, 105.0]), *unknowns()]
+    _, plain = calibrated(spots)
+    _, result = calibrated(spots, rulings=ruled(*lines))
+    assert result == plain
+
+
+def test_a_material_whose_every_spot_is_ruled_out_is_remarked_for_what_it_is():
+    spots = [*reference([104.0, 106.0]), *reference([199.0, 203.0], "REF-B"), *unknowns()]
+    rows, result = calibrated(spots, rulings=ruled("REF-A0,*,drop", "REF-A1,*,drop"))
+    assert rows["Ni"]["n_materials"] == 1
+    texts = [remark.message for remark in result.remarks if remark.place == "REF-A"]
+    assert texts == ["every measured value of it was ruled out"]
+
+
+def test_what_is_wrong_with_accepted_values_and_with_rulings_is_told_together():
+    rulings = ruled("nobody,*,drop", "REF-A0,Ni60,perhaps", "REF-A0,La139,drop")
+    with pytest.raises(InputError) as error:
+        calibrated(reference([104.0]), "material,analyte,value,unit,sd\nREF-A,Ni,-1,ppm,1\n", rulings)
+    assert {(problem.file, problem.row, problem.column) for problem in error.value.problems} == {
+        ("accepted.csv", 2, "value"), ("rulings.csv", 2, "spot"), ("rulings.csv", 3, "verdict"),
+        ("rulings.csv", 4, "analyte"),
+    }  # fmt: skip

@@ -74,6 +74,7 @@ def run_file(config: Path, name: str) -> Path:
     return load(config).run_folder / name
 
 
+RULED = {"calibrate", "screen"}
 EDITS: list[tuple[str, Edit, set[str]]] = [
     ("comment", swap("[partition]", "# a comment\n[partition]  # and another"), set()),
     ("blank lines and blanks", swap("confidence = 0.95", "\n\nconfidence   =    0.95"), set()),
@@ -100,8 +101,9 @@ EDITS: list[tuple[str, Edit, set[str]]] = [
     ("rim", swap("rim_um = 2e1", "rim_um = 30.0"), {"screen"}),
     ("total", swap("glass = [97.5, 101.5]", "glass = [99.5, 101.5]"), {"screen"}),
     ("total removed", swap("limits = { glass = [99.5, 101.5] }", ""), {"screen"}),
-    ("reason of a ruling", in_file("rulings.csv", "by far", "by much"), {"screen"}),
-    ("ruling removed", in_file("rulings.csv", "EM02-ol-L2.*\n", ""), {"screen"}),
+    ("reason of a ruling", in_file("rulings.csv", "by far", "by much"), RULED),
+    ("ruling removed", in_file("rulings.csv", "EM02-ol-L2.*\n", ""), RULED),
+    ("a reference ruled out", in_file("rulings.csv", r"\Z", "TWG-1-L01,*,drop,A.N.,2026-03-14,bubble\n"), RULED),
     ("accepted value", in_file("accepted.csv", "51.23", "51.24"), {"calibrate"}),
     ("calibration where no reference tells", swap("EPMA = 0.01", "EPMA = 0.02"), {"calibrate"}),
     ("internal standard", swap("olivine = 41.0", "olivine = 40.0"), {"convert"}),

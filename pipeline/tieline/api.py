@@ -68,7 +68,8 @@ class Run:
         one = STAGES[NAMES.index(stage)]
         effective = self._changed(stage, settings or {})
         inputs = {name.replace(".", "_"): self._table(name) for name in one.inputs}
-        extra = {"files": self._files(one.files(effective))} if one.reads_files else {}
+        files = self._files(one.files(effective)) if one.reads_files else {}
+        extra = one.file_arguments(effective, files)
         result = one.function()(**inputs, **extra, settings=one.settings(effective))
         return {name: _frame(name, table) for name, table in result.tables.items()}
 

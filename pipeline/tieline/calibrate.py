@@ -18,8 +18,11 @@ from tieline.accepted import AcceptedValue, read_accepted_values
 from tieline.arrays import BoolArray, FloatArray, Groups, IntArray, TextArray, group_table, labels, numbers
 from tieline.columns import CALIBRATE, CALIBRATE_MATERIALS
 from tieline.correction import sequence_of
+from tieline.errors import InputError, Problem
 from tieline.reading.input_file import InputFile
 from tieline.results import Ledger, Remark, StageResult
+from tieline.ruled_spots import dropped_rows
+from tieline.rulings import rulings_as_written
 from tieline.settings.chemistry import CalibrateSettings
 from tieline.statistics.means import paule_mandel, phase_means
 from tieline.statistics.outliers import holm
@@ -68,17 +71,29 @@ class Drift:
 
 
 def calibrate(
-    convert: pa.Table, ingest_spots: pa.Table, *, files: Mapping[str, InputFile], settings: CalibrateSettings
+    convert: pa.Table,
+    ingest_spots: pa.Table,
+    *,
+    files: Mapping[str, InputFile],
+    rulings: Mapping[str, InputFile] | None = None,
+    settings: CalibrateSettings,
 ) -> StageResult:
     """Bias, reproducibility, drift and calibration uncertainty of every batch and element.
 
-    Raises InputError for accepted values that cannot be used.
+    Values of reference materials that a ruling drops have no part in it. Raises InputError for accepted values
+    and rulings that cannot be used.
     """
-    accepted = read_accepted_values(files)
+    accepted, ruled = _read(files, rulings or {}, convert)
     batches = group_table(convert, ("technique", "batch", "element", "analyte"))
     value, sigma = numbers(convert, "value_ppm"), numbers(convert, "sigma_ppm")
     is_reference = labels(convert, "material").codes >= 0
     measured = is_reference & np.isfinite(value)
+    n_measured = int(measured.sum())
+    n_ruled, ruled_materials = 0, set[str]()
+    if ruled is not None:
+        ruled &= measured
+        measured &= ~ruled
+        n_ruled, ruled_materials = int(ruled.sum()), _materials_of(convert, ruled)
     groups = group_table(convert, ("technique", "batch", "material", "element", "analyte"), measured)
     materials = _materials(groups, value, sigma, accepted)
     known = np.array([item is not None for item in materials.accepted], dtype=np.bool_)
@@ -95,15 +110,44 @@ def calibrate(
     outcomes = {
         "reference values with an accepted value": int(usable.sum()),
         "reference values without one": int((measured & ~usable).sum()),
-        "reference values not measured": int((is_reference & ~measured).sum()),
+        "reference values not measured": int(is_reference.sum()) - n_measured,
         "values of unknowns": int((~is_reference).sum()),
     }
+    if n_ruled:
+        outcomes["reference values ruled out"] = n_ruled
     ledger = Ledger("values", convert.num_rows, outcomes)
     return StageResult(
         {"calibrate": table, "calibrate.materials": by_material},
         ledger,
-        _remarks(table, accepted, groups, settings),
+        _remarks(table, accepted, groups, ruled_materials, settings),
     )
+
+
+def _read(
+    files: Mapping[str, InputFile], rulings: Mapping[str, InputFile], convert: pa.Table
+) -> tuple[dict[tuple[str, str], AcceptedValue], BoolArray | None]:
+    """The accepted values, and the rows of `convert` that a ruling drops, None where nobody ruled.
+
+    Raises InputError with what is wrong with either.
+    """
+    problems: list[Problem] = []
+    accepted, ruled = {}, None
+    try:
+        accepted = read_accepted_values(files)
+    except InputError as error:
+        problems += error.problems
+    try:
+        ruled = dropped_rows(convert, *rulings_as_written(rulings))
+    except InputError as error:
+        problems += error.problems
+    if problems:
+        raise InputError(problems)
+    return accepted, ruled
+
+
+def _materials_of(convert: pa.Table, rows: BoolArray) -> set[str]:
+    material = labels(convert, "material")
+    return {material.texts[code] for code in np.unique(material.codes[rows])}
 
 
 def _materials(
@@ -329,6 +373,7 @@ def _remarks(
     table: pa.Table,
     accepted: Mapping[tuple[str, str], AcceptedValue],
     groups: Groups,
+    ruled_out: set[str],
     settings: CalibrateSettings,
 ) -> tuple[Remark, ...]:
     techniques = set(table.column("technique").to_pylist())
@@ -354,6 +399,9 @@ def _remarks(
             text = f"the reference materials drift with the run order, and the drift stays in the values: {named}"
             remarks.append(Remark(text, batch))
     measured = {key[2] for key in groups.keys}
-    unmeasured = sorted({material for material, _ in accepted} - measured)
+    unmeasured = sorted({material for material, _ in accepted} - measured - ruled_out)
     remarks += [Remark("accepted values given, but no spot of it was measured", name) for name in unmeasured]
+    remarks += [
+        Remark("every measured value of it was ruled out", name) for name in sorted(ruled_out - measured)
+    ]
     return tuple(remarks)

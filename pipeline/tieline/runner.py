@@ -244,18 +244,19 @@ def _bring_up_to_date(
 
 def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Verdict) -> StageReport:
     settings = work.session.settings
-    files = {path: work.files[path] for path in stage.files(settings)}
     inputs = {name.replace(".", "_"): work.table(name) for name in stage.inputs}
-    extra = {"files": files} if stage.reads_files else {}
+    extra = stage.file_arguments(settings, work.files)
     try:
         result = stage.function()(**inputs, **extra, settings=stage.settings(settings))
     except InputError as error:
         later = STAGES[NAMES.index(stage.name) + 1 :]
-        raise InputError([*error.problems, *_problems_of_files(later, work.session, work.files)]) from None
+        more = _problems_of_files(later, work.session, work.files)
+        # Two stages read the rulings: what is wrong with them is told once.
+        raise InputError(dict.fromkeys([*error.problems, *more])) from None
     return_unused_memory()
     _check_result(stage, result, work)
     work.tables.update(result.tables)
-    used = {name: work.digests[name] for name in (*stage.inputs, *files)}
+    used = {name: work.digests[name] for name in (*stage.inputs, *stage.files(settings))}
     record = {
         "version": __version__,
         "schema": SCHEMA_VERSION,
@@ -313,7 +314,7 @@ def _problems_of_files(
     """Problems of the small files that later stages read, so that they are all told at once."""
     problems: list[Problem] = []
     for stage in stages:
-        own = {path: files[path] for path in stage.files(session.settings) if path in files}
+        own = {path: files[path] for path in stage.files_apart(session.settings) if path in files}
         try:
             stage.read_files(own)
         except InputError as error:

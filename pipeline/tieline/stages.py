@@ -20,7 +20,8 @@ class Stage:
     The function `module.name` is called with one keyword argument per input table (dots become
     underscores), `settings`, and `files` where `reads_files`. `counted` is the table whose rows
     are what the stage's ledger says entered. `reader` names a function of the same module that reads
-    `files` alone, so that their problems are found even when an earlier stage already failed.
+    `files` alone, so that their problems are found even when an earlier stage already failed. `rulings` tells
+    which of the files is the table of rulings of a stage that has others too; it is called with it apart from them.
     """
 
     name: str
@@ -32,10 +33,31 @@ class Stage:
     reads_files: bool = False
     counted: str | None = None
     reader: str | None = None
+    rulings: Callable[[SessionSettings], tuple[str, ...]] = lambda _: ()
 
     def function(self) -> Callable[..., StageResult]:
         """The stage function, imported only when it is needed."""
         return self._member(self.name)
+
+    def file_arguments(
+        self, settings: SessionSettings, files: Mapping[str, InputFile]
+    ) -> dict[str, dict[str, InputFile]]:
+        """What the function is given of input files, as keyword arguments."""
+        if not self.reads_files:
+            return {}
+        arguments = {"files": self.files_apart(settings), "rulings": self.rulings(settings)}
+        return {
+            name: {path: files[path] for path in paths}
+            for name, paths in arguments.items()
+            if paths or name == "files"
+        }
+
+    def files_apart(self, settings: SessionSettings) -> tuple[str, ...]:
+        """The files but for a table of rulings that is given apart; a path may be named twice."""
+        paths = list(self.files(settings))
+        for path in self.rulings(settings):
+            paths.remove(path)
+        return tuple(paths)
 
     def read_files(self, files: Mapping[str, InputFile]) -> None:
         """Raises InputError with every problem of the stage's own small files."""
@@ -92,10 +114,15 @@ STAGES: tuple[Stage, ...] = (
         inputs=("convert", "ingest.spots"),
         outputs=("calibrate", "calibrate.materials"),
         settings=lambda settings: settings.calibrate,
-        files=lambda settings: _optional(settings.ingest.reference_materials.path),
+        files=lambda settings: (
+            *_optional(settings.ingest.reference_materials.path),
+            *_optional(settings.screen.rulings),
+        ),
         reads_files=True,
         counted="convert",
+        # `screen` reads the rulings too, and tells what is wrong with their table when neither stage is reached.
         reader="read_accepted_values",
+        rulings=lambda settings: _optional(settings.screen.rulings),
     ),
     Stage(
         name="screen",

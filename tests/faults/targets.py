@@ -35,7 +35,7 @@ from tieline.reading.cells import parse_cells
 from tieline.reading.formats import read_grid
 from tieline.reading.grid import ReadLimits
 from tieline.reading.input_file import InputFile
-from tieline.screen.rulings import read_rulings
+from tieline.rulings import read_rulings
 from tieline.settings.ingest import IngestSettings
 from tieline.starting.configuration_text import first_configuration
 from tieline.storage import read_record, read_table

@@ -7,8 +7,9 @@ from screen.synthetic import Block, found, inputs, used
 from tieline.correction import calibrated
 from tieline.errors import InputError
 from tieline.reading.input_file import InputFile
+from tieline.rulings import rulings_as_written
 from tieline.screen import counts_by_test, read_rulings
-from tieline.screen.rulings import ruling_findings, rulings_as_written
+from tieline.screen.rulings import ruling_findings
 from tieline.screen.session import session_of
 
 ANALYTES = ("SiO2", "FeO", "MgO", "CaO", "MnO")
@@ -229,12 +230,20 @@ def test_a_label_that_occurs_in_two_tables_needs_the_table():
     assert by_table == {"a.csv": True, "b.csv": False}
 
 
-def test_a_ruling_on_a_reference_material_is_refused():
+def test_a_ruling_on_a_reference_spot_stands_among_the_findings_and_its_use_is_as_before():
     standard = Block(
         None, "SC", ANALYTES, OLIVINE[None], 0.003 * OLIVINE[None], material="SC", labels=["sc1"]
     )
-    (problem,) = problems(["sc1,*,drop,X,2024-03-09,crack"], [olivine([1.0]), standard])
-    assert "reference material" in problem.message
+    tables = inputs([olivine([1.0]), standard])
+    for line in ("sc1,*,drop", "sc1,MgO,keep"):
+        result = tables.screen(ruled(f"{line},X,2024-03-09,inclusion"))
+        assert {text for (spot, _), text in why(result).items() if spot == "sc1"} == {"reference-material"}
+        assert result.ledger == tables.screen().ledger
+        (finding,) = result.tables["screen.findings"].to_pylist()
+        assert (finding["spot"], finding["code"]) == ("sc1", "ruling")
+        assert finding["detail"] == "inclusion (X, 2024-03-09)"
+    (problem,) = problems(["sc1,NiO,drop,X,2024-03-09,inclusion"], [olivine([1.0]), standard])
+    assert problem.column == "analyte"
 
 
 def test_counts_tell_what_each_test_caught_and_what_only_it_caught():

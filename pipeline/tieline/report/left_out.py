@@ -11,8 +11,8 @@ from tieline.report.conventions import short_convention
 from tieline.report.sheets import Cell, Heading, Sheet
 from tieline.report.source import Source
 from tieline.report.spots import LeftOut, SpotUse
+from tieline.rulings import Ruling
 from tieline.screen.findings import RULING
-from tieline.screen.rulings import Ruling
 
 SET_ASIDE = "set-aside"
 KEYS = ("spot", "table", "row", "technique", "batch", "experiment", "phase", "grain")

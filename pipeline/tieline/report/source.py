@@ -17,7 +17,7 @@ from tieline.errors import InputError, Problem
 from tieline.plan import Verdict, table_path
 from tieline.reading.input_file import InputFile
 from tieline.report.currency import finished_records
-from tieline.screen.rulings import Ruling, read_rulings
+from tieline.rulings import Ruling, read_rulings
 from tieline.settings import SessionSettings
 from tieline.stages import STAGES
 from tieline.storage import read_table

@@ -10,14 +10,13 @@ import pyarrow as pa
 
 from tieline.arrays import BoolArray, FloatArray, IntArray
 from tieline.columns import FINDINGS
+from tieline.ruled_spots import RULING as RULING
+from tieline.ruled_spots import WHOLE_SPOT as WHOLE_SPOT
 from tieline.screen.session import Session
 from tieline.tables import build, empty
 
-WHOLE_SPOT = -1
-
 # Document order, and the order of precedence when several apply to one value: rulings first, for a ruling
 # beats a test; then what makes a spot useless for all its analytes; then what is a matter of degree.
-RULING = "ruling"
 TESTS = (
     "total",
     "cations",

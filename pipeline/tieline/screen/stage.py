@@ -15,6 +15,7 @@ from tieline.memory import return_unused_memory
 from tieline.narrowing import no_numbers
 from tieline.reading.input_file import InputFile
 from tieline.results import Remark, StageResult
+from tieline.rulings import rulings_as_written
 from tieline.screen.cations import cation_findings
 from tieline.screen.findings import findings_table
 from tieline.screen.groups import TestResult, groups_table
@@ -24,7 +25,7 @@ from tieline.screen.outliers import outlier_result
 from tieline.screen.overlap import Overlap, score_overlap
 from tieline.screen.overlap_groups import overlap_result
 from tieline.screen.resolution import resolve
-from tieline.screen.rulings import ruling_findings, rulings_as_written
+from tieline.screen.rulings import ruling_findings
 from tieline.screen.session import Measured, Session, session_of
 from tieline.screen.totals import total_findings
 from tieline.screen.unmixing import UnmixedValues, unmixed_values
