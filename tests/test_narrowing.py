@@ -85,3 +85,16 @@ def test_row_groups_written_one_by_one_are_those_of_the_whole_table(tmp_path, mo
 
 def test_an_empty_declared_table_has_the_declared_types():
     assert empty(SCREEN).schema.equals(SCREEN.schema())
+
+
+def test_a_table_waits_until_those_before_it_leave_room(tmp_path, monkeypatch):
+    table = _findings(10)
+    monkeypatch.setattr("tieline.storage.UNWRITTEN_BYTES", 2 * table.nbytes)
+    most = 0
+    with Pending() as pending:
+        for number in range(6):
+            pending.add(tmp_path / f"{number}.parquet", "screen.findings", table, {})
+            most = max(most, len(pending._writes))
+        pending.commit()
+    assert most == 2
+    assert len(list(tmp_path.iterdir())) == 6

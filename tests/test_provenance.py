@@ -78,3 +78,18 @@ def test_fingerprint_changes_with_each_part_and_not_with_order(tmp_path: Path):
         fingerprint("screen", 1, {"a": 1, "b": 2}, {"convert": "y"}),
     ]
     assert len({base, *others}) == 5
+
+
+def test_digest_does_not_depend_on_the_pieces_it_is_made_from(monkeypatch):
+    table = pa.table(
+        {
+            "x": pa.array([1.0, None, 3.0, 4.0, None]),
+            "flag": pa.array([True, None, False, True, True]),
+            "text": pa.array(["a", "", None, "long", "b"]),
+            "label": pa.array(["a", None, "b", "a", "b"]).dictionary_encode(),
+        }
+    )
+    whole = content_digest(table)
+    monkeypatch.setattr("tieline.provenance.ROWS_AT_ONCE", 2)
+    assert content_digest(table) == whole
+    assert content_digest(pa.concat_tables([table.slice(0, 3), table.slice(3)])) == whole

@@ -11,7 +11,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from tieline.arrays import label_codes, one_array
+from tieline.arrays import ROWS_AT_ONCE, narrow_codes, one_array
 from tieline.narrowing import code_type, place_in_memory
 from tieline.statistics.threads import side_by_side
 from tieline.tables import declared_type
@@ -89,24 +89,36 @@ def content_digest(table: pa.Table, known: ColumnDigests | None = None) -> str:
 
 def column_digest(column: pa.ChunkedArray) -> str:
     """SHA-256 of a column's values and nulls."""
-    array = one_array(column)
     digest = hashlib.sha256()
-    if pa.types.is_dictionary(array.type):
-        labels = label_codes(array)
+    if pa.types.is_dictionary(column.type):
+        labels = narrow_codes(one_array(column))
         digest.update(json_text(labels.texts).encode())
-        digest.update(labels.codes.astype(code_type(len(labels.texts)).to_pandas_dtype()).data)
+        digest.update(labels.codes.astype(code_type(len(labels.texts)).to_pandas_dtype(), copy=False).data)
         return digest.hexdigest()
-    if array.null_count:
-        digest.update(np.packbits(array.is_valid().to_numpy(zero_copy_only=False)).data)
-    if pa.types.is_string(array.type):
-        filled = array.fill_null("") if array.null_count else array
-        digest.update(pc.binary_length(filled).to_numpy(zero_copy_only=False))
-        digest.update(_text_bytes(filled))
+    # Piece by piece, for nulls are filled in a copy.
+    pieces = [chunk.slice(start, ROWS_AT_ONCE) for chunk in column.chunks for start in _starts(len(chunk))]
+    if column.null_count:
+        valid = [piece.is_valid().to_numpy(zero_copy_only=False) for piece in pieces]
+        digest.update(np.packbits(np.concatenate(valid)).data)
+    if pa.types.is_string(column.type):
+        for piece in pieces:
+            digest.update(pc.binary_length(_without_nulls(piece, "")).to_numpy(zero_copy_only=False))
+        for piece in pieces:
+            digest.update(_text_bytes(_without_nulls(piece, "")))
         return digest.hexdigest()
-    if array.null_count:
-        array = array.fill_null(pa.scalar(False if pa.types.is_boolean(array.type) else 0, array.type))
-    digest.update(np.ascontiguousarray(array.to_numpy(zero_copy_only=False)).data)
+    nothing = False if pa.types.is_boolean(column.type) else 0
+    for piece in pieces:
+        values = _without_nulls(piece, nothing).to_numpy(zero_copy_only=False)
+        digest.update(np.ascontiguousarray(values).data)
     return digest.hexdigest()
+
+
+def _starts(size: int) -> range:
+    return range(0, size, ROWS_AT_ONCE)
+
+
+def _without_nulls(array: pa.Array, instead: str | bool | int) -> pa.Array:
+    return array.fill_null(pa.scalar(instead, array.type)) if array.null_count else array
 
 
 def _text_bytes(array: pa.StringArray) -> bytes | memoryview:

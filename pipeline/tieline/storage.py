@@ -24,6 +24,8 @@ from tieline.tables import declared
 # Raised when the meaning of a stage file changes; a file of another version is stale.
 SCHEMA_VERSION = 1
 ROWS_PER_ROW_GROUP = 1024 * 1024
+# Tables that wait to be written hold memory that the next stage needs: beyond this a new one waits for those before it.
+UNWRITTEN_BYTES = 250_000_000
 METADATA_KEY = b"tieline"
 
 
@@ -66,7 +68,7 @@ class Pending:
     def __init__(self) -> None:
         self._moves: list[tuple[Path, Path]] = []
         self._writer = ThreadPoolExecutor(max_workers=1, thread_name_prefix="writer")
-        self._writes: list[Future[None]] = []
+        self._writes: list[tuple[Future[None], int]] = []
 
     def __enter__(self) -> Pending:
         return self
@@ -79,16 +81,23 @@ class Pending:
 
     def add(self, target: Path, name: str, table: pa.Table, record: Mapping[str, Any]) -> None:
         """Writes a stage table beside its target under a temporary name."""
-        self._write(target, lambda stream: _write_table(stream, name, table, record))
+        self._write(target, table.nbytes, lambda stream: _write_table(stream, name, table, record))
 
     def add_bytes(self, target: Path, data: bytes) -> None:
         """Writes bytes beside their target under a temporary name."""
-        self._write(target, lambda stream: stream.write(data))
+        self._write(target, len(data), lambda stream: stream.write(data))
 
-    def _write(self, target: Path, write: Callable[[BinaryIO], object]) -> None:
+    def _write(self, target: Path, size: int, write: Callable[[BinaryIO], object]) -> None:
+        self._make_room(size)
         temporary = temporary_path(target)
         self._moves.append((temporary, target))
-        self._writes.append(self._writer.submit(self._write_whole, temporary, write))
+        self._writes.append((self._writer.submit(self._write_whole, temporary, write), size))
+
+    def _make_room(self, size: int) -> None:
+        """Waits until what is not written yet leaves room for so many bytes, or all is written."""
+        while self._writes and sum(each for _, each in self._writes) + size > UNWRITTEN_BYTES:
+            written, _ = self._writes.pop(0)
+            written.result()
 
     @staticmethod
     def _write_whole(temporary: Path, write: Callable[[BinaryIO], object]) -> None:
@@ -99,7 +108,7 @@ class Pending:
 
     def finish_writes(self) -> None:
         """Waits until everything is on disk under its temporary name, and raises what went wrong with it."""
-        for written in self._writes:
+        for written, _ in self._writes:
             written.result()
         self._writes.clear()
 
