@@ -389,7 +389,7 @@ def test_a_report_of_stale_results_says_what_to_run(own: Path):
         write_report(load(config, overrides=['screen.rulings="later.csv"']))
     (problem,) = error.value.problems
     assert (
-        "(rulings ember/rulings.csv → later.csv; ember/rulings.csv is no longer an input; later"
+        "calibrate is stale (ember/rulings.csv is no longer an input; later.csv is a new input)"
         in problem.message
     )
     assert problem.remedy == f"Run `tieline run {config}` first."
