@@ -238,6 +238,7 @@ def _bring_up_to_date(
         return StageReport(verdict, False, ledger, tuple(Remark(**remark) for remark in record["remarks"]))
     progress(stage.name, "running")
     report = _compute(stage, work, pending, verdict)
+    return_unused_memory()
     progress(stage.name, "done")
     return report
 
@@ -278,8 +279,6 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
             path = table_path(work.session.run_folder, name)
             pending.add(path, name, result.tables[name], {**record, "content": work.digests[name]})
     _forget(stage, work)
-    del inputs, extra
-    return_unused_memory()
     return StageReport(verdict, True, result.ledger, result.remarks)
 
 
