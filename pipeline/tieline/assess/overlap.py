@@ -16,9 +16,10 @@ SHARE = 0.3
 def overlap_checks(partition: pd.DataFrame) -> pd.DataFrame:
     """One row of the `assess` table per pair of phases whose D's bound the overlap.
 
-    partition: columns as in the stage file. value: the largest fraction of beta in alpha that the smallest D allows. "cannot
-    tell" where that fraction could make 30 % or more of some D below one: nothing in the D's rules out that overlap made them.
-    No overlap needs to be there; what was found in single spots is another matter.
+    partition: columns as in the stage file. value: the largest fraction of beta in alpha that the smallest D allows; no such
+    overlap needs to be there, and what was found in single spots is another matter. The smallest D sets the bound, so it
+    never survives it, which says nothing: "cannot tell" is for pairs where the bound could make 30 % or more of others
+    below one too, or where no D is below one.
     """
     import pandas as pd
 
@@ -33,18 +34,33 @@ def overlap_checks(partition: pd.DataFrame) -> pd.DataFrame:
 
 def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
     """One pair; group: its D's in increasing order."""
-    bound = float(group[0]["overlap_bound"])
+    alpha, beta, smallest = keys["alpha"], keys["beta"], group[0]
+    bound, subject = float(smallest["overlap_bound"]), f"{beta} in {alpha}"
+    if smallest["D"] >= 1:
+        words = (
+            f"No D lies below one, so none bounds the {beta} in {alpha}. It can only have lowered these D."
+        )
+        return check("overlap-bound", keys, subject, CANNOT_TELL, words)
     doubtful = [row for row in group if row["D"] < 1 and bound >= SHARE * row["D"]]
-    upper, safe = _names(doubtful), _names([row for row in group if row not in doubtful])
-    words = f"The smallest D leave room for up to {bound:.2g} of {keys['beta']} in {keys['alpha']}. "
-    words += f"Upper limits as far as overlap is concerned: {upper}. " if upper else ""
-    words += f"Not overlap: {safe}." if safe else ""
-    subject, verdict = f"{keys['beta']} in {keys['alpha']}", CANNOT_TELL if upper else CONSISTENT
+    others, safe = doubtful[1:], group[len(doubtful) :]
+    words = f"The D leave room for up to {bound:.2g} of {beta} in {alpha}. "
+    if others:
+        words += f"That could make {SHARE:.0%} or more of {_names(doubtful)}: upper limits as far as overlap is concerned. "
+    elif doubtful:
+        words += (
+            f"Only the smallest, {_names(doubtful)}, which sets that bound, could itself be nothing else. "
+        )
+    if safe:
+        count = "All" if not doubtful else "The other"
+        words += (
+            f"{count} {len(safe)}, from {_names(safe[:1])} upwards, are more than {1 - SHARE:.0%} their own."
+        )
+    verdict = CANNOT_TELL if others else CONSISTENT
     return check("overlap-bound", keys, subject, verdict, words.strip(), value=bound)
 
 
 def _names(group: list[dict[str, Any]]) -> str:
-    """Elements, each with the lowest D that overlap leaves."""
+    """Elements, each with the lowest D that overlap and the errors leave."""
     return ", ".join(
         f"{row['element']} (D {row['D']:.2g}, at least {row['D_overlap_lo']:.2g})"
         if row["D_overlap_lo"] > 0
