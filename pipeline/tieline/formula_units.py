@@ -57,10 +57,10 @@ class Whole:
 
 @dataclass(frozen=True)
 class Cations:
-    """Atoms per formula with their uncertainty; `spot` counts the whole analyses, `element` their elements; (k,) each."""
+    """Of some spots: how many elements each has (spots,); which, with atoms per formula and sd, spot by spot (k,)."""
 
-    spot: npt.NDArray[np.int32]
-    element: npt.NDArray[np.int32]
+    number: IntArray
+    element: npt.NDArray[np.int8]
     atoms: FloatArray
     sds: FloatArray
 
@@ -104,9 +104,8 @@ def _cations(
         columns["cation_sum_sd"][rows] = units.cation_sum_sigma
         _ferric(columns, rows, units, ideal[rows])
     measured = np.isfinite(atoms)
-    spot, element = (places.astype(np.int32) for places in np.nonzero(measured))
-    spot += np.int32(part.start)
-    return Cations(spot, element, atoms[measured], sds[measured])
+    element = np.nonzero(measured)[1].astype(np.int8)
+    return Cations(measured.sum(axis=1), element, atoms[measured], sds[measured])
 
 
 def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray) -> Whole:
@@ -214,7 +213,9 @@ def _cation_table(
 
     if not parts:
         return empty(CONVERT_CATIONS)
-    spot, element = (np.concatenate([getattr(part, name) for part in parts]) for name in ("spot", "element"))
+    number = np.concatenate([part.number for part in parts])
+    spot = np.repeat(np.arange(len(number), dtype=np.int32), number)
+    element = np.concatenate([part.element for part in parts])
     return build(
         CONVERT_CATIONS,
         {
