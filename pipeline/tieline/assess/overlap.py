@@ -51,9 +51,9 @@ def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
             f"Only the smallest, {_names(doubtful)}, which sets that bound, could itself be nothing else. "
         )
     if safe:
-        count = "All" if not doubtful else "The other"
+        count = "the other" if doubtful else "all"
         words += (
-            f"{count} {len(safe)}, from {_names(safe[:1])} upwards, are more than {1 - SHARE:.0%} their own."
+            f"Of {count} {len(safe)}, from {_names(safe[:1])} upwards, it leaves more than {1 - SHARE:.0%}."
         )
     verdict = CANNOT_TELL if others else CONSISTENT
     return check("overlap-bound", keys, subject, verdict, words.strip(), value=bound)
