@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from rich.console import Console
 from scipy import optimize, special
 from typer.testing import CliRunner
 
@@ -390,6 +391,33 @@ def test_limits_of_a_censored_mean_give_the_interval(source: Source):
     assert checked > 3
 
 
+def test_a_reference_value_that_was_ruled_out_is_told_and_has_no_part(tmp_path: Path):
+    config = short_session(tmp_path)
+    plain = source_of(config, ["calibrate.correct=bias"])
+    with (config.parent / "ember" / "rulings.csv").open("a", encoding="utf-8") as file:
+        file.write("TWG-1-L01,*,drop,A.N.,2026-03-14,bubble\nTWG-1-L01,Ni60,keep,M.T.,2026-03-15,not here\n")
+        file.write("TWG-1-L02,Ni60,drop,M.T.,2026-03-15,spike\n")
+    source = source_of(config, ["calibrate.correct=bias"])
+    seen = set()
+    for element, spot, who in (("Ni", "TWG-1-L02", "M.T."), ("Sc", "TWG-1-L01", "A.N.")):
+        page = trace(source, "EM-02", "olivine", "glass", element)
+        before = trace(plain, "EM-02", "olivine", "glass", element)
+        for phase, other in zip(phases(page), phases(before), strict=True):
+            calibration = phase["calibration"]
+            check_calibration(calibration)
+            (ruled,) = calibration["ruled_out"]
+            assert (ruled["material"], ruled["spot"], ruled["analyst"]) == ("TWG-1", spot, who)
+            (material,), (whole,) = calibration["materials"], other["calibration"]["materials"]
+            named = [{one["spot"] for one in listed["spots"]} for listed in (material, whole)]
+            assert named[1] - named[0] == {spot}
+            assert other["calibration"]["ruled_out"] == []
+            seen.add(calibration["factor"] == other["calibration"]["factor"])
+        printed = io.StringIO()
+        Console(file=printed, width=200).print(trace_tree(page))
+        assert printed.getvalue().count("ruled out of TWG-1: " + spot) == 1
+    assert seen == {False}
+
+
 @pytest.mark.parametrize(
     "overrides",
     [
@@ -565,7 +593,6 @@ def test_cells_are_those_of_the_file(source: Source):
 
 def test_the_printed_page_holds_the_numbers(source: Source):
     """D from the printed means, and the mean from the printed weights, to the digits printed."""
-    from rich.console import Console
 
     page = trace(source, "EM-05", "clinopyroxene", "glass", "Cr")
     for width in (80, 120):

@@ -253,6 +253,13 @@ def _add_calibration(
             numbers = ", ".join(_n(spot.get(name)) for spot in one["spots"])
             if name != "place" or calibration["drift_applied"] or calibration["drift_left"]:
                 material.add(Text(f"{words}: {numbers}"))
+    for one in calibration["ruled_out"]:
+        where = f"{one['spot']} ({one['table']} row {one['row']}; {_n(one['value_ppm'])} ppm)"
+        who = f"{one['analyst']}, {one['date']}: {one['reason']}"
+        text = f"ruled out of {one['material']}: {where} by {who}"
+        if text not in told:
+            _branch(node, text)
+        told.add(text)
     _add_how(node, calibration["how"], told)
 
 

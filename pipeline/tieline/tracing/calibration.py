@@ -9,8 +9,10 @@ import numpy as np
 import pyarrow as pa
 
 from tieline.arrays import numbers
+from tieline.auditing.summary import ruling_parts
 from tieline.calibrate import MOST_RELATIVE_SE
 from tieline.correction import sequence_of
+from tieline.ruled_spots import RULING, reference_rows_ruled_out
 from tieline.settings.chemistry import CalibrateSettings
 from tieline.statistics.means import paule_mandel
 from tieline.tracing.means import mean_account
@@ -51,11 +53,12 @@ def calibration_account(
     row = rows[0]
     names = ("origin", "factor", "drift_applied", "drift_left", "drift_centre", "matrix_sd")
     account: dict[str, Any] = {name: row[name] for name in names} | {"cancels": cancels}
-    account |= {"materials": [], "how": []}
+    account |= {"materials": [], "ruled_out": [], "how": []}
     drifts = bool(row["drift_applied"] or row["drift_left"])
     if cancels and row["factor"] == 1.0 and not drifts:
         return account | dict.fromkeys(("relative_sd", "relative_dof", "bias", "bias_se"))
     account |= {name: row[name] for name in ("relative_sd", "relative_dof", "bias", "bias_se")}
+    account["ruled_out"] = _ruled_out(tables, key)
     if row["origin"] != "reference materials" and not drifts:
         return account
     return account | _behind(tables, key, row, settings)
@@ -110,11 +113,34 @@ def _weights(materials: Sequence[Row]) -> tuple[list[float | None], float]:
     return weights, float(np.sqrt(between))
 
 
+def _ruled_out(tables: Mapping[str, pa.Table], key: Row) -> list[dict[str, Any]]:
+    """Values of reference materials that a person left out of one calibration, with who decided, when and why."""
+    table = _measured(tables["convert"], key)
+    findings = tables["screen.findings"]
+    table = table.filter(pa.array(reference_rows_ruled_out(table, findings)))
+    if not table.num_rows:
+        return []
+    ruled: dict[tuple[str, int], Row] = {}
+    # One on the analyte goes before one on the whole spot.
+    for finding in sorted(rows_of(findings, {"code": RULING}), key=lambda one: one["analyte"] is not None):
+        if finding["analyte"] in (None, key["analyte"]):
+            ruled[finding["table"], finding["row"]] = ruling_parts(finding)
+    names = ("material", "spot", "table", "row", "value_ppm")
+    return [
+        one | {name: ruled[one["table"], one["row"]][name] for name in ("analyst", "date", "reason")}
+        for one in table.select(names).to_pylist()
+    ]
+
+
+def _measured(convert: pa.Table, key: Row) -> pa.Table:
+    """The rows of `convert` with these labels that have a value."""
+    return convert.filter(pa.array(chosen_rows(convert, key) & np.isfinite(numbers(convert, "value_ppm"))))
+
+
 def _reference_spots(tables: Mapping[str, pa.Table], key: Row) -> dict[str, Any]:
     """Values of one material in one calibration, and their mean."""
-    chosen = chosen_rows(tables["convert"], key)
-    chosen &= np.isfinite(numbers(tables["convert"], "value_ppm"))
-    table = tables["convert"].filter(pa.array(chosen))
+    table = _measured(tables["convert"], key)
+    table = table.filter(pa.array(~reference_rows_ruled_out(table, tables["screen.findings"])))
     value, sigma = numbers(table, "value_ppm"), numbers(table, "sigma_ppm")
     account = mean_account(value, sigma, estimator="random-effects", pooled=False)
     rows = table.select(["spot", "table", "row"]).to_pylist()
