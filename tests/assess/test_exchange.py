@@ -291,3 +291,21 @@ def test_a_window_holds_for_melts_unless_it_names_another_phase():
     melts_only = {key: value for key, value in windows.items() if key[2] is None}
     unnamed = exchange_tables(both, covariance(both), windows=melts_only)[0].set_index("beta")
     assert unnamed.loc["orthopyroxene", "window_source"] == ""
+
+
+def test_without_the_ferric_share_that_was_asked_for_no_window_is_compared():
+    table = partition([{"element": "Fe", "D": 1.25}, {"element": "Mg", "D": 4.2}])
+    coefficients, checks = exchange_tables(
+        table, covariance(table), lacking={("A", "glass"): "no log_fO2 is given"}
+    )
+    assert checks["verdict"].tolist() == coefficients["verdict"].tolist() == ["cannot tell"]
+    assert "glass not known, no log_fO2 is given" in checks["detail"][0]
+
+
+def test_a_low_coefficient_of_total_iron_names_the_ferric_share_that_would_mend_it():
+    table = partition([{"element": "Fe", "D": 0.8, "D_sd": 0.008}, {"element": "Mg", "D": 4.2, "D_sd": 0.04}])
+    found = exchange_tables(table, covariance(table))[0].iloc[0]
+    detail = exchange_tables(table, covariance(table))[1]["detail"][0]
+    assert found["verdict"] == "differs"
+    share = float(detail.split("A ferric share of ")[1].split(" ")[0])
+    assert found["K_D_hi"] / (1 - share) == pytest.approx(0.27, rel=0.01)

@@ -49,6 +49,7 @@ def exchange_tables(
     *,
     pairs: Sequence[tuple[str, str]] = (("Fe", "Mg"),),
     ferric: Mapping[tuple[str, str], FerricShare] | None = None,
+    lacking: Mapping[tuple[str, str], str] | None = None,
     windows: Windows | None = None,
     melts: Sequence[str] = MELTS,
     confidence: float = 0.95,
@@ -57,7 +58,8 @@ def exchange_tables(
 
     partition, covariance: columns as in the stage files of those names; correlations: pair of elements -> how they vary
     together between the spots, as `spot_correlations` makes it; without it they count as independent. ferric:
-    (experiment, phase) -> share; phases without one are taken as free of Fe3+, and the detail says so. windows: (phase,
+    (experiment, phase) -> share; phases without one are taken as free of Fe3+, and the detail says so; lacking: why a
+    share that was asked for is not known: such coefficients are compared with no window. windows: (phase,
     "Fe-Mg", beta or None) -> low, high, source, in the place of the published ones; these, and those for no beta, hold
     for silicate melts and are used where beta is one. Where a window's source gives no range, or none is known, the
     verdict is "cannot tell".
@@ -74,7 +76,8 @@ def exchange_tables(
         shares = _shares(both, ferric or {}) if "Fe" in pair else []
         factor, relative = _ferrous_factors(shares, len(both), inverse=pair[0] != "Fe")
         found = coefficients(both, variances, pair, factor, relative, confidence)
-        made = _rows(both, pair, found, shares, windows or {}, melts, confidence)
+        unknown = lacking if lacking and shares else {}
+        made = _rows(both, pair, found, shares, unknown, windows or {}, melts, confidence)
         rows.extend(row for row, _ in made)
         checks.extend(one for _, one in made)
     order = [(*(row[key] for key in PAIR_KEYS), pairs.index((row["first"], row["second"]))) for row in rows]
@@ -132,6 +135,7 @@ def _rows(
     pair: tuple[str, str],
     found: Coefficients,
     shares: Sequence[tuple[FerricShare | None, FerricShare | None]],
+    lacking: Mapping[tuple[str, str], str],
     windows: Windows,
     melts: Sequence[str],
     confidence: float,
@@ -148,13 +152,18 @@ def _rows(
         low, high, source = known[phases]
         share = shares[place][1] if shares else None
         K_D, ends = found.value[place], (found.low[place], found.high[place])
-        verdict = compare(*ends, low, high)
+        why = [lacking.get((keys["experiment"], phase), "") for phase in phases]
+        verdict = CANNOT_TELL if any(why) else compare(*ends, low, high)
         numbers = (
             K_D, found.sd[place], *ends, found.dof[place], *correlations[place],
             share.value if share else np.nan, share.sd if share else np.nan, low, high,
         )  # fmt: skip
         words = _words(K_D, *ends, str(found.reason[place]), source, confidence)
-        words += _assumption(keys, shares[place]) if shares else ""
+        words += _assumption(phases, shares[place], why) if shares else ""
+        if shares and not share and not any(why) and pair[0] == "Fe" and ends[1] < low:
+            words += (
+                f" A ferric share of {1 - ends[1] / low:.2f} in {keys['beta']} would bring K_D to its window."
+            )
         row = {**keys, "first": pair[0], "second": pair[1], "window_source": source, "verdict": verdict}
         made.append(
             (
@@ -166,10 +175,14 @@ def _rows(
     return made
 
 
-def _assumption(keys: Mapping[str, str], shares: tuple[FerricShare | None, FerricShare | None]) -> str:
+def _assumption(
+    phases: tuple[str, str], shares: tuple[FerricShare | None, FerricShare | None], lacking: Sequence[str]
+) -> str:
     parts = [
-        f"{phase} {share.value:.3f} ± {share.sd:.3f} ({share.source})" if share else f"{phase} none assumed"
-        for phase, share in zip((keys["alpha"], keys["beta"]), shares, strict=True)
+        f"{phase} {share.value:.3f} ± {share.sd:.3f} ({share.source})"
+        if share
+        else f"{phase} {f'not known, {why}' if why else 'none assumed'}"
+        for phase, share, why in zip(phases, shares, lacking, strict=True)
     ]
     return f" Ferric share: {'; '.join(parts)}."
 

@@ -105,10 +105,10 @@ def _exchange(
 
     own = settings.exchange
     windows = {(one.phase, one.pair, one.beta): (one.low, one.high, one.source) for one in own.windows}
+    shares, lacking = ferric_shares(means, conditions, settings)
     coefficients, checks = exchange_tables(
-        D, covariance, spot_correlations(spots, pair, own.pairs), pairs=own.pairs,
-        ferric=ferric_shares(means, conditions, settings), windows=windows,
-        melts=settings.melts, confidence=settings.confidence,
+        D, covariance, spot_correlations(spots, pair, own.pairs), pairs=own.pairs, ferric=shares, lacking=lacking,
+        windows=windows, melts=settings.melts, confidence=settings.confidence,
     )  # fmt: skip
     return {"assess": checks, "assess.exchange": coefficients}
 
