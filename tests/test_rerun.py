@@ -267,7 +267,8 @@ def test_effect_of_rulings_is_that_of_a_run_without_them(own: Path, tmp_path: Pa
     assert alone.column("why").to_pylist() == other["screen"].column("why").to_pylist()
     keys = ("experiment", "alpha", "beta", "element")
     expected = {tuple(row[name] for name in keys): row for row in other["partition"].to_pylist()}
-    effects = ruling_effects(tables, session.settings, least_change=0.0)
+    accepted = runner.accepted_values(session)
+    effects = ruling_effects(tables, session.settings, accepted=accepted, least_change=0.0)
     assert len(effects) > 20
     for effect in effects:
         assert effect.without is not None
@@ -276,8 +277,35 @@ def test_effect_of_rulings_is_that_of_a_run_without_them(own: Path, tmp_path: Pa
             assert effect.without[name] == pytest.approx(expected[effect.key][name], rel=1e-12)
     changes = [abs(effect.change) for effect in effects if effect.change is not None]
     assert changes == sorted(changes, reverse=True)
-    strong = ruling_effects(tables, session.settings)
+    strong = ruling_effects(tables, session.settings, accepted=accepted)
     assert 0 < len(strong) < len(effects)
+
+
+@pytest.mark.parametrize("spots", [["TWG-1-L01"], ["TWG-1-L01", "EM05-gl-L1"]])
+def test_effect_of_a_ruling_on_a_reference_is_that_of_a_run_without_it(
+    own: Path, tmp_path: Path, spots: list[str]
+):
+    """With every value of its batch divided by another factor, some of them pass or fail a test."""
+    rulings = own.parent / "ember" / "rulings.csv"
+    header = rulings.read_text(encoding="utf-8").splitlines()[0] + "\n"
+    rulings.write_text(
+        header + "".join(f"{spot},*,drop,M.T.,2026-03-13,bubble\n" for spot in spots), encoding="utf-8"
+    )
+    session = load(own, overrides=["calibrate.correct=bias"])
+    runner.run(session)
+    names = [table for stage in STAGES for table in stage.outputs]
+    tables = runner.tables_of(session, names)
+    rulings.write_text(header, encoding="utf-8")
+    without = load(own, overrides=["calibrate.correct=bias"], out=tmp_path / "without")
+    runner.run(without)
+    keys = ("experiment", "alpha", "beta", "element")
+    rows = runner.tables_of(without, ["partition"])["partition"].to_pylist()
+    expected = {tuple(row[name] for name in keys): row for row in rows}
+    accepted = runner.accepted_values(session)
+    effects = ruling_effects(tables, session.settings, accepted=accepted, least_change=0.0)
+    assert {effect.key[0] for effect in effects} == {"EM-02", "EM-05"}
+    for effect in effects:
+        assert effect.without == expected[effect.key]
 
 
 def test_hand_exclusions_that_lean_one_way_are_remarked(own: Path):
@@ -308,3 +336,22 @@ def test_hand_exclusions_that_lean_one_way_are_remarked(own: Path):
     assert remarks(ordered[-3:]) == ["hand exclusions of olivine all lie above the mean: Ni60 (3)"]
     assert remarks(ordered[:3]) == ["hand exclusions of olivine all lie below the mean: Ni60 (3)"]
     assert remarks([ordered[0], *ordered[-2:]]) == []
+
+
+def test_exclusions_of_reference_spots_that_lean_one_way_are_remarked(own: Path):
+    convert = runner.tables_of(load(own), ["convert"])["convert"].to_pylist()
+    rows = [row for row in convert if row["material"] == "TWG-1" and row["analyte"] == "Ni60"]
+    ordered = [row["spot"] for row in sorted(rows, key=lambda row: row["value_ppm"])]
+    assert len(ordered) >= 5
+
+    def remarks(spots: list[str]) -> list[str]:
+        lines = [f"{spot},Ni60,drop,K.V.,2026-03-12,no reason" for spot in spots]
+        rulings = own.parent / "ember" / "rulings.csv"
+        header = rulings.read_text(encoding="utf-8").splitlines()[0]
+        rulings.write_text("\n".join([header, *lines]) + "\n", encoding="utf-8")
+        runner.run(load(own))
+        names = [table for stage in STAGES for table in stage.outputs]
+        return leaning_remarks(runner.tables_of(load(own), names))
+
+    assert "hand exclusions of TWG-1 all lie above the mean: Ni60 (3)" in remarks(ordered[-3:])
+    assert not any("all lie" in line for line in remarks([ordered[0], *ordered[-2:]]))

@@ -1,7 +1,8 @@
 """What a person's rulings do to the results: every D with and without them, and whether they lean one way.
 
-No test sees a ruling, so the use of the values without rulings follows from the findings alone; only the
-experiments that a ruling touches are reduced again.
+No test sees a ruling on an unknown, so the use of the values without rulings follows from the findings alone; only
+the experiments that a ruling touches are reduced again. A reference value that was ruled out may shift every value of
+its batch, before any test: then the chain is computed again from the calibration on.
 """
 
 from __future__ import annotations
@@ -13,8 +14,10 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, FloatArray, Groups, counts, flags, group_rows, labels
+from tieline.arrays import BoolArray, FloatArray, Groups, counts, flags, group_rows, is_labelled, labels
 from tieline.correction import calibrated
+from tieline.reading.input_file import InputFile
+from tieline.ruled_spots import reference_rows_ruled_out
 from tieline.screen.findings import RULING
 from tieline.settings import SessionSettings
 from tieline.stages import NAMES, STAGES
@@ -61,22 +64,30 @@ def has_rulings(findings: pa.Table) -> bool:
 
 
 def ruling_effects(
-    tables: Mapping[str, pa.Table], settings: SessionSettings, *, least_change: float = 1.0
+    tables: Mapping[str, pa.Table],
+    settings: SessionSettings,
+    *,
+    accepted: Mapping[str, InputFile],
+    least_change: float = 1.0,
 ) -> list[RulingEffect]:
     """D's that the rulings change by more than `least_change` standard uncertainties, largest change first.
 
-    tables: stage tables by name, those of `NEEDED` and whatever else `pair` and `partition` read. A D whose
-    kind changes (value, limit, none) always counts.
+    tables: stage tables by name, those of `NEEDED` and whatever else `pair` and `partition` read; accepted: the
+    file of accepted values. A D whose kind changes (value, limit, none) always counts.
     """
     findings = tables["screen.findings"]
     if not has_rulings(findings):
         return []
-    ruled = findings.filter(pa.array(labels(findings, "code").is_one_of((RULING,))))
-    experiments = labels(ruled, "experiment").texts
-    screen = without_rulings(tables["screen"], findings)
-    if np.array_equal(flags(screen, "use"), flags(tables["screen"], "use")):
-        return []
-    without = _partition(tables, screen, experiments, settings)
+    if reference_rows_ruled_out(tables["convert"], findings).any():
+        experiments = labels(tables["convert"], "experiment").texts
+        without = _from_calibration(tables, settings, accepted)
+    else:
+        ruled = findings.filter(pa.array(labels(findings, "code").is_one_of((RULING,))))
+        experiments = labels(ruled, "experiment").texts
+        screen = without_rulings(tables["screen"], findings)
+        if np.array_equal(flags(screen, "use"), flags(tables["screen"], "use")):
+            return []
+        without = _partition(tables, screen, experiments, settings)
     rows = _by_key(tables["partition"], experiments), _by_key(without, experiments)
     effects = [_effect(rows[0].get(key), rows[1].get(key)) for key in sorted({*rows[0], *rows[1]})]
     kept = [effect for effect in effects if effect is not None and _matters(effect, least_change)]
@@ -119,10 +130,28 @@ def _partition(
     local = {**tables, "convert": tables["convert"].filter(chosen), "screen": screen.filter(chosen)}
     settings = _with_pairs_that_exist(settings, local["convert"])
     for name in ("pair", "partition"):
-        stage = STAGES[NAMES.index(name)]
-        inputs = {table.replace(".", "_"): local[table] for table in stage.inputs}
-        local |= stage.function()(**inputs, settings=stage.settings(settings)).tables
+        local |= _computed(name, local, settings)
     return local["partition"]
+
+
+def _from_calibration(
+    tables: Mapping[str, pa.Table], settings: SessionSettings, accepted: Mapping[str, InputFile]
+) -> pa.Table:
+    """`partition` as it is where nobody ruled on anything."""
+    local = dict(tables)
+    files: dict[str, Mapping[str, InputFile]] = {"calibrate": accepted, "screen": {}}
+    for name in ("calibrate", "screen", "pair", "partition"):
+        local |= _computed(name, local, settings, **({"files": files[name]} if name in files else {}))
+    return local["partition"]
+
+
+def _computed(
+    name: str, tables: Mapping[str, pa.Table], settings: SessionSettings, **files: Mapping[str, InputFile]
+) -> Mapping[str, pa.Table]:
+    """The tables of one stage, from those before it."""
+    stage = STAGES[NAMES.index(name)]
+    inputs = {table.replace(".", "_"): tables[table] for table in stage.inputs}
+    return stage.function()(**inputs, **files, settings=stage.settings(settings)).tables
 
 
 def _with_pairs_that_exist(settings: SessionSettings, convert: pa.Table) -> SessionSettings:
@@ -157,7 +186,7 @@ def leaning_remarks(tables: Mapping[str, pa.Table]) -> list[str]:
     """Where hand exclusions all lie on one side of the mean, or shrink the spread by more than half.
 
     Only values that a ruling alone leaves out count. The side is taken from the mean of the values used, by
-    phase and analyte over all experiments, with at least three exclusions; the spread is the standard
+    phase, or reference material, and analyte over all experiments, with at least three exclusions; the spread is the standard
     deviation of at least three values used, with and without the excluded ones.
     """
     if not has_rulings(tables["screen.findings"]):
@@ -166,11 +195,26 @@ def leaning_remarks(tables: Mapping[str, pa.Table]) -> list[str]:
     value = calibrated(
         convert, tables["calibrate"], tables["ingest.spots"], tables["convert.standards"]
     ).value
-    excluded = labels(screen, "why").is_one_of((RULING,)) & np.isfinite(value)
-    if not excluded.any():
-        return []
-    used = flags(screen, "use") & np.isfinite(value)
-    groups = group_rows([labels(convert, name) for name in GROUP], used | excluded)
+    measured = np.isfinite(value)
+    references = reference_rows_ruled_out(convert, tables["screen.findings"]) & measured
+    parts = (
+        ("phase", labels(screen, "why").is_one_of((RULING,)) & measured, flags(screen, "use") & measured),
+        ("material", references, is_labelled(convert, "material") & measured & ~references),
+    )
+    return [
+        line
+        for name, excluded, used in parts
+        if excluded.any()
+        for line in _leaning(convert, name, value, used, excluded)
+    ]
+
+
+def _leaning(
+    convert: pa.Table, name: str, value: FloatArray, used: BoolArray, excluded: BoolArray
+) -> list[str]:
+    """The remarks on exclusions from phases or, by the column `name`, from reference materials."""
+    columns = [labels(convert, name if column == "phase" else column) for column in GROUP]
+    groups = group_rows(columns, used | excluded)
     code, size = groups.code, groups.count
     mean = group_mean(value[used], code[used], size)
     side = np.sign(value[excluded] - mean[code[excluded]])
@@ -207,7 +251,8 @@ def _shrunk(groups: Groups, value: FloatArray, used: BoolArray, excluded: BoolAr
     by_phase: dict[tuple[str, str], list[str]] = {}
     for group in np.flatnonzero(shrunk):
         key = groups.keys[group]
-        by_phase.setdefault((str(key[0]), str(key[1])), []).append(str(key[5]))
+        # Spots on reference materials belong to no experiment, but to a batch.
+        by_phase.setdefault((str(key[0] or key[4]), str(key[1])), []).append(str(key[5]))
     return [
         f"hand exclusions shrink the spread by more than half in {phase} of {experiment}: {', '.join(names)}"
         for (experiment, phase), names in sorted(by_phase.items())

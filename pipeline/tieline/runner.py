@@ -122,6 +122,13 @@ def tables_of(session: Session, names: Iterable[str]) -> dict[str, pa.Table]:
     return {name: read_table(path, name) for name, path in paths.items() if path.exists()}
 
 
+def accepted_values(session: Session) -> dict[str, InputFile]:
+    """The file of accepted values by its path; nothing where there is none."""
+    path = session.settings.ingest.reference_materials.path
+    largest = session.settings.ingest.limits.expanded_mb * 1_000_000
+    return {} if path is None else {path: read_input(session.resolve(path), path, largest)}
+
+
 def finished(session: Session, until: str) -> tuple[Session, dict[str, pa.Table], dict[str, InputFile]]:
     """The session with its settings in effect, every stage table up to one stage, and the input files.
 

@@ -83,4 +83,5 @@ def _effects(session: Session, reports: Sequence[StageReport]) -> tuple[list[Rul
     tables = runner.tables_of(session, (name for stage in STAGES for name in stage.outputs))
     if not has_rulings(tables["screen.findings"]):
         return None
-    return ruling_effects(tables, session.settings), leaning_remarks(tables)
+    accepted = runner.accepted_values(session)
+    return ruling_effects(tables, session.settings, accepted=accepted), leaning_remarks(tables)

@@ -202,7 +202,7 @@ def _left_out_rows(sheet: Sheet, spots: SpotUse) -> list[dict[str, Any]]:
 
 def _effects(source: Source) -> Sheet:
     """D's that the rulings change by more than a standard uncertainty."""
-    found = ruling_effects(source.tables, source.settings) if source.rulings else []
+    found = ruling_effects(source.tables, source.settings, accepted=source.accepted) if source.rulings else []
     names = ("experiment", "pair", "element", "with rulings", "without", "change, standard uncertainties")
     rows = [
         (

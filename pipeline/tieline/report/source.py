@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -25,12 +25,14 @@ from tieline.storage import read_table
 
 @dataclass(frozen=True)
 class Source:
-    """Tables by name, the stages' records by stage name, the settings in effect and the rulings as filed."""
+    """Tables by name, the stages' records by stage name, the settings in effect, the rulings as filed and, where
+    there are any, the file of accepted values."""
 
     tables: Mapping[str, pa.Table]
     records: Mapping[str, Mapping[str, Any]]
     settings: SessionSettings
     rulings: tuple[Ruling, ...] = ()
+    accepted: Mapping[str, InputFile] = field(default_factory=dict)
 
     def table(self, name: str) -> pa.Table:
         return self.tables[name]
@@ -80,13 +82,17 @@ def read_source(session: Session) -> Source:
 
 def read_finished(session: Session) -> Source:
     """As `read_source`, for a run folder that is known to be current."""
+    from tieline import runner
+
     names = [name for stage in STAGES for name in stage.outputs]
     records = finished_records(session)
     tables = {name: read_table(table_path(session.run_folder, name), name) for name in names}
     if finished_records(session) != records:
         message = "was written by another run while it was read."
         raise InputError(Problem(message, str(session.run_folder), remedy="Try again."))
-    return Source(tables, records, session.settings, _filed_rulings(session))
+    rulings = _filed_rulings(session)
+    accepted = runner.accepted_values(session) if rulings else {}
+    return Source(tables, records, session.settings, rulings, accepted)
 
 
 def optional_table(source: Source, name: str) -> pa.Table | None:
