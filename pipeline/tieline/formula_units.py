@@ -132,9 +132,12 @@ def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma:
         cells = np.flatnonzero(is_whole[spots] & used[codes] & np.isfinite(value[rows]))[::-1]
         target = place[spots[cells]] * len(elements) + column[codes[cells]]
         ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[rows][cells], sigma[rows][cells]
-    total = oxide_total(ppm, elements) if len(chosen) else np.zeros(0)
     weights = wt_percent_per_ppm(elements) if elements else np.zeros(0)
-    total_sd = np.sqrt(np.sum((np.where(np.isnan(ppm), 0.0, sigmas) * weights) ** 2, axis=1))
+    total, total_sd = np.empty((2, len(chosen)))
+    for rows in portions(len(chosen), SPOTS_AT_ONCE):
+        total[rows] = oxide_total(ppm[rows], elements)
+        errors = np.where(np.isnan(ppm[rows]), 0.0, sigmas[rows]) * weights
+        total_sd[rows] = np.sqrt(np.sum(errors**2, axis=1))
     return Whole(first[chosen], elements, ppm, sigmas, total, total_sd)
 
 
