@@ -2,11 +2,37 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Annotated, Literal
 
-from pydantic import Field, model_validator
+from pydantic import AfterValidator, Field, model_validator
 
 from tieline.settings.base import Settings
+
+
+def _element(text: str) -> str:
+    from tieline.chemistry.oxides import parse_oxide
+
+    element = parse_oxide(text).element
+    if element != text:
+        raise ValueError(f"elements go by their symbols here: {element} for {text}")
+    return text
+
+
+def _element_pair(text: str) -> str:
+    parts = text.split("-")
+    if len(parts) != 2:
+        raise ValueError(f"{text!r} is not a pair of elements such as Fe-Mg")
+    return "-".join(_element(part) for part in parts)
+
+
+def _known(given: tuple[float, float]) -> tuple[float, float]:
+    if not given[0] > 0 or not given[1] >= 0:
+        raise ValueError("the value must be above zero and its sd not negative")
+    return given
+
+
+Element = Annotated[str, AfterValidator(_element)]
+Known = Annotated[tuple[float, float], AfterValidator(_known)]
 
 
 class ExchangeWindow(Settings):
@@ -14,7 +40,7 @@ class ExchangeWindow(Settings):
 
     phase: str = Field(description="numerator phase")
     beta: str | None = Field(None, description="denominator phase; none: silicate melts")
-    pair: str = Field(description="the two elements, such as Fe-Mg")
+    pair: Annotated[str, AfterValidator(_element_pair)] = Field(description="the two elements, such as Fe-Mg")
     low: float = Field(ge=0, description="lower end of the window")
     high: float = Field(gt=0, description="upper end of the window")
     source: str = Field("the settings", description="where the window comes from")
@@ -49,7 +75,7 @@ class FerricSettings(Settings):
 class ExchangeSettings(Settings):
     """Exchange coefficients K_D."""
 
-    pairs: tuple[tuple[str, str], ...] = Field(
+    pairs: tuple[tuple[Element, Element], ...] = Field(
         (("Fe", "Mg"),), description="element pairs, first over second"
     )
     windows: tuple[ExchangeWindow, ...] = Field(
@@ -63,11 +89,13 @@ class KnownParameter(Settings):
 
     phase: str = Field(description="crystal")
     charge: int = Field(gt=0, description="charge of the ions")
-    r0: tuple[float, float] | None = Field(
-        None, description="radius of the site, Å: [value, sd]; sd 0 fixes it"
+    r0: Known | None = Field(
+        None,
+        description="radius of the site, Å: [value, sd]; used where the values do not suffice, and then fixed if sd is 0",
     )
-    E: tuple[float, float] | None = Field(
-        None, description="Young's modulus, GPa: [value, sd]; sd 0 fixes it"
+    E: Known | None = Field(
+        None,
+        description="Young's modulus, GPa: [value, sd]; used where the values do not suffice, and then fixed if sd is 0",
     )
 
 
@@ -81,7 +109,7 @@ class LatticeStrainSettings(Settings):
         ge=1,
         description="fewer values than this make no curve: three parameters need a fourth value to test them; own choice",
     )
-    element_charges: dict[str, int] = Field(
+    element_charges: dict[Element, int] = Field(
         default_factory=dict,
         description="element -> charge where the usual one does not hold, such as Eu = 2; an element named here shapes "
         "the curve even where it is kept off by default",
@@ -89,7 +117,7 @@ class LatticeStrainSettings(Settings):
     coordination: dict[str, int] = Field(
         default_factory=dict, description="phase -> coordination of its large site, beside the phase table's"
     )
-    leave_out: dict[str, tuple[str, ...]] = Field(
+    leave_out: dict[str, tuple[Element, ...]] = Field(
         {
             "clinopyroxene": ("Li", "Mg", "Mn", "Sc", "Zn", "Zr", "Hf", "Ge"),
             "plagioclase": ("Li", "Mg", "Mn", "Sc", "Zn", "Zr", "Hf", "Ge"),
@@ -102,6 +130,16 @@ class LatticeStrainSettings(Settings):
     without_each: bool = Field(
         False, description="fit again without each element and tell how far the curve moves; twice the time"
     )
+
+    @model_validator(mode="after")
+    def _charges_have_radii(self) -> LatticeStrainSettings:
+        from tieline.chemistry.radii import known_radii
+
+        known = {(element, charge) for element, charge, _coordination in known_radii()}
+        unknown = [f"{e} {c}+" for e, c in self.element_charges.items() if (e, c) not in known]
+        if unknown:
+            raise ValueError(f"element_charges: no ionic radius is known of {', '.join(unknown)}")
+        return self
 
 
 class MassBalanceSettings(Settings):
@@ -123,7 +161,7 @@ class MassBalanceSettings(Settings):
         description="relative uncertainty of a calibration of which `calibrate` knows none; common practice. Phases measured "
         "in one session share it",
     )
-    losable: tuple[str, ...] = Field(
+    losable: tuple[Element, ...] = Field(
         ("Fe", "Na", "K"),
         description="elements lost to the capsule or under the beam: not fitted, but judged by what the others leave for them",
     )
@@ -138,7 +176,7 @@ class MassBalanceSettings(Settings):
 class ModeSettings(Settings):
     """Proportions known from elsewhere, for bulk D where there is no mass balance."""
 
-    proportions: dict[str, dict[str, float]] = Field(
+    proportions: dict[str, dict[str, Annotated[float, Field(ge=0)]]] = Field(
         default_factory=dict,
         description="experiment -> phase -> mass fraction; used instead of the mass balance's",
     )
