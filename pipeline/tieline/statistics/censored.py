@@ -12,28 +12,18 @@ up to the smallest limit, as Poisson counts on a background of about 18 counts d
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from functools import partial
 
 import numpy as np
 from scipy import special
 
-from tieline.statistics.groups import (
-    BoolArray,
-    FloatArray,
-    IntArray,
-    divide,
-    group_count,
-    group_extreme,
-    group_mean,
-    group_sum,
-)
+from tieline.statistics.censored_groups import PaddedGroups, Rectangles
+from tieline.statistics.groups import BoolArray, FloatArray, IntArray, group_count
 from tieline.statistics.limits import MeanLimits
 from tieline.statistics.search import root, summit
 from tieline.statistics.threads import side_by_side
 
 LIMIT_IN_SIGMAS = 3.0
-GROWTH_TO_LIMIT = 0.5
 # Beyond 0.6 only strongly scattered groups matter; without them their limits cover 0.64 at a spread of 1.
 RELATIVE_SPREADS = np.array([*np.linspace(0.0, 0.4, 9), 0.5, 0.6, 0.8, 1.0, 1.4])
 RELATIVE_SPREADS_ALL_BELOW = np.array([0.0, 0.3])
@@ -46,41 +36,6 @@ _STEPS = 2.0**16
 _FAR_TAIL = -20.0
 # So many groups at a time stay in the processor's cache.
 _CHUNK_GROUPS = 2000
-
-
-@dataclass(frozen=True)
-class _Rows:
-    """Values or limits of groups as rows, and their blank variances, shape (G, N); `present` is 1 or 0."""
-
-    level: FloatArray
-    blank: FloatArray
-    present: FloatArray
-
-    def of(self, chosen: IntArray) -> "_Rows":
-        return _Rows(self.level[chosen], self.blank[chosen], self.present[chosen])
-
-
-@dataclass(frozen=True)
-class _Padded:
-    """Groups as rows: measured values, limits of the others, and the growth kappa of the noise, shape (G,)."""
-
-    measured: _Rows
-    below: _Rows
-    kappa: FloatArray
-
-    def of(self, chosen: IntArray) -> "_Padded":
-        if len(chosen) == len(self.kappa):
-            return self
-        return _Padded(self.measured.of(chosen), self.below.of(chosen), self.kappa[chosen])
-
-    @property
-    def scale(self) -> FloatArray:
-        """The largest value or limit of every group."""
-        largest = [
-            (part.present * np.abs(part.level)).max(axis=1, initial=0.0)
-            for part in (self.measured, self.below)
-        ]
-        return np.asarray(np.maximum(*largest), dtype=np.float64)
 
 
 def censored_limits(
@@ -113,7 +68,7 @@ def censored_limits(
     n = group_count(group, n_groups)
     n_censored = group_count(group[censored], n_groups)
     mean, low, high = (np.full(n_groups, np.nan) for _ in range(3))
-    rectangle = _Rectangles(values, sigmas, limits, censored, group, n_groups, limit_in_sigmas)
+    rectangle = Rectangles(values, sigmas, limits, censored, group, n_groups, limit_in_sigmas)
     affected = np.flatnonzero(n_censored > 0)
     # Groups of like size together: little of a rectangle is then empty.
     affected = affected[np.lexsort((n_censored[affected], n[affected]))]
@@ -127,8 +82,8 @@ def censored_limits(
 
 
 def _solved(
-    solve: Callable[[_Padded, IntArray, float], tuple[FloatArray, FloatArray, FloatArray]],
-    rectangle: "_Rectangles",
+    solve: Callable[[PaddedGroups, IntArray, float], tuple[FloatArray, FloatArray, FloatArray]],
+    rectangle: "Rectangles",
     n: IntArray,
     confidence: float,
     part: IntArray,
@@ -136,80 +91,7 @@ def _solved(
     return solve(rectangle(part), n[part], confidence)
 
 
-class _Rectangles:
-    """Cuts groups out of the flat arrays as rows of rectangles, with their noise model."""
-
-    def __init__(
-        self,
-        values: FloatArray,
-        sigmas: FloatArray,
-        limits: FloatArray,
-        censored: BoolArray,
-        group: IntArray,
-        n_groups: int,
-        limit_in_sigmas: float,
-    ) -> None:
-        blank, self.kappa = _noise_model(values, sigmas, limits, censored, group, n_groups, limit_in_sigmas)
-        self.parts = [
-            (rows[np.argsort(group[rows], kind="stable")], level, blank, group_count(group[rows], n_groups))
-            for rows, level in ((np.flatnonzero(~censored), values), (np.flatnonzero(censored), limits))
-        ]
-
-    def __call__(self, chosen: IntArray) -> _Padded:
-        measured, below = (self._rows(*part, chosen) for part in self.parts)
-        return _Padded(measured, below, self.kappa[chosen])
-
-    @staticmethod
-    def _rows(
-        ordered: IntArray, level: FloatArray, blank: FloatArray, count: IntArray, chosen: IntArray
-    ) -> _Rows:
-        start = (np.cumsum(count) - count)[chosen, None]
-        place = np.arange(int(count[chosen].max(initial=0)))
-        present = place < count[chosen, None]
-        rows = (
-            ordered[np.where(present, start + place, 0)]
-            if present.any()
-            else np.zeros(present.shape, np.int64)
-        )
-        return _Rows(
-            np.where(present, level[rows], 0.0),
-            np.where(present, blank[rows], 1.0),
-            present.astype(np.float64),
-        )
-
-
-def _noise_model(
-    values: FloatArray,
-    sigmas: FloatArray,
-    limits: FloatArray,
-    censored: BoolArray,
-    group: IntArray,
-    n_groups: int,
-    limit_in_sigmas: float,
-) -> tuple[FloatArray, FloatArray]:
-    """Blank variance of every value, shape (S,), and kappa of every group, shape (n_groups,)."""
-    from_limit = (limits / limit_in_sigmas) ** 2
-    blank = np.where(censored & ~np.isnan(sigmas), sigmas**2, from_limit)
-    known = ~np.isnan(blank)
-    usual = group_mean(blank[known], group[known], n_groups)
-    blank = np.where(known, blank, usual[group])
-    measured = ~censored & ~np.isnan(sigmas)
-    code, level = group[measured], np.maximum(values[measured], 0.0)
-    excess = group_sum(sigmas[measured] ** 2 - blank[measured], code, n_groups)
-    weight = group_sum(blank[measured] * level, code, n_groups)
-    smallest_limit = group_extreme(limits[censored], group[censored], n_groups, largest=False)
-    default = divide(np.full(n_groups, GROWTH_TO_LIMIT), np.nan_to_num(smallest_limit), otherwise=0.0)
-    has_measured = weight > 0
-    kappa = np.where(has_measured, divide(np.maximum(excess, 0.0), weight, 0.0), default)
-    # Sigmas below the blank's: the limit was more than three blank sigmas.
-    reported = group_sum(sigmas[measured] ** 2, code, n_groups)
-    modelled = group_sum(blank[measured] * (1.0 + kappa[code] * level), code, n_groups)
-    shrink = np.where(has_measured, np.minimum(divide(reported, modelled, 1.0), 1.0), 1.0)
-    given = censored & ~np.isnan(sigmas)
-    return np.where(given, blank, blank * shrink[group]), kappa
-
-
-def _log_likelihood(groups: _Padded, level: FloatArray, spread: FloatArray | float) -> FloatArray:
+def _log_likelihood(groups: PaddedGroups, level: FloatArray, spread: FloatArray | float) -> FloatArray:
     """Log-likelihood of one level and one relative spread of every group, shape (G,) each."""
     growth, extra = (1.0 + groups.kappa * level)[:, None], ((spread * level) ** 2)[:, None]
     mu, measured, below = level[:, None], groups.measured, groups.below
@@ -238,7 +120,7 @@ class _Profile:
     The best spread moves slowly with the level: it is looked for uphill from where it was at the last one.
     """
 
-    def __init__(self, groups: _Padded) -> None:
+    def __init__(self, groups: PaddedGroups) -> None:
         self.groups = groups
         self.spread = np.zeros(len(groups.kappa), dtype=np.int64)
 
@@ -264,7 +146,9 @@ def _is_place(position: IntArray) -> BoolArray:
     return np.asarray((position >= 0) & (position < len(RELATIVE_SPREADS)))
 
 
-def _all_below(groups: _Padded, n: IntArray, confidence: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+def _all_below(
+    groups: PaddedGroups, n: IntArray, confidence: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Mean and low are 0; high is the largest level at which all values still fall below their limits."""
     none, top = np.zeros(len(n)), 64.0 * groups.scale
     cut = np.log(0.5 * (1.0 - confidence))
@@ -281,7 +165,7 @@ def _all_below(groups: _Padded, n: IntArray, confidence: float) -> tuple[FloatAr
 
 
 def _partly_below(
-    groups: _Padded, n: IntArray, confidence: float
+    groups: PaddedGroups, n: IntArray, confidence: float
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Maximum and limits of the profile likelihood."""
     t = special.stdtrit(np.maximum(n - 1, 1), 0.5 + 0.5 * confidence)
