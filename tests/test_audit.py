@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import shutil
 import subprocess
 from collections.abc import Callable
@@ -20,6 +21,7 @@ from tieline import runner
 from tieline.auditing.audit import Audit, audit, verify
 from tieline.auditing.contents import compare_tables
 from tieline.auditing.folder import Difference, read_run_folder
+from tieline.auditing.recompute import ledger_differences
 from tieline.cli import app
 from tieline.configuration import load
 from tieline.errors import InputError
@@ -110,9 +112,51 @@ def test_untouched_run_passes(reduced: Path):
         "reason": "too high, by far (see notes)",
         "analyst": "K.V.",
         "date": "2026-03-12",
+        "material": None,
     }
     assert "screen.total.limits.glass not set → [97.5, 101.5]" in found["deviations"]
     assert [row["failed"] for row in found["reference_materials"]] == [[]] * len(found["reference_materials"])
+
+
+def test_rulings_on_reference_spots_are_told_with_their_material_and_counted(own: Path):
+    lines = "TWG-1-L01,*,drop,A.N.,2026-03-14,bubble\nTWG-1-L01,Ni60,keep,M.T.,2026-03-15,not here\n"
+    rulings = configs(own) / "ember" / "rulings.csv"
+    rulings.write_text(rulings.read_text(encoding="utf-8") + lines, encoding="utf-8")
+    runner.run(load(configs(own) / "ember.toml"))
+    found = audit(own)
+    assert found.differences == []
+    told = [row for row in found.left_out["rulings"] if row["material"]]
+    assert [(row["spot"], row["material"], row["analyst"]) for row in told] == [
+        ("TWG-1-L01", "TWG-1", "A.N."),
+        ("TWG-1-L01", "TWG-1", "M.T."),
+    ]
+    laser, *_ = [row for row in found.reference_materials if row["batch"] == "laser-1"]
+    names = read_run_folder(own).files["convert"].table
+    assert names is not None
+    measured = [
+        row["analyte"]
+        for row in names.to_pylist()
+        if row["spot"] == "TWG-1-L01" and row["value_ppm"] is not None
+    ]
+    assert "Ni60" in measured
+    assert (laser["values_ruled_out"], laser["spots_ruled_out"]) == (len(measured) - 1, 1)
+    shown = " ".join(CliRunner().invoke(app, ["audit", str(own)]).stdout.split())
+    assert "drop TWG-1-L01 (reference material TWG-1, whole spot) by A.N., 2026-03-14: bubble" in shown
+    assert f"{len(measured) - 1} of 1 spot" in shown
+
+
+def test_a_changed_account_of_the_calibration_is_found_from_its_rows(own: Path):
+    """Values moved in the recorded ledger from one outcome to another, its sum as before."""
+    folder = read_run_folder(own)
+    assert ledger_differences(folder) == []
+    record = folder.files["calibrate"].record
+    assert record is not None
+    outcomes = record["ledger"]["outcomes"]
+    outcomes["reference values with an accepted value"] -= 3
+    outcomes["reference values ruled out"] = 3
+    details = " ".join(difference.detail for difference in ledger_differences(folder))
+    assert re.search(r"reference values: (\d+) recorded, (\d+) counted", details)
+    assert "reference values ruled out: 3 recorded, 0 counted" in details
 
 
 def mutated(data: bytes, random: np.random.Generator) -> bytes:

@@ -22,7 +22,7 @@ from tieline.errors import InputError
 
 @pytest.fixture(scope="module")
 def root(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """Three reductions of one session: as configured, with other settings, and with other rulings."""
+    """Reductions of one session: as configured, with other settings, and twice with other rulings."""
     root = tmp_path_factory.mktemp("compare")
     config = short_session(root)
     for name, overrides in {"a": [], "b": OTHER}.items():
@@ -32,6 +32,9 @@ def root(tmp_path_factory: pytest.TempPathFactory) -> Path:
     line = "EM02-ol-L3,*,drop,M.T.,2026-03-13,epoxy in the pit\n"
     rulings.write_text(text + line, encoding="utf-8")
     runner.run(load(config, out=root / "c"))
+    lines = "TWG-1-L01,*,drop,M.T.,2026-03-13,bubble\nTWG-1-L01,Ni60,keep,M.T.,2026-03-13,not here\n"
+    rulings.write_text(text + lines, encoding="utf-8")
+    runner.run(load(config, out=root / "d"))
     rulings.write_text(text, encoding="utf-8")
     return root
 
@@ -186,3 +189,15 @@ def test_what_is_no_run_folder_is_told_once_and_for_both(root: Path, tmp_path: P
     assert error.value.problems[1].remedy == f"Run folders in it: {root / 'a' / 'ember'}."
     result = CliRunner().invoke(app, ["compare", str(table), str(tmp_path)])
     assert isinstance(result.exception, InputError)
+
+
+def test_a_ruling_on_a_reference_spot_is_a_change_of_its_use(root: Path):
+    (entry,) = found(root, "a", "d")["spots"]
+    assert (entry["spot"], entry["material"], entry["used_in"]) == ("TWG-1-L01", "TWG-1", "A")
+    assert (entry["rule"], entry["detail"]) == ("ruling", "bubble (M.T., 2026-03-13)")
+    assert "Sc45" in entry["analytes"]
+    assert "Ni60" not in entry["analytes"]
+    (back,) = found(root, "d", "a")["spots"]
+    assert (back["used_in"], back["analytes"]) == ("B", entry["analytes"])
+    shown = CliRunner().invoke(app, ["compare", str(root / "a" / "ember"), str(root / "d" / "ember")])
+    assert "TWG-1-L01  TWG-1 " in shown.stdout

@@ -18,6 +18,7 @@ import pyarrow.parquet as pq
 from tieline.errors import InputError, Problem
 from tieline.manifest import EFFECTIVE, read_manifest
 from tieline.plan import settings_differences, table_path
+from tieline.ruled_spots import RULING
 from tieline.run_folders import run_folder_problem
 
 KEYS = ("experiment", "alpha", "beta", "element")
@@ -136,11 +137,19 @@ def input_differences(a: Mapping[str, Any], b: Mapping[str, Any]) -> list[str]:
 def changed_use(a: Reduction, b: Reduction) -> list[dict[str, Any]]:
     """Spots with values used in one run and not in the other, and the rule that left them out.
 
+    A value of a reference material is used where no ruling keeps it out of the calibration.
     One entry per spot, run and rule, with the analytes it holds for; `rule` is a finding's code, `ruling`,
     or `absent` where the other run has no such value.
     """
     keys = _spot_keys(a.rows["screen"], b.rows["screen"])
     one, two = ({keys(row): row for row in run.rows["screen"] if not row["material"]} for run in (a, b))
+    ruled = [_ruled_references(run, keys) for run in (a, b)]
+    for rows, run, own in zip((one, two), (a, b), ruled, strict=True):
+        rows |= {
+            keys(row): {**row, "use": keys(row) not in own, "why": RULING if keys(row) in own else ""}
+            for row in run.rows["screen"]
+            if row["material"] and keys(row) in ruled[0] | ruled[1]
+        }
     details = {"A": _details(a, keys), "B": _details(b, keys)}
     entries: dict[tuple[Any, ...], dict[str, Any]] = {}
     for key in [*one, *(key for key in two if key not in one)]:
@@ -154,12 +163,26 @@ def changed_use(a: Reduction, b: Reduction) -> list[dict[str, Any]]:
         rule = "absent" if other is None else other["why"] or "not known"
         entry = entries.setdefault(
             (key[:-1], where, rule),
-            {name: present[name] for name in ("spot", "table", "experiment", "phase")}
+            {name: present[name] for name in ("spot", "table", "experiment", "phase", "material")}
             | {"used_in": where, "rule": rule, "detail": "", "analytes": []},
         )
         entry["analytes"].append(present["analyte"])
         entry["detail"] = entry["detail"] or details[absent_in].get((key, rule.split(", ")[0]), "")
     return list(entries.values())
+
+
+def _ruled_references(run: Reduction, keys: Any) -> set[Any]:
+    """Values of reference materials that a ruling drops; one on an analyte goes before one on its whole spot."""
+    rulings: dict[Any, dict[str | None, str]] = {}
+    for finding in run.rows["screen.findings"]:
+        if finding["code"] == RULING:
+            rulings.setdefault(keys(finding)[:-1], {})[finding["analyte"]] = finding["action"]
+    dropped = set()
+    for row in run.rows["screen"] if rulings else ():
+        own = rulings.get(keys(row)[:-1], {}) if row["material"] else {}
+        if own.get(row["analyte"], own.get(None)) == "drop":
+            dropped.add(keys(row))
+    return dropped
 
 
 def _spot_keys(one: list[dict[str, Any]], two: list[dict[str, Any]]) -> Any:

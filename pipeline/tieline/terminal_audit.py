@@ -10,6 +10,7 @@ from rich.table import Table
 from rich.text import Text
 
 from tieline.auditing.audit import Audit
+from tieline.report.sentences import count
 from tieline.terminal_console import console as new_console
 from tieline.terminal_console import printable
 
@@ -83,7 +84,8 @@ def _show_left_out(console: Console, audit: Audit) -> None:
 def _ruling(row: dict[str, Any]) -> str:
     what = "whole spot" if row["analyte"] is None else row["analyte"]
     who = f"{row['analyst']}, {row['date']}" if row["analyst"] else "unnamed"
-    return f"{row['verdict']} {row['spot']} ({row['experiment']} {row['phase']}, {what}) by {who}: {row['reason']}"
+    of = f"reference material {row['material']}" if row["material"] else f"{row['experiment']} {row['phase']}"
+    return f"{row['verdict']} {row['spot']} ({of}, {what}) by {who}: {row['reason']}"
 
 
 def _show_reference_materials(console: Console, materials: Sequence[dict[str, Any]]) -> None:
@@ -92,9 +94,9 @@ def _show_reference_materials(console: Console, materials: Sequence[dict[str, An
     if not materials:
         console.print(Text("  none measured"))
         return
-    table = _table(
-        "batch", "material", "spots", "pass", "fail", "measured/accepted of those that fail", right=0
-    )
+    ruled = any(row["values_ruled_out"] for row in materials)
+    names = ("batch", "material", "spots", *(["values ruled out"] if ruled else []), "pass", "fail")
+    table = _table(*names, "measured/accepted of those that fail", right=0)
     for row in materials:
         failed = ", ".join(
             f"{one['element']} {one['ratio']:.3f}±{one['ratio_se']:.3f}" for one in row["failed"]
@@ -103,6 +105,7 @@ def _show_reference_materials(console: Console, materials: Sequence[dict[str, An
             row["batch"],
             row["material"],
             str(row["n_spots"]),
+            *([f"{row['values_ruled_out']} of {count(row['spots_ruled_out'], 'spot')}"] if ruled else []),
             str(row["passed"]),
             str(len(row["failed"])),
             failed,

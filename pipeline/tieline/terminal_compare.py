@@ -50,7 +50,7 @@ def _show(console: Console, title: str, table: Table, count: int) -> None:
 def _spots(entries: Sequence[Mapping[str, Any]]) -> Table:
     table = _table("spot", "of", "used in", "left out in the other by", "values")
     for entry in entries[:MOST_ROWS]:
-        of = f"{entry['experiment']} {entry['phase']}"
+        of = entry["material"] or f"{entry['experiment']} {entry['phase']}"
         rule = f"{entry['rule']}: {entry['detail']}" if entry["detail"] else entry["rule"]
         names = entry["analytes"]
         values = ", ".join(names) if len(names) <= 2 else f"{len(names)}"

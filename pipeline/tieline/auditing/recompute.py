@@ -12,6 +12,7 @@ from tieline import __version__, runner
 from tieline.arrays import flags, labels, numbers
 from tieline.auditing.contents import compare_tables
 from tieline.auditing.folder import Difference, RunFolder, read_stage_file
+from tieline.auditing.summary import values_ruled_out
 from tieline.configuration import Session
 from tieline.errors import InputError
 from tieline.plan import table_path
@@ -177,6 +178,8 @@ def _counted(folder: RunFolder, stage: str, outcomes: Mapping[str, int]) -> list
     table = folder.table(stage)
     if table is None:
         return []
+    if stage == "calibrate":
+        return _counted_references(folder, outcomes)
     if stage == "screen":
         return [("used", outcomes.get("used", 0), int(flags(table, "use").sum()))]
     if stage == "pair":
@@ -186,6 +189,25 @@ def _counted(folder: RunFolder, stage: str, outcomes: Mapping[str, int]) -> list
         classes = labels(table, "class").text().tolist()
         return [(name, count, classes.count(name)) for name, count in outcomes.items()]
     return []
+
+
+def _counted_references(folder: RunFolder, outcomes: Mapping[str, int]) -> list[tuple[str, int, int]]:
+    """Values of reference materials behind the calibration, and those ruled out where `screen` read the same rulings."""
+    counted = []
+    materials = folder.table("calibrate.materials")
+    if materials is not None:
+        words = ("reference values with an accepted value", "reference values without one")
+        recorded = sum(outcomes.get(name, 0) for name in words)
+        counted.append(("reference values", recorded, int(numbers(materials, "n_spots").sum())))
+    path = None if folder.settings is None else folder.settings.screen.rulings
+    digests = [
+        None if record is None else record.get("inputs", {}).get(path)
+        for record in (_record(folder, name) for name in ("calibrate", "screen"))
+    ]
+    if digests[0] == digests[1] and folder.table("screen.findings") is not None:
+        what = "reference values ruled out"
+        counted.append((what, outcomes.get(what, 0), len(values_ruled_out(folder))))
+    return counted
 
 
 def _record(folder: RunFolder, stage: str) -> dict[str, Any] | None:

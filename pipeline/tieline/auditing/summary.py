@@ -9,9 +9,10 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import flags, labels
+from tieline.arrays import flags, is_labelled, labels, numbers
 from tieline.auditing.folder import RunFolder
 from tieline.chemistry.phases import PHASES
+from tieline.ruled_spots import reference_rows_ruled_out
 from tieline.rulings_effect import NEEDED, leaning_remarks
 from tieline.screen.counting import counts_by_test
 from tieline.screen.findings import RULING
@@ -47,7 +48,11 @@ def left_out(folder: RunFolder) -> dict[str, Any]:
         }
         for count in counts_by_test(screen, findings)
     ]
-    return {"tests": tests, "rulings": rulings(findings), "set_aside": _set_aside(folder)}
+    return {
+        "tests": tests,
+        "rulings": rulings(findings, folder.table("ingest.spots")),
+        "set_aside": _set_aside(folder),
+    }
 
 
 def _values_by_code(screen: pa.Table) -> dict[str, int]:
@@ -60,10 +65,16 @@ def _values_by_code(screen: pa.Table) -> dict[str, int]:
     return values
 
 
-def rulings(findings: pa.Table) -> list[dict[str, Any]]:
-    """Every ruling with spot, verdict, person, date and reason."""
+def rulings(findings: pa.Table, spots: pa.Table | None = None) -> list[dict[str, Any]]:
+    """Every ruling with spot, verdict, person, date and reason; and the reference material that the spot is on."""
     rows = findings.filter(pa.array(labels(findings, "code").is_one_of((RULING,)))).to_pylist()
-    return [ruling_parts(row) for row in rows]
+    material = _materials_of_spots(spots) if rows and spots is not None else {}
+    return [ruling_parts(row) | {"material": material.get((row["table"], row["row"]))} for row in rows]
+
+
+def _materials_of_spots(spots: pa.Table) -> dict[tuple[str, int], str]:
+    of_materials = spots.filter(pa.array(is_labelled(spots, "material"))).select(["table", "row", "material"])
+    return {(row["table"], row["row"]): row["material"] for row in of_materials.to_pylist()}
 
 
 def ruling_parts(finding: Mapping[str, Any]) -> dict[str, Any]:
@@ -95,16 +106,21 @@ def leaning(folder: RunFolder) -> list[str]:
 
 
 def reference_materials(folder: RunFolder) -> list[dict[str, Any]]:
-    """Per batch and material: elements that pass the laboratory's limit, and each that does not."""
+    """Per batch and material: elements that pass the laboratory's limit, and each that does not; and how many
+    values and spots of it a person ruled out."""
     table = folder.table("calibrate.materials")
     groups: dict[tuple[str, str, str], dict[str, Any]] = {}
-    for row in table.to_pylist() if table is not None else []:
-        key = row["technique"], row["batch"], row["material"]
-        entry = groups.setdefault(
-            key,
-            dict(zip(("technique", "batch", "material"), key, strict=True))
-            | {"n_spots": 0, "passed": 0, "failed": [], "without_accepted_value": 0},
+
+    def entry_of(row: Mapping[str, Any]) -> dict[str, Any]:
+        names = ("technique", "batch", "material")
+        new = {"n_spots": 0, "passed": 0, "failed": [], "without_accepted_value": 0}
+        new |= {"values_ruled_out": 0, "spots_ruled_out": 0}
+        return groups.setdefault(
+            (row[names[0]], row[names[1]], row[names[2]]), {**{name: row[name] for name in names}, **new}
         )
+
+    for row in table.to_pylist() if table is not None else []:
+        entry = entry_of(row)
         entry["n_spots"] = max(entry["n_spots"], row["n_spots"])
         if row["passed"] is None:
             entry["without_accepted_value"] += 1
@@ -112,7 +128,24 @@ def reference_materials(folder: RunFolder) -> list[dict[str, Any]]:
             entry["passed"] += 1
         else:
             entry["failed"].append({name: row[name] for name in ("element", "ratio", "ratio_se")})
+    seen = set()
+    for row in values_ruled_out(folder):
+        entry = entry_of(row)
+        entry["values_ruled_out"] += 1
+        entry["spots_ruled_out"] += (row["table"], row["row"]) not in seen
+        seen.add((row["table"], row["row"]))
     return list(groups.values())
+
+
+def values_ruled_out(folder: RunFolder) -> list[dict[str, Any]]:
+    """Measured values of reference materials that a ruling keeps out of the calibration, by their labels."""
+    convert, findings = folder.table("convert"), folder.table("screen.findings")
+    if convert is None or findings is None:
+        return []
+    ruled = reference_rows_ruled_out(convert, findings) & np.isfinite(numbers(convert, "value_ppm"))
+    names = ["technique", "batch", "material", "table", "row"]
+    rows: list[dict[str, Any]] = convert.select(names).filter(pa.array(ruled)).to_pylist()
+    return rows
 
 
 def unmatched_labels(folder: RunFolder) -> list[str]:
