@@ -40,7 +40,7 @@ def covariance_table(
         measured[1], behind[1][behind[1] >= 0]
     )
     code, sharing = _pair_codes(table), usable & ((keys[0] >= 0) | (keys[1] >= 0) | is_source)
-    first, second = _pairs_within(code, usable, sharing)
+    first, second, variances = _pairs_within(code, usable, sharing)
     apart = sides[0].standard_calibration_key[rows] != sides[1].standard_calibration_key[rows]
     shared = np.zeros(len(first))
     # Over the many pairs only what says something: mostly one standard per phase, and its source not among the D.
@@ -61,12 +61,11 @@ def covariance_table(
             shared += np.where(
                 (source[first] >= 0) & (own[second] == source[first]), relative[first] ** 2, 0.0
             )
-    is_variance = first == second
     covariance = D[first] * D[second]
     covariance *= shared
-    covariance[is_variance] = sd[first[is_variance]] ** 2
+    covariance[variances] = sd[usable] ** 2
     kept = shared != 0
-    kept |= is_variance
+    kept[variances] = True
     if not kept.all():
         first, second, covariance = first[kept], second[kept], covariance[kept]
     return build(
@@ -101,18 +100,24 @@ def _pair_codes(table: pa.Table) -> IntArray:
     return np.cumsum(new)
 
 
-def _pairs_within(code: IntArray, usable: BoolArray, sharing: BoolArray) -> tuple[IntArray, IntArray]:
+def _pairs_within(
+    code: IntArray, usable: BoolArray, sharing: BoolArray
+) -> tuple[IntArray, IntArray, IntArray]:
     """Row pairs (i, j), sorted: every usable row with itself, and i < j of all sharing rows with one code.
 
-    Rows of one code stand together; a sharing row is usable.
+    Rows of one code stand together; a sharing row is usable. Also the places of the pairs of a row with itself, in the
+    order of the usable rows.
     """
     alone, among = np.flatnonzero(usable), np.flatnonzero(sharing)
+    if not len(among):
+        return alone, alone, np.arange(len(alone))
     place = np.cumsum(sharing)[alone]  # of the next sharing row after each
     end = np.searchsorted(code[among], code[alone], side="right")
     size = np.where(sharing[alone], end - place, 0) + 1
-    first = np.repeat(np.arange(len(alone)), size)
-    offset = np.arange(len(first)) - np.repeat(np.cumsum(size) - size, size)
-    second = alone[first]
-    later = offset > 0
-    second[later] = among[place[first[later]] + offset[later] - 1]
-    return alone[first], second
+    start = np.cumsum(size) - size
+    # Each row's later partners stand side by side in `among`; one place before them is for the row itself.
+    partner = np.repeat(place - 1 - start, size)
+    partner += np.arange(len(partner))
+    second = among[partner]
+    second[start] = alone
+    return np.repeat(alone, size), second, start
