@@ -286,3 +286,16 @@ def test_bulk_coefficients_cover():
             true = (truth[0] * d1 + truth[2] * d2) / (truth[0] + truth[2])
             hits[place] += bulk.loc[element, "bulk_D_lo"] <= true <= bulk.loc[element, "bulk_D_hi"]
     assert np.all(hits / cases > 0.95 - 3.5 * np.sqrt(0.95 * 0.05 / cases))
+
+
+def test_elements_are_grouped_by_the_reason_for_which_they_are_not_used():
+    table = means()
+    table.loc[(table["phase"] == "olivine") & table["element"].isin(["Al", "Ti"]), "mean_ppm"] = np.nan
+    words = mass_balance_tables(table, start()).checks["detail"][0]
+    assert "Al, Ti not used: not measured in olivine." in words
+
+
+def test_elements_kept_apart_are_named_where_too_few_are_left():
+    few = mass_balance_tables(means(), start(), losable=tuple(start()["element"])).checks
+    assert few["verdict"].tolist() == ["cannot tell"]
+    assert "Kept apart as losable: " in few["detail"][0]

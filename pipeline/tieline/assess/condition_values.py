@@ -30,6 +30,11 @@ class ConditionValues:
     common: tuple[str, str] | None = None
 
 
+def varies(x: pd.Series[float]) -> bool:
+    """Whether there are two different values: nothing can be drawn against one."""
+    return bool(x.nunique() > 1)
+
+
 def inverse_temperature(
     temperature_C: np.ndarray, temperature_sd: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -133,9 +133,10 @@ def _checks(
 ) -> list[dict[str, Any]]:
     """The fit as a whole, the older yardstick, and every loss."""
     keys = {"experiment": experiment}
-    unusable = "".join(f" {element} not used: {why}." for element, why in balance.unusable.items())
+    unusable = _not_used(balance.unusable)
     if mixture.verdict != FITTED:
-        words = f"No mass balance: {mixture.reason}.{unusable}"
+        apart = ", ".join(element for element, fit in zip(balance.elements, kept, strict=True) if not fit)
+        words = f"No mass balance: {mixture.reason}.{unusable}{f' Kept apart as losable: {apart}.' if apart else ''}"
         return [check("mass-balance", keys, "phase proportions", CANNOT_TELL, words)]
     names = np.array(balance.elements)[kept]
     parts = ", ".join(
@@ -179,6 +180,14 @@ def _checks(
             )
         )  # fmt: skip
     return rows
+
+
+def _not_used(unusable: Mapping[str, str]) -> str:
+    """The elements of the start that could not enter, reason by reason."""
+    reasons: dict[str, list[str]] = {}
+    for element, why in unusable.items():
+        reasons.setdefault(why, []).append(element)
+    return "".join(f" {', '.join(elements)} not used: {why}." for why, elements in reasons.items())
 
 
 def _sum_check(keys: dict[str, Any], mixture: Mixture) -> dict[str, Any]:

@@ -8,16 +8,16 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pyarrow as pa
 
-from tieline.assess.approach import runs_at_the_same_conditions
-from tieline.assess.condition_values import condition_values
+from tieline.assess.condition_values import condition_values, varies
 from tieline.assess.frames import Conditions, conditions_frame, frame, stage_table
 from tieline.assess.mean_factors import mean_factors
 from tieline.assess.overlap import overlap_checks
+from tieline.assess.remarks import remarks
 from tieline.assess.spot_correlation import SpotTables, spot_correlations
 from tieline.assess.starting_composition import Start, read_starting_composition
 from tieline.columns import EVIDENCE
 from tieline.reading.input_file import InputFile
-from tieline.results import Ledger, Remark, StageResult
+from tieline.results import Ledger, StageResult
 from tieline.settings.assess import AssessSettings
 
 if TYPE_CHECKING:
@@ -87,7 +87,9 @@ def assess(
     verdicts = tables["assess"].column("verdict").to_pylist()
     outcomes = {verdict: verdicts.count(verdict) for verdict in ("consistent", "differs", "cannot tell")}
     return StageResult(
-        tables, Ledger("checks", len(verdicts), outcomes), _remarks(every, conditions, means, D, settings)
+        tables,
+        Ledger("checks", len(verdicts), outcomes),
+        remarks(every, conditions, means, D, start, settings),
     )
 
 
@@ -203,7 +205,7 @@ def _trends(D: pd.DataFrame, conditions: Conditions, means: pd.DataFrame, settin
     made = []
     for condition in own.conditions:
         values = condition_values(condition, conditions, means, settings)
-        if values is not None:
+        if values is not None and varies(values.x):
             made.append(
                 trend_tables(
                     D, condition, values.x, values.x_sd, settings.confidence, without_each=own.without_each,
@@ -230,59 +232,3 @@ def _consistency(D: pd.DataFrame, means: pd.DataFrame, settings: AssessSettings)
         through_third_phase(D, settings.confidence),
         rim_against_core(means, confidence=settings.confidence),
     ]
-
-
-def _remarks(
-    checks: list[dict[str, object]],
-    conditions: Conditions,
-    means: pd.DataFrame,
-    D: pd.DataFrame,
-    settings: AssessSettings,
-) -> tuple[Remark, ...]:
-    """What needs attention: exchange outside its window, losses, conditions that are not there, runs not compared."""
-    remarks = []
-    for row in checks:
-        pair = " ".join(str(row[key]) for key in ("experiment", "alpha") if row[key])
-        if row["verdict"] != "differs":
-            continue
-        if row["check"] == "exchange":
-            words = f"{row['subject']} {row['value']:.3g} lies outside {row['expected_lo']:.3g} to {row['expected_hi']:.3g}"
-            remarks.append(Remark(words, pair))
-        elif row["check"] == "mass-balance" and str(row["subject"]).endswith("loss"):
-            remarks.append(Remark(str(row["detail"]).split(", p ")[0], pair))
-    if not len(D):
-        return tuple(remarks)
-    own = settings.trends
-    missing = [
-        name
-        for name in dict.fromkeys((*own.conditions, *own.predict))
-        if name not in own.conditions or condition_values(name, conditions, means, settings) is None
-    ]
-    if missing:
-        remarks.append(
-            Remark(
-                f"no trends against {', '.join(missing)}: no condition of the experiments' table or [assess.trends], "
-                "and no mean of a phase"
-            )
-        )
-    return (*remarks, *_not_compared(conditions, settings))
-
-
-def _not_compared(conditions: Conditions, settings: AssessSettings) -> tuple[Remark, ...]:
-    """Runs of different length that no other run can be compared with, and conditions named that are not there."""
-    whole = conditions.whole()
-    absent = [name for name in settings.same_conditions if name not in whole.columns]
-    if absent:
-        return (
-            Remark(f"same_conditions names {', '.join(absent)}, which the experiments' table does not hold"),
-        )
-    if settings.duration not in whole.columns or whole[settings.duration].nunique() < 2:
-        return ()
-    if runs_at_the_same_conditions(whole, settings.duration, settings.same_conditions):
-        return ()
-    return (
-        Remark(
-            "no two runs differ in duration alone, so the approach to equilibrium was not looked at; name in "
-            "[assess] same_conditions what they must have in common"
-        ),
-    )

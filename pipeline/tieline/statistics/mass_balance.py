@@ -100,7 +100,7 @@ def mix(
     row. shared_sd (g, m, k): errors that the components of a row have in common, such as that of one calibration:
     entries of one g and row are one variable, and a negative one goes against the others. Minimises
     sum (mixture - A x)² / (sd² + sum x² sd_A² + sum_g (sum x sd_g)²) over x >= 0, which is maximum likelihood for
-    normal errors on both sides (a structural relation; Fuller 1987, Measurement Error Models, section 2.3; for mineral
+    normal errors on both sides (a functional relation; Fuller 1987, Measurement Error Models, section 2.3; for mineral
     modes Albarède 1995, Introduction to Geochemical Modeling, section 5.2; both from memory). Intervals follow the
     profile likelihood. The unweighted fit is that of Bryan et al. (1969), Science 163:926.
 
@@ -238,6 +238,6 @@ def shortfall(
     tail = (
         special.ndtr(-np.asarray(np.abs(z)))
         if mixture.scale == 1
-        else 1.0 - special.stdtr(max(mixture.dof, 1), np.abs(z))
+        else special.stdtr(max(mixture.dof, 1), -np.abs(z))
     )
     return Shortfall(loss, sd, loss - half, loss + half, z, 2.0 * tail)
