@@ -7,6 +7,7 @@ import io
 import math
 import shutil
 import subprocess
+from pathlib import Path
 
 import numpy as np
 import openpyxl
@@ -15,10 +16,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from report.conftest import FORMULAS, SCRIPT
+from test_audit import short_session
+from tieline import runner
 from tieline.columns import CLASSIFY
-from tieline.configuration import Session
+from tieline.configuration import Session, load
 from tieline.report.csv_files import csv_bytes, defused
 from tieline.report.latex import escaped, partition_document
+from tieline.report.left_out import by_person, by_reason
+from tieline.report.methods import methods
 from tieline.report.sheets import Heading, Sheet, partition_sheet
 from tieline.report.source import Source, read_source
 from tieline.report.spots import spot_use
@@ -220,3 +225,35 @@ def test_mean_of_written_intervals_is_inside(ember_source: Source):
     known = np.isfinite(D)
     assert known.sum() > 100
     assert np.all((low[known] <= D[known]) & (D[known] <= high[known]))
+
+
+def test_values_of_a_reference_spot_ruled_out_stand_in_the_list_and_in_the_words(tmp_path: Path):
+    config = short_session(tmp_path)
+    with (config.parent / "ember" / "rulings.csv").open("a", encoding="utf-8") as file:
+        file.write("TWG-1-L01,*,drop,A.N.,2026-03-14,bubble\nTWG-1-L01,Ni60,keep,M.T.,2026-03-15,not here\n")
+        file.write("TWG-1-L02,Ni60,drop,M.T.,2026-03-15,spike\nTWG-1-L03,*,drop,M.T.,2026-03-15,edge\n")
+    session = load(config)
+    runner.run(session)
+    source = read_source(session)
+    files = dict(report_files(source))
+    rows = {row["spot"]: row for row in records(files["left_out.csv"]) if row["spot"].startswith("TWG-1")}
+    assert {
+        spot: (row["why"], row["decided_by"], row["date"], row["detail"]) for spot, row in rows.items()
+    } == {
+        "TWG-1-L01": ("ruling", "A.N.", "2026-03-14", "bubble (A.N., 2026-03-14)"),
+        "TWG-1-L02": ("ruling", "M.T.", "2026-03-15", "spike (M.T., 2026-03-15)"),
+        "TWG-1-L03": ("ruling", "M.T.", "2026-03-15", "edge (M.T., 2026-03-15)"),
+    }
+    assert (rows["TWG-1-L02"]["analyte"], rows["TWG-1-L02"]["n_values"]) == ("Ni60", "1")
+    assert rows["TWG-1-L03"]["analyte"] == "*"
+    n_all = int(rows["TWG-1-L03"]["n_values"])
+    assert int(rows["TWG-1-L01"]["n_values"]) == n_all - 1
+    spots = spot_use(source.tables)
+    text = methods(source, spots).paragraph()
+    assert (
+        "Analyses of reference materials left out by hand, with a recorded reason: "
+        f"M.T. 2 spots ({n_all + 1} values), A.N. 1 spot ({n_all - 1} values)."
+    ) in text
+    assert {reason.name for reason in by_person(source, spots)} == {"K.V."}
+    assert {reason.name: reason.n_spots for reason in by_reason(spots)}["ruling"] == 1
+    assert "M.T., reference materials" in files["report.html"].decode()

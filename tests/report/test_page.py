@@ -211,11 +211,14 @@ def test_saved_rulings_change_the_next_run(tmp_path: Path, open_page):
     assert watched.complaints == []
 
 
-def test_reference_material_cannot_be_ruled(ember: Session, open_page):
+def test_a_reference_spot_can_be_ruled_out_of_the_calibration(ember: Session, open_page):
     page = open_page(ember).page
     page.evaluate("choose({ spot: SPOTS.spot.indexOf('TWG-1-01') })")
-    assert "reference material" in page.inner_text("#spot")
-    assert page.locator("#rule").count() == 0
+    assert "drop takes it out of the calibration" in page.inner_text("#spot")
+    assert page.locator("input[name=rule-verdict]:checked").get_attribute("value") == "drop"
+    rule(page, "TWG-1-01", "drop", "inclusion")
+    lines = csv.DictReader(io.StringIO(page.evaluate("rulingsCsv()")))
+    assert ("TWG-1-01", "*", "drop") in {(one["spot"], one["analyte"], one["verdict"]) for one in lines}
 
 
 def test_hostile_labels_show_as_text(hostile: Session, open_page):

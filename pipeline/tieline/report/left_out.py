@@ -61,17 +61,27 @@ def by_test(spots: SpotUse) -> list[Reason]:
 
 
 def by_reason(spots: SpotUse) -> list[Reason]:
-    """Tests and, as one, all rulings."""
-    return _reasons(spots, lambda one: one.why.split(", "))
+    """Tests and, as one, all rulings on unknowns."""
+    return _reasons(spots, lambda one: [] if one.of_reference else one.why.split(", "))
 
 
 def by_person(source: Source, spots: SpotUse) -> list[Reason]:
-    """Analysts in order of the values their rulings keep out."""
+    """Analysts in order of the values their rulings keep out of the phase means."""
 
     def analysts(one: LeftOut) -> list[str]:
-        if RULING not in one.why.split(", "):
+        if one.of_reference or RULING not in one.why.split(", "):
             return []
         ruling = _ruling(source, _key(spots, one.spot), one.analytes)
+        return [ruling.analyst] if ruling else []
+
+    return _reasons(spots, analysts)
+
+
+def ruled_references(source: Source, spots: SpotUse) -> list[Reason]:
+    """Analysts in order of the values of reference materials that their rulings keep out of the calibration."""
+
+    def analysts(one: LeftOut) -> list[str]:
+        ruling = _ruling(source, _key(spots, one.spot), one.analytes) if one.of_reference else None
         return [ruling.analyst] if ruling else []
 
     return _reasons(spots, analysts)

@@ -13,6 +13,7 @@ from tieline.arrays import flags, labels, numbers
 from tieline.chemistry.names import recognise_analyte
 from tieline.report.conventions import percent
 from tieline.report.latex import PREAMBLE, escaped
+from tieline.report.left_out import ruled_references
 from tieline.report.methods_screening import screened
 from tieline.report.references import REFERENCES
 from tieline.report.sentences import and_, count
@@ -164,6 +165,13 @@ def _calibrated(source: Source, spots: SpotUse) -> Iterable[str]:
             f"{verdicts.count(False)} were off by more than {percent(tolerance.relative)} and {tolerance.sigmas:g} "
             "standard uncertainties."
         )
+    people = ruled_references(source, spots)
+    if people:
+        parts = [
+            f"{reason.name} {count(reason.n_spots, 'spot')} ({count(reason.n_values, 'value')})"
+            for reason in people
+        ]
+        yield f"Analyses of reference materials left out by hand, with a recorded reason: {', '.join(parts)}."
     correct = source.settings.calibrate.correct
     done = {
         False: "No correction for bias was applied",

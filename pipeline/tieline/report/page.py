@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import base64
 import hashlib
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
+from dataclasses import replace
 from importlib.resources import files
 from typing import Any
 
@@ -16,7 +17,7 @@ from tieline.report.attention import attention
 from tieline.report.compact import script_json
 from tieline.report.conventions import conventions, percent, short_convention
 from tieline.report.currency import stamp
-from tieline.report.left_out import Reason, by_person, by_test
+from tieline.report.left_out import Reason, by_person, by_test, ruled_references
 from tieline.report.page_data import Curve, page_data
 from tieline.report.sheets import Cell, Heading, Sheet, declared_sheet, runs_sheet, settings_rows
 from tieline.report.source import Source
@@ -78,7 +79,7 @@ def page(source: Source, spots: SpotUse, left_out: Sheet, methods: str, curves: 
         effects=_effects(source),
         leaning=leaning_remarks(source.tables) if source.rulings else [],
         by_test=_reasons("test", by_test(spots)),
-        by_person=_reasons("analyst", by_person(source, spots)),
+        by_person=_reasons("analyst", [*by_person(source, spots), *_of_references(source, spots)]),
         left_out=_left_out_rows(left_out, spots),
         rulings_file=f" ({rulings})" if rulings else ", which is not set yet",
         settings=_changed(source, reading=False),
@@ -167,6 +168,11 @@ def _stages(source: Source) -> Sheet:
     ]  # fmt: skip
     headings = (Heading("stage"), Heading("entered"), Heading("what became of it"))
     return Sheet("stages", headings, tuple([row[place] for row in rows] for place in range(3)))
+
+
+def _of_references(source: Source, spots: SpotUse) -> Iterable[Reason]:
+    for reason in ruled_references(source, spots):
+        yield replace(reason, name=f"{reason.name}, reference materials")
 
 
 def _reasons(title: str, reasons: Sequence[Reason]) -> Sheet:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import defaultdict
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -11,6 +11,7 @@ import numpy as np
 import pyarrow as pa
 
 from tieline.arrays import IntArray, flags, labels, numbers
+from tieline.ruled_spots import RULING, reference_rows_ruled_out
 from tieline.screen.resolution import NOT_MEASURED, REFERENCE_MATERIAL
 
 # Nobody left these out: there is nothing to use, or they serve the calibration.
@@ -19,12 +20,16 @@ NOT_A_DECISION = ("", NOT_MEASURED, REFERENCE_MATERIAL)
 
 @dataclass(frozen=True)
 class LeftOut:
-    """Values of one spot that were left out for the same reasons; `analytes` is empty for all it has."""
+    """Values of one spot that were left out for the same reasons; `analytes` is empty for all it has.
+
+    Those `of_reference` were ruled out of the calibration: no phase mean would have used them.
+    """
 
     spot: int
     why: str
     analytes: tuple[str, ...]
     n_values: int
+    of_reference: bool = False
 
 
 @dataclass(frozen=True)
@@ -51,7 +56,7 @@ class SpotUse:
 
 
 def spot_use(tables: Mapping[str, pa.Table]) -> SpotUse:
-    """What became of every spot of a session, from `ingest.spots` and `screen`."""
+    """What became of every spot of a session, from `ingest.spots`, `convert`, `screen` and its findings."""
     spots, screen = tables["ingest.spots"], tables["screen"]
     order = np.lexsort(
         (numbers(spots, "row"), labels(spots, "table").codes, labels(spots, "technique").codes)
@@ -62,12 +67,13 @@ def spot_use(tables: Mapping[str, pa.Table]) -> SpotUse:
     why = labels(screen, "why")
     measured = why.text() != NOT_MEASURED
     used = flags(screen, "use")
+    n_measured = np.bincount(of_row[measured], minlength=size)
     return SpotUse(
         {name: spots.column(name).to_pylist() for name in spots.column_names},
         of_row,
-        np.bincount(of_row[measured], minlength=size),
+        n_measured,
         np.bincount(of_row[used], minlength=size),
-        _left_out(screen, of_row, np.bincount(of_row[measured], minlength=size)),
+        (*_left_out(screen, of_row, n_measured), *_ruled_out(tables, of_row)),
     )
 
 
@@ -98,3 +104,17 @@ def _left_out(screen: pa.Table, of_row: IntArray, n_measured: IntArray) -> tuple
         LeftOut(spot, reason, () if len(names) == n_measured[spot] else tuple(names), len(names))
         for (spot, reason), names in sorted(groups.items())
     )
+
+
+def _ruled_out(tables: Mapping[str, pa.Table], of_row: IntArray) -> Iterable[LeftOut]:
+    """Values of reference materials that a ruling keeps out of the calibration, spot by spot."""
+    convert = tables["convert"]
+    ruled = reference_rows_ruled_out(convert, tables["screen.findings"])
+    if not ruled.any():
+        return
+    measured = np.isfinite(numbers(convert, "value_ppm"))
+    analyte = labels(convert, "analyte")
+    for spot in np.unique(of_row[ruled & measured]).tolist():
+        own = np.flatnonzero((of_row == spot) & measured)
+        names = tuple(analyte.texts[code] for code in analyte.codes[own[ruled[own]]])
+        yield LeftOut(spot, RULING, () if len(names) == len(own) else names, len(names), of_reference=True)

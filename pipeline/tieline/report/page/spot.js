@@ -57,15 +57,15 @@ const signed = (value) => {
 };
 
 function rulingForm(spot) {
-  if (text(SPOTS.material, spot) !== null) return make("p", { class: "note" }, "A reference material never enters a phase mean; there is nothing to rule.");
+  const reference = text(SPOTS.material, spot) !== null;
   const analytes = DATA.analytes.filter((analyte) => measured(analyte, spot)).map((analyte) => analyte.name);
   const field = (name, input) => make("label", {}, `${name} `, input);
   const what = make("select", { id: "rule-analyte" }, make("option", { value: "*" }, "the whole spot"), analytes.map((name) => make("option", { value: name }, name)));
   const reason = make("input", { id: "rule-reason", type: "text", required: true, autocomplete: "off" });
   const analyst = make("input", { id: "rule-analyst", type: "text", required: true, value: rulingForm.analyst || "", autocomplete: "off" });
   const day = make("input", { id: "rule-date", type: "date", required: true, value: today() });
-  const verdicts = ["drop", "keep"].map((name) => make("label", { class: "choice" }, make("input", { type: "radio", name: "rule-verdict", value: name, required: true, checked: name === (SPOTS.used[spot] ? "drop" : "keep") }), ` ${name}`));
-  const form = make("form", { id: "rule" }, make("fieldset", {}, make("legend", {}, "Your ruling"), make("div", { class: "row" }, verdicts), field("on", what), field("reason", reason), field("analyst", analyst), field("date", day), make("button", { type: "submit" }, "Record"), make("p", { class: "note", role: "status", id: "rule-status" }, ruledText(spot))));
+  const verdicts = ["drop", "keep"].map((name) => make("label", { class: "choice" }, make("input", { type: "radio", name: "rule-verdict", value: name, required: true, checked: name === (reference || SPOTS.used[spot] ? "drop" : "keep") }), ` ${name}`));
+  const form = make("form", { id: "rule" }, make("fieldset", {}, make("legend", {}, "Your ruling"), reference ? make("p", { class: "note" }, "A reference material never enters a phase mean; drop takes it out of the calibration.") : null, make("div", { class: "row" }, verdicts), field("on", what), field("reason", reason), field("analyst", analyst), field("date", day), make("button", { type: "submit" }, "Record"), make("p", { class: "note", role: "status", id: "rule-status" }, ruledText(spot))));
   form.addEventListener("submit", (event) => {
     event.preventDefault();
     const texts = [reason, analyst].map((input) => input.value.replace(/\s+/g, " ").trim());
