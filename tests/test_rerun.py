@@ -22,8 +22,9 @@ from tieline.errors import InputError
 from tieline.manifest import read_manifest
 from tieline.plan import settings_differences, table_path
 from tieline.provenance import content_digest
+from tieline.reading.input_file import InputFile
 from tieline.rulings_effect import leaning_remarks, ruling_effects, without_rulings
-from tieline.stages import STAGES
+from tieline.stages import NAMES, STAGES
 from tieline.storage import read_table
 
 Edit = Callable[[Path], object]
@@ -306,6 +307,36 @@ def test_effect_of_a_ruling_on_a_reference_is_that_of_a_run_without_it(
     assert {effect.key[0] for effect in effects} == {"EM-02", "EM-05"}
     for effect in effects:
         assert effect.without == expected[effect.key]
+
+
+@pytest.mark.parametrize("broken", ["", "accepted.csv", "probe.csv"])
+def test_what_is_wrong_with_rulings_is_told_once(own: Path, broken: str):
+    """Two stages read them; whichever stage the run comes to, `--until` included."""
+    rulings = own.parent / "ember" / "rulings.csv"
+    with rulings.open("a", encoding="utf-8") as file:
+        file.write("TWG-1-L01,*,maybe,A.N.,2026-03-14,bubble\nTWG-1-L0,*,drop,A.N.,2026-03-14,bubble\n")
+    if broken:
+        path = own.parent / "ember" / broken
+        path.write_bytes(
+            path.read_bytes().replace(b"TWG-1,SiO2,51.23", b"TWG-1,SiO2,-1") if "acc" in broken else b""
+        )
+    for until in (None, "calibrate"):
+        with pytest.raises(InputError) as error:
+            runner.run(load(own), until=until)
+        problems = error.value.problems
+        assert len(set(problems)) == len(problems)
+        told = [(problem.row, problem.column) for problem in problems if "rulings" in str(problem.file)]
+        # Which spots there are is only known where the spot tables can be read.
+        assert sorted(told) == ([(3, "verdict")] if broken == "probe.csv" else [(3, "verdict"), (4, "spot")])
+        assert any(broken in str(problem.file) for problem in problems)
+
+
+def test_one_file_for_accepted_values_and_rulings_is_given_as_both(own: Path):
+    settings = load(own, overrides=['screen.rulings="ember/accepted.csv"']).settings
+    stage = STAGES[NAMES.index("calibrate")]
+    file = InputFile.from_bytes("ember/accepted.csv", b"")
+    given = {"ember/accepted.csv": file}
+    assert stage.file_arguments(settings, given) == {"files": given, "rulings": given}
 
 
 def test_hand_exclusions_that_lean_one_way_are_remarked(own: Path):

@@ -105,12 +105,17 @@ def _show_reference_materials(console: Console, materials: Sequence[dict[str, An
             row["batch"],
             row["material"],
             str(row["n_spots"]),
-            *([f"{row['values_ruled_out']} of {count(row['spots_ruled_out'], 'spot')}"] if ruled else []),
+            *([_values_ruled_out(row)] if ruled else []),
             str(row["passed"]),
             str(len(row["failed"])),
             failed,
         )
     console.print(table)
+
+
+def _values_ruled_out(row: dict[str, Any]) -> str:
+    number = row["values_ruled_out"]
+    return f"{number} of {count(row['spots_ruled_out'], 'spot')}" if number else ""
 
 
 def _section(

@@ -56,7 +56,10 @@ class SpotUse:
 
 
 def spot_use(tables: Mapping[str, pa.Table]) -> SpotUse:
-    """What became of every spot of a session, from `ingest.spots`, `convert`, `screen` and its findings."""
+    """What became of every spot of a session, from `ingest.spots` and `screen`.
+
+    Values of reference materials that were ruled out are told where `convert` and `screen.findings` are given too.
+    """
     spots, screen = tables["ingest.spots"], tables["screen"]
     order = np.lexsort(
         (numbers(spots, "row"), labels(spots, "table").codes, labels(spots, "technique").codes)
@@ -108,6 +111,8 @@ def _left_out(screen: pa.Table, of_row: IntArray, n_measured: IntArray) -> tuple
 
 def _ruled_out(tables: Mapping[str, pa.Table], of_row: IntArray) -> Iterable[LeftOut]:
     """Values of reference materials that a ruling keeps out of the calibration, spot by spot."""
+    if not {"convert", "screen.findings"} <= tables.keys():
+        return
     convert = tables["convert"]
     ruled = reference_rows_ruled_out(convert, tables["screen.findings"])
     if not ruled.any():
