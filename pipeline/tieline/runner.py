@@ -19,6 +19,7 @@ from tieline.errors import DefectError, InputError, Problem
 from tieline.lock import locked, refuse_if_sealed
 from tieline.manifest import write_manifest
 from tieline.memory import return_unused_memory
+from tieline.narrowing import compact
 from tieline.plan import Verdict, judge, read_records, stage_fingerprint, table_path
 from tieline.provenance import ColumnDigests, bytes_digest, content_digest
 from tieline.reading.input_file import InputFile
@@ -60,7 +61,7 @@ class Workspace:
     def table(self, name: str) -> pa.Table:
         if name not in self.tables:
             path = table_path(self.session.run_folder, name)
-            table = read_table(path, name)
+            table = compact(read_table(path, name))
             if content_digest(table, self.columns) != self.digests[name]:
                 raise InputError(damaged(path, "its contents are not those it was written with"))
             self.tables[name] = table
