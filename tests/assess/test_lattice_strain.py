@@ -188,3 +188,9 @@ def test_values_all_above_one_leave_the_overlap_open_and_say_so():
     floor = tables(rows).checks.set_index("subject").loc["3+ overlap"]
     assert floor["verdict"] == "cannot tell"
     assert floor["detail"].endswith("the values set no limit to the overlap, or none to E besides it.")
+
+
+def test_a_value_that_is_not_above_zero_says_why_it_is_of_no_use():
+    found = tables([*curve(), {"element": "Tb", "D": -0.01, "D_sd": 0.02}, {"element": "Al", "D": 0.1}])
+    assert "Tb: its D is not above zero, or has no error" in found.curves["remarks"][0]
+    assert found.checks["detail"][0].endswith("No radius in coordination 8 for Al.")

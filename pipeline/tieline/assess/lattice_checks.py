@@ -30,7 +30,11 @@ def curve_checks(pair: Mapping[str, Any], result: CurveResult, confidence: float
         )
         words += "".join(f" {remark[0].upper()}{remark[1:]}." for remark in fit.remarks)
         without = [element for element, why in result.series.missing.items() if why.startswith(NO_RADIUS)]
-        words += f" No radius is known for {', '.join(without)}." if without else ""
+        words += (
+            f" No radius in coordination {result.series.coordination} for {', '.join(without)}."
+            if without
+            else ""
+        )
         if fit.dof == 0:
             curve = check(
                 "lattice-strain",

@@ -112,7 +112,11 @@ def collect_series(
             if element not in leave_out and (element not in OFF_THE_CURVE or element in given):
                 limits.append((element, radius, float(row["D_hi"])))
         elif row["kind"] != "value" or not (row["D"] > 0 and row["D_sd"] > 0):
-            missing[element] = f"its D is {row['kind']}"
+            missing[element] = (
+                "its D is not above zero, or has no error"
+                if row["kind"] == "value"
+                else f"its D is {row['kind']}"
+            )
         elif element in leave_out or (element in OFF_THE_CURVE and element not in given):
             compared[element] = (radius, float(row["D"]), float(row["D_sd"]))
             why = "left out by the settings" if element in leave_out else OFF_THE_CURVE[element]

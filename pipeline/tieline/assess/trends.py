@@ -175,7 +175,8 @@ def _trend_check(
 ) -> dict[str, Any]:
     subject = f"ln D({keys['element']}) against {keys['condition']}"
     pair = {"alpha": keys["alpha"], "beta": keys["beta"]}
-    limits = f" {left_out} experiments left out: their D is a limit or undetermined." if left_out else ""
+    number = "1 experiment" if left_out == 1 else f"{left_out} experiments"
+    limits = f" {number} left out, with a D that is a limit or undetermined." if left_out else ""
     if line.verdict != FITTED:
         return check("trend", pair, subject, CANNOT_TELL, f"No line: {line.reason}.{limits}")
     half = line.quantile(confidence) * np.sqrt(line.scale) * line.slope_se
