@@ -299,3 +299,11 @@ def test_elements_kept_apart_are_named_where_too_few_are_left():
     few = mass_balance_tables(means(), start(), losable=tuple(start()["element"])).checks
     assert few["verdict"].tolist() == ["cannot tell"]
     assert "Kept apart as losable: " in few["detail"][0]
+
+
+def test_a_phase_that_has_a_d_only_for_its_parts_is_named_as_such():
+    table = bulk_table()
+    table["alpha"] = table["alpha"].replace("olivine", "olivine (rim)")
+    found = bulk_partition(table, modes()).iloc[0]
+    assert found["kind"] == "undetermined"
+    assert found["reason"] == "no D for olivine as a whole, only for its parts"

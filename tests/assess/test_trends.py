@@ -68,7 +68,7 @@ def test_limits_are_left_out_and_counted():
     )
     trends, _points, _predictions, checks = tables(table, "10^4/T", *x())
     assert trends["n_left_out"].tolist() == [1]
-    assert "1 experiments left out" in checks["detail"][0]
+    assert "1 experiment left out" in checks["detail"][0]
 
 
 def test_two_points_and_one_temperature_cannot_tell():

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import ndtri
 
+from tieline.assess.evidence import base_phase
 from tieline.statistics.mass_balance import Mixture
 from tieline.statistics.weighted_means import FloatArray, WeightedMeans, weighted_means
 
@@ -88,6 +89,8 @@ def _experiment(own: pd.DataFrame, given: Modes, experiment: str, beta: str) -> 
     uncertain = (given.proportions > 0) | (np.diag(given.covariance) > 0)
     crystals = [place for place, name in enumerate(given.phases) if name != beta and uncertain[place]]
     phases = [given.phases[place] for place in crystals]
+    in_parts = {base_phase(alpha) for alpha in own["alpha"].unique() if base_phase(alpha) != alpha}
+    named = [f"{name} as a whole, only for its parts" if name in in_parts else name for name in phases]
     elements = sorted(own["element"].unique())
     table = pd.DataFrame({"experiment": experiment, "beta": beta, "element": elements})
     if not phases or not given.proportions[crystals].sum() > 0:
@@ -114,7 +117,7 @@ def _experiment(own: pd.DataFrame, given: Modes, experiment: str, beta: str) -> 
     return table.assign(
         **dict(zip(BULK_COLUMNS[3:7], numbers.T, strict=True)),
         kind=np.where(bounds, "bounds", np.where(made, "value", "undetermined")),
-        reason=[_reason(phases, *row) for row in zip(kind, limit, known, strict=True)],
+        reason=[_reason(named, *row) for row in zip(kind, limit, known, strict=True)],
     )
 
 
