@@ -105,8 +105,8 @@ def dropped_rows(
 def reference_rows_ruled_out(convert: pa.Table, findings: pa.Table) -> BoolArray:
     """Rows (rows,) of reference materials that a ruling keeps out of the calibration, from `screen.findings`."""
     ruled = findings.filter(pa.array(labels(findings, "code").is_one_of((RULING,))))
-    is_reference = is_labelled(convert, "material")
-    if not ruled.num_rows or not is_reference.any():
+    is_reference = is_labelled(convert, "material") if ruled.num_rows else np.zeros(0, dtype=np.bool_)
+    if not is_reference.any():
         return np.zeros(convert.num_rows, dtype=np.bool_)
     spots = spot_rows(convert)
     number = {key: spot for spot, key in enumerate(_table_and_row(spots.keys))}

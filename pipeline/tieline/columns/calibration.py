@@ -78,7 +78,7 @@ CALIBRATE_MATERIALS = TableSpec(
         Column("material", "label", "reference material"),
         ELEMENT,
         ANALYTE,
-        Column("n_spots", "count", "spots that measured the element", "1"),
+        Column("n_spots", "count", "spots that measured the element and were not ruled out", "1"),
         Column("measured_ppm", "number", "mean of the measured values", "ug/g", True),
         Column("measured_se_ppm", "number", "standard error of that mean", "ug/g", True),
         Column("accepted_ppm", "number", "accepted value as element", "ug/g", True),
