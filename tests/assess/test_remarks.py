@@ -2,6 +2,7 @@
 
 import pandas as pd
 
+from tieline.assess.condition_values import condition_values
 from tieline.assess.frames import Conditions
 from tieline.assess.remarks import remarks
 from tieline.assess.starting_composition import Start
@@ -45,4 +46,14 @@ def test_experiments_that_do_not_exist_are_named():
     assert words(modes, given, temperature_C=[1200.0, 1250.0]) == [
         "the starting composition names EM-1, which no experiment with means is called",
         "[assess.modes] names C, which no experiment with means is called",
+    ]
+
+
+def test_impossible_values_of_a_condition_are_left_out_and_named():
+    cold = conditions(temperature_C=[-273.15, 1200.0], temperature_C_sd=[5.0, 5.0])
+    found = condition_values("10^4/T", cold, MEANS, AssessSettings())
+    assert found.x.index.tolist() == ["B"]
+    assert found.impossible == ("A",)
+    assert words(temperature_C=[1200.0, 1250.0], temperature_C_sd=[5.0, -5.0]) == [
+        "10^4/T of B left out: the value or its uncertainty is impossible"
     ]

@@ -19,15 +19,20 @@ if TYPE_CHECKING:
 INVERSE_TEMPERATURE = "10^4/T"
 _COMPOSITION = re.compile(r"(\S+) in (.+)")
 PPM_PER_WT_PERCENT = 1e4
+ABSOLUTE_ZERO_C = -273.15
 
 
 @dataclass(frozen=True)
 class ConditionValues:
-    """x and its standard uncertainty by experiment; common: (phase, element) of the mean that x is, None for no mean."""
+    """x and its standard uncertainty by experiment; common: (phase, element) of the mean that x is, None for no mean.
+
+    impossible: experiments left out, whose temperature is at or below absolute zero or whose uncertainty is negative.
+    """
 
     x: pd.Series[float]
     x_sd: pd.Series[float]
     common: tuple[str, str] | None = None
+    impossible: tuple[str, ...] = ()
 
 
 def varies(x: pd.Series[float]) -> bool:
@@ -39,7 +44,7 @@ def inverse_temperature(
     temperature_C: np.ndarray, temperature_sd: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
     """10⁴/T in 1/K and its standard deviation, from °C."""
-    kelvin = np.asarray(temperature_C, dtype=np.float64) + 273.15
+    kelvin = np.asarray(temperature_C, dtype=np.float64) - ABSOLUTE_ZERO_C
     return 1e4 / kelvin, 1e4 * np.asarray(temperature_sd, dtype=np.float64) / kelvin**2
 
 
@@ -61,10 +66,14 @@ def condition_values(
     x = table[source].dropna()
     sd = table[f"{source}_sd"] if f"{source}_sd" in table.columns else pd.Series(0.0, table.index)
     x_sd = sd.reindex(x.index).fillna(0.0)
+    coldest = ABSOLUTE_ZERO_C if condition == INVERSE_TEMPERATURE else -np.inf
+    possible = (x > coldest) & (x_sd >= 0) & np.isfinite(x) & np.isfinite(x_sd)
+    impossible = tuple(str(experiment) for experiment in x.index[~possible])
+    x, x_sd = x[possible], x_sd[possible]
     if condition == INVERSE_TEMPERATURE:
         values, errors = inverse_temperature(x.to_numpy(), x_sd.to_numpy())
         x, x_sd = pd.Series(values, x.index), pd.Series(errors, x.index)
-    return ConditionValues(x, x_sd)
+    return ConditionValues(x, x_sd, impossible=impossible)
 
 
 def _of_phase(condition: str, means: pd.DataFrame) -> ConditionValues | None:

@@ -225,6 +225,6 @@ def _words(K_D: float, low: float, high: float, reason: str, source: str, confid
     if np.isnan(low):
         return f"No exchange coefficient with an interval: {reason}."
     if np.isnan(K_D):
-        return f"K_D lies between {low:.4g} and {high:.4g} at {confidence:.0%}: {reason}.{window}"
+        return f"K_D lies between {low:.4g} and {high:.4g} at {100 * confidence:g}%: {reason}.{window}"
     remark = f" {reason[0].upper()}{reason[1:]}." if reason else ""
-    return f"K_D {K_D:.4g}, {low:.4g} to {high:.4g} at {confidence:.0%}; by mass and by amount alike.{remark}{window}"
+    return f"K_D {K_D:.4g}, {low:.4g} to {high:.4g} at {100 * confidence:g}%; by mass and by amount alike.{remark}{window}"

@@ -25,7 +25,7 @@ def curve_checks(pair: Mapping[str, Any], result: CurveResult, confidence: float
         words = (
             f"D0 {fit.D0.value:.3g} ({fit.D0.low:.3g} to {fit.D0.high:.3g}, {fit.D0.status}), r0 {fit.r0.value:.4g} Å "
             f"({fit.r0.low:.4g} to {fit.r0.high:.4g}, {fit.r0.status}), E {fit.E.value:.3g} GPa ({fit.E.low:.3g} to "
-            f"{fit.E.high:.3g}, {fit.E.status}) at {confidence:.0%}; Blundy & Wood (1994). value: chi-square over degrees "
+            f"{fit.E.high:.3g}, {fit.E.status}) at {100 * confidence:g}%; Blundy & Wood (1994). value: chi-square over degrees "
             f"of freedom. A curve shows consistency between elements; it is no proof of equilibrium.{held}"
         )
         words += "".join(f" {remark[0].upper()}{remark[1:]}." for remark in fit.remarks)
@@ -60,7 +60,7 @@ def curve_checks(pair: Mapping[str, Any], result: CurveResult, confidence: float
         found = both.verdict == OVERLAP_FOUND
         words = (
             f"Fraction of {pair['beta']} in {pair['alpha']} from curve and floor together: {f.value:.3g}, {f.low:.3g} to "
-            f"{f.high:.3g} at {confidence:.0%}; p {both.p_value:.2g} that there is none."
+            f"{f.high:.3g} at {100 * confidence:g}%; p {both.p_value:.2g} that there is none."
         )
         if found:
             words += (

@@ -63,14 +63,17 @@ def _unknown_experiments(
 
 def _without_trends(conditions: Conditions, means: pd.DataFrame, settings: AssessSettings) -> list[Remark]:
     own = settings.trends
-    missing, constant = [], []
+    missing, constant, found = [], [], []
     for name in dict.fromkeys((*own.conditions, *own.predict)):
         values = condition_values(name, conditions, means, settings) if name in own.conditions else None
         if values is None:
             missing.append(name)
-        elif len(values.x) > 1 and not varies(values.x):
+            continue
+        if values.impossible:
+            names = ", ".join(values.impossible)
+            found.append(Remark(f"{name} of {names} left out: the value or its uncertainty is impossible"))
+        if len(values.x) > 1 and not varies(values.x):
             constant.append(name)
-    found = []
     if missing:
         found.append(
             Remark(

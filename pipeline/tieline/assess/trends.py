@@ -182,7 +182,7 @@ def _trend_check(
     half = line.quantile(confidence) * np.sqrt(line.scale) * line.slope_se
     words = (
         f"{count} experiments, slope {line.slope:.4g} ± {line.slope_se:.2g} (stated errors), "
-        f"{line.slope - half:.4g} to {line.slope + half:.4g} at {confidence:.0%}; York et al. (2004).{limits}"
+        f"{line.slope - half:.4g} to {line.slope + half:.4g} at {100 * confidence:g}%; York et al. (2004).{limits}"
     )
     if line.dof == 0:
         return check(
