@@ -9,7 +9,7 @@ import pytest
 from matplotlib.figure import Figure
 
 from tieline.report.evidence_data import balance_data, exchange_data, trend_data
-from tieline.report.evidence_figures import evidence_pictures
+from tieline.report.evidence_figures import _draw_exchange, evidence_pictures
 from tieline.report.source import Source
 
 
@@ -49,6 +49,18 @@ def test_mass_balance_shows_residuals_and_losses(pictures, ember_source: Source)
     np.testing.assert_allclose(sorted(shown), sorted(row["sigmas"] for row in rows if row["use"]))
     assert [label.get_text() for label in right.get_yticklabels()] == ["Fe", "K", "Na"]
     assert "%" in right.get_xlabel()
+
+
+def test_bulk_coefficients_are_drawn_by_experiment_with_limits_apart(pictures, ember_source: Source):
+    (axes,) = pictures["bulk_D_glass"].axes
+    rows = ember_source.table("assess.bulk").to_pylist()
+    values = [row["bulk_D"] for row in rows if row["bulk_D"] is not None]
+    shown = np.concatenate([one[0].get_ydata() for one in axes.containers])
+    np.testing.assert_allclose(sorted(shown), sorted(values))
+    limits = [row["bulk_D_hi"] for row in rows if row["kind"] == "bounds"]
+    arrows = [line.get_ydata() for line in axes.get_lines() if line.get_marker() == "$\u2193$"]
+    np.testing.assert_allclose(sorted(np.concatenate(arrows)), sorted(limits))
+    assert "bulk D" in axes.get_ylabel()
 
 
 def test_trends_have_points_and_their_line(pictures, ember_source: Source):
@@ -93,3 +105,11 @@ def test_the_page_has_the_exchange_and_the_balance(ember_source: Source):
         one = balance[row["experiment"], row["element"]]
         assert one["sigmas"] == row["sigmas"]
         assert one["loss"][0] == (None if row["loss"] is None else pytest.approx(100 * row["loss"]))
+
+
+def test_an_interval_that_begins_at_zero_keeps_its_bar():
+    row = {"experiment": "A", "alpha": "olivine", "K_D": 0.3, "K_D_lo": 0.0, "K_D_hi": 0.7, "window_lo": None}
+    figure = Figure()
+    _draw_exchange(figure, [row | {"window_hi": None}], "Fe–Mg", "glass")
+    (bars,) = figure.axes[0].containers[0][2]
+    np.testing.assert_allclose(bars.get_segments()[0][:, 1], [0.0, 0.7], atol=1e-12)

@@ -1,4 +1,4 @@
-"""Pictures of the evidence as vector files: exchange coefficients, mass balance, and D against conditions."""
+"""Pictures of the evidence as vector files: exchange coefficients, mass balance, bulk D, and D against conditions."""
 
 from __future__ import annotations
 
@@ -23,6 +23,7 @@ def evidence_pictures(source: Source) -> Iterator[tuple[str, Draw, float, float]
     """Name, what draws it into a figure, width and height in mm; none where a line of evidence has nothing to show."""
     yield from _exchange(source)
     yield from _balance(source)
+    yield from _bulk(source)
     yield from _trends(source)
 
 
@@ -61,7 +62,7 @@ def _draw_exchange(figure: Any, rows: Rows, pair: str, beta: str) -> None:
         shift = (place - (len(phases) - 1) / 2) * 0.15
         x = np.array([experiments.index(row["experiment"]) for row in own]) + shift
         value, low, high = (
-            np.array([row[name] or np.nan for row in own]) for name in ("K_D", "K_D_lo", "K_D_hi")
+            np.array([row[name] for row in own], dtype=np.float64) for name in ("K_D", "K_D_lo", "K_D_hi")
         )
         bars = np.maximum(np.stack([value - low, high - value]), 0.0) if own else np.zeros((2, 0))
         style = style_of(place)
@@ -119,6 +120,45 @@ def _draw_balance(figure: Any, rows: Rows) -> None:
     right.set_xlabel("lost, % of the start")
     for axes, names in ((left, fitted), (right, lost)):
         axes.set_ylim(len(names) - 0.5, -0.5)
+    figure.legend(loc="outside upper center", ncols=min(len(experiments), 10), fontsize=6.5, frameon=False)
+
+
+# --- bulk D of the crystals of an experiment, element by element ---
+
+
+def _bulk(source: Source) -> Iterator[tuple[str, Draw, float, float]]:
+    rows = [row for row in _rows(source, "assess.bulk") if row["bulk_D_hi"] is not None]
+    key = lambda row: row["beta"]  # noqa: E731 - sorted and grouped by one key
+    for beta, own in groupby(sorted(rows, key=key), key=key):
+        yield f"bulk_D_{beta}", partial(_draw_bulk, rows=list(own), beta=beta), TWO_COLUMNS_MM, 90.0
+
+
+def _draw_bulk(figure: Any, rows: Rows, beta: str) -> None:
+    axes = figure.add_subplot()
+    highest: dict[str, float] = {}
+    for row in rows:
+        highest[row["element"]] = max(highest.get(row["element"], 0.0), row["bulk_D_hi"])
+    elements = sorted(highest, key=highest.__getitem__)
+    experiments = sorted({row["experiment"] for row in rows})
+    for place, experiment in enumerate(experiments):
+        own = [row for row in rows if row["experiment"] == experiment]
+        shift = (place - (len(experiments) - 1) / 2) * 0.7 / len(experiments)
+        x = np.array([elements.index(row["element"]) for row in own]) + shift
+        value, low, high = (
+            np.array([row[name] for row in own], dtype=np.float64)
+            for name in ("bulk_D", "bulk_D_lo", "bulk_D_hi")
+        )
+        told, style = np.isfinite(value), style_of(place)
+        bars = np.stack([value - low, high - value])[:, told]
+        axes.errorbar(
+            x[told], value[told], bars, fmt=style["marker"], color=style["color"], markersize=2.5, elinewidth=0.6,
+            label=plain(experiment),
+        )  # fmt: skip
+        axes.plot(x[~told], high[~told], linestyle="", marker="$\u2193$", color=style["color"], markersize=5)
+    _logarithmic(axes)
+    axes.set_xticks(range(len(elements)), elements, fontsize=6.5)
+    axes.set_xlabel("element; arrows: upper end where a D is a limit")
+    axes.set_ylabel(plain(f"bulk D, crystals over {beta}"))
     figure.legend(loc="outside upper center", ncols=min(len(experiments), 10), fontsize=6.5, frameon=False)
 
 
