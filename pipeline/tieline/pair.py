@@ -38,6 +38,7 @@ from tieline.correction import (
 from tieline.pairing import phase_pairs, technique_differences, with_parts
 from tieline.results import Ledger, StageResult
 from tieline.settings.results import PairSettings
+from tieline.spot_correlation import spot_correlations
 from tieline.statistics.means import PhaseMeans, phase_means, pooled_sigmas
 from tieline.statistics.mswd import mswd_interval
 from tieline.statistics.threads import side_by_side
@@ -94,6 +95,9 @@ def pair(
         "pair": table,
         "pair.pairs": pairs,
         "pair.limits": _limit_rows(convert, concentrations, groups, used),
+        "pair.correlations": spot_correlations(
+            convert, concentrations.value, measured, settings.ratios, of_grains=settings.average == "grains"
+        ),
         "pair.techniques": differences,
     }
     return StageResult(tables, Ledger("values", convert.num_rows, outcomes), (*remarks, *difference_remarks))

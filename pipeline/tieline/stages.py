@@ -86,6 +86,12 @@ def _ingest_files(settings: SessionSettings) -> tuple[str, ...]:
     return tuple(dict.fromkeys(tables))
 
 
+def _pair_settings(settings: SessionSettings) -> Settings:
+    # The spots are no longer at hand when `assess` takes ratios of elements.
+    ratios = dict.fromkeys((*settings.pair.ratios, *settings.assess.exchange.pairs))
+    return settings.pair.model_copy(update={"ratios": tuple(ratios)})
+
+
 def _optional(path: str | None) -> tuple[str, ...]:
     return () if path is None else (path,)
 
@@ -139,8 +145,8 @@ STAGES: tuple[Stage, ...] = (
         name="pair",
         revision=1,
         inputs=("convert", "convert.standards", "calibrate", "screen", "ingest.spots"),
-        outputs=("pair", "pair.pairs", "pair.limits", "pair.techniques"),
-        settings=lambda settings: settings.pair,
+        outputs=("pair", "pair.pairs", "pair.limits", "pair.correlations", "pair.techniques"),
+        settings=_pair_settings,
         counted="screen",
     ),
     Stage(
@@ -166,10 +172,8 @@ STAGES: tuple[Stage, ...] = (
             "partition",
             "partition.covariance",
             "pair",
+            "pair.correlations",
             "calibrate",
-            "convert",
-            "screen",
-            "ingest.spots",
             "ingest.experiments",
         ),
         outputs=(

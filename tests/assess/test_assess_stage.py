@@ -13,14 +13,12 @@ from tieline import runner
 from tieline.assess import assess, read_starting_composition
 from tieline.columns import (
     CALIBRATE,
-    CONVERT,
     EVIDENCE,
     INGEST_EXPERIMENTS,
-    INGEST_SPOTS,
     PAIR,
+    PAIR_CORRELATIONS,
     PARTITION,
     PARTITION_COVARIANCE,
-    SCREEN,
 )
 from tieline.configuration import Session, load
 from tieline.errors import InputError
@@ -190,8 +188,8 @@ def test_a_window_of_ones_own_and_influence(own: Path):
 def test_tables_without_rows():
     inputs = {
         "partition": empty(PARTITION), "partition_covariance": empty(PARTITION_COVARIANCE), "pair": empty(PAIR),
-        "calibrate": empty(CALIBRATE), "convert": empty(CONVERT), "screen": empty(SCREEN),
-        "ingest_spots": empty(INGEST_SPOTS), "ingest_experiments": empty(INGEST_EXPERIMENTS),
+        "pair_correlations": empty(PAIR_CORRELATIONS), "calibrate": empty(CALIBRATE),
+        "ingest_experiments": empty(INGEST_EXPERIMENTS),
     }  # fmt: skip
     found = assess(**inputs, settings=AssessSettings(), files={})
     assert tuple(found.tables) == tuple(spec.name for spec in EVIDENCE)

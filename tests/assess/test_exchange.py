@@ -175,12 +175,13 @@ def simulated(rng, truth, spread, counting, correlation, n=(6, 6), cases=1000, e
         pd.DataFrame(
             {
                 "experiment": columns["experiment"], "phase": phase, "technique": "probe", "batch": "1",
-                "analyte_first": "Fe", "analyte_second": "Mg", "correlation": columns[f"r_{side}"], "n_common": n[place],
+                "element_first": "Fe", "analyte_first": "Fe", "element_second": "Mg", "analyte_second": "Mg",
+                "correlation": columns[f"r_{side}"], "n_common": n[place],
             }
         )
         for place, (side, phase) in enumerate((("alpha", "olivine"), ("beta", "glass")))
     ]  # fmt: skip
-    return pd.concat(rows, ignore_index=True), {("Fe", "Mg"): pd.concat(sides, ignore_index=True)}
+    return pd.concat(rows, ignore_index=True), pd.concat(sides, ignore_index=True)
 
 
 def _rows_of(columns, element):

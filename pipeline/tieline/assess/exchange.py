@@ -32,7 +32,6 @@ _NUMBERS = (
 )  # fmt: skip
 EXCHANGE_COLUMNS = (*PAIR_KEYS, "first", "second", *_NUMBERS, "window_source", "verdict")
 Windows = Mapping[tuple[str, str, str | None], tuple[float, float, str]]
-Correlations = Mapping[tuple[str, str], "pd.DataFrame"]
 
 
 def ferrous_factor(alpha: FerricShare | None, beta: FerricShare | None) -> tuple[float, float]:
@@ -45,7 +44,7 @@ def ferrous_factor(alpha: FerricShare | None, beta: FerricShare | None) -> tuple
 def exchange_tables(
     partition: pd.DataFrame,
     covariance: pd.DataFrame,
-    correlations: Correlations | None = None,
+    correlations: pd.DataFrame | None = None,
     *,
     pairs: Sequence[tuple[str, str]] = (("Fe", "Mg"),),
     ferric: Mapping[tuple[str, str], FerricShare] | None = None,
@@ -56,8 +55,8 @@ def exchange_tables(
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """One row per experiment, pair of phases and pair of elements: the coefficients, and rows of the `assess` table.
 
-    partition, covariance: columns as in the stage files of those names; correlations: pair of elements -> how they vary
-    together between the spots, as `spot_correlations` makes it; without it they count as independent. ferric:
+    partition, covariance: columns as in the stage files of those names; correlations: those of `pair.correlations`, how
+    elements vary together between the spots; without it they count as independent. ferric:
     (experiment, phase) -> share; phases without one are taken as free of Fe3+, and the detail says so; lacking: why a
     share that was asked for is not known: such coefficients are compared with no window. windows: (phase,
     "Fe-Mg", beta or None) -> low, high, source, in the place of the published ones; these, and those for no beta, hold
@@ -72,7 +71,7 @@ def exchange_tables(
     rows: list[dict[str, Any]] = []
     checks: list[dict[str, Any]] = []
     for pair in pairs:
-        both = _both(own, pair, (correlations or {}).get(pair))
+        both = _both(own, pair, correlations)
         shares = _shares(both, ferric or {}) if "Fe" in pair else []
         factor, relative = _ferrous_factors(shares, len(both), inverse=pair[0] != "Fe")
         found = coefficients(both, variances, pair, factor, relative, confidence)
@@ -88,17 +87,18 @@ def exchange_tables(
     )
 
 
-def _both(partition: pd.DataFrame, pair: tuple[str, str], correlation: pd.DataFrame | None) -> pd.DataFrame:
+def _both(partition: pd.DataFrame, pair: tuple[str, str], correlations: pd.DataFrame | None) -> pd.DataFrame:
     """One row per pair of phases that has D of both elements, with the correlations in its two phases."""
     parts = [partition[partition["element"] == element] for element in pair]
     both = parts[0].merge(parts[1], on=list(PAIR_KEYS), suffixes=("_first", "_second"))
     for side in ("alpha", "beta"):
         names = {"phase": side, "technique": f"technique_{side}_first", "batch": f"batch_{side}_first"}
         names |= {f"analyte_{which}": f"analyte_{side}_{which}" for which in ("first", "second")}
-        if correlation is None:
+        if correlations is None:
             both = both.assign(**{f"correlation_{side}": 0.0, f"n_common_{side}": 0})
             continue
-        known = correlation.rename(
+        of_pair = (correlations["element_first"] == pair[0]) & (correlations["element_second"] == pair[1])
+        known = correlations[of_pair].rename(
             columns=names | {"correlation": f"correlation_{side}", "n_common": f"n_common_{side}"}
         )
         keys = ["experiment", *names.values()]

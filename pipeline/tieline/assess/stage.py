@@ -13,7 +13,6 @@ from tieline.assess.frames import Conditions, conditions_frame, frame, stage_tab
 from tieline.assess.mean_factors import mean_factors
 from tieline.assess.overlap import overlap_checks
 from tieline.assess.remarks import remarks
-from tieline.assess.spot_correlation import SpotTables, spot_correlations
 from tieline.assess.starting_composition import Start, read_starting_composition
 from tieline.columns import EVIDENCE
 from tieline.reading.input_file import InputFile
@@ -42,10 +41,8 @@ def assess(
     partition: pa.Table,
     partition_covariance: pa.Table,
     pair: pa.Table,
+    pair_correlations: pa.Table,
     calibrate: pa.Table,
-    convert: pa.Table,
-    screen: pa.Table,
-    ingest_spots: pa.Table,
     ingest_experiments: pa.Table,
     *,
     settings: AssessSettings,
@@ -61,15 +58,7 @@ def assess(
     covariance = frame(partition_covariance, partition_covariance.column_names)
     conditions = conditions_frame(ingest_experiments, settings)
     parts = [
-        _exchange(
-            D,
-            covariance,
-            means,
-            SpotTables(convert, screen, calibrate, ingest_spots),
-            pair,
-            conditions,
-            settings,
-        ),
+        _exchange(D, covariance, means, pair_correlations, conditions, settings),
         _lattice_strain(D, covariance, conditions, settings),
         _mass_balance(D, means, start, settings),
         _trends(D, conditions, means, settings),
@@ -97,8 +86,7 @@ def _exchange(
     D: pd.DataFrame,
     covariance: pd.DataFrame,
     means: pd.DataFrame,
-    spots: SpotTables,
-    pair: pa.Table,
+    correlations: pa.Table,
     conditions: Conditions,
     settings: AssessSettings,
 ) -> Frames:
@@ -109,7 +97,7 @@ def _exchange(
     windows = {(one.phase, one.pair, one.beta): (one.low, one.high, one.source) for one in own.windows}
     shares, lacking = ferric_shares(means, conditions, settings)
     coefficients, checks = exchange_tables(
-        D, covariance, spot_correlations(spots, pair, own.pairs), pairs=own.pairs, ferric=shares, lacking=lacking,
+        D, covariance, frame(correlations, correlations.column_names), pairs=own.pairs, ferric=shares, lacking=lacking,
         windows=windows, melts=settings.melts, confidence=settings.confidence,
     )  # fmt: skip
     return {"assess": checks, "assess.exchange": coefficients}

@@ -24,7 +24,7 @@ from tieline.columns.evidence import (
     EVIDENCE,
 )
 from tieline.columns.keys import ANALYTE, ELEMENT, SPOT_KEYS, VALUE_KEYS
-from tieline.columns.means import PAIR, PAIR_LIMITS, PAIR_TECHNIQUES, PAIRS
+from tieline.columns.means import PAIR, PAIR_CORRELATIONS, PAIR_LIMITS, PAIR_TECHNIQUES, PAIRS
 from tieline.columns.screening import FINDINGS, SCREEN, SCREEN_GROUPS
 from tieline.columns.values import (
     COMPONENT_MEANINGS,
@@ -69,6 +69,7 @@ __all__ = [
     "INGEST_SPOTS",
     "PAIR",
     "PAIRS",
+    "PAIR_CORRELATIONS",
     "PAIR_LIMITS",
     "PAIR_TECHNIQUES",
     "PARTITION",
@@ -102,6 +103,7 @@ TABLES: dict[str, TableSpec] = {
         PAIR,
         PAIRS,
         PAIR_LIMITS,
+        PAIR_CORRELATIONS,
         PAIR_TECHNIQUES,
         PARTITION,
         PARTITION_ALTERNATIVES,

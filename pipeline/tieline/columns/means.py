@@ -93,6 +93,28 @@ PAIR_LIMITS = TableSpec(
     ),
 )
 
+PAIR_CORRELATIONS = TableSpec(
+    "pair.correlations",
+    "two phase means of one session, of elements whose ratio is wanted",
+    (
+        Column("experiment", "label", "experiment"),
+        Column("phase", "label", "phase"),
+        Column("technique", "label", "measuring technique"),
+        Column("batch", "label", "measuring session"),
+        Column("element_first", "label", "element symbol"),
+        Column("analyte_first", "label", "source column of the first element"),
+        Column("element_second", "label", "element symbol"),
+        Column("analyte_second", "label", "source column of the second element"),
+        Column(
+            "correlation",
+            "number",
+            "correlation of the values used, between spots or grains; 0 for fewer than two",
+            "1",
+        ),
+        Column("n_common", "count", "spots or grains that have both", "1"),
+    ),
+)
+
 PAIR_TECHNIQUES = TableSpec(
     "pair.techniques",
     "experiment x phase x element x two measurements",

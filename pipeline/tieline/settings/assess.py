@@ -6,23 +6,14 @@ from typing import Annotated, Literal
 
 from pydantic import AfterValidator, Field, model_validator
 
-from tieline.settings.base import Settings
-
-
-def _element(text: str) -> str:
-    from tieline.chemistry.oxides import parse_oxide
-
-    element = parse_oxide(text).element
-    if element != text:
-        raise ValueError(f"elements go by their symbols here: {element} for {text}")
-    return text
+from tieline.settings.base import Element, Settings, as_element
 
 
 def _element_pair(text: str) -> str:
     parts = text.split("-")
     if len(parts) != 2:
         raise ValueError(f"{text!r} is not a pair of elements such as Fe-Mg")
-    return "-".join(_element(part) for part in parts)
+    return "-".join(as_element(part) for part in parts)
 
 
 def _known(given: tuple[float, float]) -> tuple[float, float]:
@@ -31,7 +22,6 @@ def _known(given: tuple[float, float]) -> tuple[float, float]:
     return given
 
 
-Element = Annotated[str, AfterValidator(_element)]
 Known = Annotated[tuple[float, float], AfterValidator(_known)]
 
 

@@ -3,11 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Collection
-from typing import Literal
+from typing import Annotated, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field
 
 Action = Literal["drop", "mark"]
+
+
+def as_element(text: str) -> str:
+    """The text, which must be the symbol of an element. Raises ValueError."""
+    from tieline.chemistry.oxides import parse_oxide
+
+    element = parse_oxide(text).element
+    if element != text:
+        raise ValueError(f"elements go by their symbols here: {element} for {text}")
+    return text
+
+
+Element = Annotated[str, AfterValidator(as_element)]
 
 
 class Settings(BaseModel):

@@ -129,8 +129,8 @@ class Table(Settings):
     )
     zero: Literal["value", "below-limit", "not-measured"] = Field("value", description="what a plain 0 means")
     skip_row_labels: tuple[str, ...] = Field(
-        ("average", "averages", "mean", "means", "avg", "std dev", "stdev", "sd", "st.dev.", "s.d.", "minimum", "maximum", "min", "max",
-         "sum", "median", "rsd", "2sd", "1sd", "1 s.d.", "2 s.d.", "se", "n"),
+        ("average", "averages", "mean", "means", "avg", "std dev", "stdev", "sd", "st.dev.", "s.d.", "minimum",
+         "maximum", "min", "max", "sum", "median", "rsd", "2sd", "1sd", "1 s.d.", "2 s.d.", "se", "n"),
         description="first-label texts of summary rows pasted between spots; such rows are set aside",
     )  # fmt: skip
 

@@ -6,7 +6,7 @@ from typing import Literal
 
 from pydantic import Field, model_validator
 
-from tieline.settings.base import Settings
+from tieline.settings.base import Element, Settings
 
 
 class PairSettings(Settings):
@@ -31,6 +31,11 @@ class PairSettings(Settings):
         "none",
         description="pair the spots of all phases that carry the same zone or grain label, such as an area of the "
         "charge, only with one another",
+    )
+    ratios: tuple[tuple[Element, Element], ...] = Field(
+        (),
+        description="elements whose correlation between spots is kept in `pair.correlations`, for the uncertainty of their "
+        "ratio; the pairs of `[assess.exchange]` are added",
     )
     difference_sigmas: float = Field(
         3.0,

@@ -2,27 +2,36 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pyarrow as pa
 import pytest
 
 from stage_tables import ingest_tables, spot
-from tieline.assess.spot_correlation import SpotTables, spot_correlations
 from tieline.calibrate import calibrate
 from tieline.columns import SCREEN
 from tieline.convert import convert
 from tieline.pair import pair
+from tieline.settings import SessionSettings
+from tieline.settings.assess import AssessSettings
 from tieline.settings.chemistry import CalibrateSettings, ConvertSettings
 from tieline.settings.results import PairSettings
+from tieline.stages import STAGES
 from tieline.tables import build
 
 PAIR = ("Fe", "Mg")
 
 
-def tables_of(spots: list[dict[str, Any]], dropped: tuple[tuple[str, str], ...] = (), **settings: Any):
-    """The stage tables up to the means; dropped: (spot, element) left out."""
+def correlations(
+    spots: list[dict[str, Any]],
+    dropped: tuple[tuple[str, str], ...] = (),
+    unmixed: Callable[[pa.Table], Any] | None = None,
+    **settings: Any,
+) -> pd.DataFrame:
+    """`pair.correlations` of spots; dropped: (spot, element) left out; unmixed: values freed of overlap, from `convert`."""
     ingest, heads = ingest_tables(spots)
     made = convert(ingest, settings=ConvertSettings()).tables
     table = made["convert"]
@@ -34,11 +43,11 @@ def tables_of(spots: list[dict[str, Any]], dropped: tuple[tuple[str, str], ...] 
         for c in SCREEN.columns
     }
     columns |= {"use": use, "why": ["" if used else "ruling" for used in use]}
-    screened = build(SCREEN, columns)
-    means = pair(
-        table, made["convert.standards"], batches, screened, heads, settings=PairSettings(**settings)
-    )
-    return SpotTables(table, screened, batches, heads), means.tables["pair"]
+    if unmixed is not None:
+        columns |= {"unmixed_ppm": unmixed(table)}
+    wanted = PairSettings(**{"ratios": (PAIR,), **settings})
+    result = pair(table, made["convert.standards"], batches, build(SCREEN, columns), heads, settings=wanted)
+    return result.tables["pair.correlations"].to_pandas()
 
 
 def crystals(rng: np.random.Generator, n: int = 12, **keys: Any) -> list[dict[str, Any]]:
@@ -52,9 +61,8 @@ def crystals(rng: np.random.Generator, n: int = 12, **keys: Any) -> list[dict[st
     return spots + [spot(f"g{number}", cells, phase="glass") for number, cells in enumerate(melt)]
 
 
-def by_phase(spots: list[dict[str, Any]], **settings: Any):
-    tables, means = tables_of(spots, **settings)
-    return spot_correlations(tables, means, (PAIR,))[PAIR].set_index("phase")
+def by_phase(spots: list[dict[str, Any]], **settings: Any) -> pd.DataFrame:
+    return correlations(spots, **settings).set_index("phase")
 
 
 def numpy_correlation(spots: list[dict[str, Any]], names: set[str]) -> float:
@@ -87,8 +95,7 @@ def test_sessions_and_zones_are_apart():
     spots = crystals(
         rng, batch=lambda n: "late" if n >= 6 else "early", zone=lambda n: "rim" if n % 2 else "core"
     )
-    tables, means = tables_of(spots, separate="zone")
-    found = spot_correlations(tables, means, (PAIR,))[PAIR].set_index(["phase", "batch"])
+    found = correlations(spots, separate="zone").set_index(["phase", "batch"])
     for phase, remainder in (("olivine (core)", 0), ("olivine (rim)", 1)):
         for batch, numbers in (("early", range(6)), ("late", range(6, 12))):
             names = {f"o{n}" for n in numbers if n % 2 == remainder}
@@ -105,22 +112,26 @@ def test_grains_count_once_where_the_means_are_made_of_grains():
     assert found.loc["olivine", "correlation"] == pytest.approx(np.corrcoef(means.T)[0, 1])
 
 
-def test_no_rows_and_elements_that_are_not_there():
-    tables, means = tables_of(crystals(np.random.default_rng(5)))
-    assert spot_correlations(tables, means, (("Ni", "Mg"),))["Ni", "Mg"].empty
-    empty = SpotTables(tables.convert.slice(0, 0), tables.screen.slice(0, 0), tables.calibrate, tables.spots)
-    assert spot_correlations(empty, means.slice(0, 0), (PAIR,))[PAIR].empty
+def test_elements_that_are_not_there_and_pairs_named_twice():
+    spots = crystals(np.random.default_rng(5))
+    assert correlations(spots, ratios=()).empty
+    assert correlations(spots, ratios=(("Ni", "Mg"),)).empty
+    twice = correlations(spots, ratios=(PAIR, ("Si", "Mg"), PAIR))
+    assert sorted(twice["element_first"]) == ["Fe", "Fe", "Si", "Si"]
 
 
 def test_values_freed_of_overlap_take_the_place_of_the_measured_ones():
-    tables, means = tables_of(crystals(np.random.default_rng(6)))
-    value = tables.convert.column("value_ppm").to_numpy()
-    place = tables.screen.schema.get_field_index("unmixed_ppm")
-    element = tables.convert.column("element").to_pylist()
-    turned = np.where(np.array(element) == "Fe", -value, value)
-    screen = tables.screen.set_column(place, tables.screen.schema.field(place), pa.array(turned))
-    before = spot_correlations(tables, means, (PAIR,))[PAIR]["correlation"]
-    after = spot_correlations(
-        SpotTables(tables.convert, screen, tables.calibrate, tables.spots), means, (PAIR,)
-    )
-    np.testing.assert_allclose(after[PAIR]["correlation"], -before)
+    def turned(convert: pa.Table) -> Any:
+        is_iron = np.array(convert.column("element").to_pylist()) == "Fe"
+        return np.where(is_iron, -1.0, 1.0) * convert.column("value_ppm").to_numpy()
+
+    spots = crystals(np.random.default_rng(6))
+    before, after = by_phase(spots), by_phase(spots, unmixed=turned)
+    np.testing.assert_allclose(after["correlation"], -before["correlation"])
+
+
+def test_the_elements_of_exchange_coefficients_are_among_them():
+    stage = next(stage for stage in STAGES if stage.name == "pair")
+    assess = AssessSettings(exchange={"pairs": [["Fe", "Mn"], ["Ni", "Mg"]]})
+    session = SessionSettings.model_construct(pair=PairSettings(ratios=(("Ni", "Mg"),)), assess=assess)
+    assert stage.own_settings(session)["ratios"] == [["Ni", "Mg"], ["Fe", "Mn"]]
