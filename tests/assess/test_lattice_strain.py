@@ -194,3 +194,20 @@ def test_a_value_that_is_not_above_zero_says_why_it_is_of_no_use():
     found = tables([*curve(), {"element": "Tb", "D": -0.01, "D_sd": 0.02}, {"element": "Al", "D": 0.1}])
     assert "Tb: its D is not above zero, or has no error" in found.curves["remarks"][0]
     assert found.checks["detail"][0].endswith("No radius in coordination 8 for Al.")
+
+
+def test_an_overlap_that_may_be_none_has_an_interval_down_to_none():
+    """Four values close together: a floor under a narrow curve, and no floor under a wide one, with a barrier between."""
+    D = {"Y": 0.3, "Ho": 0.3, "Dy": 0.31, "Er": 0.29}
+    found = tables([{"element": element, "D": value} for element, value in D.items()])
+    row = found.curves.iloc[0]
+    assert row["overlap"] > 0.05
+    assert row["overlap_p"] > 0.1
+    assert row["overlap_lo"] == 0.0
+    floor = found.checks.set_index("subject").loc["3+ overlap"]
+    assert "Held by what is known: E" in floor["detail"]
+
+
+def test_values_that_contradict_the_estimate_of_the_modulus_say_so():
+    found = tables([{"element": element, "D": 0.3, "D_sd": 0.006} for element in RARE_EARTHS])
+    assert "The values contradict what is known of E beforehand" in found.checks["detail"][0]

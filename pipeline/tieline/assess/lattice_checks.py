@@ -67,6 +67,7 @@ def curve_checks(pair: Mapping[str, Any], result: CurveResult, confidence: float
                 " That is if one curve holds for all of them: an element with a site of its own looks alike."
             )
             words += " Without a floor they fit no curve." if fit.verdict != FITTED else ""
+        words += held
         floor = check("overlap", pair, f"{charge}+ overlap", DIFFERS if found else CONSISTENT, words,
             value=f.value, sd=f.sd, expected_lo=0.0, expected_hi=0.0,
         )  # fmt: skip

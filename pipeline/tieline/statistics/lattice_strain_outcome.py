@@ -21,6 +21,7 @@ from tieline.statistics.least_squares import BoolArray, FloatArray
 
 FITTED, CANNOT_TELL = "fitted", "cannot tell"
 _SAME_RADIUS = 1e-4
+_CONTRADICTED = 3.0  # standard deviations of the prior
 
 
 @dataclass(frozen=True)
@@ -93,7 +94,7 @@ def outcome(
     natural[0] = 1.0
     verdict, reason = _verdict(problem, estimates, theta, free)
     fit = CurveFit(
-        verdict, reason, _remarks(data, theta, scatter.p_value[0], free),
+        verdict, reason, _remarks(data, problem, theta, scatter.p_value[0], free),
         estimates[0], estimates[1], estimates[2], estimates[3],
         covariance=spread * np.outer(natural, natural),
         chi_square=float(scatter.chi_square[0]), dof=int(scatter.dof[0]), p_value=float(scatter.p_value[0]),
@@ -169,8 +170,14 @@ def _verdict(
     return FITTED, ""
 
 
-def _remarks(data: Coefficients, theta: FloatArray, p_value: float, free: BoolArray) -> tuple[str, ...]:
+def _remarks(
+    data: Coefficients, problem: Problem, theta: FloatArray, p_value: float, free: BoolArray
+) -> tuple[str, ...]:
     remarks = []
+    away = np.abs(theta - problem.prior_centre[0]) * problem.prior_weight[0]
+    against = [name for name, far in zip(PARAMETERS, away > _CONTRADICTED, strict=True) if far]
+    if against:
+        remarks.append(f"the values contradict what is known of {', '.join(against)} beforehand")
     if free[RADIUS] and not data.radius.min() <= theta[RADIUS] <= data.radius.max():
         remarks.append("all measured radii lie on one side of r0: r0 and D0 are extrapolated")
     if p_value < 0.001:

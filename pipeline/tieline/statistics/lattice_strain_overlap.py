@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -86,8 +86,12 @@ def compare_overlaps(
     """
     told = [row for row, fit in enumerate(joint) if tells_overlap(fit)]
     improvement, p_value = np.full(len(data), np.nan), np.full(len(data), np.nan)
+    joint = list(joint)
     if told:
-        improvement[told], p_value[told] = _tests([joint[row] for row in told])
+        improvement[told], p_value[told], rise = _tests([joint[row] for row in told])
+        for row in np.array(told)[improvement[told] <= rise]:
+            # a way round a barrier: f = 0 fits well enough with a curve of another shape
+            joint[row] = replace(joint[row], overlap=replace(joint[row].overlap, low=0.0))
     found = p_value < 1 - np.array([fit.confidence for fit in joint])
     wanted = [row for row in told if correct or found[row]]
     corrected = dict(zip(wanted, _corrected([(data[row], joint[row]) for row in wanted]), strict=True))
@@ -118,8 +122,11 @@ def tells_overlap(joint: CurveFit) -> bool:
     return joint.E.status == "fixed" or (joint.E.low > 0 and bool(np.isfinite(joint.E.high)))
 
 
-def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray]:
-    """How much worse the values fit without overlap, at the joint fit's covariance, and how often that is chance, (fits,)."""
+def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """How much worse the values fit without overlap, at the joint fit's covariance, and how often that is chance, (fits,).
+
+    Also the rise of the sum of squares at the ends of the interval of f.
+    """
     fits = Fits.of(joint)
     problem, theta, free = fits.problem, fits.theta, fits.free
     start = np.tile(theta[:, None, :], (1, 3, 1))
@@ -134,9 +141,11 @@ def _tests(joint: Sequence[CurveFit]) -> tuple[FloatArray, FloatArray]:
     )  # fmt: skip
     lowest = without.sum_of_squares.reshape(-1, 3).min(axis=1)
     improvement = np.maximum(lowest - np.sum(problem.residuals(theta)[0] ** 2, axis=1), 0.0)
-    factor, dof = Linear.of(problem, theta, fits.spread).few(np.tile(np.eye(4)[OVERLAP], (len(theta), 1)))
+    along = np.tile(np.eye(4)[OVERLAP], (len(theta), 1))
+    factor, dof = Linear.of(problem, theta, fits.spread).few(along)
     dof = np.where(fits.scale > 1, np.minimum(dof, fits.dof), dof)
-    return improvement, 0.5 * f_tail(np.ones(len(theta)), dof, improvement / (fits.scale * factor))
+    p_value = 0.5 * f_tail(np.ones(len(theta)), dof, improvement / (fits.scale * factor))
+    return improvement, p_value, fits.cut(along, joint[0].confidence)
 
 
 def _corrected(cases: Sequence[tuple[Coefficients, CurveFit]]) -> list[Corrected]:
