@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -145,9 +146,9 @@ def _charges(
     rows: Sequence[Row], given: Mapping[str, int], wanted: Sequence[int] | None = None
 ) -> dict[int, int]:
     """How many measured elements each wanted charge has, charges in order."""
-    found = [charge_of(element, given) for element in (row["element"] for row in rows)]
-    every = sorted({one for one in found if one is not None and (wanted is None or one in wanted)})
-    return {charge: found.count(charge) for charge in every}
+    count = Counter(charge_of(row["element"], given) for row in rows)
+    every = sorted(one for one in count if one is not None and (wanted is None or one in wanted))
+    return {charge: count[charge] for charge in every}
 
 
 def _no_curves(pair: Mapping[str, Any], charges: Sequence[int], why: str) -> dict[str, Any]:

@@ -25,15 +25,23 @@ def overlap_checks(partition: pd.DataFrame) -> pd.DataFrame:
 
     names = [*PAIR_KEYS, "element", "D", "D_overlap_lo", "overlap_bound"]
     own = partition.loc[(partition["kind"] == "value") & partition["overlap_bound"].notna(), names]
-    pairs: dict[tuple[str, str, str], list[dict[str, Any]]] = {}
-    for row in own.sort_values([*PAIR_KEYS, "D"], kind="stable").to_dict("records"):
-        pairs.setdefault((row["experiment"], row["alpha"], row["beta"]), []).append(row)
-    rows = [_check(dict(zip(PAIR_KEYS, key, strict=True)), group) for key, group in pairs.items()]
+    own = own.sort_values([*PAIR_KEYS, "D"], kind="stable")
+    pairs = own.groupby(list(PAIR_KEYS), sort=False)
+    bound = pairs["overlap_bound"].transform("first")
+    own = own.assign(place=pairs.cumcount(), doubtful=(own["D"] < 1) & (bound >= SHARE * own["D"]))
+    pairs = own.groupby(list(PAIR_KEYS), sort=False)
+    own = own.assign(n=pairs["place"].transform("size"), n_doubtful=pairs["doubtful"].transform("sum"))
+    # The doubtful ones come first; of the others the smallest alone is named.
+    named = own[(own["place"] == 0) | (own["place"] <= own["n_doubtful"])]
+    groups: dict[tuple[str, str, str], list[dict[str, Any]]] = {}
+    for row in named.to_dict("records"):
+        groups.setdefault((row["experiment"], row["alpha"], row["beta"]), []).append(row)
+    rows = [_check(dict(zip(PAIR_KEYS, key, strict=True)), group) for key, group in groups.items()]
     return pd.DataFrame(rows, columns=list(CHECK_COLUMNS))
 
 
 def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
-    """One pair; group: its D's in increasing order."""
+    """One pair; group: its doubtful D's in increasing order, and the smallest of the others."""
     alpha, beta, smallest = keys["alpha"], keys["beta"], group[0]
     bound, subject = float(smallest["overlap_bound"]), f"{beta} in {alpha}"
     if smallest["D"] >= 1:
@@ -41,8 +49,8 @@ def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
             f"No D lies below one, so none bounds the {beta} in {alpha}. It can only have lowered these D."
         )
         return check("overlap-bound", keys, subject, CANNOT_TELL, words)
-    doubtful = [row for row in group if row["D"] < 1 and bound >= SHARE * row["D"]]
-    others, safe = doubtful[1:], group[len(doubtful) :]
+    doubtful, safe = group[: smallest["n_doubtful"]], group[smallest["n_doubtful"] :]
+    others, n_safe = doubtful[1:], smallest["n"] - smallest["n_doubtful"]
     words = f"The D leave room for up to {bound:.2g} of {beta} in {alpha}. "
     if others:
         words += f"That could make {SHARE:.0%} or more of {_names(doubtful)}: upper limits as far as overlap is concerned. "
@@ -52,9 +60,7 @@ def _check(keys: dict[str, str], group: list[dict[str, Any]]) -> dict[str, Any]:
         )
     if safe:
         count = "the other" if doubtful else "all"
-        words += (
-            f"Of {count} {len(safe)}, from {_names(safe[:1])} upwards, it leaves more than {1 - SHARE:.0%}."
-        )
+        words += f"Of {count} {n_safe}, from {_names(safe)} upwards, it leaves more than {1 - SHARE:.0%}."
     verdict = CANNOT_TELL if others else CONSISTENT
     return check("overlap-bound", keys, subject, verdict, words.strip(), value=bound)
 

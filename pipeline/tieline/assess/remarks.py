@@ -49,7 +49,7 @@ def _unknown_experiments(
     means: pd.DataFrame, start: Mapping[tuple[str | None, str], Start], settings: AssessSettings
 ) -> list[Remark]:
     """Names in the starting composition and among the modes that no experiment of the session has."""
-    known = set(means["experiment"])
+    known = set(means["experiment"].unique())
     given = {
         "the starting composition names": {name for name, _element in start if name is not None},
         "[assess.modes] names": set(settings.modes.proportions),

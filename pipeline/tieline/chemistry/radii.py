@@ -6,6 +6,7 @@ none is interpolated.
 """
 
 import math
+from functools import cache
 
 from tieline.chemistry.elements import SYMBOLS
 from tieline.chemistry.oxides import cation_charges
@@ -110,6 +111,7 @@ def ionic_radius(element: str, charge: int, coordination: int) -> float:
     return _RADII.get((element, charge, coordination), math.nan)
 
 
+@cache
 def usual_charges(element: str) -> tuple[int, ...]:
     """Charges of an element in igneous systems, the usual one first (Eu 3 then 2, V 3 then 4, 5 and 2).
 
