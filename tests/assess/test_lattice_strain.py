@@ -1,6 +1,7 @@
 """Series of elements and their curves from partition tables: who enters, what is held, and what is said."""
 
 import numpy as np
+import pandas as pd
 import pytest
 
 from assess.frames import covariance, partition
@@ -26,6 +27,16 @@ def curve(elements=RARE_EARTHS, fraction=0.0, seed=1, error=0.03, charge=3, para
 def tables(rows, temperature=1300.0, shared=0.0, **settings):
     table = partition(rows, alpha="clinopyroxene")
     return lattice_strain_tables(table, covariance(table, shared), {"A": temperature}, **settings)
+
+
+def test_rows_of_pairs_come_in_the_order_of_pairs_and_of_the_table():
+    table = partition(curve()[:2])
+    names = table["element"].tolist()
+    second = table.assign(experiment="0")
+    both = pd.concat([table.iloc[[1]], second, table.iloc[[0]]], ignore_index=True)
+    found = [(keys[0], [row["element"] for row in rows]) for keys, rows in pair_rows(both)]
+    assert found == [("0", names), ("A", names[::-1])]
+    assert not list(pair_rows(both.iloc[:0]))
 
 
 def test_curve_is_recovered_from_a_table():
@@ -72,7 +83,7 @@ def test_degrees_of_freedom_of_the_spots_are_told_from_those_of_the_whole(share)
     rows = [
         {**row, "dof": whole[0], "share_counting": share / 2, "share_spread": share / 2} for row in curve()
     ]
-    found = collect_series(pair_rows(partition(rows))["A", "olivine", "glass"], {}, 3, 8).data.dof
+    found = collect_series(dict(pair_rows(partition(rows)))["A", "olivine", "glass"], {}, 3, 8).data.dof
     np.testing.assert_allclose(
         found, 11 * 6.0, rtol=1e-3
     )  # spots that scatter alike have those of all together
@@ -113,7 +124,7 @@ def test_a_prior_steps_in_and_is_named():
 
 def test_one_value_with_everything_held_gives_a_level_only_with_r0():
     table = partition([{"element": "Y", "D": 0.5}], alpha="clinopyroxene")
-    series = collect_series(pair_rows(table)["A", "clinopyroxene", "glass"], {}, 3, 8)
+    series = collect_series(dict(pair_rows(table))["A", "clinopyroxene", "glass"], {}, 3, 8)
     assert fit_series(series, 1573.15).fit.verdict == "cannot tell"
     held = fit_series(series, 1573.15, {"r0": Prior(1.02, 0.01)})
     assert held.fit.verdict == "fitted"

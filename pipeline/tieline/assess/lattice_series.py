@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -36,7 +36,8 @@ OFF_THE_CURVE = {
     "Pb": "lone pair of electrons",
 }
 NO_RADIUS = "no radius"
-_NEEDED = ["element", "kind", "D", "D_sd", "D_hi", "dof", "share_counting", "share_spread"]
+_TEXTS = ("element", "kind")
+_NEEDED = [*_TEXTS, "D", "D_sd", "D_hi", "dof", "share_counting", "share_spread"]
 _LIMIT_OVER_SD = 3.0
 _NORMAL_975 = 1.959964
 
@@ -71,14 +72,21 @@ def charge_of(element: str, charges: Mapping[str, int]) -> int | None:
 Row = Mapping[str, Any]
 
 
-def pair_rows(partition: pd.DataFrame) -> dict[tuple[str, str, str], list[Row]]:
-    """(experiment, alpha, beta), in order -> rows of the partition table, with the columns that a series needs."""
-    # Whole columns as objects first: a data frame takes ten times longer to hand out its texts one by one.
-    columns = {name: partition[name].to_numpy(dtype=object) for name in (*PAIR_KEYS, *_NEEDED)}
-    pairs: dict[tuple[str, str, str], list[Row]] = {}
-    for experiment, alpha, beta, *values in zip(*columns.values(), strict=True):
-        pairs.setdefault((experiment, alpha, beta), []).append(dict(zip(_NEEDED, values, strict=True)))
-    return dict(sorted(pairs.items()))
+def pair_rows(partition: pd.DataFrame) -> Iterator[tuple[tuple[str, str, str], list[Row]]]:
+    """(experiment, alpha, beta), in order, with their rows of the partition table: the columns that a series needs.
+
+    One pair after the other, for the rows of all at once would be many times as large as the table.
+    """
+    number = partition.groupby(list(PAIR_KEYS)).ngroup().to_numpy()
+    order = np.argsort(number, kind="stable")
+    # Texts as objects first: a data frame takes ten times longer to hand them out one by one.
+    keys = [partition[name].to_numpy(dtype=object) for name in PAIR_KEYS]
+    columns = [partition[name].to_numpy(object if name in _TEXTS else np.float64) for name in _NEEDED]
+    starts = np.flatnonzero(np.diff(number[order], prepend=-1))
+    for rows in np.split(order, starts[1:]) if len(order) else ():
+        experiment, alpha, beta = (column[rows[0]] for column in keys)
+        values = zip(*(column[rows].tolist() for column in columns), strict=True)
+        yield (experiment, alpha, beta), [dict(zip(_NEEDED, row, strict=True)) for row in values]
 
 
 def collect_series(

@@ -53,7 +53,7 @@ def lattice_strain_tables(
     """
     variances = by_pair(covariance)
     found: list[dict[str, Any] | _Fitted] = []
-    for keys, rows in pair_rows(partition).items():
+    for keys, rows in pair_rows(partition):
         pair = dict(zip(PAIR_KEYS, keys, strict=True))
         phase = base_phase(pair["alpha"])
         site = _site(phase, coordination or {})
