@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import partial
 from itertools import compress
 
 import numpy as np
@@ -44,15 +43,30 @@ PYROXENE_COMPONENTS = ("wo", "en")
 
 
 @dataclass(frozen=True)
-class Whole:
-    """The whole analyses: first row of each in `convert`, elements, ppm and sigma (n, p), total and its sd (n,)."""
+class WholeAnalyses:
+    """Where the whole analyses are among the rows of `ingest`.
 
+    spot: (n,) number of each; rows: (n,) its first row; elements: the p elements they have. order: all rows by spot, None
+    where they are so already; start: (spots + 1,) place of each spot's first row in that order; column: by code of an element
+    its place in `elements`, -1 for none.
+    """
+
+    spot: IntArray
     rows: IntArray
+    elements: tuple[str, ...]
+    order: IntArray | None
+    start: IntArray
+    column: IntArray
+
+
+@dataclass(frozen=True)
+class Analyses:
+    """Some whole analyses: elements, ppm and sigma (k, p), NaN unknown, and the phases (k,)."""
+
     elements: tuple[str, ...]
     ppm: FloatArray
     sigma: FloatArray
-    total: FloatArray
-    total_sd: FloatArray
+    phase: Labels
 
 
 @dataclass(frozen=True)
@@ -72,43 +86,28 @@ def formula_tables(
 
     value, sigma: element ppm of every row of `ingest`, before any internal standard.
     """
-    whole = _whole_analyses(ingest, element, value, sigma)
-    phase = labels(ingest.select(["phase"]).take(pa.array(whole.rows)), "phase")
-    oxygens, ideal = _bases(phase, settings)
-    columns = {name: np.full(len(whole.rows), np.nan) for name in _number_columns()}
-    columns["total_wt"], columns["total_sd_wt"], columns["oxygens"] = whole.total, whole.total_sd, oxygens
-    # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
-    parts = list(portions(len(whole.rows), SPOTS_AT_ONCE))
-    cations = side_by_side(partial(_cations, columns, whole, oxygens, ideal), parts)
-    _components(columns, whole, phase)
+    whole = _whole_analyses(ingest, element, value)
     head = {name: ingest.column(name).take(pa.array(whole.rows)) for name in KEYS}
-    elements = whole.elements
-    del whole
+    phase = labels(pa.table({"phase": head["phase"]}), "phase")
+    columns = {name: np.full(len(whole.rows), np.nan) for name in _number_columns()}
+    columns["oxygens"], ideal = _bases(phase, settings)
+
+    def cations_of(part: slice) -> Cations:
+        analyses = _analyses(whole, part, element, value, sigma, phase)
+        own = {name: column[part] for name, column in columns.items()}
+        _totals(own, analyses)
+        _components(own, analyses)
+        return _cations(own, analyses, ideal[part])
+
+    # Some spots at a time, for a formula takes a dozen arrays of the size of its analyses.
+    cations = side_by_side(cations_of, list(portions(len(whole.rows), SPOTS_AT_ONCE)))
     return {
         "convert.formula": build(CONVERT_FORMULA, {**head, **columns}),
-        "convert.cations": _cation_table(head, elements, cations),
+        "convert.cations": _cation_table(head, whole.elements, cations),
     }
 
 
-def _cations(
-    columns: dict[str, FloatArray], whole: Whole, oxygens: FloatArray, ideal: FloatArray, part: slice
-) -> Cations:
-    """The atoms per formula of some spots, whose sums and ferric iron go into `columns`."""
-    atoms, sds = np.full((2, part.stop - part.start, len(whole.elements)), np.nan)
-    for basis in np.unique(oxygens[part][np.isfinite(oxygens[part])]):
-        own = np.flatnonzero(oxygens[part] == basis)
-        rows = part.start + own
-        units = atoms_from_ppm(whole.ppm[rows], whole.elements, float(basis), whole.sigma[rows])
-        atoms[own], sds[own] = units.atoms, units.sigma
-        columns["cation_sum"][rows] = units.cation_sum
-        columns["cation_sum_sd"][rows] = units.cation_sum_sigma
-        _ferric(columns, rows, units, ideal[rows])
-    measured = np.isfinite(atoms)
-    element = np.nonzero(measured)[1].astype(np.int8)
-    return Cations(measured.sum(axis=1), element, atoms[measured], sds[measured])
-
-
-def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma: FloatArray) -> Whole:
+def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray) -> WholeAnalyses:
     spot, first = spot_codes(ingest)
     share = wt_percent_per_ppm(element.texts) if element.texts else np.zeros(0)
     rough = np.zeros(len(first))
@@ -116,29 +115,64 @@ def _whole_analyses(ingest: pa.Table, element: Labels, value: FloatArray, sigma:
         parts = np.nan_to_num(share[element.codes[rows]] * value[rows], posinf=0.0, neginf=0.0)
         np.add.at(rough, spot[rows], parts)
     is_whole = rough > WHOLE_ABOVE_WT
-    chosen = np.flatnonzero(is_whole)
-    place = np.cumsum(is_whole) - 1
     used = np.zeros(len(element.texts), dtype=np.bool_)
     for rows in portions(len(value)):
         used[element.codes[rows][is_whole[spot[rows]] & np.isfinite(value[rows])]] = True
     used &= np.array([text != "O" for text in element.texts], dtype=np.bool_)
-    column = np.cumsum(used) - 1
-    elements = tuple(compress(element.texts, used))
-    shape = (len(chosen), len(elements))
-    ppm, sigmas = np.full(shape, np.nan), np.full(shape, np.nan)
+    chosen = np.flatnonzero(is_whole)
+    in_order = bool(np.all(spot[1:] >= spot[:-1]))
+    return WholeAnalyses(
+        chosen,
+        first[chosen],
+        tuple(compress(element.texts, used)),
+        None if in_order else np.argsort(spot, kind="stable"),
+        np.concatenate([[0], np.cumsum(np.bincount(spot, minlength=len(first)))]),
+        np.where(used, np.cumsum(used) - 1, -1),
+    )
+
+
+def _analyses(
+    whole: WholeAnalyses, part: slice, element: Labels, value: FloatArray, sigma: FloatArray, phase: Labels
+) -> Analyses:
+    """The concentrations of some of the whole analyses, one column per element."""
+    spots, first_spot, end = whole.spot[part], whole.spot[part.start], whole.spot[part.stop - 1] + 1
+    start = whole.start[first_spot : end + 1]
+    place = np.full(end - first_spot, -1)
+    place[spots - first_spot] = np.arange(len(spots))
+    analysis = np.repeat(place, np.diff(start))
+    rows: slice | IntArray = slice(start[0], start[-1])
+    if whole.order is not None:
+        rows = whole.order[rows]
+    column = whole.column[element.codes[rows]]
     # In reverse, so that of an element measured twice in one spot the first column stands.
-    for rows in reversed(list(portions(len(value)))):
-        codes, spots = element.codes[rows], spot[rows]
-        cells = np.flatnonzero(is_whole[spots] & used[codes] & np.isfinite(value[rows]))[::-1]
-        target = place[spots[cells]] * len(elements) + column[codes[cells]]
-        ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[rows][cells], sigma[rows][cells]
-    weights = wt_percent_per_ppm(elements) if elements else np.zeros(0)
-    total, total_sd = np.empty((2, len(chosen)))
-    for rows in portions(len(chosen), SPOTS_AT_ONCE):
-        total[rows] = oxide_total(ppm[rows], elements)
-        errors = np.where(np.isnan(ppm[rows]), 0.0, sigmas[rows]) * weights
-        total_sd[rows] = np.sqrt(np.sum(errors**2, axis=1))
-    return Whole(first[chosen], elements, ppm, sigmas, total, total_sd)
+    cells = np.flatnonzero((analysis >= 0) & (column >= 0) & np.isfinite(value[rows]))[::-1]
+    target = analysis[cells] * len(whole.elements) + column[cells]
+    ppm, sigmas = np.full((2, len(spots), len(whole.elements)), np.nan)
+    ppm.reshape(-1)[target], sigmas.reshape(-1)[target] = value[rows][cells], sigma[rows][cells]
+    return Analyses(whole.elements, ppm, sigmas, Labels(phase.codes[part], phase.texts))
+
+
+def _totals(columns: dict[str, FloatArray], analyses: Analyses) -> None:
+    weights = wt_percent_per_ppm(analyses.elements) if analyses.elements else np.zeros(0)
+    errors = np.where(np.isnan(analyses.ppm), 0.0, analyses.sigma) * weights
+    columns["total_wt"][:] = oxide_total(analyses.ppm, analyses.elements)
+    columns["total_sd_wt"][:] = np.sqrt(np.sum(errors**2, axis=1))
+
+
+def _cations(columns: dict[str, FloatArray], analyses: Analyses, ideal: FloatArray) -> Cations:
+    """The atoms per formula, whose sums and ferric iron go into `columns`."""
+    atoms, sds = np.full((2, *analyses.ppm.shape), np.nan)
+    oxygens = columns["oxygens"]
+    for basis in np.unique(oxygens[np.isfinite(oxygens)]):
+        own = np.flatnonzero(oxygens == basis)
+        units = atoms_from_ppm(analyses.ppm[own], analyses.elements, float(basis), analyses.sigma[own])
+        atoms[own], sds[own] = units.atoms, units.sigma
+        columns["cation_sum"][own] = units.cation_sum
+        columns["cation_sum_sd"][own] = units.cation_sum_sigma
+        _ferric(columns, own, units, ideal[own])
+    measured = np.isfinite(atoms)
+    element = np.nonzero(measured)[1].astype(np.int8)
+    return Cations(measured.sum(axis=1), element, atoms[measured], sds[measured])
 
 
 def _bases(phase: Labels, settings: FormulaSettings) -> tuple[FloatArray, FloatArray]:
@@ -172,25 +206,25 @@ def _ferric(columns: dict[str, FloatArray], rows: IntArray, units: FormulaUnits,
             columns["ferric_fraction_sd"][rows[chosen]] = iron.balance_sigma[chosen] / total_iron
 
 
-def _components(columns: dict[str, FloatArray], whole: Whole, phase: Labels) -> None:
+def _components(columns: dict[str, FloatArray], analyses: Analyses) -> None:
     """Molar ratios with their standard uncertainty: for s = a_i / sum(a), var = sum((d_ij - s)² u_j²) / sum(a)²."""
     from tieline.chemistry.elements import atomic_weight
 
-    weight = np.array([atomic_weight(name) for name in whole.elements])
+    weight = np.array([atomic_weight(name) for name in analyses.elements])
     for name, (numerator, parts) in COMPONENTS.items():
-        present = [whole.elements.index(part) for part in parts if part in whole.elements]
-        if numerator not in whole.elements or len(present) < 2:
+        present = [analyses.elements.index(part) for part in parts if part in analyses.elements]
+        if numerator not in analyses.elements or len(present) < 2:
             continue
-        moles = np.nan_to_num(whole.ppm[:, present]) / weight[present]
-        sds = np.nan_to_num(whole.sigma[:, present]) / weight[present]
+        moles = np.nan_to_num(analyses.ppm[:, present]) / weight[present]
+        sds = np.nan_to_num(analyses.sigma[:, present]) / weight[present]
         total = moles.sum(axis=1)
         safe = np.where(total > 0, total, np.nan)
-        own = whole.elements.index(numerator)
+        own = analyses.elements.index(numerator)
         share = moles[:, present.index(own)] / safe
         slope = (np.array(present) == own)[None, :] - share[:, None]
         sd = np.sqrt(np.sum((slope * sds) ** 2, axis=1)) / safe
-        fits = _fits(name, phase)
-        columns[name], columns[f"{name}_sd"] = np.where(fits, share, np.nan), np.where(fits, sd, np.nan)
+        fits = _fits(name, analyses.phase)
+        columns[name][:], columns[f"{name}_sd"][:] = np.where(fits, share, np.nan), np.where(fits, sd, np.nan)
 
 
 def _fits(component: str, phase: Labels) -> BoolArray:

@@ -85,7 +85,9 @@ def internal_standards(
     each its own phases. Raises InputError listing every phase of every experiment without an assumed or,
     unless the settings leave such values as assumed, an actual concentration.
     """
-    combined = Rescaling(np.ones(ingest.num_rows), np.zeros(ingest.num_rows, dtype=np.bool_))
+    # One number that stands for all rows, for mostly there is nothing to rescale.
+    ones, none = np.broadcast_to(1.0, ingest.num_rows), np.broadcast_to(np.False_, ingest.num_rows)
+    combined = Rescaling(ones, none)
     problems: list[Problem] = []
     for number, standard in enumerate(standards):
         others = [other for place, other in enumerate(standards) if place != number]

@@ -71,10 +71,11 @@ def pair(
     convert, wholes = with_parts(convert, settings)
     use = flags(screen, "use")
     unknown = is_labelled(convert, "experiment")
-    groups = group_table(convert, GROUP_COLUMNS, unknown)
     measured = use & unknown & np.isfinite(concentrations.value)
     limit_only = use & unknown & ~measured & np.isfinite(concentrations.limit)
     used = Used(measured, limit_only)
+    pairs, remarks = phase_pairs(convert, measured | limit_only, settings, wholes)
+    groups = group_table(convert, GROUP_COLUMNS, unknown)
     means = _with_shared_error(
         _means(convert, concentrations, groups, used, settings), shared, groups, measured
     )
@@ -83,7 +84,6 @@ def pair(
         **_standard_columns(convert_standards, measured_phases, groups.first),
     }
     table = _pair_table(convert, concentrations, groups, used, means, context)
-    pairs, remarks = phase_pairs(convert, measured | limit_only, settings, wholes)
     differences, difference_remarks = technique_differences(table, calibrate, settings)
     outcomes = {
         "in a phase mean": int(measured.sum()),

@@ -264,7 +264,9 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
         raise InputError(dict.fromkeys([*error.problems, *more])) from None
     return_unused_memory()
     _check_result(stage, result, work)
+    del inputs, extra  # what no later stage reads need not wait until the outputs are written
     work.tables.update(result.tables)
+    _forget(stage, work)
     used = {name: work.digests[name] for name in (*stage.inputs, *stage.files(settings))}
     record = {
         "version": __version__,
@@ -286,7 +288,6 @@ def _compute(stage: Stage, work: Workspace, pending: Pending | None, verdict: Ve
         if pending is not None:
             path = table_path(work.session.run_folder, name)
             pending.add(path, name, result.tables[name], {**record, "content": work.digests[name]})
-    _forget(stage, work)
     return StageReport(verdict, True, result.ledger, result.remarks)
 
 

@@ -193,7 +193,11 @@ def test_pictures_are_vector_files_of_journal_width(ember_source: Source):
     some_points = ember_source.table("assess.trend_points").slice(0, 40)
     tables = {**ember_source.tables, "classify": one_pair, "assess.trend_points": some_points}
     files = figure_files(replace(ember_source, tables=tables))
-    own = [name for name in sorted(files) if not name.startswith(("D_against", "exchange", "mass_balance"))]
+    own = [
+        name
+        for name in sorted(files)
+        if not name.startswith(("D_against", "bulk_D", "exchange", "mass_balance"))
+    ]
     assert own == [
         f"{stem}_plagioclase_glass.{ending}"
         for stem in ("D_elements", "D_radius", "budget")

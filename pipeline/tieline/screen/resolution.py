@@ -15,8 +15,7 @@ import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
 
-from tieline.arrays import BoolArray, IntArray, flags, is_labelled, portions
-from tieline.correction import Concentrations
+from tieline.arrays import BoolArray, IntArray, is_labelled, portions
 from tieline.results import Ledger
 from tieline.screen.findings import RULING, TESTS, WHOLE_SPOT, Findings
 from tieline.screen.session import Session
@@ -73,9 +72,9 @@ class Resolution:
 
 
 def resolve(
-    convert: pa.Table, concentrations: Concentrations, session: Session, findings: Sequence[Findings]
+    convert: pa.Table, known: BoolArray, session: Session, findings: Sequence[Findings]
 ) -> Resolution:
-    """What keeps every row of `convert` out, from all findings, rulings among them."""
+    """What keeps every row of `convert` out, from all findings, rulings among them. known: rows with a value or a limit."""
     cells = _Cells(session)
     reasons = np.zeros(convert.num_rows, dtype=np.int16)
     kept = np.zeros(convert.num_rows, dtype=np.bool_)
@@ -91,9 +90,7 @@ def resolve(
             reasons[keep] = 0
             reasons[drop] |= _RULING_BIT
             kept = (kept | keep) & ~drop
-    has_value = np.isfinite(concentrations.value)
-    has_limit = np.isfinite(concentrations.limit) & flags(convert, "below_limit")
-    reasons[~has_value & ~has_limit] = _MISSING_BIT
+    reasons[~known] = _MISSING_BIT
     reasons[is_labelled(convert, "material")] = _REFERENCE_BIT
     return Resolution(reasons, kept)
 

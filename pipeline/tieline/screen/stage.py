@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import BoolArray
+from tieline.arrays import BoolArray, flags
 from tieline.columns import SCREEN, VALUE_KEYS
 from tieline.correction import calibrated
 from tieline.memory import return_unused_memory
@@ -52,13 +52,16 @@ def screen(
     """
     rulings, malformed = rulings_as_written(files)
     concentrations = calibrated(convert, calibrate, ingest_spots, convert_standards)
+    known = np.isfinite(concentrations.limit) & flags(convert, "below_limit")
+    known |= np.isfinite(concentrations.value)
     session = session_of(convert, concentrations)
+    del concentrations  # the matrices of the session hold them from here on
     ruled = ruling_findings(rulings, session, malformed)
     results, unmixed = _tests(session, settings)
     findings = (ruled, *(part for result in results for part in result.findings))
     if settings.imprecise.enabled:
         results.append(TestResult(remarks=tuple(reference_remarks(calibrate))))
-    resolution = resolve(convert, concentrations, session, findings)
+    resolution = resolve(convert, known, session, findings)
     table = build(
         SCREEN,
         {column.name: convert.column(column.name) for column in VALUE_KEYS}
