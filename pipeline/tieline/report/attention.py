@@ -73,7 +73,7 @@ def _reference(calibrate: list[dict[str, Any]], d_rows: list[dict[str, Any]]) ->
     cancels = "cancels within a batch" if not across else f"does not cancel in {across} D across batches"
     text = (
         f"Reference materials outside the laboratory's limit: {listed(element for _, element in failed)}; "
-        f"worst {worst[1]} in {worst[0]}, {percent(abs(failed[worst] - 1))} off. The bias {cancels}."
+        f"worst {worst[1]} in {worst[0]}, {100 * abs(failed[worst] - 1):.2g} % off. The bias {cancels}."
     )
     return Attention("reference", text, len(touched))
 
@@ -105,7 +105,7 @@ def _overlap(d_rows: list[dict[str, Any]]) -> Attention | None:
     worst = max(groups, key=lambda key: (bounds[key] or 0.0, groups[key]))
     text = (
         f"{len(doubtful)} D could be nothing but leftover {worst[2]} in the crystals. Most room for it: {worst[0]} "
-        f"{worst[1]}, up to {percent(bounds[worst] or 0.0)} {worst[2]} ({groups[worst]} D)."
+        f"{worst[1]}, up to {100 * (bounds[worst] or 0.0):.2g} % {worst[2]} ({groups[worst]} D)."
     )
     return Attention("overlap", text, len(doubtful))
 
