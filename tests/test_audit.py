@@ -359,6 +359,8 @@ def test_seal_is_a_checksum_file_and_keeps_later_runs_out(own: Path):
     for write in (runner.run, write_report):
         with pytest.raises(InputError, match="is sealed"):
             write(stale)
+    with pytest.raises(InputError, match="The folder is sealed: bring back"):
+        runner.finished(stale, "classify")
     assert {path.name: path.read_bytes() for path in own.iterdir()} == before
     assert audit(own).differences == []
     (own / "note.txt").write_text("later", encoding="utf-8")

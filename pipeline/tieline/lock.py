@@ -84,9 +84,14 @@ def locked(run_folder: Path) -> Iterator[Hold]:
                 hold.path.unlink()
 
 
+def is_sealed(run_folder: Path) -> bool:
+    """Whether the folder is sealed, so that nothing more is written to it."""
+    return (run_folder / SEAL_NAME).exists()
+
+
 def refuse_if_sealed(run_folder: Path) -> None:
     """Raises InputError when the folder is sealed."""
-    if (run_folder / SEAL_NAME).exists():
+    if is_sealed(run_folder):
         raise InputError(
             Problem(
                 f"is sealed by {SEAL_NAME}; a published reduction is not written to.",

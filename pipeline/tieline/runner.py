@@ -16,7 +16,7 @@ import pyarrow as pa
 from tieline import __version__
 from tieline.configuration import Session
 from tieline.errors import DefectError, InputError, Problem
-from tieline.lock import locked, refuse_if_sealed
+from tieline.lock import is_sealed, locked, refuse_if_sealed
 from tieline.manifest import write_manifest
 from tieline.memory import return_unused_memory
 from tieline.narrowing import compact
@@ -141,9 +141,12 @@ def finished(session: Session, until: str) -> tuple[Session, dict[str, pa.Table]
     for verdict in _verdicts(work, stages):
         if verdict.state != "current":
             reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
-            raise InputError(
-                Problem(f"{verdict.stage} is {verdict.state}{reasons}.", remedy="Run `tieline run` first.")
+            remedy = (
+                "The folder is sealed: bring back the files and settings it was made from, or run into another --out folder."
+                if is_sealed(session.run_folder)
+                else "Run `tieline run` first."
             )
+            raise InputError(Problem(f"{verdict.stage} is {verdict.state}{reasons}.", remedy=remedy))
     tables = tables_of(session, (name for stage in stages for name in stage.outputs))
     if _fingerprints(session, stages) != before:
         raise InputError(
