@@ -2,9 +2,10 @@
 
 The lock file names its holder and outlives no process: it is taken over when the process is gone, or, where
 that cannot be asked (another machine, another container), when it has not touched the file for SILENT_S. Both
-times of that comparison are the file server's, so that clocks need not agree. A writer that slept that long asks
-`Hold.check` before it shows its results, and finds the lock gone. A sealed folder holds a list of checksums of
-all its files, which any change would make untrue.
+times of that comparison are the file server's, so that clocks need not agree. Stale locks are removed by one process
+at a time, whose turn is a lock of the same kind: otherwise one would remove what another has put in place of the stale
+one. A writer that slept that long asks `Hold.check` before it shows its results, and finds the lock gone. A sealed
+folder holds a list of checksums of all its files, which any change would make untrue.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ import os
 import secrets
 import socket
 import threading
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass
@@ -23,10 +25,12 @@ from tieline.errors import InputError, Problem
 from tieline.storage import remove_left_overs, temporary_path
 
 LOCK_NAME = ".tieline.lock"
+TURN_NAME = ".tieline.lock.turn"
 SEAL_NAME = "SHA256SUMS"
 BEAT_S = 30.0
 SILENT_S = 600.0  # twenty missed beats: a network folder may stop answering for minutes and come back
 ATTEMPTS = 20
+WAIT_S = 0.01  # for another process to remove a stale lock
 
 
 @dataclass(frozen=True)
@@ -111,28 +115,38 @@ def _beat(hold: Hold, stop: threading.Event) -> None:
 def _acquire(path: Path) -> Hold:
     hold = Hold(path, _myself())
     for _ in range(ATTEMPTS):
-        draft = temporary_path(path)
         try:
-            _write_draft(draft, hold.text)
-            now = draft.stat().st_mtime
-            if _place(draft, hold):
-                return hold
+            placed, now = _try(hold)
         except FileNotFoundError:
             if path.parent.is_dir():
                 continue  # the holder tidied the draft away, and may be done by now
             raise
         except OSError as error:
             raise InputError(_not_writable(path.parent, error)) from None
-        finally:
+        if placed:
+            # Whoever died in its turn left this behind; whoever is in its turn finds another lock than it came for.
             with suppress(OSError):
-                draft.unlink()
+                path.with_name(TURN_NAME).unlink()
+            return hold
         found = _text(path)
         if found is None:
             continue
         if not _is_stale(path, found, now):
             raise InputError(_held(path, found))
-        _take_away(path, found)
+        _remove_stale(path, found)
     raise InputError(_held(path, _text(path) or ""))
+
+
+def _try(hold: Hold) -> tuple[bool, float]:
+    """Whether the lock could be placed, and the time of the file system."""
+    draft = temporary_path(hold.path)
+    try:
+        _write_draft(draft, hold.text)
+        now = draft.stat().st_mtime
+        return _place(draft, hold), now
+    finally:
+        with suppress(OSError):
+            draft.unlink()
 
 
 def _myself() -> str:
@@ -173,8 +187,33 @@ def _place_without_links(hold: Hold) -> bool:
     return True
 
 
-def _take_away(path: Path, found: str) -> None:
+def _remove_stale(path: Path, found: str) -> None:
     """Removes the stale lock that says `found`, and no other that may have come in its place."""
+    turn = Hold(path.with_name(TURN_NAME), _myself())
+    try:
+        placed, now = _try(turn)
+    except OSError:
+        return
+    if not placed:
+        other = _text(turn.path)
+        if other is not None and _is_stale(turn.path, other, now):
+            _take_away(turn.path, other)
+        time.sleep(WAIT_S)
+        return
+    try:
+        # Only whose turn it is removes a stale lock, and none is placed while there is one: it stays what it is.
+        if _text(path) == found:
+            path.unlink()
+    except OSError:
+        pass
+    finally:
+        with suppress(OSError):
+            if turn.ours():
+                turn.path.unlink()
+
+
+def _take_away(path: Path, found: str) -> None:
+    """Removes the turn of a process that died in it; one that came in its place is put back, but for a moment is not there."""
     aside = temporary_path(path)
     with suppress(OSError):
         os.rename(path, aside)

@@ -17,7 +17,7 @@ import pytest
 from faults.small import change_settings, write_session
 from tieline import lock, runner
 from tieline.errors import InputError
-from tieline.lock import LOCK_NAME, SILENT_S, locked
+from tieline.lock import LOCK_NAME, SILENT_S, TURN_NAME, locked
 from tieline.plan import table_path
 from tieline.storage import read_record, temporary_path
 
@@ -192,6 +192,27 @@ print(entered)
     ends = [child.communicate(timeout=60) for child in children]
     assert [child.returncode for child in children] == [0] * 4, ends
     assert sum(int(out) for out, _ in ends) > 20
+
+
+def test_who_died_while_it_removed_a_stale_lock_keeps_nobody_out(tmp_path: Path):
+    for with_lock in (True, False):
+        if with_lock:
+            write_lock(tmp_path, pid=dead_pid(), host=socket.gethostname(), token="x")
+        dead = json.dumps({"host": socket.gethostname(), "pid": dead_pid(), "token": "y"})
+        (tmp_path / TURN_NAME).write_text(dead, encoding="utf-8")
+        with locked(tmp_path) as hold:
+            assert hold.ours()
+        assert list(tmp_path.iterdir()) == []
+
+
+def test_while_another_removes_a_stale_lock_this_one_waits(tmp_path: Path):
+    write_lock(tmp_path, pid=dead_pid(), host=socket.gethostname(), token="x")
+    mine = json.dumps({"host": socket.gethostname(), "pid": os.getpid(), "token": "y"})
+    (tmp_path / TURN_NAME).write_text(mine, encoding="utf-8")
+    with pytest.raises(InputError, match="is being written by"), locked(tmp_path):
+        pass
+    assert json.loads((tmp_path / LOCK_NAME).read_text())["token"] == "x"
+    assert (tmp_path / TURN_NAME).read_text() == mine
 
 
 def test_what_dead_runs_left_is_removed_and_nothing_else(tmp_path: Path):
