@@ -15,7 +15,7 @@ demo: $(CORE)  ## set up and reduce the demo session
 	@$(BIN)/tieline run configs/ember.toml --report
 
 test: $(DEV) $(STANDARDS)/.installed  ## set up and run all tests
-	@$(BIN)/python -m pytest -q
+	@$(BIN)/python -m pytest -q -n 2
 
 check: $(DEV)  ## format, lint, types
 	@$(BIN)/ruff format --check .
