@@ -43,7 +43,7 @@ def test_a_straight_line_and_its_limits_are_those_of_the_normal_equations():
     y = 1.0 + 2.0 * X + np.array([0.3, -0.2, 0.1, 0.0, -0.4, 0.2, 0.1])
     design = np.stack([np.ones(7), X], axis=1)
     found = minimise(straight(y[None]), np.zeros((1, 2)), FREE[None], LOWER, UPPER)
-    np.testing.assert_allclose(found.theta[0], np.linalg.lstsq(design, y)[0], rtol=1e-8)
+    np.testing.assert_allclose(found.theta[0], np.linalg.lstsq(design, y, rcond=None)[0], rtol=1e-8)
     assert found.converged.all()
     spread = covariance(design, FREE)
     np.testing.assert_allclose(spread, np.linalg.inv(design.T @ design))
