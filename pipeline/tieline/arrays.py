@@ -285,3 +285,10 @@ def spot_codes(table: pa.Table) -> tuple[IntArray, IntArray]:
     keys *= widest
     keys += rows
     return ranked(keys, len(tables.texts) * widest)
+
+
+def grain_codes(table: pa.Table) -> IntArray:
+    """A number for the grain of every row; a spot without a grain label counts as a grain of its own."""
+    grain = labels(table, "grain")
+    spot, _ = spot_codes(table)
+    return np.where(grain.codes >= 0, grain.codes, len(grain.texts) + spot)

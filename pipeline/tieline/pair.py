@@ -20,11 +20,11 @@ from tieline.arrays import (
     IntArray,
     Labels,
     flags,
+    grain_codes,
     group_table,
     is_labelled,
     labels,
     numbers,
-    spot_codes,
 )
 from tieline.columns import PAIR, PAIR_LIMITS
 from tieline.correction import (
@@ -110,7 +110,7 @@ def _means(
     rows = np.flatnonzero(used.measured)
     rows = rows[np.argsort(groups.code[rows], kind="stable")]
     code = groups.code[rows]
-    grains = _grains(convert) if settings.average == "grains" else None
+    grains = grain_codes(convert) if settings.average == "grains" else None
 
     def of_groups(first: int) -> PhaseMeans:
         count = min(GROUPS_AT_ONCE, groups.count - first)
@@ -149,13 +149,6 @@ def _with_shared_error(
     return replace(
         means, variance=means.variance + common, counting_variance=means.counting_variance + common
     )
-
-
-def _grains(convert: pa.Table) -> IntArray:
-    """Grain of every row; a spot without a grain label counts as a grain of its own."""
-    grain = labels(convert, "grain")
-    spot, _ = spot_codes(convert)
-    return np.where(grain.codes >= 0, grain.codes, len(grain.texts) + spot)
 
 
 def _mean_sequence(

@@ -12,6 +12,7 @@ from tieline.arrays import (
     FloatArray,
     Groups,
     IntArray,
+    grain_codes,
     group_rows,
     labels,
     matches,
@@ -49,7 +50,8 @@ def spot_correlations(
     rows = np.flatnonzero(used & narrow_labels(convert, "element").is_one_of(wanted))
     own = convert.select([*_KEYS, "grain", "table", "row"]).take(pa.array(rows))
     means = group_rows([labels(own, name) for name in _KEYS])
-    unit, n_units = _units(own, of_grains)
+    unit = grain_codes(own) if of_grains else spot_codes(own)[0]
+    n_units = int(unit.max(initial=0)) + 1
     made = [_correlations(means, value[rows], unit, n_units, pair) for pair in pairs]
     first, second, correlation, n_common = (
         np.concatenate(parts) for parts in zip(_NOTHING, *made, strict=True)
@@ -59,18 +61,6 @@ def spot_correlations(
     for suffix, place in (("first", first), ("second", second)):
         columns |= {f"{name}_{suffix}": named[name].take(place) for name in ("element", "analyte")}
     return build(PAIR_CORRELATIONS, {**columns, "correlation": correlation, "n_common": n_common})
-
-
-def _units(convert: pa.Table, of_grains: bool) -> tuple[IntArray, int]:
-    """A number for the spot or grain of every row, and a number that all are below."""
-    unit, first = spot_codes(convert)
-    if not of_grains:
-        return unit, max(len(first), 1)
-    grain = labels(convert, "grain")
-    # A spot without a grain label counts as a grain of its own.
-    return np.where(grain.codes >= 0, grain.codes, len(grain.texts) + unit), max(
-        len(grain.texts) + len(first), 1
-    )
 
 
 def _correlations(

@@ -108,7 +108,8 @@ def coefficients(
     for name in ("mean_alpha_ppm", "mean_beta_ppm", "se_alpha_ppm", "se_beta_ppm"):
         for which in ("first", "second"):
             usable &= np.isfinite(both[f"{name}_{which}"].to_numpy(dtype=np.float64))
-    relative = np.hypot(_not_common(both, variances, elements), factor_relative_sd)
+    covariance = _covariances(both, variances, elements)
+    relative = np.hypot(_not_common(both, covariance), factor_relative_sd)
     straight = _by_means(both, ("first", "second"), relative, confidence, elements[1])
     reversed_ = _by_means(both, ("second", "first"), relative, confidence, elements[0])
     first, second = (
@@ -124,7 +125,7 @@ def coefficients(
         factor * value, factor * sd, factor * low, factor * high,
         np.where(turned, reversed_.dof, straight.dof), np.where(turned, reversed_.reason, straight.reason),
     )  # fmt: skip
-    return _with_limits(made, ~usable, both, variances, elements, factor, factor_relative_sd, confidence)
+    return _with_limits(made, ~usable, both, covariance, elements, factor, factor_relative_sd, confidence)
 
 
 def _reciprocal(values: FloatArray) -> FloatArray:
@@ -169,11 +170,10 @@ def _estimate(both: pd.DataFrame, side: str, which: str) -> MeanEstimate:
     return MeanEstimate(mean, se**2, counting**2, dof, n)
 
 
-def _not_common(
-    both: pd.DataFrame, variances: Mapping[tuple[str, str, str], Variances], elements: tuple[str, str]
-) -> FloatArray:
+def _not_common(both: pd.DataFrame, covariance: FloatArray) -> FloatArray:
     """Relative standard uncertainty of K_D from calibrations and internal standards: what the two D do not share.
 
+    covariance: of the two D, row by row.
     What is known of one D from few measurements counts by Student's quantile, as in the interval of that D.
     """
     parts, widening = [], np.ones(len(both))
@@ -189,7 +189,7 @@ def _not_common(
         widening = np.fmax(widening, divide(np.nan_to_num(a) ** 2 + np.nan_to_num(b) ** 2, factors, 1.0))
         parts.append(factors)
     product = both["D_first"].to_numpy(dtype=np.float64) * both["D_second"].to_numpy(dtype=np.float64)
-    shared = np.nan_to_num(divide(_covariances(both, variances, elements), product, 0.0))
+    shared = np.nan_to_num(divide(covariance, product, 0.0))
     return np.sqrt(np.maximum(parts[0] + parts[1] - 2.0 * shared, 0.0) * widening)
 
 
@@ -205,7 +205,7 @@ def _with_limits(
     made: Coefficients,
     rows: BoolArray,
     both: pd.DataFrame,
-    variances: Mapping[tuple[str, str, str], Variances],
+    covariance: FloatArray,
     elements: tuple[str, str],
     factor: FloatArray,
     factor_relative_sd: FloatArray,
@@ -214,7 +214,6 @@ def _with_limits(
     """The rows whose means contain limits, from their two D; these are few."""
     numbers = [np.array(one) for one in (made.value, made.sd, made.low, made.high, made.dof)]
     reason = made.reason.copy()
-    covariance = _covariances(both, variances, elements)
     for row in np.flatnonzero(rows):
         own = both.iloc[row]
         bad = [

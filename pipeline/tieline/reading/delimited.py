@@ -13,7 +13,6 @@ import pyarrow as pa
 import pyarrow.csv
 
 from tieline.errors import InputError, Problem
-from tieline.reading.cell_text import fold
 from tieline.reading.grid import Block, Found, Grid, RaggedRow, ReadLimits
 from tieline.reading.header import find_decimal, find_header, is_units_row
 from tieline.reading.input_file import InputFile
@@ -266,8 +265,3 @@ def _arrow_problem(file: InputFile, error: pa.ArrowInvalid) -> Problem:
         remedy = "Is a quotation mark left open, or is this no table?"
         return Problem(f"a single row is longer than {megabytes} MB.", file.path, remedy=remedy)
     return Problem(f"cannot be read as delimited text ({text.splitlines()[0][:200]}).", file.path)
-
-
-def same_texts(first: Sequence[str], second: Sequence[str]) -> bool:
-    """Whether two rows show the same texts."""
-    return [fold(cell) for cell in first] == [fold(cell) for cell in second]

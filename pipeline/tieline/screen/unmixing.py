@@ -33,11 +33,6 @@ class UnmixedValues:
     shared: FloatArray
 
 
-def no_unmixing(n_rows: int) -> UnmixedValues:
-    """Nothing taken out anywhere."""
-    return UnmixedValues(*np.full((3, n_rows), np.nan))
-
-
 def unmixed_values(
     session: Session,
     scored: Sequence[Scored],

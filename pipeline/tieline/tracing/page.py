@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from tieline.arrays import flags, labels, numbers, spot_codes
+from tieline.arrays import flags, grain_codes, numbers
 from tieline.auditing.summary import ruling_parts
 from tieline.correction import CALIBRATION_KEYS, STANDARD_KEYS, calibrated, sequence_of
 from tieline.notation import written
@@ -175,7 +175,7 @@ def _mean(
     shared = np.array([spot.get("unmixed_shared_ppm") or 0.0 for spot in measured])
     account = mean_account(
         value, sigma, estimator=settings.mean,
-        grain=_grains(source.tables["convert"], at[used_at]) if settings.average == "grains" else None,
+        grain=grain_codes(source.tables["convert"])[at[used_at]] if settings.average == "grains" else None,
         common_ppm=float(shared.sum() / max(len(shared), 1)),
     )  # fmt: skip
     account = with_constant(account)
@@ -183,12 +183,6 @@ def _mean(
         _close(account[name], pair_row[name]) for name in ("mean_ppm", "se_ppm", "counting_se_ppm", "dof")
     )
     return recorded | account
-
-
-def _grains(convert: pa.Table, rows: np.ndarray[Any, Any]) -> np.ndarray[Any, Any]:
-    grain = labels(convert, "grain")
-    spot, _ = spot_codes(convert)
-    return np.asarray(np.where(grain.codes >= 0, grain.codes, len(grain.texts) + spot)[rows])
 
 
 def _close(one: float | None, two: float | None) -> bool:
