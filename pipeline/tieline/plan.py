@@ -22,6 +22,11 @@ class Verdict:
     state: str
     reasons: tuple[str, ...] = ()
 
+    def in_words(self) -> str:
+        """`screen is stale (rulings.csv changed)`."""
+        reasons = f" ({'; '.join(self.reasons)})" if self.reasons else ""
+        return f"{self.stage} is {self.state}{reasons}"
+
 
 def table_path(run_folder: Path, table: str) -> Path:
     return run_folder / f"{table}.parquet"

@@ -126,8 +126,7 @@ def tables_of(session: Session, names: Iterable[str]) -> dict[str, pa.Table]:
 def accepted_values(session: Session) -> dict[str, InputFile]:
     """The file of accepted values by its path; nothing where there is none."""
     path = session.settings.ingest.reference_materials.path
-    largest = session.settings.ingest.limits.expanded_mb * 1_000_000
-    return {} if path is None else {path: read_input(session.resolve(path), path, largest)}
+    return {} if path is None else {path: _input(session, path)}
 
 
 def finished(session: Session, until: str) -> tuple[Session, dict[str, pa.Table], dict[str, InputFile]]:
@@ -140,13 +139,12 @@ def finished(session: Session, until: str) -> tuple[Session, dict[str, pa.Table]
     before = _fingerprints(session, stages)
     for verdict in _verdicts(work, stages):
         if verdict.state != "current":
-            reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
             remedy = (
                 "The folder is sealed: bring back the files and settings it was made from, or run into another --out folder."
                 if is_sealed(session.run_folder)
                 else "Run `tieline run` first."
             )
-            raise InputError(Problem(f"{verdict.stage} is {verdict.state}{reasons}.", remedy=remedy))
+            raise InputError(Problem(f"{verdict.in_words()}.", remedy=remedy))
     tables = tables_of(session, (name for stage in stages for name in stage.outputs))
     if _fingerprints(session, stages) != before:
         raise InputError(
@@ -196,10 +194,9 @@ def _workspace(session: Session) -> Workspace:
     paths = dict.fromkeys(path for stage in STAGES for path in stage.files(session.settings))
     files: dict[str, InputFile] = {}
     problems: list[Problem] = []
-    largest = session.settings.ingest.limits.expanded_mb * 1_000_000
     for path in paths:
         try:
-            files[path] = read_input(session.resolve(path), path, largest)
+            files[path] = _input(session, path)
         except InputError as error:
             problems += error.problems
         except (OSError, ValueError) as error:
@@ -214,6 +211,12 @@ def _workspace(session: Session) -> Workspace:
         raise InputError([*problems, *_problems_of_tables(session, files)]) from None
     digests = {path: bytes_digest(file.data) for path, file in files.items()}
     return Workspace(named, files, digests, dict(digests))
+
+
+def _input(session: Session, path: str) -> InputFile:
+    """One input file, as large as the settings allow. Raises InputError, OSError or ValueError."""
+    largest = session.settings.ingest.limits.expanded_mb * 1_000_000
+    return read_input(session.resolve(path), path, largest)
 
 
 def _with_material_names(session: Session, files: dict[str, InputFile]) -> Session:
@@ -367,8 +370,7 @@ def _unreadable(session: Session, path: str, error: Exception) -> Problem:
 
 
 def _refusal(only: str, verdict: Verdict) -> Problem:
-    reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
     return Problem(
-        f"--only {only} needs current files of the stages before it, but {verdict.stage} is {verdict.state}{reasons}.",
+        f"--only {only} needs current files of the stages before it, but {verdict.in_words()}.",
         remedy=f"Run without --only, or with --until {verdict.stage} first.",
     )

@@ -104,8 +104,7 @@ def optional_table(source: Source, name: str) -> pa.Table | None:
 def _refuse_unless_current(verdicts: list[Verdict], session: Session) -> None:
     for verdict in verdicts:
         if verdict.state != "current":
-            reasons = f" ({'; '.join(verdict.reasons)})" if verdict.reasons else ""
-            message = f"{verdict.stage} is {verdict.state}{reasons}: a report would describe other settings."
+            message = f"{verdict.in_words()}: a report would describe other settings."
             raise InputError(Problem(message, remedy=f"Run `tieline run {session.path}` first."))
 
 
